@@ -1,0 +1,45 @@
+"""Lagrange multipliers of constrained maximum-entropy states, with certified verdicts.
+
+``solve(family, targets)`` finds the multipliers ``lam_j`` of ``exp(-sum_j lam_j Q_j)/Z`` that give the charges ``Q_j``
+their target values, or proves that no state can.  Names are loaded on first use, so that importing the package costs
+nothing (PEP 562).
+"""
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+from maxent.version import __version__ as __version__
+
+if TYPE_CHECKING:
+    from maxent.errors import ConfigError, FormulaError, MaxentError, ResourceError, SolveError
+    from maxent.result import Certificate, Result, Verdict
+    from maxent.solve import solve
+    from maxent.targets import Exact
+
+_HOME = {
+    "solve": "maxent.solve",
+    "Result": "maxent.result",
+    "Certificate": "maxent.result",
+    "Verdict": "maxent.result",
+    "Exact": "maxent.targets",
+    "MaxentError": "maxent.errors",
+    "ConfigError": "maxent.errors",
+    "FormulaError": "maxent.errors",
+    "ResourceError": "maxent.errors",
+    "SolveError": "maxent.errors",
+}
+
+__all__ = [
+    "Certificate", "ConfigError", "Exact", "FormulaError", "MaxentError", "ResourceError", "Result", "SolveError",
+    "Verdict", "__version__", "solve",
+]  # fmt: skip
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOME:
+        raise AttributeError(f"module 'maxent' has no attribute {name!r}")
+    return getattr(import_module(_HOME[name]), name)
+
+
+def __dir__() -> list[str]:
+    return sorted([*globals(), *_HOME])
