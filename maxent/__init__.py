@@ -13,11 +13,11 @@ from maxent.version import __version__ as __version__
 if TYPE_CHECKING:
     from maxent.errors import ConfigError, FormulaError, MaxentError, ResourceError, SolveError
     from maxent.result import Certificate, Result, Verdict
-    from maxent.solve import solve
+    from maxent.solver import solve
     from maxent.targets import Exact
 
 _HOME = {
-    "solve": "maxent.solve",
+    "solve": "maxent.solver",
     "Result": "maxent.result",
     "Certificate": "maxent.result",
     "Verdict": "maxent.result",
@@ -38,7 +38,9 @@ __all__ = [
 def __getattr__(name: str) -> Any:
     if name not in _HOME:
         raise AttributeError(f"module 'maxent' has no attribute {name!r}")
-    return getattr(import_module(_HOME[name]), name)
+    value = getattr(import_module(_HOME[name]), name)
+    globals()[name] = value
+    return value
 
 
 def __dir__() -> list[str]:
