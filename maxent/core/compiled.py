@@ -1,0 +1,97 @@
+"""The JAX driver: the dual free energy as a differentiable function, minimised under ``lax.while_loop``.
+
+Shares the Newton step with the host driver; carries a code and no faces, because verdicts are decided on the host.
+Importing it never changes JAX's precision: every entry works inside ``jax.enable_x64(True)``.  Floor: core.
+"""
+
+from __future__ import annotations
+
+from dataclasses import fields
+from functools import partial
+from typing import Any, TypeVar
+
+import jax
+import jax.numpy as jnp
+import numpy as np
+
+from maxent.core.contract import EPS, Evaluation, Family
+from maxent.core.newton import PATIENCE, Iterate, at_floor, begin, newton_step
+
+__all__ = ["evaluate_by_derivatives", "minimise", "register"]
+
+T = TypeVar("T")
+
+
+def register(*static: str) -> Any:
+    """Class decorator: make a dataclass a pytree whose fields are leaves, except those named `static`."""
+
+    def apply(cls: type[T]) -> type[T]:
+        names = [f.name for f in fields(cls)]  # type: ignore[arg-type]
+        jax.tree_util.register_dataclass(cls, [n for n in names if n not in static], list(static))
+        return cls
+
+    return apply
+
+
+register("factor")(Evaluation)
+
+
+@jax.jit
+def _derivatives(family: Family, lam: Any) -> tuple[Any, Any, Any]:
+    value, gradient = jax.value_and_grad(lambda x: family.log_partition(x))(lam)
+    return value, gradient, jax.hessian(lambda x: family.log_partition(x))(lam)
+
+
+def evaluate_by_derivatives(family: Family, lam: Any) -> Evaluation:
+    """Evaluation of a family that brings nothing but `log_partition`, by automatic differentiation."""
+    host = isinstance(lam, np.ndarray)
+    if host:
+        with jax.enable_x64(True):
+            log_z, gradient, hessian = (np.asarray(x) for x in _derivatives(family, lam))
+    else:
+        log_z, gradient, hessian = _derivatives(family, lam)
+    xp = np if host else jnp
+    # the exponent itself is not seen from here; its size is bounded by the sizes of the charges
+    level = xp.maximum(xp.abs(log_z), xp.abs(lam) @ xp.asarray(family.scale))
+    size = xp.sqrt(xp.linalg.matrix_norm(hessian)) if len(lam) else 0.0
+    rounding = 4 * EPS * (1 + level) * xp.maximum(1.0, size)
+    return Evaluation(log_z, -gradient, 0.5 * (hessian + hessian.T), rounding, level)
+
+
+@partial(jax.jit, static_argnames="iterations")
+def _minimise(family: Family, lam: Any, iterations: int) -> tuple[Any, Any]:
+    start = begin(family.evaluate, lam)
+
+    def unfinished(carry: tuple[Any, Iterate]) -> Any:
+        count, at = carry
+        return (count < iterations) & ~at_floor(at) & (at.rejected < PATIENCE)
+
+    def advance(carry: tuple[Any, Iterate]) -> tuple[Any, Iterate]:
+        count, at = carry
+        return count + 1, newton_step(family.evaluate, at)
+
+    count, at = jax.lax.while_loop(unfinished, advance, (jnp.asarray(0), start))
+    return at.lam, count
+
+
+def minimise(family: Family, lam: np.ndarray, *, iterations: int = 200) -> tuple[np.ndarray, int]:
+    """Minimiser of ``ln Z`` of a whitened, shifted family, or the last iterate where there is none.
+
+    Parameters
+    ----------
+    family : Family
+        Whitened charges minus targets; a pytree.
+    lam : (r,) ndarray
+        Start.
+    iterations : int
+        Largest number of trial steps.
+
+    Returns
+    -------
+    lam : (r,) ndarray
+    count : int
+        Trial steps taken.
+    """
+    with jax.enable_x64(True):
+        x, count = _minimise(family, jnp.asarray(lam), iterations)
+        return np.asarray(x), int(count)

@@ -1,0 +1,216 @@
+"""The verdict: a list of stages, each of which looks at the problem once and answers or passes on.
+
+Stages propose directions; the margin of a direction in the user's own charges (`Problem.verify`) and the existence
+proof decide.  Nothing is decided by the size of the multipliers, by the residual alone, or by an iteration count.
+Floor: core.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from maxent.core.centre import centre, starts_along
+from maxent.core.contract import EPS, SAFETY, Problem, Verdict
+from maxent.core.exists import minimiser_exists
+from maxent.core.faces import look, outside
+from maxent.core.newton import PATIENCE, at_floor, begin, newton_step
+from maxent.core.outcome import Memo, Outcome
+from maxent.core.whiten import whiten
+
+__all__ = ["decide"]
+
+#: Newton steps before the search turns to faces and the analytic centre.
+LIMIT = 200
+
+
+def decide(problem: Problem, *, driver: str = "host", depth: int = 0) -> Outcome:
+    """Verdict on `problem`.
+
+    Parameters
+    ----------
+    problem : Problem
+    driver : {"host", "jax"}
+        Who runs the Newton iteration; faces and certificates are always decided on the host.
+    depth : int
+        Number of faces this problem lies inside.
+    """
+    whitening = whiten(problem)
+    family = problem.family.combine(whitening.transform, np.zeros(whitening.rank))
+    memo = Memo(whitening, family, np.abs(whitening.transform) @ problem.unit, driver=driver, depth=depth)
+    for stage in STAGES:
+        answer = stage(problem, memo)
+        if answer is not None:
+            return answer
+    reason = memo.reason or (
+        "targets reproduced to rounding; whether they lie inside or on the boundary is not decidable at this precision"
+        if memo.floored
+        else "no stage could prove or refute that the targets can be reached"
+    )
+    values = whitening.values(memo.here.evaluation.values)
+    return memo.outcome(problem, Verdict.UNFINISHED, family=family, values=values, reason=reason, evidence="tested")
+
+
+# ---------------------------------------------------------------- stages
+
+
+def contradiction(problem: Problem, memo: Memo) -> Outcome | None:
+    """Inconsistent: a combination of the charges is a number, and the targets give it another value."""
+    worst = None
+    for c in memo.whitening.contradictions():
+        margin, tolerance = problem.verify(c)
+        # on a face the restriction itself leaves a remainder; only a gross contradiction counts there
+        real = memo.depth == 0 or margin > 1e-6 * np.abs(problem.family.scale).max()
+        if margin > tolerance and real and (worst is None or margin / tolerance > worst[1] / worst[2]):
+            worst = (c, margin, tolerance)
+    if worst is None:
+        return None
+    c, margin, tolerance = worst
+    return memo.outcome(problem, Verdict.INCONSISTENT, direction=c, margin=margin, tolerance=tolerance)
+
+
+def nothing_free(problem: Problem, memo: Memo) -> Outcome | None:
+    """Solved without multipliers: no charge has any spread, the state is the prior."""
+    if memo.whitening.rank:
+        return None
+    values = problem.family.evaluate(np.zeros(len(problem.noise))).values if len(problem.noise) else np.zeros(0)
+    return memo.outcome(problem, Verdict.SOLVED, family=problem.family, values=values)
+
+
+def first_look(problem: Problem, memo: Memo) -> Outcome | None:
+    """Steepest direction at the start; settles many unreachable targets without any iteration."""
+    start = np.linalg.lstsq(memo.whitening.transform.T, problem.family.start(), rcond=None)[0]
+    memo.at = begin(memo.family.evaluate, start)
+    return outside(problem, memo, memo.at.evaluation.values)
+
+
+def descend(problem: Problem, memo: Memo) -> Outcome | None:
+    """Newton's iteration; looks for faces on the way, and stops on a certificate that comes free of charge."""
+    if memo.driver == "jax":
+        from maxent.core.compiled import minimise
+
+        lam, memo.iterations = minimise(memo.family, memo.here.lam)
+        memo.at = begin(memo.family.evaluate, lam)
+    best, stalled = np.inf, 0
+    for count in range(LIMIT):
+        at = memo.here
+        ev, size = at.evaluation, float(at.residual)
+        memo.trace.append((size, float(ev.log_partition), float(ev.level)))
+        if _promises_separation(problem, memo) and (hit := outside(problem, memo, at.lam)):
+            return hit
+        if at_floor(at):
+            memo.floored = True
+            return None
+        if count and count % 4 == 0 and ev.level > 20 and (hit := look(problem, memo, at.lam, decide, step=memo.step)):
+            return hit
+        best, stalled = (size, 0) if size < 0.5 * best else (best, stalled + 1)
+        if (stalled >= 4 and size <= 1e3 * ev.rounding) or at.rejected > PATIENCE:
+            memo.floored = bool(size <= 1e4 * ev.rounding)
+            return None
+        memo.at = newton_step(memo.family.evaluate, at)
+        memo.step = memo.at.lam - at.lam
+        memo.iterations += 1
+    return None
+
+
+def _promises_separation(problem: Problem, memo: Memo) -> bool:
+    """Whether ``lam`` itself may separate the targets: a trigger, not evidence."""
+    at, ev = memo.here, memo.here.evaluation
+    if not np.any(at.lam):
+        return False
+    if ev.lowest is not None:
+        return bool(ev.lowest > np.abs(at.lam) @ memo.unit + SAFETY * EPS * ev.level)
+    return bool(ev.log_partition < problem.family.entropy_floor - 1e-9)
+
+
+def edge_of_domain(problem: Problem, memo: Memo) -> Outcome | None:
+    """Unattained: the minimiser lies on the edge of the domain of ``ln Z``, where the slope does not vanish.
+
+    The charge of the violated row is dropped, the rest solved; what the row's charge then still lacks is the excess.
+    """
+    rows = problem.family.domain()
+    if rows is None or memo.depth or not memo.whitening.rank:
+        return None
+    height = rows @ (memo.whitening.transform.T @ memo.here.lam)
+    tight = EPS * (1 + np.abs(rows) @ np.abs(memo.whitening.transform.T @ memo.here.lam))
+    if memo.floored and np.all(height > tight):
+        return None
+    i = int(np.argmin(height))
+    basis = np.linalg.svd(rows[i : i + 1])[2][1:]
+    inner = Problem(
+        problem.family.combine(basis, np.zeros(len(basis))), np.abs(basis) @ problem.noise,
+        np.abs(basis) @ problem.accuracy,
+    )  # fmt: skip
+    below = decide(inner, depth=memo.depth + 1)
+    memo.iterations += below.iterations
+    if below.verdict is not Verdict.SOLVED or below.at is None:
+        return None
+    lam = basis.T @ (below.whitening.transform.T @ below.at.lam)
+    excess = -problem.family.evaluate(lam).values
+    if not excess @ rows[i] > problem.unit @ np.abs(rows[i]):
+        return None
+    return memo.outcome(
+        problem, Verdict.UNATTAINED, at=below.at, family=below.family, values=-excess, excess=excess, evidence="tested"
+    )
+
+
+def existence(problem: Problem, memo: Memo) -> Outcome | None:
+    """Solved: residual at its floor, and a minimiser exists for every target within the noise."""
+    if not memo.floored:
+        return None
+    ok, memo.shift, evidence = minimiser_exists(memo.family, memo.here, memo.unit)
+    return _solved(problem, memo, evidence) if ok else None
+
+
+def face_in_sight(problem: Problem, memo: Memo) -> Outcome | None:
+    """A certificate near the direction in which the iteration ended."""
+    return look(problem, memo, memo.here.lam, decide, step=memo.step)
+
+
+def interior(problem: Problem, memo: Memo) -> Outcome | None:
+    """The analytic centre: a minimum of the barrier proves the targets interior, its escape hands out directions."""
+
+    def ask(lam: np.ndarray, step: np.ndarray, count: int) -> Outcome | None:
+        hit = outside(problem, memo, step)
+        size = np.linalg.norm(lam)
+        if hit or not (size > 1e12 or (size > 1e2 and count % 4 == 0)):
+            return hit
+        return look(problem, memo, lam, decide, step=step)
+
+    memo.near.sort(key=lambda pair: -pair[0])
+    starts = starts_along(memo.family, [memo.here.lam, *[v for _, v in memo.near[:4]]])
+    end = centre(memo.family, memo.unit, [np.zeros(memo.whitening.rank), *starts], ask)
+    if end.found is not None:
+        return end.found
+    if end.status != "interior":
+        last = memo.here.lam if end.lam is None else end.lam
+        return look(problem, memo, last, decide, late=True)
+    memo.inside = True
+    for _ in range(2 * LIMIT):
+        if memo.floored or memo.here.rejected > PATIENCE:
+            break
+        memo.at = newton_step(memo.family.evaluate, memo.here)
+        memo.floored = bool(at_floor(memo.at))
+        memo.iterations += 1
+    if memo.floored or memo.here.residual <= 1e3 * memo.here.evaluation.rounding:
+        return _solved(problem, memo, "proved")
+    memo.reason = f"the targets are interior, but the residual stays at {float(memo.here.residual):.1e}"
+    return None
+
+
+def nominal(problem: Problem, memo: Memo) -> Outcome | None:
+    """Solved for the targets as given, though their stated accuracy reaches beyond the boundary."""
+    if not (memo.floored and np.any(problem.accuracy)):
+        return None
+    exact = SAFETY * np.abs(memo.whitening.transform) @ problem.noise
+    ok, memo.shift, evidence = minimiser_exists(memo.family, memo.here, exact)
+    return _solved(problem, memo, evidence) if ok else None
+
+
+def _solved(problem: Problem, memo: Memo, evidence: str) -> Outcome:
+    values = memo.whitening.values(memo.here.evaluation.values)
+    return memo.outcome(problem, Verdict.SOLVED, family=memo.family, values=values, evidence=evidence)
+
+
+STAGES = (
+    contradiction, nothing_free, first_look, descend, edge_of_domain, existence, nominal, face_in_sight, interior,
+)  # fmt: skip

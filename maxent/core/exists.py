@@ -1,0 +1,60 @@
+"""Existence of the multipliers at a converged point: one number, R nu < 1/2.
+
+With ``H(lam + s) >= exp(-c(s)) H(lam)`` (generalised self-concordance, Bach, Electron. J. Stat. 4, 384 (2010), from
+memory) a minimiser of the dual exists for every target within the noise if
+
+    R nu < 1/2,   nu^2 = sum_k (|g_k| + b_k)^2 / h_k,   R^2 = sum_k c(u_k)^2 / h_k,
+
+where h_k, u_k are the curvatures and axes, g the residual and b its uncertainty.  Floor: core.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from maxent.core.contract import Family
+from maxent.core.newton import Iterate
+
+__all__ = ["minimiser_exists"]
+
+
+def minimiser_exists(family: Family, at: Iterate, unit: np.ndarray) -> tuple[bool, float, str]:
+    """Whether a minimiser exists for all targets within `unit`, the number R nu, and how it was found out.
+
+    Returns
+    -------
+    ok : bool
+    shift : float
+        R nu; NaN when no stiffness bound is known and the Hessian was probed instead.
+    evidence : {"proved", "tested"}
+    """
+    h = np.maximum(at.curvature, 1e-300)
+    along = np.abs(at.axes.T) @ (unit + at.evaluation.error) + np.abs(at.axes.T @ at.evaluation.values)
+    nu2 = float(np.sum(along**2 / h))
+    bounds = np.array([_bound(family, at, k, exact=False) for k in range(len(h))])
+    if np.isnan(bounds).any():
+        return _probed(family, at, h, nu2)
+    for k in np.argsort(h):  # cheap bounds first, exact ones where they matter, softest direction first
+        if np.sqrt(np.sum(bounds**2 / h) * nu2) < 0.5:
+            break
+        bounds[k] = min(bounds[k], _bound(family, at, int(k), exact=True))
+    shift = float(np.sqrt(np.sum(bounds**2 / h) * nu2))
+    return shift < 0.5, shift, "proved"
+
+
+def _bound(family: Family, at: Iterate, k: int, *, exact: bool) -> float:
+    c = family.stiffness(at.lam, at.axes[:, k], exact=exact)
+    return np.nan if c is None else float(c)
+
+
+def _probed(family: Family, at: Iterate, h: np.ndarray, nu2: float) -> tuple[bool, float, str]:
+    """No bound is known: look at the Hessian on the ball that must hold the minimiser."""
+    whitener = at.axes / np.sqrt(h)
+    for k in range(len(h)):
+        for sign in (-2, 2):
+            there = family.evaluate(at.lam + sign * np.sqrt(nu2 / h[k]) * at.axes[:, k])
+            if not np.isfinite(there.log_partition):
+                return False, np.inf, "tested"
+            if np.linalg.eigvalsh(whitener.T @ there.covariance @ whitener)[0] < 0.5:
+                return False, np.inf, "tested"
+    return True, np.nan, "tested"

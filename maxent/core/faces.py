@@ -1,0 +1,100 @@
+"""Certificates and faces: directions are proposed, `Problem.verify` decides, faces are solved in turn.
+
+A target on the boundary needs both halves of the evidence: a direction v whose lowest value is the target's to
+rounding, and a state on the ground space of ``v.Q`` that reproduces all targets.  The direction alone also exists for
+targets outside (a tangent touches).  Floor: core.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import replace
+
+import numpy as np
+
+from maxent.core.contract import EPS, Face, Problem, Verdict
+from maxent.core.outcome import Memo, Outcome
+
+__all__ = ["look", "outside"]
+
+#: Recursion depth of faces of faces; each level removes at least one charge.
+DEEPEST = 12
+#: Relative residual a limit state must have to end the search early, and at its end.
+EARLY, LATE = 1e-11, 1e-8
+
+Decide = Callable[..., Outcome]
+
+
+def outside(problem: Problem, memo: Memo, x: np.ndarray) -> Outcome | None:
+    """Infeasible, when the whitened direction `x` separates the targets from all states."""
+    if not np.linalg.norm(x) > 0:
+        return None
+    v = memo.whitening.to_user(x)
+    margin, tolerance = problem.verify(v)
+    if margin > tolerance:
+        return memo.outcome(problem, Verdict.INFEASIBLE, direction=v, margin=margin, tolerance=tolerance)
+    return None
+
+
+def look(
+    problem: Problem, memo: Memo, x: np.ndarray, decide: Decide, *, step: np.ndarray | None = None, late: bool = False
+) -> Outcome | None:
+    """Try to end on a verified certificate near the whitened direction `x`.
+
+    The last Newton step is tried first: it is free, and along a diverging path it points at the exposing direction.
+    Depths of faces seen on the way are remembered in `memo` as starts for the analytic centre.
+    """
+    if not np.linalg.norm(x) > 0:
+        return None
+    x = x / np.linalg.norm(x)
+    hit = outside(problem, memo, x)
+    if hit:
+        return hit
+    found: tuple[np.ndarray, float, float, Face] | None = None
+    for candidate in _candidates(memo, x, step):
+        v = memo.whitening.to_user(candidate)
+        margin, tolerance = problem.verify(v)
+        if margin > tolerance:
+            return memo.outcome(problem, Verdict.INFEASIBLE, direction=v, margin=margin, tolerance=tolerance)
+        if margin < -tolerance:
+            memo.near.append((margin, candidate))
+            continue
+        face = problem.family.face(v, tolerance)
+        if face is not None and (found is None or face.gap > found[3].gap):
+            found = (v, margin, tolerance, face)
+            if face.gap > 1e-3:
+                break
+    if found is None or memo.depth >= DEEPEST or (found[3].gap < 1e-6 and not late):
+        return None
+    return _descend(problem, memo, found, decide, late=late)
+
+
+def _candidates(memo: Memo, x: np.ndarray, step: np.ndarray | None):
+    if step is not None and np.linalg.norm(step) > 0:
+        yield step / np.linalg.norm(step)
+    yield x
+    yield from memo.family.sharpen(x)
+
+
+def _descend(
+    problem: Problem, memo: Memo, found: tuple[np.ndarray, float, float, Face], decide: Decide, *, late: bool
+) -> Outcome | None:
+    """Solve on the face, and accept the boundary only if its state reproduces the targets."""
+    v, margin, tolerance, face = found
+    rounding = 0.0 if face.exact else 8 * EPS / max(face.gap, 1e-12)
+    noise = problem.noise + rounding * problem.family.scale
+    below = decide(Problem(face.family, noise, problem.accuracy), depth=memo.depth + 1)
+    memo.iterations += below.iterations
+    residual = np.inf if below.values is None else np.abs(below.values)
+    allowed = LATE * problem.size + problem.accuracy if late else EARLY * problem.size
+    if not np.all(residual <= allowed):
+        memo.reason = (
+            f"a direction touches the set of reachable values (margin {margin:.1e}, tolerance {tolerance:.1e}), "
+            "but no state on its ground space reproduces the targets"
+        )
+        return None
+    answer = memo.outcome(
+        problem, Verdict.BOUNDARY, direction=v, margin=margin, tolerance=tolerance, face=below, values=below.values,
+        gap=face.gap, log_dimension=face.log_dimension, evidence=below.evidence,
+    )  # fmt: skip
+    return replace(answer, at=below.deepest.at, family=below.deepest.family)
