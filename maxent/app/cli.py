@@ -1,0 +1,133 @@
+"""The command `multipliers`: arguments in, tables out, exit codes.
+
+Floor: app.  Results go to stdout, everything else to stderr.  Imports nothing but the standard library until a command
+needs more, so that `--help` and config errors are quick.
+
+Exit codes: 0 solved; 1 ran, the answer is no; 2 bad command line or config; 3 our fault; 130 interrupted.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import sys
+from collections.abc import Callable, Sequence
+from pathlib import Path as File
+
+from maxent.errors import ConfigError
+from maxent.version import __version__
+
+__all__ = ["main"]
+
+_CODES = "exit codes: 0 solved; 1 ran, the answer is no; 2 bad command line or config; 3 our fault; 130 interrupted"
+
+
+def parser() -> argparse.ArgumentParser:
+    """Build the argument parser."""
+    top = argparse.ArgumentParser(
+        prog="multipliers",
+        description="Find the Lagrange multipliers of a maximum-entropy state, or prove that there are none.",
+        epilog=f"example: multipliers solve configs/xxz_ring_quench.toml\n\n{_CODES}",
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    top.add_argument("--version", action="version", version=f"multipliers {__version__}")
+    commands = top.add_subparsers(dest="command", required=True, metavar="COMMAND")
+    solve = commands.add_parser(
+        "solve",
+        help="find the multipliers and write a run folder",
+        description="Solve the problem of a config; print the result and write a run folder.",
+        epilog=f"example: multipliers solve configs/wolf_dice.toml --out runs/dice\n\n{_CODES}",
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    solve.add_argument("config", metavar="CONFIG", type=File, help="TOML file, see docs/config.md")
+    solve.add_argument(
+        "--out", metavar="DIR", type=File, help="run folder (default: runs/<name of the config>-<hash>)"
+    )
+    solve.add_argument("--json", action="store_true", help="print result.json instead of the table")
+    solve.add_argument("--force", action="store_true", help="replace the run folder if it is there already")
+    solve.add_argument(
+        "--driver", choices=["auto", "host", "jax"], help="loop that does the fit (default: as the config says)"
+    )
+    solve.add_argument("--quiet", action="store_true", help="no progress on stderr")
+    check = commands.add_parser(
+        "check",
+        help="everything but the fit: read, build, show sizes",
+        description="Read a config, build its problem and show targets and sizes, without solving it.",
+        epilog=f"example: multipliers check configs/wolf_dice.toml\n\n{_CODES}",
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    check.add_argument("config", metavar="CONFIG", type=File, help="TOML file, see docs/config.md")
+    return top
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run a command.
+
+    Parameters
+    ----------
+    arguments : sequence of str or None
+        The command line; None takes the process's own.
+
+    Returns
+    -------
+    int
+        Exit code.
+    """
+    try:
+        given = parser().parse_args(arguments)
+        return _solve(given) if given.command == "solve" else _check(given)
+    except ConfigError as bad:
+        print(bad, file=sys.stderr)
+        return 2
+    except KeyboardInterrupt:
+        print("interrupted; nothing was written", file=sys.stderr)
+        return 130
+    except BrokenPipeError:
+        # the reader of stdout went away: not our fault, and nothing more can be said to it
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return 0
+    except Exception:
+        import traceback
+
+        traceback.print_exc()
+        print(
+            f"This is a fault of multipliers {__version__}, not of your input; please report it with the lines above.",
+            file=sys.stderr,
+        )
+        return 3
+
+
+def _solve(given: argparse.Namespace) -> int:
+    from maxent.app.run import solve
+
+    say: Callable[[str], None] = (lambda line: None) if given.quiet else _log
+    outcome = solve(given.config, out=given.out, force=given.force, driver=given.driver, say=say)
+    if given.json:
+        from maxent.app.record import dump
+
+        sys.stdout.write(dump(outcome.record))
+    else:
+        from maxent.app.words import summary
+
+        print(summary(outcome.record))
+    return 0 if outcome.record["success"] else 1
+
+
+def _check(given: argparse.Namespace) -> int:
+    from maxent.app.run import check, sizes
+    from maxent.text import number, table, with_error
+
+    config, job = check(given.config)
+    print(f"{config.file}: good; kind {config.header.kind}")
+    print()
+    print(table(sizes(job)))
+    print()
+    rows = [
+        (name, with_error(t.value, t.sigma), number(t.accuracy, 3), t.source) for name, t in job.targets.items()
+    ]
+    print(table(rows, ("charge", "target", "accuracy", "source"), right=[1, 2]))
+    return 0
+
+
+def _log(line: str) -> None:
+    print(line, file=sys.stderr)

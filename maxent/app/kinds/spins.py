@@ -1,0 +1,201 @@
+"""Kind `spins`: spin-1/2 sites on a ring or an open chain, operators as formulas, targets from a product start state.
+
+Floor: app/kinds, the only place besides the quench and lab floors that knows lattice and families together.
+Must not know: the command line, the report.
+"""
+
+from __future__ import annotations
+
+import re
+from dataclasses import dataclass, field
+from pathlib import Path as File
+from typing import Any, Literal
+
+from maxent.app.job import Job, Problems, Target
+from maxent.errors import FormulaError, ResourceError
+from maxent.text import plural
+
+__all__ = ["Options", "Sites", "Start", "build"]
+
+_STRICT = {"extra": "forbid", "strict": True}
+
+
+@dataclass(frozen=True)
+class Sites:
+    """Where the spins sit."""
+
+    __pydantic_config__ = _STRICT
+
+    geometry: Literal["ring", "chain"] = field(
+        metadata={"help": "`ring`: subscripts wrap around; `chain`: only terms that fit are kept."}
+    )
+    size: int = field(metadata={"help": "Number of sites."})
+
+
+@dataclass(frozen=True)
+class Start:
+    """Product state in which the targets 'from start' are computed.
+
+    The spin at position i points along (sin theta cos phi, sin theta sin phi, cos theta).
+    """
+
+    __pydantic_config__ = _STRICT
+
+    theta: float | list[float] | str = field(
+        metadata={"help": "Polar angle: a number, a pattern that repeats, or a formula in `i` and `L`."}
+    )
+    phi: float | list[float] | str = field(
+        default=0.0, metadata={"help": "Azimuth, written in the same three ways, e.g. `\"2*pi*i/L\"`."}
+    )
+
+
+@dataclass(frozen=True)
+class Options:
+    """Keys of a config of kind `spins`."""
+
+    __pydantic_config__ = _STRICT
+
+    sites: Sites = field(metadata={"help": "Where the spins sit."})
+    charges: dict[str, str] = field(metadata={"help": "Name of a charge -> formula of a Hermitian operator."})
+    targets: dict[str, float | Literal["from start"]] = field(
+        metadata={"help": "Name of a charge -> the mean asked for, or its mean in the state `[start]`."}
+    )
+    parameters: dict[str, float | list[float]] = field(
+        default_factory=dict,
+        metadata={"help": "Name -> number, or a list with one number per position; used in formulas."},
+    )
+    densities: dict[str, str] = field(
+        default_factory=dict,
+        metadata={"help": "Name -> formula with one free subscript; other formulas may use it shifted, `h[i+1]`."},
+    )
+    start: Start | None = field(default=None, metadata={"help": "Product state that gives targets."})
+    accuracy: dict[str, float] = field(
+        default_factory=dict,
+        metadata={
+            "help": "Name of a charge -> how far its target may be off because of rounding when it was computed; "
+            "0 where nothing is said. This is no measurement error."
+        },
+    )
+    predictions: dict[str, str] = field(
+        default_factory=dict, metadata={"help": "Name -> formula of a further operator whose mean is wanted."}
+    )
+
+
+def build(options: Options, folder: File) -> Job:
+    """Build the job that the options describe.
+
+    Parameters
+    ----------
+    options : Options
+    folder : pathlib.Path
+        Unused: this kind reads no further files.
+
+    Returns
+    -------
+    Job
+
+    Raises
+    ------
+    BadInput
+        With all problems at once.
+    """
+    del folder
+    from maxent import lattice
+
+    problems = Problems()
+    geometry = {"ring": lattice.Ring, "chain": lattice.Chain}[options.sites.geometry]
+    try:
+        sites = geometry(options.sites.size)
+    except ValueError as bad:
+        problems.add(("sites", "size"), str(bad))
+        problems.raise_any()
+    operators = _Formulas(options, sites, problems)
+    charges = {name: operators.read(("charges", name), text) for name, text in options.charges.items()}
+    predictions = {name: operators.read(("predictions", name), text) for name, text in options.predictions.items()}
+    start = None
+    if options.start is not None:
+        start = _start(options.start, sites, problems)
+    for name, given in options.targets.items():
+        if given == "from start" and options.start is None:
+            problems.add(("targets", name), "asks for the mean 'from start', but there is no [start]")
+    problems.raise_any()
+    targets = {}
+    for name, operator in charges.items():
+        given = options.targets[name]
+        accuracy = options.accuracy.get(name, 0.0)
+        if start is not None and isinstance(given, str):
+            targets[name] = Target(start.mean(operator), "mean in the start state", accuracy=accuracy)
+        else:
+            targets[name] = Target(float(given), accuracy=accuracy)
+    matrices = {name: _matrix(("charges", name), op, problems) for name, op in charges.items()}
+    observed = {name: _matrix(("predictions", name), op, problems) for name, op in predictions.items()}
+    problems.raise_any()
+    facts = {
+        "sites": f"{options.sites.geometry} of {plural(options.sites.size, 'spin-1/2 site')}",
+        "states": str(2**options.sites.size),
+    }
+    if options.start is not None:
+        facts["start"] = f"product state, theta = {options.start.theta}, phi = {options.start.phi}"
+    facts |= {f"parameter {name}": str(value) for name, value in options.parameters.items()}
+    facts |= {f"density {name}": text for name, text in options.densities.items()}
+    facts |= {f"charge {name}": text for name, text in options.charges.items()}
+    from maxent.families import Matrices
+
+    family = Matrices(matrices, dims=sites.dims)
+    return Job(family, targets, observed, facts)
+
+
+class _Formulas:
+    """Reader of the formulas of one config.
+
+    A bad density is reported once, at its own line, and not again for every formula that uses it.
+    """
+
+    def __init__(self, options: Options, sites: Any, problems: Problems):
+        from maxent.lattice import formula
+
+        self.options, self.sites, self.problems = options, sites, problems
+        self.bad: set[str] = set()
+        for name, text in options.densities.items():
+            try:
+                formula(text, sites, options.parameters, options.densities)
+            except FormulaError as bad:
+                problems.add(("densities", name), str(bad))
+                self.bad.add(name)
+
+    def read(self, path: tuple[str, str], text: str) -> Any:
+        """Read a Hermitian operator; None after a problem."""
+        from maxent.lattice import formula
+
+        if any(re.search(rf"\b{re.escape(name)}\b", text) for name in self.bad):
+            return None
+        try:
+            operator = formula(text, self.sites, self.options.parameters, self.options.densities)
+        except FormulaError as bad:
+            self.problems.add(path, str(bad))
+            return None
+        if not operator.is_hermitian:
+            self.problems.add(path, "not Hermitian")
+            return None
+        return operator
+
+
+def _start(start: Start, sites: Any, problems: Problems) -> Any:
+    """Build the product state; each angle is tried alone, so that an error lands on its own line."""
+    from maxent.lattice import ProductState
+
+    before = len(problems.found)
+    for key, angles in (("theta", {"theta": start.theta, "phi": 0.0}), ("phi", {"theta": 0.0, "phi": start.phi})):
+        try:
+            ProductState(sites, **angles)
+        except ValueError as bad:
+            problems.add(("start", key), str(bad))
+    return None if len(problems.found) > before else ProductState(sites, start.theta, start.phi)
+
+
+def _matrix(path: tuple[str, str], operator: Any, problems: Problems) -> Any:
+    try:
+        return operator.matrix()
+    except ResourceError as bad:
+        problems.add(path, str(bad))
+        return None

@@ -1,0 +1,221 @@
+"""Kind `states`: a finite list of classical states, each charge a list with one number per state.
+
+Floor: app/kinds.  Targets are given, or are the sample means of measured counts.
+Must not know: the command line, the report.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, field
+from pathlib import Path as File
+from typing import Any, Literal
+
+import numpy as np
+
+from maxent.app.data import Files
+from maxent.app.job import Job, Problems, Target
+from maxent.text import plural
+
+__all__ = ["Counts", "Options", "build"]
+
+
+@dataclass(frozen=True)
+class Counts:
+    """How often each state was seen."""
+
+    __pydantic_config__ = {"extra": "forbid", "strict": True}
+
+    per_state: list[float] | str = field(metadata={"help": "Counts, one per state: a list, or a file."})
+    source: str = field(default="", metadata={"help": "Where the counts come from."})
+
+
+@dataclass(frozen=True)
+class Options:
+    """Keys of a config of kind `states`."""
+
+    __pydantic_config__ = {"extra": "forbid", "strict": True}
+
+    charges: dict[str, list[float] | str] = field(
+        metadata={"help": "Name of a charge -> its value in each state: a list, or a file."}
+    )
+    targets: dict[str, float | Literal["from counts"]] = field(
+        metadata={"help": "Name of a charge -> the mean asked for, or the sample mean of `[counts]`."}
+    )
+    accuracy: dict[str, float] = field(
+        default_factory=dict,
+        metadata={
+            "help": "Name of a charge -> how far its target may be off because of rounding when it was computed; "
+            "0 where nothing is said. This is no measurement error."
+        },
+    )
+    counts: Counts | None = field(
+        default=None,
+        metadata={"help": "Measured counts; they give targets, each with its sampling standard error beside it."},
+    )
+    labels: list[str] | None = field(default=None, metadata={"help": "Names of the states, in order."})
+    log_weights: list[float] | str | None = field(
+        default=None,
+        metadata={
+            "help": "Log of how many microstates each state stands for (degeneracy): a list, or a file; "
+            "counted in the entropy. -inf drops a state."
+        },
+    )
+    log_prior: list[float] | str | None = field(
+        default=None,
+        metadata={
+            "help": "Log of the prior probability of each state, up to a constant: a list, or a file; "
+            "changes the state but not how entropy is counted. -inf drops a state."
+        },
+    )
+    predictions: dict[str, list[float] | str] = field(
+        default_factory=dict,
+        metadata={"help": "Name -> a further quantity whose mean is wanted: a list, or a file."},
+    )
+
+
+def build(options: Options, folder: File) -> Job:
+    """Build the job that the options describe.
+
+    Parameters
+    ----------
+    options : Options
+    folder : pathlib.Path
+        Where relative file names start.
+
+    Returns
+    -------
+    Job
+
+    Raises
+    ------
+    BadInput
+        With all problems at once.
+    """
+    problems = Problems()
+    files = Files(folder)
+    charges = {
+        name: _array(files, problems, ("charges", name), value) for name, value in options.charges.items()
+    }
+    predictions = {
+        name: _array(files, problems, ("predictions", name), value) for name, value in options.predictions.items()
+    }
+    weights = _array(files, problems, ("log_weights",), options.log_weights, drop=True)
+    prior = _array(files, problems, ("log_prior",), options.log_prior, drop=True)
+    counts = None
+    if options.counts is not None:
+        counts = _array(files, problems, ("counts", "per_state"), options.counts.per_state)
+    size = _check_lengths(problems, charges, predictions, weights, prior, counts, options.labels)
+    for key, value in (("log_weights", weights), ("log_prior", prior)):
+        if value is not None and len(value) and not np.isfinite(value).any():
+            problems.add((key,), "drops every state")
+    if counts is not None:
+        _check_counts(problems, counts)
+    for name, given in options.targets.items():
+        if given == "from counts" and options.counts is None:
+            problems.add(("targets", name), "asks for a mean 'from counts', but there is no [counts]")
+    problems.raise_any()
+    targets = {
+        name: _target(options.targets[name], values, counts, options.accuracy.get(name, 0.0))
+        for name, values in charges.items()
+    }
+    facts = {"states": plural(size, "state")}
+    if counts is not None and options.counts is not None:
+        facts["counts"] = plural(int(counts.sum()), "observation")
+        if options.counts.source:
+            facts["source of the counts"] = options.counts.source
+    if weights is not None:
+        facts["weights"] = "log degeneracies given; counted in the entropy"
+    if prior is not None:
+        facts["prior"] = "given; the state is pulled towards it"
+    from maxent.families import Microstates
+
+    family = Microstates(charges, log_weights=weights, log_prior=prior)
+    return Job(
+        family,
+        targets,
+        predictions,
+        facts,
+        memory=8.0 * size * (3 * len(charges) + 4),
+        labels=tuple(options.labels or ()),
+        digests=files.digests,
+    )
+
+
+def _array(
+    files: Files, problems: Problems, path: tuple[str, ...], value: list[float] | str | None, *, drop: bool = False
+) -> Any:
+    """Read one list of numbers; None where there is none or where it is bad."""
+    if value is None:
+        return None
+    if isinstance(value, str):
+        try:
+            raw = files.read(value)
+        except ValueError as bad:
+            problems.add(path, str(bad))
+            return None
+        if not isinstance(raw, np.ndarray) or raw.ndim != 1:
+            problems.add(path, f"{value!r} is no plain list of numbers (shape {raw.shape})")
+            return None
+        if raw.dtype.kind not in "iuf":
+            problems.add(path, f"{value!r} holds {raw.dtype} entries; real numbers are needed")
+            return None
+        array = raw.astype(np.float64)
+        bad_places = np.flatnonzero(~np.isfinite(array) & ~((array == -np.inf) & drop))
+        if len(bad_places):
+            k = int(bad_places[0])
+            problems.add(path, f"{value!r} entry {k} is {array[k]}; finite numbers are needed")
+            return None
+        return array
+    return np.array(value, dtype=np.float64)
+
+
+def _check_lengths(
+    problems: Problems,
+    charges: dict[str, Any],
+    predictions: dict[str, Any],
+    weights: Any,
+    prior: Any,
+    counts: Any,
+    labels: list[str] | None,
+) -> int:
+    """Check that every list has one number per state; the first charge sets the number of states."""
+    lengths = {("charges", name): values for name, values in charges.items()}
+    lengths |= {("predictions", name): values for name, values in predictions.items()}
+    every: dict[tuple[str, ...], Any] = {
+        **lengths, ("log_weights",): weights, ("log_prior",): prior, ("counts", "per_state"): counts,
+        ("labels",): labels,
+    }  # fmt: skip
+    size, first = 0, ""
+    for path, values in every.items():
+        if values is None:
+            continue
+        if not size:
+            size, first = len(values), ".".join(path)
+            if not size:
+                problems.add(path, "an empty list; at least one state is needed")
+                return 0
+        elif len(values) != size:
+            problems.add(path, f"has length {len(values)}, but {first} has length {size}; one entry per state is needed")
+    return size
+
+
+def _check_counts(problems: Problems, counts: np.ndarray) -> None:
+    path = ("counts", "per_state")
+    if (counts < 0).any() or (counts != np.round(counts)).any():
+        problems.add(path, "counts must be whole numbers, none of them negative")
+    elif counts.sum() < 2:
+        problems.add(path, "at least two observations are needed")
+
+
+def _target(given: float | str, values: np.ndarray, counts: np.ndarray | None, accuracy: float) -> Target:
+    """Take a target as given, or as the mean over the counts with its standard error.
+
+    The standard error of a mean of N independent observations is s/sqrt(N), s^2 = sum n_i (f_i - mean)^2/(N - 1).
+    """
+    if counts is None or not isinstance(given, str):
+        return Target(float(given), accuracy=accuracy)
+    total = float(counts.sum())
+    mean = math.fsum(counts * values) / total
+    variance = math.fsum(counts * (values - mean) ** 2) / (total - 1)
+    return Target(mean, f"mean of {plural(int(total), 'observation')}", math.sqrt(variance / total), accuracy)

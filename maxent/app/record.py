@@ -1,0 +1,154 @@
+"""A result as plain data: the content of `result.json`, and all that the report and the terminal are made from.
+
+Floor: app.  Format `maxent.result/1`, described in `maxent/app/schema/result.schema.json` and docs/result.md.  Numbers that
+are not finite become null.
+Must not know: files, HTML, the clock.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+from collections.abc import Mapping
+from typing import Any
+
+from maxent.app.config import Config
+from maxent.app.job import Job
+from maxent.text import digits
+from maxent.version import __version__
+
+__all__ = ["SCHEMA", "dump", "record"]
+
+SCHEMA = "maxent.result/1"
+
+
+def record(config: Config, job: Job, result: Any, *, asked_driver: str, versions: Mapping[str, str]) -> dict[str, Any]:
+    """Collect everything a result says, with the names of the charges.
+
+    Parameters
+    ----------
+    config : Config
+        What was asked.
+    job : Job
+        What was built from it.
+    result : Result
+        What came out.
+    asked_driver : str
+        The driver asked for ("auto", "host", "jax"); the one that ran is in the result.
+    versions : mapping of str to str
+        Versions of the programs that took part.
+
+    Returns
+    -------
+    dict
+        JSON-ready.
+    """
+    return {
+        "schema": SCHEMA,
+        "title": config.header.title or config.file.stem,
+        "config": config.file.name,
+        "kind": config.header.kind,
+        "verdict": str(result.verdict),
+        "evidence": result.evidence,
+        "success": bool(result.success),
+        "loose": bool(result.loose),
+        "message": result.message,
+        "charges": [_charge(name, job, result) for name in result.names],
+        "log_partition": _finite(result.log_partition),
+        "entropy": _finite(result.entropy),
+        "relative_entropy": _finite(result.relative_entropy),
+        "covariance": [[_finite(x) for x in row] for row in result.covariance],
+        "certificate": _certificate(job, result),
+        "face": _face(result),
+        "excess": None if result.excess is None else _combination(result.excess),
+        "redundancies": [
+            {"coefficients": _combination(r.coefficients), "constant": _finite(r.constant)}
+            for r in result.redundancies
+        ],
+        "conditioning": _conditioning(result.conditioning),
+        "predictions": _predictions(job, result),
+        "replay": _finite(result.replay),
+        "iterations": int(result.iterations),
+        "driver": result.driver,
+        "asked_driver": asked_driver,
+        "size": int(job.family.size),
+        "facts": dict(job.facts),
+        "versions": {"maxent": __version__, **versions},
+    }
+
+
+def dump(data: Mapping[str, Any]) -> str:
+    """Write a record as JSON text, the same text for the same record."""
+    return json.dumps(data, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
+
+
+def _charge(name: str, job: Job, result: Any) -> dict[str, Any]:
+    target = job.targets[name]
+    multiplier, error = _finite(result.multipliers[name]), _finite(result.multiplier_errors[name])
+    return {
+        "name": name,
+        "target": target.value,
+        "target_source": target.source,
+        "sigma": target.sigma,
+        "accuracy": target.accuracy,
+        "value": _finite(result.values[name]),
+        "residual": _finite(result.residuals[name]),
+        "multiplier": multiplier,
+        "multiplier_error": error,
+        "multiplier_digits": digits(multiplier, error),
+        "last_multiplier": _finite(result.last_multipliers[name]),
+    }
+
+
+def _certificate(job: Job, result: Any) -> dict[str, Any] | None:
+    found = result.certificate
+    if found is None:
+        return None
+    check = found.verify(job.family, {name: target.value for name, target in job.targets.items()})
+    return {
+        "kind": found.kind,
+        "direction": _combination(found.direction),
+        "lowest": _finite(found.lowest),
+        "asked": _finite(found.asked),
+        "margin": _finite(found.margin),
+        "tolerance": _finite(found.tolerance),
+        "verified": bool(check),
+    }
+
+
+def _face(result: Any) -> dict[str, Any] | None:
+    face = result.face
+    if face is None:
+        return None
+    return {
+        "dimension": int(face.dimension),
+        "depth": int(face.depth),
+        "directions": [_combination(d) for d in face.directions],
+        "gap": _finite(face.gap),
+    }
+
+
+def _conditioning(found: Any) -> dict[str, Any] | None:
+    if found is None:
+        return None
+    return {
+        "condition_number": _finite(found.condition_number),
+        "stiffest": _combination(found.stiffest),
+        "sloppiest": _combination(found.sloppiest),
+    }
+
+
+def _predictions(job: Job, result: Any) -> list[dict[str, Any]]:
+    reached = result.state is not None
+    return [
+        {"name": name, "value": _finite(result.state.mean(operator)) if reached else None}
+        for name, operator in job.predictions.items()
+    ]
+
+
+def _combination(coefficients: Mapping[str, float]) -> dict[str, float | None]:
+    return {name: _finite(c) for name, c in coefficients.items()}
+
+
+def _finite(x: float | None) -> float | None:
+    return None if x is None or not math.isfinite(x) else float(x)

@@ -1,0 +1,48 @@
+"""The report page of a run, made from its record and nothing else.
+
+Floor: app.  One Jinja2 template with inline style, no script, everything escaped.  Computes nothing: numbers come from
+the record, sentences from words.py, roundings from text.py.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from maxent.app import words
+from maxent.text import combination, number, with_error
+
+__all__ = ["render"]
+
+
+def render(record: Mapping[str, Any]) -> str:
+    """Write the page.
+
+    Parameters
+    ----------
+    record : mapping
+        See record.py.
+
+    Returns
+    -------
+    str
+        A complete, self-contained HTML page.
+    """
+    from jinja2 import Environment, PackageLoader, StrictUndefined
+
+    environment = Environment(
+        loader=PackageLoader("maxent.app"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+        keep_trailing_newline=True,
+    )
+    environment.filters |= {
+        "number": number,
+        "combination": combination,
+        "certificate": words.certificate,
+        "face": words.face,
+        "redundancy": words.redundancy,
+    }
+    return environment.get_template("report.html").render(r=record, short=words.verdict(record), with_error=with_error)

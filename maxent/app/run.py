@@ -1,0 +1,273 @@
+"""One run: config in, folder with the result out; and the folder itself, which is there whole or not at all.
+
+Floor: app.  The only module that looks at a clock or at versions of other programs.
+Must not know: how to draw or print.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import os
+import platform
+import shutil
+import sys
+import time
+from collections.abc import Callable, Mapping
+from contextlib import contextmanager
+from dataclasses import asdict, dataclass
+from importlib import metadata
+from pathlib import Path as File
+from typing import Any
+
+from maxent.app.config import Config, build, load
+from maxent.app.job import Job
+from maxent.errors import ConfigError, ResourceError
+from maxent.text import memory, plural
+from maxent.version import __version__
+
+__all__ = ["Outcome", "check", "folder", "name", "solve"]
+
+Say = Callable[[str], None]
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """What a run left behind.
+
+    Parameters
+    ----------
+    record : mapping
+        The content of `result.json` (record.py).
+    folder : pathlib.Path
+        Where it was written.
+    """
+
+    record: Mapping[str, Any]
+    folder: File
+
+
+def solve(file: File, *, out: File | None, force: bool, driver: str | None, say: Say) -> Outcome:
+    """Read a config, solve its problem and write the run folder.
+
+    Parameters
+    ----------
+    file : pathlib.Path
+        The config.
+    out : pathlib.Path or None
+        The run folder; None takes `runs/<name of the config>-<hash>`.
+    force : bool
+        Replace a run folder that is there already.
+    driver : str or None
+        "auto", "host" or "jax"; None takes what the config says.
+    say : callable
+        Receives lines of progress.
+
+    Returns
+    -------
+    Outcome
+
+    Raises
+    ------
+    ConfigError
+        Bad config, or a folder that cannot be written; nothing is left behind then.
+    """
+    started, clock = time.time(), time.perf_counter()
+    config = load(file)
+    asked = driver or config.header.driver
+    if out is not None:
+        _refuse_existing(out, force)
+    job = build(config)
+    seconds = {"build": time.perf_counter() - clock}
+    say(f"{file}: {plural(len(job.targets), 'charge')}, {plural(job.family.size, 'state')}")
+    target = out if out is not None else File("runs") / name(config, job, asked)
+    with folder(target, force=force) as part:
+        clock = time.perf_counter()
+        result = _fit(config, job, asked)
+        seconds["fit"] = time.perf_counter() - clock
+        say(f"fit: {plural(result.iterations, 'iteration')} in {seconds['fit']:.2f} s")
+        from maxent.app.record import record as collect
+
+        found = collect(config, job, result, asked_driver=asked, versions=_versions())
+        _write(part, config, job, result, found)
+        manifest = {
+            "started": time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime(started)),
+            "seconds": seconds | {"total": time.time() - started},
+            "command": sys.argv,
+            "versions": found["versions"] | {"python": platform.python_version()},
+            "machine": {"system": platform.system(), "processor": platform.machine(), "cores": os.cpu_count()},
+            "seed": None,
+            "inputs": dict(job.digests),
+            "files": {f.name: hashlib.sha256(f.read_bytes()).hexdigest() for f in sorted(part.iterdir())},
+        }
+        (part / "manifest.json").write_text(json.dumps(manifest, indent=2) + "\n", encoding="utf-8")
+    say(f"wrote {target}")
+    return Outcome(found, target)
+
+
+def check(file: File) -> tuple[Config, Job]:
+    """Do everything but the fit: read, check and build.
+
+    Parameters
+    ----------
+    file : pathlib.Path
+
+    Returns
+    -------
+    tuple of Config and Job
+
+    Raises
+    ------
+    ConfigError
+    """
+    config = load(file)
+    return config, build(config)
+
+
+def name(config: Config, job: Job, driver: str) -> str:
+    """Name a run folder: the config's name and eight digits that change with anything that may change the result.
+
+    Parameters
+    ----------
+    config : Config
+    job : Job
+        Its input files count by content.
+    driver : str
+
+    Returns
+    -------
+    str
+    """
+    resolved = {
+        "header": asdict(config.header) | {"driver": driver},
+        "options": asdict(config.options),
+        "inputs": dict(job.digests),
+        "version": __version__,
+    }
+    digest = hashlib.sha256(json.dumps(resolved, sort_keys=True).encode()).hexdigest()
+    return f"{config.file.stem}-{digest[:8]}"
+
+
+@contextmanager
+def folder(target: File, *, force: bool):
+    """Give a temporary folder beside `target` that becomes `target` if all goes well, and vanishes otherwise.
+
+    Parameters
+    ----------
+    target : pathlib.Path
+        The folder to make.
+    force : bool
+        Replace an existing run folder; a folder that is no run folder is never replaced.
+
+    Yields
+    ------
+    pathlib.Path
+        The temporary folder.
+
+    Raises
+    ------
+    ConfigError
+        If it cannot be made, before any work is done.
+    """
+    _refuse_existing(target, force)
+    made = []
+    try:
+        for parent in reversed(target.absolute().parents):
+            if not parent.exists():
+                parent.mkdir()
+                made.append(parent)
+        part = target.absolute().parent / f".{target.name}.part-{os.getpid()}"
+        part.mkdir()
+    except OSError as bad:
+        _remove_empty(made)
+        raise ConfigError(f"{target}: cannot write a folder here: {bad.strerror}") from None
+    try:
+        yield part
+        _put(part, target)
+    except BaseException:
+        shutil.rmtree(part, ignore_errors=True)
+        _remove_empty(made)
+        raise
+
+
+def _put(part: File, target: File) -> None:
+    """Rename the finished folder; an old one steps aside first and is removed last."""
+    if not target.exists():
+        part.rename(target)
+        return
+    old = part.with_name(f"{part.name}.old")
+    target.rename(old)
+    try:
+        part.rename(target)
+    except OSError:
+        old.rename(target)
+        raise
+    shutil.rmtree(old)
+
+
+def _refuse_existing(target: File, force: bool) -> None:
+    try:
+        there = target.exists() or target.is_symlink()
+    except OSError as bad:
+        raise ConfigError(f"{target}: cannot write a folder here: {bad.strerror}") from None
+    if not there:
+        return
+    if not force:
+        raise ConfigError(f"{target}: exists already; choose another folder with --out, or replace it with --force")
+    if not (target / "manifest.json").is_file():
+        raise ConfigError(f"{target}: exists and is no run folder; --force replaces run folders only")
+
+
+def _remove_empty(made: list[File]) -> None:
+    for parent in reversed(made):
+        try:
+            parent.rmdir()
+        except OSError:
+            return  # someone else put something there
+
+
+def _fit(config: Config, job: Job, driver: str) -> Any:
+    import maxent
+
+    try:
+        return maxent.solve(
+            job.family,
+            {name: target.value for name, target in job.targets.items()},
+            accuracy={name: target.accuracy for name, target in job.targets.items()},
+            driver=driver,
+        )
+    except ResourceError as bad:
+        raise config.error([((), str(bad))]) from bad
+
+
+def _write(part: File, config: Config, job: Job, result: Any, record: Mapping[str, Any]) -> None:
+    from maxent.app import arrays, report
+    from maxent.app.record import dump
+
+    (part / "config.toml").write_bytes(config.data)
+    (part / "result.json").write_text(dump(record), encoding="utf-8")
+    probabilities = getattr(result.state, "probabilities", None)
+    arrays.write(part / "result.nc", record, probabilities=probabilities, labels=job.labels)
+    (part / "report.html").write_text(report.render(record), encoding="utf-8")
+
+
+def _versions() -> dict[str, str]:
+    """Versions of the libraries that do the arithmetic."""
+    return {package: metadata.version(package) for package in ("numpy", "scipy", "jax")}
+
+
+def sizes(job: Job) -> list[tuple[str, str]]:
+    """List what `check` shows about a job: what was built, how large it is and what a solve will need.
+
+    Parameters
+    ----------
+    job : Job
+
+    Returns
+    -------
+    list of (name, text)
+    """
+    rows = [*job.facts.items()]
+    if job.memory:
+        rows.append(("memory", f"about {memory(job.memory)} for the fit"))
+    return rows
