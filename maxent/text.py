@@ -9,7 +9,17 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable, Mapping, Sequence
 
-__all__ = ["combination", "digits", "listing", "memory", "number", "plural", "suggestion", "table", "with_error"]
+__all__ = [
+    "combination",
+    "digits",
+    "listing",
+    "memory",
+    "number",
+    "plural",
+    "suggestion",
+    "table",
+    "with_error",
+]
 
 
 def number(x: float | None, significant: int = 10) -> str:
@@ -43,8 +53,8 @@ def with_error(value: float | None, error: float | None, most: int = 12) -> str:
     """Write a value with its standard error in brackets, `1.235(12)`.
 
     The error is rounded by the rule of the Particle Data Group: if its three leading digits lie in 100..354
-    two digits are kept, in 355..949 one, and 950..999 becomes 1000 with two digits kept.  The value is rounded
-    to the same place.
+    two digits are kept, in 355..949 one, and 950..999 becomes 1000 with two digits kept.  The value is
+    rounded to the same place.
 
     Parameters
     ----------
@@ -72,19 +82,14 @@ def with_error(value: float | None, error: float | None, most: int = 12) -> str:
     """
     if value is None or math.isnan(value) or math.isinf(value):
         return number(value)
-    if error is None or not math.isfinite(error) or error <= 0:
+    if error is None or not math.isfinite(error) or error < 1e-300:
         return number(value, most)
     power = math.floor(math.log10(error))
-    lead = round(error / 10.0**power * 100) if power > -300 else 100
+    lead = round(error / 10.0 ** (power - 2))
     if lead >= 1000:
-        lead, power = lead // 10, power + 1
-    if lead < 355:
-        place = power - 1
-    elif lead < 950:
-        place = power
-    else:
-        place, lead, power = power, 100, power + 1
-    units = round(lead * 10.0 ** (power - 2 - place))
+        lead, power = 100, power + 1
+    place = power - 1 if lead < 355 else power
+    units = 10 if lead >= 950 else round(error / 10.0**place)
     size = max(abs(value), error)
     shift = math.floor(math.log10(size))
     if shift - place + 1 > most:

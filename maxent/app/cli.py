@@ -1,7 +1,7 @@
 """The command `multipliers`: arguments in, tables out, exit codes.
 
-Floor: app.  Results go to stdout, everything else to stderr.  Imports nothing but the standard library until a command
-needs more, so that `--help` and config errors are quick.
+Floor: app.  Results go to stdout, everything else to stderr.  Imports nothing but the standard library until
+a command needs more, so that `--help` and config errors are quick.
 
 Exit codes: 0 solved; 1 ran, the answer is no; 2 bad command line or config; 3 our fault; 130 interrupted.
 """
@@ -19,7 +19,8 @@ from maxent.version import __version__
 
 __all__ = ["main"]
 
-_CODES = "exit codes: 0 solved; 1 ran, the answer is no; 2 bad command line or config; 3 our fault; 130 interrupted"
+_CODES = """exit codes: 0 solved; 1 ran, the answer is no; 2 bad command line or config;
+            3 our fault; 130 interrupted"""
 
 
 def parser() -> argparse.ArgumentParser:
@@ -46,7 +47,9 @@ def parser() -> argparse.ArgumentParser:
     solve.add_argument("--json", action="store_true", help="print result.json instead of the table")
     solve.add_argument("--force", action="store_true", help="replace the run folder if it is there already")
     solve.add_argument(
-        "--driver", choices=["auto", "host", "jax"], help="loop that does the fit (default: as the config says)"
+        "--driver",
+        choices=["auto", "host", "jax"],
+        help="loop that does the fit (default: as the config says)",
     )
     solve.add_argument("--quiet", action="store_true", help="no progress on stderr")
     check = commands.add_parser(
@@ -91,7 +94,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
 
         traceback.print_exc()
         print(
-            f"This is a fault of multipliers {__version__}, not of your input; please report it with the lines above.",
+            f"This is a fault of multipliers {__version__}; please report it together with the lines above.",
             file=sys.stderr,
         )
         return 3
@@ -123,7 +126,8 @@ def _check(given: argparse.Namespace) -> int:
     print(table(sizes(job)))
     print()
     rows = [
-        (name, with_error(t.value, t.sigma), number(t.accuracy, 3), t.source) for name, t in job.targets.items()
+        (name, with_error(t.value, t.sigma), number(t.accuracy, 3), t.source)
+        for name, t in job.targets.items()
     ]
     print(table(rows, ("charge", "target", "accuracy", "source"), right=[1, 2]))
     return 0

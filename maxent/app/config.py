@@ -1,9 +1,9 @@
 """Read a config: TOML in, checked options out, or every problem at once as `file:line: key: text`.
 
-Floor: app.  The kind named in the file decides which keys exist (`maxent/app/kinds/`, one file per kind).  Keys are
-checked against the kind's `Options` by pydantic in strict mode; names shared by all kinds (charges, targets, accuracy)
-and infinite numbers are checked here.
-Must not know: lattices, families, how a problem is solved.
+Floor: app.  The kind named in the file decides which keys exist (`maxent/app/kinds/`, one file per kind).
+Keys are checked against the kind's `Options` by pydantic in strict mode; names shared by all kinds (charges,
+targets, accuracy) and infinite numbers are checked here. Must not know: lattices, families, how a problem is
+solved.
 """
 
 from __future__ import annotations
@@ -18,7 +18,7 @@ from pathlib import Path as File
 from typing import Any, Literal
 
 from maxent.app import kinds
-from maxent.app.job import BadInput, Job, Problems
+from maxent.app.job import BadInput, Job, Problems, says
 from maxent.app.locate import Path, Positions, locate, repeated
 from maxent.errors import ConfigError, ResourceError
 from maxent.text import listing, suggestion
@@ -34,11 +34,11 @@ class Header:
 
     __pydantic_config__ = {"extra": "forbid", "strict": True}
 
-    kind: str = field(metadata={"help": "What the config describes; decides which further keys exist."})
-    title: str = field(default="", metadata={"help": "One line for the head of the report."})
+    kind: str = field(metadata=says("What the config describes; decides which further keys exist."))
+    title: str = field(default="", metadata=says("One line for the head of the report."))
     driver: Literal["auto", "host", "jax"] = field(
         default="auto",
-        metadata={"help": "Which loop does the fit; the command line option `--driver` wins over it."},
+        metadata=says("Which loop does the fit; the command line option `--driver` wins over it."),
     )
 
 

@@ -1,7 +1,7 @@
 """Numbers from files beside a config: NumPy arrays, comma-separated tables, Matrix Market matrices.
 
-Floor: app.  Nothing is ever unpickled.  Every file that was read is remembered with its digest, because the name of a
-run folder depends on it.
+Floor: app.  Nothing is ever unpickled.  Every file that was read is remembered with its digest, because the
+name of a run folder depends on it.
 Must not know: what the numbers mean.
 """
 
@@ -56,7 +56,9 @@ class Files:
         file = self.folder / name
         ending = file.suffix.lower()
         if ending not in (".npy", ".npz", ".csv", ".mtx"):
-            raise ValueError(f"{name!r} is no file this program reads; expected .npy, .npz:name, .csv:column or .mtx")
+            raise ValueError(
+                f"{name!r} is no file this program reads; expected .npy, .npz:name, .csv:column or .mtx"
+            )
         try:
             data = file.read_bytes()
         except OSError as bad:
@@ -75,7 +77,8 @@ class Files:
             if member not in loaded.files:
                 raise ValueError(f"has no array {member!r}; it has {', '.join(sorted(loaded.files))}")
             return loaded[member]
-        except Exception as bad:  # whatever a damaged file makes a reader raise, the user needs the file's name
+        except Exception as bad:
+            # whatever a damaged file makes a reader raise, the user needs the file's name
             text = " ".join(str(bad).split())
             if "allow_pickle" in text:
                 text = "holds Python objects; only plain numbers are read"

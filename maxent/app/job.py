@@ -14,7 +14,17 @@ from maxent.app.locate import Path
 from maxent.errors import ConfigError
 from maxent.text import suggestion
 
-__all__ = ["BadInput", "Job", "Problems", "Target"]
+__all__ = ["ACCURACY", "BadInput", "Job", "Problems", "Target", "says"]
+
+ACCURACY = (
+    "Name of a charge -> how far its target may be off because of rounding when it was computed; "
+    "0 where nothing is said. This is no measurement error."
+)
+
+
+def says(text: str) -> dict[str, str]:
+    """Document a key of a config: metadata of the dataclass field that stands for it."""
+    return {"help": text}
 
 
 class BadInput(ConfigError):
@@ -67,7 +77,7 @@ class Target:
     source : str
         "given", or what it was computed from.
     sigma : float or None
-        Standard error of the number, if it was measured.  It is shown beside the target and does not loosen it.
+        Standard error of the number, if it was measured; shown beside the target, never used to loosen it.
     accuracy : float
         How far the target may be off because of the way it was computed; 0 takes it as exact.
     """

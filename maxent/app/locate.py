@@ -1,8 +1,8 @@
 """Where in a TOML file each key stands, so that an error about a value can name its line.
 
-Floor: app.  `tomllib` tells lines for syntax errors only; this scanner walks text that is known to be good TOML and
-notes the line of every key, table and list element.  It reads no values and checks nothing.
-Must not know: what the keys mean.
+Floor: app.  `tomllib` tells lines for syntax errors only; this scanner walks text that is known to be good
+TOML and notes the line of every key, table and list element.  It reads no values and checks nothing. Must not
+know: what the keys mean.
 """
 
 from __future__ import annotations
@@ -32,14 +32,14 @@ class Positions:
         self.lines = dict(lines)
 
     def line(self, path: Path) -> int:
-        """Give the line of a path, or of its nearest ancestor that the file contains (1 for the file itself)."""
+        """Give the line of a path, or of its nearest ancestor in the file (1 for the file itself)."""
         for n in range(len(path), 0, -1):
             if path[:n] in self.lines:
                 return self.lines[path[:n]]
         return 1
 
     def last_before(self, line: int) -> Path:
-        """Give the path that was written last at or above a line, without list indices; () if there is none."""
+        """Give the path written last at or above a line, without list indices; () if there is none."""
         best: Path = ()
         for path, at in self.lines.items():
             if at <= line and at >= self.lines.get(best, 0):
@@ -48,7 +48,7 @@ class Positions:
 
 
 def locate(text: str) -> Positions:
-    """Map every key, table and list element of a TOML text to its line.
+    r"""Map every key, table and list element of a TOML text to its line.
 
     Parameters
     ----------
@@ -61,7 +61,7 @@ def locate(text: str) -> Positions:
 
     Examples
     --------
-    >>> locate('a = 1\\n[b]\\n"c d" = [2,\\n 3]').lines
+    >>> locate('a = 1\n[b]\n"c d" = [2,\n 3]').lines
     {('a',): 1, ('b',): 2, ('b', 'c d'): 3, ('b', 'c d', 0): 3, ('b', 'c d', 1): 4}
     """
     return Positions(_scan(text).lines)

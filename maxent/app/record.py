@@ -1,8 +1,7 @@
-"""A result as plain data: the content of `result.json`, and all that the report and the terminal are made from.
+"""A result as plain data: the content of `result.json`, from which report and terminal are made.
 
-Floor: app.  Format `maxent.result/1`, described in `maxent/app/schema/result.schema.json` and docs/result.md.  Numbers that
-are not finite become null.
-Must not know: files, HTML, the clock.
+Floor: app.  Format `maxent.result/1`, described in `maxent/app/schema/result.schema.json` and docs/result.md.
+Numbers that are not finite become null. Must not know: files, HTML, the clock.
 """
 
 from __future__ import annotations
@@ -22,7 +21,9 @@ __all__ = ["SCHEMA", "dump", "record"]
 SCHEMA = "maxent.result/1"
 
 
-def record(config: Config, job: Job, result: Any, *, asked_driver: str, versions: Mapping[str, str]) -> dict[str, Any]:
+def record(
+    config: Config, job: Job, result: Any, *, asked_driver: str, versions: Mapping[str, str]
+) -> dict[str, Any]:
     """Collect everything a result says, with the names of the charges.
 
     Parameters

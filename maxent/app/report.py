@@ -1,7 +1,7 @@
 """The report page of a run, made from its record and nothing else.
 
-Floor: app.  One Jinja2 template with inline style, no script, everything escaped.  Computes nothing: numbers come from
-the record, sentences from words.py, roundings from text.py.
+Floor: app.  One Jinja2 template with inline style, no script, everything escaped.  Computes nothing: numbers
+come from the record, sentences from words.py, roundings from text.py.
 """
 
 from __future__ import annotations
@@ -45,4 +45,6 @@ def render(record: Mapping[str, Any]) -> str:
         "face": words.face,
         "redundancy": words.redundancy,
     }
-    return environment.get_template("report.html").render(r=record, short=words.verdict(record), with_error=with_error)
+    return environment.get_template("report.html").render(
+        r=record, short=words.verdict(record), with_error=with_error
+    )

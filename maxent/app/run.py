@@ -95,7 +95,11 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
             "seconds": seconds | {"total": time.time() - started},
             "command": sys.argv,
             "versions": found["versions"] | {"python": platform.python_version()},
-            "machine": {"system": platform.system(), "processor": platform.machine(), "cores": os.cpu_count()},
+            "machine": {
+                "system": platform.system(),
+                "processor": platform.machine(),
+                "cores": os.cpu_count(),
+            },
             "seed": None,
             "inputs": dict(job.digests),
             "files": {f.name: hashlib.sha256(f.read_bytes()).hexdigest() for f in sorted(part.iterdir())},
@@ -125,7 +129,7 @@ def check(file: File) -> tuple[Config, Job]:
 
 
 def name(config: Config, job: Job, driver: str) -> str:
-    """Name a run folder: the config's name and eight digits that change with anything that may change the result.
+    """Name a run folder: the config's name, and eight digits that change with all that may change the result.
 
     Parameters
     ----------
@@ -213,7 +217,9 @@ def _refuse_existing(target: File, force: bool) -> None:
     if not there:
         return
     if not force:
-        raise ConfigError(f"{target}: exists already; choose another folder with --out, or replace it with --force")
+        raise ConfigError(
+            f"{target}: exists already; choose another folder with --out, or replace it with --force"
+        )
     if not (target / "manifest.json").is_file():
         raise ConfigError(f"{target}: exists and is no run folder; --force replaces run folders only")
 

@@ -41,13 +41,14 @@ def certificate(found: Mapping[str, Any]) -> str:
     margin, tolerance = number(found["margin"], 3), number(found["tolerance"], 3)
     if found["kind"] == "contradiction":
         return (
-            f"The combination {what} has the same value {lowest} in every state, but the targets ask for {asked}; "
-            f"they are off by {margin} (resolved to {tolerance})."
+            f"The combination {what} has the same value {lowest} in every state, but the targets ask for "
+            f"{asked}; they are off by {margin} (resolved to {tolerance})."
         )
     if found["kind"] == "face":
         return (
             f"In every state the combination {what} is at least {lowest}, and the targets ask for {asked}: "
-            f"the lowest value itself (margin {margin}, resolved to {tolerance}). No finite multipliers give that."
+            f"the lowest value itself (margin {margin}, resolved to {tolerance}). "
+            "No finite multipliers give that."
         )
     return (
         f"In every state the combination {what} is at least {lowest}, but the targets ask for {asked}; "

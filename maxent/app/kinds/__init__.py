@@ -1,7 +1,7 @@
 """Kinds of configs, one file each; the file name is the `kind` in TOML.
 
-A kind file holds `Options`, a frozen dataclass with one documented field per key, and `build(options, folder) -> Job`.
-A new kind is found by listing this folder; nothing else needs to be edited.
+A kind file holds `Options`, a frozen dataclass with one documented field per key, and
+`build(options, folder) -> Job`.  A new kind is found by listing this folder; nothing else needs to be edited.
 """
 
 from __future__ import annotations

@@ -1,4 +1,4 @@
-"""Kind `operators`: a finite Hilbert space, each charge a Hermitian matrix from a file or written into the config.
+"""Kind `operators`: a finite Hilbert space, each charge a Hermitian matrix from a file or from the config.
 
 Floor: app/kinds.
 Must not know: lattices, the command line, the report.
@@ -12,10 +12,9 @@ from pathlib import Path as File
 from typing import Any
 
 import numpy as np
-from scipy import sparse
 
 from maxent.app.data import Files
-from maxent.app.job import Job, Problems, Target
+from maxent.app.job import ACCURACY, Job, Problems, Target, says
 from maxent.text import number, plural
 
 __all__ = ["Options", "build"]
@@ -28,29 +27,29 @@ class Options:
     __pydantic_config__ = {"extra": "forbid", "strict": True}
 
     charges: dict[str, list[list[float | str]] | str] = field(
-        metadata={
-            "help": "Name of a charge -> a Hermitian matrix: rows of numbers (complex ones as text, `\"1+2j\"`), or a file."
-        }
+        metadata=says(
+            "Name of a charge -> a Hermitian matrix: rows of numbers, or a file. "
+            'Complex numbers are written as text, `"1+2j"`.'
+        )
     )
-    targets: dict[str, float] = field(metadata={"help": "Name of a charge -> the mean asked for."})
+    targets: dict[str, float] = field(metadata=says("Name of a charge -> the mean asked for."))
     accuracy: dict[str, float] = field(
         default_factory=dict,
-        metadata={
-            "help": "Name of a charge -> how far its target may be off because of rounding when it was computed; "
-            "0 where nothing is said. This is no measurement error."
-        },
+        metadata=says(ACCURACY),
     )
     dims: list[int] | None = field(
         default=None,
-        metadata={"help": "Dimensions of the parts of the space, first one slowest; their product is the dimension."},
+        metadata=says(
+            "Dimensions of the parts of the space, first one slowest; their product is the dimension."
+        ),
     )
     log_prior: list[list[float | str]] | str | None = field(
         default=None,
-        metadata={"help": "A Hermitian matrix, the log of the prior state up to a constant; rows, or a file."},
+        metadata=says("A Hermitian matrix, the log of the prior state up to a constant; rows, or a file."),
     )
     predictions: dict[str, list[list[float | str]] | str] = field(
         default_factory=dict,
-        metadata={"help": "Name -> a further Hermitian matrix whose mean is wanted: rows, or a file."},
+        metadata=says("Name -> a further Hermitian matrix whose mean is wanted: rows, or a file."),
     )
 
 
@@ -86,7 +85,7 @@ def build(options: Options, folder: File) -> Job:
     charges = {name: read(("charges", name), value) for name, value in options.charges.items()}
     predictions = {name: read(("predictions", name), value) for name, value in options.predictions.items()}
     prior = None if options.log_prior is None else read(("log_prior",), options.log_prior)
-    every = {("charges", name): matrix for name, matrix in charges.items()}
+    every: dict[tuple[str, ...], Any] = {("charges", name): matrix for name, matrix in charges.items()}
     every |= {("predictions", name): matrix for name, matrix in predictions.items()}
     every |= {("log_prior",): prior}
     size, first = 0, ""
@@ -102,10 +101,13 @@ def build(options: Options, folder: File) -> Job:
             problems.add(("dims",), "dimensions must be positive")
         elif size and prod(options.dims) != size:
             problems.add(
-                ("dims",), f"the product of the dimensions is {prod(options.dims)}, but {first} is {size} x {size}"
+                ("dims",),
+                f"the product of the dimensions is {prod(options.dims)}, but {first} is {size} x {size}",
             )
     problems.raise_any()
-    facts = {"space": f"dimension {size}" + (f" = {' x '.join(map(str, options.dims))}" if options.dims else "")}
+    facts = {
+        "space": f"dimension {size}" + (f" = {' x '.join(map(str, options.dims))}" if options.dims else "")
+    }
     if prior is not None:
         facts["prior"] = "given; the state is pulled towards it"
     if files.digests:
@@ -114,7 +116,8 @@ def build(options: Options, folder: File) -> Job:
 
     family = Matrices(charges, dims=None if options.dims is None else tuple(options.dims), log_prior=prior)
     targets = {
-        name: Target(float(options.targets[name]), accuracy=options.accuracy.get(name, 0.0)) for name in charges
+        name: Target(float(options.targets[name]), accuracy=options.accuracy.get(name, 0.0))
+        for name in charges
     }
     return Job(
         family, targets, predictions, facts, memory=16.0 * size**2 * (len(charges) + 4), digests=files.digests
@@ -124,7 +127,9 @@ def build(options: Options, folder: File) -> Job:
 def _inline(rows: list[list[float | str]]) -> np.ndarray:
     """Turn rows of numbers and complex numbers written as text into a matrix."""
     if not rows or any(len(row) != len(rows) for row in rows):
-        raise ValueError(f"not square: {plural(len(rows), 'row')} of lengths {sorted({len(r) for r in rows})}")
+        raise ValueError(
+            f"not square: {plural(len(rows), 'row')} of lengths {sorted({len(r) for r in rows})}"
+        )
     out = np.zeros((len(rows), len(rows)), dtype=complex)
     for i, row in enumerate(rows):
         for k, entry in enumerate(row):
@@ -139,8 +144,10 @@ def _inline(rows: list[list[float | str]]) -> np.ndarray:
 
 def _checked(matrix: Any) -> Any:
     """Refuse what is no finite, square, Hermitian matrix of numbers; sparse matrices stay sparse."""
-    if sparse.issparse(matrix):
-        matrix = sparse.csr_array(matrix)
+    from scipy.sparse import issparse
+
+    if issparse(matrix):
+        matrix = matrix.tocsr()
         entries = matrix.data
     else:
         matrix = np.asarray(matrix)

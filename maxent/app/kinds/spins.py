@@ -1,4 +1,4 @@
-"""Kind `spins`: spin-1/2 sites on a ring or an open chain, operators as formulas, targets from a product start state.
+"""Kind `spins`: spin-1/2 sites on a ring or a chain, operators as formulas, targets from a product state.
 
 Floor: app/kinds, the only place besides the quench and lab floors that knows lattice and families together.
 Must not know: the command line, the report.
@@ -11,7 +11,7 @@ from dataclasses import dataclass, field
 from pathlib import Path as File
 from typing import Any, Literal
 
-from maxent.app.job import Job, Problems, Target
+from maxent.app.job import ACCURACY, Job, Problems, Target, says
 from maxent.errors import FormulaError, ResourceError
 from maxent.text import plural
 
@@ -27,9 +27,9 @@ class Sites:
     __pydantic_config__ = _STRICT
 
     geometry: Literal["ring", "chain"] = field(
-        metadata={"help": "`ring`: subscripts wrap around; `chain`: only terms that fit are kept."}
+        metadata=says("`ring`: subscripts wrap around; `chain`: only terms that fit are kept.")
     )
-    size: int = field(metadata={"help": "Number of sites."})
+    size: int = field(metadata=says("Number of sites."))
 
 
 @dataclass(frozen=True)
@@ -42,10 +42,10 @@ class Start:
     __pydantic_config__ = _STRICT
 
     theta: float | list[float] | str = field(
-        metadata={"help": "Polar angle: a number, a pattern that repeats, or a formula in `i` and `L`."}
+        metadata=says("Polar angle: a number, a pattern that repeats, or a formula in `i` and `L`.")
     )
     phi: float | list[float] | str = field(
-        default=0.0, metadata={"help": "Azimuth, written in the same three ways, e.g. `\"2*pi*i/L\"`."}
+        default=0.0, metadata=says('Azimuth, written in the same three ways, e.g. `"2*pi*i/L"`.')
     )
 
 
@@ -55,29 +55,28 @@ class Options:
 
     __pydantic_config__ = _STRICT
 
-    sites: Sites = field(metadata={"help": "Where the spins sit."})
-    charges: dict[str, str] = field(metadata={"help": "Name of a charge -> formula of a Hermitian operator."})
+    sites: Sites = field(metadata=says("Where the spins sit."))
+    charges: dict[str, str] = field(metadata=says("Name of a charge -> formula of a Hermitian operator."))
     targets: dict[str, float | Literal["from start"]] = field(
-        metadata={"help": "Name of a charge -> the mean asked for, or its mean in the state `[start]`."}
+        metadata=says("Name of a charge -> the mean asked for, or its mean in the state `[start]`.")
     )
     parameters: dict[str, float | list[float]] = field(
         default_factory=dict,
-        metadata={"help": "Name -> number, or a list with one number per position; used in formulas."},
+        metadata=says("Name -> number, or a list with one number per position; used in formulas."),
     )
     densities: dict[str, str] = field(
         default_factory=dict,
-        metadata={"help": "Name -> formula with one free subscript; other formulas may use it shifted, `h[i+1]`."},
+        metadata=says(
+            "Name -> formula with one free subscript; other formulas may use it shifted, `h[i+1]`."
+        ),
     )
-    start: Start | None = field(default=None, metadata={"help": "Product state that gives targets."})
+    start: Start | None = field(default=None, metadata=says("Product state that gives targets."))
     accuracy: dict[str, float] = field(
         default_factory=dict,
-        metadata={
-            "help": "Name of a charge -> how far its target may be off because of rounding when it was computed; "
-            "0 where nothing is said. This is no measurement error."
-        },
+        metadata=says(ACCURACY),
     )
     predictions: dict[str, str] = field(
-        default_factory=dict, metadata={"help": "Name -> formula of a further operator whose mean is wanted."}
+        default_factory=dict, metadata=says("Name -> formula of a further operator whose mean is wanted.")
     )
 
 
@@ -111,7 +110,9 @@ def build(options: Options, folder: File) -> Job:
         problems.raise_any()
     operators = _Formulas(options, sites, problems)
     charges = {name: operators.read(("charges", name), text) for name, text in options.charges.items()}
-    predictions = {name: operators.read(("predictions", name), text) for name, text in options.predictions.items()}
+    predictions = {
+        name: operators.read(("predictions", name), text) for name, text in options.predictions.items()
+    }
     start = None
     if options.start is not None:
         start = _start(options.start, sites, problems)
@@ -185,7 +186,10 @@ def _start(start: Start, sites: Any, problems: Problems) -> Any:
     from maxent.lattice import ProductState
 
     before = len(problems.found)
-    for key, angles in (("theta", {"theta": start.theta, "phi": 0.0}), ("phi", {"theta": 0.0, "phi": start.phi})):
+    for key, angles in (
+        ("theta", {"theta": start.theta, "phi": 0.0}),
+        ("phi", {"theta": 0.0, "phi": start.phi}),
+    ):
         try:
             ProductState(sites, **angles)
         except ValueError as bad:

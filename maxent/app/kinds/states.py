@@ -14,7 +14,7 @@ from typing import Any, Literal
 import numpy as np
 
 from maxent.app.data import Files
-from maxent.app.job import Job, Problems, Target
+from maxent.app.job import ACCURACY, Job, Problems, Target, says
 from maxent.text import plural
 
 __all__ = ["Counts", "Options", "build"]
@@ -26,8 +26,8 @@ class Counts:
 
     __pydantic_config__ = {"extra": "forbid", "strict": True}
 
-    per_state: list[float] | str = field(metadata={"help": "Counts, one per state: a list, or a file."})
-    source: str = field(default="", metadata={"help": "Where the counts come from."})
+    per_state: list[float] | str = field(metadata=says("Counts, one per state: a list, or a file."))
+    source: str = field(default="", metadata=says("Where the counts come from."))
 
 
 @dataclass(frozen=True)
@@ -37,40 +37,37 @@ class Options:
     __pydantic_config__ = {"extra": "forbid", "strict": True}
 
     charges: dict[str, list[float] | str] = field(
-        metadata={"help": "Name of a charge -> its value in each state: a list, or a file."}
+        metadata=says("Name of a charge -> its value in each state: a list, or a file.")
     )
     targets: dict[str, float | Literal["from counts"]] = field(
-        metadata={"help": "Name of a charge -> the mean asked for, or the sample mean of `[counts]`."}
+        metadata=says("Name of a charge -> the mean asked for, or the sample mean of `[counts]`.")
     )
     accuracy: dict[str, float] = field(
         default_factory=dict,
-        metadata={
-            "help": "Name of a charge -> how far its target may be off because of rounding when it was computed; "
-            "0 where nothing is said. This is no measurement error."
-        },
+        metadata=says(ACCURACY),
     )
     counts: Counts | None = field(
         default=None,
-        metadata={"help": "Measured counts; they give targets, each with its sampling standard error beside it."},
+        metadata=says("Measured counts; they give targets, each with its sampling standard error beside it."),
     )
-    labels: list[str] | None = field(default=None, metadata={"help": "Names of the states, in order."})
+    labels: list[str] | None = field(default=None, metadata=says("Names of the states, in order."))
     log_weights: list[float] | str | None = field(
         default=None,
-        metadata={
-            "help": "Log of how many microstates each state stands for (degeneracy): a list, or a file; "
+        metadata=says(
+            "Log of how many microstates each state stands for (degeneracy): a list, or a file; "
             "counted in the entropy. -inf drops a state."
-        },
+        ),
     )
     log_prior: list[float] | str | None = field(
         default=None,
-        metadata={
-            "help": "Log of the prior probability of each state, up to a constant: a list, or a file; "
+        metadata=says(
+            "Log of the prior probability of each state, up to a constant: a list, or a file; "
             "changes the state but not how entropy is counted. -inf drops a state."
-        },
+        ),
     )
     predictions: dict[str, list[float] | str] = field(
         default_factory=dict,
-        metadata={"help": "Name -> a further quantity whose mean is wanted: a list, or a file."},
+        metadata=says("Name -> a further quantity whose mean is wanted: a list, or a file."),
     )
 
 
@@ -98,7 +95,8 @@ def build(options: Options, folder: File) -> Job:
         name: _array(files, problems, ("charges", name), value) for name, value in options.charges.items()
     }
     predictions = {
-        name: _array(files, problems, ("predictions", name), value) for name, value in options.predictions.items()
+        name: _array(files, problems, ("predictions", name), value)
+        for name, value in options.predictions.items()
     }
     weights = _array(files, problems, ("log_weights",), options.log_weights, drop=True)
     prior = _array(files, problems, ("log_prior",), options.log_prior, drop=True)
@@ -143,7 +141,12 @@ def build(options: Options, folder: File) -> Job:
 
 
 def _array(
-    files: Files, problems: Problems, path: tuple[str, ...], value: list[float] | str | None, *, drop: bool = False
+    files: Files,
+    problems: Problems,
+    path: tuple[str, ...],
+    value: list[float] | str | None,
+    *,
+    drop: bool = False,
 ) -> Any:
     """Read one list of numbers; None where there is none or where it is bad."""
     if value is None:
@@ -180,10 +183,10 @@ def _check_lengths(
     labels: list[str] | None,
 ) -> int:
     """Check that every list has one number per state; the first charge sets the number of states."""
-    lengths = {("charges", name): values for name, values in charges.items()}
-    lengths |= {("predictions", name): values for name, values in predictions.items()}
-    every: dict[tuple[str, ...], Any] = {
-        **lengths, ("log_weights",): weights, ("log_prior",): prior, ("counts", "per_state"): counts,
+    every: dict[tuple[str, ...], Any] = {("charges", name): values for name, values in charges.items()}
+    every |= {("predictions", name): values for name, values in predictions.items()}
+    every |= {
+        ("log_weights",): weights, ("log_prior",): prior, ("counts", "per_state"): counts,
         ("labels",): labels,
     }  # fmt: skip
     size, first = 0, ""
@@ -196,7 +199,10 @@ def _check_lengths(
                 problems.add(path, "an empty list; at least one state is needed")
                 return 0
         elif len(values) != size:
-            problems.add(path, f"has length {len(values)}, but {first} has length {size}; one entry per state is needed")
+            problems.add(
+                path,
+                f"has length {len(values)}, but {first} has length {size}; one entry per state is needed",
+            )
     return size
 
 
@@ -211,7 +217,8 @@ def _check_counts(problems: Problems, counts: np.ndarray) -> None:
 def _target(given: float | str, values: np.ndarray, counts: np.ndarray | None, accuracy: float) -> Target:
     """Take a target as given, or as the mean over the counts with its standard error.
 
-    The standard error of a mean of N independent observations is s/sqrt(N), s^2 = sum n_i (f_i - mean)^2/(N - 1).
+    The standard error of a mean of N independent observations is s/sqrt(N) with
+    s^2 = sum_i n_i (f_i - mean)^2 / (N - 1).
     """
     if counts is None or not isinstance(given, str):
         return Target(float(given), accuracy=accuracy)
