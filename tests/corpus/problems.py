@@ -1,0 +1,75 @@
+"""The corpus: every kind of problem, and how many of each a run holds.
+
+Each problem is drawn from its own generator, seeded by (seed, kind, index), so `make(kind, seed, index)`
+gives back any single one.  How its truth is known stands in the docstring of the function that makes it
+(`feasible`, `edges`, `dependents`); none of them calls the solver.
+"""
+
+from __future__ import annotations
+
+import zlib
+
+import numpy as np
+
+from tests.corpus import dependents, edges, feasible
+from tests.corpus.problem import Problem, named
+
+INSIDE = {
+    "quantum-real": (feasible.quantum_real, 10),
+    "quantum-complex": (feasible.quantum_complex, 10),
+    "commuting": (feasible.commuting, 6),
+    "blocks": (feasible.blocks, 8),
+    "lattice": (feasible.lattice, 6),
+    "classical": (feasible.classical, 10),
+    "degenerate": (feasible.degenerate, 9),
+    "prior-quantum": (feasible.prior_quantum, 8),
+    "prior-classical": (feasible.prior_classical, 8),
+    "weights-200": (feasible.weights_200, 10),
+    "weights-299": (feasible.weights_299, 8),
+    "weights-cancelling": (feasible.weights_from_multipliers, 6),
+    "weights-dominant": (feasible.weights_dominant, 6),
+    "units": (feasible.scales, 12),
+    "ill-conditioned": (feasible.near_dependent, 14),
+}
+
+EDGES = {
+    **{f"near-{shape}": (edges.near(shape), 9) for shape in edges.SHAPES},
+    "near-units": (edges.scaled("inside"), 9),
+    **{f"boundary-{shape}": (edges.boundary(shape), 6) for shape in edges.SHAPES},
+    "boundary-units": (edges.scaled("boundary"), 9),
+    **{f"outside-{shape}": (edges.outside(shape), 10) for shape in edges.SHAPES},
+    "outside-units": (edges.scaled("outside"), 10),
+    "outside-tangent": (edges.tangent, 10),
+    "outside-ill-conditioned": (dependents.nearly_dependent_outside, 10),
+}
+
+DEPENDENT = {
+    **{kind: (function, 10) for kind, function in dependents.REDUNDANT.items()},
+    "redundant-units": (dependents.redundant_scaled, 6),
+    "all-trivial": (dependents.all_trivial, 6),
+    "inconsistent-duplicate": (dependents.inconsistent_duplicate, 9),
+    "inconsistent-identity": (dependents.inconsistent_identity, 9),
+    "inconsistent-combination": (dependents.inconsistent_combination, 9),
+    "inconsistent-units": (dependents.inconsistent_scaled, 9),
+    "one-state": (dependents.single, 8),
+    "no-charge": (dependents.empty, 8),
+}
+
+KINDS = INSIDE | EDGES | DEPENDENT
+
+
+def make(kind: str, seed: int, index: int) -> Problem:
+    """The problem of this kind, seed and index; the same numbers on every call."""
+    function, _ = KINDS[kind]
+    rng = np.random.default_rng([seed, zlib.crc32(kind.encode()), index])
+    return named(function(rng, index), kind, seed, index)
+
+
+def problems(kind: str, seed: int = 0, count: int | None = None) -> list[Problem]:
+    """All problems of one kind, `count` of them or as many as a default run holds."""
+    return [make(kind, seed, index) for index in range(KINDS[kind][1] if count is None else count)]
+
+
+def corpus(seed: int = 0, count: int | None = None) -> list[Problem]:
+    """Problems of every kind."""
+    return [problem for kind in KINDS for problem in problems(kind, seed, count)]
