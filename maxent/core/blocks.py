@@ -182,6 +182,10 @@ class Blocks(Family):
     def evaluate(self, lam: Any, order: int = 2) -> Evaluation:
         """``ln Z``, values and covariance from one eigendecomposition per block; NumPy or JAX by the type of `lam`."""
         xp = namespace(lam)
+        if xp is np and not lam.any() and not self.prior_dense:
+            return self._at_zero(lam)
+        if xp is np and order < 2:
+            return self._values_alone(lam)
         energy = lam @ self.diagonal
         log_weight = -energy if self.prior is None else self.prior - energy
         spectra = []
@@ -208,7 +212,51 @@ class Blocks(Family):
         rounding = 4 * EPS * (1 + level) * xp.maximum(1.0, size)
         return Evaluation(log_z, values, covariance, rounding, level, factor=factor, lowest=lowest)
 
+    def _at_zero(self, lam: np.ndarray) -> Evaluation:
+        """Infinite temperature needs no decomposition: every basis is an eigenbasis."""
+        log_weight = np.zeros(self.diagonal.shape[1]) if self.prior is None else self.prior
+        top = float(log_weight.max(initial=0.0 if self.dense else -np.inf))
+        p = np.exp(log_weight - top)
+        total = p.sum() + np.exp(-top) * sum(a.shape[1] for a in self.dense)
+        p, w = p / total, np.exp(-top) / total
+        values = self.diagonal @ p
+        for a in self.dense:
+            values = values + w * np.real(np.einsum("jii->j", a))
+        flat = [np.zeros(a.shape[1]) for a in self.dense]
+        copies = [a.copy() for a in self.dense]
+        covariance, factor = _covariance(self.diagonal, p, copies, flat, [e + w for e in flat], values)
+        size = np.sqrt(np.linalg.norm(covariance)) if len(lam) else 0.0
+        return Evaluation(
+            top + np.log(total), values, covariance, 4 * EPS * max(1.0, size), np.float64(0.0), factor=factor,
+            lowest=np.float64(0.0),
+        )  # fmt: skip
+
+    def _values_alone(self, lam: np.ndarray) -> Evaluation:
+        """Host evaluation without covariance: one product per block instead of one per charge."""
+        energy = lam @ self.diagonal
+        log_weight = -energy if self.prior is None else self.prior - energy
+        pairs = []
+        for i, a in enumerate(self.dense):
+            k = combination(lam, a)
+            pairs.append(eigh(k - self.prior_dense[i] if self.prior_dense else k))
+        top = max(x.max(initial=-np.inf) for x in [log_weight, *[-e for e, _ in pairs]])
+        p = np.exp(log_weight - top)
+        weights = [np.exp(-e - top) for e, _ in pairs]
+        total = p.sum() + sum(w.sum() for w in weights)
+        values = self.diagonal @ (p / total)
+        for a, (_, u), w in zip(self.dense, pairs, weights, strict=True):
+            rho = (u * (w / total)) @ u.conj().T
+            values = values + np.real(a.reshape(len(a), -1) @ rho.T.reshape(-1))
+        level = max(np.abs(e).max(initial=0.0) for e in [energy, *[e for e, _ in pairs]])
+        blank = np.full((len(values), len(values)), np.nan)
+        return Evaluation(top + np.log(total), values, blank, 4 * EPS * (1 + level), level)
+
     # ------------------------------------------------------------------ questions of the verdict logic
+
+    def glance(self, v: np.ndarray) -> float:
+        """Smallest diagonal entry of ``v.Q``: the lowest level lies below it."""
+        entries = [v @ self.diagonal, *[v @ np.real(np.einsum("jii->ji", a)) for a in self.dense]]
+        return float(min(e.min(initial=np.inf) for e in entries))
 
     def reference(self) -> tuple[np.ndarray, np.ndarray]:
         """Infinite-temperature means, and charges minus mean as unit-weight rows of the Hilbert-Schmidt space."""

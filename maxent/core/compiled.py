@@ -14,6 +14,7 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 
+from maxent.core.blocks import Blocks
 from maxent.core.contract import EPS, Evaluation, Family
 from maxent.core.newton import PATIENCE, Iterate, at_floor, begin, newton_step
 
@@ -23,17 +24,32 @@ T = TypeVar("T")
 
 
 def register(*static: str) -> Any:
-    """Class decorator: make a dataclass a pytree whose fields are leaves, except those named `static`."""
+    """Class decorator: make a dataclass a pytree whose fields are leaves, except those named `static`.
+
+    Rebuilding sets the fields and nothing else: constructors validate, and a trace has nothing to validate.
+    """
 
     def apply(cls: type[T]) -> type[T]:
         names = [f.name for f in fields(cls)]  # type: ignore[arg-type]
-        jax.tree_util.register_dataclass(cls, [n for n in names if n not in static], list(static))
+        leaves = [n for n in names if n not in static]
+
+        def take_apart(x: T) -> tuple[list[Any], tuple[Any, ...]]:
+            return [getattr(x, n) for n in leaves], tuple(getattr(x, n) for n in static)
+
+        def rebuild(aux: tuple[Any, ...], children: Any) -> T:
+            x = object.__new__(cls)
+            for name, value in (*zip(leaves, children, strict=True), *zip(static, aux, strict=True)):
+                object.__setattr__(x, name, value)
+            return x
+
+        jax.tree_util.register_pytree_node(cls, take_apart, rebuild)
         return cls
 
     return apply
 
 
 register("factor")(Evaluation)
+register()(Blocks)
 
 
 @jax.jit

@@ -201,6 +201,10 @@ class Family:
         """Multipliers to start from, a point of the domain."""
         return np.zeros(len(self.scale))
 
+    def glance(self, v: np.ndarray) -> float:
+        """Cheap upper bound of ``lowest(v).value``; spares the decomposition when `v` cannot separate anything."""
+        return np.inf
+
     def face(self, v: np.ndarray, tol: float) -> Face | None:
         """Ground space of ``v.Q`` (levels within `tol` of zero) as a family, or None where there is none."""
         return None

@@ -30,6 +30,8 @@ def outside(problem: Problem, memo: Memo, x: np.ndarray) -> Outcome | None:
     if not np.linalg.norm(x) > 0:
         return None
     v = memo.whitening.to_user(x)
+    if problem.family.glance(v) <= 0.0:
+        return None
     margin, tolerance = problem.verify(v)
     if margin > tolerance:
         return memo.outcome(problem, Verdict.INFEASIBLE, direction=v, margin=margin, tolerance=tolerance)

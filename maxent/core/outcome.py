@@ -42,6 +42,8 @@ class Outcome:
         The number ``R nu`` of the existence proof, below 1/2 when it holds.
     reason : str
         Why there is no verdict.
+    depth : float
+        How far the targets lie inside the nearest face that was seen, NaN when none was.
     iterations : int
         Newton steps, faces included.
     trace : tuple
@@ -64,6 +66,7 @@ class Outcome:
     excess: np.ndarray | None = None
     shift: float = np.nan
     reason: str = ""
+    depth: float = np.nan
     iterations: int = 0
     trace: tuple[tuple[float, float, float], ...] = ()
 
@@ -107,5 +110,7 @@ class Memo:
     def outcome(self, problem: Problem, verdict: Verdict, **known: Any) -> Outcome:
         """Outcome with the bookkeeping filled in."""
         known.setdefault("at", self.at)
+        if self.near:
+            known["depth"] = -max(margin for margin, _ in self.near)
         known["iterations"] = known.get("iterations", 0) + self.iterations
         return Outcome(verdict, problem, self.whitening, shift=self.shift, trace=tuple(self.trace), **known)

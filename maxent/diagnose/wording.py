@@ -1,0 +1,102 @@
+"""Verdicts as sentences with numbers: what happened, and what to try.  Floor: diagnose."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+
+from maxent.core.contract import Verdict
+from maxent.core.outcome import Outcome
+from maxent.diagnose.multipliers import Multipliers
+
+__all__ = ["combination_text", "message"]
+
+#: Margins below this are a close call: the verdict hangs on the last digits of the targets.
+CLOSE = 1e-9
+
+
+def combination_text(names: Sequence[str], v: np.ndarray, *, digits: int = 4) -> str:
+    """``0.8 energy - 0.6 magnetisation``; parts below 1e-12 of the largest are left out."""
+    parts = []
+    largest = np.abs(v).max(initial=0.0)
+    for name, x in zip(names, v, strict=True):
+        if abs(x) > 1e-12 * largest:
+            sign = ("-" if x < 0 else "") if not parts else (" - " if x < 0 else " + ")
+            parts.append(f"{sign}{abs(x):.{digits}g} {name}")
+    return "".join(parts) or "0"
+
+
+def message(names: Sequence[str], outcome: Outcome, multipliers: Multipliers, replayed: float) -> str:
+    """One sentence (sometimes two) for the verdict of `outcome`."""
+    return _SENTENCES[outcome.verdict](names, outcome, multipliers, replayed)
+
+
+def _solved(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -> str:
+    count = o.whitening.rank
+    text = f"Reached: {count} independent multiplier{'s' * (count != 1)}, relative residual {o.relative():.0e}"
+    if o.whitening.null:
+        text += f"; {len(o.whitening.null)} redundant combination(s), multipliers of least norm"
+    text += "."
+    if m.loose:
+        if 0 < o.depth < CLOSE:
+            text += f" Only {o.depth:.0e} inside the boundary: the size of the multipliers reflects the last digits of the targets."
+        else:
+            text += " Fewer than six digits of the multipliers are fixed by the inputs; see their errors."
+    if replayed > 1e-10 and replayed > 10 * o.relative():
+        text += (
+            f" State accurate to {max(o.relative(), 1e-16):.0e}; the listed multipliers alone reproduce it to "
+            f"{replayed:.0e} (nearly dependent charges: predict from the state, not from the multipliers)."
+        )
+    return text
+
+
+def _boundary(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -> str:
+    assert o.direction is not None
+    last = o
+    depth = 1
+    while last.face is not None and last.face.face is not None:
+        last, depth = last.face, depth + 1
+    dimension = np.exp(last.log_dimension)
+    chain = f" after {depth} faces" if depth > 1 else ""
+    return (
+        f"On the boundary of what any state can reach, to the accuracy of the inputs (margin {o.margin:.0e}, resolvable "
+        f"{o.tolerance:.0e}): no finite multipliers; limit state on a {dimension:.0f}-dimensional face{chain}, "
+        f"exposing combination {combination_text(names, o.direction)}."
+    )
+
+
+def _infeasible(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -> str:
+    assert o.direction is not None
+    text = (
+        f"No state has these values: {combination_text(names, o.direction)} is asked to lie {o.margin:.3g} below its lowest "
+        f"possible value (resolvable {o.tolerance:.0e})."
+    )
+    if o.margin < CLOSE * max(1.0, float(np.abs(o.direction) @ o.problem.size)):
+        text += " If the targets are accurate to no more than that, treat this as the boundary: state their accuracy."
+    return text
+
+
+def _inconsistent(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -> str:
+    assert o.direction is not None
+    return (
+        f"The targets contradict one another: {combination_text(names, o.direction)} is the same number in every state, and "
+        f"the targets miss it by {o.margin:.3g} (resolvable {o.tolerance:.0e}); drop or correct one of these targets."
+    )
+
+
+def _unattained(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -> str:
+    assert o.excess is not None
+    parts = ", ".join(f"{n} {x:.4g}" for n, x in zip(names, o.excess, strict=True) if abs(x) > 1e-12 * np.abs(o.excess).max())
+    return f"States with these values exist, but none has the largest entropy; what stays unmatched: {parts}."
+
+
+def _unfinished(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -> str:
+    reason = o.reason[:1].upper() + o.reason[1:]
+    return f"{reason} (relative residual {o.relative():.0e} after {o.iterations} steps)."
+
+
+_SENTENCES = {
+    Verdict.SOLVED: _solved, Verdict.BOUNDARY: _boundary, Verdict.INFEASIBLE: _infeasible,
+    Verdict.INCONSISTENT: _inconsistent, Verdict.UNATTAINED: _unattained, Verdict.UNFINISHED: _unfinished,
+}  # fmt: skip

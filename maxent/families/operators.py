@@ -1,0 +1,81 @@
+"""Operators as users hand them in: checked, made Hermitian to the last bit, kept sparse when they came sparse.
+
+Floor: families.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+import scipy.sparse as sp
+
+__all__ = ["checked_basis", "checked_dims", "operator_matrix", "to_csr"]
+
+#: Largest relative deviation from Hermiticity that is taken for rounding.
+HERMITIAN = 1e-12
+
+
+def to_csr(q: Any) -> sp.csr_array:
+    """CSR form of a dense or sparse matrix; sparse input is copied only when it is in another format."""
+    return sp.csr_array(q)
+
+
+def operator_matrix(value: Any, label: str) -> Any:
+    """A square Hermitian matrix of finite numbers, dense (ndarray) or CSR.
+
+    Parameters
+    ----------
+    value : (d, d) array_like or scipy.sparse
+    label : str
+        Name for messages, such as "charge 'energy'".
+
+    Raises
+    ------
+    TypeError
+        Not numeric.
+    ValueError
+        Not a square matrix, not finite, or not Hermitian to 1e-12 of its largest entry.
+    """
+    sparse = sp.issparse(value)
+    q = sp.csr_array(value) if sparse else np.asarray(value)
+    if q.dtype == object or not (np.issubdtype(q.dtype, np.number) or q.dtype == bool):
+        raise TypeError(f"{label} must be a matrix of numbers, not of {q.dtype}")
+    if q.ndim != 2 or q.shape[0] != q.shape[1]:
+        raise ValueError(f"{label} must be a square matrix, not of shape {q.shape}")
+    q = q.astype(complex if np.issubdtype(q.dtype, np.complexfloating) else float)
+    entries = q.data if sparse else q
+    if not np.all(np.isfinite(entries)):
+        raise ValueError(f"{label} has NaN or infinite entries")
+    if np.iscomplexobj(q) and not entries.imag.any():
+        q = q.real if sparse else np.ascontiguousarray(q.real)
+    adjoint = q.conj().T
+    difference = q - adjoint
+    size = np.abs(entries).max(initial=0.0)
+    off = np.abs(difference.data).max(initial=0.0) if sparse else np.abs(difference).max(initial=0.0)
+    if off > HERMITIAN * size:
+        raise ValueError(f"{label} is not Hermitian: |Q - Q^H| is {off:.1e} where |Q| is {size:.1e}")
+    if off == 0.0:
+        return q
+    return 0.5 * (q + adjoint.tocsr()) if sparse else 0.5 * (q + adjoint)
+
+
+def checked_basis(value: Any) -> Any:
+    """A (D, d) matrix with orthonormal columns, dense or CSR."""
+    b = sp.csr_array(value) if sp.issparse(value) else np.asarray(value)
+    if b.ndim != 2 or b.dtype == object:
+        raise ValueError("basis must be a (D, d) matrix whose columns are states")
+    gram = b.conj().T @ b
+    gram = gram.toarray() if sp.issparse(gram) and gram.shape[0] <= 4096 else gram
+    error = abs(gram - (sp.eye_array(b.shape[1]) if sp.issparse(gram) else np.eye(b.shape[1]))).max() if b.shape[1] else 0.0
+    if not error <= 1e-10:
+        raise ValueError(f"basis has columns that are not orthonormal: |B^H B - 1| is {error:.1e}")
+    return b
+
+
+def checked_dims(value: Any) -> tuple[int, ...]:
+    """Site dimensions as positive integers."""
+    dims = tuple(value)
+    if not dims or any(not isinstance(d, int | np.integer) or isinstance(d, bool) or d < 1 for d in dims):
+        raise ValueError(f"dims must be positive integers, one per site, not {value!r}")
+    return tuple(int(d) for d in dims)

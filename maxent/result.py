@@ -1,0 +1,286 @@
+"""The result of a solve: one frozen class, every field always there.  Floor: result.
+
+Without a solution the multipliers are NaN and the last iterate has its own name, so that nobody can use it by mistake;
+the certificate stands in its own field, named by charge, with its margin.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+
+from maxent.core.contract import EPS, Family, Problem, Verdict
+from maxent.core.decide import decide
+from maxent.core.outcome import Outcome
+from maxent.diagnose.conditioning import Conditioning
+from maxent.diagnose.redundancy import Redundancy
+from maxent.errors import SolveError
+from maxent.targets import collect
+
+__all__ = ["Certificate", "Check", "FaceChain", "Result", "Verdict"]
+
+
+@dataclass(frozen=True)
+class Check:
+    """A certificate computed again from scratch; true when its claim holds.
+
+    Attributes
+    ----------
+    holds : bool
+    lowest, asked, margin, tolerance : float
+        As in the certificate, computed anew.
+    """
+
+    holds: bool
+    lowest: float
+    asked: float
+    margin: float
+    tolerance: float
+
+    def __bool__(self) -> bool:
+        return self.holds
+
+
+@dataclass(frozen=True)
+class Certificate:
+    """Why there are no finite multipliers: one combination of the charges, checkable by one decomposition.
+
+    Attributes
+    ----------
+    direction : dict of str to float
+        Unit combination v of the charges.
+    lowest : float
+        Lowest value of ``<v.Q>`` over all states.
+    asked : float
+        The value ``v.q`` that the targets give it.
+    margin : float
+        lowest - asked; with ``|v| = 1`` a lower bound of the distance of the targets from what can be reached.
+    tolerance : float
+        What rounding and the stated accuracy leave undecided.
+    kind : {"outside", "face", "contradiction"}
+        ``outside``: margin above tolerance, no state has these values.  ``face``: margin zero within tolerance, only
+        states of lowest v.Q can have them.  ``contradiction``: v.Q is a number, and the targets give another one.
+    accuracy : dict of str to float
+        Stated accuracy of the targets that entered the tolerance.
+    """
+
+    direction: dict[str, float]
+    lowest: float
+    asked: float
+    margin: float
+    tolerance: float
+    kind: str
+    accuracy: dict[str, float] = field(default_factory=dict)
+
+    def verify(self, family: Family, targets: Mapping[str, Any]) -> Check:
+        """Compute the claim again from the charges and the targets alone.
+
+        Parameters
+        ----------
+        family : Family
+            With named charges.
+        targets : dict of str to float
+
+        Returns
+        -------
+        Check
+            True when the claim holds; carries the numbers.
+
+        Raises
+        ------
+        ValueError
+            Names that do not fit.
+        """
+        names = family.names  # type: ignore[attr-defined]
+        q, accuracy = collect(names, targets, self.accuracy)
+        v = np.array([self.direction.get(n, 0.0) for n in names])
+        problem = Problem.pose(family, q, accuracy)
+        margin, tolerance = problem.verify(v)
+        asked = float(v @ q)
+        if self.kind != "face":
+            return Check(bool(margin > tolerance), margin + asked, asked, margin, tolerance)
+        holds = abs(margin) <= tolerance
+        face = problem.family.face(v, tolerance) if holds else None
+        if face is not None:
+            noise = problem.noise + (0.0 if face.exact else 8 * EPS / max(face.gap, 1e-12)) * problem.family.scale
+            below = decide(Problem(face.family, noise, accuracy), depth=1)
+            holds = below.values is not None and bool(
+                np.all(np.abs(below.values) <= 1e-8 * problem.size + accuracy)
+            )
+        return Check(bool(holds and face is not None), margin + asked, asked, margin, tolerance)
+
+
+@dataclass(frozen=True)
+class FaceChain:
+    """The faces a boundary target lies on, outermost first.
+
+    Attributes
+    ----------
+    dimension : float
+        Number of independent states of the last face.
+    log_dimension : float
+    depth : int
+        Number of faces, one inside the other.
+    directions : tuple of dict of str to float
+        Exposing combination of each.
+    gaps : tuple of float
+        Relative distance of the next level, for each.
+    """
+
+    dimension: float
+    log_dimension: float
+    depth: int
+    directions: tuple[dict[str, float], ...]
+    gaps: tuple[float, ...]
+
+    @property
+    def gap(self) -> float:
+        """Relative distance of the next level on the outermost face."""
+        return self.gaps[0]
+
+
+@dataclass(frozen=True)
+class Result:
+    """Answer of `maxent.solve`.
+
+    Attributes
+    ----------
+    verdict : Verdict
+        ``str()`` gives the lower-case word.
+    evidence : {"proved", "tested"}
+        Whether the verdict rests on a bound, or on probing where the family knows no bound.
+    message : str
+        One sentence with numbers: what happened and what to try.
+    names : tuple of str
+        Charges, in the order of `covariance`.
+    targets, values, residuals : dict of str to float
+        residual = value - target; values are NaN when there is no state.
+    multipliers : dict of str to float
+        NaN unless solved.
+    last_multipliers : dict of str to float
+        The last iterate whatever the verdict; not a solution unless solved.
+    multiplier_errors : dict of str to float
+        What rounding and stated target accuracy leave open; NaN unless solved.
+    loose : bool
+        Fewer than six digits of the largest multiplier are fixed by the inputs.
+    replay : float
+        Relative residual that the float64 multipliers alone reproduce in the user's charges; NaN unless solved.
+    covariance : (m, m) ndarray
+        Kubo-Mori covariance of the charges in the state (Hessian of ln Z); NaN without a state.
+    certificate : Certificate or None
+    face : FaceChain or None
+        For a boundary.
+    excess : dict of str to float or None
+        For an unattained target: what stays unmatched.
+    conflict, nearest : None
+        Filled by explanations when they are asked for.
+    redundancies : tuple of Redundancy
+    conditioning : Conditioning or None
+    iterations : int
+        Newton steps, faces included.
+    driver : {"host", "jax"}
+        Who ran them.
+    trace : tuple of (float, float, float)
+        Whitened residual, ln Z and size of the exponent, per step.
+    """
+
+    verdict: Verdict
+    evidence: str
+    message: str
+    names: tuple[str, ...]
+    targets: dict[str, float]
+    values: dict[str, float]
+    residuals: dict[str, float]
+    multipliers: dict[str, float]
+    last_multipliers: dict[str, float]
+    multiplier_errors: dict[str, float]
+    loose: bool
+    replay: float
+    covariance: np.ndarray
+    certificate: Certificate | None
+    face: FaceChain | None
+    excess: dict[str, float] | None
+    redundancies: tuple[Redundancy, ...]
+    conditioning: Conditioning | None
+    iterations: int
+    driver: str
+    trace: tuple[tuple[float, float, float], ...]
+    outcome: Outcome = field(repr=False)
+    conflict: tuple[str, ...] | None = None
+    nearest: Any = None
+
+    @property
+    def success(self) -> bool:
+        """Whether the verdict is SOLVED; the residual was computed at the multipliers that are returned."""
+        return self.verdict is Verdict.SOLVED
+
+    @cached_property
+    def state(self) -> Any:
+        """The state, from the whitened charges; None unless solved or boundary.
+
+        Float64 multipliers cannot carry condition numbers above 1e8, the whitened ones can.
+        """
+        if self.verdict not in (Verdict.SOLVED, Verdict.BOUNDARY):
+            return None
+        last = self.outcome.deepest
+        assert last.family is not None
+        lam = np.zeros(len(last.family.scale)) if last.at is None else last.at.lam
+        state = last.family.state(lam)
+        if self.verdict is Verdict.BOUNDARY:
+            return replace(state, log_partition=np.nan)  # diverges with the multipliers
+        shift = sum(self.multipliers[n] * self.targets[n] for n in self.names)
+        return replace(state, log_partition=state.log_partition - shift)
+
+    def mean(self, operator: Any) -> float:
+        """Expectation value of an operator of the same kind as the charges; NaN without a state."""
+        return float("nan") if self.state is None else self.state.mean(operator)
+
+    @property
+    def log_partition(self) -> float:
+        """``ln Z`` of the charges as given; NaN unless solved."""
+        return float("nan") if self.state is None else float(self.state.log_partition)
+
+    @property
+    def entropy(self) -> float:
+        """Entropy in nats; NaN without a state."""
+        return float("nan") if self.state is None else float(self.state.entropy)
+
+    @property
+    def relative_entropy(self) -> float | None:
+        """Relative entropy to the prior in nats; None without a prior or a state."""
+        return None if self.state is None else getattr(self.state, "relative_entropy", None)
+
+    @property
+    def digits(self) -> dict[str, float]:
+        """Decimal digits of each multiplier that the inputs fix; NaN unless solved."""
+        out = {}
+        for n in self.names:
+            size, error = abs(self.multipliers[n]), self.multiplier_errors[n]
+            out[n] = float(np.clip(-np.log10(max(error, 1e-300) / max(size, error, 1e-300)), 0.0, 16.0))
+            if not np.isfinite(self.multipliers[n]):
+                out[n] = float("nan")
+        return out
+
+    def require(self) -> Result:
+        """The result itself when solved.
+
+        Raises
+        ------
+        SolveError
+            Otherwise; carries the result.
+        """
+        if not self.success:
+            raise SolveError(self)
+        return self
+
+    def __repr__(self) -> str:
+        lines = [f"{self.verdict} ({self.evidence}, {self.iterations} steps): {self.message}"]
+        for n in self.names:
+            lines.append(
+                f"  {n}: target {self.targets[n]:.10g}, value {self.values[n]:.10g}, multiplier {self.multipliers[n]:.10g}"
+            )
+        return "\n".join(lines)

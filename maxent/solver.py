@@ -1,0 +1,140 @@
+"""Operators and targets in, multipliers and a provable verdict out.  Floor: solve."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+import numpy as np
+
+from maxent.core.contract import Family, Problem, Verdict
+from maxent.core.decide import decide
+from maxent.core.outcome import Outcome
+from maxent.diagnose.conditioning import conditioning
+from maxent.diagnose.multipliers import replay, user_covariance, user_multipliers
+from maxent.diagnose.redundancy import redundancies
+from maxent.diagnose.wording import message
+from maxent.result import Certificate, FaceChain, Result
+from maxent.targets import collect
+
+__all__ = ["solve"]
+
+DRIVERS = ("auto", "host", "jax")
+
+_KINDS = {Verdict.INFEASIBLE: "outside", Verdict.INCONSISTENT: "contradiction", Verdict.BOUNDARY: "face"}
+
+
+def solve(
+    family: Family,
+    targets: Mapping[str, Any],
+    *,
+    accuracy: float | Mapping[str, float] = 0.0,
+    driver: str = "auto",
+) -> Result:
+    """Lagrange multipliers of the maximum-entropy state with given values of the charges.
+
+    Minimises the dual ``F(lam) = ln Z(lam) + lam.q``, whose minimiser has ``<Q_j> = q_j``; the state is
+    ``exp(-sum_j lam_j Q_j)/Z`` (E. T. Jaynes, Phys. Rev. 106, 620 (1957)).  Ends in a verdict with its evidence: an
+    unreachable target is an answer, not an error.
+
+    Parameters
+    ----------
+    family : Family
+        Charges Q_j, such as `maxent.families.Matrices` or `maxent.families.Microstates`.
+    targets : dict of str to float or Exact
+        Value q_j for every charge.
+    accuracy : float or dict of str to float, optional
+        Accuracy of the targets, in units of each charge (not a standard error): what the verdict must survive.
+        Default 0: exact to rounding.
+    driver : {"auto", "host", "jax"}, optional
+        Who runs Newton's iteration.  ``host``: LAPACK, for one-off fits.  ``jax``: one compiled loop.  ``auto`` takes the
+        host unless the family was only given as a JAX function.  Verdicts are decided on the host for both.
+
+    Returns
+    -------
+    Result
+
+    Raises
+    ------
+    TypeError, ValueError
+        A family that is none, unknown or missing names, targets that are not finite real numbers; before any work.
+
+    Examples
+    --------
+    >>> import numpy as np, maxent
+    >>> from maxent.families import Microstates
+    >>> result = maxent.solve(Microstates({"pips": np.arange(1, 7)}), {"pips": 6.2})
+    >>> print(result.verdict, f"{result.certificate.margin:.1f}")
+    infeasible 0.2
+    """
+    if not isinstance(family, Family):
+        raise TypeError(f"family must be a Family such as Matrices or Microstates, not {type(family).__name__}")
+    if driver not in DRIVERS:
+        raise ValueError(f"driver must be one of {', '.join(map(repr, DRIVERS))}, not {driver!r}")
+    names = tuple(family.names)  # type: ignore[attr-defined]
+    q, stated = collect(names, targets, accuracy)
+    used = "host" if driver == "auto" else driver
+    outcome = decide(Problem.pose(family, q, stated), driver=used)
+    return _result(names, q, stated, outcome, used)
+
+
+def _result(names: tuple[str, ...], q: np.ndarray, stated: np.ndarray, outcome: Outcome, driver: str) -> Result:
+    found, solved = user_multipliers(outcome), outcome.verdict is Verdict.SOLVED
+    blank = np.full(len(names), np.nan)
+    replayed = replay(outcome.problem, found.values) if solved else float("nan")
+    off = blank if outcome.values is None else outcome.values
+    has_state = outcome.verdict in (Verdict.SOLVED, Verdict.BOUNDARY)
+    covariance, factor = user_covariance(outcome) if has_state else (np.full((len(names), len(names)), np.nan), None)
+    named = lambda x: _named(names, x)
+    return Result(
+        verdict=outcome.verdict,
+        evidence=outcome.evidence,
+        message=message(names, outcome, found, replayed),
+        names=names,
+        targets=named(q),
+        values=named(q + off),
+        residuals=named(off),
+        multipliers=named(found.values if solved else blank),
+        last_multipliers=named(found.values),
+        multiplier_errors=named(found.errors if solved else blank),
+        loose=solved and found.loose,
+        replay=replayed,
+        covariance=covariance,
+        certificate=_certificate(names, q, stated, outcome),
+        face=_faces(names, outcome),
+        excess=None if outcome.excess is None else named(outcome.excess),
+        redundancies=redundancies(names, q, outcome.whitening),
+        conditioning=conditioning(names, factor) if factor is not None else None,
+        iterations=outcome.iterations,
+        driver=driver,
+        trace=outcome.trace,
+        outcome=outcome,
+    )
+
+
+def _named(names: Sequence[str], x: np.ndarray) -> dict[str, float]:
+    return {n: float(y) for n, y in zip(names, x, strict=True)}
+
+
+def _certificate(names: Sequence[str], q: np.ndarray, stated: np.ndarray, outcome: Outcome) -> Certificate | None:
+    v = outcome.direction
+    if v is None:
+        return None
+    asked = float(v @ q)
+    return Certificate(
+        _named(names, v), outcome.margin + asked, asked, outcome.margin, outcome.tolerance, _KINDS[outcome.verdict],
+        _named(names, stated),
+    )  # fmt: skip
+
+
+def _faces(names: Sequence[str], outcome: Outcome) -> FaceChain | None:
+    if outcome.face is None:
+        return None
+    chain = []
+    at: Outcome | None = outcome
+    while at is not None and at.face is not None:
+        chain.append(at)
+        at = at.face
+    log_dimension = chain[-1].log_dimension
+    directions = tuple(_named(names, x.direction) for x in chain if x.direction is not None)
+    return FaceChain(float(np.exp(log_dimension)), log_dimension, len(chain), directions, tuple(x.gap for x in chain))
