@@ -1,0 +1,491 @@
+"""Grammar of formulas: from text to a small tree in which every name has a meaning.
+
+Floor: lattice. The text is checked by `tokens`, read by Python's `ast` (white-listed nodes; nothing is ever executed) and
+turned into `Node`s that know whether they are operators and which free subscripts they carry. All errors name the column and
+what was expected. Must not know how a sum over positions is carried out.
+"""
+
+from __future__ import annotations
+
+import ast
+import difflib
+import keyword
+from collections.abc import Mapping
+from dataclasses import dataclass
+from fractions import Fraction
+from typing import Any, NoReturn
+
+from maxent.lattice.coefficients import FUNCTIONS, Value
+from maxent.lattice.exact import Complex
+from maxent.lattice.sites import Sites
+from maxent.lattice.tokens import CONJUGATE, Token, fail, read
+
+CONSTANTS = ("pi", "L")
+FORMS = {"dagger": 1, "commutator": 2, "anticommutator": 2}
+_SIGNS = {ast.Div: "quotient", ast.Pow: "power", ast.FloorDiv: "floor", ast.Mod: "modulo"}
+_MOST_DIGITS = 40
+
+
+def reserved_names(sites: Sites) -> set[str]:
+    """Names the language itself uses on such sites; parameters and densities cannot have them."""
+    return {*sites.local.symbols, *FUNCTIONS, *FORMS, *CONSTANTS, "for"}
+
+
+@dataclass(frozen=True)
+class Node:
+    """One piece of a formula.
+
+    Attributes
+    ----------
+    kind : str
+        number, position, parameter, entry, operator, density, sum, product, negative, quotient, power, floor, modulo,
+        function, dagger, commutator, anticommutator, pairs.
+    start : int
+        Place in the text, counted from 0.
+    value : object
+        The number, the name, whether a sum ends in h.c., or (names, relation) of `pairs`.
+    items : tuple of Node
+        The parts.
+    free : frozenset of str
+        Free subscripts in it.
+    subscripts : frozenset of str
+        Those of them that stand in a subscript bracket.
+    is_operator : bool
+        Whether it holds an operator.
+    """
+
+    kind: str
+    start: int
+    value: Any = None
+    items: tuple[Node, ...] = ()
+    free: frozenset[str] = frozenset()
+    subscripts: frozenset[str] = frozenset()
+    is_operator: bool = False
+
+
+def joined(kind: str, start: int, items: list[Node], value: Any = None) -> Node:
+    """Make a node from parts, with what it inherits from them."""
+    return Node(
+        kind,
+        start,
+        value,
+        tuple(items),
+        frozenset().union(*(x.free for x in items)),
+        frozenset().union(*(x.subscripts for x in items)),
+        any(x.is_operator for x in items),
+    )
+
+
+class Reader:
+    """Turns one text into a tree.
+
+    Parameters
+    ----------
+    text : str
+        The formula.
+    sites : Ring or Chain
+        Gives the operators and the number of positions.
+    parameters : mapping from str to value
+        Checked parameters.
+    densities : collection of str
+        Names of the densities.
+    scalar : bool
+        Whether the text is a function of the position alone: then one unknown name is the position.
+    """
+
+    def __init__(
+        self,
+        text: str,
+        sites: Sites,
+        *,
+        parameters: Mapping[str, Value],
+        densities: frozenset[str] = frozenset(),
+        scalar: bool = False,
+    ) -> None:
+        if not isinstance(text, str):
+            raise TypeError(f"a formula is a text, not {text!r}")
+        self.text, self.sites, self.parameters, self.densities = text, sites, parameters, densities
+        self.scalar = scalar
+        self.reserved = reserved_names(sites)
+        self.positions: set[str] = set()
+        self.integers: set[str] = set()  # parameters that decide positions
+        self.chunk_start = 0
+        self.chunk = ""
+
+    def read(self) -> Node:
+        """Read the text.
+
+        Returns
+        -------
+        Node
+
+        Raises
+        ------
+        FormulaError
+            With the column and what was expected.
+        """
+        cut = read(self.text)
+        chunks = [(sign, start, self._parse(cut.source, start, end)) for sign, start, end in cut.summands]
+        for _, _, tree in chunks:
+            self._collect_positions(tree)
+        names = [token for token in cut.clause if token.kind == "name"]
+        for token in names:
+            self.positions.add(token.text)
+        summands = []
+        has_conjugate = False
+        try:
+            for (sign, start, tree), (_, _, end) in zip(chunks, cut.summands, strict=True):
+                self.chunk_start, self.chunk = start, cut.source[start:end]
+                if isinstance(tree, ast.Name) and tree.id == CONJUGATE:
+                    has_conjugate = True
+                    continue
+                node = self._node(tree)
+                summands.append(node if sign > 0 else joined("negative", node.start, [node]))
+        except RecursionError:
+            fail("too deeply nested; split the formula", self.text, 0)
+        total = self._sum(summands, has_conjugate)
+        return self._pairs(total, cut.clause, names) if cut.clause else total
+
+    # --- text to ast
+
+    def _parse(self, source: str, start: int, end: int) -> ast.expr:
+        try:
+            return ast.parse(f"({source[start:end]})", mode="eval").body
+        except SyntaxError as error:
+            # the order of tokens has been checked: what is left are numbers such as 007 and words of Python
+            place = start + max((error.offset or 1) - 2, 0)
+            fail(f"cannot be read here ({error.msg})", self.text, min(place, len(self.text) - 1))
+        except (RecursionError, MemoryError):
+            fail("too deeply nested; split the formula", self.text, start)
+
+    def _collect_positions(self, tree: ast.expr) -> None:
+        for node in ast.walk(tree):
+            names: list[ast.AST] = []
+            if isinstance(node, ast.Subscript):
+                names = [x for x in ast.walk(node.slice) if isinstance(x, ast.Name)]
+            elif isinstance(node, ast.BoolOp):
+                names = [x for part in node.values[1:] for x in ast.walk(part) if isinstance(x, ast.Name)]
+            for name in names:
+                assert isinstance(name, ast.Name)
+                if name.id not in self.parameters and name.id not in self.reserved:
+                    self.positions.add(name.id)
+
+    def _place(self, tree: ast.AST) -> int:
+        offset = tree.col_offset  # type: ignore[attr-defined]
+        if not self.chunk.isascii():
+            offset = len(f"({self.chunk})".encode()[:offset].decode())  # ast counts UTF-8 bytes
+        return self.chunk_start + offset - 1
+
+    def _end(self, tree: ast.AST) -> int:
+        offset = tree.end_col_offset  # type: ignore[attr-defined]
+        if not self.chunk.isascii():
+            offset = len(f"({self.chunk})".encode()[:offset].decode())
+        return self.chunk_start + offset - 1
+
+    def _fail(self, message: str, tree: ast.AST) -> NoReturn:
+        fail(message, self.text, self._place(tree))
+
+    # --- ast to nodes
+
+    def _node(self, tree: ast.expr) -> Node:
+        if isinstance(tree, ast.Constant):
+            return Node("number", self._place(tree), self._number(tree))
+        if isinstance(tree, ast.Name):
+            return self._name(tree)
+        if isinstance(tree, ast.Subscript):
+            return self._subscript(tree)
+        if isinstance(tree, ast.Call):
+            return self._call(tree)
+        if isinstance(tree, ast.UnaryOp) and isinstance(tree.op, ast.USub | ast.UAdd):
+            node = self._node(tree.operand)
+            return joined("negative", self._place(tree), [node]) if isinstance(tree.op, ast.USub) else node
+        if isinstance(tree, ast.BinOp):
+            return self._binary(tree)
+        if isinstance(tree, ast.BoolOp) and isinstance(tree.op, ast.Or) and len(tree.values) == 2:
+            return self._nested_pairs(tree)
+        self._fail("has no meaning in a formula", tree)
+
+    def _number(self, tree: ast.Constant) -> Complex:
+        text = self.text[self._place(tree) : self._end(tree)]
+        if isinstance(tree.value, bool) or not isinstance(tree.value, int | float | complex):
+            self._fail(self._unknown(text), tree)
+        is_imaginary = text[-1] == "j"
+        digits = text[:-1] if is_imaginary else text
+        mantissa, _, exponent = digits.lower().partition("e")
+        if len(mantissa) > _MOST_DIGITS or (exponent and abs(int(exponent[:8])) > 300):
+            self._fail("number out of range", tree)
+        exact = Fraction(digits)
+        value = exact.numerator if exact.denominator == 1 else exact
+        return (0, value) if is_imaginary else (value, 0)
+
+    def _name(self, tree: ast.Name) -> Node:
+        name, place = tree.id, self._place(tree)
+        if name in self.parameters:
+            if isinstance(self.parameters[name], tuple):
+                self._missing_subscript(f"parameter '{name}' is a list", name, tree)
+            return Node("parameter", place, name)
+        if name in CONSTANTS:
+            return Node("constant", place, name)
+        if name in self.sites.local.symbols:
+            self._missing_subscript(f"operator '{name}'", name, tree)
+        if name in self.densities:
+            self._missing_subscript(f"density '{name}'", name, tree)
+        if name in FUNCTIONS or name in FORMS:
+            fail(f"expected '(' after the function '{name}'", self.text, self._end(tree))
+        if name in self.positions:
+            return Node("position", place, name, free=frozenset((name,)))
+        if self.scalar and not self.positions and name.isidentifier() and not self._close(name):
+            self.positions.add(name)
+            return Node("position", place, name, free=frozenset((name,)))
+        self._fail(self._unknown(name), tree)
+
+    def _missing_subscript(self, what: str, name: str, tree: ast.AST) -> NoReturn:
+        message = f"missing subscript: {what}, write '{name}[i]' or a fixed position such as '{name}[0]'"
+        fail(message, self.text, self._end(tree))
+
+    def _candidates(self) -> list[str]:
+        return sorted((self.reserved - {"for"}) | set(self.parameters) | set(self.densities))
+
+    def _close(self, name: str) -> str | None:
+        candidates = self._candidates()
+        same = [c for c in candidates if c.lower() == name.lower()]
+        close = same or (
+            difflib.get_close_matches(name, candidates, n=1, cutoff=0.5) if len(name) > 1 else []
+        )
+        return close[0] if close else None
+
+    def _unknown(self, name: str) -> str:
+        close = self._close(name)
+        if close is not None:
+            return f"unknown symbol '{name}'; did you mean '{close}'?"
+        known = ", ".join(self.parameters) or "none"
+        return f"unknown symbol '{name}'; expected an operator, a function or a parameter (given: {known})"
+
+    def _subscript(self, tree: ast.Subscript) -> Node:
+        base = tree.value
+        if not isinstance(base, ast.Name):
+            self._fail("only a name can have a subscript", tree)
+        name = base.id
+        if name in self.parameters:
+            values = self.parameters[name]
+            if not isinstance(values, tuple):
+                self._fail(f"parameter '{name}' is a single number: write '{name}' without a subscript", tree)
+            self._check_length(name, values, tree)
+            kind = "entry"
+        elif name in self.sites.local.symbols:
+            kind = "operator"
+        elif name in self.densities:
+            kind = "density"
+        elif name in FUNCTIONS or name in FORMS:
+            self._fail(f"'{name}' is a function: write '{name}(...)' with round brackets", tree)
+        elif name in CONSTANTS:
+            self._fail(f"'{name}' is a number: it has no subscript", tree)
+        else:
+            self._fail(self._unknown(name), tree)
+        if self.scalar and kind != "entry":
+            self._fail(
+                "operators have no meaning here: expected a number that may depend on the position", tree
+            )
+        if isinstance(tree.slice, ast.Tuple):
+            self._fail(f"{self.sites.local.name} operators have one subscript", tree.slice.elts[1])
+        index = self._index(tree.slice)
+        if not index.free:
+            # decided positions outside the sites are mistakes on rings too: only a running subscript wraps
+            place = integer_value(index, {}, self)
+            last = self.sites.size - 1
+            if not 0 <= place <= last:
+                fail(
+                    f"subscript {place} is out of range: positions run from 0 to {last}",
+                    self.text,
+                    index.start,
+                )
+        return Node(kind, self._place(tree), name, (index,), index.free, index.free, kind != "entry")
+
+    def _check_length(self, name: str, values: tuple[Any, ...], tree: ast.AST) -> None:
+        size = self.sites.size
+        if len(values) > size or (self.sites.is_ring and len(values) != size):
+            self._fail(f"parameter '{name}' has {len(values)} values, but there are {size} positions", tree)
+
+    # --- subscripts: integers only
+
+    def _index(self, tree: ast.expr) -> Node:
+        place = self._place(tree)
+        if (
+            isinstance(tree, ast.Constant)
+            and isinstance(tree.value, int)
+            and not isinstance(tree.value, bool)
+        ):
+            return Node("number", place, (tree.value, 0))
+        if isinstance(tree, ast.Name):
+            return self._index_name(tree)
+        if isinstance(tree, ast.UnaryOp) and isinstance(tree.op, ast.USub | ast.UAdd):
+            node = self._index(tree.operand)
+            return joined("negative", place, [node]) if isinstance(tree.op, ast.USub) else node
+        kinds = {
+            ast.Add: "sum",
+            ast.Sub: "sum",
+            ast.Mult: "product",
+            ast.FloorDiv: "floor",
+            ast.Mod: "modulo",
+        }
+        if isinstance(tree, ast.BinOp) and type(tree.op) in kinds:
+            left, right = self._index(tree.left), self._index(tree.right)
+            if isinstance(tree.op, ast.Sub):
+                right = joined("negative", right.start, [right])
+            return joined(kinds[type(tree.op)], place, [left, right])
+        self._fail("expected an integer subscript such as i, i+1 or 3", tree)
+
+    def _index_name(self, tree: ast.Name) -> Node:
+        name, place = tree.id, self._place(tree)
+        if name == "L":
+            return Node("constant", place, name)
+        if name in self.parameters:
+            value = self.parameters[name]
+            if isinstance(value, tuple) or isinstance(value, complex) or not value.is_integer():
+                message = f"subscript '{name}' is the parameter {value}, which is no integer; name the subscript otherwise"
+                self._fail(message, tree)
+            self.integers.add(name)
+            return Node("parameter", place, name)
+        if name in self.reserved or name in self.densities or keyword.iskeyword(name) or name.startswith("_"):
+            self._fail(f"'{name}' cannot be a subscript", tree)
+        return Node("position", place, name, free=frozenset((name,)), subscripts=frozenset((name,)))
+
+    # --- functions, sums, products
+
+    def _call(self, tree: ast.Call) -> Node:
+        if not isinstance(tree.func, ast.Name):
+            self._fail("only a name can be followed by '('", tree)
+        name, place = tree.func.id, self._place(tree)
+        if name not in FUNCTIONS and name not in FORMS:
+            if name in self.sites.local.symbols or name in self.densities:
+                self._fail(f"'{name}' takes a subscript: write '{name}[...]' with square brackets", tree)
+            if name in self.parameters or name in CONSTANTS:
+                self._fail(f"expected an operator between '{name}' and '('", tree)
+            self._fail(self._unknown(name), tree)
+        needed = FORMS.get(name, 1)
+        if len(tree.args) != needed or tree.keywords:
+            self._fail(
+                f"'{name}' takes {needed} argument{'s' if needed > 1 else ''}, not {len(tree.args)}", tree
+            )
+        items = [self._node(x) for x in tree.args]
+        if name in FORMS:
+            return joined(name, place, items)
+        if items[0].is_operator:
+            fail(f"'{name}' takes a number, not an operator", self.text, items[0].start)
+        return joined("function", place, items, name)
+
+    def _binary(self, tree: ast.BinOp) -> Node:
+        if isinstance(tree.op, ast.Add | ast.Sub):
+            return self._nested_sum(tree)
+        place = self._place(tree)
+        left, right = self._node(tree.left), self._node(tree.right)
+        if isinstance(tree.op, ast.Mult):
+            items = [x for node in (left, right) for x in (node.items if node.kind == "product" else (node,))]
+            return joined("product", place, items)
+        kind = _SIGNS.get(type(tree.op))
+        if kind is None:
+            self._fail("has no meaning in a formula", tree)
+        if right.is_operator:
+            what = (
+                "divide by" if kind == "quotient" else "use as exponent" if kind == "power" else "round with"
+            )
+            fail(f"expected a number: an operator is nothing to {what}", self.text, right.start)
+        if left.is_operator and kind in ("floor", "modulo"):
+            fail("'//' and '%' are for numbers, not for operators", self.text, left.start)
+        if left.is_operator and kind == "power":
+            exponent = right.value[0] if right.kind == "number" and right.value[1] == 0 else None
+            if not isinstance(exponent, int) or not 1 <= exponent <= 16:
+                fail("the exponent of an operator must be an integer from 1 to 16", self.text, right.start)
+        return joined(kind, place, [left, right])
+
+    def _nested_sum(self, tree: ast.BinOp) -> Node:
+        found: list[tuple[int, ast.expr]] = []
+        has_conjugate = False
+        node: ast.expr = tree
+        while isinstance(node, ast.BinOp) and isinstance(node.op, ast.Add | ast.Sub):
+            if isinstance(node.right, ast.Name) and node.right.id == CONJUGATE:
+                if node is not tree:
+                    break  # h.c. closes its own brackets: what stands left of here is a sum of its own
+                has_conjugate = True
+            else:
+                found.append((1 if isinstance(node.op, ast.Add) else -1, node.right))
+            node = node.left
+        found.append((1, node))
+        summands = []
+        for sign, part in reversed(found):
+            item = self._node(part)
+            summands.append(item if sign > 0 else joined("negative", item.start, [item]))
+        return self._sum(summands, has_conjugate)
+
+    def _sum(self, summands: list[Node], has_conjugate: bool) -> Node:
+        if len(summands) == 1 and not has_conjugate:
+            return summands[0]
+        return joined("sum", summands[0].start, summands, has_conjugate)
+
+    def _nested_pairs(self, tree: ast.BoolOp) -> Node:
+        body, clause = tree.values
+        parts = [clause]
+        if isinstance(clause, ast.Compare):
+            parts = [clause.left, *clause.comparators]
+        names = []
+        for part in parts:
+            assert isinstance(part, ast.Name)  # the order of tokens has been checked
+            names.append(Token("name", part.id, self._place(part)))
+        sign = "!=" if isinstance(clause, ast.Compare) and isinstance(clause.ops[0], ast.NotEq) else "<"
+        tokens = names if len(names) == 1 else [names[0], Token("sign", sign, names[0].end), names[1]]
+        return self._pairs(self._node(body), tokens, names)
+
+    def _pairs(self, body: Node, clause: list[Token], names: list[Token]) -> Node:
+        for token in names:
+            if token.text in self.parameters or token.text in self.densities or token.text in self.reserved:
+                fail(
+                    f"'{token.text}' has a meaning already and cannot be a subscript", self.text, token.start
+                )
+        bound = tuple(token.text for token in names)
+        if len(set(bound)) != len(bound):
+            fail("the two subscripts behind 'for' must differ", self.text, names[1].start)
+        summands = body.items if body.kind == "sum" else (body,)
+        for summand in summands:
+            missing = [name for name in bound if name not in summand.free]
+            if missing:
+                message = f"this summand does not carry '{missing[0]}'; put the sum in brackets: (... for ...) + ..."
+                fail(message, self.text, summand.start)
+        relation = clause[1].text if len(clause) == 3 else ""
+        free = body.free - set(bound)
+        return Node(
+            "pairs",
+            body.start,
+            (bound, relation),
+            (body,),
+            free,
+            body.subscripts - set(bound),
+            body.is_operator,
+        )
+
+
+def integer_value(index: Node, positions: Mapping[str, int], reader: Reader) -> int:
+    """Value of a subscript at given values of the free subscripts.
+
+    Raises
+    ------
+    FormulaError
+        For a division by zero.
+    """
+    if index.kind == "number":
+        return int(index.value[0])
+    if index.kind == "position":
+        return positions[index.value]
+    if index.kind == "constant":
+        return reader.sites.size
+    if index.kind == "parameter":
+        return int(reader.parameters[index.value])  # type: ignore[arg-type]
+    values = [integer_value(x, positions, reader) for x in index.items]
+    if index.kind == "negative":
+        return -values[0]
+    if index.kind == "sum":
+        return values[0] + values[1]
+    if index.kind == "product":
+        return values[0] * values[1]
+    if values[1] == 0:
+        fail("division by zero in a subscript", reader.text, index.items[1].start)
+    return values[0] // values[1] if index.kind == "floor" else values[0] % values[1]

@@ -1,0 +1,371 @@
+"""The canonical sum of local words that a formula becomes: `OperatorSum`.
+
+Floor: lattice. Everything is derived from the one dictionary word -> coefficient: the conjugate, hermiticity, products and
+commutators, range, derivatives by parameters, the printed normal form, the matrix and the matrix-free action. Coefficients
+stay symbolic in the parameters, whose current values the sum carries along. Must not know how formulas are written.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from numbers import Number
+from typing import Any, NamedTuple
+
+import numpy as np
+
+from maxent.lattice import words as algebra
+from maxent.lattice.coefficients import Coefficient, Value
+from maxent.lattice.exact import from_complex
+from maxent.lattice.matrices import BitTable
+from maxent.lattice.parameters import check_parameter, is_complex
+from maxent.lattice.printing import sum_text, word_text
+from maxent.lattice.sites import Sites
+from maxent.lattice.words import Word, Words
+
+
+class Term(NamedTuple):
+    """One word of a sum: its symbolic coefficient, its sites in order, and the operator name on each of them."""
+
+    coefficient: Coefficient
+    positions: tuple[int, ...]
+    operators: tuple[str, ...]
+
+
+class OperatorSum:
+    """Canonical sum of local words with coefficients symbolic in the parameters. Immutable.
+
+    Made by `maxent.lattice.formula`; sums on the same sites can be added, subtracted, multiplied and scaled.
+
+    Parameters
+    ----------
+    sites : Ring or Chain
+        Where the words live.
+    words : mapping from word to Coefficient
+        Canonical words; zero coefficients are not allowed.
+    parameters : mapping from str to number or tuple of numbers
+        Current values of the parameters.
+    frozen : iterable of str
+        Parameters that decided positions while the formula was read and can no longer change.
+
+    Examples
+    --------
+    >>> from maxent.lattice import Ring, formula
+    >>> energy = formula("J*Sz[i]*Sz[i+1] + h*Sx[i]", Ring(6), {"J": 1.0, "h": 0.5})
+    >>> str(energy), energy.range, energy.is_hermitian
+    ('h*Sx[i] + J*Sz[i]*Sz[i+1]', 2, True)
+    >>> str(energy.derivative("J"))
+    'Sz[i]*Sz[i+1]'
+    """
+
+    __slots__ = ("_parameters", "_table", "_words", "frozen", "sites")
+
+    def __init__(
+        self,
+        sites: Sites,
+        words: Words,
+        *,
+        parameters: Mapping[str, Value] | None = None,
+        frozen: Iterable[str] = (),
+    ) -> None:
+        self.sites = sites
+        self._words = dict(sorted(words.items()))
+        self._parameters = dict(parameters or {})
+        self.frozen = frozenset(frozen)
+        self._table: BitTable | None = None
+
+    # --- what it is
+
+    @property
+    def words(self) -> Words:
+        """Copy of the dictionary word -> coefficient; a word is a tuple of (site, letter number)."""
+        return dict(self._words)
+
+    @property
+    def parameters(self) -> dict[str, Value]:
+        """Copy of the current values of the parameters."""
+        return dict(self._parameters)
+
+    @property
+    def terms(self) -> tuple[Term, ...]:
+        """The words in canonical order, readable."""
+        names = self.sites.local.letters
+        return tuple(
+            Term(c, tuple(site for site, _ in word), tuple(names[letter] for _, letter in word))
+            for word, c in self._words.items()
+        )
+
+    @property
+    def coefficients(self) -> np.ndarray:
+        """Numeric values of the coefficients, order of `terms`; complex128, shape (number of terms,).
+
+        Raises
+        ------
+        ValueError
+            When a coefficient has no finite value at the current parameters.
+        """
+        return np.array([a for _, a in self._numeric()], dtype=np.complex128)
+
+    @property
+    def non_hermitian_word(self) -> str | None:
+        """None for a Hermitian sum, otherwise one word with a coefficient that is not real, as text."""
+        for word, coefficient in self._words.items():
+            if not coefficient.is_real:
+                name = word_text(word, self.sites.local) or "1"
+                return f"{name} with the coefficient {coefficient}"
+        return None
+
+    @property
+    def is_hermitian(self) -> bool:
+        """Whether the sum is Hermitian; decided from the canonical words, before any matrix exists."""
+        return self.non_hermitian_word is None
+
+    @property
+    def range(self) -> int:
+        """Number of neighbouring sites that the widest word covers (shortest arc on a ring); 0 without operators."""
+        return max((self.sites.reach([site for site, _ in word]) for word in self._words), default=0)
+
+    @property
+    def norm_bound(self) -> float:
+        """Upper bound of the operator norm: sum over the words of |coefficient| times the norms of the letters."""
+        norms = [float(np.linalg.norm(matrix, 2)) for matrix in self.sites.local.matrices]
+        return float(sum(abs(a) * np.prod([norms[x] for _, x in word]) for word, a in self._numeric()))
+
+    def __str__(self) -> str:
+        """Write the normal form; `formula` reads it back to the same sum."""
+        return sum_text(self._words, self.sites, taken=self._parameters)
+
+    def __repr__(self) -> str:
+        """Short description that fits a terminal."""
+        text = str(self)
+        shown = text if len(text) <= 60 else text[:57] + "..."
+        return f"<OperatorSum of {len(self._words)} words on {self.sites}: {shown}>"
+
+    def __eq__(self, other: object) -> bool:
+        """Same sites, same canonical words, same values of the parameters that occur."""
+        if not isinstance(other, OperatorSum):
+            return NotImplemented
+        mine, theirs = ({n: s._parameters[n] for n in s._names()} for s in (self, other))
+        return self.sites == other.sites and self._words == other._words and mine == theirs
+
+    def __hash__(self) -> int:
+        """Hash of the canonical words."""
+        return hash((self.sites, frozenset(self._words)))
+
+    # --- algebra
+
+    def adjoint(self) -> OperatorSum:
+        """Hermitian conjugate."""
+        return self._like(algebra.adjoint(self._words))
+
+    def __add__(self, other: object) -> OperatorSum:
+        """Sum with another sum on the same sites, or with a number times the identity."""
+        right = self._partner(other)
+        return NotImplemented if right is None else self._join(right, algebra.add(self._words, right._words))
+
+    __radd__ = __add__
+
+    def __neg__(self) -> OperatorSum:
+        """Negative."""
+        return self._like(algebra.negative(self._words))
+
+    def __sub__(self, other: object) -> OperatorSum:
+        """Difference."""
+        right = self._partner(other)
+        return NotImplemented if right is None else self + (-right)
+
+    def __rsub__(self, other: object) -> OperatorSum:
+        """Difference, number first."""
+        return (-self) + other
+
+    def __mul__(self, other: object) -> OperatorSum:
+        """Operator product, or product with a number."""
+        right = self._partner(other)
+        if right is None:
+            return NotImplemented
+        return self._join(right, algebra.multiply(self._words, right._words, self.sites.local))
+
+    def __rmul__(self, other: object) -> OperatorSum:
+        """Product, number first."""
+        left = self._partner(other)
+        return NotImplemented if left is None else left * self
+
+    def __truediv__(self, other: object) -> OperatorSum:
+        """Divide by a number."""
+        if not isinstance(other, Number):
+            return NotImplemented
+        return self * (1 / complex(other))  # type: ignore[call-overload]
+
+    def commutator(self, other: OperatorSum) -> OperatorSum:
+        """`self * other - other * self`; words without a common site cost nothing."""
+        right = self._partner(other)
+        if right is None:
+            raise TypeError(f"commutator: expected an OperatorSum, not {type(other).__name__}")
+        return self._join(right, algebra.commute(self._words, right._words, self.sites.local))
+
+    # --- parameters
+
+    def derivative(self, name: str, position: int | None = None) -> OperatorSum:
+        """Derivative of the operator by a parameter.
+
+        Parameters
+        ----------
+        name : str
+            A parameter.
+        position : int, optional
+            Which entry, for a list parameter.
+
+        Returns
+        -------
+        OperatorSum
+
+        Raises
+        ------
+        ValueError
+            For an unknown or complex parameter, a parameter that decides positions, or a missing or wrong position.
+        """
+        value = self._known(name)
+        if isinstance(value, tuple) != (position is not None):
+            needed = "a position" if isinstance(value, tuple) else "no position"
+            raise ValueError(f"derivative: parameter '{name}' needs {needed}")
+        if isinstance(value, tuple) and not 0 <= (position or 0) < len(value):
+            raise ValueError(
+                f"derivative: parameter '{name}' has no position {position} (0..{len(value) - 1})"
+            )
+        slopes = {word: c.derivative(name, position) for word, c in self._words.items()}
+        return self._like({word: c for word, c in slopes.items() if not c.is_zero})
+
+    def with_parameters(self, **values: Any) -> OperatorSum:
+        """Same sum at other values of some parameters.
+
+        Raises
+        ------
+        TypeError, ValueError
+            For an unknown name, a parameter that decides positions, a list of another length, a complex value where the
+            formula was read with a real one, or a value that is no finite number.
+        """
+        changed = dict(self._parameters)
+        for name, value in values.items():
+            old, new = self._known(name), check_parameter(name, value)
+            if isinstance(old, tuple) != isinstance(new, tuple):
+                raise ValueError(f"parameter '{name}' was a {_shape(old)} and cannot become a {_shape(new)}")
+            if isinstance(old, tuple) and isinstance(new, tuple) and len(old) != len(new):
+                raise ValueError(f"parameter '{name}' needs {len(old)} values, not {len(new)}")
+            phases = {s.phase != 0 for c in self._words.values() for s in c.symbols() if s.name == name}
+            if phases == {False} and is_complex(new):
+                raise ValueError(
+                    f"parameter '{name}' was real when the formula was read and cannot become complex"
+                )
+            changed[name] = new
+        return OperatorSum(self.sites, self._words, parameters=changed, frozen=self.frozen)
+
+    # --- arrays
+
+    def matrix(self, *, limit: int | None = None) -> Any:
+        """Sparse matrix in the basis of the sites (site 0 most significant, up before down).
+
+        Parameters
+        ----------
+        limit : int, optional
+            Bytes that may be used; default what the machine has available.
+
+        Returns
+        -------
+        scipy.sparse.csr_array, shape (2**L, 2**L)
+            float64 when the operator is real in this basis, otherwise complex128; no explicit zeros.
+
+        Raises
+        ------
+        ResourceError
+            When the matrix would not fit, with the memory it would need; raised before anything is allocated.
+        ValueError
+            When a coefficient has no finite value at the current parameters.
+
+        Notes
+        -----
+        Cost O(words * 2^L) bit operations.
+        """
+        return self._bits().matrix(limit=limit)
+
+    def action(self, vector: np.ndarray) -> np.ndarray:
+        """Operator times vector, without a matrix.
+
+        Parameters
+        ----------
+        vector : real or complex, shape (2**L,) or (2**L, k)
+            One state, or k states as columns.
+
+        Returns
+        -------
+        float64 or complex128, same shape
+
+        Raises
+        ------
+        ValueError
+            When the first dimension is not 2**L.
+        """
+        vector = np.asarray(vector)
+        if vector.ndim not in (1, 2) or vector.shape[0] != 2**self.sites.size:
+            raise ValueError(
+                f"action: the vector needs 2^{self.sites.size} rows, its shape is {vector.shape}"
+            )
+        return self._bits().action(vector)
+
+    # --- helpers
+
+    def _numeric(self) -> list[tuple[Word, complex]]:
+        result = []
+        for word, coefficient in self._words.items():
+            try:
+                value = complex(coefficient.value(self._parameters))
+            except (ArithmeticError, ValueError) as error:
+                raise ValueError(f"coefficient {coefficient} has no value: {error}") from None
+            if not np.isfinite(value):
+                raise ValueError(f"coefficient {coefficient} is not finite: {value}")
+            result.append((word, value))
+        return result
+
+    def _bits(self) -> BitTable:
+        if self._table is None:
+            self._table = BitTable(self._numeric(), self.sites.size)
+        return self._table
+
+    def _names(self) -> set[str]:
+        return {s.name for c in self._words.values() for s in c.symbols()}
+
+    def _known(self, name: str) -> Value:
+        if name in self.frozen:
+            raise ValueError(
+                f"parameter '{name}' decides positions in this formula: read the formula again instead"
+            )
+        if name not in self._parameters:
+            raise ValueError(f"unknown parameter '{name}'; known: {', '.join(self._parameters) or 'none'}")
+        return self._parameters[name]
+
+    def _like(self, words: Words) -> OperatorSum:
+        return OperatorSum(self.sites, words, parameters=self._parameters, frozen=self.frozen)
+
+    def _partner(self, other: object) -> OperatorSum | None:
+        if isinstance(other, OperatorSum):
+            return other
+        if not isinstance(other, Number):
+            return None
+        number = complex(other)  # type: ignore[call-overload]
+        if not np.isfinite(number):
+            raise ValueError(f"an operator cannot be combined with {other}")
+        identity = Coefficient.constant(from_complex(number))
+        return self._like({} if identity.is_zero else {(): identity})
+
+    def _join(self, other: OperatorSum, words: Words) -> OperatorSum:
+        if self.sites != other.sites:
+            raise ValueError(
+                f"operators on different sites cannot be combined: {self.sites} and {other.sites}"
+            )
+        for name, value in other._parameters.items():
+            if self._parameters.get(name, value) != value:
+                raise ValueError(f"parameter '{name}' has two values: {self._parameters[name]} and {value}")
+        parameters = self._parameters | other._parameters
+        return OperatorSum(self.sites, words, parameters=parameters, frozen=self.frozen | other.frozen)
+
+
+def _shape(value: Value) -> str:
+    return "list" if isinstance(value, tuple) else "single number"
