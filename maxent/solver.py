@@ -137,4 +137,7 @@ def _faces(names: Sequence[str], outcome: Outcome) -> FaceChain | None:
         at = at.face
     log_dimension = chain[-1].log_dimension
     directions = tuple(_named(names, x.direction) for x in chain if x.direction is not None)
-    return FaceChain(float(np.exp(log_dimension)), log_dimension, len(chain), directions, tuple(x.gap for x in chain))
+    dimension = float(np.exp(log_dimension))
+    if abs(dimension - np.rint(dimension)) < 1e-9 * dimension:  # a count, up to the rounding of its logarithm
+        dimension = float(np.rint(dimension))
+    return FaceChain(dimension, log_dimension, len(chain), directions, tuple(x.gap for x in chain))

@@ -26,12 +26,13 @@ PASS = 1 << 15
 
 
 class Ground(NamedTuple):
-    """Ground space of a combination: kept diagonal entries, isometries of the dense blocks, relative gap, dimension."""
+    """Ground space of a combination: kept diagonal entries, isometries of the dense blocks, relative gap, dimension, width."""
 
     keep: np.ndarray
     isometries: tuple[np.ndarray, ...]
     gap: float
     dimension: int
+    width: float
 
 
 def eigh(matrix: Any) -> tuple[Any, Any]:
@@ -317,7 +318,9 @@ class Blocks(Family):
         if dimension in (0, self.size):
             return None
         left = [np.delete(flat, keep), *[e[p.shape[1] :] for (e, _), p in zip(pairs, isometries, strict=True)]]
-        return Ground(keep, isometries, float(np.concatenate(left).min() / size), dimension)
+        held = [flat[keep], *[e[: p.shape[1]] for (e, _), p in zip(pairs, isometries, strict=True)]]
+        width = float(np.abs(np.concatenate(held)).max() / size)
+        return Ground(keep, isometries, float(np.concatenate(left).min() / size), dimension, width)
 
     def compress(self, ground: Ground) -> Blocks:
         """The same charges on a ground space; blocks that are left empty disappear."""

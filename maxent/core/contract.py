@@ -117,12 +117,16 @@ class Face:
         Logarithm of the dimension of the ground space.
     exact : bool
         True when the restriction is a selection of states and brings no rounding of its own.
+    width : float
+        Spread of the levels inside the ground space, relative to the largest level: rounding for the exact
+        direction, of the order of its error for an approximate one.
     """
 
     family: Family
     gap: float
     log_dimension: float
     exact: bool = False
+    width: float = 0.0
 
 
 @dataclass(frozen=True)

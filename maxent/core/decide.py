@@ -13,7 +13,7 @@ from maxent.core.centre import centre, starts_along
 from maxent.core.contract import EPS, SAFETY, Problem, Verdict
 from maxent.core.exists import minimiser_exists
 from maxent.core.faces import look, outside
-from maxent.core.newton import PATIENCE, at_floor, begin, newton_step
+from maxent.core.newton import PATIENCE, at_floor, begin, newton_step, settle
 from maxent.core.outcome import Memo, Outcome
 from maxent.core.whiten import whiten
 
@@ -207,6 +207,7 @@ def nominal(problem: Problem, memo: Memo) -> Outcome | None:
 
 
 def _solved(problem: Problem, memo: Memo, evidence: str) -> Outcome:
+    memo.at = settle(memo.family.evaluate, memo.here)
     values = memo.whitening.values(memo.here.evaluation.values)
     return memo.outcome(problem, Verdict.SOLVED, family=memo.family, values=values, evidence=evidence)
 

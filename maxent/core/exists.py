@@ -28,7 +28,7 @@ def minimiser_exists(family: Family, at: Iterate, unit: np.ndarray) -> tuple[boo
         R nu; NaN when no stiffness bound is known and the Hessian was probed instead.
     evidence : {"proved", "tested"}
     """
-    h = np.maximum(at.curvature, 1e-300)
+    h = np.maximum(at.curvature, 1e-150)  # below that nothing can be proved, and squares would overflow
     along = np.abs(at.axes.T) @ (unit + at.evaluation.error) + np.abs(at.axes.T @ at.evaluation.values)
     nu2 = float(np.sum(along**2 / h))
     bounds = np.array([_bound(family, at, k, exact=False) for k in range(len(h))])

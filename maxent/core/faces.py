@@ -8,8 +8,6 @@ targets outside (a tangent touches).  Floor: core.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import replace
-
 import numpy as np
 
 from maxent.core.contract import EPS, Face, Problem, Verdict
@@ -21,6 +19,9 @@ __all__ = ["look", "outside"]
 DEEPEST = 12
 #: Relative residual a limit state must have to end the search early, and at its end.
 EARLY, LATE = 1e-11, 1e-8
+
+#: A gap that needs no second thought, and the width of a ground space whose direction is right to rounding.
+CLEAR, SHARP = 1e-3, 1e-14
 
 Decide = Callable[..., Outcome]
 
@@ -62,13 +63,23 @@ def look(
             memo.near.append((margin, candidate))
             continue
         face = problem.family.face(v, tolerance)
-        if face is not None and (found is None or face.gap > found[3].gap):
+        if face is not None and (found is None or _sharper(face, found[3])):
             found = (v, margin, tolerance, face)
-            if face.gap > 1e-3:
+            if face.gap > CLEAR and face.width < SHARP:
                 break
     if found is None or memo.depth >= DEEPEST or (found[3].gap < 1e-6 and not late):
         return None
     return _descend(problem, memo, found, decide, late=late)
+
+
+def _sharper(face: Face, than: Face) -> bool:
+    """Whether `face` is the better one: clear gaps first, then the sharper direction.
+
+    On a flat face the lowest level is blind to an error e of the direction (it enters as e^2); the width sees it.
+    """
+    if face.gap > CLEAR and than.gap > CLEAR:
+        return face.width < than.width
+    return face.gap > than.gap
 
 
 def _candidates(memo: Memo, x: np.ndarray, step: np.ndarray | None):
@@ -87,7 +98,8 @@ def _descend(
     noise = problem.noise + rounding * problem.family.scale
     below = decide(Problem(face.family, noise, problem.accuracy), depth=memo.depth + 1)
     memo.iterations += below.iterations
-    residual = np.inf if below.values is None else np.abs(below.values)
+    settled = below.verdict in (Verdict.SOLVED, Verdict.BOUNDARY)
+    residual = np.abs(below.values) if settled and below.values is not None else np.inf
     allowed = LATE * problem.size + problem.accuracy if late else EARLY * problem.size
     if not np.all(residual <= allowed):
         memo.reason = (
@@ -95,8 +107,7 @@ def _descend(
             "but no state on its ground space reproduces the targets"
         )
         return None
-    answer = memo.outcome(
+    return memo.outcome(
         problem, Verdict.BOUNDARY, direction=v, margin=margin, tolerance=tolerance, face=below, values=below.values,
         gap=face.gap, log_dimension=face.log_dimension, evidence=below.evidence,
     )  # fmt: skip
-    return replace(answer, at=below.deepest.at, family=below.deepest.family)

@@ -14,7 +14,7 @@ import numpy as np
 
 from maxent.core.contract import EPS, Evaluation, namespace
 
-__all__ = ["Iterate", "at_floor", "begin", "curvatures", "newton_step", "trust_step"]
+__all__ = ["Iterate", "at_floor", "begin", "curvatures", "newton_step", "settle", "trust_step"]
 
 #: Rejected steps in a row after which no further progress is expected.
 PATIENCE = 12
@@ -125,3 +125,24 @@ def newton_step(evaluate: Callable[[Any], Evaluation], at: Iterate) -> Iterate:
 def at_floor(at: Iterate) -> Any:
     """Whether the residual is what rounding alone explains."""
     return at.residual <= at.evaluation.rounding
+
+
+def settle(evaluate: Callable[[Any], Evaluation], at: Iterate) -> Iterate:
+    """The best of a few more steps at the rounding floor, where the exponent is so large that the floor is high.
+
+    Host only.  Near a boundary ``eps |lam.A|`` exceeds 1e-12 and single residuals scatter by a decade.
+    """
+    best = at
+    failed = 0
+    while best.evaluation.level > 1e3 and failed < 6:
+        trust, (h, axes) = best.radius, (best.curvature, best.axes)
+        floored = np.maximum(h, 1e-32 * h[-1] + 1e-300)
+        # a shortened step leaves the same rounding error elsewhere: 1, 1/2, 1/4, ... of the Newton step
+        s, _ = trust_step(-best.evaluation.values, floored, axes, trust)
+        lam = best.lam + s * 0.5**failed
+        new = evaluate(lam)
+        if norm(new.values) < 0.9 * best.residual:
+            best, failed = Iterate(lam, trust, new, *curvatures(new), np.asarray(0)), 0
+        else:
+            failed += 1
+    return best

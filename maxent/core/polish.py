@@ -266,7 +266,7 @@ def polish(blocks: Blocks, v: np.ndarray, k: int, *, passes: int = 12) -> np.nda
             best = (cluster.lowest, v)
         step, rho, done = _second_order_step(cluster, v, rho)
         if done:
-            return best[1]
+            break
         length = np.linalg.norm(step)
         if length > 0.3:
             step = step * (0.3 / length)
@@ -274,6 +274,7 @@ def polish(blocks: Blocks, v: np.ndarray, k: int, *, passes: int = 12) -> np.nda
         if length < 2e-16 or 0.5 * last < length < 1e-12:
             break
         last = length
+    # the last direction is the sharpest one; lowest levels that agree to rounding do not tell them apart
     low = blocks.lowest(v)
     return v if low.value >= best[0] - 1e-15 * abs(low.highest) else best[1]
 
