@@ -11,9 +11,7 @@ from collections.abc import Iterable, Mapping, Sequence
 
 __all__ = [
     "combination",
-    "digits",
     "listing",
-    "memory",
     "number",
     "plural",
     "suggestion",
@@ -103,39 +101,13 @@ def with_error(value: float | None, error: float | None, most: int = 12) -> str:
     return f"{_unsigned_zero(body)}({units})"
 
 
-def digits(value: float | None, error: float | None) -> int | None:
-    """Count the digits of `value` that `error` leaves fixed.
-
-    Parameters
-    ----------
-    value, error : float or None
-
-    Returns
-    -------
-    int or None
-        floor(log10(|value| / error)), between 0 and 16; None where there is nothing to count.
-
-    Examples
-    --------
-    >>> digits(0.5, 2e-9), digits(1e-12, 1e-3), digits(0.5, 0.0)
-    (8, 0, 16)
-    """
-    if value is None or error is None or not math.isfinite(value) or math.isnan(error) or value == 0:
-        return None
-    if error == 0:
-        return 16
-    if math.isinf(error):
-        return 0
-    return max(0, min(16, math.floor(math.log10(abs(value)) - math.log10(error))))
-
-
 def combination(coefficients: Mapping[str, float], significant: int = 6) -> str:
     """Write a linear combination of named charges.
 
     Parameters
     ----------
     coefficients : mapping of name to float
-        Entries equal to zero are left out.
+        Entries below 1e-12 of the largest are left out: they are rounding.
     significant : int
         Digits of each coefficient.
 
@@ -149,8 +121,9 @@ def combination(coefficients: Mapping[str, float], significant: int = 6) -> str:
     '0.5 energy - number'
     """
     out = ""
+    least = 1e-12 * max(map(abs, coefficients.values()), default=0.0)
     for name, c in coefficients.items():
-        if c == 0:
+        if abs(c) <= least:
             continue
         size = number(abs(c), significant)
         term = name if size == "1" else f"{size} {name}"
@@ -197,21 +170,6 @@ def table(rows: Iterable[Sequence[str]], head: Sequence[str] = (), *, right: Ite
         ).rstrip()
         for line in lines
     )
-
-
-def memory(size: float) -> str:
-    """Write a number of bytes in binary units.
-
-    Examples
-    --------
-    >>> memory(512), memory(3 * 2**20), memory(48 * 2**30)
-    ('512 B', '3.0 MiB', '48 GiB')
-    """
-    for unit in ("B", "KiB", "MiB", "GiB", "TiB"):
-        if size < 1024 or unit == "TiB":
-            break
-        size /= 1024
-    return f"{size:.0f} {unit}" if unit == "B" or size >= 10 else f"{size:.1f} {unit}"
 
 
 def plural(count: int, noun: str) -> str:

@@ -118,18 +118,18 @@ def _solve(given: argparse.Namespace) -> int:
 
 def _check(given: argparse.Namespace) -> int:
     from maxent.app.run import check, sizes
-    from maxent.text import number, table, with_error
+    from maxent.text import number, table
 
     config, job = check(given.config)
     print(f"{config.file}: good; kind {config.header.kind}")
     print()
-    print(table(sizes(job)))
+    print(table(sizes(job).items()))
     print()
     rows = [
-        (name, with_error(t.value, t.sigma), number(t.accuracy, 3), t.source)
+        (name, number(t.value, 12), number(t.sigma, 2), number(t.accuracy, 3), t.source)
         for name, t in job.targets.items()
     ]
-    print(table(rows, ("charge", "target", "accuracy", "source"), right=[1, 2]))
+    print(table(rows, ("charge", "target", "sigma", "accuracy", "source"), right=[1, 2, 3]))
     return 0
 
 

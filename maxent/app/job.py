@@ -102,8 +102,6 @@ class Job:
         Operators whose means are wanted, of the kind the family understands.
     facts : mapping of str to str
         What was built, for people: sites, size, start, sources of the data.
-    memory : float
-        Bytes that the largest step of a solve is expected to need.
     labels : tuple of str
         Names of the single states, where the user gave some.
     digests : mapping of str to str
@@ -114,6 +112,5 @@ class Job:
     targets: Mapping[str, Target]
     predictions: Mapping[str, Any] = field(default_factory=dict)
     facts: Mapping[str, str] = field(default_factory=dict)
-    memory: float = 0.0
     labels: tuple[str, ...] = ()
     digests: Mapping[str, str] = field(default_factory=dict)

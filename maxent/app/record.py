@@ -13,7 +13,6 @@ from typing import Any
 
 from maxent.app.config import Config
 from maxent.app.job import Job
-from maxent.text import digits
 from maxent.version import __version__
 
 __all__ = ["SCHEMA", "dump", "record"]
@@ -22,7 +21,13 @@ SCHEMA = "maxent.result/1"
 
 
 def record(
-    config: Config, job: Job, result: Any, *, asked_driver: str, versions: Mapping[str, str]
+    config: Config,
+    job: Job,
+    result: Any,
+    *,
+    asked_driver: str,
+    facts: Mapping[str, str],
+    versions: Mapping[str, str],
 ) -> dict[str, Any]:
     """Collect everything a result says, with the names of the charges.
 
@@ -36,6 +41,8 @@ def record(
         What came out.
     asked_driver : str
         The driver asked for ("auto", "host", "jax"); the one that ran is in the result.
+    facts : mapping of str to str
+        What was built, for people.
     versions : mapping of str to str
         Versions of the programs that took part.
 
@@ -73,7 +80,7 @@ def record(
         "driver": result.driver,
         "asked_driver": asked_driver,
         "size": int(job.family.size),
-        "facts": dict(job.facts),
+        "facts": dict(facts),
         "versions": {"maxent": __version__, **versions},
     }
 
@@ -85,7 +92,7 @@ def dump(data: Mapping[str, Any]) -> str:
 
 def _charge(name: str, job: Job, result: Any) -> dict[str, Any]:
     target = job.targets[name]
-    multiplier, error = _finite(result.multipliers[name]), _finite(result.multiplier_errors[name])
+    digits = result.digits[name]
     return {
         "name": name,
         "target": target.value,
@@ -94,9 +101,9 @@ def _charge(name: str, job: Job, result: Any) -> dict[str, Any]:
         "accuracy": target.accuracy,
         "value": _finite(result.values[name]),
         "residual": _finite(result.residuals[name]),
-        "multiplier": multiplier,
-        "multiplier_error": error,
-        "multiplier_digits": digits(multiplier, error),
+        "multiplier": _finite(result.multipliers[name]),
+        "multiplier_error": _finite(result.multiplier_errors[name]),
+        "multiplier_digits": math.floor(digits) if math.isfinite(digits) else None,
         "last_multiplier": _finite(result.last_multipliers[name]),
     }
 
@@ -122,10 +129,10 @@ def _face(result: Any) -> dict[str, Any] | None:
     if face is None:
         return None
     return {
-        "dimension": int(face.dimension),
-        "depth": int(face.depth),
+        "dimension": round(face.dimension),
+        "depth": face.depth,
         "directions": [_combination(d) for d in face.directions],
-        "gap": _finite(face.gap),
+        "gaps": [_finite(gap) for gap in face.gaps],
     }
 
 
@@ -134,8 +141,9 @@ def _conditioning(found: Any) -> dict[str, Any] | None:
         return None
     return {
         "condition_number": _finite(found.condition_number),
-        "stiffest": _combination(found.stiffest),
-        "sloppiest": _combination(found.sloppiest),
+        "stiffest": _combination(found.stiffest.coefficients),
+        "sloppiest": _combination(found.sloppiest.coefficients),
+        "spectrum": [_finite(x) for x in found.spectrum],
     }
 
 

@@ -10,7 +10,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from maxent.app import words
-from maxent.text import combination, number, with_error
+from maxent.text import combination, number
 
 __all__ = ["render"]
 
@@ -45,6 +45,7 @@ def render(record: Mapping[str, Any]) -> str:
         "face": words.face,
         "redundancy": words.redundancy,
     }
+    head, rows = words.charge_table(record)
     return environment.get_template("report.html").render(
-        r=record, short=words.verdict(record), with_error=with_error
+        r=record, short=words.verdict(record), head=head, rows=rows
     )

@@ -23,10 +23,11 @@ from typing import Any
 from maxent.app.config import Config, build, load
 from maxent.app.job import Job
 from maxent.errors import ConfigError, ResourceError
-from maxent.text import memory, plural
+from maxent.memory import size_text
+from maxent.text import plural
 from maxent.version import __version__
 
-__all__ = ["Outcome", "check", "folder", "name", "solve"]
+__all__ = ["Outcome", "check", "folder", "name", "sizes", "solve"]
 
 Say = Callable[[str], None]
 
@@ -88,7 +89,7 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
         say(f"fit: {plural(result.iterations, 'iteration')} in {seconds['fit']:.2f} s")
         from maxent.app.record import record as collect
 
-        found = collect(config, job, result, asked_driver=asked, versions=_versions())
+        found = collect(config, job, result, asked_driver=asked, facts=sizes(job), versions=_versions())
         _write(part, config, job, result, found)
         manifest = {
             "started": time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime(started)),
@@ -262,8 +263,8 @@ def _versions() -> dict[str, str]:
     return {package: metadata.version(package) for package in ("numpy", "scipy", "jax")}
 
 
-def sizes(job: Job) -> list[tuple[str, str]]:
-    """List what `check` shows about a job: what was built, how large it is and what a solve will need.
+def sizes(job: Job) -> dict[str, str]:
+    """Say what was built, how large it is and what a fit will need.
 
     Parameters
     ----------
@@ -271,9 +272,16 @@ def sizes(job: Job) -> list[tuple[str, str]]:
 
     Returns
     -------
-    list of (name, text)
+    dict of str to str
     """
-    rows = [*job.facts.items()]
-    if job.memory:
-        rows.append(("memory", f"about {memory(job.memory)} for the fit"))
-    return rows
+    blocks = job.family.blocks
+    n_alone, dense = blocks.diagonal.shape[1], [a.shape[-1] for a in blocks.dense]
+    if dense:
+        structure = f"{plural(len(dense), 'block')} of states, the largest of {plural(max(dense), 'state')}"
+        if n_alone:
+            structure += f"; {plural(n_alone, 'further state')} on which the charges are numbers"
+    else:
+        structure = f"the charges are numbers on all of the {plural(n_alone, 'state')}"
+    # the charges as given, whitened, and in the eigenbasis
+    need = 3 * (blocks.diagonal.nbytes + sum(a.nbytes for a in blocks.dense))
+    return dict(job.facts) | {"blocks": structure, "memory": f"about {size_text(need)} for the fit"}

@@ -9,9 +9,9 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
-from maxent.text import combination, number, plural
+from maxent.text import combination, listing, number, plural, table, with_error
 
-__all__ = ["certificate", "charge_rows", "face", "redundancy", "summary", "verdict"]
+__all__ = ["certificate", "charge_table", "face", "redundancy", "summary", "verdict"]
 
 _SHORT = {
     "solved": "The targets are met",
@@ -61,9 +61,10 @@ def face(found: Mapping[str, Any]) -> str:
     dimension, depth = found["dimension"], found["depth"]
     states = "a single state" if dimension == 1 else f"{dimension} dimensions"
     steps = "in one step" if depth == 1 else f"in {depth} steps, each inside the face before"
+    gaps = listing((number(gap, 3) for gap in found["gaps"]), last="and")
     return (
-        f"The limit state lives on a face of {states}, found {steps}; the next level lies "
-        f"{number(found['gap'], 3)} of the range above it."
+        f"The limit state lives on a face of {states}, found {steps}; the next level lies {gaps} "
+        "(as a share of the whole range) above it."
     )
 
 
@@ -72,20 +73,32 @@ def redundancy(found: Mapping[str, Any]) -> str:
     return f"{combination(found['coefficients'])} = {number(found['constant'], 12)} in every state"
 
 
-def charge_rows(record: Mapping[str, Any]) -> list[tuple[str, ...]]:
-    """Make the rows of the table of charges: name, target, value, residual, multiplier, error, digits."""
-    return [
-        (
-            c["name"],
-            number(c["target"], 12),
-            number(c["value"], 12),
-            number(c["residual"], 2),
-            number(c["multiplier"], 12),
-            number(c["multiplier_error"], 2),
-            "–" if c["multiplier_digits"] is None else str(c["multiplier_digits"]),
-        )
-        for c in record["charges"]
-    ]
+def charge_table(record: Mapping[str, Any]) -> tuple[list[str], list[list[str]]]:
+    """Make the table of charges.
+
+    Parameters
+    ----------
+    record : mapping
+
+    Returns
+    -------
+    tuple of head and rows
+        The column "sigma" is there only if a target has one.
+    """
+    measured = any(c["sigma"] is not None for c in record["charges"])
+    columns = {
+        "charge": lambda c: c["name"],
+        "target": lambda c: number(c["target"], 12),
+        "sigma": lambda c: number(c["sigma"], 2),
+        "value": lambda c: number(c["value"], 12),
+        "residual": lambda c: number(c["residual"], 2),
+        "multiplier": lambda c: with_error(c["multiplier"], c["multiplier_error"]),
+        "error": lambda c: number(c["multiplier_error"], 2),
+        "digits": lambda c: number(c["multiplier_digits"]),
+    }
+    if not measured:
+        del columns["sigma"]
+    return list(columns), [[write(c) for write in columns.values()] for c in record["charges"]]
 
 
 def summary(record: Mapping[str, Any]) -> str:
@@ -100,12 +113,10 @@ def summary(record: Mapping[str, Any]) -> str:
     str
         Several lines, without a final newline.
     """
-    from maxent.text import table
-
-    head = ("charge", "target", "value", "residual", "multiplier", "error", "digits")
+    head, rows = charge_table(record)
     parts = [
         f"{record['verdict']} ({record['evidence']}): {record['message']}",
-        table(charge_rows(record), head, right=range(1, 7)),
+        table(rows, head, right=range(1, len(head))),
     ]
     if record["certificate"]:
         parts.append(certificate(record["certificate"]))
@@ -115,8 +126,8 @@ def summary(record: Mapping[str, Any]) -> str:
         parts.append("\n".join(["Redundant:", *("  " + redundancy(r) for r in record["redundancies"])]))
     reached = [p for p in record["predictions"] if p["value"] is not None]
     if reached:
-        rows = [(p["name"], number(p["value"], 12)) for p in reached]
-        parts.append(table(rows, ("prediction", "mean"), right=[1]))
+        means = [(p["name"], number(p["value"], 12)) for p in reached]
+        parts.append(table(means, ("prediction", "mean"), right=[1]))
     numbers = [
         (name, number(record[key], 12))
         for name, key in (

@@ -119,9 +119,7 @@ def build(options: Options, folder: File) -> Job:
         name: Target(float(options.targets[name]), accuracy=options.accuracy.get(name, 0.0))
         for name in charges
     }
-    return Job(
-        family, targets, predictions, facts, memory=16.0 * size**2 * (len(charges) + 4), digests=files.digests
-    )
+    return Job(family, targets, predictions, facts, digests=files.digests)
 
 
 def _inline(rows: list[list[float | str]]) -> np.ndarray:

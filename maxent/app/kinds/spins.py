@@ -11,8 +11,9 @@ from dataclasses import dataclass, field
 from pathlib import Path as File
 from typing import Any, Literal
 
-from maxent.app.job import ACCURACY, Job, Problems, Target, says
+from maxent.app.job import ACCURACY, BadInput, Job, Problems, Target, says
 from maxent.errors import FormulaError, ResourceError
+from maxent.memory import require_memory
 from maxent.text import plural
 
 __all__ = ["Options", "Sites", "Start", "build"]
@@ -108,6 +109,7 @@ def build(options: Options, folder: File) -> Job:
     except ValueError as bad:
         problems.add(("sites", "size"), str(bad))
         problems.raise_any()
+    _refuse_too_large(options, problems)
     operators = _Formulas(options, sites, problems)
     charges = {name: operators.read(("charges", name), text) for name, text in options.charges.items()}
     predictions = {
@@ -128,9 +130,8 @@ def build(options: Options, folder: File) -> Job:
             targets[name] = Target(start.mean(operator), "mean in the start state", accuracy=accuracy)
         else:
             targets[name] = Target(float(given), accuracy=accuracy)
-    matrices = {name: _matrix(("charges", name), op, problems) for name, op in charges.items()}
-    observed = {name: _matrix(("predictions", name), op, problems) for name, op in predictions.items()}
-    problems.raise_any()
+    matrices = {name: _matrix(("charges", name), op) for name, op in charges.items()}
+    observed = {name: _matrix(("predictions", name), op) for name, op in predictions.items()}
     facts = {
         "sites": f"{options.sites.geometry} of {plural(options.sites.size, 'spin-1/2 site')}",
         "states": str(2**options.sites.size),
@@ -175,8 +176,9 @@ class _Formulas:
         except FormulaError as bad:
             self.problems.add(path, str(bad))
             return None
-        if not operator.is_hermitian:
-            self.problems.add(path, "not Hermitian")
+        word = operator.non_hermitian_word
+        if word is not None:
+            self.problems.add(path, f"not Hermitian: it holds {word}")
             return None
         return operator
 
@@ -197,9 +199,20 @@ def _start(start: Start, sites: Any, problems: Problems) -> Any:
     return None if len(problems.found) > before else ProductState(sites, start.theta, start.phi)
 
 
-def _matrix(path: tuple[str, str], operator: Any, problems: Problems) -> Any:
+def _refuse_too_large(options: Options, problems: Problems) -> None:
+    """Refuse sizes for which not even the diagonals of the charges fit: given, shifted and whitened."""
+    size, count = options.sites.size, len(options.charges)
+    try:
+        require_memory(
+            3 * 8 * count * 2**size, f"2^{size} states need at least {{need}} for {plural(count, 'charge')}"
+        )
+    except ResourceError as bad:
+        problems.add(("sites", "size"), str(bad))
+        problems.raise_any()
+
+
+def _matrix(path: tuple[str, str], operator: Any) -> Any:
     try:
         return operator.matrix()
     except ResourceError as bad:
-        problems.add(path, str(bad))
-        return None
+        raise BadInput([(path, str(bad))]) from bad  # at once: trying the other operators would take long

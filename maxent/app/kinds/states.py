@@ -134,7 +134,6 @@ def build(options: Options, folder: File) -> Job:
         targets,
         predictions,
         facts,
-        memory=8.0 * size * (3 * len(charges) + 4),
         labels=tuple(options.labels or ()),
         digests=files.digests,
     )
