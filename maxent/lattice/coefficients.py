@@ -1,10 +1,11 @@
 """Coefficients of words: polynomials in the parameters, with exact numbers where they are exact.
 
-Floor: lattice (standard library only). A coefficient is a sum of numeric factor times monomial; a monomial is a product of
-integer powers of atoms; an atom is a parameter (at a position, if the parameter is a list), a function of a coefficient
-(abs, sqrt, exp, log, cos, sin), or a sum standing in a denominator. Equal terms are merged, exp(a) exp(b) = exp(a + b) and
-sqrt(a)^2 = a are used, so for polynomials (also with phases) the form is canonical; other identities, such as
-cos^2 + sin^2 = 1, are not looked for. Must not know operators or sites.
+Floor: lattice (standard library only). A coefficient is a sum of numeric factor times monomial; a monomial
+is a product of integer powers of atoms; an atom is a parameter (at a position, if the parameter is a list),
+a function of a coefficient (abs, sqrt, exp, log, cos, sin), or a sum standing in a denominator. Equal terms
+are merged, exp(a) exp(b) = exp(a + b) and sqrt(a)^2 = a are used, so for polynomials (also with phases) the
+form is canonical; other identities, such as cos^2 + sin^2 = 1, are not looked for. Must not know operators
+or sites.
 """
 
 from __future__ import annotations
@@ -23,8 +24,8 @@ FUNCTIONS = ("sqrt", "exp", "log", "cos", "sin", "abs")
 class Symbol(NamedTuple):
     """A parameter, or one entry of a list parameter.
 
-    `phase` is 0 for a real parameter, 1 for a complex one, -1 for the conjugate of a complex one. A position given as text
-    is used for printing only.
+    `phase` is 0 for a real parameter, 1 for a complex one, -1 for the conjugate of a complex one. A
+    position given as text is used for printing only.
     """
 
     name: str
@@ -196,7 +197,7 @@ class Coefficient:
         return Coefficient({((Call(function, self), 1),): ONE})
 
     def conjugate(self) -> Coefficient:
-        """Complex conjugate, for real values of the real parameters and positive arguments of log and sqrt."""
+        """Conjugate the coefficient; arguments of log and sqrt count as positive."""
         if all(n[1] == 0 and all(_is_real(a) for a, _ in m) for m, n in self.terms.items()):
             return self
         total = NOTHING
@@ -238,7 +239,7 @@ class Coefficient:
         return total
 
     def derivative(self, name: str, position: int | None = None) -> Coefficient:
-        """Derivative by a parameter (by one entry of it, for a list).
+        """Differentiate by a parameter (by one entry of it, for a list).
 
         Raises
         ------
@@ -257,7 +258,7 @@ class Coefficient:
         return total
 
     def relabelled(self, rule: Callable[[int], int | str]) -> Coefficient:
-        """Same coefficient with the positions of list parameters replaced by a rule."""
+        """Replace the positions of list parameters by a rule."""
         if not any(s.position is not None for s in self.symbols()):
             return self
         total = NOTHING
@@ -286,7 +287,7 @@ class Coefficient:
         return join(self.parts())
 
     def __repr__(self) -> str:
-        """Normal form in angle brackets."""
+        """Show the normal form in angle brackets."""
         return f"<Coefficient {self}>"
 
 

@@ -1,8 +1,8 @@
 """Numbers of formulas: exact as long as they can be, and their printed form.
 
-Floor: lattice (standard library only). A real number is an int or a Fraction while it is exact (literals, the factors of
-the operator tables) and a float once a root, a logarithm or the like has touched it; a complex number is a pair (real,
-imaginary). Must not know parameters or operators.
+Floor: lattice (standard library only). A real number is an int or a Fraction while it is exact (literals,
+the factors of the operator tables) and a float once a root, a logarithm or the like has touched it; a
+complex number is a pair (real, imaginary). Must not know parameters or operators.
 """
 
 from __future__ import annotations
@@ -21,7 +21,7 @@ ONE: Complex = (1, 0)
 
 
 def real_plus(a: Real, b: Real) -> Real:
-    """Add two reals; two floats that differ by rounding alone (8 units in the last place) cancel to an exact 0."""
+    """Add two reals; floats that cancel up to 8 units in the last place give an exact 0."""
     total = a + b
     if isinstance(total, float) and abs(total) <= 8 * EPS * max(abs(float(a)), abs(float(b))):
         return 0
@@ -29,7 +29,7 @@ def real_plus(a: Real, b: Real) -> Real:
 
 
 def real_times(a: Real, b: Real) -> Real:
-    """Multiply two reals; an exact 0 wins over anything, and a fraction that grows too long becomes a float."""
+    """Multiply two reals; a zero stays exact, and a fraction that grows too long becomes a float."""
     if a == 0 or b == 0:
         return 0
     product = a * b
@@ -90,8 +90,8 @@ def to_complex(a: Complex) -> complex:
 
 def from_complex(value: complex, noise: float = 0.0) -> Complex:
     """Wrap a float or complex; parts not above `noise` are rounding and become an exact 0."""
-    parts = (value.real, value.imag)
-    real, imag = (0 if abs(part) <= noise else part for part in parts)
+    real: Real = 0 if abs(value.real) <= noise else value.real
+    imag: Real = 0 if abs(value.imag) <= noise else value.imag
     return real, imag
 
 
@@ -114,8 +114,9 @@ def apply(name: str, a: Complex) -> Complex:
     """
     if name == "abs":
         if a[1] == 0:
-            return abs(a[0]), 0
-        return abs(to_complex(a)), 0
+            return (a[0] if a[0] >= 0 else -a[0]), 0
+        size: float = abs(to_complex(a))
+        return size, 0
     if name in ("sqrt", "log"):
         if a[1] != 0 or a[0] < 0 or (name == "log" and a[0] == 0):
             raise ValueError(f"{name} of {complex_text(a)}, which is not a positive number")

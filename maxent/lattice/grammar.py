@@ -1,22 +1,21 @@
 """Grammar of formulas: from text to a small tree in which every name has a meaning.
 
-Floor: lattice. The text is checked by `tokens`, read by Python's `ast` (white-listed nodes; nothing is ever executed) and
-turned into `Node`s that know whether they are operators and which free subscripts they carry. All errors name the column and
-what was expected. Must not know how a sum over positions is carried out.
+Floor: lattice. The text is checked by `tokens`, read by Python's `ast` (white-listed nodes; nothing is ever
+executed) and turned into `Node`s that know whether they are operators and which free subscripts they carry.
+All errors name the column and what was expected. Must not know how a sum over positions is carried out.
 """
 
 from __future__ import annotations
 
 import ast
 import difflib
-import keyword
 from collections.abc import Mapping
-from dataclasses import dataclass
 from fractions import Fraction
 from typing import Any, NoReturn
 
 from maxent.lattice.coefficients import FUNCTIONS, Value
 from maxent.lattice.exact import Complex
+from maxent.lattice.nodes import Node, integer_value, joined
 from maxent.lattice.sites import Sites
 from maxent.lattice.tokens import CONJUGATE, Token, fail, read
 
@@ -29,51 +28,6 @@ _MOST_DIGITS = 40
 def reserved_names(sites: Sites) -> set[str]:
     """Names the language itself uses on such sites; parameters and densities cannot have them."""
     return {*sites.local.symbols, *FUNCTIONS, *FORMS, *CONSTANTS, "for"}
-
-
-@dataclass(frozen=True)
-class Node:
-    """One piece of a formula.
-
-    Attributes
-    ----------
-    kind : str
-        number, position, parameter, entry, operator, density, sum, product, negative, quotient, power, floor, modulo,
-        function, dagger, commutator, anticommutator, pairs.
-    start : int
-        Place in the text, counted from 0.
-    value : object
-        The number, the name, whether a sum ends in h.c., or (names, relation) of `pairs`.
-    items : tuple of Node
-        The parts.
-    free : frozenset of str
-        Free subscripts in it.
-    subscripts : frozenset of str
-        Those of them that stand in a subscript bracket.
-    is_operator : bool
-        Whether it holds an operator.
-    """
-
-    kind: str
-    start: int
-    value: Any = None
-    items: tuple[Node, ...] = ()
-    free: frozenset[str] = frozenset()
-    subscripts: frozenset[str] = frozenset()
-    is_operator: bool = False
-
-
-def joined(kind: str, start: int, items: list[Node], value: Any = None) -> Node:
-    """Make a node from parts, with what it inherits from them."""
-    return Node(
-        kind,
-        start,
-        value,
-        tuple(items),
-        frozenset().union(*(x.free for x in items)),
-        frozenset().union(*(x.subscripts for x in items)),
-        any(x.is_operator for x in items),
-    )
 
 
 class Reader:
@@ -146,13 +100,18 @@ class Reader:
         total = self._sum(summands, has_conjugate)
         return self._pairs(total, cut.clause, names) if cut.clause else total
 
+    def position(self, index: Node, at: Mapping[str, int]) -> int:
+        """Value of a subscript at given values of the free subscripts."""
+        size = self.sites.size
+        return integer_value(index, at, size=size, parameters=self.parameters, text=self.text)
+
     # --- text to ast
 
     def _parse(self, source: str, start: int, end: int) -> ast.expr:
         try:
             return ast.parse(f"({source[start:end]})", mode="eval").body
         except SyntaxError as error:
-            # the order of tokens has been checked: what is left are numbers such as 007 and words of Python
+            # the order of tokens has been checked: what is left are numbers such as 007
             place = start + max((error.offset or 1) - 2, 0)
             fail(f"cannot be read here ({error.msg})", self.text, min(place, len(self.text) - 1))
         except (RecursionError, MemoryError):
@@ -207,8 +166,6 @@ class Reader:
 
     def _number(self, tree: ast.Constant) -> Complex:
         text = self.text[self._place(tree) : self._end(tree)]
-        if isinstance(tree.value, bool) or not isinstance(tree.value, int | float | complex):
-            self._fail(self._unknown(text), tree)
         is_imaginary = text[-1] == "j"
         digits = text[:-1] if is_imaginary else text
         mantissa, _, exponent = digits.lower().partition("e")
@@ -244,13 +201,15 @@ class Reader:
         fail(message, self.text, self._end(tree))
 
     def _candidates(self) -> list[str]:
-        return sorted((self.reserved - {"for"}) | set(self.parameters) | set(self.densities))
+        known = set(FUNCTIONS) | set(CONSTANTS) if self.scalar else self.reserved - {"for"}
+        return sorted(known | set(self.parameters) | set(self.densities))
 
     def _close(self, name: str) -> str | None:
         candidates = self._candidates()
+        cutoff = 0.75 if self.scalar else 0.5  # in a function of the position a new name may be the position
         same = [c for c in candidates if c.lower() == name.lower()]
         close = same or (
-            difflib.get_close_matches(name, candidates, n=1, cutoff=0.5) if len(name) > 1 else []
+            difflib.get_close_matches(name, candidates, n=1, cutoff=cutoff) if len(name) > 1 else []
         )
         return close[0] if close else None
 
@@ -291,7 +250,7 @@ class Reader:
         index = self._index(tree.slice)
         if not index.free:
             # decided positions outside the sites are mistakes on rings too: only a running subscript wraps
-            place = integer_value(index, {}, self)
+            place = self.position(index, {})
             last = self.sites.size - 1
             if not 0 <= place <= last:
                 fail(
@@ -342,11 +301,11 @@ class Reader:
         if name in self.parameters:
             value = self.parameters[name]
             if isinstance(value, tuple) or isinstance(value, complex) or not value.is_integer():
-                message = f"subscript '{name}' is the parameter {value}, which is no integer; name the subscript otherwise"
+                message = f"subscript '{name}' is the parameter {value}, which is no integer"
                 self._fail(message, tree)
             self.integers.add(name)
             return Node("parameter", place, name)
-        if name in self.reserved or name in self.densities or keyword.iskeyword(name) or name.startswith("_"):
+        if name in self.reserved or name in self.densities or name.startswith("_"):
             self._fail(f"'{name}' cannot be a subscript", tree)
         return Node("position", place, name, free=frozenset((name,)), subscripts=frozenset((name,)))
 
@@ -448,7 +407,9 @@ class Reader:
         for summand in summands:
             missing = [name for name in bound if name not in summand.free]
             if missing:
-                message = f"this summand does not carry '{missing[0]}'; put the sum in brackets: (... for ...) + ..."
+                message = (
+                    f"this summand does not carry '{missing[0]}'; put the sum in brackets: (... for ...)"
+                )
                 fail(message, self.text, summand.start)
         relation = clause[1].text if len(clause) == 3 else ""
         free = body.free - set(bound)
@@ -461,31 +422,3 @@ class Reader:
             body.subscripts - set(bound),
             body.is_operator,
         )
-
-
-def integer_value(index: Node, positions: Mapping[str, int], reader: Reader) -> int:
-    """Value of a subscript at given values of the free subscripts.
-
-    Raises
-    ------
-    FormulaError
-        For a division by zero.
-    """
-    if index.kind == "number":
-        return int(index.value[0])
-    if index.kind == "position":
-        return positions[index.value]
-    if index.kind == "constant":
-        return reader.sites.size
-    if index.kind == "parameter":
-        return int(reader.parameters[index.value])  # type: ignore[arg-type]
-    values = [integer_value(x, positions, reader) for x in index.items]
-    if index.kind == "negative":
-        return -values[0]
-    if index.kind == "sum":
-        return values[0] + values[1]
-    if index.kind == "product":
-        return values[0] * values[1]
-    if values[1] == 0:
-        fail("division by zero in a subscript", reader.text, index.items[1].start)
-    return values[0] // values[1] if index.kind == "floor" else values[0] % values[1]

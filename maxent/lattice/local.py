@@ -1,9 +1,9 @@
 """Operators of one site: the letters that words are made of, and how two letters on the same site multiply.
 
 Floor: lattice (standard library and NumPy). Equation: spin 1/2 in the basis (up, down), S_a = sigma_a / 2,
-S_a S_b = delta_ab / 4 + (i / 2) epsilon_abc S_c. Letters are Hermitian and, with the identity, a basis of the
-one-site matrices; so a sum of words is Hermitian exactly when all its coefficients are real. Must not know where sites lie
-or how many there are: another kind of site is another table here.
+S_a S_b = delta_ab / 4 + (i / 2) epsilon_abc S_c. Letters are Hermitian and, with the identity, a basis of
+the one-site matrices; so a sum of words is Hermitian exactly when all its coefficients are real. Must not
+know where sites lie or how many there are: another kind of site is another table here.
 """
 
 from __future__ import annotations

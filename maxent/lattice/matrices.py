@@ -1,13 +1,14 @@
 """Matrices and matrix-free action of sums of spin-1/2 words, by bit operations on the basis index.
 
-Floor: lattice (NumPy and SciPy). Bit size-1-k of the index n is site k, 0 for up and 1 for down. A word flips the bits of its
-Sx and Sy and weighs a state by signs of its Sy and Sz:
+Floor: lattice (NumPy and SciPy). Bit size-1-k of the index n is site k, 0 for up and 1 for down. A word
+flips the bits of its Sx and Sy and weighs a state by signs of its Sy and Sz:
 
-    word |n> = amplitude * (-1)^popcount(n & signs) |n xor flips>,    amplitude = coefficient * (1/2)^letters * i^(number of Sy).
+    word |n> = amplitude * (-1)^popcount(n & signs) |n xor flips>,
+    amplitude = coefficient * (1/2)^letters * i^(number of Sy).
 
-Words with the same flips are one generalised diagonal; the values on it are computed for all n at once, and words of equal
-magnitude are counted as integers first, so that entries that vanish by symmetry are exactly zero and never stored. Must not
-know formulas or parameters.
+Words with the same flips are one generalised diagonal; the values on it are computed for all n at once, and
+words of equal magnitude are counted as integers first, so that entries that vanish by symmetry are exactly
+zero and never stored. Must not know formulas or parameters.
 """
 
 from __future__ import annotations
@@ -27,7 +28,7 @@ _MOST_SUPPORT = 12
 
 
 class _Level(NamedTuple):
-    """Words of one magnitude on one generalised diagonal: magnitude, and (signs, plus or minus one) of each."""
+    """Words of one magnitude on one generalised diagonal, as (signs, plus or minus one)."""
 
     magnitude: float
     masks: tuple[tuple[int, int], ...]

@@ -1,12 +1,13 @@
 """Printed normal form of a sum of words, which the formula language reads back to the same sum.
 
-Floor: lattice. Words that run through all translates with one coefficient are written once with the free subscript; all
-other words are written with fixed positions. Must not know how formulas are parsed.
+Floor: lattice. Words that run through all translates with one coefficient are written once with the free
+subscript; all other words are written with fixed positions. Must not know how formulas are parsed.
 """
 
 from __future__ import annotations
 
 from collections.abc import Collection
+from functools import partial
 
 from maxent.lattice.coefficients import Coefficient, join
 from maxent.lattice.local import LocalOperators
@@ -69,20 +70,14 @@ def _folded(
     if len(members) != expected or expected < 2:
         return None
 
-    def offset(position: int, anchor: int) -> int:
+    def text(position: int, anchor: int) -> str:
         distance = position - anchor
         if sites.is_ring:
             distance = (distance + sites.size // 2) % sites.size - sites.size // 2
-        return distance
+        return _shifted(subscript, distance)
 
-    first: Coefficient | None = None
-    for anchor, (_, coefficient) in members.items():
-        relative = coefficient.relabelled(lambda p, a=anchor: _shifted(subscript, offset(p, a)))  # type: ignore[misc]
-        if first is None:
-            first = relative
-        elif relative != first:
-            return None
-    return first
+    relative = {c.relabelled(partial(text, anchor=anchor)) for anchor, (_, c) in members.items()}
+    return relative.pop() if len(relative) == 1 else None
 
 
 def _shifted(subscript: str, offset: int) -> str:

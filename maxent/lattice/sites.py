@@ -1,8 +1,9 @@
 """Where the sites lie: a ring or an open chain of spin-1/2 sites.
 
-Floor: lattice (standard library only). Site 0 is the most significant factor of the tensor product: the index of a basis
-state is row-major over the sites, as in `np.kron` and `reshape(dims)`; the local basis is (up, down). Must not know
-formulas, words or matrices; what operators a site has stands in the table `local`.
+Floor: lattice (standard library only). Site 0 is the most significant factor of the tensor product: the
+index of a basis state is row-major over the sites, as in `np.kron` and `reshape(dims)`; the local basis is
+(up, down). Must not know formulas, words or matrices; what operators a site has stands in the table
+`local`.
 """
 
 from __future__ import annotations
@@ -37,7 +38,7 @@ class Sites(Protocol):
         """Site at a position that may lie outside 0..size-1; None when there is none."""
 
     def reach(self, positions: Sequence[int]) -> int:
-        """Number of neighbouring sites that cover the given sites."""
+        """Count the neighbouring sites needed to cover the given sites."""
 
 
 def _check_size(size: int, name: str) -> None:
@@ -93,7 +94,7 @@ class Ring:
         return position % self.size
 
     def reach(self, positions: Sequence[int]) -> int:
-        """Length of the shortest arc, counted in sites, that covers the given sites (0 for none)."""
+        """Count the sites of the shortest arc that covers the given sites (0 for none)."""
         if not positions:
             return 0
         ordered = sorted(positions)
@@ -148,5 +149,5 @@ class Chain:
         return position if 0 <= position < self.size else None
 
     def reach(self, positions: Sequence[int]) -> int:
-        """Number of sites from the first to the last of the given sites (0 for none)."""
+        """Count the sites from the first to the last of the given sites (0 for none)."""
         return max(positions) - min(positions) + 1 if positions else 0

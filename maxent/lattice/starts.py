@@ -1,8 +1,8 @@
 """Product start states: one spin direction per site, and exact means of operators in them.
 
-Floor: lattice. The spin on site i points along n_i = (sin theta cos phi, sin theta sin phi, cos theta); in a product state the
-mean of a word is the product of the means of its letters, <S_a> = n_a / 2, so no vector of 2^L amplitudes is needed. Must not
-know multipliers or targets.
+Floor: lattice. The spin on site i points along n_i = (sin theta cos phi, sin theta sin phi, cos theta); in
+a product state the mean of a word is the product of the means of its letters, <S_a> = n_a / 2, so no vector
+of 2^L amplitudes is needed. Must not know multipliers or targets.
 """
 
 from __future__ import annotations
@@ -14,7 +14,7 @@ from typing import Any
 
 import numpy as np
 
-from maxent.lattice.expand import position_values
+from maxent.lattice.evaluate import position_values
 from maxent.lattice.memory import require_memory
 from maxent.lattice.sites import Sites
 from maxent.lattice.terms import OperatorSum
@@ -31,8 +31,9 @@ class ProductState:
     sites : Ring or Chain
         Where the spins are.
     theta, phi : float, str, or sequence of these
-        Polar angle and azimuth in radians: one value for all sites, a function of the position such as ``"2*pi*i/L"``, or a
-        pattern that is repeated along the sites (on a ring its length must divide the number of sites).
+        Polar angle and azimuth in radians: one value for all sites, a function of the position such as
+        ``"2*pi*i/L"``, or a pattern that is repeated along the sites (on a ring its length must divide the
+        number of sites).
     parameters : mapping from str to number, optional
         Names that the functions of the position may use.
 
@@ -121,7 +122,8 @@ class ProductState:
 
         Notes
         -----
-        Only pairs of words with a common site contribute; they are summed as covariances, so nothing large cancels.
+        Only pairs of words with a common site contribute; they are summed as covariances, so nothing large
+        cancels.
         """
         self._check(op)
         words = list(op.words)

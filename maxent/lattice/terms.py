@@ -1,8 +1,9 @@
 """The canonical sum of local words that a formula becomes: `OperatorSum`.
 
-Floor: lattice. Everything is derived from the one dictionary word -> coefficient: the conjugate, hermiticity, products and
-commutators, range, derivatives by parameters, the printed normal form, the matrix and the matrix-free action. Coefficients
-stay symbolic in the parameters, whose current values the sum carries along. Must not know how formulas are written.
+Floor: lattice. Everything is derived from the one dictionary word -> coefficient: the conjugate,
+hermiticity, products and commutators, range, derivatives by parameters, the printed normal form, the matrix
+and the matrix-free action. Coefficients stay symbolic in the parameters, whose current values the sum
+carries along. Must not know how formulas are written.
 """
 
 from __future__ import annotations
@@ -24,7 +25,7 @@ from maxent.lattice.words import Word, Words
 
 
 class Term(NamedTuple):
-    """One word of a sum: its symbolic coefficient, its sites in order, and the operator name on each of them."""
+    """One word of a sum: symbolic coefficient, sites in order, and the operator name on each."""
 
     coefficient: Coefficient
     positions: tuple[int, ...]
@@ -121,12 +122,12 @@ class OperatorSum:
 
     @property
     def range(self) -> int:
-        """Number of neighbouring sites that the widest word covers (shortest arc on a ring); 0 without operators."""
+        """Number of sites that the widest word covers (shortest arc on a ring); 0 without operators."""
         return max((self.sites.reach([site for site, _ in word]) for word in self._words), default=0)
 
     @property
     def norm_bound(self) -> float:
-        """Upper bound of the operator norm: sum over the words of |coefficient| times the norms of the letters."""
+        """Upper bound of the operator norm: sum over words of |coefficient| times norms of letters."""
         norms = [float(np.linalg.norm(matrix, 2)) for matrix in self.sites.local.matrices]
         return float(sum(abs(a) * np.prod([norms[x] for _, x in word]) for word, a in self._numeric()))
 
@@ -141,7 +142,7 @@ class OperatorSum:
         return f"<OperatorSum of {len(self._words)} words on {self.sites}: {shown}>"
 
     def __eq__(self, other: object) -> bool:
-        """Same sites, same canonical words, same values of the parameters that occur."""
+        """Compare sites, canonical words, and the values of the parameters that occur."""
         if not isinstance(other, OperatorSum):
             return NotImplemented
         mine, theirs = ({n: s._parameters[n] for n in s._names()} for s in (self, other))
@@ -205,7 +206,7 @@ class OperatorSum:
     # --- parameters
 
     def derivative(self, name: str, position: int | None = None) -> OperatorSum:
-        """Derivative of the operator by a parameter.
+        """Differentiate the operator by a parameter.
 
         Parameters
         ----------
@@ -221,7 +222,8 @@ class OperatorSum:
         Raises
         ------
         ValueError
-            For an unknown or complex parameter, a parameter that decides positions, or a missing or wrong position.
+            For an unknown or complex parameter, a parameter that decides positions, or a missing or wrong
+            position.
         """
         value = self._known(name)
         if isinstance(value, tuple) != (position is not None):
@@ -235,13 +237,13 @@ class OperatorSum:
         return self._like({word: c for word, c in slopes.items() if not c.is_zero})
 
     def with_parameters(self, **values: Any) -> OperatorSum:
-        """Same sum at other values of some parameters.
+        """Set other values of some parameters.
 
         Raises
         ------
         TypeError, ValueError
-            For an unknown name, a parameter that decides positions, a list of another length, a complex value where the
-            formula was read with a real one, or a value that is no finite number.
+            For an unknown name, a parameter that decides positions, a list of another length, a complex
+            value where the formula was read with a real one, or a value that is no finite number.
         """
         changed = dict(self._parameters)
         for name, value in values.items():

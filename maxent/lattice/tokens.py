@@ -1,11 +1,13 @@
 """Reading a formula as tokens: characters, brackets and the order of values and operators.
 
-Floor: lattice (standard library only). Finds every error of form with its column before Python's `ast` sees the text, and cuts
-the text at the outermost + and - so that long sums need no deep recursion. Must not know what names mean.
+Floor: lattice (standard library only). Finds every error of form with its column before Python's `ast` sees
+the text, and cuts the text at the outermost + and - so that long sums need no deep recursion. Must not know
+what names mean.
 """
 
 from __future__ import annotations
 
+import keyword
 import re
 from typing import NamedTuple, NoReturn
 
@@ -39,8 +41,8 @@ class Token(NamedTuple):
 class Cut(NamedTuple):
     """A formula cut at its outermost + and -.
 
-    `summands` are (sign, start, end); `clause` holds the tokens behind an outermost `for`, or is empty; `source` is the text in
-    the characters that Python's parser takes, with every column unchanged.
+    `summands` are (sign, start, end); `clause` holds the tokens behind an outermost `for`, or is empty;
+    `source` is the text in the characters that Python's parser takes, with every column unchanged.
     """
 
     summands: list[tuple[int, int, int]]
@@ -153,6 +155,10 @@ class _Order:
             return False
         if token.text == "for":
             self._fail("expected a value before 'for'", token.start)
+        if token.kind == "name" and keyword.iskeyword(token.text):
+            self._fail(
+                f"unknown symbol '{token.text}'; expected an operator, a function or a parameter", token.start
+            )
         if token.kind in ("name", "number"):
             return False
         if token.text in ("+", "-"):
@@ -218,7 +224,7 @@ class _Order:
         if len(clause) > length and clause[length].text == "," and not self.open:
             self._fail("unexpected ',' behind 'for'", clause[length].start)
         if self.open:
-            self.source[token.start : token.end] = "or "  # same columns; `or` binds weaker than all else here
+            self.source[token.start : token.end] = " or"  # same columns; `or` binds weaker than all else here
         else:
             self.clause_at = k
         return k + 1 + length

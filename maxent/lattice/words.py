@@ -1,8 +1,8 @@
 """Sums of local words as plain dictionaries, and their algebra.
 
-Floor: lattice (standard library only). A word is a tuple of (site, letter) in site order, each site at most once; a sum maps
-words to coefficients. The functions here add, multiply and commute such sums by the product table of the sites. Must not
-know where sites lie, formulas or matrices.
+Floor: lattice (standard library only). A word is a tuple of (site, letter) in site order, each site at most
+once; a sum maps words to coefficients. The functions here add, multiply and commute such sums by the
+product table of the sites. Must not know where sites lie, formulas or matrices.
 """
 
 from __future__ import annotations
