@@ -35,9 +35,8 @@ def write(
 
     charges = record["charges"]
     with netcdf_file(file, "w", version=2) as out:
-        out.schema = record["schema"].encode()
-        out.verdict = record["verdict"].encode()
-        out.title = record["title"].encode()
+        for key in ("schema", "verdict", "title"):
+            setattr(out, key, record[key].encode())
         out.createDimension("charge", len(charges))
         out.createDimension("charge_other", len(charges))
         _names(out, "charge", [c["name"] for c in charges])

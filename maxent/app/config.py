@@ -206,11 +206,10 @@ def _validate(options: type[Any], table: dict[str, Any], problems: Problems) -> 
 def _real_path(entry: Any, table: Any) -> Path:
     """Drop from a pydantic location what is not a key or an index of the table (names of union members)."""
     path: Path = ()
-    here = table
+    here: Any = table
     for step in entry["loc"]:
-        if (isinstance(here, dict) and isinstance(step, str) and step in here) or (
-            isinstance(here, list) and isinstance(step, int) and step < len(here)
-        ):
+        inside = step in here if isinstance(here, dict) else isinstance(here, list) and isinstance(step, int)
+        if inside:
             here = here[step]
             path += (step,)
     if entry["type"] in ("missing", "missing_argument"):

@@ -63,8 +63,8 @@ def face(found: Mapping[str, Any]) -> str:
     steps = "in one step" if depth == 1 else f"in {depth} steps, each inside the face before"
     gaps = listing((number(gap, 3) for gap in found["gaps"]), last="and")
     return (
-        f"The limit state lives on a face of {states}, found {steps}; the next level lies {gaps} "
-        "(as a share of the whole range) above it."
+        f"The limit state lives on a face of {states}, found {steps}. Gap to the next level, "
+        f"as a share of the whole range: {gaps}."
     )
 
 

@@ -109,7 +109,11 @@ b = 1
         ["2: charges: no charges; at least one is needed"],
     ),
     ("charges missing", 'kind = "states"\ntargets = {}\n', ["1: charges: missing"]),
-    ("charges no table", 'kind = "states"\ncharges = 1\ntargets = {}\n', ["2: charges: expected a table, got 1"]),
+    (
+        "charges no table",
+        'kind = "states"\ncharges = 1\ntargets = {}\n',
+        ["2: charges: expected a table, got 1"],
+    ),
     (
         "an empty name",
         'kind = "states"\n[charges]\n"" = [1]\n[targets]\n"" = 1\n',
@@ -136,13 +140,21 @@ b = 1
         'kind = "sta',
         ["1: kind: the file ends too early: unterminated string"],
     ),
-    ("no TOML at all", "hello world\n", ["1: hello: not TOML at column 7: expected '=' after a key in a key/value pair"]),
+    (
+        "no TOML at all",
+        "hello world\n",
+        ["1: hello: not TOML at column 7: expected '=' after a key in a key/value pair"],
+    ),
     (
         "lengths differ",
         GOOD.replace("[targets]", "b = [1, 2]\n[targets]\nb = 1"),
         ["4: charges.b: has length 2, but charges.spots has length 3; one entry per state is needed"],
     ),
-    ("no states", GOOD.replace("[1, 2, 3]", "[]"), ["3: charges.spots: an empty list; at least one state is needed"]),
+    (
+        "no states",
+        GOOD.replace("[1, 2, 3]", "[]"),
+        ["3: charges.spots: an empty list; at least one state is needed"],
+    ),
     (
         "every state dropped",
         "log_weights = [-inf, -inf, -inf]\n" + GOOD,

@@ -9,7 +9,7 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 from math import prod
 from pathlib import Path as File
-from typing import Any
+from typing import Any, cast
 
 import numpy as np
 
@@ -142,10 +142,10 @@ def _inline(rows: list[list[float | str]]) -> np.ndarray:
 
 def _checked(matrix: Any) -> Any:
     """Refuse what is no finite, square, Hermitian matrix of numbers; sparse matrices stay sparse."""
-    from scipy.sparse import issparse
+    from scipy import sparse
 
-    if issparse(matrix):
-        matrix = matrix.tocsr()
+    if sparse.issparse(matrix):
+        matrix = sparse.csr_array(cast(Any, matrix))
         entries = matrix.data
     else:
         matrix = np.asarray(matrix)

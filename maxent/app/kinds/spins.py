@@ -43,7 +43,9 @@ class Start:
     __pydantic_config__ = _STRICT
 
     theta: float | list[float] | str = field(
-        metadata=says("Polar angle: a number, a pattern that repeats, or a formula in `i` and `L`.")
+        metadata=says(
+            "Polar angle: a number, a pattern that repeats, or a formula in `i`, `L` and the parameters."
+        )
     )
     phi: float | list[float] | str = field(
         default=0.0, metadata=says('Azimuth, written in the same three ways, e.g. `"2*pi*i/L"`.')
@@ -103,7 +105,7 @@ def build(options: Options, folder: File) -> Job:
     from maxent import lattice
 
     problems = Problems()
-    geometry = {"ring": lattice.Ring, "chain": lattice.Chain}[options.sites.geometry]
+    geometry: Any = {"ring": lattice.Ring, "chain": lattice.Chain}[options.sites.geometry]
     try:
         sites = geometry(options.sites.size)
     except ValueError as bad:
@@ -117,7 +119,7 @@ def build(options: Options, folder: File) -> Job:
     }
     start = None
     if options.start is not None:
-        start = _start(options.start, sites, problems)
+        start = _start(options, sites, problems)
     for name, given in options.targets.items():
         if given == "from start" and options.start is None:
             problems.add(("targets", name), "asks for the mean 'from start', but there is no [start]")
@@ -183,20 +185,19 @@ class _Formulas:
         return operator
 
 
-def _start(start: Start, sites: Any, problems: Problems) -> Any:
+def _start(options: Options, sites: Any, problems: Problems) -> Any:
     """Build the product state; each angle is tried alone, so that an error lands on its own line."""
     from maxent.lattice import ProductState
 
-    before = len(problems.found)
-    for key, angles in (
-        ("theta", {"theta": start.theta, "phi": 0.0}),
-        ("phi", {"theta": 0.0, "phi": start.phi}),
-    ):
+    start, before = options.start or Start(0.0), len(problems.found)
+    for key, theta, phi in (("theta", start.theta, 0.0), ("phi", 0.0, start.phi)):
         try:
-            ProductState(sites, **angles)
+            ProductState(sites, theta, phi, parameters=options.parameters)
         except ValueError as bad:
-            problems.add(("start", key), str(bad))
-    return None if len(problems.found) > before else ProductState(sites, start.theta, start.phi)
+            problems.add(("start", key), str(bad).removeprefix(f"{key}: "))
+    if len(problems.found) > before:
+        return None
+    return ProductState(sites, start.theta, start.phi, parameters=options.parameters)
 
 
 def _refuse_too_large(options: Options, problems: Problems) -> None:

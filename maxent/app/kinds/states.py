@@ -117,7 +117,7 @@ def build(options: Options, folder: File) -> Job:
         name: _target(options.targets[name], values, counts, options.accuracy.get(name, 0.0))
         for name, values in charges.items()
     }
-    facts = {"states": plural(size, "state")}
+    facts = {"states": str(size)}
     if counts is not None and options.counts is not None:
         facts["counts"] = plural(int(counts.sum()), "observation")
         if options.counts.source:
