@@ -90,7 +90,7 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
 
         lam, memo.iterations = minimise(memo.family, memo.here.lam)
         memo.at = begin(memo.family.evaluate, lam)
-    best, stalled = np.inf, 0
+    best, lowest, stalled = np.inf, np.inf, 0
     for count in range(LIMIT):
         at = memo.here
         ev, size = at.evaluation, float(at.residual)
@@ -102,7 +102,11 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
             return None
         if count and count % 4 == 0 and ev.level > 20 and (hit := look(problem, memo, at.lam, decide, step=memo.step)):
             return hit
-        best, stalled = (size, 0) if size < 0.5 * best else (best, stalled + 1)
+        # on a plateau (one state holds everything) F falls while the residual stands still: that is progress
+        falls = ev.log_partition < lowest - 160 * EPS * (abs(ev.log_partition) + ev.level + 1)
+        stalled = 0 if size < 0.5 * best or falls else stalled + 1
+        best = size if size < 0.5 * best else best
+        lowest = min(lowest, float(ev.log_partition))
         if (stalled >= 4 and size <= 1e3 * ev.rounding) or at.rejected > PATIENCE:
             memo.floored = bool(size <= 1e4 * ev.rounding)
             return None
