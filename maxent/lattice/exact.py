@@ -15,7 +15,7 @@ Real = int | Fraction | float
 Complex = tuple[Real, Real]
 
 EPS = 2.0**-52
-_MOST_BITS = 1024
+_MOST_BITS = 1000
 ZERO: Complex = (0, 0)
 ONE: Complex = (1, 0)
 
@@ -25,22 +25,25 @@ def real_plus(a: Real, b: Real) -> Real:
     total = a + b
     if isinstance(total, float) and abs(total) <= 8 * EPS * max(abs(float(a)), abs(float(b))):
         return 0
-    return total
+    return _tidy(total)
 
 
 def real_times(a: Real, b: Real) -> Real:
     """Multiply two reals; a zero stays exact, and a fraction that grows too long becomes a float."""
-    if a == 0 or b == 0:
-        return 0
-    product = a * b
-    if isinstance(product, Fraction):
-        if product.denominator == 1:
-            product = product.numerator
-        elif product.denominator.bit_length() > _MOST_BITS:
-            return float(product)
-    if isinstance(product, int) and product.bit_length() > _MOST_BITS:
-        return float(product)
-    return product
+    return 0 if a == 0 or b == 0 else _tidy(a * b)
+
+
+def _tidy(value: Real) -> Real:
+    """Keep the simplest kind of number; raises OverflowError beyond the range of floats."""
+    if isinstance(value, float):
+        if math.isinf(value):
+            raise OverflowError("a number leaves the range of floating point")
+        return value
+    if isinstance(value, Fraction) and value.denominator == 1:
+        value = value.numerator
+    if max(value.numerator.bit_length(), value.denominator.bit_length()) > _MOST_BITS:
+        return float(value)
+    return value
 
 
 def plus(a: Complex, b: Complex) -> Complex:

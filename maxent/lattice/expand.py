@@ -75,7 +75,12 @@ def formula(
     reader = Reader(text, sites, parameters=checked, densities=frozenset(densities or {}))
     node = reader.read()
     expander = _Expander(reader, densities or {})
-    words = expander.total(node)
+    try:
+        words = expander.total(node)
+    except OverflowError:
+        fail("a number leaves the range of floating point", text, node.start)
+    except RecursionError:
+        fail("too deeply nested; split the formula", text, node.start)
     result = OperatorSum(sites, words, parameters=checked, frozen=expander.integers)
     if hermitian:
         _require_hermitian(result, node, expander)

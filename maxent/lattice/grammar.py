@@ -22,7 +22,6 @@ from maxent.lattice.tokens import CONJUGATE, Token, fail, read
 CONSTANTS = ("pi", "L")
 FORMS = {"dagger": 1, "commutator": 2, "anticommutator": 2}
 _SIGNS = {ast.Div: "quotient", ast.Pow: "power", ast.FloorDiv: "floor", ast.Mod: "modulo"}
-_MOST_DIGITS = 40
 
 
 def reserved_names(sites: Sites) -> set[str]:
@@ -110,11 +109,8 @@ class Reader:
     def _parse(self, source: str, start: int, end: int) -> ast.expr:
         try:
             return ast.parse(f"({source[start:end]})", mode="eval").body
-        except SyntaxError as error:
-            # the order of tokens has been checked: what is left are numbers such as 007
-            place = start + max((error.offset or 1) - 2, 0)
-            fail(f"cannot be read here ({error.msg})", self.text, min(place, len(self.text) - 1))
-        except (RecursionError, MemoryError):
+        except (SyntaxError, RecursionError, MemoryError):
+            # the order of tokens has been checked: what is left is too deep for the parser
             fail("too deeply nested; split the formula", self.text, start)
 
     def _collect_positions(self, tree: ast.expr) -> None:
@@ -168,9 +164,6 @@ class Reader:
         text = self.text[self._place(tree) : self._end(tree)]
         is_imaginary = text[-1] == "j"
         digits = text[:-1] if is_imaginary else text
-        mantissa, _, exponent = digits.lower().partition("e")
-        if len(mantissa) > _MOST_DIGITS or (exponent and abs(int(exponent[:8])) > 300):
-            self._fail("number out of range", tree)
         exact = Fraction(digits)
         value = exact.numerator if exact.denominator == 1 else exact
         return (0, value) if is_imaginary else (value, 0)

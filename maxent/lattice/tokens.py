@@ -23,6 +23,8 @@ _TOKEN = re.compile(
 _CLOSING = {"(": ")", "[": "]"}
 _MOST_CHARACTERS = 1_000_000
 _MOST_BRACKETS = 40
+_MOST_DIGITS = 40
+_LARGEST_EXPONENT = 300
 
 
 class Token(NamedTuple):
@@ -90,10 +92,20 @@ def _split(text: str) -> list[Token]:
             hint = {"^": "; powers are written '**'", "=": "; a formula has no '='"}.get(text[place], "")
             fail(f"unexpected character {text[place]!r}{hint}", text, place)
         assert match.lastgroup is not None
+        if match.lastgroup == "number":
+            _check_number(match.group(), text, place)
         if match.lastgroup != "space":
             tokens.append(Token(match.lastgroup, match.group(), place))
         place = match.end()
     return tokens
+
+
+def _check_number(number: str, text: str, place: int) -> None:
+    mantissa, _, exponent = number.lower().rstrip("j").partition("e")
+    if len(mantissa) > _MOST_DIGITS or (exponent and abs(int(exponent[:8])) > _LARGEST_EXPONENT):
+        fail("number out of range", text, place)
+    if len(mantissa) > 1 and mantissa[0] == "0" and mantissa[1] != ".":
+        fail("numbers do not start with 0", text, place)
 
 
 def _check_brackets(tokens: list[Token], text: str) -> None:

@@ -106,6 +106,8 @@ CASES = [
     ("1e400*Sz[i]", 1, "number out of range"),
     ("exp(1000)*Sz[i]", 1, "no value: math range error"),
     ("2**10**10*Sz[i]", 4, "the exponent must not exceed 4096"),
+    ("1e200*1e200*Sz[i]", 1, "a number leaves the range of floating point"),
+    ("exp(700)*exp(700)*Sz[i]", 1, "a number leaves the range of floating point"),
     ("J**1000*Sz[i]", 4, "the exponent of a parameter must not exceed 64"),
     # form
     ("", 1, "the formula is empty"),
@@ -122,7 +124,10 @@ CASES = [
     ("H = Sz[i]", 3, "unexpected character '='; a formula has no '='"),
     ("Sz[i].real", 6, "unexpected character '.'"),
     ("'Sz[i]'", 1, "unexpected character"),
-    ("007*Sz[i]", 1, "cannot be read here"),
+    ("2*007*Sz[i]", 3, "numbers do not start with 0"),
+    ("2*" + 41 * "7", 3, "number out of range"),
+    ("*".join(["J"] * 5000), 1, "too deeply nested; split the formula"),
+    ("-" * 5000 + "J", 1, "too deeply nested; split the formula"),
     ("(" * 41 + "J" + ")" * 41, 41, "more than 40 brackets inside one another"),
     # conjugates
     ("h.c.", 1, "'h.c.' is written '+ h.c.' behind the summands it conjugates"),
