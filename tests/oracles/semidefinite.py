@@ -1,7 +1,7 @@
 """Matrices judged by semidefinite programming: CVXPY with Clarabel.
 
-Resolution: Clarabel stops at gaps and infeasibilities of 1e-7 here (with 1e-8 it does not reach its own goal on
-every problem); known distances come out to 1e-7, and below `RESOLUTION` a distance or a slack says nothing.
+Resolution: Clarabel stops at gaps and infeasibilities of 1e-7 here (with 1e-8 it misses its own goal on some
+problems); known distances come out to 1e-7, and below `RESOLUTION` a distance or a slack says nothing.
 """
 
 from __future__ import annotations
