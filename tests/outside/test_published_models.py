@@ -70,7 +70,7 @@ def test_the_four_by_four_torus_at_the_critical_point(four_by_four):
 
 
 def bonds_on_the_eight_by_eight_torus() -> np.ndarray:
-    """Exact number of configurations with k unequal bonds, k = 0..128, row by row; all counts are below 2^63."""
+    """Exact number of configurations with k = 0..128 unequal bonds, row by row; all counts are below 2^63."""
     row = np.arange(256)
     unequal = np.array([bin(r ^ ((r >> 1) | ((r & 1) << 7))).count("1") for r in row])
     # first rows that are equal up to rotation, reflection and flip give the same counts
