@@ -98,10 +98,11 @@ def whiten(problem: Problem) -> Whitening:
     noise = problem.noise
     mean, rows = problem.family.reference()
     m = len(mean)
-    # scaled before it is squared: charges as small as 1e-200 keep their norm
-    largest = np.abs(rows).max(axis=1, initial=0.0)
-    unit = np.where(largest > 0, largest, 1.0)
-    size = np.linalg.norm(rows / unit[:, None], axis=1) * unit
+    size = np.sqrt(np.einsum("jp,jp->j", rows, rows))
+    if np.any((size < 1e-140) | (size > 1e140)):  # scaled before it is squared: charges of 1e-200 keep their norm
+        largest = np.abs(rows).max(axis=1, initial=0.0)
+        unit = np.where(largest > 0, largest, 1.0)
+        size = np.linalg.norm(rows / unit[:, None], axis=1) * unit
     live = np.flatnonzero(size > SAFETY * noise)
     spread = np.where(size > 0, size, 1.0)
     null = [np.eye(m)[j] for j in range(m) if j not in set(live)]

@@ -58,7 +58,7 @@ def joint_eigenbasis(charges: list[Any]) -> tuple[np.ndarray, np.ndarray] | None
 
 def _row_norm(q: Any, shift: float) -> float:
     """Largest row sum of ``|q - shift|``, an upper bound of the norm."""
-    rows = np.asarray(abs(q).sum(axis=1)).ravel()
+    rows = np.asarray(np.abs(q).sum(axis=1)).ravel()
     diagonal = np.real(q.diagonal())
     return float((rows - np.abs(diagonal) + np.abs(diagonal - shift)).max())
 

@@ -50,6 +50,10 @@ class Finite(Family):
         """Infinite-temperature means (m,) and charges minus mean as rows (m, p)."""
         return self.blocks.reference()
 
+    def start(self) -> np.ndarray:
+        """Infinite temperature."""
+        return np.zeros(self.blocks.diagonal.shape[0])
+
     def combine(self, matrix: np.ndarray, offset: np.ndarray) -> Family:
         """Family of the charges ``matrix @ Q - offset``."""
         return self._with(self.blocks.combine(matrix, offset), None)

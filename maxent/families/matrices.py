@@ -23,6 +23,9 @@ from maxent.memory import require_memory
 
 __all__ = ["Matrices", "MatricesState"]
 
+#: Blocks up to this size are taken dense from the start.
+SMALL = 128
+
 
 @register("names", "dims", "dimension", "log_norm")
 @dataclass(frozen=True, init=False)
@@ -109,11 +112,12 @@ class Matrices(Finite):
         single = order[np.isin(labels[order], np.flatnonzero(counts == 1))]
         diagonal = [np.real(q.diagonal()[single]) for q in every]
         levels = [np.array(diagonal, float).reshape(len(every), len(single))]
-        permuted = [to_csr(q)[order][:, order] if len(counts) > 1 else q for q in every]
+        whole = len(counts) == 1
+        permuted = every if whole else [_sorted(to_csr(q), order) for q in every]
         turned, placed, dense, prior_dense = [], [], [], []
         for b in np.flatnonzero(counts > 1):
             piece = slice(stops[b] - counts[b], stops[b])
-            parts = [q[piece, piece] if len(counts) > 1 else q for q in permuted]
+            parts = permuted if whole else [_block(q, piece.start, piece.stop) for q in permuted]
             joint = joint_eigenbasis(parts)
             if joint is not None:
                 levels.append(joint[0])
@@ -257,6 +261,26 @@ class Matrices(Finite):
         return MatricesState(
             self.flat, flat, tuple(groups), self.dimension, self.basis, self.dims, log_z, entropy, relative
         )
+
+
+def _sorted(q: sp.csr_array, order: np.ndarray) -> sp.csr_array:
+    """`q` with rows and columns in the order of the blocks."""
+    place = np.empty(len(order), q.indices.dtype)
+    place[order] = np.arange(len(order))
+    q = q[order]
+    return sp.csr_array((q.data, place[q.indices], q.indptr), shape=q.shape)
+
+
+def _block(q: sp.csr_array, start: int, stop: int) -> Any:
+    """Diagonal block of a block-diagonal matrix: dense when small, where sparse bookkeeping costs more than it saves."""
+    pointer = q.indptr[start : stop + 1]
+    data, column = q.data[pointer[0] : pointer[-1]], q.indices[pointer[0] : pointer[-1]] - start
+    d = stop - start
+    if d > SMALL:
+        return sp.csr_array((data, column, pointer - pointer[0]), shape=(d, d))
+    out = np.zeros((d, d), data.dtype)
+    out[np.repeat(np.arange(d), np.diff(pointer)), column] = data
+    return out
 
 
 def _components(operators: list[Any], d: int) -> np.ndarray:
