@@ -85,10 +85,6 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except KeyboardInterrupt:
         print("interrupted; nothing was written", file=sys.stderr)
         return 130
-    except BrokenPipeError:
-        # the reader of stdout went away: not our fault, and nothing more can be said to it
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        return 0
     except Exception:
         import traceback
 
@@ -108,11 +104,11 @@ def _solve(given: argparse.Namespace) -> int:
     if given.json:
         from maxent.app.record import dump
 
-        sys.stdout.write(dump(outcome.record))
+        _show(dump(outcome.record))
     else:
         from maxent.app.words import summary
 
-        print(summary(outcome.record))
+        _show(summary(outcome.record) + "\n")
     return 0 if outcome.record["success"] else 1
 
 
@@ -121,16 +117,27 @@ def _check(given: argparse.Namespace) -> int:
     from maxent.text import number, table
 
     config, job = check(given.config)
-    print(f"{config.file}: good; kind {config.header.kind}")
-    print()
-    print(table(sizes(job).items()))
-    print()
     rows = [
         (name, number(t.value, 12), number(t.sigma, 2), number(t.accuracy, 3), t.source)
         for name, t in job.targets.items()
     ]
-    print(table(rows, ("charge", "target", "sigma", "accuracy", "source"), right=[1, 2, 3]))
+    parts = [
+        f"{config.file}: good; kind {config.header.kind}",
+        table(sizes(job).items()),
+        table(rows, ("charge", "target", "sigma", "accuracy", "source"), right=[1, 2, 3]),
+    ]
+    _show("\n\n".join(parts) + "\n")
     return 0
+
+
+def _show(text: str) -> None:
+    """Write to stdout; a reader that went away (`| head`) is no fault and changes no exit code."""
+    try:
+        sys.stdout.write(text)
+        sys.stdout.flush()
+    except BrokenPipeError:
+        # whatever Python still wants to flush at its end must go somewhere
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _log(line: str) -> None:

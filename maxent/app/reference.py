@@ -39,7 +39,7 @@ def keys(options: type[Any], above: str = "") -> Iterator[tuple[str, str, str, s
     hints = get_type_hints(options)
     for entry in fields(options):
         hint = hints[entry.name]
-        inner: list[type[Any]] = [t for t in (hint, *get_args(hint)) if is_dataclass(t)]
+        inner = [t for t in (hint, *get_args(hint)) if isinstance(t, type) and is_dataclass(t)]
         needed = entry.default is MISSING and entry.default_factory is MISSING
         default = "needed" if needed else _default(entry.default)
         yield above + entry.name, "table" if inner else _takes(hint), default, entry.metadata["help"]
