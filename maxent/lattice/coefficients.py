@@ -55,7 +55,7 @@ class Coefficient:
     Examples
     --------
     >>> J = Coefficient.symbol("J")
-    >>> str(J * J + J * J - J)
+    >>> str(J * J + J * J + (-J))
     '-J + 2*J**2'
     >>> str((J * J).derivative("J"))
     '2*J'
@@ -118,10 +118,6 @@ class Coefficient:
     def __neg__(self) -> Coefficient:
         """Negative."""
         return Coefficient({m: (-n[0], -n[1]) for m, n in self.terms.items()})
-
-    def __sub__(self, other: Coefficient) -> Coefficient:
-        """Difference."""
-        return self + (-other)
 
     def times(self, number: Complex) -> Coefficient:
         """Multiply by a number."""

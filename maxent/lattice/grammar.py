@@ -21,7 +21,12 @@ from maxent.lattice.tokens import CONJUGATE, Token, fail, read
 
 CONSTANTS = ("pi", "L")
 FORMS = {"dagger": 1, "commutator": 2, "anticommutator": 2}
-_SIGNS = {ast.Div: "quotient", ast.Pow: "power", ast.FloorDiv: "floor", ast.Mod: "modulo"}
+_SIGNS: dict[type[ast.operator], str] = {
+    ast.Div: "quotient",
+    ast.Pow: "power",
+    ast.FloorDiv: "floor",
+    ast.Mod: "modulo",
+}
 
 
 def reserved_names(sites: Sites) -> set[str]:
@@ -215,8 +220,7 @@ class Reader:
 
     def _subscript(self, tree: ast.Subscript) -> Node:
         base = tree.value
-        if not isinstance(base, ast.Name):
-            self._fail("only a name can have a subscript", tree)
+        assert isinstance(base, ast.Name)  # the order of tokens has been checked
         name = base.id
         if name in self.parameters:
             values = self.parameters[name]
@@ -305,8 +309,7 @@ class Reader:
     # --- functions, sums, products
 
     def _call(self, tree: ast.Call) -> Node:
-        if not isinstance(tree.func, ast.Name):
-            self._fail("only a name can be followed by '('", tree)
+        assert isinstance(tree.func, ast.Name)  # the order of tokens has been checked
         name, place = tree.func.id, self._place(tree)
         if name not in FUNCTIONS and name not in FORMS:
             if name in self.sites.local.symbols or name in self.densities:
@@ -334,9 +337,7 @@ class Reader:
         if isinstance(tree.op, ast.Mult):
             items = [x for node in (left, right) for x in (node.items if node.kind == "product" else (node,))]
             return joined("product", place, items)
-        kind = _SIGNS.get(type(tree.op))
-        if kind is None:
-            self._fail("has no meaning in a formula", tree)
+        kind = _SIGNS[type(tree.op)]
         if right.is_operator:
             what = (
                 "divide by" if kind == "quotient" else "use as exponent" if kind == "power" else "round with"

@@ -9,6 +9,7 @@ carries along. Must not know how formulas are written.
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
+from fractions import Fraction
 from numbers import Number
 from typing import Any, NamedTuple
 
@@ -16,7 +17,7 @@ import numpy as np
 
 from maxent.lattice import words as algebra
 from maxent.lattice.coefficients import Coefficient, Value
-from maxent.lattice.exact import from_complex
+from maxent.lattice.exact import Complex, from_complex
 from maxent.lattice.matrices import BitTable
 from maxent.lattice.parameters import check_parameter, is_complex
 from maxent.lattice.printing import sum_text, word_text
@@ -59,6 +60,7 @@ class OperatorSum:
     """
 
     __slots__ = ("_parameters", "_table", "_words", "frozen", "sites")
+    __array_ufunc__ = None  # a NumPy number on the left leaves the arithmetic to this class
 
     def __init__(
         self,
@@ -194,7 +196,7 @@ class OperatorSum:
         """Divide by a number."""
         if not isinstance(other, Number):
             return NotImplemented
-        return self * (1 / complex(other))  # type: ignore[call-overload]
+        return self._scaled(Coefficient.constant(_exact(other)).inverse())
 
     def commutator(self, other: OperatorSum) -> OperatorSum:
         """`self * other - other * self`; words without a common site cost nothing."""
@@ -319,10 +321,12 @@ class OperatorSum:
         for word, coefficient in self._words.items():
             try:
                 value = complex(coefficient.value(self._parameters))
+            except OverflowError:
+                raise ValueError(f"coefficient {coefficient} leaves the range of floating point") from None
             except (ArithmeticError, ValueError) as error:
                 raise ValueError(f"coefficient {coefficient} has no value: {error}") from None
             if not np.isfinite(value):
-                raise ValueError(f"coefficient {coefficient} is not finite: {value}")
+                raise ValueError(f"coefficient {coefficient} leaves the range of floating point")
             result.append((word, value))
         return result
 
@@ -351,11 +355,10 @@ class OperatorSum:
             return other
         if not isinstance(other, Number):
             return None
-        number = complex(other)  # type: ignore[call-overload]
-        if not np.isfinite(number):
-            raise ValueError(f"an operator cannot be combined with {other}")
-        identity = Coefficient.constant(from_complex(number))
-        return self._like({} if identity.is_zero else {(): identity})
+        return self._like({(): Coefficient.constant(_exact(other))} if other else {})
+
+    def _scaled(self, factor: Coefficient) -> OperatorSum:
+        return self._like(algebra.scale(self._words, factor))
 
     def _join(self, other: OperatorSum, words: Words) -> OperatorSum:
         if self.sites != other.sites:
@@ -367,6 +370,16 @@ class OperatorSum:
                 raise ValueError(f"parameter '{name}' has two values: {self._parameters[name]} and {value}")
         parameters = self._parameters | other._parameters
         return OperatorSum(self.sites, words, parameters=parameters, frozen=self.frozen | other.frozen)
+
+
+def _exact(number: Any) -> Complex:
+    """Take a number into exact arithmetic: whole numbers and fractions stay exact."""
+    if isinstance(number, int | Fraction):
+        return int(number) if isinstance(number, int) else number, 0
+    value = complex(number)
+    if not np.isfinite(value):
+        raise ValueError(f"an operator cannot be combined with {number}")
+    return from_complex(value)
 
 
 def _shape(value: Value) -> str:

@@ -9,7 +9,12 @@ from tests.lattice.dense import Site, comm
 L = 5
 s = Site(L)
 PARAMETERS = {"J": 0.7, "h": -0.4, "w": [0.3, -1.0, 2.0, 0.25, 1.5], "z": 0.6 - 0.8j, "r": 2, "alpha": 1.5}
-DENSITIES = {"e": "J*Sx[i]*Sx[i+1] + h*Sz[i]", "twice": "e[k] + e[k+1]", "p": "0.5 + Sz[i]"}
+DENSITIES = {
+    "e": "J*Sx[i]*Sx[i+1] + h*Sz[i]",
+    "twice": "e[k] + e[k+1]",
+    "p": "0.5 + Sz[i]",
+    "field": "w[i+1]*Sz[i]",
+}
 J, h, w, z, alpha = (PARAMETERS[name] for name in ("J", "h", "w", "z", "alpha"))
 
 
@@ -57,6 +62,19 @@ RING = {
     "(i%2 + i//2)*Sz[i]": s.total(lambda i: (i % 2 + i // 2) * s("Sz", i)),
     "J**2*h**(-1)*Sz[i]/(J+h)": J**2 / h / (J + h) * s.total(lambda i: s("Sz", i)),
     "2**(-alpha)*J**0.5*J**alpha*Sz[i]": 2**-alpha * J**0.5 * J**alpha * s.total(lambda i: s("Sz", i)),
+    "sqrt(J)**2*sqrt(J)**(-3)*Sz[i]": J**-0.5 * s.total(lambda i: s("Sz", i)),
+    "exp(J+1)*exp(-J)*Sz[i]": np.e * s.total(lambda i: s("Sz", i)),
+    "cos(1j*J)*cos(2j)*sin(1j)*Sz[i]": np.cosh(J)
+    * np.cosh(2)
+    * 1j
+    * np.sinh(1)
+    * s.total(lambda i: s("Sz", i)),
+    "Sz[i//2]*Sx[i%3]": s.total(lambda i: s("Sz", i // 2) @ s("Sx", i % 3)),
+    "(w[i]*w[j] for i < j)*Sz[0]": sum(w[i] * w[j] for i in range(L) for j in range(i + 1, L)) * s("Sz", 0),
+    "commutator(J, 2)*Sz[i] + anticommutator(J, 2)*Sz[i]": 4 * J * s.total(lambda i: s("Sz", i)),
+    "(1j*J + h.c.)*Sz[i] + (z + h.c.)*Sx[i]": 2 * z.real * s.total(lambda i: s("Sx", i)),
+    "2*((1j*Splus[i] + h.c.) + Sx[i+1])": s.total(lambda i: -4 * s("Sy", i) + 2 * s("Sx", i)),
+    "Sx[i]*dagger(Splus[i+1])": s.total(lambda i: s("Sx", i) @ s("Sminus", i + 1)),
     "-Sz[i]": -s.total(lambda i: s("Sz", i)),
     "+Sz[i]": s.total(lambda i: s("Sz", i)),
     "-(Sz[i] - Sx[i+1])/2": -s.total(lambda i: s("Sz", i) - s("Sx", i)) / 2,
@@ -138,6 +156,12 @@ CHAIN = {
     "bond[i]*Sz[i]*Sz[i+1]": s.total(lambda i: (i + 1) * s("Sz", i) @ s("Sz", i + 1), L - 1),
     "w[i+1]*Sz[i]": s.total(lambda i: w[i + 1] * s("Sz", i), L - 1),
     "(w[i] + w[i+1])*Sz[i]": s.total(lambda i: (w[i] + (w[i + 1] if i + 1 < L else 0)) * s("Sz", i)),
+    "(exp(w[i+1])*Sz[i] + Sz[i+1])*J": J
+    * s.total(lambda i: np.exp(w[i + 1]) * s("Sz", i) + s("Sz", i + 1), L - 1),
+    "Sz[i]*(w[i+1]*Sx[k] for k) + 0*Sz[0]": s.total(
+        lambda i: w[i + 1] * s("Sz", i) @ s.total(lambda k: s("Sx", k)), L - 1
+    ),
+    "field[i]": s.total(lambda i: w[i + 1] * s("Sz", i), L - 1),
     "exp(w[i+1])*Sz[i]": s.total(lambda i: np.exp(w[i + 1]) * s("Sz", i), L - 1),
 }
 
@@ -165,8 +189,8 @@ def test_spaces_and_lines_do_not_matter():
 
 
 def test_names_may_be_greek_letters():
-    op = formula("Δ*Sz[i] + Sx[i]", Ring(3), {"Δ": 2.0})
-    assert str(op) == "Sx[i] + Δ*Sz[i]"
+    op = formula("Δ*Sz[i] + Δ*1.25*Sx[i]", Ring(3), {"Δ": 2.0})
+    assert str(op) == "1.25*Δ*Sx[i] + Δ*Sz[i]"
 
 
 def test_a_long_formula_needs_no_deep_recursion():

@@ -80,6 +80,8 @@ CASES = [
     ("Sz[i]*Sz[j] for <i, j>", 16, "expected a subscript after 'for'"),
     ("Sz[i]*Sz[j] for i <", 20, "expected a second subscript after '<'"),
     ("Sz[i]*Sz[j] for i < J", 21, "'J' has a meaning already and cannot be a subscript"),
+    ("Sz[i for i]", 6, "'for' cannot stand in a subscript"),
+    ("Sz[i] for i, j", 12, "unexpected ',' behind 'for'"),
     ("for i", 1, "expected a value before 'for'"),
     ("(Sz[i]*Sz[j] for i < j + 1)", 24, "expected 'for i < j', 'for i != j' or 'for i', found '+'"),
     ("Sz[i] < 2", 7, "'<' has a meaning only behind 'for'"),
@@ -210,6 +212,11 @@ def test_short_lists_on_a_chain_serve_bonds_only():
 def test_unusable_parameters_are_named(parameters, error, message):
     with pytest.raises(error, match=message):
         formula("Sz[i]", Ring(4), parameters, DENSITIES)
+
+
+def test_a_formula_has_an_end():
+    with pytest.raises(FormulaError, match="longer than 1000000 characters"):
+        formula(" " * 1_000_001, Ring(4))
 
 
 def test_a_formula_is_a_text():

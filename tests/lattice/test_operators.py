@@ -30,6 +30,9 @@ def test_algebra_agrees_with_matrices():
         (2.5 * a, 2.5 * dense(a)),
         (a * (1 - 2j), (1 - 2j) * dense(a)),
         (a / 4, dense(a) / 4),
+        (np.float64(2.5) * a, 2.5 * dense(a)),
+        (np.int64(3) - a, 3 * s.one - dense(a)),
+        (a / (1 + 1j), dense(a) / (1 + 1j)),
         (3 - a, 3 * s.one - dense(a)),
         (a + 1j, dense(a) + 1j * s.one),
         (a.adjoint(), dense(a).conj().T),
@@ -39,6 +42,22 @@ def test_algebra_agrees_with_matrices():
     assert a * b - b * a == a.commutator(b)
     assert (a * b).adjoint() == b.adjoint() * a.adjoint()
     assert (a - a).terms == ()
+    assert (0 * a).terms == ()
+    assert str(formula("Sz[i]", RING) / 3) == "1/3*Sz[i]"
+    with pytest.raises(ZeroDivisionError):
+        a / 0
+
+
+def test_sums_have_values_and_short_names():
+    op = formula("J*Sz[i]*Sz[i+1]", RING, P)
+    assert op.parameters["J"] == 0.7
+    assert repr(op) == "<OperatorSum of 4 words on Ring(size=4): J*Sz[i]*Sz[i+1]>"
+    long = formula("Sx[i]*Sx[j]/abs(i-j) for i < j", RING)
+    assert repr(long).endswith("...>") and len(repr(long)) < 120
+    assert hash(op) == hash(formula(str(op), RING, P)) and op != "J*Sz[i]*Sz[i+1]"
+    for wrong in (lambda: op.commutator(2.5 * s.one), lambda: op * "2", lambda: op - "2", lambda: op / "2"):
+        with pytest.raises(TypeError):
+            wrong()
 
 
 def test_terms_are_canonical():
@@ -152,6 +171,9 @@ def test_a_coefficient_without_a_value_is_named():
     op = formula("Sz[i]/J + sqrt(J)*Sx[i]", RING, {"J": 1.0})
     with pytest.raises(ValueError, match=r"coefficient J\*\*-1 has no value"):
         op.with_parameters(J=0.0).matrix()
+    for text in ("Sz[i]/small", "big*big*Sz[i]", "big**2*Sz[i]"):
+        with pytest.raises(ValueError, match=r"^coefficient .* leaves the range of floating point$"):
+            formula(text, RING, {"small": 1e-310, "big": 1e200}).matrix()
     with pytest.raises(ValueError, match=r"coefficient sqrt\(J\) has no value: sqrt of -1"):
         op.with_parameters(J=-1.0).matrix()
 

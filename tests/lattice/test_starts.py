@@ -106,6 +106,9 @@ def test_patterns_and_functions():
             FormulaError,
             "^formula column 1: no value at i = 0: division by zero|^formula column 3: division by zero",
         ),
+        ("i*j", FormulaError, "^formula column 3: unknown symbol 'j'"),
+        ("w[i]*w[j]", FormulaError, "^formula column 1: expected one position, found 'i' and 'j'"),
+        ("log(0*i + c)", FormulaError, "^formula column 1: no value at position 0: log of -1"),
         ("1j*i", FormulaError, "^formula column 1: expected a real number, found 1j at position 1"),
         ("sqrt(i-1)", FormulaError, "^formula column 1: no value at i = 0: sqrt of -1"),
         ("Sz[i]", FormulaError, "^formula column 1: operators have no meaning here"),
@@ -114,7 +117,7 @@ def test_patterns_and_functions():
 )
 def test_unusable_angles_are_named(theta, error, message):
     with pytest.raises(error, match=message) as caught:
-        ProductState(RING, theta, 0.0)
+        ProductState(RING, theta, 0.0, parameters={"w": [1, 2, 3, 4, 5, 6], "c": -1})
     assert "\n" not in str(caught.value)
     with pytest.raises(error):
         ProductState(RING, 0.0, theta)
@@ -128,6 +131,12 @@ def test_operators_that_do_not_belong_are_refused():
         state.mean(formula("Splus[i]", RING))
     with pytest.raises(TypeError, match="expected an OperatorSum, not ndarray"):
         state.variance(np.eye(64))
+
+
+def test_lists_end_with_the_chain():
+    with pytest.raises(FormulaError, match="^formula column 1: a subscript leaves the chain at position 4"):
+        ProductState(Chain(5), "w[i+1]", 0.0, parameters={"w": [1, 2, 3, 4, 5]})
+    assert repr(ProductState(Chain(5), 0.0, 0.0)) == "<ProductState on Chain(size=5)>"
 
 
 def test_a_vector_that_does_not_fit_is_refused():
