@@ -129,32 +129,29 @@ def _promises_separation(problem: Problem, memo: Memo) -> bool:
 def edge_of_domain(problem: Problem, memo: Memo) -> Outcome | None:
     """Unattained: the minimiser lies on the edge of the domain of ``ln Z``, where the slope does not vanish.
 
-    The charge of the violated row is dropped, the rest solved; what the row's charge then still lacks is the excess.
+    The multiplier across the edge is held at zero and the rest solved.  The dual is convex, so a slope that points out
+    of the domain there proves the minimum; the slope is the excess that no state of largest entropy can take up.
     """
     rows = problem.family.domain()
-    if rows is None or memo.depth or not memo.whitening.rank:
+    if rows is None or memo.depth or not memo.whitening.rank or memo.floored:
         return None
     height = rows @ (memo.whitening.transform.T @ memo.here.lam)
-    tight = EPS * (1 + np.abs(rows) @ np.abs(memo.whitening.transform.T @ memo.here.lam))
-    if memo.floored and np.all(height > tight):
-        return None
-    i = int(np.argmin(height))
-    basis = np.linalg.svd(rows[i : i + 1])[2][1:]
-    inner = Problem(
-        problem.family.combine(basis, np.zeros(len(basis))), np.abs(basis) @ problem.noise,
-        np.abs(basis) @ problem.accuracy,
-    )  # fmt: skip
-    below = decide(inner, depth=memo.depth + 1)
-    memo.iterations += below.iterations
-    if below.verdict is not Verdict.SOLVED or below.at is None:
-        return None
-    lam = basis.T @ (below.whitening.transform.T @ below.at.lam)
-    excess = -problem.family.evaluate(lam).values
-    if not excess @ rows[i] > problem.unit @ np.abs(rows[i]):
-        return None
-    return memo.outcome(
-        problem, Verdict.UNATTAINED, at=below.at, family=below.family, values=-excess, excess=excess, evidence="tested"
-    )
+    for i in np.argsort(height):
+        basis = np.linalg.svd(rows[i : i + 1])[2][1:]
+        unit = np.abs(basis) @ problem.noise, np.abs(basis) @ problem.accuracy
+        below = decide(Problem(problem.family.combine(basis, np.zeros(len(basis))), *unit), depth=memo.depth + 1)
+        memo.iterations += below.iterations
+        if below.verdict is not Verdict.SOLVED:
+            continue
+        x = np.zeros(0) if below.at is None else below.whitening.transform.T @ below.at.lam
+        lam = basis.T @ x
+        excess = -problem.family.evaluate(lam).values
+        inside = np.all(np.delete(rows, i, axis=0) @ lam >= 0)
+        if inside and excess @ rows[i] > problem.unit @ np.abs(rows[i]):
+            return memo.outcome(
+                problem, Verdict.UNATTAINED, family=below.family, values=-excess, excess=excess, evidence="tested"
+            )
+    return None
 
 
 def existence(problem: Problem, memo: Memo) -> Outcome | None:

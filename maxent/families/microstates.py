@@ -80,6 +80,22 @@ class Microstates(Finite):
         degeneracy = None if weights[0] is None else weights[0][index]
         self._set(Blocks(values, prior=total), tuple(charges), index, degeneracy, n, _log_sum(total) if total is not None else 0.0)
 
+    @staticmethod
+    def from_rule(rule: Any) -> Any:
+        """The family of an infinite list of states given by a rule with a stated bound on its tail.
+
+        Parameters
+        ----------
+        rule : maxent.families.rules.Rule
+
+        Returns
+        -------
+        maxent.families.rules.GrownMicrostates
+        """
+        from maxent.families.rules import GrownMicrostates
+
+        return GrownMicrostates.of(rule)
+
     def _set(self, blocks: Blocks, names: tuple[str, ...], index: Any, degeneracy: Any, listed: int, log_norm: float) -> Microstates:
         for key, value in zip(("blocks", "names", "index", "degeneracy", "listed", "log_norm"), (blocks, names, index, degeneracy, listed, log_norm), strict=True):
             object.__setattr__(self, key, value)

@@ -19,7 +19,7 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from maxent.lattice.exact import EPS
-from maxent.lattice.memory import require_memory
+from maxent.memory import require_memory
 
 _SX, _SY = 0, 1
 _CHUNK = 1 << 14

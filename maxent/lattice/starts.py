@@ -15,7 +15,7 @@ from typing import Any
 import numpy as np
 
 from maxent.lattice.evaluate import position_values
-from maxent.lattice.memory import require_memory
+from maxent.memory import require_memory
 from maxent.lattice.sites import Sites
 from maxent.lattice.terms import OperatorSum
 from maxent.lattice.words import Word, word_product

@@ -274,7 +274,7 @@ def test_the_limit_is_the_memory_needed():
 
 
 def test_available_memory_is_known_here():
-    from maxent.lattice.memory import available_memory, size_text
+    from maxent.memory import available_memory, size_text
 
     free = available_memory()
     assert free is None or 0 < free < 2**50
