@@ -1,6 +1,7 @@
 """Errors of the package, on the lowest floor; imports nothing.
 
-Bad values raise ``ValueError`` or ``TypeError`` (here or as a base class); every message is one line that names the thing.
+Bad values raise ``ValueError`` or ``TypeError`` (here or as a base class); every message is one line that names the
+thing.
 """
 
 

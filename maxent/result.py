@@ -108,9 +108,7 @@ class Certificate:
         if face is not None:
             noise = problem.noise + (0.0 if face.exact else 8 * EPS / max(face.gap, 1e-12)) * problem.family.scale
             below = decide(Problem(face.family, noise, accuracy), depth=1)
-            holds = below.values is not None and bool(
-                np.all(np.abs(below.values) <= 1e-8 * problem.size + accuracy)
-            )
+            holds = below.values is not None and bool(np.all(np.abs(below.values) <= 1e-8 * problem.size + accuracy))
         return Check(bool(holds and face is not None), margin + asked, asked, margin, tolerance)
 
 
@@ -280,7 +278,6 @@ class Result:
     def __repr__(self) -> str:
         lines = [f"{self.verdict} ({self.evidence}, {self.iterations} steps): {self.message}"]
         for n in self.names:
-            lines.append(
-                f"  {n}: target {self.targets[n]:.10g}, value {self.values[n]:.10g}, multiplier {self.multipliers[n]:.10g}"
-            )
+            numbers = self.targets[n], self.values[n], self.multipliers[n]
+            lines.append("  {}: target {:.10g}, value {:.10g}, multiplier {:.10g}".format(n, *numbers))
         return "\n".join(lines)

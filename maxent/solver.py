@@ -47,8 +47,8 @@ def solve(
         Accuracy of the targets, in units of each charge (not a standard error): what the verdict must survive.
         Default 0: exact to rounding.
     driver : {"auto", "host", "jax"}, optional
-        Who runs Newton's iteration.  ``host``: LAPACK, for one-off fits.  ``jax``: one compiled loop.  ``auto`` takes the
-        host unless the family was only given as a JAX function.  Verdicts are decided on the host for both.
+        Who runs Newton's iteration.  ``host``: LAPACK, for one-off fits.  ``jax``: one compiled loop.  ``auto`` takes
+        the host unless the family was only given as a JAX function.  Verdicts are decided on the host for both.
 
     Returns
     -------

@@ -67,7 +67,9 @@ def _check_names(names: Sequence[str], given: Mapping[str, Any], what: str, *, e
     unknown = [n for n in given if n not in names]
     if unknown:
         known = ", ".join(repr(n) for n in names) or "none"
-        raise ValueError(f"{what} {unknown[0]!r} is for no charge (charges: {known}){suggestion(str(unknown[0]), list(names))}")
+        raise ValueError(
+            f"{what} {unknown[0]!r} is for no charge (charges: {known}){suggestion(str(unknown[0]), list(names))}"
+        )
     missing = [n for n in names if n not in given]
     if every and missing:
         raise ValueError(f"no {what} for charge {missing[0]!r}")

@@ -26,7 +26,10 @@ PASS = 1 << 15
 
 
 class Ground(NamedTuple):
-    """Ground space of a combination: kept diagonal entries, isometries of the dense blocks, relative gap, dimension, width."""
+    """Ground space of a combination.
+
+    Kept diagonal entries, isometries of the dense blocks, relative gap, dimension, relative width.
+    """
 
     keep: np.ndarray
     isometries: tuple[np.ndarray, ...]
@@ -343,7 +346,10 @@ class Blocks(Family):
         dimension = len(keep) + sum(p.shape[1] for p in isometries)
         if dimension in (0, self.size):
             return None
-        left = [np.delete(flat, keep), *[e[p.shape[1] :] for (e, _), p in zip(pairs, isometries, strict=True)]]
+        left = [
+            np.delete(flat, keep),
+            *[e[p.shape[1] :] for (e, _), p in zip(pairs, isometries, strict=True)],
+        ]
         held = [flat[keep], *[e[: p.shape[1]] for (e, _), p in zip(pairs, isometries, strict=True)]]
         width = float(np.abs(np.concatenate(held)).max() / size)
         return Ground(keep, isometries, float(np.concatenate(left).min() / size), dimension, width)
@@ -369,7 +375,7 @@ class Blocks(Family):
         return polished_directions(self, v) if self.dense else normal_directions(self.diagonal, v)
 
     def barrier(self, lam: np.ndarray) -> Barrier | None:
-        """``-ln det(1 + lam.Q)``, self-concordant (Nesterov, Nemirovskii 1994, from memory); None outside its domain."""
+        """``-ln det(1 + lam.Q)``, self-concordant (Nesterov, Nemirovskii 1994, from memory)."""
         flat = lam @ self.diagonal
         pairs = [eigh(combination(lam, a)) for a in self.dense]
         every = np.concatenate([flat, *[e for e, _ in pairs]])

@@ -8,7 +8,8 @@ Floor: core.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable
-from typing import Any, NamedTuple
+from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -18,8 +19,12 @@ from maxent.core.newton import curvatures
 __all__ = ["Centre", "centre", "starts_along"]
 
 
-class Centre(NamedTuple):
-    """How the search ended: ``interior``, ``found`` (the callback answered), ``unsure``, ``diverged``, ``stuck``, ``none``."""
+@dataclass(frozen=True)
+class Centre:
+    """How the search ended.
+
+    `status` is ``interior``, ``found`` (the callback answered), ``unsure``, ``diverged``, ``stuck`` or ``none``.
+    """
 
     status: str
     lam: np.ndarray | None

@@ -149,7 +149,12 @@ def edge_of_domain(problem: Problem, memo: Memo) -> Outcome | None:
         inside = np.all(np.delete(rows, i, axis=0) @ lam >= 0)
         if inside and excess @ rows[i] > problem.unit @ np.abs(rows[i]):
             return memo.outcome(
-                problem, Verdict.UNATTAINED, family=below.family, values=-excess, excess=excess, evidence="tested"
+                problem,
+                Verdict.UNATTAINED,
+                family=below.family,
+                values=-excess,
+                excess=excess,
+                evidence="tested",
             )
     return None
 

@@ -8,6 +8,7 @@ targets outside (a tangent touches).  Floor: core.
 from __future__ import annotations
 
 from collections.abc import Callable
+
 import numpy as np
 
 from maxent.core.contract import EPS, Face, Problem, Verdict
@@ -40,7 +41,13 @@ def outside(problem: Problem, memo: Memo, x: np.ndarray) -> Outcome | None:
 
 
 def look(
-    problem: Problem, memo: Memo, x: np.ndarray, decide: Decide, *, step: np.ndarray | None = None, late: bool = False
+    problem: Problem,
+    memo: Memo,
+    x: np.ndarray,
+    decide: Decide,
+    *,
+    step: np.ndarray | None = None,
+    late: bool = False,
 ) -> Outcome | None:
     """Try to end on a verified certificate near the whitened direction `x`.
 

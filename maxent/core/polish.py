@@ -199,7 +199,9 @@ class State:
 
     @classmethod
     def uniform(cls, cluster: Cluster) -> State:
-        dense = [np.eye(k, dtype=a.dtype) / cluster.k for a, k in zip(cluster.blocks.dense, cluster.sizes(), strict=True)]
+        dense = [
+            np.eye(k, dtype=a.dtype) / cluster.k for a, k in zip(cluster.blocks.dense, cluster.sizes(), strict=True)
+        ]
         return cls(np.full(len(cluster.on), 1 / cluster.k), dense)
 
     def carried(self, old: Cluster, new: Cluster) -> State:
@@ -258,7 +260,7 @@ def polish(blocks: Blocks, v: np.ndarray, k: int, *, passes: int = 12) -> np.nda
     best = (-np.inf, v)
     rho: State | None = None
     cluster: Cluster | None = None
-    last = np.inf
+    last = float("inf")
     for _ in range(passes):
         before, cluster = cluster, Cluster.find(blocks, v, k)
         rho = State.uniform(cluster) if rho is None or before is None else rho.carried(before, cluster)
@@ -267,7 +269,7 @@ def polish(blocks: Blocks, v: np.ndarray, k: int, *, passes: int = 12) -> np.nda
         step, rho, done = _second_order_step(cluster, v, rho)
         if done:
             break
-        length = np.linalg.norm(step)
+        length = float(np.linalg.norm(step))
         if length > 0.3:
             step = step * (0.3 / length)
         v = (v + step) / np.linalg.norm(v + step)
@@ -300,7 +302,7 @@ def _second_order_step(cluster: Cluster, v: np.ndarray, rho: State) -> tuple[np.
     hessian = hessian + 1e-9 * np.eye(len(pull))  # directions without curvature do not move theta: leave them alone
     d = 1 / np.sqrt(np.maximum(np.diag(hessian), 1e-9))
     step = axes @ (d * np.linalg.lstsq(d[:, None] * hessian * d, d * pull, rcond=1e-13)[0])
-    length = np.linalg.norm(step)
+    length = float(np.linalg.norm(step))
     if k > 1 and spread > 1e-13:
         shown = step * min(1.0, 0.3 / max(length, 1e-300))
         wanted = bend @ shown + (mean @ v) * v - mean  # values of the traceless charges in the corrected state

@@ -86,10 +86,10 @@ def tall_triangle(rows: np.ndarray, *, step: int = 1 << 15) -> np.ndarray:
     if p <= m:
         return rows.T
     if p <= 2 * step:
-        return np.linalg.qr(rows.T, mode="r")
+        return np.asarray(np.linalg.qr(rows.T, mode="r"))
     triangle = np.zeros((0, m))
     for i in range(0, p, step):
-        triangle = np.linalg.qr(np.concatenate([triangle, rows[:, i : i + step].T]), mode="r")
+        triangle = np.asarray(np.linalg.qr(np.concatenate([triangle, rows[:, i : i + step].T]), mode="r"))
     return triangle
 
 

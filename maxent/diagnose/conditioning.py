@@ -62,7 +62,7 @@ def conditioning(names: Sequence[str], factor: np.ndarray) -> Conditioning | Non
 
     def named(k: int) -> Combination:
         vector = u[:, k] * (np.sign(u[np.argmax(np.abs(u[:, k])), k]) or 1.0)
-        coefficients = dict.fromkeys(names, 0.0) | {names[j]: float(x) for j, x in zip(live, vector, strict=True)}
+        coefficients = dict.fromkeys(names, 0.0) | {names[int(j)]: float(x) for j, x in zip(live, vector, strict=True)}
         return Combination(coefficients, float(spectrum[k]))
 
     number = float(spectrum[0] / spectrum[-1]) if spectrum[-1] > 0 else float("inf")

@@ -37,8 +37,8 @@ class Multipliers:
 def user_multipliers(outcome: Outcome) -> Multipliers:
     """Multipliers of the outcome's last iterate, ``lam = T^T x``, of least norm.
 
-    The error is ``|T^T V/h| |V^T| (|T| (n + t) + eps (1 + |lam.A|))`` with the axes V and curvatures h of the covariance;
-    against known solutions the ratio of true to predicted error was 0.05 in the median and 2.7 at most (4469 cases).
+    The error is ``|T^T V/h| |V^T| (|T| (n + t) + eps (1 + |lam.A|))`` with the axes V and curvatures h of the
+    covariance; against known solutions the ratio of true to predicted error was 0.05 in the median and 2.7 at most (4469 cases).
     """
     w, at = outcome.whitening, outcome.at
     if at is None or not w.rank:
@@ -65,7 +65,8 @@ def user_covariance(outcome: Outcome) -> tuple[np.ndarray, np.ndarray]:
 def replay(problem: Problem, lam: np.ndarray) -> float:
     """Largest relative residual that float64 multipliers alone give, in the user's own charges.
 
-    Multipliers cannot carry condition numbers above 1e8: rounding ``lam_j`` moves the exponent by ``eps |lam_j| |Q_j|``.
+    Multipliers cannot carry condition numbers above 1e8: rounding ``lam_j`` moves the exponent by
+    ``eps |lam_j| |Q_j|``.
     """
     if not len(lam):
         return 0.0

@@ -54,7 +54,8 @@ def redundancies(names: Sequence[str], targets: np.ndarray, whitening: Whitening
 
 def _reduced(rows: np.ndarray) -> np.ndarray:
     """Reduced echelon form with full pivoting; rows below 1e-8 are dropped."""
-    a, done = rows.copy(), []
+    a = rows.copy()
+    done: list[np.ndarray] = []
     while len(a):
         i, j = np.unravel_index(np.argmax(np.abs(a)), a.shape)
         if abs(a[i, j]) < 1e-8:

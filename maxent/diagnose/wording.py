@@ -18,7 +18,7 @@ CLOSE = 1e-9
 
 def combination_text(names: Sequence[str], v: np.ndarray, *, digits: int = 4) -> str:
     """``0.8 energy - 0.6 magnetisation``; parts below 1e-12 of the largest are left out."""
-    parts = []
+    parts: list[str] = []
     largest = np.abs(v).max(initial=0.0)
     for name, x in zip(names, v, strict=True):
         if abs(x) > 1e-12 * largest:
@@ -40,7 +40,10 @@ def _solved(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -
     text += "."
     if m.loose:
         if 0 < o.depth < CLOSE:
-            text += f" Only {o.depth:.0e} inside the boundary: the size of the multipliers reflects the last digits of the targets."
+            text += (
+                f" Only {o.depth:.0e} inside the boundary: the size of the multipliers reflects the last digits of the "
+                "targets."
+            )
         else:
             text += " Fewer than six digits of the multipliers are fixed by the inputs; see their errors."
     if replayed > 1e-10 and replayed > 10 * o.relative():
@@ -60,8 +63,8 @@ def _boundary(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float)
     dimension = np.exp(last.log_dimension)
     chain = f" after {depth} faces" if depth > 1 else ""
     return (
-        f"On the boundary of what any state can reach, to the accuracy of the inputs (margin {o.margin:.0e}, resolvable "
-        f"{o.tolerance:.0e}): no finite multipliers; limit state on a {dimension:.0f}-dimensional face{chain}, "
+        f"On the boundary of what any state can reach, to the accuracy of the inputs (margin {o.margin:.0e}, "
+        f"resolvable {o.tolerance:.0e}): no finite multipliers; limit state on a {dimension:.0f}-dimensional face{chain}, "
         f"exposing combination {combination_text(names, o.direction)}."
     )
 
@@ -69,8 +72,8 @@ def _boundary(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float)
 def _infeasible(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -> str:
     assert o.direction is not None
     text = (
-        f"No state has these values: {combination_text(names, o.direction)} is asked to lie {o.margin:.3g} below its lowest "
-        f"possible value (resolvable {o.tolerance:.0e})."
+        f"No state has these values: {combination_text(names, o.direction)} is asked to lie {o.margin:.3g} below its "
+        f"lowest possible value (resolvable {o.tolerance:.0e})."
     )
     if o.margin < CLOSE * max(1.0, float(np.abs(o.direction) @ o.problem.size)):
         text += " If the targets are accurate to no more than that, treat this as the boundary: state their accuracy."
@@ -80,14 +83,16 @@ def _infeasible(names: Sequence[str], o: Outcome, m: Multipliers, replayed: floa
 def _inconsistent(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -> str:
     assert o.direction is not None
     return (
-        f"The targets contradict one another: {combination_text(names, o.direction)} is the same number in every state, and "
-        f"the targets miss it by {o.margin:.3g} (resolvable {o.tolerance:.0e}); drop or correct one of these targets."
+        f"The targets contradict one another: {combination_text(names, o.direction)} is the same number in every state, "
+        f"and the targets miss it by {o.margin:.3g} (resolvable {o.tolerance:.0e}); drop or correct one of these targets."
     )
 
 
 def _unattained(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -> str:
     assert o.excess is not None
-    parts = ", ".join(f"{n} {x:.4g}" for n, x in zip(names, o.excess, strict=True) if abs(x) > 1e-12 * np.abs(o.excess).max())
+    parts = ", ".join(
+        f"{n} {x:.4g}" for n, x in zip(names, o.excess, strict=True) if abs(x) > 1e-12 * np.abs(o.excess).max()
+    )
     return f"States with these values exist, but none has the largest entropy; what stays unmatched: {parts}."
 
 

@@ -36,7 +36,9 @@ def joint_eigenbasis(charges: list[Any]) -> tuple[np.ndarray, np.ndarray] | None
     levels = np.tile(np.array(shifts)[:, None], (1, d))
     if not live:
         return levels, np.eye(d)
-    if not all(_commute(charges[i], charges[j], sizes[i] * sizes[j], shifts[i], shifts[j]) for i, j in combinations(live, 2)):
+    if not all(
+        _commute(charges[i], charges[j], sizes[i] * sizes[j], shifts[i], shifts[j]) for i, j in combinations(live, 2)
+    ):
         return None
     # irrational ratios of the coefficients: no two joint eigenvalues of a lattice model meet by accident
     weights = {j: np.sqrt(2.0 + 3.7 * k) / sizes[j] for k, j in enumerate(live)}

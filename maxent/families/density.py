@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any, NamedTuple
+from typing import Any
 
 import numpy as np
 import scipy.sparse as sp
@@ -14,7 +14,8 @@ from maxent.families.operators import operator_matrix, to_csr
 __all__ = ["Group", "MatricesState"]
 
 
-class Group(NamedTuple):
+@dataclass(frozen=True)
+class Group:
     """States with support on the basis states `index`: vectors (len(index), k) and their probabilities (k,)."""
 
     index: np.ndarray
@@ -131,7 +132,11 @@ class MatricesState:
             digits = np.unravel_index(index, self.dims)
             inner = np.ravel_multi_index([digits[s] for s in kept], shape) if kept else np.zeros(len(index), int)
             outside = [s for s in range(len(self.dims)) if s not in set(kept)]
-            rest = np.ravel_multi_index([digits[s] for s in outside], [self.dims[s] for s in outside]) if outside else 0 * inner
+            rest = (
+                np.ravel_multi_index([digits[s] for s in outside], [self.dims[s] for s in outside])
+                if outside
+                else 0 * inner
+            )
             if block.ndim == 1:
                 np.add.at(out, (inner, inner), block)
                 continue
@@ -147,5 +152,8 @@ class MatricesState:
         columns = sp.csr_array(self.basis)
         if columns.nnz == columns.shape[1] and np.all(columns.data == 1.0):
             where = columns.tocsc().indices  # a selection of product states
-            return [(where[self.flat], self.flat_weights), *[(where[g.index], g.density()) for g in self.groups]]
+            return [
+                (where[self.flat], self.flat_weights),
+                *[(where[g.index], g.density()) for g in self.groups],
+            ]
         return [(np.arange(columns.shape[0]), self.density())]

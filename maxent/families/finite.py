@@ -72,7 +72,13 @@ class Finite(Family):
         if ground is None:
             return None
         family = self._with(self.blocks.compress(ground), ground)
-        return Face(family, ground.gap, float(np.log(ground.dimension)), exact=not self.blocks.dense, width=ground.width)
+        return Face(
+            family,
+            ground.gap,
+            float(np.log(ground.dimension)),
+            exact=not self.blocks.dense,
+            width=ground.width,
+        )
 
     def sharpen(self, v: np.ndarray) -> Iterable[np.ndarray]:
         """Candidates for exposing directions near `v`."""

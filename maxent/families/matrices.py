@@ -77,7 +77,9 @@ class Matrices(Finite):
         prior = None if log_prior is None else operator_matrix(log_prior, "log_prior")
         basis = None if basis is None else checked_basis(basis)
         dims = None if dims is None else checked_dims(dims)
-        sizes = {name: q.shape[0] for name, q in operators.items()} | ({} if prior is None else {"log_prior": prior.shape[0]})
+        sizes = {name: q.shape[0] for name, q in operators.items()} | (
+            {} if prior is None else {"log_prior": prior.shape[0]}
+        )
         if len(set(sizes.values())) > 1:
             raise ValueError("charges have different dimensions: " + ", ".join(f"{n!r} {d}" for n, d in sizes.items()))
         if sizes:
@@ -169,15 +171,15 @@ class Matrices(Finite):
 
     def _operator(self, j: int, *, of_prior: bool = False) -> sp.csr_array:
         line = self.blocks.prior if of_prior else self.blocks.diagonal[j]
-        parts = [(self.flat, sp.diags_array(line[: len(self.flat)]))]
+        parts: list[tuple[np.ndarray, Any]] = [(self.flat, sp.diags_array(line[: len(self.flat)]))]
         at = len(self.flat)
         for index, vectors in self.turned:
             k = vectors.shape[1]
             parts.append((index, (vectors * line[at : at + k]) @ vectors.conj().T))
             at += k
         dense = self.blocks.prior_dense if of_prior else [a[j] for a in self.blocks.dense]
-        for (index, vectors), a in zip(self.placed, dense, strict=True):
-            parts.append((index, a if vectors is None else vectors @ a @ vectors.conj().T))
+        for (index, frame), a in zip(self.placed, dense, strict=True):
+            parts.append((index, a if frame is None else frame @ a @ frame.conj().T))
         total = sp.csr_array((self.dimension, self.dimension))
         for index, part in parts:
             piece = sp.coo_array(part)
@@ -272,7 +274,7 @@ def _sorted(q: sp.csr_array, order: np.ndarray) -> sp.csr_array:
 
 
 def _block(q: sp.csr_array, start: int, stop: int) -> Any:
-    """Diagonal block of a block-diagonal matrix: dense when small, where sparse bookkeeping costs more than it saves."""
+    """Diagonal block of a block-diagonal matrix, dense when small: there sparse bookkeeping costs more than it saves."""
     pointer = q.indptr[start : stop + 1]
     data, column = q.data[pointer[0] : pointer[-1]], q.indices[pointer[0] : pointer[-1]] - start
     d = stop - start

@@ -59,26 +59,41 @@ class Microstates(Finite):
 
     def __init__(self, charges: Any, log_weights: Any = None, log_prior: Any = None):
         charges = checked_charges(charges, "Microstates")
-        weights = [None if w is None else _weights(w, what) for w, what in ((log_weights, "log_weights"), (log_prior, "log_prior"))]
+        weights = [
+            None if w is None else _weights(w, what)
+            for w, what in ((log_weights, "log_weights"), (log_prior, "log_prior"))
+        ]
         rows = [_charge(name, value) for name, value in charges.items()]
         sizes = {len(r) for r in rows} | {len(w) for w in weights if w is not None}
         if not sizes:
             raise ValueError("no charges given: Microstates needs at least one charge, or log_weights")
         if len(sizes) > 1:
             detail = ", ".join(f"{name!r} has {len(r)}" for name, r in zip(charges, rows, strict=True))
-            weight = ", ".join(f"{what} has {len(w)}" for w, what in zip(weights, ("log_weights", "log_prior"), strict=True) if w is not None)
+            weight = ", ".join(
+                f"{what} has {len(w)}"
+                for w, what in zip(weights, ("log_weights", "log_prior"), strict=True)
+                if w is not None
+            )
             raise ValueError(f"charges list different numbers of states: {', '.join(x for x in (detail, weight) if x)}")
         (n,) = sizes
-        total = sum(w for w in weights if w is not None) if any(w is not None for w in weights) else None
+        given = [w for w in weights if w is not None]
+        total: np.ndarray | None = np.sum(given, axis=0) if given else None
         index = np.arange(n) if total is None else np.flatnonzero(total > -np.inf)
         if not len(index):
             raise ValueError("no state left: every weight is zero" if n else "no states given: the charges are empty")
         values = np.array(rows, float).reshape(len(rows), n)
         if len(index) < n:
             values = values[:, index]
-            total = total[index]
+            total = None if total is None else total[index]
         degeneracy = None if weights[0] is None else weights[0][index]
-        self._set(Blocks(values, prior=total), tuple(charges), index, degeneracy, n, _log_sum(total) if total is not None else 0.0)
+        self._set(
+            Blocks(values, prior=total),
+            tuple(charges),
+            index,
+            degeneracy,
+            n,
+            _log_sum(total) if total is not None else 0.0,
+        )
 
     @staticmethod
     def from_rule(rule: Any) -> Any:
@@ -96,8 +111,20 @@ class Microstates(Finite):
 
         return GrownMicrostates.of(rule)
 
-    def _set(self, blocks: Blocks, names: tuple[str, ...], index: Any, degeneracy: Any, listed: int, log_norm: float) -> Microstates:
-        for key, value in zip(("blocks", "names", "index", "degeneracy", "listed", "log_norm"), (blocks, names, index, degeneracy, listed, log_norm), strict=True):
+    def _set(
+        self,
+        blocks: Blocks,
+        names: tuple[str, ...],
+        index: Any,
+        degeneracy: Any,
+        listed: int,
+        log_norm: float,
+    ) -> Microstates:
+        for key, value in zip(
+            ("blocks", "names", "index", "degeneracy", "listed", "log_norm"),
+            (blocks, names, index, degeneracy, listed, log_norm),
+            strict=True,
+        ):
             object.__setattr__(self, key, value)
         return self
 
@@ -123,7 +150,9 @@ class Microstates(Finite):
         blocks = Blocks(b.diagonal[:, where], prior=None if b.prior is None else b.prior[where])
         degeneracy = None if self.degeneracy is None else self.degeneracy[where]
         log_norm = 0.0 if blocks.prior is None else _log_sum(blocks.prior)
-        return object.__new__(Microstates)._set(blocks, self.names, self.index[where], degeneracy, self.listed, log_norm)
+        return object.__new__(Microstates)._set(
+            blocks, self.names, self.index[where], degeneracy, self.listed, log_norm
+        )
 
     def state(self, lam: Any) -> MicrostatesState:
         """State ``p_x = w_x exp(-lam.f_x)/Z`` at multipliers `lam`, shape (m,)."""

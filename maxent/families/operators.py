@@ -44,12 +44,12 @@ def operator_matrix(value: Any, label: str) -> Any:
     if q.ndim != 2 or q.shape[0] != q.shape[1]:
         raise ValueError(f"{label} must be a square matrix, not of shape {q.shape}")
     q = q.astype(complex if np.issubdtype(q.dtype, np.complexfloating) else float)
-    entries = q.data if sparse else q
+    entries: Any = q.data if sparse else q
     if not np.all(np.isfinite(entries)):
         raise ValueError(f"{label} has NaN or infinite entries")
     if np.iscomplexobj(q) and not entries.imag.any():
         q = q.real if sparse else np.ascontiguousarray(q.real)
-    adjoint = q.conj().T
+    adjoint: Any = q.conj().T
     difference = q - adjoint
     size = np.abs(entries).max(initial=0.0)
     off = np.abs(difference.data).max(initial=0.0) if sparse else np.abs(difference).max(initial=0.0)
@@ -67,7 +67,9 @@ def checked_basis(value: Any) -> Any:
         raise ValueError("basis must be a (D, d) matrix whose columns are states")
     gram = b.conj().T @ b
     gram = gram.toarray() if sp.issparse(gram) and gram.shape[0] <= 4096 else gram
-    error = abs(gram - (sp.eye_array(b.shape[1]) if sp.issparse(gram) else np.eye(b.shape[1]))).max() if b.shape[1] else 0.0
+    error = (
+        abs(gram - (sp.eye_array(b.shape[1]) if sp.issparse(gram) else np.eye(b.shape[1]))).max() if b.shape[1] else 0.0
+    )
     if not error <= 1e-10:
         raise ValueError(f"basis has columns that are not orthonormal: |B^H B - 1| is {error:.1e}")
     return b

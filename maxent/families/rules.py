@@ -1,7 +1,7 @@
 """Infinite lists of classical states given by a rule, grown until the lost tail is below rounding.
 
-The rule states an upper bound of what a list leaves out; every evaluation doubles the list until that bound is below the
-rounding of ``ln Z``, values and covariance, or carries what is left as its error.  Cost as for listed states.
+The rule states an upper bound of what a list leaves out; every evaluation doubles the list until that bound is below
+the rounding of ``ln Z``, values and covariance, or carries what is left as its error.  Cost as for listed states.
 Floor: families.  Must not know what the states are.
 """
 
@@ -78,10 +78,14 @@ class _List:
         values = np.asarray(values, float)
         m, n = len(self.rule.names), stop - first
         if values.shape != (m, n):
-            raise ValueError(f"the rule gives charges of shape {values.shape} for states {first}..{stop - 1}, not {(m, n)}")
+            raise ValueError(
+                f"the rule gives charges of shape {values.shape} for states {first}..{stop - 1}, not {(m, n)}"
+            )
         weights = np.zeros(n) if log_weights is None else np.asarray(log_weights, float)
         if weights.shape != (n,) or not np.all(np.isfinite(values)) or np.any(np.isnan(weights) | (weights == np.inf)):
-            raise ValueError(f"the rule gives charges or log weights that are not finite for states {first}..{stop - 1}")
+            raise ValueError(
+                f"the rule gives charges or log weights that are not finite for states {first}..{stop - 1}"
+            )
         return values, weights
 
     def grow(self) -> bool:
@@ -226,7 +230,13 @@ class GrownMicrostates(Family):
             {str(j): row for j, row in enumerate(charges)}, log_weights=self.listed.log_weights[keep]
         ) if len(charges) else Microstates({}, log_weights=self.listed.log_weights[keep])  # fmt: skip
         gap = float(np.delete(height, keep).min() / spread)
-        return Face(family, gap, float(np.log(len(keep))), exact=True, width=float(np.abs(height[keep]).max() / spread))
+        return Face(
+            family,
+            gap,
+            float(np.log(len(keep))),
+            exact=True,
+            width=float(np.abs(height[keep]).max() / spread),
+        )
 
     def sharpen(self, v: np.ndarray) -> Iterable[np.ndarray]:
         """Normals of candidate faces of the listed states."""

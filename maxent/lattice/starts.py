@@ -15,10 +15,10 @@ from typing import Any
 import numpy as np
 
 from maxent.lattice.evaluate import position_values
-from maxent.memory import require_memory
 from maxent.lattice.sites import Sites
 from maxent.lattice.terms import OperatorSum
 from maxent.lattice.words import Word, word_product
+from maxent.memory import require_memory
 
 Angle = float | str | Sequence[float | str]
 
