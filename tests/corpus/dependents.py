@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from tests.corpus import edges, feasible, pieces
+from tests.corpus import around, feasible, pieces
 from tests.corpus.problem import Draft
 
 
@@ -89,9 +89,7 @@ def _calm(rng, index: int) -> Draft:
     if index % 2:
         charges = rng.standard_normal((1 + index % 4, 12))
     else:
-        charges = np.array(
-            [pieces.hermitian(rng, 5, is_complex=bool(index % 4)) for _ in range(1 + index % 3)]
-        )
+        charges = np.array([pieces.hermitian(rng, 5, is_complex=bool(index % 4)) for _ in range(1 + index % 3)])
     lam = pieces.multipliers(rng, charges, rng.uniform(0.5, 2))
     return feasible.from_multipliers(charges, lam, f"size {charges.shape[-1]} m={len(lam)}")
 
@@ -101,9 +99,7 @@ def _contradicted(rng, base: Draft, row, constant: float, step: float, note: str
 
     The reachable point is `step` away along the last target, so `step` bounds the distance.
     """
-    draft = base.transformed(
-        np.vstack([np.eye(len(base.charges)), row]), np.append(np.zeros(len(row)), constant)
-    )
+    draft = base.transformed(np.vstack([np.eye(len(base.charges)), row]), np.append(np.zeros(len(row)), constant))
     shift = np.append(np.zeros(len(row)), step)
     order = rng.permutation(len(shift))
     return draft.change(
@@ -234,16 +230,8 @@ def empty(rng, index: int) -> Draft:
     )
 
 
-def _edge(rng, index: int) -> edges.Edge:
-    """An edge of any shape, turning with the index."""
-    shapes = list(edges.SHAPES.values())
-    return shapes[index % len(shapes)](rng, index)
-
-
 REDUNDANT = {
     "redundant-quantum": redundant(feasible.quantum_complex),
     "redundant-classical": redundant(feasible.classical),
-    "redundant-boundary": redundant(lambda rng, index: _edge(rng, index).boundary()),
-    "redundant-outside": redundant(lambda rng, index: _edge(rng, index).outside(edges.step(index))),
-    "redundant-near": redundant(lambda rng, index: _edge(rng, index).inside(edges.depth(index))),
+    **{f"redundant-{place}": redundant(around.at(place, around.any_edge)) for place in ("boundary", "outside", "near")},
 }

@@ -46,11 +46,7 @@ class Edge:
         """Means when every live state counts the same."""
         if self.charges.ndim == 3:
             return np.trace(self.charges, axis1=1, axis2=2).real / self.charges.shape[1]
-        live = (
-            np.ones(self.charges.shape[1], bool)
-            if self.log_weights is None
-            else np.isfinite(self.log_weights)
-        )
+        live = np.ones(self.charges.shape[1], bool) if self.log_weights is None else np.isfinite(self.log_weights)
         return self.charges[:, live].mean(1)
 
     def turned(self, rng) -> Edge:
@@ -107,7 +103,7 @@ class Edge:
         )
 
 
-def _unit(rng, m: int) -> np.ndarray:
+def unit(rng, m: int) -> np.ndarray:
     v = rng.standard_normal(m)
     return v / np.linalg.norm(v)
 
@@ -122,7 +118,7 @@ def curved(rng, index: int) -> Edge:
     m = min(2 + index % 4, d * d - 1 if is_complex else d * (d + 1) // 2 - 1)
     while True:
         charges = np.array([pieces.hermitian(rng, d, is_complex=is_complex) for _ in range(m)])
-        v = _unit(rng, m)
+        v = unit(rng, m)
         e, u = np.linalg.eigh(np.tensordot(v, charges, axes=1))
         if e[1] - e[0] > 0.2:
             break
@@ -192,7 +188,7 @@ def ball(rng, index: int) -> Edge:
     j = (0.5, 1, 1.5, 2)[index % 4]
     g = 1 + index // 4 % 3
     stack = pieces.spin(j)[[0, 2]].real if index % 2 else pieces.spin(j)
-    u = _unit(rng, len(stack))
+    u = unit(rng, len(stack))
     charges = np.array([np.kron(a, np.eye(g)) for a in stack])
     frame = pieces.unitary(rng, charges.shape[1], is_complex=np.iscomplexobj(charges))
     edge = Edge(pieces.rotate(charges, frame), -u, j * u, g, float(np.log(g)), f"J={j} copies={g}")
@@ -209,11 +205,9 @@ def cone(rng, index: int) -> Edge:
     g = 1 + index // 2 % 3
     letters = "xyz" if index % 2 else "xz"
     heights = [apex, 0.0, 0.0][: len(letters)]
-    stack = np.array(
-        [scipy.linalg.block_diag(pieces.PAULI[a], h) for a, h in zip(letters, heights, strict=True)]
-    )
+    stack = np.array([scipy.linalg.block_diag(pieces.PAULI[a], h) for a, h in zip(letters, heights, strict=True)])
     charges = np.array([np.kron(a, np.eye(g)) for a in stack])
-    side = _unit(rng, len(letters) - 1)
+    side = unit(rng, len(letters) - 1)
     u = np.concatenate([[1 / apex], np.sqrt(1 - 1 / apex**2) * side])
     frame = pieces.unitary(rng, charges.shape[1], is_complex=np.iscomplexobj(charges))
     note = f"apex={apex:.2f} copies={g}"
@@ -293,77 +287,67 @@ def blocks(rng, index: int) -> Edge:
     )
 
 
-def _facet(rng, n: int, m: int, k: int) -> np.ndarray:
-    """Microstates: the first k at level 0 of the first charge, the others at 0.3..2; other charges random."""
-    charges = rng.standard_normal((m, n))
-    charges[0] = np.concatenate([np.zeros(k), rng.uniform(0.3, 2, n - k)])
-    return charges
+def narrow(rng, index: int) -> Edge:
+    """A flat face whose next level is only 1e-2..1e-5 above it."""
+    is_complex = bool(index % 2)
+    k, d, m = 1 + index % 3, 6, 2 + index % 3
+    charges = _with_ground_space(rng, d, k, m, is_complex)
+    gap = 10.0 ** -(2 + index % 4)
+    charges[0][k, k] = gap
+    point, entropy = _gibbs_on(rng, charges, k)
+    charges = pieces.rotate(charges, pieces.unitary(rng, d, is_complex=is_complex))
+    return Edge(charges, np.eye(m)[0], point, k, entropy, f"d={d} m={m} gap={gap:.0e}").turned(rng)
 
 
-def face(rng, index: int) -> Edge:
-    """Microstates: k = 2..8 points on one side of the hull, a positive distribution on them."""
-    n, m = (8, 12, 30, 80)[index % 4], 2 + index % 5
-    k = 2 + int(rng.integers(0, 7)) if n > 8 else 2 + index % 3
-    charges = _facet(rng, n, m, k)
-    p, entropy = pieces.gibbs(pieces.multipliers(rng, charges[:, :k], 2.0) @ charges[:, :k])
-    order = rng.permutation(n)
-    edge = Edge(charges[:, order], np.eye(m)[0], charges[:, :k] @ p, k, entropy, f"n={n} m={m}")
-    return edge.turned(rng)
+def threefold(rng, index: int) -> Edge:
+    """A face of a face of a face, each exposed only within the one before.
 
-
-def vertex(rng, index: int) -> Edge:
-    """Microstates: a corner of the hull, every other one held by two or three identical states."""
-    n, m = (6, 10, 25, 60)[index % 4], 1 + index % 4
-    copies = (1, 2, 1, 3)[index // 2 % 4]
-    charges = _facet(rng, n, m, copies)
-    charges[:, :copies] = charges[:, :1]
-    order = rng.permutation(n)
-    point = charges[:, 0].copy()
-    edge = Edge(charges[:, order], np.eye(m)[0], point, copies, float(np.log(copies)), f"n={n} m={m}")
-    return edge.turned(rng)
-
-
-def ising(rng, index: int) -> Edge:
-    """Integer charges: ring of L classical spins, energy -sum s s' = -L and a magnetisation in between.
-
-    Only the two ordered states have the lowest energy; target magnetisation x L mixes them.
+    As `nonexposed`, one level deeper: P > P2 > P3, the third charge lowest on P3 within P2 and coupled to the rest.
     """
-    length = 3 + index % 4
-    spins = 1 - 2 * ((np.arange(2**length)[:, None] >> np.arange(length)) & 1)
-    energy = -(spins * np.roll(spins, 1, axis=1)).sum(1)
-    charges = np.array([energy, spins.sum(1)], float)
-    x = (-0.5, 0.0, 0.25, 0.75)[index % 4]
-    p = np.array([1 + x, 1 - x]) / 2
-    point = np.array([-length, x * length])
-    return Edge(charges, np.array([1.0, 0.0]), point, 2, float(-p @ np.log(p)), f"ring of {length}, x={x}")
+    is_complex = bool(index % 2)
+    k3 = 1 + index // 2 % 2
+    k2, k1 = k3 + 1, k3 + 2 + index % 2
+    d = k1 + int(rng.integers(2, 5))
+    charges = _with_ground_space(rng, d, k1, 3, is_complex)
+    charges[1][:k1, :k1] = np.diag(np.concatenate([np.zeros(k2), rng.uniform(0.5, 2, k1 - k2)]))
+    charges[2][:k2, :k2] = np.diag(np.concatenate([np.zeros(k3), rng.uniform(0.5, 2, k2 - k3)]))
+    point, entropy = _gibbs_on(rng, charges, k3, width=1.0)
+    charges = pieces.rotate(charges, pieces.unitary(rng, d, is_complex=is_complex))
+    return Edge(charges, np.eye(3)[0], point, k3, entropy, f"d={d} m=3", directions=3).turned(rng)
 
 
-def commuting(rng, index: int) -> Edge:
-    """A face of microstates, written as commuting matrices in a random basis."""
-    base = (face, vertex)[index % 2](rng, 4 * (index // 2) + index % 2)
-    n = base.charges.shape[1]
-    frame = pieces.unitary(rng, n, is_complex=bool(index % 2))
-    return replace(base, charges=pieces.rotate([np.diag(row) for row in base.charges], frame))
+def tomography(rng, index: int) -> Edge:
+    """Every observable of a small system is a charge; the targets are those of a state of rank k < d.
 
-
-def weighted(rng, index: int) -> Edge:
-    """A face or corner of microstates under weights over +-200 (+-299) decades; weights move no edge."""
-    base = (face, vertex)[index % 2](rng, 4 * (index // 2) + index % 2)
-    decades = (200, 299)[index // 2 % 2]
-    logs = rng.uniform(-1, 1, base.charges.shape[1]) * decades * np.log(10)
-    return replace(base, log_weights=logs, entropy=None, note=f"{base.note} weights 1e+-{decades}")
-
-
-def dropped(rng, index: int) -> Edge:
-    """A face or corner of microstates; states beyond it exist in the list but have weight zero."""
-    base = (face, vertex)[index % 2](rng, index)
-    n = base.charges.shape[1]
-    beyond = base.point[:, None] - base.normal[:, None] * rng.uniform(0.1, 1, 3)
-    extra = beyond + 0.1 * rng.standard_normal((len(base.point), 3))
-    logs = np.concatenate([np.zeros(n), np.full(3, -np.inf)])
-    return replace(
-        base, charges=np.column_stack([base.charges, extra]), log_weights=logs, note=f"{base.note} dropped"
-    )
+    The reachable set is the set of states itself: the state is the only one with these values, the projector on its
+    null space is a normal, and (charges orthonormal) distances are Hilbert-Schmidt distances.
+    """
+    is_complex = bool(index % 2)
+    d = 2 + index % 3
+    k = 1 + index // 3 % (d - 1)
+    basis = []
+    for i in range(d):
+        for j in range(i):
+            pair = np.zeros((d, d), complex)
+            pair[i, j] = pair[j, i] = np.sqrt(0.5)
+            basis.append(pair)
+            if is_complex:
+                turned = np.zeros((d, d), complex)
+                turned[i, j], turned[j, i] = 1j * np.sqrt(0.5), -1j * np.sqrt(0.5)
+                basis.append(turned)
+        if i:
+            level = np.diag(np.concatenate([np.ones(i), [-i], np.zeros(d - i - 1)])) / np.sqrt(i * (i + 1))
+            basis.append(level.astype(complex))
+    charges = np.array(basis) if is_complex else np.array(basis).real
+    frame = pieces.unitary(rng, d, is_complex=is_complex)
+    p = pieces.probabilities(rng, k)
+    state = (frame[:, :k] * p) @ frame[:, :k].conj().T
+    null = frame[:, k:] @ frame[:, k:].conj().T
+    normal = pieces.values_in(charges, null)
+    entropy = pieces.gibbs(-np.log(p))[1]
+    normal = normal / np.linalg.norm(normal)
+    note = f"d={d} m={len(charges)} rank {k}"
+    return Edge(charges, normal, pieces.values_in(charges, state), k, entropy, note).turned(rng)
 
 
 def with_prior(rng, index: int) -> Edge:
@@ -373,98 +357,3 @@ def with_prior(rng, index: int) -> Edge:
     prior = rng.uniform(0.5, 5) * pieces.hermitian(rng, d, is_complex=np.iscomplexobj(base.charges))
     entropy = 0.0 if base.face_dimension == 1 else None
     return replace(base, log_prior=prior, entropy=entropy, note=f"{base.note} prior")
-
-
-SHAPES = {
-    "curved": curved,
-    "flat": flat,
-    "nonexposed": nonexposed,
-    "ball": ball,
-    "cone": cone,
-    "stabiliser": stabiliser,
-    "ferromagnet": ferromagnet,
-    "blocks": blocks,
-    "face": face,
-    "vertex": vertex,
-    "ising": ising,
-    "commuting": commuting,
-    "weighted": weighted,
-    "dropped": dropped,
-    "prior": with_prior,
-}
-
-
-def depth(index: int) -> float:
-    """1e-2..1e-10, turning with the index."""
-    return 10.0 ** -(2 + index % 9)
-
-
-def step(index: int) -> float:
-    """1e-1..1e-10, turning with the index."""
-    return 10.0 ** -(1 + index % 10)
-
-
-def near(shape):
-    """Inside by 1e-2..1e-10."""
-    return lambda rng, index: SHAPES[shape](rng, index).inside(depth(index))
-
-
-def boundary(shape):
-    """Exactly on the edge."""
-    return lambda rng, index: SHAPES[shape](rng, index).boundary()
-
-
-def outside(shape):
-    """Outside by 1e-1..1e-10."""
-    return lambda rng, index: SHAPES[shape](rng, index).outside(step(index))
-
-
-def tangent(rng, index: int) -> Draft:
-    """Outside along a tangent of a ball or cone: the exposing direction of the edge point shows no margin
-    at all.
-
-    From the touching point of a sphere of radius R a step s along the tangent (for the cone: away from the
-    apex) is sqrt(R^2 + s^2) - R away from the reachable set.
-    """
-    length = 10.0 ** -(1 + index % 5)
-    edge = (ball, cone)[index // 5 % 2](rng, index)
-    if index // 5 % 2:
-        # the apex state is the one that shares the tangent plane: its value is the other end of the segment
-        h = np.tensordot(edge.normal, edge.charges, axes=1) - edge.normal @ edge.point * np.eye(
-            edge.charges.shape[1]
-        )
-        _, u = np.linalg.eigh(h)
-        ground = u[:, : 2 * edge.face_dimension]
-        mixed = pieces.values_in(edge.charges, ground @ ground.conj().T / ground.shape[1])
-        along = edge.point - mixed
-        radius = 1.0
-    else:
-        along = _unit(rng, len(edge.point))
-        along = along - (along @ edge.normal) * edge.normal
-        radius = (0.5, 1, 1.5, 2)[index % 4]
-    along = along / np.linalg.norm(along)
-    distance = float(np.hypot(radius, length) - radius)
-    draft = edge.outside(length)
-    note = f"{edge.note}, tangent by {length:.0e}, outside by {distance:.1e}"
-    return draft.change(
-        targets=edge.point + length * along, displacement=length * along, distance=distance, note=note
-    )
-
-
-def scaled(verdict: str):
-    """An edge of any shape asked in units from 1e-8 to 1e8."""
-    shapes = ("flat", "face", "curved", "vertex", "nonexposed", "blocks")
-
-    def make(rng, index: int) -> Draft:
-        shape = SHAPES[shapes[index % len(shapes)]]
-        edge = shape(rng, index)
-        if verdict == "boundary":
-            base = edge.boundary()
-        elif verdict == "inside":
-            base = edge.inside(depth(index))
-        else:
-            base = edge.outside(step(index))
-        factors = 10 ** rng.uniform(-8, 8, len(base.charges))
-        return base.transformed(np.diag(factors), note=f"{shapes[index % len(shapes)]}, units 1e+-8")
-
-    return make

@@ -88,9 +88,7 @@ def blocks(rng, index: int) -> Draft:
     order = rng.permutation(d)
     dense = np.array(
         [
-            _direct_sum([pieces.hermitian(rng, k, is_complex=bool(index % 2)) for k in sizes])[
-                np.ix_(order, order)
-            ]
+            _direct_sum([pieces.hermitian(rng, k, is_complex=bool(index % 2)) for k in sizes])[np.ix_(order, order)]
             for _ in range(m)
         ]
     )
@@ -108,9 +106,7 @@ def lattice(rng, index: int) -> Draft:
     """Spin-1/2 ring: XXZ energy, magnetisation, scalar chirality (complex, does not commute); lam known."""
     length = (3, 4, 4, 5)[index % 4]
     delta = rng.uniform(-0.8, 1.8)
-    energy = (
-        pieces.coupling("xx", length) + pieces.coupling("yy", length) + delta * pieces.coupling("zz", length)
-    )
+    energy = pieces.coupling("xx", length) + pieces.coupling("yy", length) + delta * pieces.coupling("zz", length)
     chirality = sum(
         pieces.coupling("".join(w), length) * sign
         for w, sign in (("xyz", 1), ("yzx", 1), ("zxy", 1), ("xzy", -1), ("zyx", -1), ("yxz", -1))
@@ -162,9 +158,7 @@ def prior_classical(rng, index: int) -> Draft:
     if rank < len(lam):
         charges, lam, prior = charges[:1], lam[:1], prior
         p, entropy = pieces.gibbs(lam @ charges[:, live] - prior[live])
-    draft = from_multipliers(
-        charges, lam, f"n={charges.shape[1]} m={len(lam)}", log_prior=prior, entropy=entropy
-    )
+    draft = from_multipliers(charges, lam, f"n={charges.shape[1]} m={len(lam)}", log_prior=prior, entropy=entropy)
     return draft.change(targets=charges[:, live] @ p)
 
 

@@ -200,9 +200,7 @@ def known(problem: Problem, result) -> list[str]:
         miss = abs(result.multipliers[n] - x) * spreads[n] / unit
         if not miss <= MULTIPLIER:
             complaints.append(f"multiplier of {n} is {result.multipliers[n]!r}, truth {x!r}")
-        if not abs(result.multipliers[n] - x) <= 10 * result.multiplier_errors[n] + 4e-15 * unit / (
-            spreads[n] or 1.0
-        ):
+        if not abs(result.multipliers[n] - x) <= 10 * result.multiplier_errors[n] + 4e-15 * unit / (spreads[n] or 1.0):
             complaints.append(
                 f"multiplier of {n} is off by {abs(result.multipliers[n] - x):.1e}, "
                 f"stated error {result.multiplier_errors[n]:.1e}"

@@ -2,7 +2,7 @@
 
 Each problem is drawn from its own generator, seeded by (seed, kind, index), so `make(kind, seed, index)`
 gives back any single one.  How its truth is known stands in the docstring of the function that makes it
-(`feasible`, `edges`, `dependents`); none of them calls the solver.
+(`feasible`, `edges`, `points`, `around`, `dependents`); none of them calls the solver.
 """
 
 from __future__ import annotations
@@ -11,7 +11,7 @@ import zlib
 
 import numpy as np
 
-from tests.corpus import dependents, edges, feasible
+from tests.corpus import around, dependents, feasible
 from tests.corpus.problem import Problem, named
 
 INSIDE = {
@@ -32,14 +32,17 @@ INSIDE = {
     "ill-conditioned": (feasible.near_dependent, 14),
 }
 
+COUNTS = {"near": 9, "boundary": 6, "outside": 10}
+
 EDGES = {
-    **{f"near-{shape}": (edges.near(shape), 9) for shape in edges.SHAPES},
-    "near-units": (edges.scaled("inside"), 9),
-    **{f"boundary-{shape}": (edges.boundary(shape), 6) for shape in edges.SHAPES},
-    "boundary-units": (edges.scaled("boundary"), 9),
-    **{f"outside-{shape}": (edges.outside(shape), 10) for shape in edges.SHAPES},
-    "outside-units": (edges.scaled("outside"), 10),
-    "outside-tangent": (edges.tangent, 10),
+    **{
+        f"{place}-{name}": (around.at(place, shape), count)
+        for place, count in COUNTS.items()
+        for name, shape in around.SHAPES.items()
+    },
+    **{f"{place}-units": (around.scaled(place), count) for place, count in COUNTS.items()},
+    **{f"{place}-mixed": (around.mixed(place), count) for place, count in COUNTS.items()},
+    "outside-tangent": (around.tangent, 10),
     "outside-ill-conditioned": (dependents.nearly_dependent_outside, 10),
 }
 

@@ -104,9 +104,7 @@ def test_a_seed_and_an_index_give_the_same_problem_again():
     assert make("near-flat", 6, 3).targets != once.targets
 
 
-@pytest.mark.parametrize(
-    "kind", ["outside-flat", "outside-face", "inconsistent-duplicate", "outside-ill-conditioned"]
-)
+@pytest.mark.parametrize("kind", ["outside-flat", "outside-face", "inconsistent-duplicate", "outside-ill-conditioned"])
 def test_a_certificate_does_not_hold_for_reachable_targets(kind):
     for problem, family, result in solved(kind):
         reachable = {n: float(np.mean(judge.levels(problem, {n: 1.0}))) for n in problem.targets}
@@ -123,9 +121,7 @@ def lowest_at_50_digits(problem, direction) -> mpmath.mpf:
         points = {n: problem.live(a) for n, a in problem.charges.items()}
         n_states = len(points[next(iter(points))])
         return min(
-            mpmath.fsum(
-                mpmath.mpf(v) * (mpmath.mpf(float(points[n][x])) - q[n]) for n, v in direction.items()
-            )
+            mpmath.fsum(mpmath.mpf(v) * (mpmath.mpf(float(points[n][x])) - q[n]) for n, v in direction.items())
             for x in range(n_states)
         )
     total = mpmath.zeros(problem.size)
