@@ -15,9 +15,7 @@ import numpy as np
 __all__ = ["write"]
 
 
-def write(
-    file: File, record: Mapping[str, Any], *, probabilities: Any = None, labels: Sequence[str] = ()
-) -> None:
+def write(file: File, record: Mapping[str, Any], *, probabilities: Any = None, labels: Sequence[str] = ()) -> None:
     """Write targets, values, multipliers, covariance, predictions and probabilities of a record.
 
     Parameters

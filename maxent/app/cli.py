@@ -41,9 +41,7 @@ def parser() -> argparse.ArgumentParser:
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )
     solve.add_argument("config", metavar="CONFIG", type=File, help="TOML file, see docs/config.md")
-    solve.add_argument(
-        "--out", metavar="DIR", type=File, help="run folder (default: runs/<name of the config>-<hash>)"
-    )
+    solve.add_argument("--out", metavar="DIR", type=File, help="run folder (default: runs/<name of the config>-<hash>)")
     solve.add_argument("--json", action="store_true", help="print result.json instead of the table")
     solve.add_argument("--force", action="store_true", help="replace the run folder if it is there already")
     solve.add_argument(

@@ -11,6 +11,7 @@ from __future__ import annotations
 import json
 import math
 import re
+import sys
 import tomllib
 from collections.abc import Iterator
 from dataclasses import dataclass, field
@@ -166,9 +167,7 @@ def _parse(file: File, text: str) -> dict[str, Any]:
         raise ConfigError(f"{file}:{line}: {key + ': ' if key else ''}{where}") from None
 
 
-def _split(
-    table: dict[str, Any], problems: Problems
-) -> tuple[dict[str, Any], dict[str, Any], type[Any] | None]:
+def _split(table: dict[str, Any], problems: Problems) -> tuple[dict[str, Any], dict[str, Any], type[Any] | None]:
     """Part the common keys from those of the kind, and find the kind's Options."""
     common = set(Header.__dataclass_fields__)
     header = {k: v for k, v in table.items() if k in common}
@@ -270,6 +269,8 @@ def _check_finite(table: dict[str, Any], problems: Problems) -> None:
             if value == -math.inf and path[0] in _OPEN:
                 continue
             problems.add(path, f"expected a finite number, got {value}")
+        elif isinstance(value, int) and abs(value) > sys.float_info.max:
+            problems.add(path, "a whole number too large to calculate with")
 
 
 def _check_names(table: dict[str, Any], problems: Problems) -> None:

@@ -56,9 +56,7 @@ class Files:
         file = self.folder / name
         ending = file.suffix.lower()
         if ending not in (".npy", ".npz", ".csv", ".mtx"):
-            raise ValueError(
-                f"{name!r} is no file this program reads; expected .npy, .npz:name, .csv:column or .mtx"
-            )
+            raise ValueError(f"{name!r} is no file this program reads; expected .npy, .npz:name, .csv:column or .mtx")
         try:
             data = file.read_bytes()
         except OSError as bad:

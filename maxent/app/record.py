@@ -70,8 +70,7 @@ def record(
         "face": _face(result),
         "excess": None if result.excess is None else _combination(result.excess),
         "redundancies": [
-            {"coefficients": _combination(r.coefficients), "constant": _finite(r.constant)}
-            for r in result.redundancies
+            {"coefficients": _combination(r.coefficients), "constant": _finite(r.constant)} for r in result.redundancies
         ],
         "conditioning": _conditioning(result.conditioning),
         "predictions": _predictions(job, result),

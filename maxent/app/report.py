@@ -46,6 +46,4 @@ def render(record: Mapping[str, Any]) -> str:
         "redundancy": words.redundancy,
     }
     head, rows = words.charge_table(record)
-    return environment.get_template("report.html").render(
-        r=record, short=words.verdict(record), head=head, rows=rows
-    )
+    return environment.get_template("report.html").render(r=record, short=words.verdict(record), head=head, rows=rows)

@@ -17,6 +17,7 @@ from collections.abc import Callable, Mapping
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass
 from importlib import metadata
+from importlib.util import find_spec
 from pathlib import Path as File
 from typing import Any
 
@@ -90,7 +91,7 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
         from maxent.app.record import record as collect
 
         found = collect(config, job, result, asked_driver=asked, facts=sizes(job), versions=_versions())
-        _write(part, config, job, result, found)
+        _write(part, config, job, result, found, say)
         manifest = {
             "started": time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime(started)),
             "seconds": seconds | {"total": time.time() - started},
@@ -218,9 +219,7 @@ def _refuse_existing(target: File, force: bool) -> None:
     if not there:
         return
     if not force:
-        raise ConfigError(
-            f"{target}: exists already; choose another folder with --out, or replace it with --force"
-        )
+        raise ConfigError(f"{target}: exists already; choose another folder with --out, or replace it with --force")
     if not (target / "manifest.json").is_file():
         raise ConfigError(f"{target}: exists and is no run folder; --force replaces run folders only")
 
@@ -247,15 +246,20 @@ def _fit(config: Config, job: Job, driver: str) -> Any:
         raise config.error([((), str(bad))]) from bad
 
 
-def _write(part: File, config: Config, job: Job, result: Any, record: Mapping[str, Any]) -> None:
-    from maxent.app import arrays, report
+def _write(part: File, config: Config, job: Job, result: Any, record: Mapping[str, Any], say: Say) -> None:
+    from maxent.app import arrays
     from maxent.app.record import dump
 
     (part / "config.toml").write_bytes(config.data)
     (part / "result.json").write_text(dump(record), encoding="utf-8")
     probabilities = getattr(result.state, "probabilities", None)
     arrays.write(part / "result.nc", record, probabilities=probabilities, labels=job.labels)
-    (part / "report.html").write_text(report.render(record), encoding="utf-8")
+    if find_spec("jinja2") is None:
+        say("no report.html: it needs the package jinja2 (pip install 'maxent-states[report]')")
+        return
+    from maxent.app.report import render
+
+    (part / "report.html").write_text(render(record), encoding="utf-8")
 
 
 def _versions() -> dict[str, str]:
@@ -281,7 +285,7 @@ def sizes(job: Job) -> dict[str, str]:
         if n_alone:
             structure += f"; {plural(n_alone, 'further state')} on which the charges are numbers"
     else:
-        structure = f"the charges are numbers on all of the {plural(n_alone, 'state')}"
+        structure = f"the charges commute: numbers on each of the {plural(n_alone, 'state')}"
     # the charges as given, whitened, and in the eigenbasis
     need = 3 * (blocks.diagonal.nbytes + sum(a.nbytes for a in blocks.dense))
     return dict(job.facts) | {"blocks": structure, "memory": f"about {size_text(need)} for the fit"}

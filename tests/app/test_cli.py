@@ -132,17 +132,13 @@ except SystemExit as left:
 print("loaded", *(m for m in {HEAVY!r} if m in sys.modules))
 sys.exit(code)
 """
-    done = subprocess.run(
-        [sys.executable, "-c", script], capture_output=True, text=True, check=False, cwd=tmp_path
-    )
+    done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True, check=False, cwd=tmp_path)
     assert done.returncode == (0 if arguments[-1] in ("--help", "--version") else 2), done.stderr
     assert set(done.stdout.splitlines()[-1].split()[1:]) <= set(allowed)
 
 
 def test_python_dash_m_is_the_same_command():
-    done = subprocess.run(
-        [sys.executable, "-m", "maxent", "--help"], capture_output=True, text=True, check=True
-    )
+    done = subprocess.run([sys.executable, "-m", "maxent", "--help"], capture_output=True, text=True, check=True)
     assert words(done.stdout) == words(TOP)
     assert done.stderr == ""
 
@@ -247,10 +243,7 @@ def test_table_on_stdout_and_progress_on_stderr(tmp_path, capsys):
 
 
 def test_json_on_stdout_is_the_file(tmp_path, capsys):
-    assert (
-        main(["solve", str(CONFIGS / "jaynes_die.toml"), "--out", str(tmp_path / "out"), "--json", "--quiet"])
-        == 0
-    )
+    assert main(["solve", str(CONFIGS / "jaynes_die.toml"), "--out", str(tmp_path / "out"), "--json", "--quiet"]) == 0
     out, err = capsys.readouterr()
     assert err == ""
     assert out == (tmp_path / "out" / "result.json").read_text()

@@ -1,11 +1,16 @@
 """Bad configs and the lines they must give: every problem at once, each with its place."""
 
+import re
 from pathlib import Path
 
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from maxent.app.config import build, load
 from maxent.errors import ConfigError
+
+CONFIGS = Path(__file__).parents[2] / "configs"
 
 GOOD = """kind = "states"
 [charges]
@@ -130,6 +135,14 @@ b = 1
     ("a date for a number", GOOD.replace("2.2", "2020-01-01"), [
         "5: targets.spots: expected a number or 'from counts', got 2020-01-01",
     ]),
+    (
+        "numbers beyond all bounds",
+        GOOD.replace("2.2", "1" + "0" * 400).replace("2, 3", "2, 1e999"),
+        [
+            "3: charges.spots[2]: expected a finite number, got inf",
+            "5: targets.spots: a whole number too large to calculate with",
+        ],
+    ),
     ("defined twice", GOOD + "spots = 1\n", ["6: targets.spots: defined twice; first on line 5"]),
     ("table twice", GOOD + "[charges]\nx = [1]\n", ["6: charges: defined twice; first on line 2"]),
     ("cut inside a list", GOOD[:41], ["3: charges.spots: the file ends too early: invalid value"]),
@@ -169,6 +182,11 @@ b = 1
         "counts that are none",
         GOOD + "[counts]\nper_state = [1, 2.5, -1]\n",
         ["7: counts.per_state: counts must be whole numbers, none of them negative"],
+    ),
+    (
+        "too many counts",
+        GOOD + "[counts]\nper_state = [1e300, 1, 0]\n",
+        ["7: counts.per_state: more observations than can be counted exactly (2^53)"],
     ),
     (
         "too few counts",
@@ -264,7 +282,54 @@ def test_files_that_cannot_be_read(tmp_path):
         load(binary / "below.toml")
 
 
-@pytest.mark.parametrize("file", sorted(Path("configs").glob("*.toml")), ids=lambda f: f.name)
+@pytest.mark.parametrize("file", sorted(CONFIGS.glob("*.toml")), ids=lambda f: f.name)
 def test_shipped_configs_are_good(file):
     job = build(load(file))
     assert job.targets
+
+
+SCRAPS = [
+    "",
+    '"',
+    "[",
+    "]",
+    "{",
+    "=",
+    "\n",
+    "#",
+    "nan",
+    "inf",
+    "1e999",
+    "-1",
+    "true",
+    "x",
+    "[[]]",
+    "é",
+    "i",
+    "*",
+    "(",
+    "'",
+    "10" * 200,
+]
+SMALL = [(CONFIGS / f"{n}.toml").read_text() for n in ("wolf_dice", "edge", "unreachable")] + [
+    'kind = "operators"\ndims = [2]\n[charges]\nx = [[0, "1j"], ["-1j", 0]]\n[targets]\nx = 0.5\n'
+]
+
+
+@settings(max_examples=150, deadline=None)
+@given(data=st.data())
+def test_a_damaged_config_is_never_our_fault(tmp_path_factory, data):
+    text = data.draw(st.sampled_from(SMALL))
+    for _ in range(data.draw(st.integers(1, 3))):
+        start = data.draw(st.integers(0, len(text)))
+        stop = data.draw(st.integers(start, min(len(text), start + 12)))
+        text = text[:start] + data.draw(st.sampled_from(SCRAPS)) + text[stop:]
+    file = tmp_path_factory.mktemp("fuzz") / "c.toml"
+    file.write_text(text)
+    try:
+        build(load(file))
+    except ConfigError as bad:
+        last = text.count("\n") + 1
+        for line in str(bad).splitlines():
+            found = re.match(re.escape(str(file)) + r":(\d+): .", line)
+            assert found and 1 <= int(found[1]) <= last

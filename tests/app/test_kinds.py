@@ -57,9 +57,7 @@ def test_states_from_files_are_the_states_inline(tmp_path):
     np.save(tmp_path / "a.npy", a)
     np.savez(tmp_path / "more.npz", b=b, other=a)
     (tmp_path / "t.csv").write_text("# counted by hand\nstate,weight,n\none,0,3\ntwo,0.5,4\n\nthree,-inf,0\n")
-    filed = job(
-        tmp_path, STATES.format(a='"a.npy"', b='"more.npz:b"', weights='"t.csv:weight"', counts='"t.csv:n"')
-    )
+    filed = job(tmp_path, STATES.format(a='"a.npy"', b='"more.npz:b"', weights='"t.csv:weight"', counts='"t.csv:n"'))
     assert filed.targets == inline.targets
     assert set(filed.digests) == {"a.npy", "more.npz", "t.csv"}
     np.testing.assert_array_equal(filed.family.blocks.diagonal, inline.family.blocks.diagonal)
@@ -262,6 +260,7 @@ EXTRA = '"h[i]"\nextra = "Sq[i]"'
 
 # (what to replace in the good config, by what, how the line begins)
 BAD_SPINS = [
+    ("size = 4", "size = 1000000000000", "4: sites.size: 2^1000000000000 states fit into no machine"),
     ("size = 4", "size = 0", "4: sites.size: "),
     (
         "size = 4",
@@ -295,9 +294,7 @@ def test_bad_spins(tmp_path, monkeypatch, old, new, begin):
 
 def test_blocks_too_large_are_refused_before_they_are_made(tmp_path, monkeypatch):
     monkeypatch.setattr("maxent.memory.available_memory", lambda: 20 * 2**30)
-    text = (
-        SPINS.replace("size = 4", "size = 18").replace("w = [1.0, 2.0, 3.0, 4.0]\n", "").replace("w[i]*", "")
-    )
+    text = SPINS.replace("size = 4", "size = 18").replace("w = [1.0, 2.0, 3.0, 4.0]\n", "").replace("w[i]*", "")
     text = text.replace("[charges]", '[charges]\nx = "Sx[0]"').replace("[targets]", "[targets]\nx = 0")
     (line,) = problems(tmp_path, text)
     assert line.startswith("1: 262144 states in blocks of up to 262144 need ")

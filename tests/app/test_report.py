@@ -71,9 +71,7 @@ def test_the_page_needs_nothing_else(runs):
         page = Page((run.folder / "report.html").read_text())
         assert not {"script", "link", "img", "iframe", "object"} & set(page.tags)
         assert not [value for key, value in page.attributes if key in ("src", "href") or key.startswith("on")]
-        assert (
-            "@import" not in "".join(page.rawdata) and "url(" not in (run.folder / "report.html").read_text()
-        )
+        assert "@import" not in "".join(page.rawdata) and "url(" not in (run.folder / "report.html").read_text()
 
 
 def test_the_page_says_what_the_result_says(runs, record):

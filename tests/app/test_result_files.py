@@ -89,9 +89,7 @@ def test_infeasible_and_its_certificate(runs):
     certificate = found["certificate"]
     assert certificate["kind"] == "outside" and certificate["verified"]
     levels = np.arange(4.0)
-    combination = (
-        certificate["direction"]["energy"] * levels + certificate["direction"]["energy_squared"] * levels**2
-    )
+    combination = certificate["direction"]["energy"] * levels + certificate["direction"]["energy_squared"] * levels**2
     asked = certificate["direction"]["energy"] * 1.5 + certificate["direction"]["energy_squared"] * 2.1
     assert combination.min() == pytest.approx(certificate["lowest"], abs=1e-14)
     assert certificate["margin"] == pytest.approx(combination.min() - asked, abs=1e-14)
@@ -121,9 +119,7 @@ def test_arrays_are_those_of_the_json(runs, name):
         for key in ("target", "value", "residual", "multiplier", "multiplier_error"):
             expected = np.array([c[key] for c in found["charges"]], dtype=float)
             np.testing.assert_array_equal(run.variables[key][:], expected)
-        np.testing.assert_array_equal(
-            run.variables["covariance"][:], np.array(found["covariance"], dtype=float)
-        )
+        np.testing.assert_array_equal(run.variables["covariance"][:], np.array(found["covariance"], dtype=float))
         if found["predictions"]:
             expected = np.array([p["value"] for p in found["predictions"]], dtype=float)
             np.testing.assert_array_equal(run.variables["prediction_value"][:], expected)

@@ -25,9 +25,7 @@ def solve(config, *more):
     return main(["solve", str(config), "--quiet", *map(str, more)])
 
 
-@pytest.mark.parametrize(
-    "config", ["wolf_dice", "unreachable", "edge", "noncommuting_spins", "xxz_ring_quench"]
-)
+@pytest.mark.parametrize("config", ["wolf_dice", "unreachable", "edge", "noncommuting_spins", "xxz_ring_quench"])
 def test_rerun_is_byte_identical_except_for_the_manifest(runs, tmp_path, config):
     solve(runs[config].config, "--out", tmp_path / "again")
     first, again = tree(runs[config].folder), tree(tmp_path / "again")
@@ -43,9 +41,7 @@ def test_manifest_tells_versions_times_and_digests(runs):
     assert {"maxent", "numpy", "scipy", "jax", "python"} <= set(manifest["versions"])
     assert set(manifest["seconds"]) == {"build", "fit", "total"}
     assert manifest["seed"] is None
-    assert manifest["files"] == {
-        f: sha256((base / f).read_bytes()).hexdigest() for f in FILES - {"manifest.json"}
-    }
+    assert manifest["files"] == {f: sha256((base / f).read_bytes()).hexdigest() for f in FILES - {"manifest.json"}}
 
 
 def test_default_folder_is_named_after_the_config(tmp_path, monkeypatch, capsys):
@@ -157,3 +153,10 @@ def test_the_name_changes_with_all_that_may_change_the_result_and_with_nothing_e
         named('title = "x"\n' + text),
     ]
     assert len({first, *others}) == 5
+
+
+def test_without_the_template_library_there_is_all_but_the_page(tmp_path, capsys, monkeypatch):
+    monkeypatch.setattr("maxent.app.run.find_spec", lambda name: None)
+    assert main(["solve", str(CONFIGS / "jaynes_die.toml"), "--out", str(tmp_path / "out")]) == 0
+    assert "no report.html: it needs the package jinja2" in capsys.readouterr().err
+    assert set(tree(tmp_path / "out")) == FILES - {"report.html"}

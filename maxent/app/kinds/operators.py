@@ -39,9 +39,7 @@ class Options:
     )
     dims: list[int] | None = field(
         default=None,
-        metadata=says(
-            "Dimensions of the parts of the space, first one slowest; their product is the dimension."
-        ),
+        metadata=says("Dimensions of the parts of the space, first one slowest; their product is the dimension."),
     )
     log_prior: list[list[float | str]] | str | None = field(
         default=None,
@@ -105,9 +103,7 @@ def build(options: Options, folder: File) -> Job:
                 f"the product of the dimensions is {prod(options.dims)}, but {first} is {size} x {size}",
             )
     problems.raise_any()
-    facts = {
-        "space": f"dimension {size}" + (f" = {' x '.join(map(str, options.dims))}" if options.dims else "")
-    }
+    facts = {"space": f"dimension {size}" + (f" = {' x '.join(map(str, options.dims))}" if options.dims else "")}
     if prior is not None:
         facts["prior"] = "given; the state is pulled towards it"
     if files.digests:
@@ -115,19 +111,14 @@ def build(options: Options, folder: File) -> Job:
     from maxent.families import Matrices
 
     family = Matrices(charges, dims=None if options.dims is None else tuple(options.dims), log_prior=prior)
-    targets = {
-        name: Target(float(options.targets[name]), accuracy=options.accuracy.get(name, 0.0))
-        for name in charges
-    }
+    targets = {name: Target(float(options.targets[name]), accuracy=options.accuracy.get(name, 0.0)) for name in charges}
     return Job(family, targets, predictions, facts, digests=files.digests)
 
 
 def _inline(rows: list[list[float | str]]) -> np.ndarray:
     """Turn rows of numbers and complex numbers written as text into a matrix."""
     if not rows or any(len(row) != len(rows) for row in rows):
-        raise ValueError(
-            f"not square: {plural(len(rows), 'row')} of lengths {sorted({len(r) for r in rows})}"
-        )
+        raise ValueError(f"not square: {plural(len(rows), 'row')} of lengths {sorted({len(r) for r in rows})}")
     out = np.zeros((len(rows), len(rows)), dtype=complex)
     for i, row in enumerate(rows):
         for k, entry in enumerate(row):

@@ -43,9 +43,7 @@ class Start:
     __pydantic_config__ = _STRICT
 
     theta: float | list[float] | str = field(
-        metadata=says(
-            "Polar angle: a number, a pattern that repeats, or a formula in `i`, `L` and the parameters."
-        )
+        metadata=says("Polar angle: a number, a pattern that repeats, or a formula in `i`, `L` and the parameters.")
     )
     phi: float | list[float] | str = field(
         default=0.0, metadata=says('Azimuth, written in the same three ways, e.g. `"2*pi*i/L"`.')
@@ -69,9 +67,7 @@ class Options:
     )
     densities: dict[str, str] = field(
         default_factory=dict,
-        metadata=says(
-            "Name -> formula with one free subscript; other formulas may use it shifted, `h[i+1]`."
-        ),
+        metadata=says("Name -> formula with one free subscript; other formulas may use it shifted, `h[i+1]`."),
     )
     start: Start | None = field(default=None, metadata=says("Product state that gives targets."))
     accuracy: dict[str, float] = field(
@@ -105,6 +101,9 @@ def build(options: Options, folder: File) -> Job:
     from maxent import lattice
 
     problems = Problems()
+    if options.sites.size > 100:
+        problems.add(("sites", "size"), f"2^{options.sites.size} states fit into no machine")
+        problems.raise_any()
     geometry: Any = {"ring": lattice.Ring, "chain": lattice.Chain}[options.sites.geometry]
     try:
         sites = geometry(options.sites.size)
@@ -114,9 +113,7 @@ def build(options: Options, folder: File) -> Job:
     _refuse_too_large(options, problems)
     operators = _Formulas(options, sites, problems)
     charges = {name: operators.read(("charges", name), text) for name, text in options.charges.items()}
-    predictions = {
-        name: operators.read(("predictions", name), text) for name, text in options.predictions.items()
-    }
+    predictions = {name: operators.read(("predictions", name), text) for name, text in options.predictions.items()}
     start = None
     if options.start is not None:
         start = _start(options, sites, problems)
@@ -204,9 +201,7 @@ def _refuse_too_large(options: Options, problems: Problems) -> None:
     """Refuse sizes for which not even the diagonals of the charges fit: given, shifted and whitened."""
     size, count = options.sites.size, len(options.charges)
     try:
-        require_memory(
-            3 * 8 * count * 2**size, f"2^{size} states need at least {{need}} for {plural(count, 'charge')}"
-        )
+        require_memory(3 * 8 * count * 2**size, f"2^{size} states need at least {{need}} for {plural(count, 'charge')}")
     except ResourceError as bad:
         problems.add(("sites", "size"), str(bad))
         problems.raise_any()

@@ -91,12 +91,9 @@ def build(options: Options, folder: File) -> Job:
     """
     problems = Problems()
     files = Files(folder)
-    charges = {
-        name: _array(files, problems, ("charges", name), value) for name, value in options.charges.items()
-    }
+    charges = {name: _array(files, problems, ("charges", name), value) for name, value in options.charges.items()}
     predictions = {
-        name: _array(files, problems, ("predictions", name), value)
-        for name, value in options.predictions.items()
+        name: _array(files, problems, ("predictions", name), value) for name, value in options.predictions.items()
     }
     weights = _array(files, problems, ("log_weights",), options.log_weights, drop=True)
     prior = _array(files, problems, ("log_prior",), options.log_prior, drop=True)
@@ -211,6 +208,8 @@ def _check_counts(problems: Problems, counts: np.ndarray) -> None:
         problems.add(path, "counts must be whole numbers, none of them negative")
     elif counts.sum() < 2:
         problems.add(path, "at least two observations are needed")
+    elif counts.sum() > 2**53:
+        problems.add(path, "more observations than can be counted exactly (2^53)")
 
 
 def _target(given: float | str, values: np.ndarray, counts: np.ndarray | None, accuracy: float) -> Target:
@@ -222,6 +221,9 @@ def _target(given: float | str, values: np.ndarray, counts: np.ndarray | None, a
     if counts is None or not isinstance(given, str):
         return Target(float(given), accuracy=accuracy)
     total = float(counts.sum())
-    mean = math.fsum(counts * values) / total
-    variance = math.fsum(counts * (values - mean) ** 2) / (total - 1)
-    return Target(mean, f"mean of {plural(int(total), 'observation')}", math.sqrt(variance / total), accuracy)
+    exponent = math.frexp(np.abs(values).max())[1]
+    scaled = np.ldexp(values, -exponent)  # exact, and no square can overflow
+    mean = math.fsum(counts * scaled) / total
+    variance = math.fsum(counts * (scaled - mean) ** 2) / (total - 1)
+    sigma = math.ldexp(math.sqrt(variance / total), exponent)
+    return Target(math.ldexp(mean, exponent), f"mean of {plural(int(total), 'observation')}", sigma, accuracy)
