@@ -67,8 +67,8 @@ def evaluate_by_derivatives(family: Family, lam: Any) -> Evaluation:
     else:
         log_z, gradient, hessian = _derivatives(family, lam)
     xp = np if host else jnp
-    # the exponent itself is not seen from here; its size is bounded by the sizes of the charges
-    level = xp.maximum(xp.abs(log_z), xp.abs(lam) @ xp.asarray(family.scale))
+    # the exponent itself is not seen from here; on the states that matter it is of the size of these two
+    level = xp.abs(log_z) + xp.abs(lam @ gradient)
     size = xp.sqrt(xp.linalg.matrix_norm(hessian)) if len(lam) else 0.0
     rounding = 4 * EPS * (1 + level) * xp.maximum(1.0, size)
     return Evaluation(log_z, -gradient, 0.5 * (hessian + hessian.T), rounding, level)

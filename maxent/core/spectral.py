@@ -25,7 +25,8 @@ def divided_differences(levels: Any, weights: Any) -> Any:
     """Divided differences of ``exp(-E)`` over pairs of levels, normalised as the weights are.
 
     ``K_ab = integral_0^1 p_a^(1-s) p_b^s ds = max(p_a, p_b) (1 - exp(-|d|))/|d|`` with ``d = E_a - E_b``; the
-    weights of the Kubo-Mori inner product (Petz, "Geometry of canonical correlation", J. Math. Phys. 35, 780 (1994), from memory).
+    weights of the Kubo-Mori inner product (D. Petz, J. Math. Phys. 35, 780 (1994),
+    from memory).
 
     Parameters
     ----------

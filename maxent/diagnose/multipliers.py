@@ -38,7 +38,8 @@ def user_multipliers(outcome: Outcome) -> Multipliers:
     """Multipliers of the outcome's last iterate, ``lam = T^T x``, of least norm.
 
     The error is ``|T^T V/h| |V^T| (|T| (n + t) + eps (1 + |lam.A|))`` with the axes V and curvatures h of the
-    covariance; against known solutions the ratio of true to predicted error was 0.05 in the median and 2.7 at most (4469 cases).
+    covariance; against known solutions the ratio of true to predicted error was 0.05 in the median and 2.7 at most
+    (4469 cases).
     """
     w, at = outcome.whitening, outcome.at
     if at is None or not w.rank:

@@ -64,8 +64,8 @@ def _boundary(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float)
     chain = f" after {depth} faces" if depth > 1 else ""
     return (
         f"On the boundary of what any state can reach, to the accuracy of the inputs (margin {o.margin:.0e}, "
-        f"resolvable {o.tolerance:.0e}): no finite multipliers; limit state on a {dimension:.0f}-dimensional face{chain}, "
-        f"exposing combination {combination_text(names, o.direction)}."
+        f"resolvable {o.tolerance:.0e}): no finite multipliers; limit state on a {dimension:.0f}-dimensional "
+        f"face{chain}, exposing combination {combination_text(names, o.direction)}."
     )
 
 
@@ -83,8 +83,9 @@ def _infeasible(names: Sequence[str], o: Outcome, m: Multipliers, replayed: floa
 def _inconsistent(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -> str:
     assert o.direction is not None
     return (
-        f"The targets contradict one another: {combination_text(names, o.direction)} is the same number in every state, "
-        f"and the targets miss it by {o.margin:.3g} (resolvable {o.tolerance:.0e}); drop or correct one of these targets."
+        f"The targets contradict one another: {combination_text(names, o.direction)} is the same number in every "
+        f"state, and the targets miss it by {o.margin:.3g} (resolvable {o.tolerance:.0e}); drop or correct one of "
+        "these targets."
     )
 
 

@@ -274,7 +274,7 @@ def _sorted(q: sp.csr_array, order: np.ndarray) -> sp.csr_array:
 
 
 def _block(q: sp.csr_array, start: int, stop: int) -> Any:
-    """Diagonal block of a block-diagonal matrix, dense when small: there sparse bookkeeping costs more than it saves."""
+    """Diagonal block of a block-diagonal matrix: dense when small, where bookkeeping costs more than it saves."""
     pointer = q.indptr[start : stop + 1]
     data, column = q.data[pointer[0] : pointer[-1]], q.indices[pointer[0] : pointer[-1]] - start
     d = stop - start

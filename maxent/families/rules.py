@@ -21,6 +21,8 @@ __all__ = ["GrownMicrostates", "GrownState", "Rule", "ratio_tail"]
 
 #: Lists are not grown beyond this many states; what is lost then is carried as an error.
 LONGEST = 1 << 22
+#: Every list starts with this many.
+SHORTEST = 256
 
 
 class Rule(Protocol):
@@ -71,7 +73,7 @@ class _List:
 
     def __init__(self, rule: Rule):
         self.rule = rule
-        self.values, self.log_weights = self._take(0, 256)
+        self.values, self.log_weights = self._take(0, SHORTEST)
 
     def _take(self, first: int, stop: int) -> tuple[np.ndarray, np.ndarray]:
         values, log_weights = self.rule.states(first, stop)
@@ -88,15 +90,14 @@ class _List:
             )
         return values, weights
 
-    def grow(self) -> bool:
-        """Twice as many states; False when the list is as long as it may be."""
-        n = self.values.shape[1]
-        if n >= LONGEST:
-            return False
-        values, weights = self._take(n, 2 * n)
-        self.values = np.concatenate([self.values, values], axis=1)
-        self.log_weights = np.concatenate([self.log_weights, weights])
-        return True
+    def first(self, n: int) -> tuple[np.ndarray, np.ndarray]:
+        """Charges (m, n) and log weights (n,) of the first n states."""
+        while self.values.shape[1] < n:
+            have = self.values.shape[1]
+            values, weights = self._take(have, 2 * have)
+            self.values = np.concatenate([self.values, values], axis=1)
+            self.log_weights = np.concatenate([self.log_weights, weights])
+        return self.values[:, :n], self.log_weights[:n]
 
 
 @dataclass(frozen=True, eq=False)
@@ -134,42 +135,50 @@ class GrownMicrostates(Family):
     def _user(self, lam: np.ndarray) -> np.ndarray:
         return self.transform.T @ lam
 
-    def _blocks(self) -> Blocks:
-        return Blocks(self.transform @ self.listed.values - self.offset[:, None], prior=self.listed.log_weights)
+    def _blocks(self, n: int) -> Blocks:
+        values, log_weights = self.listed.first(n)
+        return Blocks(self.transform @ values - self.offset[:, None], prior=log_weights)
 
-    def _lost(self, lam: np.ndarray, log_z: float) -> tuple[float, np.ndarray]:
-        """What the list leaves out, relative to Z: of Z itself, and of each value (m,) with its square."""
-        n = self.listed.values.shape[1]
+    def _lost(self, lam: np.ndarray, log_z: float, n: int) -> tuple[float, np.ndarray]:
+        """What n states leave out, relative to Z: of Z itself, and of each value (m,) together with its square."""
         user = self._user(lam)
         shift = float(lam @ self.offset) - log_z
-        tails = [np.exp(min(self.rule.log_tail(user, n, k) + shift, 700.0)) for k in (0, 1, 2)]
+        tails = [np.exp(min(self.rule.log_tail(user, n, k) + shift, 300.0)) for k in (0, 1, 2)]
         reach, off = np.abs(self.transform).sum(axis=1), np.abs(self.offset)
         first = reach * tails[1] + off * tails[0]
         second = 2 * (reach**2 * tails[2] + off**2 * tails[0])
         return tails[0], np.maximum(first, np.sqrt(second * EPS))
 
-    def evaluate(self, lam: Any, order: int = 2) -> Evaluation:
-        """``ln Z``, values and covariance on a list long enough; ``+inf`` where the tail has no finite bound."""
-        if namespace(lam) is not np:
-            return self._blocks().evaluate(lam, order)
-        while True:
-            blocks = self._blocks()
-            ev = blocks.evaluate(lam, order)
-            with np.errstate(over="ignore", invalid="ignore"):
-                lost, error = self._lost(lam, float(ev.log_partition))
-            small = EPS * (1 + ev.level)
-            if lost <= small and np.all(error <= small * np.maximum(1.0, np.abs(ev.values))):
-                return Evaluation(ev.log_partition, ev.values, ev.covariance, ev.rounding, ev.level, error, ev.factor)
-            if not self.listed.grow():
+    def _length(self, lam: np.ndarray) -> int:
+        """Number of states after which the stated tail is below rounding, before any more of them are listed."""
+        # Z only grows with the list, so judging the tail against a short one is on the safe side
+        short = self._blocks(SHORTEST).evaluate(lam, 1)
+        n = SHORTEST
+        while n < LONGEST:
+            lost, error = self._lost(lam, float(short.log_partition), n)
+            small = EPS * (1 + short.level)
+            if lost <= small and np.all(error <= small * np.maximum(1.0, np.abs(short.values))):
                 break
-        m = len(lam)
-        if not np.all(np.isfinite(error)) or lost > 1e-3 or error.max() > 1e-3 * (1 + np.abs(ev.values).max()):
-            return Evaluation(np.inf, np.full(m, np.nan), np.eye(m), np.inf, np.inf)
+            n *= 2
+        return n
+
+    def evaluate(self, lam: Any, order: int = 2) -> Evaluation:
+        """``ln Z``, values and covariance on a list long enough; ``+inf`` where the tail has no small bound."""
+        if namespace(lam) is not np:
+            return self._blocks(self.listed.values.shape[1]).evaluate(lam, order)
+        n, m = self._length(lam), len(lam)
+        outside = Evaluation(np.inf, np.full(m, np.nan), np.eye(m), np.inf, np.inf)
+        if not np.isfinite(self.rule.log_tail(self._user(lam), n, 2)):
+            return outside
+        ev = self._blocks(n).evaluate(lam, order)
+        lost, error = self._lost(lam, float(ev.log_partition), n)
+        if lost > 1e-3 or error.max(initial=0.0) > 1e-3 * (1 + np.abs(ev.values).max(initial=0.0)):
+            return outside
         return Evaluation(ev.log_partition, ev.values, ev.covariance, ev.rounding, ev.level, error, ev.factor)
 
     def log_partition(self, lam: Any) -> Any:
         """``ln Z`` on the list as long as it is now, traceable by JAX."""
-        return self._blocks().log_partition(lam)
+        return self._blocks(self.listed.values.shape[1]).log_partition(lam)
 
     # ------------------------------------------------------------------ questions of the verdict logic
 
@@ -196,53 +205,48 @@ class GrownMicrostates(Family):
             matrix @ self.offset + offset, self.listed,
         )  # fmt: skip
 
-    def _least(self, v: np.ndarray) -> tuple[float, float]:
-        """Lowest value of ``v.Q`` and the size of the numbers it was computed from."""
-        user = self._user(v)
+    def _heights(self, v: np.ndarray) -> tuple[np.ndarray, float]:
+        """``v.Q`` on a list whose tail lies above its minimum, and the lower bound of that tail."""
+        user, shift, n = self._user(v), float(v @ self.offset), SHORTEST
         while True:
-            height = user @ self.listed.values
-            listed, tail = float(height.min()), float(self.rule.lowest(user, height.size))
-            if tail >= listed or tail == -np.inf or not self.listed.grow():
-                size = abs(listed) + abs(v) @ np.abs(self.offset) + np.abs(height[: np.argmin(height) + 1]).max()
-                return min(listed, tail) - float(v @ self.offset), float(size)
+            height = user @ self.listed.first(n)[0]
+            tail = float(self.rule.lowest(user, n))
+            least = float(height.min())
+            # one more doubling leaves a gap between the face and the tail
+            if tail > least + 1e-9 * np.abs(height).max() or tail == -np.inf or n >= LONGEST:
+                return height - shift, tail - shift
+            n *= 2
 
     def lowest(self, v: np.ndarray, *, with_values: bool = False) -> Lowest:
         """Lowest value of ``v.Q`` over listed states and the stated bound of the tail."""
-        low, size = self._least(v)
-        high, _ = self._least(-v)
+        height, tail = self._heights(v)
+        below, ceiling = self._heights(-v)
+        low, high = min(float(height.min()), tail), -min(float(below.min()), ceiling)
         values = None
         if with_values and np.isfinite(low):
-            i = int(np.argmin(self._user(v) @ self.listed.values))
-            values = self.transform @ self.listed.values[:, i] - self.offset
-        return Lowest(low, -high, EPS * size if np.isfinite(low) else 0.0, values)
+            values = self._blocks(len(height)).diagonal[:, int(np.argmin(height))]
+        size = np.abs(height[: int(np.argmin(height)) + 1]).max() + np.abs(v) @ np.abs(self.offset)
+        return Lowest(low, high, EPS * float(size) if np.isfinite(low) else 0.0, values)
 
     def face(self, v: np.ndarray, tol: float) -> Face | None:
         """The listed states of lowest ``v.Q``, when the tail lies above them."""
-        height = self._user(v) @ self.listed.values - float(v @ self.offset)
+        height, tail = self._heights(v)
         spread = np.abs(height).max()
         cut = max(10 * tol, 1e-12 * spread)
         keep = np.flatnonzero(height <= cut)
-        above = self.rule.lowest(self._user(v), height.size) - float(v @ self.offset)
-        if not len(keep) or len(keep) == height.size or above <= cut:
+        if not len(keep) or len(keep) == len(height) or tail <= cut:
             return None
-        charges = self.transform @ self.listed.values[:, keep] - self.offset[:, None]
-        family = Microstates(
-            {str(j): row for j, row in enumerate(charges)}, log_weights=self.listed.log_weights[keep]
-        ) if len(charges) else Microstates({}, log_weights=self.listed.log_weights[keep])  # fmt: skip
-        gap = float(np.delete(height, keep).min() / spread)
-        return Face(
-            family,
-            gap,
-            float(np.log(len(keep))),
-            exact=True,
-            width=float(np.abs(height[keep]).max() / spread),
-        )
+        blocks = self._blocks(len(height))
+        rows = {str(j): row for j, row in enumerate(blocks.diagonal[:, keep])}
+        family = Microstates(rows, log_weights=None if blocks.prior is None else blocks.prior[keep])
+        gap = float(min(np.delete(height, keep).min(), tail) / spread)
+        return Face(family, gap, float(np.log(len(keep))), exact=True, width=float(np.abs(height[keep]).max() / spread))
 
     def sharpen(self, v: np.ndarray) -> Iterable[np.ndarray]:
-        """Normals of candidate faces of the listed states."""
+        """Normals of candidate faces of the first states."""
         from maxent.core.polish import normal_directions
 
-        return normal_directions(self.transform @ self.listed.values - self.offset[:, None], v)
+        return normal_directions(self._blocks(len(self._heights(v)[0])).diagonal, v)
 
     def domain(self) -> np.ndarray | None:
         """Edges of the region where the sum converges with finite slope."""
@@ -251,8 +255,8 @@ class GrownMicrostates(Family):
 
     def state(self, lam: Any) -> GrownState:
         """The state on a list long enough for `lam`."""
-        self.evaluate(np.asarray(lam, float), 1)
-        b = self._blocks()
+        lam = np.asarray(lam, float)
+        b = self._blocks(self._length(lam))
         charges = {str(j): row for j, row in enumerate(b.diagonal)}
         inner = Microstates(charges, log_weights=b.prior).state(lam)
         return GrownState(inner, inner.log_partition, inner.entropy)
