@@ -83,23 +83,20 @@ def commuting(rng, index: int) -> Draft:
 
 def blocks(rng, index: int) -> Draft:
     """Block-diagonal charges in shuffled order, handed over as sparse matrices; lam known by construction."""
+    is_complex = bool(index % 2)
     sizes = rng.integers(1, 6, size=3 + index % 4)
-    d, m = int(sizes.sum()), int(rng.integers(2, 5))
+    d, m = int(sizes.sum()), int(rng.integers(1, len(sizes)))  # levels of the blocks alone tell m charges apart
     order = rng.permutation(d)
-    dense = np.array(
-        [
-            _direct_sum([pieces.hermitian(rng, k, is_complex=bool(index % 2)) for k in sizes])[np.ix_(order, order)]
-            for _ in range(m)
-        ]
-    )
+
+    def charge() -> np.ndarray:
+        parts = [pieces.hermitian(rng, k, is_complex=is_complex) + rng.standard_normal() * np.eye(k) for k in sizes]
+        return scipy.sparse.block_diag(parts).toarray()[np.ix_(order, order)]
+
+    dense = np.array([charge() for _ in range(m)])
     lam = pieces.multipliers(rng, dense, rng.uniform(0.5, 6))
     draft = from_multipliers(dense, lam, f"blocks {sizes.tolist()}")
     kinds = (scipy.sparse.csr_matrix, scipy.sparse.csc_array, scipy.sparse.coo_matrix)
     return draft.change(charges=tuple(kinds[index % 3](a) for a in dense))
-
-
-def _direct_sum(parts) -> np.ndarray:
-    return np.asarray(scipy.sparse.block_diag(parts).toarray())
 
 
 def lattice(rng, index: int) -> Draft:
