@@ -1,0 +1,14 @@
+"""Fixtures of every test: a seeded generator and deterministic hypothesis.  Nothing here touches JAX's precision."""
+
+import numpy as np
+import pytest
+from hypothesis import settings
+
+settings.register_profile("house", deadline=None, derandomize=True, database=None)
+settings.load_profile("house")
+
+
+@pytest.fixture
+def rng() -> np.random.Generator:
+    """The same numbers in every run, whatever the order of the tests."""
+    return np.random.default_rng(20260101)
