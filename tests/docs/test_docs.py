@@ -16,7 +16,7 @@ FLAGS = doctest.NORMALIZE_WHITESPACE | doctest.ELLIPSIS
 
 BLOCK = re.compile(r"^```python\n(.*?)^```$", re.S | re.M)
 FENCED = re.compile(r"^```.*?^```$", re.S | re.M)
-LINK = re.compile(r"\[[^\]\n]*\]\(([^)\s]+)\)")
+LINK = re.compile(r"\[[^\]]*\]\(([^)\s]+)\)")
 #: `maxent/core/decide.py`, `tests/app/`: paths that are named without a link
 NAMED = re.compile(r"`((?:maxent|tests|docs|configs|benchmarks|\.ci)/[\w./-]*)`")
 
