@@ -173,7 +173,7 @@ def folder(target: File, *, force: bool):
     Raises
     ------
     ConfigError
-        If it cannot be made, before any work is done.
+        If it cannot be made, before any work is done; or if the disk fails later.
     """
     _refuse_existing(target, force)
     made = []
@@ -190,9 +190,11 @@ def folder(target: File, *, force: bool):
     try:
         yield part
         _put(part, target)
-    except BaseException:
+    except BaseException as bad:
         shutil.rmtree(part, ignore_errors=True)
         _remove_empty(made)
+        if isinstance(bad, OSError):
+            raise ConfigError(f"{target}: cannot be written: {bad.strerror or bad}") from bad
         raise
 
 

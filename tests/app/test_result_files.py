@@ -10,8 +10,10 @@ import pytest
 from scipy.io import netcdf_file
 
 from maxent.app import kinds
+from maxent.app.cli import main
 from maxent.app.config import Header, build, load
 from maxent.app.reference import fields_table, keys, table, update
+from maxent.result import Check
 
 DOCS = Path(__file__).parents[2] / "docs"
 SCHEMA = json.loads(files("maxent.app").joinpath("schema/result.schema.json").read_text())
@@ -94,6 +96,13 @@ def test_infeasible_and_its_certificate(runs):
     assert combination.min() == pytest.approx(certificate["lowest"], abs=1e-14)
     assert certificate["margin"] == pytest.approx(combination.min() - asked, abs=1e-14)
     assert found["charges"][0]["value"] is None and found["entropy"] is None
+
+
+def test_certificates_are_recomputed(tmp_path, runs, monkeypatch):
+    doubt = Check(False, 0.0, 0.0, 0.0, 0.0)
+    monkeypatch.setattr("maxent.result.Certificate.verify", lambda self, family, targets: doubt)
+    main(["solve", str(runs["unreachable"].config), "--out", str(tmp_path / "out"), "--quiet"])
+    assert json.loads((tmp_path / "out" / "result.json").read_text())["certificate"]["verified"] is False
 
 
 def test_spiral_targets_carry_an_energy_current(runs):

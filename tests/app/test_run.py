@@ -101,6 +101,23 @@ def test_force_keeps_the_old_folder_when_the_new_run_fails(tmp_path, monkeypatch
     assert tree(tmp_path) == before
 
 
+def test_a_disk_that_fails_at_the_last_step_costs_nothing(tmp_path, monkeypatch, capsys):
+    out = tmp_path / "out"
+    assert solve(CONFIGS / "jaynes_die.toml", "--out", out) == 0
+    before = tree(tmp_path)
+    rename = Path.rename
+
+    def failing(self, to):
+        if Path(to) == out and not self.name.endswith(".old"):
+            raise OSError(28, "No space left on device")
+        return rename(self, to)
+
+    monkeypatch.setattr(Path, "rename", failing)
+    assert solve(CONFIGS / "jaynes_die.toml", "--out", out, "--force") == 2
+    assert capsys.readouterr().err == f"{out}: cannot be written: No space left on device\n"
+    assert tree(tmp_path) == before
+
+
 def test_a_folder_that_cannot_be_written_is_one_line_before_the_fit(tmp_path, capsys, monkeypatch):
     (tmp_path / "file").write_text("no folder")
     monkeypatch.setattr("maxent.app.run._fit", lambda *args: pytest.fail("work was done"))
