@@ -299,16 +299,18 @@ class Blocks(Family):
 
     def combine(self, matrix: np.ndarray, offset: np.ndarray) -> Blocks:
         """Blocks of the charges ``matrix @ Q - offset``."""
-        same = matrix.shape[0] == matrix.shape[1] and np.array_equal(matrix, np.eye(len(matrix)))
+        xp = namespace(matrix)
+        host = xp is np and isinstance(offset, np.ndarray)
+        same = host and matrix.shape[0] == matrix.shape[1] and np.array_equal(matrix, np.eye(len(matrix)))
         diagonal = (self.diagonal if same else matrix @ self.diagonal) - offset[:, None]
         dense = []
         for a in self.dense:
             if same:
                 new = a.copy()
             else:
-                new = (matrix @ a.reshape(a.shape[0], -1)).reshape(matrix.shape[0], *a.shape[1:])
+                new = xp.reshape(matrix @ xp.reshape(a, (a.shape[0], -1)), (matrix.shape[0], *a.shape[1:]))
                 # entries (i, j) and (j, i) round differently, and large coefficients make that visible
-                new = 0.5 * (new + new.conj().transpose(0, 2, 1))
+                new = 0.5 * (new + xp.conj(xp.permute_dims(new, (0, 2, 1))))
             dense.append(on_diagonal(new, -offset))
         return Blocks(diagonal, tuple(dense), self.prior, self.prior_dense)
 

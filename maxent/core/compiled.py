@@ -23,23 +23,38 @@ __all__ = ["evaluate_by_derivatives", "minimise", "register"]
 T = TypeVar("T")
 
 
-def register(*static: str) -> Any:
-    """Class decorator: make a dataclass a pytree whose fields are leaves, except those named `static`.
+class _Held:
+    """Something that rides along in a pytree without being an array; equal to itself alone."""
 
+    def __init__(self, value: Any):
+        self.value = value
+
+    def __eq__(self, other: object) -> bool:
+        return isinstance(other, _Held) and other.value is self.value
+
+    def __hash__(self) -> int:
+        return id(self.value)
+
+
+def register(*static: str, held: tuple[str, ...] = ()) -> Any:
+    """Class decorator: make a dataclass a pytree whose fields are leaves.
+
+    Fields named `static` are compared by value, those `held` (sparse matrices, Python objects) by identity.
     Rebuilding sets the fields and nothing else: constructors validate, and a trace has nothing to validate.
     """
 
     def apply(cls: type[T]) -> type[T]:
         names = [f.name for f in fields(cls)]  # type: ignore[arg-type]
-        leaves = [n for n in names if n not in static]
+        leaves = [n for n in names if n not in static + held]
 
         def take_apart(x: T) -> tuple[list[Any], tuple[Any, ...]]:
-            return [getattr(x, n) for n in leaves], tuple(getattr(x, n) for n in static)
+            aux = (*(getattr(x, n) for n in static), *(_Held(getattr(x, n)) for n in held))
+            return [getattr(x, n) for n in leaves], aux
 
         def rebuild(aux: tuple[Any, ...], children: Any) -> T:
             x = object.__new__(cls)
-            for name, value in (*zip(leaves, children, strict=True), *zip(static, aux, strict=True)):
-                object.__setattr__(x, name, value)
+            for name, value in (*zip(leaves, children, strict=True), *zip(static + held, aux, strict=True)):
+                object.__setattr__(x, name, value.value if isinstance(value, _Held) else value)
             return x
 
         jax.tree_util.register_pytree_node(cls, take_apart, rebuild)

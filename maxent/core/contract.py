@@ -205,6 +205,10 @@ class Family:
         """Multipliers to start from, a point of the domain."""
         return np.zeros(len(self.scale))
 
+    def traced(self) -> Family:
+        """What compiled code needs of the family: a pytree of arrays, without names and places."""
+        return self
+
     def glance(self, v: np.ndarray) -> float:
         """Cheap upper bound of ``lowest(v).value``; spares the decomposition when `v` cannot separate anything."""
         return np.inf

@@ -88,7 +88,7 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
     if memo.driver == "jax":
         from maxent.core.compiled import minimise
 
-        lam, memo.iterations = minimise(memo.family, memo.here.lam)
+        lam, memo.iterations = minimise(memo.family.traced(), memo.here.lam)
         memo.at = begin(memo.family.evaluate, lam)
     best, lowest, stalled = np.inf, np.inf, 0
     for count in range(LIMIT):

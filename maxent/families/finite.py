@@ -50,6 +50,10 @@ class Finite(Family):
         """Infinite-temperature means (m,) and charges minus mean as rows (m, p)."""
         return self.blocks.reference()
 
+    def traced(self) -> Family:
+        """The blocks alone."""
+        return self.blocks
+
     def start(self) -> np.ndarray:
         """Infinite temperature."""
         return np.zeros(self.blocks.diagonal.shape[0])

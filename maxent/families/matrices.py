@@ -27,7 +27,7 @@ __all__ = ["Matrices", "MatricesState"]
 SMALL = 128
 
 
-@register("names", "dims", "dimension", "log_norm")
+@register("names", "dims", "dimension", held=("basis",))
 @dataclass(frozen=True, init=False)
 class Matrices(Finite):
     """Charges that are Hermitian matrices.

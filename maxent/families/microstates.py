@@ -18,7 +18,7 @@ from maxent.families.finite import Finite, checked_charges, relative_to_prior
 __all__ = ["Microstates", "MicrostatesState"]
 
 
-@register("names", "listed", "log_norm")
+@register("names", "listed")
 @dataclass(frozen=True, init=False)
 class Microstates(Finite):
     """Charges of listed classical states.
