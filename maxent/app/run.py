@@ -74,13 +74,13 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
     ConfigError
         Bad config, or a folder that cannot be written; nothing is left behind then.
     """
-    started, clock = time.time(), time.perf_counter()
+    started, begun = time.time(), time.perf_counter()
     config = load(file)
     asked = driver or config.header.driver
     if out is not None:
         _refuse_existing(out, force)
     job = build(config)
-    seconds = {"build": time.perf_counter() - clock}
+    seconds = {"build": time.perf_counter() - begun}
     say(f"{file}: {plural(len(job.targets), 'charge')}, {plural(job.family.size, 'state')}")
     target = out if out is not None else File("runs") / name(config, job, asked)
     with folder(target, force=force) as part:
@@ -94,7 +94,7 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
         _write(part, config, job, result, found, say)
         manifest = {
             "started": time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime(started)),
-            "seconds": seconds | {"total": time.time() - started},
+            "seconds": seconds | {"total": time.perf_counter() - begun},
             "command": sys.argv,
             "versions": found["versions"] | {"python": platform.python_version()},
             "machine": {
