@@ -14,14 +14,18 @@ if TYPE_CHECKING:
     from maxent.errors import ConfigError, FormulaError, MaxentError, ResourceError, SolveError
     from maxent.result import Certificate, Result, Verdict
     from maxent.solver import solve
-    from maxent.targets import Exact
+    from maxent.targets import AtLeast, AtMost, Exact, Measured, Within
 
 _HOME = {
     "solve": "maxent.solver",
     "Result": "maxent.result",
     "Certificate": "maxent.result",
     "Verdict": "maxent.result",
+    "AtLeast": "maxent.targets",
+    "AtMost": "maxent.targets",
     "Exact": "maxent.targets",
+    "Measured": "maxent.targets",
+    "Within": "maxent.targets",
     "MaxentError": "maxent.errors",
     "ConfigError": "maxent.errors",
     "FormulaError": "maxent.errors",
@@ -30,8 +34,8 @@ _HOME = {
 }
 
 __all__ = [
-    "Certificate", "ConfigError", "Exact", "FormulaError", "MaxentError", "ResourceError", "Result", "SolveError",
-    "Verdict", "__version__", "solve",
+    "AtLeast", "AtMost", "Certificate", "ConfigError", "Exact", "FormulaError", "MaxentError", "Measured",
+    "ResourceError", "Result", "SolveError", "Verdict", "Within", "__version__", "solve",
 ]  # fmt: skip
 
 

@@ -16,10 +16,11 @@ import numpy as np
 from maxent.core.contract import EPS, Family, Problem, Verdict
 from maxent.core.decide import decide
 from maxent.core.outcome import Outcome
+from maxent.core.relaxed import limit_on_face
 from maxent.diagnose.conditioning import Conditioning
 from maxent.diagnose.redundancy import Redundancy
 from maxent.errors import SolveError
-from maxent.targets import collect
+from maxent.targets import collect, collect_slack
 
 __all__ = ["Certificate", "Check", "FaceChain", "Result", "Verdict"]
 
@@ -31,7 +32,7 @@ class Check:
     Attributes
     ----------
     holds : bool
-    lowest, asked, margin, tolerance : float
+    lowest, asked, margin, tolerance, slack : float
         As in the certificate, computed anew.
     """
 
@@ -40,6 +41,7 @@ class Check:
     asked: float
     margin: float
     tolerance: float
+    slack: float = 0.0
 
     def __bool__(self) -> bool:
         return self.holds
@@ -58,7 +60,7 @@ class Certificate:
     asked : float
         The value ``v.q`` that the targets give it.
     margin : float
-        lowest - asked; with ``|v| = 1`` a lower bound of the distance of the targets from what can be reached.
+        lowest - asked - slack; with ``|v| = 1`` a lower bound of the distance of the targets from what can be reached.
     tolerance : float
         What rounding and the stated accuracy leave undecided.
     kind : {"outside", "face", "contradiction"}
@@ -66,6 +68,8 @@ class Certificate:
         states of lowest v.Q can have them.  ``contradiction``: v.Q is a number, and the targets give another one.
     accuracy : dict of str to float
         Stated accuracy of the targets that entered the tolerance.
+    slack : float
+        By how much tolerances and limits let ``<v.Q>`` exceed `asked`; 0 for exact targets.
     """
 
     direction: dict[str, float]
@@ -75,6 +79,7 @@ class Certificate:
     tolerance: float
     kind: str
     accuracy: dict[str, float] = field(default_factory=dict)
+    slack: float = 0.0
 
     def verify(self, family: Family, targets: Mapping[str, Any]) -> Check:
         """Compute the claim again from the charges and the targets alone.
@@ -83,7 +88,8 @@ class Certificate:
         ----------
         family : Family
             With named charges.
-        targets : dict of str to float
+        targets : dict of str to float, Exact, Within, AtMost, AtLeast or Measured
+            As given to `maxent.solve`; the slack is computed from them again.
 
         Returns
         -------
@@ -98,12 +104,16 @@ class Certificate:
         names = family.names  # type: ignore[attr-defined]
         q, accuracy = collect(names, targets, self.accuracy)
         v = np.array([self.direction.get(n, 0.0) for n in names])
-        problem = Problem.pose(family, q, accuracy)
-        margin, tolerance = problem.verify(v)
-        asked = float(v @ q)
+        slack = collect_slack(names, targets)
+        problem = slack.noisy(Problem.pose(family, q, accuracy))
+        asked, open_ = float(v @ q), slack.support(v)
+        margin, tolerance, _ = slack.verify(problem, v)
         if self.kind != "face":
-            return Check(bool(margin > tolerance), margin + asked, asked, margin, tolerance)
+            return Check(bool(margin > tolerance), margin + asked + open_, asked, margin, tolerance, open_)
         holds = abs(margin) <= tolerance
+        if slack.any:
+            holds = bool(holds and limit_on_face(problem, slack, v, tolerance) is not None)
+            return Check(holds, margin + asked + open_, asked, margin, tolerance, open_)
         face = problem.family.face(v, tolerance) if holds else None
         if face is not None:
             noise = problem.noise + (0.0 if face.exact else 8 * EPS / max(face.gap, 1e-12)) * problem.family.scale
@@ -159,6 +169,12 @@ class Result:
         residual = value - target; values are NaN when there is no state.
     multipliers : dict of str to float
         NaN unless solved.
+    slack : dict of str to str
+        Where each value lies in what its target leaves open: ``exact``, ``inside``, ``at the upper edge``, ``at the
+        lower edge``, ``penalised``; ``unknown`` without a state.
+    not_needed : tuple of str
+        Charges whose tolerance or limit is met anyway: their multiplier is exactly 0, the state is the same without
+        them.
     last_multipliers : dict of str to float
         The last iterate whatever the verdict; not a solution unless solved.
     multiplier_errors : dict of str to float
@@ -208,6 +224,8 @@ class Result:
     driver: str
     trace: tuple[tuple[float, float, float], ...]
     outcome: Outcome = field(repr=False)
+    slack: dict[str, str] = field(default_factory=dict)
+    not_needed: tuple[str, ...] = ()
     conflict: tuple[str, ...] | None = None
     nearest: Any = None
 

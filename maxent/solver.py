@@ -10,12 +10,14 @@ import numpy as np
 from maxent.core.contract import Family, Problem, Verdict
 from maxent.core.decide import decide
 from maxent.core.outcome import Outcome
+from maxent.core.relaxed import Relaxed, decide_relaxed
+from maxent.core.slack import Slack
 from maxent.diagnose.conditioning import conditioning
-from maxent.diagnose.multipliers import replay, user_covariance, user_multipliers
+from maxent.diagnose.multipliers import relaxed_multipliers, replay, user_covariance, user_multipliers
 from maxent.diagnose.redundancy import redundancies
-from maxent.diagnose.wording import message
+from maxent.diagnose.wording import message, places
 from maxent.result import Certificate, FaceChain, Result
-from maxent.targets import collect
+from maxent.targets import collect, collect_slack
 
 __all__ = ["solve"]
 
@@ -41,8 +43,10 @@ def solve(
     ----------
     family : Family
         Charges Q_j, such as `maxent.families.Matrices` or `maxent.families.Microstates`.
-    targets : dict of str to float or Exact
-        Value q_j for every charge.
+    targets : dict of str to float, Exact, Within, AtMost, AtLeast or Measured
+        What is asked of every charge: a value q_j, a value within a tolerance, a limit, or a measured value.  With
+        tolerances and limits the state is the one of largest entropy among all that keep them; with measured values
+        the one of largest ``S - chi^2/2``.  Every stage of the decision then includes what the targets leave open.
     accuracy : float or dict of str to float, optional
         Accuracy of the targets, in units of each charge (not a standard error): what the verdict must survive.
         Default 0: exact to rounding.
@@ -76,14 +80,21 @@ def solve(
     q, stated = collect(names, targets, accuracy)
     if driver == "auto":
         driver = "jax" if type(family).evaluate is Family.evaluate else "host"
-    outcome = decide(Problem.pose(family, q, stated), driver=driver)
-    return _result(names, q, stated, outcome, driver)
+    problem, slack = Problem.pose(family, q, stated), collect_slack(names, targets)
+    if not slack.any:
+        return _result(names, q, slack, decide(problem, driver=driver), driver)
+    relaxed = decide_relaxed(problem, slack, driver=driver)
+    return _result(names, q, slack, relaxed.outcome, driver, relaxed)
 
 
-def _result(names: tuple[str, ...], q: np.ndarray, stated: np.ndarray, outcome: Outcome, driver: str) -> Result:
-    found, solved = user_multipliers(outcome), outcome.verdict is Verdict.SOLVED
+def _result(
+    names: tuple[str, ...], q: np.ndarray, slack: Slack, outcome: Outcome, driver: str, relaxed: Relaxed | None = None
+) -> Result:
+    found = user_multipliers(outcome) if relaxed is None else relaxed_multipliers(relaxed)
+    solved, stated = outcome.verdict is Verdict.SOLVED, outcome.problem.accuracy
     blank = np.full(len(names), np.nan)
-    replayed = replay(outcome.problem, found.values) if solved else float("nan")
+    met = None if relaxed is None else outcome.values
+    replayed = replay(outcome.problem, found.values, met) if solved else float("nan")
     off = blank if outcome.values is None else outcome.values
     has_state = outcome.verdict in (Verdict.SOLVED, Verdict.BOUNDARY)
     covariance, factor = user_covariance(outcome) if has_state else (np.full((len(names), len(names)), np.nan), None)
@@ -91,7 +102,7 @@ def _result(names: tuple[str, ...], q: np.ndarray, stated: np.ndarray, outcome: 
     return Result(
         verdict=outcome.verdict,
         evidence=outcome.evidence,
-        message=message(names, outcome, found, replayed),
+        message=message(names, outcome, found, replayed, slack, relaxed),
         names=names,
         targets=named(q),
         values=named(q + off),
@@ -102,7 +113,7 @@ def _result(names: tuple[str, ...], q: np.ndarray, stated: np.ndarray, outcome: 
         loose=solved and found.loose,
         replay=replayed,
         covariance=covariance,
-        certificate=_certificate(names, q, stated, outcome),
+        certificate=_certificate(names, q, stated, slack, outcome),
         face=_faces(names, outcome),
         excess=None if outcome.excess is None else named(outcome.excess),
         redundancies=redundancies(names, q, outcome.whitening),
@@ -111,21 +122,31 @@ def _result(names: tuple[str, ...], q: np.ndarray, stated: np.ndarray, outcome: 
         driver=driver,
         trace=outcome.trace,
         outcome=outcome,
+        slack=places(names, slack, outcome, relaxed),
+        not_needed=_not_needed(names, slack, relaxed) if has_state else (),
     )
+
+
+def _not_needed(names: Sequence[str], slack: Slack, relaxed: Relaxed | None) -> tuple[str, ...]:
+    if relaxed is None:
+        return ()
+    return tuple(n for n, free, side in zip(names, slack.has_edge, relaxed.side, strict=True) if free and not side)
 
 
 def _named(names: Sequence[str], x: np.ndarray) -> dict[str, float]:
     return {n: float(y) for n, y in zip(names, x, strict=True)}
 
 
-def _certificate(names: Sequence[str], q: np.ndarray, stated: np.ndarray, outcome: Outcome) -> Certificate | None:
+def _certificate(
+    names: Sequence[str], q: np.ndarray, stated: np.ndarray, slack: Slack, outcome: Outcome
+) -> Certificate | None:
     v = outcome.direction
     if v is None:
         return None
-    asked = float(v @ q)
+    asked, open_ = float(v @ q), slack.support(v)
     return Certificate(
-        _named(names, v), outcome.margin + asked, asked, outcome.margin, outcome.tolerance, _KINDS[outcome.verdict],
-        _named(names, stated),
+        _named(names, v), outcome.margin + asked + open_, asked, outcome.margin, outcome.tolerance,
+        _KINDS[outcome.verdict], _named(names, stated), open_,
     )  # fmt: skip
 
 

@@ -10,7 +10,9 @@ from typing import Any
 
 import numpy as np
 
-__all__ = ["Exact", "collect", "suggestion"]
+from maxent.core.slack import Slack
+
+__all__ = ["AtLeast", "AtMost", "Exact", "Measured", "Within", "collect", "collect_slack", "suggestion"]
 
 
 @dataclass(frozen=True)
@@ -26,6 +28,66 @@ class Exact:
     value: float
 
 
+@dataclass(frozen=True)
+class Within:
+    """The charge lies within a tolerance of a value: ``|<Q> - value| <= tolerance``, a hard limit.
+
+    Parameters
+    ----------
+    value, tolerance : float
+        In units of the charge; the tolerance is positive.
+    """
+
+    value: float
+    tolerance: float
+
+
+@dataclass(frozen=True)
+class AtMost:
+    """The charge has at most this value: ``<Q> <= value``; its multiplier is never negative.
+
+    Parameters
+    ----------
+    value : float
+        In units of the charge.
+    """
+
+    value: float
+
+
+@dataclass(frozen=True)
+class AtLeast:
+    """The charge has at least this value: ``<Q> >= value``; its multiplier is never positive.
+
+    Parameters
+    ----------
+    value : float
+        In units of the charge.
+    """
+
+    value: float
+
+
+@dataclass(frozen=True)
+class Measured:
+    """The charge was measured with a standard error: a miss costs entropy and is never forbidden.
+
+    The state has the largest ``S - sum_j (<Q_j> - value_j)^2 / (2 sigma_j^2)``; the minimum of the penalised dual
+    ``F(lam) + sum_j (sigma_j lam_j)^2 / 2`` gives ``<Q_j> = value_j + sigma_j^2 lam_j``.
+
+    Parameters
+    ----------
+    value, sigma : float
+        In units of the charge; the standard error is positive.
+    """
+
+    value: float
+    sigma: float
+
+
+_KINDS = (Exact, Within, AtMost, AtLeast, Measured)
+
+
 def suggestion(name: str, known: Sequence[str]) -> str:
     """``"; did you mean 'x'?"`` when something known looks like `name`, else nothing."""
     close = difflib.get_close_matches(name, known, n=1)
@@ -35,7 +97,7 @@ def suggestion(name: str, known: Sequence[str]) -> str:
 def collect(
     names: Sequence[str], targets: Mapping[str, Any], accuracy: float | Mapping[str, float]
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Targets and their stated accuracies in the order of `names`.
+    """Targets (the values they are centred on) and their stated accuracies in the order of `names`.
 
     Returns
     -------
@@ -46,12 +108,15 @@ def collect(
     TypeError
         Targets that are not a mapping or not real numbers.
     ValueError
-        Unknown or missing names, NaN or infinite values, a negative accuracy.
+        Unknown or missing names, NaN or infinite values, a tolerance or sigma that is not positive, a negative
+        accuracy.
     """
     if not isinstance(targets, Mapping):
         raise TypeError(f"targets must be a dict name -> value, not {type(targets).__name__}")
     _check_names(names, targets, "target", every=True)
     values = np.array([_number(targets[n], f"target {n!r}") for n in names], float)
+    for n in names:
+        _width(n, targets[n])
     if isinstance(accuracy, Mapping):
         _check_names(names, accuracy, "accuracy", every=False)
         stated = np.array([_number(accuracy.get(n, 0.0), f"accuracy {n!r}") for n in names], float)
@@ -61,6 +126,41 @@ def collect(
         if a < 0:
             raise ValueError(f"accuracy {n!r} is {a}; it must not be negative")
     return values, stated
+
+
+def collect_slack(names: Sequence[str], targets: Mapping[str, Any]) -> Slack:
+    """What the targets leave open, in the order of `names`; call `collect` first, which checks the names.
+
+    Raises
+    ------
+    TypeError, ValueError
+        A tolerance or sigma that is not a positive finite number.
+    """
+    m = len(names)
+    lower, upper, penalty = np.zeros(m), np.zeros(m), np.zeros((m, m))
+    for j, name in enumerate(names):
+        target, width = targets[name], _width(name, targets[name])
+        if isinstance(target, Within):
+            lower[j], upper[j] = -width, width
+        if isinstance(target, AtMost | Measured):
+            lower[j] = -np.inf
+        if isinstance(target, AtLeast | Measured):
+            upper[j] = np.inf
+        if isinstance(target, Measured):
+            penalty[j, j] = width**2
+    return Slack(lower, upper, penalty)
+
+
+def _width(name: str, target: Any) -> float:
+    """Tolerance or sigma of a target, 0 for the kinds that have none."""
+    if not isinstance(target, Within | Measured):
+        return 0.0
+    what = "tolerance" if isinstance(target, Within) else "sigma"
+    width = _number(target.tolerance if isinstance(target, Within) else target.sigma, f"{what} of target {name!r}")
+    if not width > 0:
+        hint = "; for none give the number alone" if width == 0 else ""
+        raise ValueError(f"{what} of target {name!r} is {width}; it must be positive{hint}")
+    return width
 
 
 def _check_names(names: Sequence[str], given: Mapping[str, Any], what: str, *, every: bool) -> None:
@@ -76,7 +176,7 @@ def _check_names(names: Sequence[str], given: Mapping[str, Any], what: str, *, e
 
 
 def _number(value: Any, label: str) -> float:
-    if isinstance(value, Exact):
+    if isinstance(value, _KINDS):
         value = value.value
     if isinstance(value, np.ndarray) or hasattr(value, "__array__"):
         array = np.asarray(value)

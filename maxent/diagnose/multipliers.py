@@ -8,8 +8,9 @@ import numpy as np
 
 from maxent.core.contract import EPS, Problem
 from maxent.core.outcome import Outcome
+from maxent.core.relaxed import Relaxed
 
-__all__ = ["Multipliers", "replay", "user_covariance", "user_multipliers"]
+__all__ = ["Multipliers", "relaxed_multipliers", "replay", "user_covariance", "user_multipliers"]
 
 #: Fewer fixed digits than this (of the largest multiplier, in units of the spreads) is called loose.
 LOOSE = 1e-6
@@ -53,6 +54,20 @@ def user_multipliers(outcome: Outcome) -> Multipliers:
     return Multipliers(lam, errors, bool(relative > LOOSE))
 
 
+def relaxed_multipliers(relaxed: Relaxed) -> Multipliers:
+    """Multipliers under relaxed targets: those of the equality problem on the edges that hold, exact zeros elsewhere.
+
+    Their errors are those of that problem; a zero has none, since it stays zero for all targets nearby.
+    """
+    values, errors = relaxed.last.copy(), np.zeros(len(relaxed.last))
+    if relaxed.active is None:
+        return Multipliers(values, errors, False)
+    inner = user_multipliers(relaxed.active)
+    values[:] = 0.0
+    values[relaxed.kept], errors[relaxed.kept] = inner.values, inner.errors
+    return Multipliers(values, errors, inner.loose)
+
+
 def user_covariance(outcome: Outcome) -> tuple[np.ndarray, np.ndarray]:
     """Covariance of the user's charges in the state, (m, m), and a factor (m, r) of it."""
     last = outcome.deepest
@@ -63,8 +78,10 @@ def user_covariance(outcome: Outcome) -> tuple[np.ndarray, np.ndarray]:
     return factor @ factor.T, factor
 
 
-def replay(problem: Problem, lam: np.ndarray) -> float:
+def replay(problem: Problem, lam: np.ndarray, met: np.ndarray | None = None) -> float:
     """Largest relative residual that float64 multipliers alone give, in the user's own charges.
+
+    With relaxed targets residuals are no errors: then it is the distance from the residuals `met` by the state.
 
     Multipliers cannot carry condition numbers above 1e8: rounding ``lam_j`` moves the exponent by
     ``eps |lam_j| |Q_j|``.
@@ -72,4 +89,4 @@ def replay(problem: Problem, lam: np.ndarray) -> float:
     if not len(lam):
         return 0.0
     values = problem.family.evaluate(lam, 1).values
-    return float(np.max(np.abs(values) / problem.size, initial=0.0))
+    return float(np.max(np.abs(values if met is None else values - met) / problem.size, initial=0.0))

@@ -8,9 +8,11 @@ import numpy as np
 
 from maxent.core.contract import Verdict
 from maxent.core.outcome import Outcome
+from maxent.core.relaxed import Relaxed
+from maxent.core.slack import Slack
 from maxent.diagnose.multipliers import Multipliers
 
-__all__ = ["combination_text", "message"]
+__all__ = ["combination_text", "message", "places"]
 
 #: Margins below this are a close call: the verdict hangs on the last digits of the targets.
 CLOSE = 1e-9
@@ -27,9 +29,67 @@ def combination_text(names: Sequence[str], v: np.ndarray, *, digits: int = 4) ->
     return "".join(parts) or "0"
 
 
-def message(names: Sequence[str], outcome: Outcome, multipliers: Multipliers, replayed: float) -> str:
-    """One sentence (sometimes two) for the verdict of `outcome`."""
-    return _SENTENCES[outcome.verdict](names, outcome, multipliers, replayed)
+def message(
+    names: Sequence[str],
+    outcome: Outcome,
+    multipliers: Multipliers,
+    replayed: float,
+    slack: Slack | None = None,
+    relaxed: Relaxed | None = None,
+) -> str:
+    """One sentence (sometimes two) for the verdict of `outcome`; with `relaxed` targets in their words."""
+    if slack is None or relaxed is None:
+        return _SENTENCES[outcome.verdict](names, outcome, multipliers, replayed)
+    if outcome.verdict is Verdict.SOLVED:
+        return _solved_relaxed(names, outcome, multipliers, replayed, slack, relaxed)
+    text = _SENTENCES[outcome.verdict](names, outcome, multipliers, replayed)
+    if outcome.direction is not None and (width := slack.support(outcome.direction)) > 0:
+        text += f" The tolerances, worth {width:.3g} in this combination, are counted in."
+    return text
+
+
+def places(names: Sequence[str], slack: Slack, outcome: Outcome, relaxed: Relaxed | None) -> dict[str, str]:
+    """Where each value lies in what its target leaves open, in words."""
+    has_state = outcome.verdict in (Verdict.SOLVED, Verdict.BOUNDARY)
+    out = {}
+    for j, name in enumerate(names):
+        if slack.is_exact[j] or relaxed is None:
+            out[name] = "exact"
+        elif slack.is_penalised[j]:
+            out[name] = "penalised"
+        elif not has_state:
+            out[name] = "unknown"
+        else:
+            side = relaxed.side[j]
+            out[name] = "at the upper edge" if side > 0 else "at the lower edge" if side < 0 else "inside"
+    return out
+
+
+def _solved_relaxed(
+    names: Sequence[str], o: Outcome, m: Multipliers, replayed: float, slack: Slack, relaxed: Relaxed
+) -> str:
+    place = places(names, slack, o, relaxed)
+    count = {word: sum(p == word for p in place.values()) for word in ("exact", "penalised", "inside")}
+    at_edge = len(names) - sum(count.values())
+    parts = [f"{n} {word}" for word, n in (("exact", count["exact"]), ("at an edge", at_edge)) if n]
+    parts += [f"{count['inside']} inside and not needed"] if count["inside"] else []
+    parts += [f"{count['penalised']} penalised"] if count["penalised"] else []
+    text = f"All targets are kept: {', '.join(parts)}"
+    if o.values is not None and count["penalised"]:
+        off = o.values[slack.is_penalised]
+        inverse = np.linalg.inv(slack.penalty[np.ix_(slack.is_penalised, slack.is_penalised)])
+        text += f" (chi squared {off @ inverse @ off:.3g})"
+    if o.whitening.null:
+        text += f"; {len(o.whitening.null)} redundant combination(s)"
+    text += "."
+    if m.loose:
+        text += " Fewer than six digits of the multipliers are fixed by the inputs; see their errors."
+    if replayed > 1e-10:
+        text += (
+            f" The listed multipliers alone reproduce the values to {replayed:.0e} (nearly dependent charges: predict "
+            "from the state, not from the multipliers)."
+        )
+    return text
 
 
 def _solved(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -> str:
