@@ -113,9 +113,10 @@ def test_level_is_the_size_of_the_exponent(view):
         assert 0 < float(ev.rounding) < 1e-12
 
 
-@pytest.mark.parametrize("view", [v for v in compiled_views() if v.name.endswith("-given")], ids=lambda v: v.name)
-def test_compiled_one_by_one_equals_the_batch(view):
+@pytest.mark.parametrize("name", ["microstates-log_weights", "matrices-commuting", "matrices-complex", "matrices-blocks"])
+def test_compiled_one_by_one_equals_the_batch(name):
     """jit takes families as arguments; the batch is the loop over its members."""
+    (view,) = [v for v in views() if v.name == f"{name}-given"]
     one = jax.jit(lambda family, lam: (family.log_partition(lam), family.evaluate(lam).values))
     f, _, _, many = answers(view.name)
     with jax.enable_x64(True):
