@@ -18,6 +18,7 @@ from maxent.core.decide import decide
 from maxent.core.outcome import Outcome
 from maxent.core.relaxed import limit_on_face
 from maxent.diagnose.conditioning import Conditioning
+from maxent.diagnose.proof import NOT_PROVABLE, Proof, prove_interior, prove_outside
 from maxent.diagnose.redundancy import Redundancy
 from maxent.errors import SolveError
 from maxent.targets import collect, collect_slack
@@ -120,6 +121,30 @@ class Certificate:
             below = decide(Problem(face.family, noise, accuracy), depth=1)
             holds = below.values is not None and bool(np.all(np.abs(below.values) <= 1e-8 * problem.size + accuracy))
         return Check(bool(holds and face is not None), margin + asked, asked, margin, tolerance)
+
+    def prove(self, family: Family, targets: Mapping[str, Any]) -> Proof:
+        """Prove the claim as a theorem about the float64 numbers in the charges, the targets and the direction.
+
+        Parameters
+        ----------
+        family : Family
+            With named charges, as it was given to `maxent.solve`.
+        targets : dict of str to float
+
+        Returns
+        -------
+        Proof
+            True when proved; carries the proved margin, rounded down.
+
+        Raises
+        ------
+        ValueError
+            Names that do not fit.
+        """
+        names = family.names  # type: ignore[attr-defined]
+        q, accuracy = collect(names, targets, self.accuracy)
+        v = np.array([self.direction.get(n, 0.0) for n in names], float)
+        return prove_outside(family, v, q, accuracy, kind=self.kind, margin=self.margin)
 
 
 @dataclass(frozen=True)
@@ -280,6 +305,28 @@ class Result:
             if not np.isfinite(self.multipliers[n]):
                 out[n] = float("nan")
         return out
+
+    def prove(self, family: Family) -> Proof:
+        """Prove the verdict as a theorem about the numbers given.
+
+        Infeasible and inconsistent: `Certificate.prove`.  Solved: a ball of targets around these is reachable, hence
+        the multipliers exist (`maxent.diagnose.proofs.interior` has the theorem); its radius is the margin.
+
+        Parameters
+        ----------
+        family : Family
+            As it was given to `maxent.solve`.
+
+        Returns
+        -------
+        Proof
+        """
+        if self.certificate is not None:
+            return self.certificate.prove(family, self.targets)
+        if self.verdict is not Verdict.SOLVED:
+            return Proof(NOT_PROVABLE, float("nan"), None, "", f"nothing to prove: the verdict is {self.verdict}")
+        q = np.array([self.targets[n] for n in self.names])
+        return prove_interior(family, self.state, q, self.outcome.problem.accuracy)
 
     def require(self) -> Result:
         """The result itself when solved.

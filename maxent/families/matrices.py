@@ -8,7 +8,7 @@ from then on.  Cost of one evaluation: one eigendecomposition and m rotations pe
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, ClassVar
 
 import numpy as np
 import scipy.sparse as sp
@@ -70,6 +70,9 @@ class Matrices(Finite):
     dims: tuple[int, ...] | None
     dimension: int
     log_norm: float
+    #: Charges (and prior) of the blocks in `turned` before they were diagonalised.  No field: a family that was
+    #: combined, compressed or rebuilt from its arrays has lost them, and must not carry those of another one.
+    _given: ClassVar[tuple[list[Any], ...] | None] = None
 
     def __init__(self, charges: Any, *, basis: Any = None, dims: Any = None, log_prior: Any = None):
         charges = checked_charges(charges, "Matrices")
@@ -116,7 +119,7 @@ class Matrices(Finite):
         levels = [np.array(diagonal, float).reshape(len(every), len(single))]
         whole = len(counts) == 1
         permuted = every if whole else [_sorted(to_csr(q), order) for q in every]
-        turned, placed, dense, prior_dense = [], [], [], []
+        turned, given, placed, dense, prior_dense = [], [], [], [], []
         for b in np.flatnonzero(counts > 1):
             piece = slice(stops[b] - counts[b], stops[b])
             parts = permuted if whole else [_block(q, piece.start, piece.stop) for q in permuted]
@@ -124,6 +127,7 @@ class Matrices(Finite):
             if joint is not None:
                 levels.append(joint[0])
                 turned.append((order[piece], joint[1]))
+                given.append(parts)
                 continue
             stack = np.array([p.toarray() if sp.issparse(p) else p for p in parts])
             stack = stack.real.copy() if np.iscomplexobj(stack) and not stack.imag.any() else stack
@@ -135,6 +139,7 @@ class Matrices(Finite):
         blocks = Blocks(flat[:m], tuple(dense), None if prior is None else flat[m], tuple(prior_dense))
         log_norm = 0.0 if prior is None else float(blocks.evaluate(np.zeros(m), 0).log_partition)
         self._set(blocks, names, single, tuple(turned), tuple(placed), basis, dims, d, log_norm)
+        object.__setattr__(self, "_given", tuple(given))
 
     def _set(self, *values: Any) -> Matrices:
         fields = ("blocks", "names", "flat", "turned", "placed", "basis", "dims", "dimension", "log_norm")
@@ -165,6 +170,23 @@ class Matrices(Finite):
         """Sizes of the blocks that stay matrices, largest first; everything else is diagonal."""
         return tuple(sorted((a.shape[1] for a in self.blocks.dense), reverse=True))
 
+    def as_given(self) -> tuple[np.ndarray, tuple[Any, ...]] | None:
+        """The charges to the last bit, before anything was diagonalised: what proofs start from.
+
+        Returns
+        -------
+        diagonal : (m, n) ndarray
+            Charges on the basis states in `flat`.
+        blocks : tuple of sequences of m Hermitian (d, d) ndarrays or CSR
+            Charges on the blocks in `turned`, then on those in `placed`.
+
+        None for a family whose charges are results of arithmetic (combined, compressed to a face).
+        """
+        if self._given is None:
+            return None
+        m = self.blocks.diagonal.shape[0]
+        return self.blocks.diagonal[:, : len(self.flat)], (*(parts[:m] for parts in self._given), *self.blocks.dense)
+
     def operators(self) -> dict[str, sp.csr_array]:
         """The charges as sparse (d, d) matrices, put together from the blocks."""
         return {name: self._operator(j) for j, name in enumerate(self.names)}
@@ -173,9 +195,12 @@ class Matrices(Finite):
         line = self.blocks.prior if of_prior else self.blocks.diagonal[j]
         parts: list[tuple[np.ndarray, Any]] = [(self.flat, sp.diags_array(line[: len(self.flat)]))]
         at = len(self.flat)
-        for index, vectors in self.turned:
+        for b, (index, vectors) in enumerate(self.turned):
             k = vectors.shape[1]
-            parts.append((index, (vectors * line[at : at + k]) @ vectors.conj().T))
+            if self._given is None:
+                parts.append((index, (vectors * line[at : at + k]) @ vectors.conj().T))
+            else:
+                parts.append((index, self._given[b][-1 if of_prior else j]))
             at += k
         dense = self.blocks.prior_dense if of_prior else [a[j] for a in self.blocks.dense]
         for (index, frame), a in zip(self.placed, dense, strict=True):
@@ -221,6 +246,8 @@ class Matrices(Finite):
         basis = isometry if self.basis is None else self.basis @ isometry
         new = object.__new__(Matrices)
         new._build(charges, prior, self.names, isometry.shape[1], basis, self.dims)
+        if self._given is None or sp.issparse(part) or np.ndim(part) == 2:
+            object.__setattr__(new, "_given", None)  # these charges were computed, not given
         return new
 
     # ------------------------------------------------------------------ the state

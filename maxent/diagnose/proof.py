@@ -1,0 +1,224 @@
+"""Verdicts as theorems about the numbers given: proofs of certificates, and of solved targets.
+
+The float64 numbers in the charges, the targets and the direction are taken as exact.  Where `Certificate.verify` says
+that a margin is above what rounding can explain, a proof bounds every rounding and says what is left.  Floor: diagnose.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from fractions import Fraction
+from functools import singledispatch
+from typing import Any
+
+import numpy as np
+import scipy.sparse as sp
+
+from maxent.core.contract import Family
+from maxent.diagnose.proofs.bounds import below, scaled
+from maxent.diagnose.proofs.cholesky import lowest_eigenvalue
+from maxent.diagnose.proofs.interior import Part, reachable_ball
+from maxent.diagnose.proofs.listed import lowest_listed
+from maxent.families.matrices import Matrices
+from maxent.families.microstates import Microstates
+
+__all__ = ["NOT_PROVABLE", "NO_METHOD", "PROVED", "Proof", "prove_interior", "prove_outside"]
+
+PROVED = "proved"
+NOT_PROVABLE = "not provable at this margin"
+NO_METHOD = "no proof method for this family"
+
+EXACT = "exact rational arithmetic"
+FLOAT = "float64 with a rigorous error bound"
+BALL = "ball of corrections to the state found"
+
+
+@dataclass(frozen=True)
+class Proof:
+    """What could be proved; true exactly when the status is "proved".
+
+    Attributes
+    ----------
+    status : {"proved", "not provable at this margin", "no proof method for this family"}
+    margin : float
+        For a certificate: no state has a smaller ``<v.(Q - q)>``; a rigorous lower bound, rounded down.  For a solved
+        result: every target closer than this (Euclidean, in the units of the charges) is reachable.  NaN when nothing
+        is known.
+    exact : str or None
+        The smallest ``v.(Q - q)`` itself as a fraction, where listed states decide it.
+    method : str
+        How the bound was found; empty without one.
+    detail : str
+        One sentence.
+    """
+
+    status: str
+    margin: float
+    exact: str | None
+    method: str
+    detail: str
+
+    def __bool__(self) -> bool:
+        return self.status == PROVED
+
+
+@dataclass(frozen=True)
+class _Given:
+    """Charges to the last bit: numbers on single states (m, n), and blocks of m matrices each."""
+
+    listed: np.ndarray
+    blocks: Sequence[Any]
+
+    def sizes(self) -> np.ndarray:
+        """Largest modulus of an entry of each charge, (m,)."""
+        largest = np.abs(self.listed).max(axis=1, initial=0.0)
+        for block in self.blocks:
+            entries = [q.data if sp.issparse(q) else q for q in block]
+            largest = np.maximum(largest, [np.abs(x).max(initial=0.0) for x in entries])
+        return largest
+
+
+@singledispatch
+def _given(family: Any) -> _Given | None:
+    """The charges of a family as they were given; None where there is no proof method."""
+    return None
+
+
+@_given.register
+def _(family: Microstates) -> _Given | None:
+    return _Given(family.blocks.diagonal, ())
+
+
+@_given.register
+def _(family: Matrices) -> _Given | None:
+    charges = family.as_given()
+    return None if charges is None else _Given(*charges)
+
+
+def _no_method(family: Family) -> Proof:
+    why = f"{type(family).__name__} does not list its charges exactly"
+    if isinstance(family, Matrices):
+        why = "the charges of this family were computed (combined, compressed or rebuilt), not given"
+    return Proof(NO_METHOD, float("nan"), None, "", f"{why}; the evidence is the one of float64")
+
+
+# ---------------------------------------------------------------- certificates
+
+
+def prove_outside(
+    family: Family, v: np.ndarray, targets: np.ndarray, accuracy: np.ndarray, *, kind: str, margin: float
+) -> Proof:
+    """Prove ``v.(Q - q) >= margin' 1 > 0`` for the numbers given, with the largest margin' that can be had.
+
+    Then no state has these values, nor values within the stated accuracy: ``margin' > sum_j |v_j| t_j`` is asked for.
+    A contradiction is the same inequality; that v.Q is a number need not be proved for it.
+
+    Parameters
+    ----------
+    family : Family
+    v, targets, accuracy : (m,) ndarrays
+    kind : {"outside", "contradiction", "face"}
+        A face is an equality, which no margin proves; its bound is computed all the same.
+    margin : float
+        What float64 says, for the sentence.
+    """
+    given = _given(family)
+    if given is None:
+        return _no_method(family)
+    found = _lowest(given, v, targets)
+    if found is None:
+        detail = "the numbers overflow, or no decomposition could be completed"
+        return Proof(NOT_PROVABLE, float("nan"), None, "", detail)
+    lowest, exact, method = found
+    loss = _product(np.abs(v), accuracy)
+    low = below(lowest)
+    claim = f"v.(Q - q) >= {low:.6g} in every state ({method}; float64 says {margin:.6g})"
+    if kind == "face":
+        status, detail = NOT_PROVABLE, f"the targets lie on the boundary: an equality, which no margin proves; {claim}"
+        detail += ": taken to the last bit, the targets lie outside" if lowest > loss else ""
+    elif lowest > loss:
+        status, detail = PROVED, f"{claim}, so no state has these values"
+        detail += f", nor any within the stated accuracy, which takes {float(loss):.3g}" if loss else ""
+    elif lowest > 0:
+        status, detail = NOT_PROVABLE, f"{claim}, but the stated accuracy takes {float(loss):.6g}"
+    else:
+        status, detail = NOT_PROVABLE, f"{claim}, which excludes nothing"
+    return Proof(status, low, str(lowest) if exact else None, method, detail)
+
+
+def _product(x: np.ndarray, y: np.ndarray) -> Fraction:
+    """``x.y`` exactly."""
+    return sum((Fraction(a) * Fraction(b) for a, b in zip(x.tolist(), y.tolist(), strict=True)), Fraction(0))
+
+
+def _lowest(given: _Given, v: np.ndarray, targets: np.ndarray) -> tuple[Fraction, bool, str] | None:
+    """Lower bound of ``v.(Q - q)``, whether it is the minimum itself, and how it was found."""
+    if not np.isfinite(v).all():
+        return None
+    pair = scaled(v, given.sizes())
+    if pair is None:
+        return None
+    w, exponent = pair
+    back = Fraction(2) ** exponent
+    asked = _product(v, targets)
+    lowest: Fraction | None = None
+    exact, method = False, ""
+    try:
+        if given.listed.shape[1]:
+            lowest, exact = lowest_listed(w, given.listed)
+            method = EXACT if exact else FLOAT
+        for block in given.blocks:
+            found = lowest_eigenvalue(w, block, asked=asked / back, enough=lowest)
+            if found is None:
+                return None
+            if lowest is None or found[0] < lowest:
+                (lowest, method), exact = found, False
+    except OverflowError:
+        return None
+    return None if lowest is None else (lowest * back - asked, exact, method)
+
+
+# ---------------------------------------------------------------- solved targets
+
+
+def prove_interior(family: Family, state: Any, targets: np.ndarray, accuracy: np.ndarray) -> Proof:
+    """Prove that a ball of targets around these is reachable, hence that the multipliers exist.
+
+    Parameters
+    ----------
+    family : Family
+    state : MicrostatesState or MatricesState
+        The state found; anything near it proves the same.
+    targets, accuracy : (m,) ndarrays
+
+    Notes
+    -----
+    The theorem and its proof stand in `maxent.diagnose.proofs.interior`.  Redundant charges allow no ball.
+    """
+    given = _given(family)
+    if given is None:
+        return _no_method(family)
+    if not len(targets):
+        return Proof(PROVED, float("inf"), None, BALL, "nothing is asked")
+    parts = _parts(family, given, state)
+    try:
+        found = reachable_ball(parts, targets, accuracy)
+    except OverflowError:
+        found = None
+    if found is None:
+        detail = "no ball of reachable targets could be proved around these (redundant charges allow none)"
+        return Proof(NOT_PROVABLE, 0.0, None, BALL, detail)
+    radius, covers = found
+    low = below(radius)
+    claim = f"every target within {low:.6g} of these is reachable ({BALL})"
+    if not covers:
+        return Proof(NOT_PROVABLE, low, None, BALL, f"{claim}, but not all within the stated accuracy are proved")
+    return Proof(PROVED, low, None, BALL, f"{claim}, so finite multipliers exist")
+
+
+def _parts(family: Family, given: _Given, state: Any) -> list[Part]:
+    if isinstance(family, Microstates):
+        return [Part(given.listed, state.weights)]
+    parts = [Part(given.listed, state.flat_weights)]
+    return parts + [Part(block, g.weights, g.vectors) for block, g in zip(given.blocks, state.groups, strict=True)]
