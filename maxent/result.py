@@ -18,6 +18,7 @@ from maxent.core.decide import decide
 from maxent.core.outcome import Outcome
 from maxent.core.relaxed import limit_on_face
 from maxent.diagnose.conditioning import Conditioning
+from maxent.diagnose.export import to_dataset, to_html, to_scipy
 from maxent.diagnose.proof import NOT_PROVABLE, Proof, prove_interior, prove_outside
 from maxent.diagnose.redundancy import Redundancy
 from maxent.errors import SolveError
@@ -339,6 +340,36 @@ class Result:
         if not self.success:
             raise SolveError(self)
         return self
+
+    def to_scipy(self) -> Any:
+        """The result as a `scipy.optimize.OptimizeResult` of the dual ``F(lam) = ln Z + lam.q``.
+
+        Returns
+        -------
+        scipy.optimize.OptimizeResult
+            x: multipliers; fun: F; jac: its gradient, target - value; hess: the covariance; nit, success, message;
+            status 0 solved, 1 boundary, 2 unattained, 3 infeasible, 4 inconsistent, 5 unfinished.  NaN as here.
+        """
+        return to_scipy(self)
+
+    def to_dataset(self) -> Any:
+        """The result as an `xarray.Dataset` with the names of the charges as coordinates.
+
+        Returns
+        -------
+        xarray.Dataset
+            target, value, residual, multiplier and multiplier_error by charge; covariance by charge and charge_other;
+            entropy and log_partition; verdict, evidence and message as attributes.
+
+        Raises
+        ------
+        ImportError
+            Without xarray.
+        """
+        return to_dataset(self)
+
+    def _repr_html_(self) -> str:
+        return to_html(self)
 
     def __repr__(self) -> str:
         lines = [f"{self.verdict} ({self.evidence}, {self.iterations} steps): {self.message}"]
