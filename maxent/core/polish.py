@@ -27,7 +27,7 @@ def face_sizes(levels: np.ndarray) -> list[int]:
     Levels below 1e-14 of the range are rounding; exact degeneracies are never split.
     """
     levels = np.sort(levels)
-    levels = levels - min(0.0, levels[0])
+    levels = levels - levels[0]
     decades = np.log10(np.maximum(levels / max(levels[-1], 1e-300), 1e-14))
     gaps = np.diff(decades)
     return [int(i) + 1 for i in np.argsort(-gaps, kind="stable")[:4] if gaps[i] > 0.7]
@@ -287,6 +287,8 @@ def _second_order_step(cluster: Cluster, v: np.ndarray, rho: State) -> tuple[np.
     mean = charges @ one / k
     traceless = charges - np.outer(mean, one)
     bend = cluster.curvature(rho)
+    # the unit sphere bends as well; on a boundary theta is zero, outside it is the distance
+    kappa = max(float(mean @ v), 0.0)
     complement = complement_of(v)
     left, size, right = _thin_svd(traceless.T @ complement)
     size = np.where(size > 1e-12, size, 0.0)
@@ -294,7 +296,7 @@ def _second_order_step(cluster: Cluster, v: np.ndarray, rho: State) -> tuple[np.
     spread = np.linalg.norm(residual)
     omega = max(spread**2, 1e-24)
     axes = complement @ right.T
-    hessian = axes.T @ bend @ axes + np.diag(size**2 / omega)
+    hessian = axes.T @ bend @ axes + np.diag(size**2 / omega) + kappa * np.eye(len(v) - 1)
     pull = axes.T @ mean - size * (left.T @ residual) / omega
     gradient = np.linalg.norm((axes.T @ mean)[size < 1e-3])
     if spread < 4e-14 and gradient < 4e-14:
@@ -305,7 +307,8 @@ def _second_order_step(cluster: Cluster, v: np.ndarray, rho: State) -> tuple[np.
     length = float(np.linalg.norm(step))
     if k > 1 and spread > 1e-13:
         shown = step * min(1.0, 0.3 / max(length, 1e-300))
-        wanted = bend @ shown + (mean @ v) * v - mean  # values of the traceless charges in the corrected state
+        # values of the traceless charges in the corrected state
+        wanted = bend @ shown + kappa * shown + (mean @ v) * v - mean
         y = rho.vector() - one / k
         strong = size > 1e-2 * size.max(initial=0.0)
         y = y + left[:, strong] @ ((axes.T @ (wanted - traceless @ y))[strong] / size[strong])

@@ -156,7 +156,8 @@ class _Bracket:
         self.problem = problem
         self.family = problem.family
         self.lower, self.upper, self.aside = -np.inf, np.inf, np.inf
-        self.point = np.zeros(len(problem.noise))
+        self.point = self.direction = np.zeros(len(problem.noise))
+        self.lowest: Lowest | None = None
 
     @property
     def gap(self) -> float:
@@ -171,7 +172,8 @@ class _Bracket:
         low = self.family.lowest(v, with_values=True)
         if not np.isfinite(low.value):
             return None
-        self.lower = max(self.lower, low.value)
+        if low.value > self.lower:
+            self.lower, self.direction, self.lowest = low.value, v, low
         if low.values is not None:
             self.reach(low.values, low.value * v)
         return low
@@ -182,10 +184,10 @@ class _Bracket:
         if aside < self.aside or length < self.upper - CLOSED:
             self.aside, self.upper, self.point = aside, length, y
 
-    def stand(self, v: np.ndarray, low: Lowest) -> bool:
+    def stand(self, v: np.ndarray, low: Lowest, *, beside: bool = False) -> bool:
         """Use the states of the face of `v`: the one at the foot of the perpendicular, if the face reaches there.
 
-        Returns whether the face consists of listed states.
+        With `beside`, else the one nearest to the foot.  Returns whether the face consists of listed states.
         """
         foot = low.value * v
         moved = self.family.combine(np.eye(len(v)), foot)
@@ -194,9 +196,12 @@ class _Bracket:
             return False
         rounding = 0.0 if face.exact else 8 * EPS / max(face.gap, 1e-12)
         noise = self.problem.noise + rounding * moved.scale
-        below = decide(Problem(face.family, noise, np.zeros(len(v))), depth=1)
+        inner = Problem(face.family, noise, np.zeros(len(v)))
+        below = decide(inner, depth=1)
         if below.values is not None and below.verdict in (Verdict.SOLVED, Verdict.BOUNDARY):
             self.reach(foot + below.values, foot)
+        elif beside and (move := nearest(inner, below, np.ones(len(v)))) is not None:
+            self.reach(foot + move.shift, foot)
         return face.exact
 
 
@@ -215,6 +220,8 @@ def _shortest(problem: Problem, outcome: Outcome, v: np.ndarray) -> tuple[np.nda
             _walk(bracket, [v])
     if not bracket.closed:
         seen = _penalised(bracket)
+        if bracket.gap > WIDE and bracket.lowest is not None:
+            bracket.stand(bracket.direction, bracket.lowest, beside=True)
         if bracket.gap > WIDE:
             _walk(bracket, seen, limit=40)
     return bracket.point, max(bracket.lower, 0.0)
