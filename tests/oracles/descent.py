@@ -22,9 +22,7 @@ def dual(charges: np.ndarray, targets: np.ndarray, lam: np.ndarray):
     gap = e[:, None] - e[None, :]
     is_close = np.abs(gap) < 1e-6
     # divided differences of exp(-e): the inner product of the Hessian (Kubo, Mori)
-    kernel = np.where(
-        is_close, (p[:, None] + p[None, :]) / 2, -(p[:, None] - p[None, :]) / np.where(is_close, 1, gap)
-    )
+    kernel = np.where(is_close, (p[:, None] + p[None, :]) / 2, -(p[:, None] - p[None, :]) / np.where(is_close, 1, gap))
     hessian = np.einsum("aij,ij,bij->ab", turned, kernel, turned.conj()).real - np.outer(means, means)
     value = np.log(weights.sum()) - e[0] + lam @ targets
     return value, targets - means, hessian

@@ -177,8 +177,6 @@ def test_the_judges_know_a_known_distance():
     assert linear.slack(triangle, np.array([0.2, 0.3])) == pytest.approx(0.2, abs=1e-9)
     assert linear.judgement(triangle, np.array([0.5, 0.5])) == "edge"
     ball = np.array([pieces.PAULI[a] for a in "xyz"])
-    assert semidefinite.distance(ball, np.array([0.8, 0.6, 0.3])) == pytest.approx(
-        np.sqrt(1.09) - 1, abs=1e-7
-    )
+    assert semidefinite.distance(ball, np.array([0.8, 0.6, 0.3])) == pytest.approx(np.sqrt(1.09) - 1, abs=1e-7)
     assert semidefinite.slack(ball, np.array([0.0, 0.0, 0.5])) == pytest.approx(0.25, abs=1e-7)
     assert semidefinite.judgement(ball, np.array([0.0, 0.6, 0.8])) == "edge"

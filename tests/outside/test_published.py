@@ -56,9 +56,7 @@ def test_the_die_with_mean_four_and_a_half():
 def test_the_die_with_mean_four():
     result = maxent.solve(Microstates({"points": FACES}), {"points": 4.0})
     # closed form; 0.10 0.12 0.15 0.17 0.21 0.25 in common use
-    assert probabilities(result, 6) == pytest.approx(
-        [0.1031, 0.1227, 0.1461, 0.1740, 0.2072, 0.2468], abs=6e-5
-    )
+    assert probabilities(result, 6) == pytest.approx([0.1031, 0.1227, 0.1461, 0.1740, 0.2072, 0.2468], abs=6e-5)
 
 
 def test_a_mean_of_more_than_six_is_unreachable_and_six_is_the_edge():
@@ -309,15 +307,11 @@ def test_shifted_and_scaled_charges(forty_states):
     charges, targets, lam = forty_states
     result = maxent.solve(Microstates(charges), targets)
     # Q -> Q + c: same state and multipliers, ln Z shifts by -lam c
-    shifted = maxent.solve(
-        Microstates(charges | {"a": charges["a"] + 7.0}), targets | {"a": targets["a"] + 7.0}
-    )
+    shifted = maxent.solve(Microstates(charges | {"a": charges["a"] + 7.0}), targets | {"a": targets["a"] + 7.0})
     assert list(shifted.multipliers.values()) == pytest.approx(lam, abs=1e-12)
     assert shifted.log_partition == pytest.approx(result.log_partition - 7.0 * lam[0], abs=1e-12)
     # Q -> s Q: lam -> lam/s
-    scaled = maxent.solve(
-        Microstates(charges | {"b": 1e3 * charges["b"]}), targets | {"b": 1e3 * targets["b"]}
-    )
+    scaled = maxent.solve(Microstates(charges | {"b": 1e3 * charges["b"]}), targets | {"b": 1e3 * targets["b"]})
     assert scaled.multipliers["b"] == pytest.approx(lam[1] / 1e3, rel=1e-11)
     assert scaled.entropy == pytest.approx(result.entropy, abs=1e-12)
 

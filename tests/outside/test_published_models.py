@@ -169,9 +169,7 @@ def test_one_qubit_with_three_charges():
     assert list(result.multipliers.values()) == pytest.approx(known, abs=1e-10)
     # closed form (Kubo-Mori-Bogoliubov product; D. Petz 1994): 1 - r^2 along r, r/artanh r across
     curvatures = np.linalg.eigvalsh(result.covariance)
-    assert curvatures == pytest.approx(
-        [0.4999999999999999, 0.8022781617244772, 0.8022781617244772], abs=1e-10
-    )
+    assert curvatures == pytest.approx([0.4999999999999999, 0.8022781617244772, 0.8022781617244772], abs=1e-10)
 
 
 def test_a_qubit_target_outside_the_ball():
