@@ -19,12 +19,13 @@ from maxent.core.outcome import Outcome
 from maxent.core.relaxed import limit_on_face
 from maxent.diagnose.conditioning import Conditioning
 from maxent.diagnose.export import to_dataset, to_html, to_scipy
+from maxent.diagnose.nearest import Nearest
 from maxent.diagnose.proof import NOT_PROVABLE, Proof, prove_interior, prove_outside
 from maxent.diagnose.redundancy import Redundancy
 from maxent.errors import SolveError
 from maxent.targets import collect, collect_slack
 
-__all__ = ["Certificate", "Check", "FaceChain", "Result", "Verdict"]
+__all__ = ["Certificate", "Check", "FaceChain", "Nearest", "Result", "Verdict"]
 
 
 @dataclass(frozen=True)
@@ -216,8 +217,14 @@ class Result:
         For a boundary.
     excess : dict of str to float or None
         For an unattained target: what stays unmatched.
-    conflict, nearest : None
-        Filled by explanations when they are asked for.
+    conflict : tuple of str or None
+        With ``explain=True``, for an unreachable target: charges whose targets cannot hold together, while without any
+        one of them the others can.
+    nearest : Nearest or None
+        With ``explain=True``, for an unreachable target: the nearest reachable ones, with bounds of their distance.
+        None when a target leaves something open (a tolerance, a limit).
+    explanation : tuple of str
+        With ``explain=True``: the verdict in sentences.
     redundancies : tuple of Redundancy
     conditioning : Conditioning or None
     iterations : int
@@ -253,7 +260,8 @@ class Result:
     slack: dict[str, str] = field(default_factory=dict)
     not_needed: tuple[str, ...] = ()
     conflict: tuple[str, ...] | None = None
-    nearest: Any = None
+    nearest: Nearest | None = None
+    explanation: tuple[str, ...] = ()
 
     @property
     def success(self) -> bool:

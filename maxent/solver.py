@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -13,11 +14,15 @@ from maxent.core.outcome import Outcome
 from maxent.core.relaxed import Relaxed, decide_relaxed
 from maxent.core.slack import Slack
 from maxent.diagnose.conditioning import conditioning
-from maxent.diagnose.multipliers import relaxed_multipliers, replay, user_covariance, user_multipliers
+from maxent.diagnose.conflict import UNREACHABLE, conflict
+from maxent.diagnose.explanation import Findings
+from maxent.diagnose.explanation import explain as sentences
+from maxent.diagnose.multipliers import Multipliers, relaxed_multipliers, replay, user_covariance, user_multipliers
+from maxent.diagnose.nearest import default_units, nearest
 from maxent.diagnose.redundancy import redundancies
 from maxent.diagnose.wording import message, places
 from maxent.result import Certificate, FaceChain, Result
-from maxent.targets import collect, collect_slack
+from maxent.targets import collect, collect_slack, collect_units
 
 __all__ = ["solve"]
 
@@ -32,6 +37,8 @@ def solve(
     *,
     accuracy: float | Mapping[str, float] = 0.0,
     driver: str = "auto",
+    explain: bool = False,
+    metric: Mapping[str, float] | None = None,
 ) -> Result:
     """Lagrange multipliers of the maximum-entropy state with given values of the charges.
 
@@ -54,6 +61,12 @@ def solve(
         Who runs Newton's iteration.  ``host``: LAPACK, for one-off fits.  ``jax``: one compiled loop.  ``auto`` takes
         the host (compiling costs more than it saves in every one-off fit measured, up to 1e6 states and 30 charges),
         except for families that answer nothing but `log_partition`.  Verdicts are decided on the host for both.
+    explain : bool, optional
+        Fill `Result.conflict`, `Result.nearest` and `Result.explanation`; costs further verdicts when the targets are
+        unreachable, and next to nothing otherwise.
+    metric : dict of str to float, optional
+        What counts as one unit of a charge for the nearest reachable targets.  By default its spread, the root mean
+        square about its mean over all states.
 
     Returns
     -------
@@ -62,7 +75,8 @@ def solve(
     Raises
     ------
     TypeError, ValueError
-        A family that is none, unknown or missing names, targets that are not finite real numbers; before any work.
+        A family that is none, unknown or missing names, targets that are not finite real numbers, a metric that is not
+        positive or was given without ``explain``; before any work.
 
     Examples
     --------
@@ -78,13 +92,35 @@ def solve(
         raise ValueError(f"driver must be one of {', '.join(map(repr, DRIVERS))}, not {driver!r}")
     names = tuple(family.names)  # type: ignore[attr-defined]
     q, stated = collect(names, targets, accuracy)
+    if metric is not None and not explain:
+        raise ValueError("metric states the units of the nearest reachable targets: it needs explain=True")
+    units = collect_units(names, {} if metric is None else metric)
     if driver == "auto":
         driver = "jax" if type(family).evaluate is Family.evaluate else "host"
     problem, slack = Problem.pose(family, q, stated), collect_slack(names, targets)
-    if not slack.any:
-        return _result(names, q, slack, decide(problem, driver=driver), driver)
-    relaxed = decide_relaxed(problem, slack, driver=driver)
-    return _result(names, q, slack, relaxed.outcome, driver, relaxed)
+    if slack.any:
+        relaxed = decide_relaxed(problem, slack, driver=driver)
+        result = _result(names, q, slack, relaxed.outcome, driver, relaxed)
+    else:
+        result = _result(names, q, slack, decide(problem, driver=driver), driver)
+    return _explained(result, family, q, slack, units) if explain else result
+
+
+def _explained(result: Result, family: Family, q: np.ndarray, slack: Slack, units: np.ndarray) -> Result:
+    """The result with its conflict, nearest targets and explanation; `units` that are NaN take their default."""
+    names, outcome = result.names, result.outcome
+    clash = tuple(names[j] for j in conflict(outcome.problem, outcome, slack))
+    move = None
+    if outcome.verdict in UNREACHABLE and not slack.any:
+        units = np.where(np.isnan(units), default_units(family, outcome.whitening), units)
+        move = nearest(outcome.problem, outcome, units)
+    near = None if move is None else move.named(names, q)
+    in_order = lambda x: np.array([x[n] for n in names])
+    found = Multipliers(in_order(result.last_multipliers), in_order(result.multiplier_errors), result.loose)
+    findings = Findings(
+        names, q, outcome, found, result.replay, result.conditioning, clash, near, result.not_needed, slack.any
+    )
+    return replace(result, conflict=clash or None, nearest=near, explanation=sentences(findings))
 
 
 def _result(

@@ -12,7 +12,9 @@ import numpy as np
 
 from maxent.core.slack import Slack
 
-__all__ = ["AtLeast", "AtMost", "Exact", "Measured", "Within", "collect", "collect_slack", "suggestion"]
+__all__ = [
+    "AtLeast", "AtMost", "Exact", "Measured", "Within", "collect", "collect_slack", "collect_units", "suggestion",
+]  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -149,6 +151,26 @@ def collect_slack(names: Sequence[str], targets: Mapping[str, Any]) -> Slack:
         if isinstance(target, Measured):
             penalty[j, j] = width**2
     return Slack(lower, upper, penalty)
+
+
+def collect_units(names: Sequence[str], metric: Mapping[str, float]) -> np.ndarray:
+    """The unit of each charge in the order of `names`, NaN where none is stated.
+
+    Raises
+    ------
+    TypeError, ValueError
+        A metric that is no mapping, unknown names, units that are not positive finite numbers.
+    """
+    if not isinstance(metric, Mapping):
+        raise TypeError(f"metric must be a dict name -> unit, not {type(metric).__name__}")
+    _check_names(names, metric, "metric", every=False)
+    units = np.full(len(names), np.nan)
+    for j, name in enumerate(names):
+        if name in metric:
+            units[j] = _number(metric[name], f"metric {name!r}")
+            if not units[j] > 0:
+                raise ValueError(f"metric {name!r} is {units[j]}; it must be positive")
+    return units
 
 
 def _width(name: str, target: Any) -> float:

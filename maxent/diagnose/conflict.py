@@ -12,8 +12,9 @@ from collections.abc import Sequence
 import numpy as np
 
 from maxent.core.contract import Problem, Verdict
-from maxent.core.decide import decide
 from maxent.core.outcome import Outcome
+from maxent.core.relaxed import decide_relaxed
+from maxent.core.slack import Slack
 
 __all__ = ["UNREACHABLE", "conflict", "part"]
 
@@ -21,14 +22,14 @@ __all__ = ["UNREACHABLE", "conflict", "part"]
 UNREACHABLE = (Verdict.INFEASIBLE, Verdict.INCONSISTENT)
 
 
-def part(problem: Problem, charges: Sequence[int]) -> Problem:
+def part(problem: Problem, charges: Sequence[int] | np.ndarray) -> Problem:
     """The problem of some of the charges, with their targets, noise and accuracy."""
     keep = list(charges)
     family = problem.family.combine(np.eye(len(problem.noise))[keep], np.zeros(len(keep)))
     return Problem(family, problem.noise[keep], problem.accuracy[keep])
 
 
-def conflict(problem: Problem, outcome: Outcome) -> tuple[int, ...]:
+def conflict(problem: Problem, outcome: Outcome, slack: Slack | None = None) -> tuple[int, ...]:
     """A minimal set of charges whose targets no state has.
 
     Parameters
@@ -36,6 +37,8 @@ def conflict(problem: Problem, outcome: Outcome) -> tuple[int, ...]:
     problem : Problem
     outcome : Outcome
         Verdict on it, with its certificate.
+    slack : Slack, optional
+        What the targets leave open; they are exact without it.
 
     Returns
     -------
@@ -50,25 +53,30 @@ def conflict(problem: Problem, outcome: Outcome) -> tuple[int, ...]:
     """
     if outcome.verdict not in UNREACHABLE or outcome.direction is None:
         return ()
-    v = shortened(problem, outcome.direction, frozenset())
+    slack = Slack.exact(len(problem.noise)) if slack is None else slack
+    v = _shortened(problem, slack, outcome.direction, set())
     needed: set[int] = set()
     while True:
         weight = np.abs(v) * problem.size
         held = np.flatnonzero(weight)
-        open_ = [int(j) for j in held[np.argsort(weight[held], kind="stable")] if j not in needed]
-        if not open_ or len(held) == 1:
+        doubtful = [int(j) for j in held[np.argsort(weight[held], kind="stable")] if j not in needed]
+        if not doubtful or len(held) == 1:
             return tuple(int(j) for j in held)
-        left = [int(j) for j in held if j != open_[0]]
-        trial = decide(part(problem, left))
+        left = held[held != doubtful[0]]
+        trial = decide_relaxed(part(problem, left), _part_of(slack, left)).outcome
         if trial.verdict in UNREACHABLE and trial.direction is not None:
             v = np.zeros(len(v))
             v[left] = trial.direction
-            v = shortened(problem, v, frozenset(needed))
+            v = _shortened(problem, slack, v, needed)
         else:
-            needed.add(open_[0])
+            needed.add(doubtful[0])
 
 
-def shortened(problem: Problem, v: np.ndarray, needed: frozenset[int]) -> np.ndarray:
+def _part_of(slack: Slack, keep: np.ndarray) -> Slack:
+    return Slack(slack.lower[keep], slack.upper[keep], slack.penalty[np.ix_(keep, keep)])
+
+
+def _shortened(problem: Problem, slack: Slack, v: np.ndarray, needed: set[int]) -> np.ndarray:
     """The certificate `v` without its smallest parts (in units of each charge's size), as long as it verifies."""
     weight = np.abs(v) * problem.size
     for j in np.argsort(weight, kind="stable"):
@@ -79,7 +87,7 @@ def shortened(problem: Problem, v: np.ndarray, needed: frozenset[int]) -> np.nda
         length = np.linalg.norm(shorter)
         if int(j) in needed or not length:
             break
-        margin, tolerance = problem.verify(shorter / length)
+        margin, tolerance, _ = slack.verify(problem, shorter / length)
         if not margin > tolerance:
             break
         v = shorter / length

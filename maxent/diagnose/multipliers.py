@@ -7,10 +7,13 @@ from dataclasses import dataclass
 import numpy as np
 
 from maxent.core.contract import EPS, Problem
+from maxent.core.newton import Iterate
 from maxent.core.outcome import Outcome
 from maxent.core.relaxed import Relaxed
 
-__all__ = ["Multipliers", "relaxed_multipliers", "replay", "user_covariance", "user_multipliers"]
+__all__ = [
+    "Multipliers", "left_open", "relaxed_multipliers", "replay", "uncertainty", "user_covariance", "user_multipliers",
+]  # fmt: skip
 
 #: Fewer fixed digits than this (of the largest multiplier, in units of the spreads) is called loose.
 LOOSE = 1e-6
@@ -46,12 +49,35 @@ def user_multipliers(outcome: Outcome) -> Multipliers:
     if at is None or not w.rank:
         return Multipliers(np.zeros(len(w.mean)), np.zeros(len(w.mean)), False)
     lam = w.minimum_norm(w.transform.T @ at.lam)
-    known = np.abs(w.transform) @ (outcome.problem.noise + outcome.problem.accuracy)
-    rounding = EPS * (1 + float(at.evaluation.level)) + at.evaluation.error
-    along = np.abs(at.axes.T) @ (known + rounding)
-    errors = np.abs(w.transform.T @ (at.axes / np.maximum(at.curvature, 1e-300))) @ along
+    errors = np.abs(w.transform.T @ (at.axes / np.maximum(at.curvature, 1e-300))) @ uncertainty(outcome)
     relative = np.max(errors * w.spread) / max(float(np.max(np.abs(lam * w.spread))), 1.0)
     return Multipliers(lam, errors, bool(relative > LOOSE))
+
+
+def uncertainty(outcome: Outcome) -> np.ndarray:
+    """What rounding and the stated accuracy leave open of the whitened values, along the axes of the covariance."""
+    w, at = outcome.whitening, outcome.at
+    assert at is not None
+    known = np.abs(w.transform) @ (outcome.problem.noise + outcome.problem.accuracy)
+    return np.abs(at.axes.T) @ (known + _rounding(at))
+
+
+def left_open(outcome: Outcome, weights: np.ndarray) -> np.ndarray:
+    """Errors (k,) of the combinations ``weights @ lam`` of the multipliers; weights (k, m).
+
+    ``|W chi^-1| (n + t)`` and the rounding of the exponent: well-fixed combinations of badly fixed multipliers keep
+    their digits, since errors of the targets enter charge by charge.
+    """
+    w, at = outcome.whitening, outcome.at
+    assert at is not None
+    shifts = weights @ w.transform.T @ (at.axes / np.maximum(at.curvature, 1e-300))
+    known = outcome.problem.noise + outcome.problem.accuracy
+    return np.abs(shifts @ at.axes.T @ w.transform) @ known + np.abs(shifts) @ np.abs(at.axes.T) @ _rounding(at)
+
+
+def _rounding(at: Iterate) -> np.ndarray:
+    """Rounding of the whitened values by the size of the exponent, and their own error."""
+    return np.full(len(at.lam), EPS * (1 + float(at.evaluation.level))) + at.evaluation.error
 
 
 def relaxed_multipliers(relaxed: Relaxed) -> Multipliers:

@@ -2,8 +2,8 @@
 
 The distance is ``min |y|`` over the values ``y_j = <Q_j - q_j>/unit_j`` of all states, and also
 ``max lowest(v)`` over unit combinations v: every direction gives a lower bound, every state an upper one.
-Three searches close the gap: the shortest point of the hull of states that `Family.lowest` hands out (exact for lists of
-states after finitely many steps), the dual with a penalty ``eps |lam|^2/2`` that is taken to zero (any family), and
+Three searches close the gap: the shortest point of the hull of states that `Family.lowest` hands out (exact for lists
+of states after finitely many steps), the dual with a penalty ``eps |lam|^2/2`` that is taken to zero (any family), and
 directions sharpened in the metric with the state of their face (second order).  Combinations of the charges that are
 plain numbers are met first, by projection.  Floor: diagnose; calls core, never solve.
 """
@@ -118,7 +118,8 @@ def nearest(problem: Problem, outcome: Outcome, unit: np.ndarray) -> Move | None
     fixed, basis = _numbers(outcome.whitening, unit)
     size = float(np.max(problem.size / unit, initial=0.0)) or 1.0
     if not basis.shape[1]:
-        return Move(unit * fixed, *[float(np.linalg.norm(fixed))] * 2, unit, size)
+        off = float(np.linalg.norm(fixed))
+        return Move(unit * fixed, off, off, unit, size)
     # charges of norm one, counted from the targets that agree with the numbers
     matrix = basis.T / unit / size
     family = problem.family.combine(matrix, matrix @ (unit * fixed))
@@ -147,9 +148,9 @@ def _numbers(whitening: Whitening, unit: np.ndarray) -> tuple[np.ndarray, np.nda
 class _Bracket:
     """The best bounds so far; charges have norm one or less.
 
-    A length is blind to an error e across it (it enters as e^2), and so is the lowest value to an error of the direction.
-    What counts is therefore how far the values y of states on the face of v lie from the foot ``lowest(v) v``: that is
-    zero at the answer and of first order around it.
+    A length is blind to an error e across it (it enters as e^2), and so is the lowest value to an error of the
+    direction.  What counts is therefore how far the values y of states on the face of v lie from the foot
+    ``lowest(v) v``: that is zero at the answer and of first order around it.
     """
 
     def __init__(self, problem: Problem):
