@@ -1,27 +1,30 @@
-"""The report page of a run, made from its record and nothing else.
+"""The report page of a run, made from its record and its figures and nothing else.
 
 Floor: app.  One Jinja2 template with inline style, no script, everything escaped.  Computes nothing: numbers
-come from the record, sentences from words.py, roundings from text.py.
+come from the record, sentences from words.py, roundings from text.py, figures from figures.py.
 """
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 from maxent.app import words
+from maxent.app.figures import Figure, recoloured
 from maxent.text import combination, number
 
 __all__ = ["render"]
 
 
-def render(record: Mapping[str, Any]) -> str:
+def render(record: Mapping[str, Any], *, figures: Sequence[Figure] = ()) -> str:
     """Write the page.
 
     Parameters
     ----------
     record : mapping
         See record.py.
+    figures : sequence of Figure, optional
+        Stand in the page as they are; their names and words were escaped when they were drawn.
 
     Returns
     -------
@@ -44,6 +47,9 @@ def render(record: Mapping[str, Any]) -> str:
         "certificate": words.certificate,
         "face": words.face,
         "redundancy": words.redundancy,
+        "recoloured": recoloured,
     }
     head, rows = words.charge_table(record)
-    return environment.get_template("report.html").render(r=record, short=words.verdict(record), head=head, rows=rows)
+    return environment.get_template("report.html").render(
+        r=record, short=words.verdict(record), head=head, rows=rows, figures=figures
+    )

@@ -54,8 +54,9 @@ def plot_spectrum(result: Any, *, ax: Axes | None = None) -> Axes:
         ends = {0: ("stiffest", found.stiffest), count - 1: ("sloppiest", found.sloppiest)}
         for k, (word, what) in ends.items() if count > 1 else ((0, ("the only one", found.stiffest)),):
             note = ax.annotate(
-                f"{word}: {_few(what.coefficients)}", (0.0, k), xycoords=("axes fraction", "data"), xytext=(2, 8),
-                textcoords="offset points", fontsize=7.0, color=COLOUR["ink"], parse_math=False, annotation_clip=False,
+                f"{word}: {_few(what.coefficients)}", (0.0, k - 0.15), xycoords=("axes fraction", "data"),
+                xytext=(2, 2.5), textcoords="offset points", fontsize=7.0, color=COLOUR["ink"], parse_math=False,
+                annotation_clip=False, bbox={"fc": COLOUR["page"], "ec": "none", "pad": 0.8},
             )  # fmt: skip
             note.set_in_layout(False)
         ax.set_xlim(left, right)

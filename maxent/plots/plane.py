@@ -147,24 +147,18 @@ def _window(ax: Axes, found: Region, points: Mapping[str, np.ndarray]) -> None:
 
 
 def _shape(ax: Axes, found: Region) -> None:
-    corners = found.corners
-    if len(corners) > 2:
-        ax.add_patch(Polygon(corners, closed=True, fc=COLOUR["fill"], ec="none", label="reachable"))
-    following = np.roll(corners, -1, axis=0)
-    if len(corners) > 2 and found.outline.all():
-        ring = np.concatenate([corners, corners[:1]])
-        ax.plot(*ring.T, color=COLOUR["edge"], lw=1.0, solid_joinstyle="round")
-        return
-    label = "reachable" if len(corners) <= 2 else None
+    corners, closed = found.corners, bool(found.outline.all())
     if len(corners) == 1:
-        ax.plot(*corners.T, marker="s", ms=5, color=COLOUR["edge"], ls="none", label=label)
-        return
-    if len(corners) == 2:
-        ax.plot(*corners.T, color=COLOUR["edge"], lw=1.6, label=label)
-        return
-    for p, q, edge in zip(corners, following, found.outline, strict=True):
-        if edge:
-            ax.plot(*np.array([p, q]).T, color=COLOUR["edge"], lw=1.0)
+        ax.plot(*corners.T, marker="s", ms=5, color=COLOUR["edge"], ls="none", label="reachable")
+    elif len(corners) == 2:
+        ax.plot(*corners.T, color=COLOUR["edge"], lw=1.6, label="reachable")
+    elif len(corners) > 2:
+        edge = COLOUR["edge"] if closed else "none"
+        ax.add_patch(Polygon(corners, closed=True, fc=COLOUR["fill"], ec=edge, lw=1.0, label="reachable"))
+    if len(corners) > 2 and not closed:
+        for p, q, real in zip(corners, np.roll(corners, -1, axis=0), found.outline, strict=True):
+            if real:
+                ax.plot(*np.array([p, q]).T, color=COLOUR["edge"], lw=1.0)
 
 
 def _points(ax: Axes, points: Mapping[str, np.ndarray]) -> None:

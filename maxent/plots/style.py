@@ -28,6 +28,7 @@ COLOUR = {
     "fill": "#dfe9f2",
     "edge": "#0072b2",
     "mark": "#b8500c",
+    "page": "#ffffff",
 }
 
 #: Inches: one column of a journal page.

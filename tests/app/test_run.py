@@ -29,8 +29,10 @@ def solve(config, *more):
 def test_rerun_is_byte_identical_except_for_the_manifest(runs, tmp_path, config):
     solve(runs[config].config, "--out", tmp_path / "again")
     first, again = tree(runs[config].folder), tree(tmp_path / "again")
-    assert set(first) == set(again) == FILES
-    differing = {f for f in FILES if first[f] != again[f]}
+    assert set(first) == set(again)
+    figures = set(first) - FILES
+    assert figures and all(f.startswith("figures/") and f.endswith(".svg") for f in figures)
+    differing = {f for f in first if first[f] != again[f]}
     assert differing <= {"manifest.json"}
     assert first["config.toml"] == runs[config].config.read_bytes()
 
@@ -41,7 +43,9 @@ def test_manifest_tells_versions_times_and_digests(runs):
     assert {"maxent", "numpy", "scipy", "jax", "python"} <= set(manifest["versions"])
     assert set(manifest["seconds"]) == {"build", "fit", "total"}
     assert manifest["seed"] is None
-    assert manifest["files"] == {f: sha256((base / f).read_bytes()).hexdigest() for f in FILES - {"manifest.json"}}
+    files = {f: content for f, content in tree(base).items() if f != "manifest.json"}
+    assert manifest["files"] == {f: sha256(content).hexdigest() for f, content in files.items()}
+    assert "figures/spectrum.svg" in manifest["files"]
 
 
 def test_default_folder_is_named_after_the_config(tmp_path, monkeypatch, capsys):
@@ -49,7 +53,7 @@ def test_default_folder_is_named_after_the_config(tmp_path, monkeypatch, capsys)
     assert main(["solve", str(CONFIGS / "jaynes_die.toml")]) == 0
     (made,) = (tmp_path / "runs").iterdir()
     assert made.name.startswith("jaynes_die-") and len(made.name) == len("jaynes_die-") + 8
-    assert {p.name for p in made.iterdir()} == FILES
+    assert {p.name for p in made.iterdir()} == FILES | {"figures"}
     assert capsys.readouterr().err.splitlines()[-1] == f"wrote {made.relative_to(tmp_path)}"
 
 
@@ -78,7 +82,8 @@ def test_force_replaces_a_run_folder_and_nothing_else(tmp_path, capsys):
     assert solve(CONFIGS / "jaynes_die.toml", "--out", out) == 0
     (out / "stale.txt").write_text("from the run before")
     assert solve(CONFIGS / "unreachable.toml", "--out", out, "--force") == 1
-    assert set(tree(tmp_path)) == {f"out/{f}" for f in FILES}
+    assert {f.name for f in out.iterdir()} == FILES | {"figures"}
+    assert {f.name for f in tmp_path.iterdir()} == {"out"}
     assert json.loads((out / "result.json").read_text())["verdict"] == "infeasible"
     treasure = tmp_path / "treasure"
     treasure.mkdir()
@@ -172,8 +177,10 @@ def test_the_name_changes_with_all_that_may_change_the_result_and_with_nothing_e
     assert len({first, *others}) == 5
 
 
-def test_without_the_template_library_there_is_all_but_the_page(tmp_path, capsys, monkeypatch):
+def test_without_template_and_plot_libraries_there_is_all_but_page_and_figures(tmp_path, capsys, monkeypatch):
     monkeypatch.setattr("maxent.app.run.find_spec", lambda name: None)
     assert main(["solve", str(CONFIGS / "jaynes_die.toml"), "--out", str(tmp_path / "out")]) == 0
-    assert "no report.html: it needs the package jinja2" in capsys.readouterr().err
+    said = capsys.readouterr().err
+    assert "no report.html: it needs the package jinja2" in said
+    assert "no figures: they need the package matplotlib" in said
     assert set(tree(tmp_path / "out")) == FILES - {"report.html"}
