@@ -74,7 +74,7 @@ def real_rows(charges: Any) -> Any:
 
 def rotate(charges: Any, vectors: Any) -> Any:
     """``U^H Q_j U`` of all charges (m, d, d), the second product as one tall matrix product."""
-    xp = namespace(charges)
+    xp = namespace(vectors)
     m, d = charges.shape[0], charges.shape[1]
     half = xp.reshape(xp.reshape(charges, (m * d, d)) @ vectors, (m, d, vectors.shape[1]))
     return xp.conj(vectors.T) @ half
@@ -189,6 +189,10 @@ class Blocks(Family):
         for a in self.dense:
             norms = np.maximum(norms, [operator_norm(a[j], norms[j]) for j in range(m)])
         return norms
+
+    def start(self) -> np.ndarray:
+        """Infinite temperature."""
+        return np.zeros(self.diagonal.shape[0])
 
     # ------------------------------------------------------------------ the log-partition function
 

@@ -1,0 +1,118 @@
+"""Multipliers as a differentiable function of targets and charges, inside anybody's JAX code.
+
+The minimiser of ``F(lam) = ln Z(lam) + lam.q`` obeys ``<Q>(lam) = q``; by the implicit function theorem
+
+    d lam = -chi^-1 (d q - d<Q>|_lam),
+
+with the Kubo-Mori covariance chi and the change of the values at fixed multipliers through the family's arrays.  The
+iteration itself is never differentiated.  Floor: core.
+"""
+
+from __future__ import annotations
+
+from functools import partial
+from typing import Any, NamedTuple
+
+import jax
+import jax.numpy as jnp
+
+from maxent.core.contract import EPS, Evaluation, Family
+from maxent.core.newton import PATIENCE, Iterate, at_floor, begin, newton_step
+
+__all__ = ["Fit", "attach", "fit", "norm", "values_at", "whitener"]
+
+#: Eigenvalues of the normalised covariance below this are redundancies: the Gram matrix knows no better.
+REDUNDANT = 1e-13
+
+
+class Fit(NamedTuple):
+    """Multipliers of all charges (m,), whether the residual is at its rounding floor, and the steps taken."""
+
+    lam: Any
+    converged: Any
+    steps: Any
+
+
+def values_at(family: Family, lam: Any) -> Any:
+    """``<Q_j>`` at `lam`, differentiable once more at any degeneracy."""
+    return -jax.grad(lambda x: family.log_partition(x))(lam)
+
+
+def spread_out(lam: Any, free: tuple[int, ...], m: int) -> Any:
+    """Multipliers of all m charges from those of the free ones; the other charges are observed, at zero."""
+    return lam if free == tuple(range(m)) else jnp.zeros(m).at[jnp.array(free, int)].set(lam, unique_indices=True)
+
+
+def fit(family: Family, targets: Any, free: tuple[int, ...], m: int, iterations: int) -> Fit:
+    """Multipliers that give the free charges their targets.
+
+    Parameters
+    ----------
+    family : Family
+        A pytree of arrays (`Family.traced`).
+    targets : (len(free),) array
+    free : tuple of int
+        Charges that have a target; the multipliers of the others are zero.
+    m : int
+        Number of charges.
+    iterations : int
+        Largest number of trial steps.
+    """
+    # the iteration sees constants: its derivative is attached afterwards
+    still, q = jax.lax.stop_gradient((family, targets))
+    start, picked = jnp.zeros(len(free)), jnp.array(free, int)
+    first = still.evaluate(spread_out(start, free, m))
+    transform = whitener(first.covariance[jnp.ix_(picked, picked)])
+
+    def evaluate(x: Any) -> Evaluation:
+        lam = transform.T @ x
+        ev = still.evaluate(spread_out(lam, free, m))
+        values, covariance = ev.values[picked], ev.covariance[jnp.ix_(picked, picked)]
+        chi = transform @ covariance @ transform.T
+        blur = EPS * norm(jnp.abs(transform) @ (jnp.abs(values) + jnp.abs(q)))
+        rounding = 4 * EPS * (1 + ev.level) * jnp.maximum(1.0, jnp.sqrt(norm(chi))) + 2 * blur
+        level = ev.level + jnp.abs(lam) @ jnp.abs(q)
+        return Evaluation(ev.log_partition + lam @ q, transform @ (values - q), chi, rounding, level)
+
+    def unfinished(carry: tuple[Any, Iterate]) -> Any:
+        count, at = carry
+        return (count < iterations) & ~at_floor(at) & (at.rejected < PATIENCE)
+
+    def advance(carry: tuple[Any, Iterate]) -> tuple[Any, Iterate]:
+        count, at = carry
+        return count + 1, newton_step(evaluate, at)
+
+    count, at = jax.lax.while_loop(unfinished, advance, (jnp.asarray(0), begin(evaluate, start)))
+    lam = attach(family, targets, spread_out(transform.T @ at.lam, free, m), free)
+    return Fit(lam, at_floor(at), count)
+
+
+def whitener(covariance: Any) -> Any:
+    """Rows T with ``T chi T^T = 1`` where there is spread, and zero rows where there is none."""
+    size = jnp.sqrt(jnp.diagonal(covariance))
+    unit = jnp.where(size > 0, 1 / jnp.where(size > 0, size, 1.0), 0.0)
+    h, axes = jnp.linalg.eigh(covariance * unit[:, None] * unit[None, :])
+    live = h > REDUNDANT * h[-1]
+    return jnp.where(live[:, None], (axes / jnp.sqrt(jnp.where(live, h, 1.0))).T, 0.0) * unit[None, :]
+
+
+@partial(jax.custom_jvp, nondiff_argnums=(3,))
+def attach(family: Family, targets: Any, lam: Any, free: tuple[int, ...]) -> Any:
+    """`lam` itself, with the derivative that the minimiser has; costs nothing when nobody differentiates."""
+    return lam
+
+
+@attach.defjvp
+def _attach_jvp(free: tuple[int, ...], primals: tuple, tangents: tuple) -> tuple[Any, Any]:
+    (family, _, lam), (family_dot, targets_dot, _) = primals, tangents
+    picked = jnp.array(free, int)
+    _, moved = jax.jvp(lambda f: values_at(f, lam)[picked], (family,), (family_dot,))
+    covariance = family.evaluate(lam).covariance[jnp.ix_(picked, picked)]
+    transform = whitener(covariance)
+    change = -(transform.T @ (transform @ (targets_dot - moved)))
+    return lam, spread_out(change, free, lam.shape[0])
+
+
+def norm(x: Any, axis: int | None = None) -> Any:
+    """Euclidean (Frobenius) norm, of all entries or along an axis."""
+    return jnp.sqrt(jnp.sum(x * x, axis=axis))
