@@ -68,6 +68,9 @@ def record(
         "covariance": [[_finite(x) for x in row] for row in result.covariance],
         "certificate": _certificate(job, result),
         "face": _face(result),
+        "conflict": None if result.conflict is None else list(result.conflict),
+        "nearest": _nearest(result.nearest),
+        "explanation": list(result.explanation),
         "excess": None if result.excess is None else _combination(result.excess),
         "redundancies": [
             {"coefficients": _combination(r.coefficients), "constant": _finite(r.constant)} for r in result.redundancies
@@ -132,6 +135,19 @@ def _face(result: Any) -> dict[str, Any] | None:
         "depth": face.depth,
         "directions": [_combination(d) for d in face.directions],
         "gaps": [_finite(gap) for gap in face.gaps],
+    }
+
+
+def _nearest(found: Any) -> dict[str, Any] | None:
+    if found is None:
+        return None
+    return {
+        "targets": _combination(found.targets),
+        "moves": _combination(found.moves),
+        "distance": _finite(found.distance),
+        "lower": _finite(found.lower),
+        "upper": _finite(found.upper),
+        "unit": _combination(found.unit),
     }
 
 

@@ -101,6 +101,22 @@ def charge_table(record: Mapping[str, Any]) -> tuple[list[str], list[list[str]]]
     return list(columns), [[write(c) for write in columns.values()] for c in record["charges"]]
 
 
+def _nearest_table(record: Mapping[str, Any]) -> str:
+    """Nearest reachable targets beside those asked for."""
+    near = record["nearest"]
+    rows = [
+        (
+            c["name"],
+            number(c["target"], 12),
+            number(near["targets"][c["name"]], 12),
+            number(near["moves"][c["name"]], 3),
+            number(near["unit"][c["name"]], 4),
+        )
+        for c in record["charges"]
+    ]
+    return table(rows, ("charge", "asked", "nearest", "move", "unit"), right=range(1, 5))
+
+
 def summary(record: Mapping[str, Any]) -> str:
     """Write a record for the terminal.
 
@@ -122,6 +138,10 @@ def summary(record: Mapping[str, Any]) -> str:
         parts.append(certificate(record["certificate"]))
     if record["face"]:
         parts.append(face(record["face"]))
+    if record["conflict"]:
+        parts.append("\n".join(record["explanation"]))
+    if record["nearest"]:
+        parts.append(_nearest_table(record))
     if record["redundancies"]:
         parts.append("\n".join(["Redundant:", *("  " + redundancy(r) for r in record["redundancies"])]))
     reached = [p for p in record["predictions"] if p["value"] is not None]
@@ -139,5 +159,7 @@ def summary(record: Mapping[str, Any]) -> str:
     ]
     if numbers:
         parts.append(table(numbers, right=[1]))
+    if record["explanation"] and not record["conflict"]:
+        parts.append("\n".join(record["explanation"]))
     parts.append(f"{plural(record['iterations'], 'iteration')}, driver {record['driver']}")
     return "\n\n".join(parts)

@@ -105,7 +105,7 @@ def _nearest(f: Findings, at: Nearest) -> list[str]:
     bounds = "both bounds agree" if gap == 0 else f"proved to {number(gap, 1)}"
     return [
         f"Nearest reachable targets: {listing(steps, last='and')}.{rest}",
-        f"Their distance is {number(at.distance, 6)} ({bounds}), the root of the sum of (move/unit)^2 with unit {units}.",
+        f"Their distance is {number(at.distance, 6)} ({bounds}), the root of the sum of (move/unit)^2; unit {units}.",
     ]
 
 
@@ -127,9 +127,7 @@ def _boundary(f: Findings) -> list[str]:
     free = f.outcome.deepest.whitening.rank
     if free:
         left = "one combination" if free == 1 else f"{number(free)} combinations"
-        text.append(
-            f"On the last face {left} of the targets fix the limit state; the others hold in every state there."
-        )
+        text.append(f"The limit state is fixed by {left} of the targets; the others hold in every state of the face.")
     elif dimension > 1:
         text.append("Every state of the last face has these values; the limit state is the one of largest entropy.")
     text.append(
