@@ -51,7 +51,7 @@ def look(
 ) -> Outcome | None:
     """Try to end on a verified certificate near the whitened direction `x`.
 
-    The last Newton step is tried first: it is free, and along a diverging path it points at the exposing direction.
+    The last Newton step is a candidate too: it is free, and along a diverging path it points at the exposing direction.
     Depths of faces seen on the way are remembered in `memo` as starts for the analytic centre.
     """
     if not np.linalg.norm(x) > 0:
@@ -90,10 +90,11 @@ def _sharper(face: Face, than: Face) -> bool:
 
 
 def _candidates(memo: Memo, x: np.ndarray, step: np.ndarray | None):
+    # sharpened ones first: a one-dimensional ground space cannot tell an approximate direction by its width
+    yield from memo.family.sharpen(x)
     if step is not None and np.linalg.norm(step) > 0:
         yield step / np.linalg.norm(step)
     yield x
-    yield from memo.family.sharpen(x)
 
 
 def _descend(

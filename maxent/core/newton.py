@@ -16,8 +16,8 @@ from maxent.core.contract import EPS, Evaluation, namespace
 
 __all__ = ["Iterate", "at_floor", "begin", "curvatures", "newton_step", "settle", "trust_step"]
 
-#: Rejected steps in a row after which no further progress is expected.
-PATIENCE = 12
+#: Rejected steps in a row after which no further progress is expected: the radius has shrunk by 4^30.
+PATIENCE = 30
 
 
 class Iterate(NamedTuple):

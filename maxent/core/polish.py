@@ -237,18 +237,35 @@ class State:
         return cls(flat / trace, [b / trace for b in dense])
 
 
-def polished_directions(blocks: Blocks, v: np.ndarray) -> Iterator[np.ndarray]:
-    """`v` polished for each candidate dimension of its ground space."""
-    flat, levels = blocks.spectra(v)
-    every = np.concatenate([flat, *levels])
+def polished_directions(blocks: Blocks, v: np.ndarray, *, most: int = 8) -> Iterator[np.ndarray]:
+    """`v` polished for each candidate dimension of its ground space.
+
+    A rough direction may show too few levels: dimensions that only the polished direction reveals are polished again
+    from there.
+    """
     if len(v) < 2:
         return
-    for k in face_sizes(every):
-        if k < len(every):
-            try:
-                yield polish(blocks, v, k)
-            except np.linalg.LinAlgError:  # a candidate that cannot be refined is no candidate
-                continue
+    queue = [(v, k, 0) for k in _dimensions(blocks, v)]
+    tried: set[tuple[int, int]] = set()
+    while queue and len(tried) < most:
+        at, k, generation = queue.pop(0)
+        if (k, generation) in tried:
+            continue
+        tried.add((k, generation))
+        try:
+            better = polish(blocks, at, k)
+        except np.linalg.LinAlgError:  # a candidate that cannot be refined is no candidate
+            continue
+        yield better
+        if generation < 2:
+            queue += [(better, j, generation + 1) for j in _dimensions(blocks, better) if j != k]
+
+
+def _dimensions(blocks: Blocks, v: np.ndarray) -> list[int]:
+    """Candidate dimensions of the ground space of ``v.Q``, the whole space excluded."""
+    flat, levels = blocks.spectra(v)
+    every = np.concatenate([flat, *levels])
+    return [k for k in face_sizes(every) if k < len(every)]
 
 
 def polish(blocks: Blocks, v: np.ndarray, k: int, *, passes: int = 12) -> np.ndarray:
