@@ -104,7 +104,11 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
             },
             "seed": None,
             "inputs": dict(job.digests),
-            "files": {f.name: hashlib.sha256(f.read_bytes()).hexdigest() for f in sorted(part.iterdir())},
+            "files": {
+                f.relative_to(part).as_posix(): hashlib.sha256(f.read_bytes()).hexdigest()
+                for f in sorted(part.rglob("*"))
+                if f.is_file()
+            },
         }
         (part / "manifest.json").write_text(json.dumps(manifest, indent=2) + "\n", encoding="utf-8")
     say(f"wrote {target}")
@@ -257,12 +261,28 @@ def _write(part: File, config: Config, job: Job, result: Any, record: Mapping[st
     (part / "result.json").write_text(dump(record), encoding="utf-8")
     probabilities = getattr(result.state, "probabilities", None)
     arrays.write(part / "result.nc", record, probabilities=probabilities, labels=job.labels)
+    figures = _figures(part, job, result, say)
     if find_spec("jinja2") is None:
         say("no report.html: it needs the package jinja2 (pip install 'maxent-states[report]')")
         return
     from maxent.app.report import render
 
-    (part / "report.html").write_text(render(record), encoding="utf-8")
+    (part / "report.html").write_text(render(record, figures=figures), encoding="utf-8")
+
+
+def _figures(part: File, job: Job, result: Any, say: Say) -> Any:
+    if find_spec("matplotlib") is None:
+        say("no figures: they need the package matplotlib (pip install 'maxent-states[report]')")
+        return ()
+    from maxent.app.figures import draw
+
+    figures = draw(result, labels=job.labels)
+    if figures:
+        (part / "figures").mkdir()
+    for figure in figures:
+        text = f'<?xml version="1.0" encoding="utf-8"?>\n{figure.svg}'
+        (part / "figures" / f"{figure.name}.svg").write_text(text, encoding="utf-8")
+    return figures
 
 
 def _versions() -> dict[str, str]:

@@ -61,7 +61,7 @@ def record(runs):
 def test_sections_stand_in_order_and_none_is_empty(runs, name, sections):
     text = (runs[name].folder / "report.html").read_text()
     page = Page(text)
-    assert headings(text) == [*sections, "State, settings and versions"]
+    assert headings(text) == [*sections, "Figures", "State, settings and versions"]
     assert page.tags[:2] == ["html", "head"]
     assert not re.search(r"\bNone\b|\bnan\b|Undefined", page.text)
 
@@ -71,7 +71,9 @@ def test_the_page_needs_nothing_else(runs):
         page = Page((run.folder / "report.html").read_text())
         assert not {"script", "link", "img", "iframe", "object"} & set(page.tags)
         assert not [value for key, value in page.attributes if key in ("src", "href") or key.startswith("on")]
-        assert "@import" not in "".join(page.rawdata) and "url(" not in (run.folder / "report.html").read_text()
+        text = (run.folder / "report.html").read_text()
+        assert "@import" not in text and set(re.findall(r"url\((.)", text)) <= {"#"}
+        assert all(value.startswith("#") for key, value in page.attributes if key == "xlink:href")
 
 
 def test_the_page_says_what_the_result_says(runs, record):
