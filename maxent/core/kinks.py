@@ -121,13 +121,12 @@ def minimise_model(
     return z
 
 
-def look_ahead(
-    x: np.ndarray, radius: float, evaluation: Evaluation, kinks: Kinks, rejected: int
-) -> Point:
+def look_ahead(x: np.ndarray, radius: float, evaluation: Evaluation, kinks: Kinks, rejected: int) -> Point:
     """The point with its model step, damped so that the step stays within `radius`."""
     hessian, gradient = evaluation.covariance, -evaluation.values
-    ridge = 1e-13 * float(np.trace(hessian)) + 1e-300
     pull = float(np.linalg.norm(kinks.steepest(x, gradient)))
+    # without curvature a step is still no longer than 1e8 radii
+    ridge = max(1e-13 * float(np.trace(hessian)), 1e-8 * pull / radius, 1e-300)
     target = minimise_model(hessian, gradient, x, kinks, damping=ridge)
     if not np.linalg.norm(target - x) <= radius:
         # |step| <= |steepest|/damping: the upper end is safe, and bisection finds a step of nearly full length

@@ -74,8 +74,18 @@ def decide_relaxed(problem: Problem, slack: Slack, *, driver: str = "host", dept
     depth : int
         Number of faces this problem lies inside.
     """
+    if not slack.any:
+        none = np.zeros(len(problem.noise))
+        return Relaxed(decide(problem, driver=driver, depth=depth), none, none)
     search = _Search.begin(slack.noisy(problem), slack, driver, depth)
     return search.contradiction() or search.descend()
+
+
+def _unconstrained(problem: Problem) -> Outcome:
+    """The problem without any charge: solved by the prior."""
+    none, empty = np.zeros(0), np.zeros((0, 0))
+    whitening = Whitening(empty, empty, (), none, none, none)
+    return Outcome(Verdict.SOLVED, Problem(problem.family, none, none), whitening)
 
 
 def limit_on_face(
@@ -227,8 +237,11 @@ class _Search:
             before = key
             at = advance(self.evaluate, at, self.kinks)
             self.iterations += 1
-        reason = self.reason or "the edges on which the targets hold were not found"
-        values = self.whitening.values(self.in_whitened(at.x)[1].values)
+        reason = self.reason or (
+            "the edges on which the targets hold were not found: the state is so close to the boundary of what can be "
+            "reached that rounding hides them"
+        )
+        values = self.in_whitened(at.x)[2]
         return self.answer(Verdict.UNFINISHED, values=values, reason=reason, evidence="tested")
 
     def note(self, at: Point) -> None:
@@ -266,14 +279,23 @@ class _Search:
                 return None
             self.iterations += below.iterations
             if below.verdict is Verdict.SOLVED:
-                hit, side = self.solved(below, kept, side)
-                if hit is not None:
-                    return hit
-                continue
+                hit, new, grazed = self.solved(below, kept, side)
+                if hit is None:
+                    side = new
+                    continue
+                return (self.edge_of_reach(new, late=late) if grazed else None) or hit
             if below.verdict is Verdict.UNATTAINED and below.excess is not None and below.values is not None:
                 return self.unattained(below, kept, side)
             self.reason = below.reason
-            return self.certified(below, kept, side, late=late)
+            hit = self.certified(below, kept, side, late=late)
+            if hit is not None or below.direction is None:
+                return hit
+            # a direction against an edge says that this edge cannot be passed: nothing has to hold it
+            against = np.zeros(len(side))
+            against[kept] = below.direction
+            if not np.any(against * side < 0):
+                return None
+            side = np.where(against * side < 0, 0.0, side)
         return None
 
     def equality(self, side: np.ndarray) -> tuple[Outcome | None, np.ndarray]:
@@ -286,11 +308,15 @@ class _Search:
         pose = lambda idx: Problem(
             self.problem.family.combine(np.eye(m)[idx], edge[idx]), self.problem.noise[idx], self.problem.accuracy[idx]
         )
-        exact = pose(held)
-        if len(held) < m and not np.isfinite(exact.family.evaluate(exact.family.start(), 1).log_partition):
-            return None, held
         below = None
-        if len(held) or not len(soft):
+        if not len(both):  # nothing holds: the prior, if there is one
+            sound = np.isfinite(self.problem.family.evaluate(np.zeros(m), 1).log_partition)
+            return (_unconstrained(self.problem) if sound else None), both
+        if len(held):
+            exact = pose(held)
+            # an infinite list may not converge without the charges that are left out
+            if len(held) < m and not np.isfinite(exact.family.evaluate(exact.family.start(), 1).log_partition):
+                return None, held
             below = decide(exact, driver=self.driver, depth=self.depth)
             if below.verdict is not Verdict.SOLVED or not len(soft):
                 return below, held
@@ -301,8 +327,22 @@ class _Search:
             above = replace(above, iterations=above.iterations + below.iterations)
         return above, both
 
-    def solved(self, below: Outcome, kept: np.ndarray, side: np.ndarray) -> tuple[Relaxed | None, np.ndarray]:
-        """The optimality conditions at a solved equality problem; the answer, or the edges to try next."""
+    def edge_of_reach(self, side: np.ndarray, *, late: bool) -> Relaxed | None:
+        """Boundary, when the values that an answer leaves at an edge to rounding can only be had on a face.
+
+        Far out, where the weights of whole faces fall below rounding, such values look as if they were met by accident.
+        """
+        below, kept = self.equality(side)
+        if below is None:
+            return None
+        self.iterations += below.iterations
+        return self.certified(below, kept, side, late=late) if below.verdict is Verdict.BOUNDARY else None
+
+    def solved(self, below: Outcome, kept: np.ndarray, side: np.ndarray) -> tuple[Relaxed | None, np.ndarray, bool]:
+        """The optimality conditions at a solved equality problem.
+
+        The answer, or None; the edges to try next, or those on which values lie without need; whether there are any.
+        """
         m = len(side)
         lam = np.zeros(m)
         embed = np.eye(m)[kept]
@@ -310,8 +350,7 @@ class _Search:
         if below.at is not None and below.whitening.rank:
             inner = below.at.lam
             lam[kept] = below.whitening.minimum_norm(below.whitening.transform.T @ inner)
-        x, ev = self.in_whitened(inner, below.whitening.transform @ embed)
-        values = self.whitening.values(ev.values)
+        x, ev, values = self.in_whitened(inner, below.whitening.transform @ embed)
         residual = np.where(self.slack.is_penalised, 0.0, values)
         rounding = SAFETY * self.problem.noise + SAFETY * EPS * (1 + float(ev.level)) * self.whitening.spread
         over = self.slack.excess(residual)
@@ -319,26 +358,34 @@ class _Search:
         missed = self.slack.has_edge & (side == 0) & (np.abs(over) > rounding + self.problem.accuracy)
         if np.any(wrong) or np.any(missed):
             self.lam = lam
-            return None, np.where(wrong, 0.0, np.where(missed, np.sign(over), side))
-        h, axes = curvatures(ev)
-        at = Iterate(x, 1.0, ev, h, axes, 0)
-        family = self.problem.family.combine(self.whitening.transform, np.zeros(self.whitening.rank))
+            return None, np.where(wrong, 0.0, np.where(missed, np.sign(over), side)), False
+        at, family = None, self.problem.family
+        if self.whitening.rank:
+            at = Iterate(x, 1.0, ev, *curvatures(ev), 0)
+            family = family.combine(self.whitening.transform, np.zeros(self.whitening.rank))
         outcome = Outcome(
             Verdict.SOLVED, self.problem, self.whitening, evidence=below.evidence, family=family, at=at, values=values,
             shift=below.shift, depth=below.depth, iterations=self.iterations, trace=tuple(self.trace),
         )  # fmt: skip
-        return Relaxed(outcome, side, lam, below, kept), side
+        top, bottom = (np.abs(residual - end) <= rounding for end in (self.slack.upper, self.slack.lower))
+        free = self.slack.has_edge & (side == 0)
+        near = np.where(free, top.astype(float) - bottom.astype(float), 0.0)
+        return Relaxed(outcome, side, lam, below, kept), side + near, bool(np.any(near))
 
     def in_whitened(self, x: np.ndarray, rows: np.ndarray | None = None):
-        """Multipliers of the charges ``rows @ Q`` in the whitened coordinates of all charges, and the evaluation.
+        """Multipliers of the charges ``rows @ Q`` in the whitened coordinates of all, evaluation, the user's values.
 
         The change of frame is made from the charges' own rows: multipliers in the user's charges would lose the digits
         that nearly dependent charges cost.
         """
+        if not self.whitening.rank:
+            ev = self.problem.family.evaluate(np.zeros(len(self.whitening.mean)))
+            return np.zeros(0), ev, ev.values
         rows = self.transform if rows is None else rows
         y = ((rows @ self.rows) @ (self.whitening.transform @ self.rows).T).T @ x
         family = self.problem.family.combine(self.whitening.transform, np.zeros(self.whitening.rank))
-        return y, family.evaluate(y)
+        ev = family.evaluate(y)
+        return y, ev, self.whitening.values(ev.values)
 
     def unattained(self, below: Outcome, kept: np.ndarray, side: np.ndarray) -> Relaxed:
         """Hand on that no state of largest entropy exists on these edges."""
