@@ -13,8 +13,9 @@ from typing import Any
 
 import numpy as np
 
-from maxent.core.contract import EPS, Family, Problem, Verdict
+from maxent.core.contract import Family, Problem, Verdict
 from maxent.core.decide import decide
+from maxent.core.faces import on_face
 from maxent.core.outcome import Outcome
 from maxent.core.relaxed import limit_on_face
 from maxent.diagnose.conditioning import Conditioning
@@ -119,8 +120,7 @@ class Certificate:
             return Check(holds, margin + asked + open_, asked, margin, tolerance, open_)
         face = problem.family.face(v, tolerance) if holds else None
         if face is not None:
-            noise = problem.noise + (0.0 if face.exact else 8 * EPS / max(face.gap, 1e-12)) * problem.family.scale
-            below = decide(Problem(face.family, noise, accuracy), depth=1)
+            below = decide(on_face(problem, face), depth=1)
             holds = below.values is not None and bool(np.all(np.abs(below.values) <= 1e-8 * problem.size + accuracy))
         return Check(bool(holds and face is not None), margin + asked, asked, margin, tolerance)
 

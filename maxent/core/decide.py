@@ -104,7 +104,8 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
             return hit
         # on a plateau (one state holds everything) F falls while the residual stands still: that is progress
         falls = ev.log_partition < lowest - 160 * EPS * (abs(ev.log_partition) + ev.level + 1)
-        stalled = 0 if size < 0.5 * best or falls else stalled + 1
+        if not at.rejected:  # a rejected step only shrinks the trust region
+            stalled = 0 if size < 0.5 * best or falls else stalled + 1
         best = size if size < 0.5 * best else best
         lowest = min(lowest, float(ev.log_partition))
         if (stalled >= 4 and size <= 1e3 * ev.rounding) or at.rejected > PATIENCE:
