@@ -3,9 +3,9 @@
 The values ``(<Q_i>, <Q_j>)`` of all states fill a convex set, whose support function is ``lowest(v)``; a state that
 attains it is a point of the edge.  Directions are added where polygon and supporting lines differ most: the normal of a
 chord either finds a new corner or proves the chord to be an edge (sandwich algorithm: Rote, Computing 48, 337 (1992),
-from memory).  Polygons come out exact; a smooth edge to the stated gap.  The other charges are left free: a target can
-lie inside every shadow and still be out of reach.  Floor: diagnose; calls core, never solve, and knows no clock: work
-is capped by the size of the family, so that equal input gives equal numbers.
+from memory).  Corners that stand out by more than the gap come out exactly; a smooth edge is met to the gap.  The other
+charges are left free: a target can lie inside every shadow and still be out of reach.  Floor: diagnose; calls core,
+never solve, and knows no clock: work is capped by the size of the family, so that equal input gives equal numbers.
 """
 
 from __future__ import annotations
@@ -29,6 +29,8 @@ FINE = 1e-3
 MOST, LEAST = 128, 24
 
 Support = Callable[[np.ndarray], tuple[float, np.ndarray | None]]
+#: Angle of a direction, lowest value along it (may be -inf), and a point of the set that has it.
+Side = tuple[float, float, np.ndarray | None]
 
 
 @dataclass(frozen=True)
@@ -109,12 +111,12 @@ def region(
     low, high = np.array([axes[0][1], axes[1][1]]), -np.array([axes[2][1], axes[3][1]])
     if not np.all(np.isfinite([low, high])) or any(point is None for _, _, point in axes):
         window = [(np.asarray(p, float) - zero) / unit for p in around]
-        corners, outline = _unbounded(ask, budget, window)
-        return Region((i, j), zero + corners * unit, outline, False, float("nan"), budget + 4)
+        corners, outline, asked = _unbounded(ask, budget, window)
+        return Region((i, j), zero + corners * unit, outline, False, float("nan"), asked + 4)
     extent = np.where(high - low > 1e-12, high - low, 1.0)
     scaled = lambda theta: _scaled(ask, theta, extent)
     found, gap = _sandwich([scaled(t) for t in np.arange(8) * np.pi / 4], scaled, budget)
-    corners = _corners(np.array([point for _, _, point in found]) * extent)
+    corners = _corners(np.array([p for _, _, p in found if p is not None]) * extent)
     outline = np.ones(len(corners), bool)
     return Region((i, j), zero + corners * unit, outline, True, gap, len(found) + 4)
 
@@ -167,11 +169,10 @@ def _iterated(charges: tuple[sp.csr_array, sp.csr_array], v: np.ndarray) -> tupl
     return float(v @ values), values
 
 
-def _scaled(ask: Support, theta: float, extent: np.ndarray) -> tuple[float, float, np.ndarray]:
-    """Angle, support value and point of the set whose axes are divided by `extent`."""
+def _scaled(ask: Support, theta: float, extent: np.ndarray) -> Side:
+    """A side of the set whose axes are divided by `extent`."""
     height, point = ask(_unit(theta) / extent)
-    assert point is not None
-    return theta, height, point / extent
+    return theta, height, None if point is None else point / extent
 
 
 # ---------------------------------------------------------------------- polygons
@@ -185,9 +186,7 @@ def _cross(a: np.ndarray, b: np.ndarray) -> float:
     return float(a[0] * b[1] - a[1] * b[0])
 
 
-def _sandwich(
-    found: list[tuple[float, float, np.ndarray]], ask: Callable[[float], tuple[float, float, np.ndarray]], budget: int
-) -> tuple[list[tuple[float, float, np.ndarray]], float]:
+def _sandwich(found: list[Side], ask: Callable[[float], Side], budget: int) -> tuple[list[Side], float]:
     """Add directions where the polygon may miss most, until nothing is missed that can be seen."""
     misses = [_miss(a, b) for a, b in zip(found, [*found[1:], found[0]], strict=True)]
     while len(found) < budget and max(m for m, _ in misses) > FINE:
@@ -198,13 +197,15 @@ def _sandwich(
     return found, float(max(m for m, _ in misses))
 
 
-def _miss(a: tuple[float, float, np.ndarray], b: tuple[float, float, np.ndarray]) -> tuple[float, float]:
+def _miss(a: Side, b: Side) -> tuple[float, float]:
     """How far the set may reach beyond the chord between two supporting lines, and the direction that tells."""
     (s, h, p), (t, k, q) = a, b
     t = t + 2 * np.pi if t <= s else t
     u, v = _unit(s), _unit(t)
     turn = _cross(u, v)
     middle = 0.5 * (s + t)
+    if p is None or q is None:  # where a set without end begins is found by halving, to a degree
+        return 0.0 if p is q else 0.05 * (t - s), middle
     if turn < 1e-9:
         return 0.0, middle
     corner = np.array([h * v[1] - k * u[1], k * u[0] - h * v[0]]) / turn
@@ -242,10 +243,18 @@ def _corners(points: np.ndarray) -> np.ndarray:
     return ends if np.abs(ends[1] - ends[0]).max() > 1e-9 * size else ends[:1]
 
 
-def _unbounded(ask: Support, budget: int, around: list[np.ndarray]) -> tuple[np.ndarray, np.ndarray]:
+def _unbounded(ask: Support, budget: int, around: list[np.ndarray]) -> tuple[np.ndarray, np.ndarray, int]:
     """A region without end: what all supporting lines leave of a window around its corners."""
-    asked = [(t, *ask(_unit(t))) for t in 2 * np.pi * np.arange(budget) / budget]
-    points = [p for _, h, p in asked if np.isfinite(h) and p is not None and np.abs(p).max() < 3.0]
+    reach = 3.0
+    far = max([reach, *[float(np.abs(p).max()) for p in around]])
+
+    def near(theta: float) -> Side:
+        """A side whose point is forgotten when it is far away, where no picture needs more directions."""
+        _, height, point = _scaled(ask, theta, np.ones(2))
+        return theta, height, point if point is not None and np.abs(point).max() < 5 * far else None
+
+    asked, _ = _sandwich([near(t) for t in np.arange(LEAST) * 2 * np.pi / LEAST], near, max(budget, LEAST))
+    points = [p for _, _, p in asked if p is not None and np.abs(p).max() < reach]
     inside = np.array([*points, *around] or [np.zeros(2)])
     low, high = inside.min(axis=0), inside.max(axis=0)
     margin = 0.5 * np.where(high > low, high - low, np.maximum(np.abs(high), 1.0))
@@ -255,7 +264,8 @@ def _unbounded(ask: Support, budget: int, around: list[np.ndarray]) -> tuple[np.
     for theta, height, _ in asked:
         if np.isfinite(height):
             polygon = _cut(polygon, _unit(theta), height)
-    return np.array([p for p, _ in polygon]).reshape(-1, 2), np.array([edge for _, edge in polygon], bool)
+    corners = np.array([p for p, _ in polygon]).reshape(-1, 2)
+    return corners, np.array([edge for _, edge in polygon], bool), len(asked)
 
 
 def _cut(polygon: list[tuple[np.ndarray, bool]], u: np.ndarray, height: float) -> list[tuple[np.ndarray, bool]]:
