@@ -82,6 +82,13 @@ def _scaled(target, f):
     return type(target)(target.value * f)
 
 
+def interval(target):
+    """Ends of the residual that a target allows, from its meaning."""
+    if isinstance(target, Within):
+        return -target.tolerance, target.tolerance
+    return {AtMost: (-np.inf, 0.0), AtLeast: (0.0, np.inf), Measured: (-np.inf, np.inf)}.get(type(target), (0.0, 0.0))
+
+
 def charges(rng, sort: str, m: int, size: int):
     """Independent charges of spread about one, with offsets, and log weights or None."""
     weights = rng.uniform(-1, 1, size) * 6 if sort == "weights" else None
