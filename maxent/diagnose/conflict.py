@@ -63,8 +63,8 @@ def conflict(problem: Problem, outcome: Outcome, slack: Slack | None = None) -> 
         if not doubtful or len(held) == 1:
             return tuple(int(j) for j in held)
         left = held[held != doubtful[0]]
-        trial = decide_relaxed(part(problem, left), _part_of(slack, left)).outcome
-        if trial.verdict in UNREACHABLE and trial.direction is not None:
+        trial = _trial(part(problem, left), _part_of(slack, left))
+        if trial is not None and trial.verdict in UNREACHABLE and trial.direction is not None:
             v = np.zeros(len(v))
             v[left] = trial.direction
             v = _shortened(problem, slack, v, needed)
@@ -72,23 +72,26 @@ def conflict(problem: Problem, outcome: Outcome, slack: Slack | None = None) -> 
             needed.add(doubtful[0])
 
 
+def _trial(problem: Problem, slack: Slack) -> Outcome | None:
+    """Verdict on some of the charges; None where they have no state to start from (sums that need the others)."""
+    start = problem.family.evaluate(problem.family.start(), 1)
+    return decide_relaxed(problem, slack).outcome if np.isfinite(start.log_partition) else None
+
+
 def _part_of(slack: Slack, keep: np.ndarray) -> Slack:
     return Slack(slack.lower[keep], slack.upper[keep], slack.penalty[np.ix_(keep, keep)])
 
 
 def _shortened(problem: Problem, slack: Slack, v: np.ndarray, needed: set[int]) -> np.ndarray:
-    """The certificate `v` without its smallest parts (in units of each charge's size), as long as it verifies."""
+    """The certificate `v` without parts that it verifies without, smallest first (in units of each charge's size)."""
     weight = np.abs(v) * problem.size
     for j in np.argsort(weight, kind="stable"):
-        if not weight[j]:
-            continue
         shorter = v.copy()
         shorter[j] = 0.0
         length = np.linalg.norm(shorter)
-        if int(j) in needed or not length:
-            break
+        if not weight[j] or int(j) in needed or not length:
+            continue
         margin, tolerance, _ = slack.verify(problem, shorter / length)
-        if not margin > tolerance:
-            break
-        v = shorter / length
+        if margin > tolerance:
+            v = shorter / length
     return v

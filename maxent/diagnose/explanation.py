@@ -102,7 +102,10 @@ def _nearest(f: Findings, at: Nearest) -> list[str]:
     rest = " The other targets stay." if len(moved) < len(f.names) else ""
     units = listing((f"{number(u, 4)} for {n}" for n, u in at.unit.items()), last="and")
     gap = at.upper - at.lower
-    bounds = "both bounds agree" if gap == 0 else f"proved to {number(gap, 1)}"
+    if gap > 1e-6 * at.distance:
+        bounds = f"no reachable targets are nearer than {number(at.lower, 6)}; the search ended in between"
+    else:
+        bounds = "both bounds agree" if gap == 0 else f"proved to {number(gap, 1)}"
     return [
         f"Nearest reachable targets: {listing(steps, last='and')}.{rest}",
         f"Their distance is {number(at.distance, 6)} ({bounds}), the root of the sum of (move/unit)^2; unit {units}.",

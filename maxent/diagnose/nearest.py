@@ -19,7 +19,7 @@ from maxent.core.contract import EPS, SAFETY, Evaluation, Family, Lowest, Proble
 from maxent.core.decide import decide
 from maxent.core.newton import PATIENCE, at_floor, begin, newton_step
 from maxent.core.outcome import Outcome
-from maxent.core.whiten import Whitening
+from maxent.core.whiten import Whitening, whiten
 from maxent.diagnose.conflict import UNREACHABLE
 from maxent.diagnose.corral import Corral
 
@@ -119,13 +119,14 @@ def nearest(problem: Problem, outcome: Outcome, unit: np.ndarray) -> Move | None
     size = float(np.max(problem.size / unit, initial=0.0)) or 1.0
     if not basis.shape[1]:
         off = float(np.linalg.norm(fixed))
-        return Move(unit * fixed, off, off, unit, size)
+        return Move(_agreeing(problem, unit * fixed, unit), off, off, unit, size)
     # charges of norm one, counted from the targets that agree with the numbers
     matrix = basis.T / unit / size
     family = problem.family.combine(matrix, matrix @ (unit * fixed))
     free = Problem(family, np.abs(matrix) @ problem.noise, np.zeros(len(matrix)))
     y, lower = _shortest(free, outcome, basis.T @ (outcome.direction * unit))
     shift = unit * (fixed + size * (basis @ y))
+    shift = _agreeing(problem, shift, unit) if outcome.whitening.null else shift
     off = float(np.linalg.norm(fixed))
     upper = float(np.linalg.norm(shift / unit))
     return Move(shift, min(upper, float(np.hypot(off, size * lower))), upper, unit, size)
@@ -140,6 +141,12 @@ def _numbers(whitening: Whitening, unit: np.ndarray) -> tuple[np.ndarray, np.nda
     _, s, right = np.linalg.svd(rows / np.linalg.norm(rows, axis=1)[:, None])
     rank = int(np.sum(s > 1e-8 * s[0]))
     return right[:rank].T @ (right[:rank] @ (whitening.mean / unit)), right[rank:].T
+
+
+def _agreeing(problem: Problem, shift: np.ndarray, unit: np.ndarray) -> np.ndarray:
+    """`shift` met by all combinations that are numbers, to the rounding of every charge and not of the largest one."""
+    there = replace(problem, family=problem.family.combine(np.eye(len(unit)), shift))
+    return shift + unit * _numbers(whiten(there), unit)[0]
 
 
 # ---------------------------------------------------------------- the search

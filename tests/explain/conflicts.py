@@ -1,7 +1,7 @@
 """Problems with a planted conflict: a set of charges that cannot be met, while all of them but one can.
 
-The planted charges live on states of their own; the others live on a second factor of a product space, with targets well
-inside.  So no other set is in conflict, unless two conflicts are planted.  Nothing here calls the solver.
+The planted charges live on states of their own; the others live on a second factor of a product space, with targets
+well inside.  So no other set is in conflict, unless two conflicts are planted.  Nothing here calls the solver.
 """
 
 from __future__ import annotations
