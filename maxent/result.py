@@ -131,7 +131,8 @@ class Certificate:
         ----------
         family : Family
             With named charges, as it was given to `maxent.solve`.
-        targets : dict of str to float
+        targets : dict of str to float, Exact, Within, AtMost, AtLeast or Measured
+            As given to `maxent.solve`; what they leave open is computed from them again.
 
         Returns
         -------
@@ -146,7 +147,8 @@ class Certificate:
         names = family.names  # type: ignore[attr-defined]
         q, accuracy = collect(names, targets, self.accuracy)
         v = np.array([self.direction.get(n, 0.0) for n in names], float)
-        return prove_outside(family, v, q, accuracy, kind=self.kind, margin=self.margin)
+        slack = collect_slack(names, targets)
+        return prove_outside(family, v, q, accuracy, slack, kind=self.kind, margin=self.margin)
 
 
 @dataclass(frozen=True)
@@ -315,7 +317,7 @@ class Result:
                 out[n] = float("nan")
         return out
 
-    def prove(self, family: Family) -> Proof:
+    def prove(self, family: Family, targets: Mapping[str, Any] | None = None) -> Proof:
         """Prove the verdict as a theorem about the numbers given.
 
         Infeasible and inconsistent: `Certificate.prove`.  Solved: a ball of targets around these is reachable, hence
@@ -325,17 +327,31 @@ class Result:
         ----------
         family : Family
             As it was given to `maxent.solve`.
+        targets : dict of str to float, Exact, Within, AtMost, AtLeast or Measured, optional
+            As given to `maxent.solve`; needed when one of them leaves something open.
 
         Returns
         -------
         Proof
+
+        Raises
+        ------
+        ValueError
+            A target leaves something open and `targets` are not given, or the names do not fit.
         """
+        if targets is None:
+            relaxed = [n for n, place in self.slack.items() if place != "exact"]
+            if relaxed:
+                raise ValueError(f"target {relaxed[0]!r} leaves something open: give prove the targets, too")
+            targets = self.targets
         if self.certificate is not None:
-            return self.certificate.prove(family, self.targets)
+            return self.certificate.prove(family, targets)
         if self.verdict is not Verdict.SOLVED:
             return Proof(NOT_PROVABLE, float("nan"), None, "", f"nothing to prove: the verdict is {self.verdict}")
-        q = np.array([self.targets[n] for n in self.names])
-        return prove_interior(family, self.state, q, self.outcome.problem.accuracy)
+        q, _ = collect(self.names, targets, 0.0)
+        values = np.array([self.values[n] for n in self.names])
+        accuracy, slack = self.outcome.problem.accuracy, collect_slack(self.names, targets)
+        return prove_interior(family, self.state, q, accuracy, slack, values)
 
     def require(self) -> Result:
         """The result itself when solved.

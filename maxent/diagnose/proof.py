@@ -16,7 +16,8 @@ import numpy as np
 import scipy.sparse as sp
 
 from maxent.core.contract import Family
-from maxent.diagnose.proofs.bounds import below, scaled
+from maxent.core.slack import Slack
+from maxent.diagnose.proofs.bounds import above, below, scaled
 from maxent.diagnose.proofs.cholesky import lowest_eigenvalue
 from maxent.diagnose.proofs.interior import Part, reachable_ball
 from maxent.diagnose.proofs.listed import lowest_listed
@@ -42,11 +43,11 @@ class Proof:
     ----------
     status : {"proved", "not provable at this margin", "no proof method for this family"}
     margin : float
-        For a certificate: no state has a smaller ``<v.(Q - q)>``; a rigorous lower bound, rounded down.  For a solved
-        result: every target closer than this (Euclidean, in the units of the charges) is reachable.  NaN when nothing
-        is known.
+        For a certificate: no state has a smaller ``<v.(Q - q)>``, less what the targets leave open; a rigorous lower
+        bound, rounded down.  For a solved result: every target closer than this (Euclidean, in the units of the
+        charges) is reachable.  NaN when nothing is known.
     exact : str or None
-        The smallest ``v.(Q - q)`` itself as a fraction, where listed states decide it.
+        The smallest ``v.(Q - q)``, less what the targets leave open, as a fraction where listed states decide it.
     method : str
         How the bound was found; empty without one.
     detail : str
@@ -87,7 +88,7 @@ def _given(family: Any) -> _Given | None:
 
 @_given.register
 def _(family: Microstates) -> _Given | None:
-    return _Given(family.blocks.diagonal, ())
+    return _Given(np.asarray(family.blocks.diagonal, float), ())
 
 
 @_given.register
@@ -107,17 +108,20 @@ def _no_method(family: Family) -> Proof:
 
 
 def prove_outside(
-    family: Family, v: np.ndarray, targets: np.ndarray, accuracy: np.ndarray, *, kind: str, margin: float
+    family: Family, v: np.ndarray, targets: np.ndarray, accuracy: np.ndarray, slack: Slack, *, kind: str, margin: float
 ) -> Proof:
-    """Prove ``v.(Q - q) >= margin' 1 > 0`` for the numbers given, with the largest margin' that can be had.
+    """Prove ``v.(Q - q) - h(v) >= margin' 1 > 0`` for the numbers given, with the largest margin' that can be had.
 
-    Then no state has these values, nor values within the stated accuracy: ``margin' > sum_j |v_j| t_j`` is asked for.
-    A contradiction is the same inequality; that v.Q is a number need not be proved for it.
+    h(v) is the largest ``v.r`` of residuals r that tolerances and limits allow, 0 for exact targets.  Then no state has
+    these values, nor values within the stated accuracy: ``margin' > sum_j |v_j| t_j`` is asked for.  A contradiction is
+    the same inequality; that v.Q is a number need not be proved for it.
 
     Parameters
     ----------
     family : Family
     v, targets, accuracy : (m,) ndarrays
+    slack : Slack
+        What tolerances and limits leave open.
     kind : {"outside", "contradiction", "face"}
         A face is an equality, which no margin proves; its bound is computed all the same.
     margin : float
@@ -126,14 +130,20 @@ def prove_outside(
     given = _given(family)
     if given is None:
         return _no_method(family)
+    open_ = _support(slack, v)
+    if open_ is None:
+        detail = "the targets do not limit v.(Q - q): the direction has a charge with no limit on that side"
+        return Proof(NOT_PROVABLE, float("-inf"), None, "", detail)
     found = _lowest(given, v, targets)
     if found is None:
         detail = "the numbers overflow, or no decomposition could be completed"
         return Proof(NOT_PROVABLE, float("nan"), None, "", detail)
     lowest, exact, method = found
+    lowest -= open_
     loss = _product(np.abs(v), accuracy)
     low = below(lowest)
-    claim = f"v.(Q - q) >= {low:.6g} in every state ({method}; float64 says {margin:.6g})"
+    left = f" - {float(open_):.6g}, which the targets leave open," if open_ else ""
+    claim = f"v.(Q - q){left} >= {low:.6g} in every state ({method}; float64 says {margin:.6g})"
     if kind == "face":
         status, detail = NOT_PROVABLE, f"the targets lie on the boundary: an equality, which no margin proves; {claim}"
         detail += ": taken to the last bit, the targets lie outside" if lowest > loss else ""
@@ -150,6 +160,13 @@ def prove_outside(
 def _product(x: np.ndarray, y: np.ndarray) -> Fraction:
     """``x.y`` exactly."""
     return sum((Fraction(a) * Fraction(b) for a, b in zip(x.tolist(), y.tolist(), strict=True)), Fraction(0))
+
+
+def _support(slack: Slack, v: np.ndarray) -> Fraction | None:
+    """Largest ``v.r`` of the residuals r that are allowed, exactly; None where there is none."""
+    on = v != 0
+    ends = np.where(v > 0, slack.upper, slack.lower)[on]
+    return _product(v[on], ends) if np.isfinite(ends).all() and np.isfinite(v).all() else None
 
 
 def _lowest(given: _Given, v: np.ndarray, targets: np.ndarray) -> tuple[Fraction, bool, str] | None:
@@ -174,7 +191,7 @@ def _lowest(given: _Given, v: np.ndarray, targets: np.ndarray) -> tuple[Fraction
                 return None
             if lowest is None or found[0] < lowest:
                 (lowest, method), exact = found, False
-    except OverflowError:
+    except (OverflowError, np.linalg.LinAlgError):  # the latter: no convergence of the eigenvalues
         return None
     return None if lowest is None else (lowest * back - asked, exact, method)
 
@@ -182,8 +199,13 @@ def _lowest(given: _Given, v: np.ndarray, targets: np.ndarray) -> tuple[Fraction
 # ---------------------------------------------------------------- solved targets
 
 
-def prove_interior(family: Family, state: Any, targets: np.ndarray, accuracy: np.ndarray) -> Proof:
+def prove_interior(
+    family: Family, state: Any, targets: np.ndarray, accuracy: np.ndarray, slack: Slack, values: np.ndarray
+) -> Proof:
     """Prove that a ball of targets around these is reachable, hence that the multipliers exist.
+
+    Where targets leave something open, the ball lies around allowed values q' near those of the state: the dual with
+    its kinks and penalties lies above ``ln Z + lam.q'``, which grows in every direction, so it has a minimum, too.
 
     Parameters
     ----------
@@ -191,6 +213,9 @@ def prove_interior(family: Family, state: Any, targets: np.ndarray, accuracy: np
     state : MicrostatesState or MatricesState
         The state found; anything near it proves the same.
     targets, accuracy : (m,) ndarrays
+    slack : Slack
+    values : (m,) ndarray
+        Of the state.
 
     Notes
     -----
@@ -202,19 +227,32 @@ def prove_interior(family: Family, state: Any, targets: np.ndarray, accuracy: np
     if not len(targets):
         return Proof(PROVED, float("inf"), None, BALL, "nothing is asked")
     parts = _parts(family, given, state)
+    centre = "allowed values" if slack.any else "these"
     try:
-        found = reachable_ball(parts, targets, accuracy)
+        found = reachable_ball(parts, _allowed(slack, targets, values), accuracy)
     except OverflowError:
         found = None
     if found is None:
-        detail = "no ball of reachable targets could be proved around these (redundant charges allow none)"
+        detail = f"no ball of reachable targets could be proved around {centre} (redundant charges allow none)"
         return Proof(NOT_PROVABLE, 0.0, None, BALL, detail)
     radius, covers = found
     low = below(radius)
-    claim = f"every target within {low:.6g} of these is reachable ({BALL})"
+    claim = f"every target within {low:.6g} of {centre} is reachable ({BALL})"
     if not covers:
         return Proof(NOT_PROVABLE, low, None, BALL, f"{claim}, but not all within the stated accuracy are proved")
     return Proof(PROVED, low, None, BALL, f"{claim}, so finite multipliers exist")
+
+
+def _allowed(slack: Slack, targets: np.ndarray, values: np.ndarray) -> np.ndarray:
+    """Float64 values near those of the state that every tolerance and limit allows, to the last bit."""
+    out = np.where(slack.is_exact, targets, np.clip(values, targets + slack.lower, targets + slack.upper))
+    for j in np.flatnonzero(~slack.is_exact):
+        q = Fraction(float(targets[j]))
+        if np.isfinite(slack.upper[j]) and Fraction(float(out[j])) - q > Fraction(float(slack.upper[j])):
+            out[j] = below(q + Fraction(float(slack.upper[j])))
+        if np.isfinite(slack.lower[j]) and Fraction(float(out[j])) - q < Fraction(float(slack.lower[j])):
+            out[j] = above(q + Fraction(float(slack.lower[j])))
+    return out
 
 
 def _parts(family: Family, given: _Given, state: Any) -> list[Part]:

@@ -2,7 +2,7 @@
 
 Scalars are exact fractions, so a bound never needs a bound of its own; arrays are float64 with a stated relative error.
 Every bound holds for any order of summation, with or without fused multiply-add (N. J. Higham, Accuracy and Stability
-of Numerical Algorithms, 2nd ed., SIAM 2002, section 3.1, from memory), and when underflow is gradual or flushed to zero.
+of Numerical Algorithms, 2nd ed., SIAM 2002, section 3.1, from memory), with underflow gradual or flushed to zero.
 Floor: diagnose.
 """
 

@@ -87,13 +87,13 @@ def reachable_ball(parts: Sequence[Part], targets: np.ndarray, accuracy: np.ndar
     m = len(targets)
     transform = np.eye(m)
     with np.errstate(all="ignore"):
-        for _ in range(3):
+        for attempt in range(3):
             # again: the first whitening of nearly dependent charges is only as good as their covariance
             sums = _evaluate(parts, targets, transform)
             symmetric = 0.5 * (sums.overlap + sums.overlap.T)
             if not np.isfinite(symmetric).all():
                 return None
-            if np.abs(symmetric - np.eye(m)).max(initial=0.0) < 1e-3:
+            if attempt == 2 or np.abs(symmetric - np.eye(m)).max(initial=0.0) < 1e-3:
                 break
             size = np.sqrt(np.abs(np.diag(symmetric)))
             if not np.all(size > 0):
@@ -106,9 +106,8 @@ def reachable_ball(parts: Sequence[Part], targets: np.ndarray, accuracy: np.ndar
         reach = _reach(sums, m)
     if reach is None or reach <= 0:
         return None
-    frobenius = _length(transform)
     stretched = _length(np.abs(transform) @ accuracy) * (1 + gamma(m + 4)) + m * m * TINY
-    return reach / frobenius, stretched < reach
+    return reach / _stretch(transform), stretched < reach
 
 
 def _length(x: np.ndarray) -> Fraction:
@@ -121,8 +120,19 @@ def _length(x: np.ndarray) -> Fraction:
     return root * Fraction(top)
 
 
+def _stretch(transform: np.ndarray) -> Fraction:
+    """Upper bound of the operator norm: Frobenius, or ``sqrt(|T|_1 |T|_inf)``."""
+    size, m = np.abs(transform), len(transform)
+    sums = Fraction(float(size.sum(axis=0).max())) * Fraction(float(size.sum(axis=1).max())) * (1 + gamma(2 * m + 4))
+    root = Fraction(float(np.sqrt(above(sums)))) * (1 + gamma(4))
+    return min(_length(transform), root)
+
+
 def _reach(sums: _Sums, m: int) -> Fraction | None:
     """The radius r of the theorem."""
+    numbers = (sums.overlap, sums.overlap_error, sums.residual, sums.residual_error, sums.means, sums.trace)
+    if not all(np.isfinite(x).all() for x in numbers):
+        return None
     off = _length(np.abs(sums.overlap - np.eye(m)) + sums.overlap_error) * (1 + 4 * UNIT)
     rest = _length(np.abs(sums.residual) + sums.residual_error) * (1 + 4 * UNIT)
     spread = Fraction(above(Fraction(float(np.sqrt(above(sums.square)))) * (1 + 2 * UNIT)))

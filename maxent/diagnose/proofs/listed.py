@@ -41,12 +41,13 @@ def lowest_listed(w: np.ndarray, listed: np.ndarray, *, most: int = EXACT) -> tu
     least, ceiling = np.empty(n), np.inf
     for i in range(0, n, PASS):
         f = listed[:, i : i + PASS]
-        height = w @ f
-        radius = unit * (np.abs(w) @ np.abs(f)) + tiny
+        with np.errstate(over="ignore", invalid="ignore"):
+            height = w @ f
+            radius = unit * (np.abs(w) @ np.abs(f)) + tiny
+        if not np.isfinite(height).all() or not np.isfinite(radius).all():
+            raise OverflowError("the charges overflow")
         least[i : i + PASS] = height - radius
         ceiling = min(ceiling, float((height + radius).min()))
-    if not np.isfinite(ceiling) or not np.isfinite(least).all():
-        raise OverflowError("the charges overflow")
     rivals = np.flatnonzero(least <= ceiling)
     if len(rivals) * m > most:
         distinct = np.unique(listed[:, rivals], axis=1)
