@@ -16,10 +16,11 @@ from typing import Any, NamedTuple
 import jax
 import jax.numpy as jnp
 
+from maxent.core.blocks import Blocks
 from maxent.core.contract import EPS, Evaluation, Family
 from maxent.core.newton import PATIENCE, Iterate, at_floor, begin, newton_step
 
-__all__ = ["Fit", "attach", "fit", "norm", "values_at", "whitener"]
+__all__ = ["Fit", "attach", "fit", "minimiser_near", "norm", "values_at", "whitener"]
 
 #: Eigenvalues of the normalised covariance below this are redundancies: the Gram matrix knows no better.
 REDUNDANT = 1e-13
@@ -84,7 +85,21 @@ def fit(family: Family, targets: Any, free: tuple[int, ...], m: int, iterations:
 
     count, at = jax.lax.while_loop(unfinished, advance, (jnp.asarray(0), begin(evaluate, start)))
     lam = attach(family, targets, spread_out(transform.T @ at.lam, free, m), free)
-    return Fit(lam, at_floor(at), count)
+    reach = still.reach()[picked] if isinstance(still, Blocks) else jnp.full(len(free), jnp.nan)
+    return Fit(lam, at_floor(at) & minimiser_near(at, jnp.abs(transform) @ reach), count)
+
+
+def minimiser_near(at: Iterate, reach: Any) -> Any:
+    """Whether a minimiser exists near the iterate: ``R nu < 1/2`` of `core.exists`, with `reach` bounding the spreads.
+
+    A diverging run always gets to its rounding floor, which grows with the exponent; this tells it from a fit.  Where no
+    bound is known (NaN), a relative residual of 1e-9 has to do.
+    """
+    h = jnp.maximum(at.curvature, 1e-150)
+    off = jnp.abs(at.axes.T @ at.evaluation.values) + at.evaluation.rounding
+    nu2 = jnp.sum(off**2 / h)
+    r2 = jnp.sum((jnp.abs(at.axes.T) @ reach) ** 2 / h)
+    return jnp.where(jnp.isnan(r2), at.residual < 1e-9, r2 * nu2 < 0.25)
 
 
 def whitener(covariance: Any) -> Any:

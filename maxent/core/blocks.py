@@ -318,6 +318,19 @@ class Blocks(Family):
             dense.append(on_diagonal(new, -offset))
         return Blocks(diagonal, tuple(dense), self.prior, self.prior_dense)
 
+    def reach(self) -> Any:
+        """Upper bounds of the spread of each charge, (m,), traceable: entries and row sums."""
+        xp = namespace(self.diagonal)
+        low, high = [], []
+        if self.diagonal.shape[1]:
+            low, high = [xp.min(self.diagonal, axis=1)], [xp.max(self.diagonal, axis=1)]
+        for a in self.dense:
+            centre = xp.real(xp.einsum("jii->j", a)) / a.shape[1]
+            off = xp.sum(xp.abs(a), axis=2) - xp.abs(xp.einsum("jii->ji", a))
+            radius = xp.max(off + xp.abs(xp.real(xp.einsum("jii->ji", a)) - centre[:, None]), axis=1)
+            low, high = [*low, centre - radius], [*high, centre + radius]
+        return xp.max(xp.stack(high), axis=0) - xp.min(xp.stack(low), axis=0)
+
     def spectra(self, v: np.ndarray) -> tuple[np.ndarray, list[np.ndarray]]:
         """Levels of ``v.Q``: on the diagonal states, and ascending in each dense block."""
         return v @ self.diagonal, [eigvalsh(combination(v, a)) for a in self.dense]

@@ -128,7 +128,9 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
         value, off, chi = evaluate(x, q)
         start = (jnp.asarray(1), x, value, off, chi, newton(off, chi), jnp.asarray(1.0))
         count, x, value, off, chi, step, _ = jax.lax.while_loop(unfinished, advance, start)
-        done = settled(x, off, chi, step)
+        inverse = jnp.linalg.inv(chi + 1e-300 * jnp.eye(k))
+        exists = jnp.trace(inverse) * (2 * reach * (norm(off) + 16 * floor(x, chi))) ** 2 * jnp.trace(inverse) < 0.25
+        done = settled(x, off, chi, step) & exists
         x = jnp.where(done, x + step, x)
         left = jnp.where(done, jnp.zeros(k), off)
         return x, done, count, value - 0.5 * jnp.where(done, off @ step, 0.0) - x @ q, left

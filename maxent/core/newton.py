@@ -50,7 +50,7 @@ def trust_step(gradient: Any, curvature: Any, axes: Any, radius: Any) -> tuple[A
     xp = namespace(gradient)
     g = axes.T @ gradient
     mu = xp.maximum(norm(g) / radius - xp.max(curvature), 0.0)
-    for _ in range(14):
+    for _ in range(8):
         size = norm(g / (curvature + mu))
         slope = xp.sum(g**2 / (curvature + mu) ** 3) / xp.maximum(size, 1e-300)
         mu = xp.where(size > radius, mu + (size / radius - 1) * size / xp.maximum(slope, 1e-300), mu)
