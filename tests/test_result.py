@@ -182,7 +182,12 @@ def test_limit_states_answer_means():
 @pytest.mark.parametrize(
     ("targets", "kwargs", "error", "message"),
     [
-        ({"energie": 1.0, "number": 0.5}, {}, ValueError, r"target 'energie' is for no charge \(charges: 'energy', 'number'\); did you mean 'energy'\?"),
+        (
+            {"energie": 1.0, "number": 0.5},
+            {},
+            ValueError,
+            r"target 'energie' is for no charge \(charges: 'energy', 'number'\); did you mean 'energy'\?",
+        ),
         ({"energy": 1.0}, {}, ValueError, "no target for charge 'number'"),
         ({}, {}, ValueError, "no target for charge 'energy'"),
         ([1.0, 0.5], {}, TypeError, "targets must be a dict name -> value, not list"),
@@ -193,11 +198,31 @@ def test_limit_states_answer_means():
         ({"energy": float("nan"), "number": 0.5}, {}, ValueError, "target 'energy' is nan; it must be finite"),
         ({"energy": 1.0, "number": float("inf")}, {}, ValueError, "target 'number' is inf; it must be finite"),
         ({"energy": [1.0, 2.0], "number": 0.5}, {}, TypeError, "target 'energy' must be a number, not list"),
-        ({"energy": np.ones(2), "number": 0.5}, {}, TypeError, r"target 'energy' must be one number, not an array of shape \(2,\)"),
-        ({"energy": 1.0, "number": 0.5}, {"accuracy": -1.0}, ValueError, "accuracy 'energy' is -1.0; it must not be negative"),
-        ({"energy": 1.0, "number": 0.5}, {"accuracy": {"numbr": 0.1}}, ValueError, "accuracy 'numbr' is for no charge .*did you mean 'number'"),
+        (
+            {"energy": np.ones(2), "number": 0.5},
+            {},
+            TypeError,
+            r"target 'energy' must be one number, not an array of shape \(2,\)",
+        ),
+        (
+            {"energy": 1.0, "number": 0.5},
+            {"accuracy": -1.0},
+            ValueError,
+            "accuracy 'energy' is -1.0; it must not be negative",
+        ),
+        (
+            {"energy": 1.0, "number": 0.5},
+            {"accuracy": {"numbr": 0.1}},
+            ValueError,
+            "accuracy 'numbr' is for no charge .*did you mean 'number'",
+        ),
         ({"energy": 1.0, "number": 0.5}, {"accuracy": float("nan")}, ValueError, "accuracy is nan; it must be finite"),
-        ({"energy": 1.0, "number": 0.5}, {"driver": "gpu"}, ValueError, "driver must be one of 'auto', 'host', 'jax', not 'gpu'"),
+        (
+            {"energy": 1.0, "number": 0.5},
+            {"driver": "gpu"},
+            ValueError,
+            "driver must be one of 'auto', 'host', 'jax', not 'gpu'",
+        ),
     ],
 )
 def test_bad_requests(targets, kwargs, error, message):

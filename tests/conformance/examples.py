@@ -115,7 +115,9 @@ def _commuting() -> Example:
     stack = np.array([(u * r) @ u.conj().T for r in rows])
     stack = (stack + stack.conj().transpose(0, 2, 1)) / 2
     family = Matrices(dict(zip(NAMES, stack, strict=True)), dims=(2, 3))
-    return Example("matrices-commuting", family, Dense(stack, np.zeros((d, d))), 2, _plain_observable(d, is_complex=True))
+    return Example(
+        "matrices-commuting", family, Dense(stack, np.zeros((d, d))), 2, _plain_observable(d, is_complex=True)
+    )
 
 
 def _blocks(*, has_prior: bool) -> Example:

@@ -76,7 +76,9 @@ def test_lowest_is_the_smallest_eigenvalue(view):
         # the values belong to a state: it attains the minimum, and no direction finds them out of reach
         assert v @ low.values == pytest.approx(levels[0], abs=1e-12 * (1 + np.abs(levels).max()))
         for w in rng.standard_normal((5, view.m)):
-            assert w @ low.values >= view.dense.levels(w)[0] - 1e-12 * (1 + np.abs(w @ view.dense.charges.reshape(view.m, -1)).max())
+            assert w @ low.values >= view.dense.levels(w)[0] - 1e-12 * (
+                1 + np.abs(w @ view.dense.charges.reshape(view.m, -1)).max()
+            )
         assert view.family.glance(v) >= levels[0] - 1e-13 * (1 + np.abs(levels).max())
 
 
@@ -195,7 +197,12 @@ def test_curvature_of_commuting_charges_falls_no_faster_in_any_direction(view):
 @every_example
 def test_combine_composes(example):
     rng = np.random.default_rng(2)
-    a, b, x, y = rng.standard_normal((3, 3)), rng.standard_normal((2, 3)), rng.standard_normal(3), rng.standard_normal(2)
+    a, b, x, y = (
+        rng.standard_normal((3, 3)),
+        rng.standard_normal((2, 3)),
+        rng.standard_normal(3),
+        rng.standard_normal(2),
+    )
     twice, once = example.family.combine(a, x).combine(b, y), example.family.combine(b @ a, b @ x + y)
     lam = np.array([0.4, -0.7])
     np.testing.assert_allclose(twice.evaluate(lam).values, once.evaluate(lam).values, atol=1e-12)

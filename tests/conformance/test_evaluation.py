@@ -70,7 +70,9 @@ def test_values_are_differences_of_log_partition(view):
             slope = (at(lam + e).log_partition - at(lam - e).log_partition) / (2 * step)
             assert slope == pytest.approx(-ev.values[j], abs=2e-6 * (1 + np.abs(ev.covariance).max() ** 1.5))
             bend = (at(lam + e).values - at(lam - e).values) / (2 * step)
-            np.testing.assert_allclose(-bend, ev.covariance[j], rtol=0, atol=1e-5 * (1 + np.abs(ev.covariance).max() ** 2))
+            np.testing.assert_allclose(
+                -bend, ev.covariance[j], rtol=0, atol=1e-5 * (1 + np.abs(ev.covariance).max() ** 2)
+            )
 
 
 @every_compiled
@@ -113,7 +115,9 @@ def test_level_is_the_size_of_the_exponent(view):
         assert 0 < float(ev.rounding) < 1e-12
 
 
-@pytest.mark.parametrize("name", ["microstates-log_weights", "matrices-commuting", "matrices-complex", "matrices-blocks"])
+@pytest.mark.parametrize(
+    "name", ["microstates-log_weights", "matrices-commuting", "matrices-complex", "matrices-blocks"]
+)
 def test_compiled_one_by_one_equals_the_batch(name):
     """jit takes families as arguments; the batch is the loop over its members."""
     (view,) = [v for v in views() if v.name == f"{name}-given"]

@@ -56,7 +56,9 @@ def test_multipliers_to_targets_and_back(example, lam):
     slack = 1e-14 / np.linalg.eigvalsh(covariance)[0]
     np.testing.assert_allclose(listed(result), lam, rtol=0, atol=20 * slack + 1e-13)
     np.testing.assert_allclose(list(result.values.values()), targets, rtol=0, atol=1e-13 * (1 + np.abs(targets).max()))
-    np.testing.assert_allclose(result.covariance, covariance, rtol=0, atol=1e-11 * np.abs(covariance).max() + slack * 1e-2)
+    np.testing.assert_allclose(
+        result.covariance, covariance, rtol=0, atol=1e-11 * np.abs(covariance).max() + slack * 1e-2
+    )
     assert result.log_partition == pytest.approx(log_z, abs=1e-11 + 100 * slack)
     rho = example.dense.density(lam)[0]
     x, inside = example.observable(np.random.default_rng(1))
@@ -220,7 +222,8 @@ def test_drivers_agree_on_the_unreachable(example):
 
 ONE_STATE = [Microstates({"a": [2.0], "b": [-3.0]}), Matrices({"a": [[2.0]], "b": [[-3.0]]})]
 NO_CHARGE = [
-    Microstates({}, log_weights=np.log([1.0, 2.0, 3.0])), Matrices({}, dims=(2, 3)), Matrices({}, basis=np.eye(4)[:, :2]),
+    Microstates({}, log_weights=np.log([1.0, 2.0, 3.0])), Matrices({}, dims=(2, 3)),
+    Matrices({}, basis=np.eye(4)[:, :2]),
 ]  # fmt: skip
 
 

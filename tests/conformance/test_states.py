@@ -128,14 +128,18 @@ def test_energy_window(example, rng):
     levels = np.linalg.eigvalsh(example.dense.charges[1])[:4]
     low = window.lowest(np.eye(3)[1])
     assert (low.value, low.highest) == (pytest.approx(levels[0], abs=1e-12), pytest.approx(levels[3], abs=1e-12))
-    means(example, window.state(LAM), vectors @ example.dense.compressed(vectors).density(LAM)[0] @ vectors.conj().T, rng)
+    means(
+        example, window.state(LAM), vectors @ example.dense.compressed(vectors).density(LAM)[0] @ vectors.conj().T, rng
+    )
 
 
 @every_matrices
 def test_reduced_states(example, rng):
     family = example.family
     if family.dims is None:  # the family with a prior was given none
-        family = Matrices(dict(zip(NAMES, example.dense.charges, strict=True)), dims=(2, 3), log_prior=example.dense.log_prior)
+        family = Matrices(
+            dict(zip(NAMES, example.dense.charges, strict=True)), dims=(2, 3), log_prior=example.dense.log_prior
+        )
     rho = example.dense.density(LAM)[0]
     if family.basis is not None:
         rho = family.basis @ rho @ family.basis.conj().T

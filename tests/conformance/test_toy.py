@@ -68,7 +68,7 @@ def test_outside(driver, seed, distance):
 @pytest.mark.parametrize("driver", ["host", "jax"])
 @pytest.mark.parametrize("seed", range(4))
 def test_boundary(driver, seed):
-    """Exactly on a face, an edge or a corner; without `face` it cannot be told from inside, and no verdict is made up."""
+    """Exactly on a face, an edge or a corner; without `face` it cannot be told from inside; no verdict is made up."""
     p = weights(seed, 1.0) * (POINTS[0] == 0)
     face = POINTS @ (p / p.sum())
     edge = np.array([0, 1.0, 0])

@@ -56,4 +56,6 @@ def views() -> tuple[View, ...]:
 def compiled_views() -> tuple[View, ...]:
     """The views that are also asked under JAX: all but faces of most kinds, for each shape is a compilation."""
     some = ("microstates-log_weights-face", "matrices-real-face")
-    return tuple(v for v in views() if v.name in some or v.name.endswith(("-given", "-combined")) and "face" not in v.name)
+    return tuple(
+        v for v in views() if v.name in some or v.name.endswith(("-given", "-combined")) and "face" not in v.name
+    )

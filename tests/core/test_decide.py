@@ -1,4 +1,4 @@
-"""Every stage of the decision answers somewhere, with the right verdict, and no stage answers another one's question."""
+"""Every stage of the decision answers somewhere, with the right verdict; no stage answers another one's question."""
 
 from __future__ import annotations
 
@@ -112,7 +112,7 @@ def test_without_stages_nothing_is_made_up():
 
 
 def test_edge_of_the_domain_in_closed_form():
-    """Inside: solved with lam_x = (1/(2<x>) - 1)^2; beyond 1/2 what is left over is the excess; below 0 nothing exists."""
+    """Inside: solved with lam_x = (1/(2<x>) - 1)^2; beyond 1/2 the rest is the excess; below 0 nothing exists."""
     inside, stage = asked(Tail(), [0.3, 0.2])
     assert (inside.verdict, stage) == (Verdict.SOLVED, "existence") and inside.evidence == "tested"
     lam = inside.whitening.transform.T @ inside.at.lam
@@ -171,7 +171,10 @@ def verdict(family, q, accuracy):
 @pytest.mark.parametrize("margin", [1e-2, 1e-5, 1e-8])
 def test_accuracy_decides_between_outside_and_edge(margin):
     """A target outside by less than its stated accuracy is on the boundary; by more, unreachable."""
-    for family, at, v in ((listed(DIE), np.array([1.0]), np.ones(1)), (SPIN, np.array([0.6, 0.8]), -np.array([0.6, 0.8]))):
+    for family, at, v in (
+        (listed(DIE), np.array([1.0]), np.ones(1)),
+        (SPIN, np.array([0.6, 0.8]), -np.array([0.6, 0.8])),
+    ):
         q = at - margin * v
         reach = np.abs(v).sum()  # tolerance of a unit direction is |v|.accuracy
         assert verdict(family, q, 0.0) is Verdict.INFEASIBLE

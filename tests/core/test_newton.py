@@ -52,7 +52,12 @@ def test_trust_step_against_scipy(rng):
     cons = {"type": "ineq", "fun": lambda x: 0.64 - x @ x, "jac": lambda x: -2 * x}
     start = -0.5 * g / np.linalg.norm(g)
     found = minimize(
-        lambda x: model(g, h, x), start, jac=lambda x: g + h @ x, constraints=cons, method="SLSQP", options={"ftol": 1e-15}
+        lambda x: model(g, h, x),
+        start,
+        jac=lambda x: g + h @ x,
+        constraints=cons,
+        method="SLSQP",
+        options={"ftol": 1e-15},
     )
     np.testing.assert_allclose(s, found.x, atol=1e-6)
 
@@ -136,8 +141,8 @@ def test_a_nonfinite_trial_is_a_rejected_step():
 
 
 def test_rejections_come_to_an_end():
-    """With values that contradict F no step is accepted; PATIENCE rejections show it."""
-    lie = lambda lam: Evaluation(float(lam @ lam), np.array([1.0, 0.0]), np.eye(2), 1e-15, 0.0)
+    """An isolated point of the domain: no step is accepted, however short; PATIENCE rejections show it."""
+    lie = lambda lam: Evaluation(np.inf if lam.any() else 0.0, np.array([1.0, 0.0]), np.eye(2), 1e-15, 0.0)
     at = begin(lie, np.zeros(2))
     for _ in range(PATIENCE + 1):
         at = newton_step(lie, at)

@@ -72,7 +72,7 @@ def test_hessian_at_zero_in_closed_form(rng):
 
 
 def test_spin_in_closed_form():
-    """ln Tr exp(-lam.sigma) = ln 2 cosh |lam|, at 0 and along an axis, where two charges do not commute with the exponent."""
+    """ln Tr exp(-lam.sigma) = ln 2 cosh |lam|, at 0 and along an axis, where two charges do not commute with it."""
     sigma = jnp.asarray(np.array([[[0, 1], [1, 0]], [[0, -1j], [1j, 0]], [[1, 0], [0, -1]]]))
     with jax.enable_x64(True):
         hessian = jax.jit(jax.hessian(lambda lam: log_trace_exp(jnp.tensordot(lam, sigma, axes=1))))
@@ -86,7 +86,9 @@ def test_reverse_and_forward_mode_agree(rng):
     k, a, b = (hermitian(rng, 4, is_complex=True) for _ in range(3))
     with jax.enable_x64(True):
         f = lambda t: log_trace_exp(jnp.asarray(k) + t[0] * a + t[1] * b)
-        every = jax.jit(lambda x: (jax.grad(f)(x), jax.jacfwd(f)(x), jax.jacrev(jax.grad(f))(x), jax.jacfwd(jax.jacfwd(f))(x)))
+        every = jax.jit(
+            lambda x: (jax.grad(f)(x), jax.jacfwd(f)(x), jax.jacrev(jax.grad(f))(x), jax.jacfwd(jax.jacfwd(f))(x))
+        )
         back, forward, back_twice, forward_twice = every(jnp.array([0.3, -0.2]))
         np.testing.assert_allclose(back, forward, atol=1e-14)
         np.testing.assert_allclose(back_twice, forward_twice, atol=1e-13)
@@ -103,7 +105,9 @@ def test_third_derivative_is_refused_or_right(gap):
     base = np.diag([0.0, 1.0, 1.0 + gap])
     change = np.array([[0, 1, 0], [1, 0, 2], [0, 2, 0.3]])
     with mpmath.workdps(60):
-        levels = lambda t: mpmath.eigsy(mpmath.matrix(base.tolist()) + t * mpmath.matrix(change.tolist()), eigvals_only=True)
+        levels = lambda t: mpmath.eigsy(
+            mpmath.matrix(base.tolist()) + t * mpmath.matrix(change.tolist()), eigvals_only=True
+        )
         f = lambda t: mpmath.log(sum(mpmath.exp(-e) for e in levels(t)))
         truth = float(mpmath.diff(f, 0, 3, h=mpmath.mpf(10) ** -12))
     with jax.enable_x64(True):

@@ -61,7 +61,7 @@ def test_replay_tells_what_the_listed_multipliers_reproduce():
 
 @pytest.mark.parametrize("accuracy", [1e-3, 1e-6, 1e-9])
 def test_errors_bound_what_perturbed_targets_do(rng, accuracy):
-    """Targets moved anywhere within their stated accuracy: no multiplier moves by more than its error, some nearly so."""
+    """Targets moved anywhere within their stated accuracy: no multiplier moves by more than its error."""
     rows = rng.standard_normal((3, 12))
     q = rows @ gibbs(rows, np.array([0.4, -0.6, 0.3]))
     family = listed(rows)
@@ -108,7 +108,7 @@ def test_loose_says_that_digits_are_missing():
 
 @pytest.mark.parametrize("kind", ["listed", "matrices"])
 def test_every_relation_is_true(rng, kind):
-    """Random dependent charges: each relation holds as an operator identity, and there are as many as there should be."""
+    """Random dependent charges: each relation holds as an operator identity; there are as many as there should be."""
     base = rng.standard_normal((2, 8)) if kind == "listed" else None
     if kind == "listed":
         mix = rng.standard_normal((5, 2))
@@ -141,7 +141,9 @@ def test_relations_are_as_short_as_possible():
     result = maxent.solve(family, {"x": 1.0, "twice": 2.0, "seven": 7.0, "zero": 0.0, "y": 2.5})
     found = {frozenset(r.coefficients): r for r in result.redundancies}
     assert set(found) == {frozenset({"x", "twice"}), frozenset({"seven"}), frozenset({"zero"})}
-    assert found[frozenset({"seven"})].constant / found[frozenset({"seven"})].coefficients["seven"] == pytest.approx(7.0)
+    assert found[frozenset({"seven"})].constant / found[frozenset({"seven"})].coefficients["seven"] == pytest.approx(
+        7.0
+    )
     pair = found[frozenset({"x", "twice"})].coefficients
     assert pair["x"] / pair["twice"] == pytest.approx(-2.0)
 
@@ -161,7 +163,9 @@ def test_conditioning_is_the_spectrum_of_the_correlations(rng):
     p = gibbs(rows, lam)
     result = maxent.solve(listed(rows), named(rows @ p))
     c = np.cov(rows, aweights=p, bias=True)
-    np.testing.assert_allclose(result.covariance, c, rtol=1e-10, atol=1e-12 * np.abs(np.outer(*[np.sqrt(np.diag(c))] * 2)).max())
+    np.testing.assert_allclose(
+        result.covariance, c, rtol=1e-10, atol=1e-12 * np.abs(np.outer(*[np.sqrt(np.diag(c))] * 2)).max()
+    )
     correlations = c / np.sqrt(np.outer(np.diag(c), np.diag(c)))
     levels, axes = np.linalg.eigh(correlations)
     k = result.conditioning

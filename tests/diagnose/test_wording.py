@@ -39,7 +39,9 @@ def test_solved_with_redundancy():
 
 def test_solved_but_loose():
     result = maxent.solve(DIE, {"pips": 4.5}, accuracy=1e-3)
-    assert result.message.endswith("Fewer than six digits of the multipliers are fixed by the inputs; see their errors.")
+    assert result.message.endswith(
+        "Fewer than six digits of the multipliers are fixed by the inputs; see their errors."
+    )
 
 
 def test_solved_but_only_the_state_carries_it():
@@ -77,7 +79,8 @@ def test_boundary():
     margin, resolvable, dimension = says(
         result,
         rf"On the boundary of what any state can reach, to the accuracy of the inputs \(margin ({NUMBER}), resolvable "
-        rf"({NUMBER})\): no finite multipliers; limit state on a (\d+)-dimensional face, exposing combination -1 pips\.",
+        rf"({NUMBER})\): no finite multipliers; limit state on a (\d+)-dimensional face, exposing "
+        r"combination -1 pips\.",
     )
     assert abs(margin) <= resolvable and dimension == 1
 
@@ -97,8 +100,8 @@ def test_inconsistent():
     result = maxent.solve(two, {"pips": 4.5, "twice": 9.1})
     missed, _ = says(
         result,
-        rf"The targets contradict one another: .*pips.*twice is the same number in every state, and the targets miss it "
-        rf"by ({NUMBER}) \(resolvable ({NUMBER})\); drop or correct one of these targets\.",
+        rf"The targets contradict one another: .*pips.*twice is the same number in every state, and the targets "
+        rf"miss it by ({NUMBER}) \(resolvable ({NUMBER})\); drop or correct one of these targets\.",
     )
     assert missed == pytest.approx(0.1 / np.sqrt(5), rel=1e-2)
 

@@ -1,4 +1,4 @@
-"""Matrices: every bad input with its message, sparse formats, blocks that are never densified as a whole, dims, memory."""
+"""Matrices: every bad input with its message, sparse formats, blocks never densified as a whole, dims, memory."""
 
 from __future__ import annotations
 
@@ -22,7 +22,12 @@ nan, inf = float("nan"), float("inf")
         ({1: X}, {}, TypeError, "name of a charge must be non-empty text, not 1"),
         ({"": X}, {}, TypeError, "name of a charge must be non-empty text"),
         ({}, {}, ValueError, "no charges given: Matrices needs at least one charge, or basis or dims"),
-        ({"h": [[0, 1], [2, 0]]}, {}, ValueError, r"charge 'h' is not Hermitian: \|Q - Q\^H\| is 1.0e\+00 where \|Q\| is 2.0e\+00"),
+        (
+            {"h": [[0, 1], [2, 0]]},
+            {},
+            ValueError,
+            r"charge 'h' is not Hermitian: \|Q - Q\^H\| is 1.0e\+00 where \|Q\| is 2.0e\+00",
+        ),
         ({"h": [[0, 1j], [1j, 0]]}, {}, ValueError, "charge 'h' is not Hermitian"),
         ({"h": [[1j, 0], [0, 1]]}, {}, ValueError, "charge 'h' is not Hermitian"),
         ({"h": sp.csr_array([[0, 1.0], [0, 0]])}, {}, ValueError, "charge 'h' is not Hermitian"),
@@ -45,12 +50,22 @@ nan, inf = float("nan"), float("inf")
         ({"h": X}, {"dims": (2, 1.0)}, ValueError, "dims must be positive integers"),
         ({"h": X}, {"dims": (-2, -1)}, ValueError, "dims must be positive integers"),
         ({"h": X}, {"dims": (True, 2)}, ValueError, "dims must be positive integers"),
-        ({"h": X}, {"basis": np.ones((3, 2))}, ValueError, r"basis has columns that are not orthonormal: \|B\^H B - 1\| is 3"),
+        (
+            {"h": X},
+            {"basis": np.ones((3, 2))},
+            ValueError,
+            r"basis has columns that are not orthonormal: \|B\^H B - 1\| is 3",
+        ),
         ({"h": X}, {"basis": np.eye(3)}, ValueError, "basis has 3 columns, the charges have dimension 2"),
         ({"h": X}, {"basis": np.ones(3)}, ValueError, r"basis must be a \(D, d\) matrix whose columns are states"),
         ({"h": X}, {"basis": sp.csr_array(2 * np.eye(2))}, ValueError, "basis has columns that are not orthonormal"),
         ({"h": X}, {"basis": np.array([[nan, 0], [0, 1]])}, ValueError, "basis has columns that are not orthonormal"),
-        ({"h": X}, {"basis": np.eye(3)[:, :2], "dims": (2,)}, ValueError, "multiply to 2, the operators have dimension 3"),
+        (
+            {"h": X},
+            {"basis": np.eye(3)[:, :2], "dims": (2,)},
+            ValueError,
+            "multiply to 2, the operators have dimension 3",
+        ),
         ({"h": X}, {"log_prior": [[0, 1], [0, 0]]}, ValueError, "log_prior is not Hermitian"),
     ],
 )
@@ -141,7 +156,9 @@ def test_jax_arrays_and_lists():
     import jax.numpy as jnp
 
     family = Matrices({"x": jnp.asarray(X), "z": Z.tolist()})
-    assert maxent.solve(family, {"x": 0.3, "z": 0.4}).multipliers["x"] == pytest.approx(-np.arctanh(0.5) * 0.6, abs=1e-12)
+    assert maxent.solve(family, {"x": 0.3, "z": 0.4}).multipliers["x"] == pytest.approx(
+        -np.arctanh(0.5) * 0.6, abs=1e-12
+    )
 
 
 def test_stored_zeros_do_not_join_blocks():
@@ -274,7 +291,10 @@ def test_too_large_blocks_are_refused_before_they_are_made(monkeypatch):
     monkeypatch.setattr(maxent.memory, "available_memory", lambda: 10_000_000)
     d = 1000
     chain = sp.diags_array([np.ones(d - 1), np.ones(d - 1)], offsets=[-1, 1])
-    with pytest.raises(maxent.ResourceError, match=r"1000 states in blocks of up to 1000 need .* MiB for 1 charges; available 9\.54 MiB"):
+    with pytest.raises(
+        maxent.ResourceError,
+        match=r"1000 states in blocks of up to 1000 need .* MiB for 1 charges; available 9\.54 MiB",
+    ):
         Matrices({"chain": chain})
     small = sp.diags_array(np.arange(float(d)))  # the same dimension without blocks is no trouble
     assert Matrices({"small": small}).size == d

@@ -29,7 +29,12 @@ nan, inf = float("nan"), float("inf")
         ({"a": [1, None]}, {}, TypeError, "charge 'a' must be numbers, not object"),
         ({"a": [[1, 2], [3, 4]]}, {}, ValueError, r"charge 'a' must be a list of n values, .* shape \(2, 2\)"),
         ({"a": 3.0}, {}, ValueError, r"charge 'a' must be a list of n values, .* shape \(\)"),
-        ({"a": [1, 2]}, {"log_weights": [nan, 0]}, ValueError, "log_weights is nan in state 0; it must be finite or -inf"),
+        (
+            {"a": [1, 2]},
+            {"log_weights": [nan, 0]},
+            ValueError,
+            "log_weights is nan in state 0; it must be finite or -inf",
+        ),
         ({"a": [1, 2]}, {"log_weights": [0, inf]}, ValueError, "log_weights is inf in state 1"),
         ({"a": [1, 2]}, {"log_weights": [-inf, -inf]}, ValueError, "no state left: every weight is zero"),
         ({"a": [1, 2]}, {"log_weights": [-inf, 0], "log_prior": [0, -inf]}, ValueError, "no state left"),

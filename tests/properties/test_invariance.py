@@ -201,5 +201,7 @@ def test_reachable_targets_are_a_convex_set(problem, t):
         for _ in range(20):
             x = rng.standard_normal(stack.shape[1])
             x /= np.linalg.norm(x)
-            values = np.einsum("a,jab,b->j", x, stack, x).real if kind != "listed" else np.einsum("a,jaa->j", x**2, stack)
+            values = (
+                np.einsum("a,jab,b->j", x, stack, x).real if kind != "listed" else np.einsum("a,jaa->j", x**2, stack)
+            )
             assert v @ values >= v @ q + result.certificate.margin - 1e-12

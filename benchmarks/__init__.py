@@ -1,0 +1,1 @@
+"""Speed, measured: each module runs alone as `python -m benchmarks.NAME`, with `--write` into docs/benchmarks.md."""
