@@ -48,15 +48,15 @@ def plot_spectrum(result: Any, *, ax: Axes | None = None) -> Axes:
         left, right = low / pad, high * pad
         shown = np.maximum(size, left)
         ax.set_xscale("log")
-        ax.axvline(1.0, color=COLOUR["soft"], lw=0.7)
+        ax.axvline(1.0, color=COLOUR["soft"], lw=0.7, zorder=0.5)
         ax.barh(row, shown - 1.0, left=1.0, height=0.3, color=COLOUR["fill"], ec=COLOUR["edge"], lw=0.9)
         ax.plot(shown, row, ls="none", marker="o", ms=3.5, color=COLOUR["edge"], clip_on=False)
         ends = {0: ("stiffest", found.stiffest), count - 1: ("sloppiest", found.sloppiest)}
         for k, (word, what) in ends.items() if count > 1 else ((0, ("the only one", found.stiffest)),):
             note = ax.annotate(
                 f"{word}: {_few(what.coefficients)}", (0.0, k - 0.15), xycoords=("axes fraction", "data"),
-                xytext=(2, 2.5), textcoords="offset points", fontsize=7.0, color=COLOUR["ink"], parse_math=False,
-                annotation_clip=False, bbox={"fc": COLOUR["page"], "ec": "none", "pad": 0.8},
+                xytext=(2, 3), textcoords="offset points", fontsize=7.0, color=COLOUR["ink"], parse_math=False,
+                annotation_clip=False, bbox={"fc": COLOUR["page"], "ec": "none", "pad": 0.8}, zorder=0.8,
             )  # fmt: skip
             note.set_in_layout(False)
         ax.set_xlim(left, right)
