@@ -87,8 +87,10 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
     """Newton's iteration; looks for faces on the way, and stops on a certificate that comes free of charge."""
     if memo.driver == "jax":
         from maxent.core.compiled import minimise
+        from maxent.core.limited import MANY, minimise_limited
 
-        lam, memo.iterations = minimise(memo.family.traced(), memo.here.lam)
+        route = minimise if memo.whitening.rank <= MANY else minimise_limited
+        lam, memo.iterations = route(memo.family.traced(), memo.here.lam)
         memo.at = begin(memo.family.evaluate, lam)
     best, lowest, stalled = np.inf, np.inf, 0
     for count in range(LIMIT):

@@ -22,6 +22,7 @@ import numpy as np
 
 from maxent.core.contract import EPS, SAFETY, Face, Family, Problem, Verdict
 from maxent.core.decide import decide
+from maxent.core.faces import on_face
 from maxent.core.kinks import Kinks, Point, advance, look_ahead
 from maxent.core.newton import Iterate, curvatures
 from maxent.core.outcome import Outcome
@@ -100,8 +101,7 @@ def limit_on_face(
     ground = problem.family.combine(np.eye(len(edge)), edge).face(v, tolerance)
     if ground is None or (ground.gap < 1e-6 and not late):
         return None
-    noise = problem.noise + (0.0 if ground.exact else 8 * EPS / max(ground.gap, 1e-12)) * problem.family.scale
-    below = decide_relaxed(Problem(ground.family, noise, problem.accuracy), pinned, depth=depth + 1)
+    below = decide_relaxed(on_face(problem, ground), pinned, depth=depth + 1)
     found = below.outcome
     if found.verdict not in (Verdict.SOLVED, Verdict.BOUNDARY) or found.values is None:
         return None
