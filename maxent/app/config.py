@@ -240,6 +240,8 @@ def _explain(path: Path, entries: list[Any], options: type[Any], table: dict[str
     wanted: list[str] = []
     words: list[str] = []
     for entry in entries:
+        if entry["type"] == "dataclass_type" and len(entries) > 1:
+            continue  # a table is one way of several; the plain ones are what was probably meant
         if entry["type"] == "literal_error":
             words += re.findall(r"'([^']*)'", entry["ctx"]["expected"])
         else:
@@ -256,8 +258,10 @@ def _neighbours(path: Path, options: type[Any]) -> list[str]:
 
     here: Any = options
     for step in path[:-1]:
+        if here is not options and str(step) not in getattr(here, "__dataclass_fields__", {}):
+            continue  # the name of an entry, such as a charge
         hint = get_type_hints(here).get(str(step)) if hasattr(here, "__dataclass_fields__") else None
-        choices = [hint, *get_args(hint)]
+        choices = [hint, *get_args(hint), *(inner for part in get_args(hint) for inner in get_args(part))]
         here = next((c for c in choices if hasattr(c, "__dataclass_fields__")), None)
     known = list(getattr(here, "__dataclass_fields__", ()))
     return known + list(Header.__dataclass_fields__) if len(path) == 1 else known

@@ -12,14 +12,18 @@ from typing import Any
 
 from maxent.app.locate import Path
 from maxent.errors import ConfigError
-from maxent.text import suggestion
+from maxent.text import number, suggestion
 
-__all__ = ["ACCURACY", "BadInput", "Job", "Problems", "Target", "says"]
+__all__ = [
+    "ACCURACY", "TARGET", "BadInput", "Job", "Problems", "Room", "Target", "check_target", "given_target", "says",
+]  # fmt: skip
 
 ACCURACY = (
     "Name of a charge -> how far its target may be off because of rounding when it was computed; "
     "0 where nothing is said. This is no measurement error."
 )
+
+TARGET = "A table leaves room around a number: docs/relaxed-targets.md."
 
 
 def says(text: str) -> dict[str, str]:
@@ -67,6 +71,23 @@ class Problems:
 
 
 @dataclass(frozen=True)
+class Room:
+    """What a target leaves open, as an inline table of the config; exactly one key is given."""
+
+    __pydantic_config__ = {"extra": "forbid", "strict": True}
+
+    within: list[float] | None = None
+    at_most: float | None = None
+    at_least: float | None = None
+    measured: list[float] | None = None
+
+    @property
+    def given(self) -> dict[str, Any]:
+        """The keys that are there."""
+        return {k: v for k, v in vars(self).items() if v is not None}
+
+
+@dataclass(frozen=True)
 class Target:
     """One target and where it comes from.
 
@@ -77,15 +98,18 @@ class Target:
     source : str
         "given", or what it was computed from.
     sigma : float or None
-        Standard error of the number, if it was measured; shown beside the target, never used to loosen it.
+        Standard error of the number, if it was measured; used by the fit only when `asked` says so.
     accuracy : float
         How far the target may be off because of the way it was computed; 0 takes it as exact.
+    asked : float, Within, AtMost, AtLeast, Measured or None
+        What the fit is given; None gives it the value.
     """
 
     value: float
     source: str = "given"
     sigma: float | None = None
     accuracy: float = 0.0
+    asked: Any = None
 
 
 @dataclass(frozen=True)
@@ -114,3 +138,62 @@ class Job:
     facts: Mapping[str, str] = field(default_factory=dict)
     labels: tuple[str, ...] = ()
     digests: Mapping[str, str] = field(default_factory=dict)
+
+    def asked(self) -> dict[str, Any]:
+        """What the fit is given, by name."""
+        return {name: t.value if t.asked is None else t.asked for name, t in self.targets.items()}
+
+
+def check_target(path: Path, given: Any, problems: Problems) -> None:
+    """Note what is wrong with a target that is a table.
+
+    Parameters
+    ----------
+    path : Path
+        Of the target.
+    given : number, text or Room
+    problems : Problems
+    """
+    if not isinstance(given, Room):
+        return
+    keys = list(given.given)
+    if len(keys) != 1:
+        got = " and ".join(keys) or "none"
+        problems.add(path, f"one of within, at_most, at_least and measured is needed, got {got}")
+        return
+    (key,) = keys
+    what = {"within": "tolerance", "measured": "sigma"}.get(key)
+    numbers = given.given[key]
+    if what is None:
+        return
+    if len(numbers) != 2:
+        problems.add((*path, key), f"expected [value, {what}], got {len(numbers)} numbers")
+    elif not numbers[1] > 0:
+        problems.add((*path, key), f"the {what} must be positive, got {numbers[1]}")
+
+
+def given_target(given: float | Room, accuracy: float) -> Target:
+    """Make the target of a number or of a table that was checked.
+
+    Parameters
+    ----------
+    given : float or Room
+    accuracy : float
+
+    Returns
+    -------
+    Target
+    """
+    if not isinstance(given, Room):
+        return Target(float(given), accuracy=accuracy)
+    from maxent.targets import AtLeast, AtMost, Measured, Within
+
+    ((key, numbers),) = given.given.items()
+    if key == "at_most":
+        return Target(numbers, "given, at most", accuracy=accuracy, asked=AtMost(numbers))
+    if key == "at_least":
+        return Target(numbers, "given, at least", accuracy=accuracy, asked=AtLeast(numbers))
+    value, width = map(float, numbers)
+    if key == "within":
+        return Target(value, f"given, within {number(width)}", accuracy=accuracy, asked=Within(value, width))
+    return Target(value, "given, measured", width, accuracy, Measured(value, width))

@@ -103,6 +103,7 @@ def _charge(name: str, job: Job, result: Any) -> dict[str, Any]:
         "accuracy": target.accuracy,
         "value": _finite(result.values[name]),
         "residual": _finite(result.residuals[name]),
+        "place": result.slack[name],
         "multiplier": _finite(result.multipliers[name]),
         "multiplier_error": _finite(result.multiplier_errors[name]),
         "multiplier_digits": math.floor(digits) if math.isfinite(digits) else None,
@@ -114,12 +115,12 @@ def _certificate(job: Job, result: Any) -> dict[str, Any] | None:
     found = result.certificate
     if found is None:
         return None
-    check = found.verify(job.family, {name: target.value for name, target in job.targets.items()})
+    check = found.verify(job.family, job.asked())
     return {
         "kind": found.kind,
         "direction": _combination(found.direction),
         "lowest": _finite(found.lowest),
-        "asked": _finite(found.asked),
+        "asked": _finite(found.asked + found.slack),
         "margin": _finite(found.margin),
         "tolerance": _finite(found.tolerance),
         "verified": bool(check),

@@ -122,6 +122,8 @@ def _takes(hint: Any) -> str:
         return f"list of ({_takes(inner[0])})" if get_origin(inner[0]) else f"list of {_takes(inner[0])}s"
     if origin is dict:
         return f"table: name = {_takes(inner[1])}"
+    if is_dataclass(hint):
+        return " or ".join(f"`{{{entry.name} = ...}}`" for entry in fields(hint))
     return {float: "number", int: "whole number", str: "text", bool: "true or false"}[hint]
 
 

@@ -244,7 +244,7 @@ def _fit(config: Config, job: Job, driver: str) -> Any:
     try:
         return maxent.solve(
             job.family,
-            {name: target.value for name, target in job.targets.items()},
+            job.asked(),
             accuracy={name: target.accuracy for name, target in job.targets.items()},
             driver=driver,
             explain=True,

@@ -14,7 +14,7 @@ from typing import Any, cast
 import numpy as np
 
 from maxent.app.data import Files
-from maxent.app.job import ACCURACY, Job, Problems, Target, says
+from maxent.app.job import ACCURACY, TARGET, Job, Problems, Room, check_target, given_target, says
 from maxent.text import number, plural
 
 __all__ = ["Options", "build"]
@@ -32,7 +32,7 @@ class Options:
             'Complex numbers are written as text, `"1+2j"`.'
         )
     )
-    targets: dict[str, float] = field(metadata=says("Name of a charge -> the mean asked for."))
+    targets: dict[str, float | Room] = field(metadata=says(f"Name of a charge -> the mean asked for. {TARGET}"))
     accuracy: dict[str, float] = field(
         default_factory=dict,
         metadata=says(ACCURACY),
@@ -102,6 +102,8 @@ def build(options: Options, folder: File) -> Job:
                 ("dims",),
                 f"the product of the dimensions is {prod(options.dims)}, but {first} is {size} x {size}",
             )
+    for name, given in options.targets.items():
+        check_target(("targets", name), given, problems)
     problems.raise_any()
     facts = {"space": f"dimension {size}" + (f" = {' x '.join(map(str, options.dims))}" if options.dims else "")}
     if prior is not None:
@@ -111,7 +113,7 @@ def build(options: Options, folder: File) -> Job:
     from maxent.families import Matrices
 
     family = Matrices(charges, dims=None if options.dims is None else tuple(options.dims), log_prior=prior)
-    targets = {name: Target(float(options.targets[name]), accuracy=options.accuracy.get(name, 0.0)) for name in charges}
+    targets = {name: given_target(options.targets[name], options.accuracy.get(name, 0.0)) for name in charges}
     return Job(family, targets, predictions, facts, digests=files.digests)
 
 

@@ -11,7 +11,18 @@ from dataclasses import dataclass, field
 from pathlib import Path as File
 from typing import Any, Literal
 
-from maxent.app.job import ACCURACY, BadInput, Job, Problems, Target, says
+from maxent.app.job import (
+    ACCURACY,
+    TARGET,
+    BadInput,
+    Job,
+    Problems,
+    Room,
+    Target,
+    check_target,
+    given_target,
+    says,
+)  # fmt: skip
 from maxent.errors import FormulaError, ResourceError
 from maxent.memory import require_memory
 from maxent.text import plural
@@ -58,8 +69,8 @@ class Options:
 
     sites: Sites = field(metadata=says("Where the spins sit."))
     charges: dict[str, str] = field(metadata=says("Name of a charge -> formula of a Hermitian operator."))
-    targets: dict[str, float | Literal["from start"]] = field(
-        metadata=says("Name of a charge -> the mean asked for, or its mean in the state `[start]`.")
+    targets: dict[str, float | Literal["from start"] | Room] = field(
+        metadata=says(f"Name of a charge -> the mean asked for, or its mean in the state `[start]`. {TARGET}")
     )
     parameters: dict[str, float | list[float]] = field(
         default_factory=dict,
@@ -118,6 +129,7 @@ def build(options: Options, folder: File) -> Job:
     if options.start is not None:
         start = _start(options, sites, problems)
     for name, given in options.targets.items():
+        check_target(("targets", name), given, problems)
         if given == "from start" and options.start is None:
             problems.add(("targets", name), "asks for the mean 'from start', but there is no [start]")
     problems.raise_any()
@@ -125,10 +137,11 @@ def build(options: Options, folder: File) -> Job:
     for name, operator in charges.items():
         given = options.targets[name]
         accuracy = options.accuracy.get(name, 0.0)
-        if start is not None and isinstance(given, str):
+        if isinstance(given, str):
+            assert start is not None
             targets[name] = Target(start.mean(operator), "mean in the start state", accuracy=accuracy)
         else:
-            targets[name] = Target(float(given), accuracy=accuracy)
+            targets[name] = given_target(given, accuracy)
     matrices = {name: _matrix(("charges", name), op) for name, op in charges.items()}
     observed = {name: _matrix(("predictions", name), op) for name, op in predictions.items()}
     facts = {

@@ -14,7 +14,7 @@ from typing import Any, Literal
 import numpy as np
 
 from maxent.app.data import Files
-from maxent.app.job import ACCURACY, Job, Problems, Target, says
+from maxent.app.job import ACCURACY, TARGET, Job, Problems, Room, Target, check_target, given_target, says
 from maxent.text import plural
 
 __all__ = ["Counts", "Options", "build"]
@@ -39,8 +39,8 @@ class Options:
     charges: dict[str, list[float] | str] = field(
         metadata=says("Name of a charge -> its value in each state: a list, or a file.")
     )
-    targets: dict[str, float | Literal["from counts"]] = field(
-        metadata=says("Name of a charge -> the mean asked for, or the sample mean of `[counts]`.")
+    targets: dict[str, float | Literal["from counts"] | Room] = field(
+        metadata=says(f"Name of a charge -> the mean asked for, or the sample mean of `[counts]`. {TARGET}")
     )
     accuracy: dict[str, float] = field(
         default_factory=dict,
@@ -107,6 +107,7 @@ def build(options: Options, folder: File) -> Job:
     if counts is not None:
         _check_counts(problems, counts)
     for name, given in options.targets.items():
+        check_target(("targets", name), given, problems)
         if given == "from counts" and options.counts is None:
             problems.add(("targets", name), "asks for a mean 'from counts', but there is no [counts]")
     problems.raise_any()
@@ -212,14 +213,15 @@ def _check_counts(problems: Problems, counts: np.ndarray) -> None:
         problems.add(path, "more observations than can be counted exactly (2^53)")
 
 
-def _target(given: float | str, values: np.ndarray, counts: np.ndarray | None, accuracy: float) -> Target:
+def _target(given: float | str | Room, values: np.ndarray, counts: np.ndarray | None, accuracy: float) -> Target:
     """Take a target as given, or as the mean over the counts with its standard error.
 
     The standard error of a mean of N independent observations is s/sqrt(N) with
     s^2 = sum_i n_i (f_i - mean)^2 / (N - 1).
     """
-    if counts is None or not isinstance(given, str):
-        return Target(float(given), accuracy=accuracy)
+    if not isinstance(given, str):
+        return given_target(given, accuracy)
+    assert counts is not None
     total = float(counts.sum())
     exponent = math.frexp(np.abs(values).max())[1]
     scaled = np.ldexp(values, -exponent)  # exact, and no square can overflow
