@@ -360,7 +360,7 @@ def test_many_charges_draw_the_pairs_that_matter():
     result = maxent.solve(family, dict.fromkeys(family.names, 0.0) | {"q5": 9.0, "q6": -9.0})
     assert str(result.verdict) == "infeasible"
     pairs = figures._pairs(result)
-    weight = {n: abs(result.certificate.direction[n]) * np.abs(family.blocks.diagonal[k]).max()
+    weight = {n: abs(result.certificate.direction[n]) * np.abs(family.blocks.diagonal[k] - result.targets[n]).max()
               for k, n in enumerate(family.names)}  # fmt: skip
     least = min(weight[a] + weight[b] for a, b in pairs)
     others = [p for p in combinations(family.names, 2) if p not in pairs]
