@@ -233,8 +233,8 @@ def prove_interior(
     except OverflowError:
         found = None
     if found is None:
-        detail = f"no ball of reachable targets could be proved around {centre}: the charges are redundant or nearly so,"
-        detail += " or the boundary is too near for the roundings of float64"
+        detail = f"no ball of reachable targets could be proved around {centre}: the charges are redundant"
+        detail += " or nearly so, or the boundary is too near for the roundings of float64"
         return Proof(NOT_PROVABLE, 0.0, None, BALL, detail)
     radius, covers = found
     low = below(radius)
