@@ -74,10 +74,10 @@ def machine() -> str:
 
 INTRODUCTION = f"""# Benchmarks
 
-CPU seconds, not clock time; medians of repetitions that take turns in one process, on one thread. Each section is written
-by the command under its heading. The commands remove the variables {" and ".join(f"`{n}`" for n in REMOVED)}
-together before they start, because they force OpenBLAS to kernels of another processor; which kernel was in use stands in
-each section.
+CPU seconds, not clock time; medians of repetitions that take turns in one process, on one thread. Each section
+is written by the command under its heading. The commands remove the variables
+{" and ".join(f"`{n}`" for n in REMOVED)} together before they start, because they
+force OpenBLAS to kernels of another processor; which kernel was in use stands in each section.
 Ratios travel between machines better than seconds do.
 """
 

@@ -1,8 +1,8 @@
 """Four charges on spin-1/2 rings, against the script one would write by hand: SciPy's BFGS on dense matrices.
 
 Energy, magnetisation, the three-site energy current and a four-site term that does not commute with the energy.
-Targets come from a hot state with known multipliers, which both sides find in few steps, and from a spiral product state,
-which is cold.  Both sides start from formulas already turned into sparse matrices and count everything
+Targets come from a hot state with known multipliers, which both sides find in few steps, and from a spiral product
+state, which is cold.  Both sides start from formulas already turned into sparse matrices and count everything
 after that: dense copies here, search for blocks there, and the fit.
 """
 
@@ -90,8 +90,8 @@ def main() -> None:
     ]  # fmt: skip
     text = (
         "Energy, magnetisation, three-site energy current and a non-commuting four-site term on XXZ rings; the script "
-        'is `scipy.optimize.minimize(method="BFGS")` with gradients from `scipy.linalg.eigh` of the dense matrices. Most '
-        "of the gain comes from the blocks, which are found automatically; part comes from Newton's steps.\n\n"
+        'is `scipy.optimize.minimize(method="BFGS")` with gradients from `scipy.linalg.eigh` of the dense matrices. '
+        "Most of the gain comes from the blocks, which are found automatically; part comes from Newton's steps.\n\n"
     )
     report("benchmarks.rings", "Rings, four charges, against a script by hand", text + table(head, rows))
 
