@@ -1,9 +1,8 @@
 """The solver as a building block of JAX code: inside jit, vmap and grad, for one set of targets or for thousands.
 
-Charges without a target are *observed*: their multiplier is zero and their value is part of the answer, so that means of
-any operator come with their derivatives.  Nothing is raised inside compiled code; a solution carries whether its
-residual is at the rounding floor.  Why it is not, `maxent.solve` tells: verdicts are decided on the host.
-Floor: solve.
+Charges without a target are *observed*: their multiplier is zero and their value is part of the answer, so that means
+of any operator come with their derivatives.  Nothing is raised inside compiled code; a solution carries whether it has
+converged.  Why it has not, `maxent.solve` tells: verdicts are decided on the host.  Floor: solve.
 """
 
 from __future__ import annotations
@@ -14,7 +13,7 @@ from typing import Any, NamedTuple
 
 import jax
 import jax.numpy as jnp
-
+import numpy as np
 
 from maxent.core.autodiff import fit, values_at
 from maxent.core.contract import Family
@@ -108,7 +107,9 @@ def _named(names: tuple[str, ...], free: tuple[int, ...], q: Any, known: Many) -
     )
 
 
-def solve_many(family: Family, targets: Mapping[str, Any], *, batch: int | None = None, iterations: int = 100) -> Solution:
+def solve_many(
+    family: Family, targets: Mapping[str, Any], *, batch: int | None = None, iterations: int = 100
+) -> Solution:
     """Multipliers for many sets of targets at once, in batches that stay in the cache.
 
     Parameters
@@ -156,7 +157,8 @@ def combine(family: Family, charges: Mapping[str, Mapping[str, Any]]) -> Family:
 
     Examples
     --------
-    >>> import numpy as np
+    >>> import jax
+    >>> from maxent.families import Microstates
     >>> spins = Microstates({"bonds": [1.0, -1, -1, 1], "up": [2.0, 0, 0, -2]})
     >>> with jax.enable_x64(True):
     ...     model = combine(spins, {"energy": {"bonds": -1.0, "up": -0.3}})
@@ -168,13 +170,14 @@ def combine(family: Family, charges: Mapping[str, Mapping[str, Any]]) -> Family:
             if part not in old:
                 raise ValueError(f"charge {name!r} uses {part!r}, which is no charge{suggestion(part, old)}")
         rows.append(jnp.stack([jnp.asarray(parts.get(n, 0.0), float) for n in old]))
-    mixed = family.combine(jnp.stack(rows), jnp.zeros(len(rows)))
+    matrix: Any = jnp.stack(rows)
+    mixed = family.combine(matrix, jnp.zeros(len(rows)))  # type: ignore[arg-type]
     object.__setattr__(mixed, "names", tuple(charges))
     return mixed
 
 
 def _names(family: Family, targets: Mapping[str, Any]) -> tuple[tuple[str, ...], tuple[int, ...]]:
-    if not jax.config.jax_enable_x64:
+    if jnp.zeros(0).dtype != np.float64:
         raise ValueError("compiled solves need double precision: call them inside `with jax.enable_x64(True):`")
     names = tuple(family.names)  # type: ignore[attr-defined]
     for n in targets:

@@ -92,8 +92,8 @@ def fit(family: Family, targets: Any, free: tuple[int, ...], m: int, iterations:
 def minimiser_near(at: Iterate, reach: Any) -> Any:
     """Whether a minimiser exists near the iterate: ``R nu < 1/2`` of `core.exists`, with `reach` bounding the spreads.
 
-    A diverging run always gets to its rounding floor, which grows with the exponent; this tells it from a fit.  Where no
-    bound is known (NaN), a relative residual of 1e-9 has to do.
+    A diverging run always gets to its rounding floor, which grows with the exponent; this tells it from a fit.  Where
+    no bound is known (NaN), a relative residual of 1e-9 has to do.
     """
     h = jnp.maximum(at.curvature, 1e-150)
     off = jnp.abs(at.axes.T @ at.evaluation.values) + at.evaluation.rounding

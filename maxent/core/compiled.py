@@ -22,6 +22,9 @@ __all__ = ["evaluate_by_derivatives", "minimise", "register"]
 
 T = TypeVar("T")
 
+#: Size of the exponent beyond which the compiled loop hands over to the host.
+FAR = 1e6
+
 
 class _Held:
     """Something that rides along in a pytree without being an array; equal to itself alone."""
@@ -95,7 +98,9 @@ def _minimise(family: Family, lam: Any, iterations: int) -> tuple[Any, Any]:
 
     def unfinished(carry: tuple[Any, Iterate]) -> Any:
         count, at = carry
-        return (count < iterations) & ~at_floor(at) & (at.rejected < PATIENCE)
+        # a separating or diverging iterate is the host's business: faces and certificates are decided there
+        gone = at.evaluation.level > FAR if at.evaluation.lowest is None else at.evaluation.lowest > 0
+        return (count < iterations) & ~at_floor(at) & (at.rejected < PATIENCE) & ~gone & (at.evaluation.level < FAR)
 
     def advance(carry: tuple[Any, Iterate]) -> tuple[Any, Iterate]:
         count, at = carry

@@ -236,6 +236,10 @@ class Family:
         spread = low.highest - low.value
         return float(spread) if np.isfinite(spread) else None
 
+    def reach(self) -> Any:
+        """Upper bounds (m,) of the spread of each charge, for a first look; infinite where none is known."""
+        return np.full(len(self.scale), np.inf)
+
     def domain(self) -> np.ndarray | None:
         """Rows g of an array (c, m): ``ln Z`` is finite only for ``g.lam >= 0``, with finite slope on that edge."""
         return None

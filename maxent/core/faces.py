@@ -69,6 +69,7 @@ def look(
         if margin < -tolerance:
             memo.near.append((margin, candidate))
             continue
+        memo.touched = True
         face = problem.family.face(v, tolerance)
         if face is not None and (found is None or _sharper(face, found[3])):
             found = (v, margin, tolerance, face)

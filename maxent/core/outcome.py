@@ -95,7 +95,7 @@ class Memo:
     step: np.ndarray | None = None
     floored: bool = False
     shift: float = np.nan
-    inside: bool = False
+    touched: bool = False
     iterations: int = 0
     near: list[tuple[float, np.ndarray]] = field(default_factory=list)
     trace: list[tuple[float, float, float]] = field(default_factory=list)

@@ -25,7 +25,8 @@ def combination_text(names: Sequence[str], v: np.ndarray, *, digits: int = 4) ->
     for name, x in zip(names, v, strict=True):
         if abs(x) > 1e-12 * largest:
             sign = ("-" if x < 0 else "") if not parts else (" - " if x < 0 else " + ")
-            parts.append(f"{sign}{abs(x):.{digits}g} {name}")
+            number = f"{abs(x):.{digits}g}"
+            parts.append(sign + (name if number == "1" else f"{number} {name}"))
     return "".join(parts) or "0"
 
 

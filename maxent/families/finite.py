@@ -92,6 +92,10 @@ class Finite(Family):
         """``-ln det(1 + lam.Q)``."""
         return self.blocks.barrier(lam)
 
+    def reach(self) -> Any:
+        """Upper bounds of the spread of each charge."""
+        return self.blocks.reach()
+
     def stiffness(self, lam: np.ndarray, u: np.ndarray, *, exact: bool = True) -> float | None:
         """Spread of ``u.Q``."""
         return self.blocks.stiffness(lam, u, exact=exact)
