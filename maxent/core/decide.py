@@ -41,12 +41,13 @@ def decide(problem: Problem, *, driver: str = "host", depth: int = 0) -> Outcome
         answer = stage(problem, memo)
         if answer is not None:
             return answer
+    values = whitening.values(memo.here.evaluation.values)
+    reproduced = memo.floored and np.all(np.abs(values) <= EARLY * problem.size)
     reason = memo.reason or (
         "targets reproduced to rounding; whether they lie inside or on the boundary is not decidable at this precision"
-        if memo.floored
+        if reproduced
         else "no stage could prove or refute that the targets can be reached"
     )
-    values = whitening.values(memo.here.evaluation.values)
     return memo.outcome(problem, Verdict.UNFINISHED, family=family, values=values, reason=reason, evidence="tested")
 
 
@@ -233,5 +234,6 @@ def _solved(problem: Problem, memo: Memo, evidence: str) -> Outcome:
 
 
 STAGES = (
-    contradiction, nothing_free, first_look, descend, edge_of_domain, existence, nominal, face_in_sight, interior, close_call,
+    contradiction, nothing_free, first_look, descend, edge_of_domain, existence, nominal, face_in_sight, interior,
+    close_call,
 )  # fmt: skip

@@ -32,9 +32,11 @@ def minimiser_exists(family: Family, at: Iterate, unit: np.ndarray) -> tuple[boo
     along = np.abs(at.axes.T) @ (unit + at.evaluation.error) + np.abs(at.axes.T @ at.evaluation.values)
     nu2 = float(np.sum(along**2 / h))
     # one pass over the charges settles most well-conditioned fits, however many multipliers there are
-    crude = float(np.sqrt(np.sum((np.abs(at.axes.T) @ family.reach()) ** 2 / h) * nu2)) if len(h) else 0.0
-    if crude < 0.5:
-        return True, crude, "proved"
+    reach = family.reach()
+    if np.all(np.isfinite(reach)):
+        crude = float(np.sqrt(np.sum((np.abs(at.axes.T) @ reach) ** 2 / h) * nu2))
+        if crude < 0.5:
+            return True, crude, "proved"
     bounds = np.array([_bound(family, at, k, exact=False) for k in range(len(h))])
     if np.isnan(bounds).any():
         return _probed(family, at, h, nu2)

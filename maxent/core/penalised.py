@@ -111,6 +111,10 @@ class Penalised(Family):
         """Bound of the family: a constant added to the Hessian changes more slowly still."""
         return self.inner.stiffness(lam, u, exact=exact)
 
+    def reach(self) -> Any:
+        """Bounds of the family, for the same reason."""
+        return self.inner.reach()
+
     def domain(self) -> np.ndarray | None:
         """Domain of the family."""
         return self.inner.domain()

@@ -6,7 +6,7 @@ differences, which are finite for equal levels:
 
     (d rho)_ab = -(V^H dK V)_ab * [p_a, p_b] + ...,     [p_a, p_b] = (p_a - p_b)/(E_b - E_a) -> p_a.
 
-Third derivatives are refused by construction.  Floor: core.
+Third derivatives are refused.  Floor: core.
 """
 
 from __future__ import annotations
@@ -47,6 +47,17 @@ def divided_differences(levels: Any, weights: Any) -> Any:
 
 
 @jax.custom_jvp
+def _once_more(exponent: Any) -> Any:
+    """Identity that refuses to be differentiated: the rule of `gibbs` is right once."""
+    return exponent
+
+
+@_once_more.defjvp
+def _refuse(primals: tuple, tangents: tuple) -> tuple:
+    raise NotImplementedError("third derivatives of ln Tr exp(-K) are not provided: wrong at degeneracies")
+
+
+@jax.custom_jvp
 def gibbs(exponent: Any) -> Any:
     """Density matrix ``exp(-K)/Tr exp(-K)``, differentiable once at any degeneracy.
 
@@ -63,7 +74,7 @@ def gibbs(exponent: Any) -> Any:
 @gibbs.defjvp
 def _gibbs_jvp(primals: tuple, tangents: tuple) -> tuple:
     (exponent,), (change,) = primals, tangents
-    levels, vectors = jnp.linalg.eigh(exponent, symmetrize_input=False)
+    levels, vectors = jnp.linalg.eigh(_once_more(exponent), symmetrize_input=False)
     weights = jax.nn.softmax(-levels)
     adjoint = vectors.conj().T
     rotated = adjoint @ change @ vectors

@@ -116,6 +116,7 @@ def whiten(problem: Problem) -> Whitening:
     for c in right[~kept]:
         full = np.zeros(m)
         full[live] = c / size[live]
+        full = full / np.abs(full).max()  # before it is squared: units may differ by hundreds of decades
         null.append(full / np.linalg.norm(full))
     transform = np.zeros((int(kept.sum()), m))
     transform[:, live] = right[kept] / singular[kept, None] / size[live]

@@ -37,7 +37,7 @@ def joint_eigenbasis(charges: list[Any]) -> tuple[np.ndarray, np.ndarray] | None
     if not live:
         return levels, np.eye(d)
     if not all(
-        _commute(charges[i], charges[j], sizes[i] * sizes[j], shifts[i], shifts[j]) for i, j in combinations(live, 2)
+        _commute(charges[i], charges[j], sizes[i], sizes[j], shifts[i], shifts[j]) for i, j in combinations(live, 2)
     ):
         return None
     # irrational ratios of the coefficients: no two joint eigenvalues of a lattice model meet by accident
@@ -65,9 +65,11 @@ def _row_norm(q: Any, shift: float) -> float:
     return float((rows - np.abs(diagonal) + np.abs(diagonal - shift)).max())
 
 
-def _commute(a: Any, b: Any, size: float, shift_a: float, shift_b: float) -> bool:
+def _commute(a: Any, b: Any, size_a: float, size_b: float, shift_a: float, shift_b: float) -> bool:
     """Whether ``[a, b]`` vanishes to rounding, seen on four random vectors."""
     x = np.random.default_rng(7).standard_normal((a.shape[0], 4))
     ax, bx = a @ x - shift_a * x, b @ x - shift_b * x
     remainder = (a @ bx - shift_a * bx) - (b @ ax - shift_b * ax)
-    return bool(np.abs(remainder).max() <= 64 * EPS * size * np.abs(x).max())
+    # entries carry the rounding of the offset that was subtracted
+    noise = 64 * EPS * ((size_a + abs(shift_a)) * size_b + (size_b + abs(shift_b)) * size_a)
+    return bool(np.abs(remainder).max() <= noise * np.abs(x).max())

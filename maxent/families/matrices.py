@@ -236,9 +236,9 @@ class Matrices(Finite):
             from maxent.families.microstates import _positions
 
             keep = _positions(part, self.dimension)
-            if not len(keep):
-                raise ValueError("no state left after the restriction")
             isometry = sp.eye_array(self.dimension, format="csc")[:, keep].tocsr()
+        if not isometry.shape[1]:
+            raise ValueError("no state left after the restriction")
         inside = lambda q: isometry.conj().T @ (q @ isometry)
         charges = [inside(self._operator(j)) for j in range(len(self.names))]
         has_prior = self.blocks.has_prior

@@ -44,6 +44,9 @@ def operator_matrix(value: Any, label: str) -> Any:
     if q.ndim != 2 or q.shape[0] != q.shape[1]:
         raise ValueError(f"{label} must be a square matrix, not of shape {q.shape}")
     q = q.astype(complex if np.issubdtype(q.dtype, np.complexfloating) else float)
+    if sparse and not q.has_canonical_format:  # the user's own matrix stays as it is
+        q = q.copy()
+        q.sum_duplicates()
     entries: Any = q.data if sparse else q
     if not np.all(np.isfinite(entries)):
         raise ValueError(f"{label} has NaN or infinite entries")
