@@ -60,7 +60,7 @@ def test_infeasible():
     result = maxent.solve(DIE, {"pips": 6.2})
     below, resolvable = says(
         result,
-        rf"No state has these values: -1 pips is asked to lie ({NUMBER}) below its lowest possible value "
+        rf"No state has these values: -pips is asked to lie ({NUMBER}) below its lowest possible value "
         rf"\(resolvable ({NUMBER})\)\.",
     )
     assert below == pytest.approx(0.2) and resolvable == pytest.approx(result.certificate.tolerance, rel=0.5)
@@ -80,7 +80,7 @@ def test_boundary():
         result,
         rf"On the boundary of what any state can reach, to the accuracy of the inputs \(margin ({NUMBER}), resolvable "
         rf"({NUMBER})\): no finite multipliers; limit state on a (\d+)-dimensional face, exposing "
-        r"combination -1 pips\.",
+        r"combination -pips\.",
     )
     assert abs(margin) <= resolvable and dimension == 1
 
