@@ -93,7 +93,7 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
         route = minimise if memo.whitening.rank <= MANY else minimise_limited
         lam, memo.iterations = route(memo.family.traced(), memo.here.lam)
         memo.at = begin(memo.family.evaluate, lam)
-    best, lowest, stalled = np.inf, np.inf, 0
+    best, lowest, before, stalled = np.inf, np.inf, np.inf, 0
     for count in range(LIMIT):
         at = memo.here
         ev, size = at.evaluation, float(at.residual)
@@ -103,7 +103,9 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
         if at_floor(at):
             memo.floored = True
             return None
-        if count and count % 4 == 0 and ev.level > 20 and (hit := look(problem, memo, at.lam, decide, step=memo.step)):
+        # along a diverging path a step gains a factor e at best; faster ones are on their way to a minimum
+        slow = count >= 8 and count % 4 == 0 and size > 0.1 * before
+        if slow and ev.level > 20 and (hit := look(problem, memo, at.lam, decide, step=memo.step)):
             return hit
         # on a plateau (one state holds everything) F falls while the residual stands still: that is progress
         falls = ev.log_partition < lowest - 160 * EPS * (abs(ev.log_partition) + ev.level + 1)
@@ -114,6 +116,7 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
         if (stalled >= 4 and size <= 1e3 * ev.rounding) or at.rejected > PATIENCE:
             memo.floored = bool(size <= 1e4 * ev.rounding)
             return None
+        before = size
         memo.at = newton_step(memo.family.evaluate, at)
         memo.step = memo.at.lam - at.lam
         memo.iterations += 1

@@ -130,6 +130,7 @@ class _Search:
     trace: list[tuple[float, float, float]] = field(default_factory=list)
     lam: np.ndarray = field(default_factory=lambda: np.zeros(0))
     hints: list[np.ndarray] = field(default_factory=list)
+    known: dict[bytes, tuple[Outcome | None, np.ndarray]] = field(default_factory=dict)
 
     @classmethod
     def begin(cls, problem: Problem, slack: Slack, driver: str, depth: int) -> _Search:
@@ -214,7 +215,11 @@ class _Search:
         x = np.linalg.lstsq(self.transform.T, self.problem.family.start(), rcond=None)[0] if len(self.transform) else []
         x = np.asarray(x, float)
         x = np.where(np.isfinite(self.kinks.slope(x)), x, 0.0)
-        at = look_ahead(x, 1.0 + float(np.linalg.norm(x)), self.evaluate(x), self.kinks, 0)
+        first = self.evaluate(x)
+        if not np.isfinite(first.log_partition):
+            reason = "ln Z is infinite at all multipliers tried that the limits allow: there is no largest entropy"
+            return self.answer(Verdict.UNFINISHED, reason=reason, evidence="tested")
+        at = look_ahead(x, 1.0 + float(np.linalg.norm(x)), first, self.kinks, 0)
         before: bytes | None = None
         tried: dict[bytes, int] = {}
         for count in range(LIMIT):
@@ -277,7 +282,6 @@ class _Search:
             below, kept = self.equality(side)
             if below is None:
                 return None
-            self.iterations += below.iterations
             if below.verdict is Verdict.SOLVED:
                 hit, new, grazed = self.solved(below, kept, side)
                 if hit is None:
@@ -300,6 +304,14 @@ class _Search:
 
     def equality(self, side: np.ndarray) -> tuple[Outcome | None, np.ndarray]:
         """Outcome of the problem with the charges on their edges and the penalised ones, and which these are."""
+        key = side.tobytes()
+        if key not in self.known:
+            self.known[key] = self._equality(side)
+            below = self.known[key][0]
+            self.iterations += 0 if below is None else below.iterations
+        return self.known[key]
+
+    def _equality(self, side: np.ndarray) -> tuple[Outcome | None, np.ndarray]:
         m = len(side)
         edge = self.slack.edges(side)
         held = np.flatnonzero(self.slack.is_exact | (side != 0))
@@ -335,7 +347,6 @@ class _Search:
         below, kept = self.equality(side)
         if below is None:
             return None
-        self.iterations += below.iterations
         return self.certified(below, kept, side, late=late) if below.verdict is Verdict.BOUNDARY else None
 
     def solved(self, below: Outcome, kept: np.ndarray, side: np.ndarray) -> tuple[Relaxed | None, np.ndarray, bool]:
