@@ -50,12 +50,27 @@ def joint_eigenbasis(charges: list[Any]) -> tuple[np.ndarray, np.ndarray] | None
     if len(live) == 1:
         levels[live[0]] = e / weights[live[0]]
         return levels, u
+    u = np.ascontiguousarray(u)
     for j in live:
-        image = charges[j] @ u
-        levels[j] = np.real(np.einsum("ik,ik->k", u.conj(), image))
-        if np.abs(image - u * levels[j]).max() > REMAINDER * (sizes[j] + abs(shifts[j])):
+        image = np.asarray(charges[j] @ u)
+        levels[j] = _overlaps(u, image)
+        image = image - u * levels[j]
+        if np.abs(_parts(image)).max() > REMAINDER * (sizes[j] + abs(shifts[j])):
             return None
     return levels, u
+
+
+def _parts(a: np.ndarray) -> np.ndarray:
+    """Real and imaginary parts of an (n, k) array as (n, k, 1 or 2), without a copy."""
+    a = np.ascontiguousarray(a)
+    return a.view(np.float64).reshape(*a.shape, -1)
+
+
+def _overlaps(u: np.ndarray, image: np.ndarray) -> np.ndarray:
+    """``Re <u_k|image_k>`` of all columns."""
+    if np.iscomplexobj(u) != np.iscomplexobj(image):
+        return np.real(np.einsum("ik,ik->k", u.conj(), image))
+    return np.einsum("ikc,ikc->k", _parts(u), _parts(image))
 
 
 def _row_norm(q: Any, shift: float) -> float:
