@@ -84,10 +84,10 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
     say(f"{file}: {plural(len(job.targets), 'charge')}, {plural(job.family.size, 'state')}")
     target = out if out is not None else File("runs") / name(config, job, asked)
     with folder(target, force=force) as part:
-        clock = time.perf_counter()
-        result = _fit(config, job, asked)
-        seconds["fit"] = time.perf_counter() - clock
-        say(f"fit: {plural(result.iterations, 'iteration')} in {seconds['fit']:.2f} s")
+        result, spent = _timed_fit(config, job, asked)
+        seconds |= spent
+        apart = f", {spent['compile']:.2f} s of them compiling" if "compile" in spent else ""
+        say(f"fit: {plural(result.iterations, 'iteration')} in {seconds['fit']:.2f} s{apart}")
         from maxent.app.record import record as collect
 
         found = collect(config, job, result, asked_driver=asked, facts=sizes(job), versions=_versions())
@@ -236,6 +236,19 @@ def _remove_empty(made: list[File]) -> None:
             parent.rmdir()
         except OSError:
             return  # someone else put something there
+
+
+def _timed_fit(config: Config, job: Job, driver: str) -> tuple[Any, dict[str, float]]:
+    """The result and its seconds; for the JAX driver, those spent compiling are told apart."""
+    if driver != "jax":
+        clock = time.perf_counter()
+        result = _fit(config, job, driver)
+        return result, {"fit": time.perf_counter() - clock}
+    from maxent.app.compiling import counted
+
+    with counted() as heard:
+        result = _fit(config, job, driver)
+    return result, {"fit": heard.total, "compile": heard.compile}
 
 
 def _fit(config: Config, job: Job, driver: str) -> Any:

@@ -2,6 +2,8 @@
 
 import json
 import os
+import subprocess
+import sys
 from hashlib import sha256
 from pathlib import Path
 
@@ -184,3 +186,19 @@ def test_without_template_and_plot_libraries_there_is_all_but_page_and_figures(t
     assert "no report.html: it needs the package jinja2" in said
     assert "no figures: they need the package matplotlib" in said
     assert set(tree(tmp_path / "out")) == FILES - {"report.html"}
+
+
+def test_compiling_is_told_apart_and_kept(tmp_path):
+    """The JAX driver's compile seconds stand in the manifest, and its products in the user's cache folder."""
+    command = [sys.executable, "-m", "maxent", "solve", str(CONFIGS / "jaynes_die.toml"), "--driver", "jax"]
+    done = subprocess.run(
+        [*command, "--out", str(tmp_path / "run")],
+        env=os.environ | {"XDG_CACHE_HOME": str(tmp_path / "cache")},
+        capture_output=True,
+        text=True,
+        check=True,
+    )
+    seconds = json.loads((tmp_path / "run" / "manifest.json").read_text())["seconds"]
+    assert 0 < seconds["compile"] <= seconds["fit"] <= seconds["total"]
+    assert "s of them compiling" in done.stderr
+    assert any((tmp_path / "cache" / "maxent" / "compiled").iterdir())
