@@ -23,10 +23,10 @@ class Clock:
         self.compile = 0.0
         self.total = 0.0
 
-    def hear(self, event: str, seconds: float, **_: object) -> None:
+    def hear(self, event: str, duration_secs: float, **_: str | int) -> None:
         """Listen to JAX's own account of what it does."""
         if event.startswith("/jax/core/compile/"):
-            self.compile += seconds
+            self.compile += duration_secs
 
 
 def cache_folder() -> Path:

@@ -38,7 +38,7 @@ def operator_matrix(value: Any, label: str) -> Any:
         Not a square matrix, not finite, or not Hermitian to 1e-12 of its largest entry.
     """
     sparse = sp.issparse(value)
-    q = sp.csr_array(value) if sparse else np.asarray(value)
+    q: Any = sp.csr_array(value) if sparse else np.asarray(value)
     if q.dtype == object or not (np.issubdtype(q.dtype, np.number) or q.dtype == bool):
         raise TypeError(f"{label} must be a matrix of numbers, not of {q.dtype}")
     if q.ndim != 2 or q.shape[0] != q.shape[1]:
