@@ -43,8 +43,10 @@ class Tail(Family):
             return Evaluation(np.inf, blank, np.outer(blank, blank), 0.0, 0.0)
         r = np.sqrt(x)
         values = np.array([0.5 / (1 + r), -np.tanh(y)])
-        bend = np.diag([0.25 / (max(r, 1e-100) * (1 + r) ** 2), 1 / np.cosh(y) ** 2])
-        log_z = np.log1p(r) - r + np.log(2 * np.cosh(y)) + lam @ self._offset()
+        bend = np.diag(
+            [0.25 / (max(r, 1e-100) * (1 + r) ** 2), 4 * np.exp(-2 * abs(y)) / (1 + np.exp(-2 * abs(y))) ** 2]
+        )
+        log_z = np.log1p(r) - r + np.logaddexp(y, -y) + lam @ self._offset()
         covariance = self._matrix() @ bend @ self._matrix().T
         size = abs(x) + abs(y) + abs(lam @ self._offset())
         return Evaluation(log_z, self._matrix() @ values - self._offset(), covariance, 16 * EPS * (1 + size), size)

@@ -9,6 +9,7 @@ from maxent.core import decide as module
 from maxent.core.contract import EPS, Problem, Verdict
 from maxent.core.decide import decide
 from maxent.families import Matrices, Microstates
+from tests.conformance.toy import Toy
 from tests.core.tail import Tail
 
 DIE = np.arange(1.0, 7.0)[None, :]
@@ -54,6 +55,7 @@ CASES = {
     "descend": (listed(TRIANGLE), [0.5 + 1e-3, 0.5 + 1e-3], 0.0, Verdict.INFEASIBLE),
     "edge_of_domain": (Tail(), [0.7, 0.2], 0.0, Verdict.UNATTAINED),
     "existence": (listed(DIE), [4.5], 0.0, Verdict.SOLVED),
+    "close_call": (listed(DIE), [1 + 1e-12], 0.0, Verdict.SOLVED),
     "nominal": (listed(DIE), [1.01], 0.02, Verdict.SOLVED),
 }
 
@@ -63,6 +65,7 @@ def test_each_stage_answers(stage):
     family, q, accuracy, verdict = CASES[stage]
     outcome, found = asked(family, q, accuracy)
     assert (found, outcome.verdict) == (stage, verdict)
+    assert outcome.evidence == ("tested" if stage in ("edge_of_domain", "close_call") else "proved")
 
 
 def test_the_last_stages_answer_near_and_on_edges():
@@ -109,6 +112,15 @@ def test_without_stages_nothing_is_made_up():
         outcome = decide(Problem.pose(listed(DIE), np.array([3.0])))
     assert outcome.verdict is Verdict.UNFINISHED
     assert outcome.reason == "no stage could prove or refute that the targets can be reached"
+
+
+def test_a_close_call_needs_faces_that_were_seen():
+    """On an edge, a family without faces shows only directions far off the exposing one: nothing is solved."""
+    family = Toy(np.array([[0, 0, 0, 0, 2, 2, 2, 3], [0, 4, 0, 4, 0, 4, 1, 2.0]]), ("a", "b"))
+    for share in (0.1, 0.35, 0.8):
+        for driver in ("host", "jax"):
+            outcome = decide(Problem.pose(family, np.array([0.0, 4 * share])), driver=driver)
+            assert outcome.verdict is Verdict.UNFINISHED
 
 
 def test_edge_of_the_domain_in_closed_form():
