@@ -122,7 +122,7 @@ def many_multipliers(m: int = 2000, n: int = 20_000) -> list[tuple[str, ...]]:
 def main() -> None:
     """Measure and report."""
     measure.clean_environment("benchmarks.many")
-    head = ["one call, per fit", "BFGS", "Newton by hand", "against BFGS", "against Newton", "first call", "worst error"]
+    head = ["one call, per fit", "BFGS", "Newton by hand", "to BFGS", "to Newton", "first call", "worst error"]
     first = measure.table(head, many_targets())
     head = ["minimisation", "SciPy L-BFGS-B", "SciPy/ours", "steps", "residual", "whole solve", "verdict"]
     second = measure.table(head, many_multipliers())

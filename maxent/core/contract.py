@@ -226,7 +226,9 @@ class Family:
         return None
 
     def stiffness(self, lam: np.ndarray, u: np.ndarray, *, exact: bool = True) -> float | None:
-        """A number c with ``H(lam + t u) >= exp(-c |t|) H(lam)``, or None where no bound is known.
+        """A number c with ``u.H(lam + t u).u >= exp(-c |t|) u.H(lam).u``, or None where no bound is known.
+
+        Along the ray only: as a matrix inequality it is false for charges that do not commute.
 
         The default is the spread highest - lowest of ``u.Q`` (Bach, Electron. J. Stat. 4, 384 (2010), from memory,
         for commuting charges; for non-commuting ones tested on random and extreme cases).  With ``exact=False`` a

@@ -19,6 +19,9 @@ from maxent.core.whiten import whiten
 
 __all__ = ["decide"]
 
+#: Relative depth below which rounding, amplified by the closeness of the boundary, defeats the existence proof.
+CLOSE = 1e-8
+
 #: Newton steps before the search turns to faces and the analytic centre.
 LIMIT = 200
 
@@ -225,7 +228,9 @@ def close_call(problem: Problem, memo: Memo) -> Outcome | None:
     the depths that were measured on the way are still larger than what rounding leaves undecided.
     """
     off = np.abs(memo.whitening.values(memo.here.evaluation.values))
-    if not memo.floored or np.any(off > EARLY * problem.size) or memo.touched or not memo.near:
+    # a depth that does not explain why the proofs failed is no sign of closeness: the exposing direction was not seen
+    close = memo.near and -max(margin for margin, _ in memo.near) <= CLOSE * np.max(problem.size)
+    if not memo.floored or not close or memo.touched or np.any(off > EARLY * problem.size):
         return None
     return _solved(problem, memo, "tested")
 

@@ -1,7 +1,7 @@
 """Existence of the multipliers at a converged point: one number, R nu < 1/2.
 
-With ``H(lam + s) >= exp(-c(s)) H(lam)`` (generalised self-concordance, Bach, Electron. J. Stat. 4, 384 (2010), from
-memory) a minimiser of the dual exists for every target within the noise if
+With ``s.H(lam + s).s >= exp(-c(s)) s.H(lam).s`` along every ray (generalised self-concordance, F. Bach, Electron. J.
+Stat. 4, 384 (2010), from memory) a minimiser of the dual exists for every target within the noise if
 
     R nu < 1/2,   nu^2 = sum_k (|g_k| + b_k)^2 / h_k,   R^2 = sum_k c(u_k)^2 / h_k,
 
