@@ -1,4 +1,4 @@
-"""The solver inside jit, vmap and grad: derivatives against finite differences, batches against loops, compile counts."""
+"""The solver inside jit, vmap and grad: derivatives against differences, batches against loops, compile counts."""
 
 import jax
 import jax.numpy as jnp

@@ -344,7 +344,8 @@ def test_inputs_are_not_changed(rng):
 
 def test_duplicate_entries_of_a_sparse_matrix_add_up():
     """CSR may hold an entry in pieces; the user's matrix is left as it is."""
-    pieces = sp.csr_array((np.array([1.0, 2.0, 5.0, 5.0]), np.array([0, 0, 2, 1]), np.array([0, 2, 3, 4])), shape=(3, 3))
+    entries = (np.array([1.0, 2.0, 5.0, 5.0]), np.array([0, 0, 2, 1]), np.array([0, 2, 3, 4]))
+    pieces = sp.csr_array(entries, shape=(3, 3))
     family = Matrices({"a": pieces})
     np.testing.assert_allclose(np.sort(family.blocks.diagonal[0]), [-5, 3, 5], atol=1e-14)
     assert pieces.nnz == 4
