@@ -20,6 +20,7 @@ from maxent.core.outcome import Outcome
 from maxent.core.relaxed import limit_on_face
 from maxent.diagnose.conditioning import Conditioning
 from maxent.diagnose.export import to_dataset, to_html, to_scipy
+from maxent.diagnose.multipliers import propagated, user_covariance
 from maxent.diagnose.nearest import Nearest
 from maxent.diagnose.proof import NOT_PROVABLE, Proof, prove_interior, prove_outside
 from maxent.diagnose.redundancy import Redundancy
@@ -87,6 +88,8 @@ class Certificate:
 
     def verify(self, family: Family, targets: Mapping[str, Any]) -> Check:
         """Compute the claim again from the charges and the targets alone.
+
+        Only the direction is used: the margin written in the certificate plays no part, the check carries its own.
 
         Parameters
         ----------
@@ -227,6 +230,8 @@ class Result:
         None when a target leaves something open (a tolerance, a limit).
     explanation : tuple of str
         With ``explain=True``: the verdict in sentences.
+    sigmas : dict of str to float
+        Standard errors of the targets given as `maxent.Measured`; 0 for all others.
     redundancies : tuple of Redundancy
     conditioning : Conditioning or None
     iterations : int
@@ -264,6 +269,7 @@ class Result:
     conflict: tuple[str, ...] | None = None
     nearest: Nearest | None = None
     explanation: tuple[str, ...] = ()
+    sigmas: dict[str, float] = field(default_factory=dict)
 
     @property
     def success(self) -> bool:
@@ -316,6 +322,41 @@ class Result:
             if not np.isfinite(self.multipliers[n]):
                 out[n] = float("nan")
         return out
+
+    def multiplier_sigmas(self, errors: np.ndarray | None = None) -> dict[str, float]:
+        """Standard errors of the multipliers that follow from those of the targets, to first order.
+
+        `multiplier_errors` are about rounding and stated accuracy; these are about measurement, and mostly far larger.
+        A multiplier that is zero because its target is not needed has none.
+
+        Parameters
+        ----------
+        errors : (m, p) ndarray, optional
+            ``errors @ errors.T`` is the covariance matrix of the targets, in the order of `names`; ``np.diag(sigma)``
+            for independent standard errors.  By default those of the targets given as `maxent.Measured`.
+
+        Returns
+        -------
+        dict of str to float
+            NaN unless solved.
+
+        Raises
+        ------
+        ValueError
+            Not m rows.
+        """
+        pull = np.array([self.sigmas.get(n, 0.0) for n in self.names])
+        errors = np.diag(pull) if errors is None else np.asarray(errors, float)
+        if errors.ndim != 2 or len(errors) != len(pull):
+            raise ValueError(f"errors must have shape ({len(pull)}, p), not {errors.shape}")
+        if not self.success:
+            return dict.fromkeys(self.names, float("nan"))
+        factor, spread = user_covariance(self.outcome)[1], self.outcome.whitening.spread
+        kept = np.array([n not in self.not_needed for n in self.names], bool)
+        known = None if self.not_needed or np.any(pull) else factor.shape[1]
+        out = np.zeros(len(pull))
+        out[kept] = propagated(factor[kept], spread[kept], errors[kept], pull[kept], known)
+        return dict(zip(self.names, map(float, out), strict=True))
 
     def prove(self, family: Family, targets: Mapping[str, Any] | None = None) -> Proof:
         """Prove the verdict as a theorem about the numbers given.

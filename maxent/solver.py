@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 
 from maxent.core.contract import Family, Problem, Verdict
-from maxent.core.decide import decide
+from maxent.core.decide import decide_targets
 from maxent.core.outcome import Outcome
 from maxent.core.relaxed import Relaxed, decide_relaxed
 from maxent.core.slack import Slack
@@ -102,7 +102,7 @@ def solve(
         relaxed = decide_relaxed(problem, slack, driver=driver)
         result = _result(names, q, slack, relaxed.outcome, driver, relaxed)
     else:
-        result = _result(names, q, slack, decide(problem, driver=driver), driver)
+        result = _result(names, q, slack, decide_targets(family, q, stated, driver=driver), driver)
     return _explained(result, family, q, slack, units) if explain else result
 
 
@@ -160,6 +160,7 @@ def _result(
         outcome=outcome,
         slack=places(names, slack, outcome, relaxed),
         not_needed=_not_needed(names, slack, relaxed) if has_state else (),
+        sigmas=named(np.sqrt(np.diag(slack.penalty))),
     )
 
 

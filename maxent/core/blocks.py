@@ -251,8 +251,9 @@ class Blocks(Family):
         log_weight = np.zeros(self.diagonal.shape[1]) if self.prior is None else self.prior
         top = float(log_weight.max(initial=0.0 if self.dense else -np.inf))
         p = np.exp(log_weight - top)
-        total = p.sum() + np.exp(-top) * sum(a.shape[1] for a in self.dense)
-        p, w = p / total, np.exp(-top) / total
+        w = np.exp(-top) if self.dense else 0.0  # blocks without a prior weigh one each
+        total = p.sum() + w * sum(a.shape[1] for a in self.dense)
+        p, w = p / total, w / total
         values = self.diagonal @ p
         for a in self.dense:
             values = values + w * np.real(np.einsum("jii->j", a))

@@ -7,17 +7,22 @@ Floor: core.
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 
 from maxent.core.centre import centre, starts_along
-from maxent.core.contract import EPS, SAFETY, Problem, Verdict
+from maxent.core.contract import EPS, SAFETY, Family, Problem, Verdict
 from maxent.core.exists import minimiser_exists
 from maxent.core.faces import EARLY, look, outside
 from maxent.core.newton import PATIENCE, at_floor, begin, newton_step, settle
 from maxent.core.outcome import Memo, Outcome
 from maxent.core.whiten import whiten
 
-__all__ = ["decide"]
+__all__ = ["decide", "decide_targets"]
+
+#: Targets this many times larger than the charge are judged on the charge as it was given.
+FAR = 1e6
 
 #: Relative depth below which rounding, amplified by the closeness of the boundary, defeats the existence proof.
 CLOSE = 1e-8
@@ -54,6 +59,25 @@ def decide(problem: Problem, *, driver: str = "host", depth: int = 0) -> Outcome
     return memo.outcome(problem, Verdict.UNFINISHED, family=family, values=values, reason=reason, evidence="tested")
 
 
+def decide_targets(family: Family, targets: np.ndarray, accuracy: np.ndarray, *, driver: str = "host") -> Outcome:
+    """Verdict on giving the charges of `family` the values `targets`.
+
+    Targets so far away that counting from them would swallow the charge itself are answered before.
+    """
+    problem = Problem.pose(family, targets, accuracy)
+    scale = family.scale
+    for j in np.flatnonzero(np.abs(targets) > FAR * scale):
+        v = np.eye(len(targets))[j] * -np.sign(targets[j])
+        low = family.lowest(v)
+        constant = low.highest - low.value <= SAFETY * EPS * scale[j]
+        margin, tolerance = low.value - float(v @ targets), float(np.abs(v) @ problem.unit + SAFETY * low.error)
+        if not constant and margin > tolerance:
+            at_zero = whiten(Problem(family, EPS * scale, accuracy))
+            whitening = replace(at_zero, mean=at_zero.mean - targets)
+            return Outcome(Verdict.INFEASIBLE, problem, whitening, direction=v, margin=margin, tolerance=tolerance)
+    return decide(problem, driver=driver)
+
+
 # ---------------------------------------------------------------- stages
 
 
@@ -77,6 +101,9 @@ def nothing_free(problem: Problem, memo: Memo) -> Outcome | None:
     if memo.whitening.rank:
         return None
     values = problem.family.evaluate(np.zeros(len(problem.noise))).values if len(problem.noise) else np.zeros(0)
+    if not np.all(np.isfinite(values)):
+        memo.reason = "the charges or targets are too large for float64 arithmetic"
+        return memo.outcome(problem, Verdict.UNFINISHED, reason=memo.reason, evidence="tested")
     return memo.outcome(problem, Verdict.SOLVED, family=problem.family, values=values)
 
 

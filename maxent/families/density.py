@@ -121,6 +121,8 @@ class MatricesState:
         """
         if self.dims is None:
             raise ValueError("reduced states need the dimensions of the sites: give dims to the family")
+        if np.ndim(sites) != 1:
+            raise TypeError(f"sites must be a list of sites, not {sites!r}")
         kept = [int(s) for s in sites]
         if len(set(kept)) < len(kept) or any(not 0 <= s < len(self.dims) for s in kept):
             raise ValueError(f"sites must be different numbers in 0..{len(self.dims) - 1}, not {list(sites)}")

@@ -10,7 +10,7 @@ import numpy as np
 from maxent.core.blocks import Blocks, Ground
 from maxent.core.contract import Barrier, Evaluation, Face, Family, Lowest
 
-__all__ = ["Finite", "checked_charges", "relative_to_prior"]
+__all__ = ["Finite", "checked_charges", "checked_multipliers", "relative_to_prior"]
 
 
 class Finite(Family):
@@ -110,6 +110,24 @@ def checked_charges(charges: Any, kind: str) -> dict[str, Any]:
         if not isinstance(name, str) or not name:
             raise TypeError(f"the name of a charge must be non-empty text, not {name!r}")
     return out
+
+
+def checked_multipliers(lam: Any, blocks: Blocks) -> np.ndarray:
+    """Multipliers of a state as (m,) finite numbers.
+
+    Raises
+    ------
+    TypeError, ValueError
+    """
+    if isinstance(lam, dict):
+        raise TypeError("multipliers are a list in the order of the family's names, not a dict")
+    array = np.asarray(lam, float)
+    m = blocks.diagonal.shape[0]
+    if array.shape != (m,):
+        raise ValueError(f"multipliers must have shape ({m},), not {array.shape}")
+    if not np.all(np.isfinite(array)):
+        raise ValueError(f"multipliers must be finite, not {array.tolist()}")
+    return array
 
 
 def relative_to_prior(log_p: np.ndarray, p: np.ndarray, log_prior_mean: float, log_norm: float) -> float:

@@ -17,7 +17,7 @@ from maxent.core.blocks import Blocks, Ground, eigh
 from maxent.core.compiled import register
 from maxent.families.commuting import joint_eigenbasis
 from maxent.families.density import Group, MatricesState
-from maxent.families.finite import Finite, checked_charges, relative_to_prior
+from maxent.families.finite import Finite, checked_charges, checked_multipliers, relative_to_prior
 from maxent.families.operators import checked_basis, checked_dims, operator_matrix, to_csr
 from maxent.memory import require_memory
 
@@ -76,6 +76,9 @@ class Matrices(Finite):
 
     def __init__(self, charges: Any, *, basis: Any = None, dims: Any = None, log_prior: Any = None):
         charges = checked_charges(charges, "Matrices")
+        states = max((q.shape[0] for q in charges.values() if sp.issparse(q)), default=0)
+        need = 8 * states * (4 * len(charges) + 6)
+        require_memory(need, f"{states} states need {{need}} for the diagonals of {len(charges)} charges alone")
         operators = {name: operator_matrix(value, f"charge {name!r}") for name, value in charges.items()}
         prior = None if log_prior is None else operator_matrix(log_prior, "log_prior")
         basis = None if basis is None else checked_basis(basis)
@@ -254,7 +257,7 @@ class Matrices(Finite):
 
     def state(self, lam: Any) -> MatricesState:
         """State ``exp(G - lam.Q)/Z`` at multipliers `lam`, shape (m,)."""
-        lam = np.asarray(lam, float)
+        lam = checked_multipliers(lam, self.blocks)
         b = self.blocks
         log_flat = -(lam @ b.diagonal)
         if b.prior is not None:

@@ -13,7 +13,8 @@ import numpy as np
 
 from maxent.core.blocks import Blocks, Ground
 from maxent.core.compiled import register
-from maxent.families.finite import Finite, checked_charges, relative_to_prior
+from maxent.families.finite import Finite, checked_charges, checked_multipliers, relative_to_prior
+from maxent.families.operators import check_size
 
 __all__ = ["Microstates", "MicrostatesState"]
 
@@ -156,7 +157,7 @@ class Microstates(Finite):
 
     def state(self, lam: Any) -> MicrostatesState:
         """State ``p_x = w_x exp(-lam.f_x)/Z`` at multipliers `lam`, shape (m,)."""
-        log_p = -(np.asarray(lam, float) @ self.blocks.diagonal)
+        log_p = -(checked_multipliers(lam, self.blocks) @ self.blocks.diagonal)
         if self.blocks.prior is not None:
             log_p = log_p + self.blocks.prior
         log_z = _log_sum(log_p)
@@ -223,6 +224,8 @@ def _log_sum(x: np.ndarray) -> float:
 
 
 def _numbers(name: str, value: Any) -> np.ndarray:
+    if np.ma.is_masked(value):
+        raise ValueError(f"{name} has masked entries; drop these states")
     array = np.asarray(value)
     if array.dtype == object or not (np.issubdtype(array.dtype, np.number) or array.dtype == bool):
         raise TypeError(f"{name} must be numbers, not {array.dtype}")
@@ -241,6 +244,7 @@ def _charge(name: str, value: Any) -> np.ndarray:
     bad = np.flatnonzero(~np.isfinite(array))
     if len(bad):
         raise ValueError(f"{label} is {array[bad[0]]} in state {bad[0]}; it must be finite")
+    check_size(float(np.abs(array).max(initial=0.0)), label)
     return array
 
 
@@ -259,6 +263,8 @@ def _positions(indices: Any, n: int) -> np.ndarray:
         if array.shape != (n,):
             raise ValueError(f"a mask must have shape ({n},), not {array.shape}")
         return np.flatnonzero(array)
+    if array.ndim == 1 and not len(array):
+        return np.zeros(0, int)
     if array.ndim != 1 or not np.issubdtype(array.dtype, np.integer):
         raise TypeError("indices must be a list of integers or a mask")
     if len(array) and (array.min() < 0 or array.max() >= n):

@@ -10,10 +10,12 @@ from typing import Any
 import numpy as np
 import scipy.sparse as sp
 
-__all__ = ["checked_basis", "checked_dims", "operator_matrix", "to_csr"]
+__all__ = ["check_size", "checked_basis", "checked_dims", "operator_matrix", "to_csr"]
 
 #: Largest relative deviation from Hermiticity that is taken for rounding.
 HERMITIAN = 1e-12
+#: Sizes between which products of a charge with itself and with rounding units stay in range.
+SMALLEST, LARGEST = 1e-280, 1e280
 
 
 def to_csr(q: Any) -> sp.csr_array:
@@ -55,12 +57,24 @@ def operator_matrix(value: Any, label: str) -> Any:
     adjoint: Any = q.conj().T
     difference = q - adjoint
     size = np.abs(entries).max(initial=0.0)
+    check_size(size, label)
     off = np.abs(difference.data).max(initial=0.0) if sparse else np.abs(difference).max(initial=0.0)
     if off > HERMITIAN * size:
         raise ValueError(f"{label} is not Hermitian: |Q - Q^H| is {off:.1e} where |Q| is {size:.1e}")
     if off == 0.0:
         return q
     return 0.5 * (q + adjoint.tocsr()) if sparse else 0.5 * (q + adjoint)
+
+
+def check_size(size: float, label: str) -> None:
+    """Refuse charges whose squares under- or overflow; the message says what to do.
+
+    Raises
+    ------
+    ValueError
+    """
+    if size and not SMALLEST <= size <= LARGEST:
+        raise ValueError(f"{label} is of size {size:.1e}, not in {SMALLEST:.0e}..{LARGEST:.0e}: take other units")
 
 
 def checked_basis(value: Any) -> Any:

@@ -6,7 +6,9 @@ Floor: lattice. An entry of a list outside an open chain does not exist: asking 
 
 from __future__ import annotations
 
+import difflib
 import math
+import re
 from collections.abc import Iterator, Mapping
 from typing import Any, NoReturn
 
@@ -34,8 +36,7 @@ def position_values(text: str, sites: Sites, parameters: Mapping[str, Any] | Non
     Parameters
     ----------
     text : str
-        Number in the formula language without operators; one name that is no parameter stands for the
-        position.
+        Number in the formula language without operators; ``i`` stands for the position.
     sites : Ring or Chain
         Gives the positions 0..size-1.
     parameters : mapping from str to number or sequence of numbers, optional
@@ -57,6 +58,13 @@ def position_values(text: str, sites: Sites, parameters: Mapping[str, Any] | Non
     if len(node.free) > 1:
         names = " and ".join(f"'{name}'" for name in sorted(node.free))
         fail(f"expected one position, found {names}", text, node.start)
+    # a name that no bracket binds must be the position itself: a mistyped parameter must not pass for it
+    unknown = [name for name in sorted(node.free - {"i"}) if not re.search(rf"\[[^\]]*\b{name}\b", text)]
+    if unknown:
+        known = sorted({"i", "L", "pi", *checked})
+        close = difflib.get_close_matches(unknown[0], known, n=1)
+        hint = f"; did you mean '{close[0]}'?" if close else "; the position is 'i'"
+        fail(f"unknown symbol '{unknown[0]}'{hint}", text, max(text.find(unknown[0]), 0) + node.start)
     values = np.empty(sites.size)
     for i in range(sites.size):
         try:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
+import maxent
 from maxent.core import decide as module
 from maxent.core.contract import EPS, Problem, Verdict
 from maxent.core.decide import decide
@@ -245,3 +246,26 @@ def test_verify_is_the_lowest_value_of_the_shifted_charges():
 def test_a_charge_that_is_zero_has_size_one():
     p = Problem.pose(listed(np.zeros((1, 3))), np.zeros(1))
     assert p.noise[0] == 0 and p.size[0] == 1
+
+
+@pytest.mark.parametrize("target", [1e7, 1e15, -1e16, 1e300])
+def test_targets_that_would_swallow_the_charge(target):
+    """Counted from 1e16 the charge has no digit left; it is still infeasible, not a contradiction."""
+    result = maxent.solve(Microstates({"n": [0.0, 1, 2, 3]}), {"n": target})
+    assert result.verdict is maxent.Verdict.INFEASIBLE
+    assert result.certificate.margin == pytest.approx(max(target - 3, -target), rel=1e-9)
+    constant = maxent.solve(Microstates({"n": [2.0, 2, 2]}), {"n": target})
+    assert constant.verdict is maxent.Verdict.INCONSISTENT
+
+
+@pytest.mark.parametrize("shift", [-800.0, -1e4, 800.0])
+def test_a_common_log_weight_changes_nothing_but_the_partition_function(shift):
+    """A prior over 2^1200 configurations, normalised, has log weights of -832."""
+    charges = {"n": [0.0, 1, 2]}
+    for target in (0.7, 1.0, 2.0):
+        plain = maxent.solve(Microstates(charges), {"n": target})
+        moved = maxent.solve(Microstates(charges, log_weights=[shift] * 3), {"n": target})
+        assert moved.verdict is plain.verdict
+        assert moved.multipliers == pytest.approx(plain.multipliers, abs=1e-11, nan_ok=True)
+        if plain.success:
+            assert moved.log_partition == pytest.approx(plain.log_partition + shift, rel=1e-12)
