@@ -43,6 +43,7 @@ def write(file: File, record: Mapping[str, Any], *, probabilities: Any = None, l
             ("value", "mean attained"),
             ("residual", "value - target"),
             ("multiplier", "lam in exp(-sum lam_j Q_j)/Z"),
+            ("multiplier_sigma", "what the standard errors of the targets leave open"),
             ("multiplier_error", "what rounding and stated target accuracy leave open"),
         ):
             _numbers(out, key, ("charge",), [c[key] for c in charges], text)

@@ -130,6 +130,9 @@ class Job:
         Names of the single states, where the user gave some.
     digests : mapping of str to str
         SHA-256 of every file that was read, by name.
+    errors : (m, p) ndarray or None
+        ``errors @ errors.T`` is the covariance of the targets, where it was sampled; None takes the standard errors of
+        the targets as independent.
     """
 
     family: Any
@@ -138,6 +141,16 @@ class Job:
     facts: Mapping[str, str] = field(default_factory=dict)
     labels: tuple[str, ...] = ()
     digests: Mapping[str, str] = field(default_factory=dict)
+    errors: Any = None
+
+    def target_errors(self) -> Any:
+        """Give a factor (m, p) of the covariance of the targets; None when no target has a standard error."""
+        import numpy as np
+
+        sigmas = [t.sigma for t in self.targets.values()]
+        if all(s is None for s in sigmas):
+            return None
+        return np.diag([s or 0.0 for s in sigmas]) if self.errors is None else self.errors
 
     def asked(self) -> dict[str, Any]:
         """What the fit is given, by name."""

@@ -13,6 +13,7 @@ from typing import Any
 
 from maxent.app.config import Config
 from maxent.app.job import Job
+from maxent.diagnose.explanation import left_by_sigmas
 from maxent.version import __version__
 
 __all__ = ["SCHEMA", "dump", "record"]
@@ -51,6 +52,11 @@ def record(
     dict
         JSON-ready.
     """
+    errors = job.target_errors()
+    sigmas = {} if errors is None else result.multiplier_sigmas(errors)
+    explanation = list(result.explanation)
+    if sigmas and result.success:
+        explanation.append(left_by_sigmas(result.multipliers, sigmas))
     return {
         "schema": SCHEMA,
         "title": config.header.title or config.file.stem,
@@ -61,7 +67,7 @@ def record(
         "success": bool(result.success),
         "loose": bool(result.loose),
         "message": result.message,
-        "charges": [_charge(name, job, result) for name in result.names],
+        "charges": [_charge(name, job, result, sigmas.get(name)) for name in result.names],
         "log_partition": _finite(result.log_partition),
         "entropy": _finite(result.entropy),
         "relative_entropy": _finite(result.relative_entropy),
@@ -70,7 +76,7 @@ def record(
         "face": _face(result),
         "conflict": None if result.conflict is None else list(result.conflict),
         "nearest": _nearest(result.nearest),
-        "explanation": list(result.explanation),
+        "explanation": explanation,
         "excess": None if result.excess is None else _combination(result.excess),
         "redundancies": [
             {"coefficients": _combination(r.coefficients), "constant": _finite(r.constant)} for r in result.redundancies
@@ -92,7 +98,7 @@ def dump(data: Mapping[str, Any]) -> str:
     return json.dumps(data, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
 
 
-def _charge(name: str, job: Job, result: Any) -> dict[str, Any]:
+def _charge(name: str, job: Job, result: Any, sigma: float | None) -> dict[str, Any]:
     target = job.targets[name]
     digits = result.digits[name]
     return {
@@ -105,6 +111,7 @@ def _charge(name: str, job: Job, result: Any) -> dict[str, Any]:
         "residual": _finite(result.residuals[name]),
         "place": result.slack[name],
         "multiplier": _finite(result.multipliers[name]),
+        "multiplier_sigma": _finite(sigma),
         "multiplier_error": _finite(result.multiplier_errors[name]),
         "multiplier_digits": math.floor(digits) if math.isfinite(digits) else None,
         "last_multiplier": _finite(result.last_multipliers[name]),

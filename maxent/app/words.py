@@ -83,7 +83,8 @@ def charge_table(record: Mapping[str, Any]) -> tuple[list[str], list[list[str]]]
     Returns
     -------
     tuple of head and rows
-        The column "sigma" is there only if a target has one.
+        If a target has a sigma, it stands beside it, and that of each multiplier beside the multiplier, which is
+        then written with its sigma in brackets; what rounding leaves open says nothing more then and is left out.
     """
     measured = any(c["sigma"] is not None for c in record["charges"])
     columns = {
@@ -92,12 +93,13 @@ def charge_table(record: Mapping[str, Any]) -> tuple[list[str], list[list[str]]]
         "sigma": lambda c: number(c["sigma"], 2),
         "value": lambda c: number(c["value"], 12),
         "residual": lambda c: number(c["residual"], 2),
-        "multiplier": lambda c: with_error(c["multiplier"], c["multiplier_error"]),
+        "multiplier": lambda c: with_error(c["multiplier"], c["multiplier_sigma" if measured else "multiplier_error"]),
+        "multiplier sigma": lambda c: number(c["multiplier_sigma"], 2),
         "error": lambda c: number(c["multiplier_error"], 2),
         "digits": lambda c: number(c["multiplier_digits"]),
     }
-    if not measured:
-        del columns["sigma"]
+    for name in ("error", "digits") if measured else ("sigma", "multiplier sigma"):
+        del columns[name]
     return list(columns), [[write(c) for write in columns.values()] for c in record["charges"]]
 
 

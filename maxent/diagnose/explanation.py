@@ -1,13 +1,13 @@
 """A verdict explained in sentences, by the names of the charges.
 
 Unreachable: which targets cannot hold together, and the nearest ones that can.  Boundary: the chain of faces.  Solved:
-which combinations of the data are fixed well and which are open; loose: which combination of the data is missing.
+which combinations are fixed well and which are open; loose: which combination is missing.
 Floor: diagnose.  Takes numbers that others computed, and words them.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -17,9 +17,9 @@ from maxent.core.outcome import Outcome
 from maxent.diagnose.conditioning import Conditioning
 from maxent.diagnose.multipliers import Multipliers, left_open, uncertainty, user_covariance
 from maxent.diagnose.nearest import Nearest
-from maxent.text import combination, listing, number, plural
+from maxent.text import combination, listing, number, plural, with_error
 
-__all__ = ["Findings", "explain"]
+__all__ = ["Findings", "explain", "left_by_sigmas"]
 
 #: Up to this condition number of the correlations no combination is worth singling out.
 EVEN = 100.0
@@ -62,6 +62,23 @@ class Findings:
 def explain(found: Findings) -> tuple[str, ...]:
     """Sentences that explain the verdict; empty where the message says it all."""
     return tuple(_WORDS.get(found.outcome.verdict, lambda f: [])(found))
+
+
+def left_by_sigmas(multipliers: Mapping[str, float], sigmas: Mapping[str, float]) -> str:
+    """Say what the standard errors of the targets leave of the multipliers.
+
+    Parameters
+    ----------
+    multipliers, sigmas : mapping of str to float
+        By charge; the standard errors as `maxent.diagnose.multipliers.propagated` gives them.
+
+    Examples
+    --------
+    >>> left_by_sigmas({"energy": 0.73112, "number": -2.0}, {"energy": 0.021, "number": 0.0})
+    'The standard errors of the targets leave of the multipliers: energy 0.731(21) and number -2.'
+    """
+    left = listing((f"{n} {with_error(x, sigmas[n])}" for n, x in multipliers.items()), last="and")
+    return f"The standard errors of the targets leave of the multipliers: {left}."
 
 
 # ---------------------------------------------------------------- unreachable
@@ -163,10 +180,12 @@ def _solved(f: Findings) -> list[str]:
 
 
 def _fixed(f: Findings) -> list[str]:
-    """Which combinations of the data fix their multipliers well, and which hardly."""
+    """Which combinations of the targets fix their multipliers well, and which hardly; sampling is not in it."""
     c, m = f.conditioning, f.multipliers
     if c is None or f.outcome.at is None:
         return []
+    within = bool(np.any(f.outcome.problem.accuracy))
+    taken = "within their stated accuracy" if within else "when they are taken as exact numbers"
     size = np.maximum(np.abs(m.values), m.errors)
     digits = _digits(m.errors, size)
     each = listing((f"{n} {d}" for n, d in zip(f.names, digits, strict=True)), last="and")
@@ -174,7 +193,7 @@ def _fixed(f: Findings) -> list[str]:
         even = ""
         if len(c.spectrum) > 1:
             even = f" No combination of them stands out (condition number {number(c.condition_number, 3)})."
-        return [f"Digits of the multipliers that the data fix: {each}.{even}"]
+        return [f"Digits of the multipliers that the targets fix {taken}: {each}.{even}"]
     deviation = np.linalg.norm(user_covariance(f.outcome)[1], axis=1)
     stiff, slack = (_upright([x.coefficients[n] for n in f.names]) for x in (c.stiffest, c.sloppiest))
     # multipliers of charges that are counted in their standard deviations
@@ -184,16 +203,16 @@ def _fixed(f: Findings) -> list[str]:
     fixed = listing(together, last="and") + (" together" if len(together) > 1 else "")
     best = _digits(errors[:1], np.maximum(np.abs(values[:1]), errors[:1]))[0]
     return [
-        f"With each charge in units of its standard deviation: the data fix {fixed} (multiplier of "
+        f"With each charge in units of its standard deviation: the targets fix {fixed} {taken} (multiplier of "
         f"{_text(f.names, stiff)} to {plural(best, 'digit')}), but {_text(f.names, slack)} is open by "
         f"{number(errors[1], 1)} where its multiplier is {number(values[1], 6)} (condition number "
         f"{number(c.condition_number, 2)}).",
-        f"Digits of the multipliers: {each}.",
+        f"Digits of the multipliers that the targets fix {taken}: {each}.",
     ]
 
 
 def _missing(f: Findings) -> str:
-    """The combination of the data that would have to be known better."""
+    """The combination of the targets that would have to be known better."""
     o = f.outcome
     assert o.at is not None
     open_ = uncertainty(o)
@@ -204,7 +223,7 @@ def _missing(f: Findings) -> str:
     spread = float(np.sqrt(h[k]))
     text = (
         f"What is missing is {_text(f.names, c)} to more digits (each charge in units of its standard deviation): the "
-        f"data give it to {number(open_[k], 1)} of its spread over all states, and in this state it fluctuates by "
+        f"targets give it to {number(open_[k], 1)} of its spread over all states, and in this state it fluctuates by "
         f"{number(spread, 2)} of that spread."
     )
     if spread < 1e-2:

@@ -12,7 +12,8 @@ from maxent.core.outcome import Outcome
 from maxent.core.relaxed import Relaxed
 
 __all__ = [
-    "Multipliers", "left_open", "relaxed_multipliers", "replay", "uncertainty", "user_covariance", "user_multipliers",
+    "Multipliers", "left_open", "propagated", "relaxed_multipliers", "replay", "uncertainty", "user_covariance",
+    "user_multipliers",
 ]  # fmt: skip
 
 #: Fewer fixed digits than this (of the largest multiplier, in units of the spreads) is called loose.
@@ -102,6 +103,45 @@ def user_covariance(outcome: Outcome) -> tuple[np.ndarray, np.ndarray]:
         return np.zeros((m, m)), np.zeros((m, 0))
     factor = last.whitening.inverse @ (last.at.axes * np.sqrt(np.maximum(last.at.curvature, 0.0)))
     return factor @ factor.T, factor
+
+
+def propagated(
+    factor: np.ndarray, spread: np.ndarray, errors: np.ndarray, pull: np.ndarray | None = None, rank: int | None = None
+) -> np.ndarray:
+    """Standard errors (m,) of the multipliers that follow from those of the targets, to first order.
+
+    The multipliers answer a change of the targets by ``d lam = -chi^+ dq``, chi the covariance of the charges in the
+    state, so that ``cov(lam) = chi^+ Sigma chi^+``, Sigma the covariance of the targets.  The pseudo-inverse is taken
+    with each charge in units of its spread: among redundant charges, that is the answer of the multipliers of least
+    norm.  Penalised targets have ``<Q> = q + C lam`` and hence ``chi + C`` in the place of chi.
+
+    Parameters
+    ----------
+    factor : (m, r) ndarray
+        ``factor @ factor.T`` = chi.
+    spread : (m,) ndarray
+        Unit of each charge, positive.
+    errors : (m, p) ndarray
+        ``errors @ errors.T`` = Sigma, rows in units of the charges; never squared, whatever these units are.
+    pull : (m,) ndarray, optional
+        Standard errors by which the fit penalises residuals, ``C = diag(pull^2)``; 0 where it does not.
+    rank : int, optional
+        Number of independent charges; counted with a cut at rounding when it is not known.
+
+    Returns
+    -------
+    (m,) ndarray
+        In units of the multipliers.
+    """
+    unit = spread[:, None]
+    root = factor / unit
+    if pull is not None and np.any(pull):
+        root = np.concatenate([root, np.diag(pull / spread)], axis=1)
+    axes, size, _ = np.linalg.svd(root, full_matrices=False)
+    if rank is None:
+        rank = int(np.sum(size > EPS * max(root.shape) * size.max(initial=0.0)))
+    half = axes[:, :rank] / size[:rank]
+    return np.linalg.norm(half @ (half.T @ (errors / unit)), axis=1) / spread
 
 
 def replay(problem: Problem, lam: np.ndarray, met: np.ndarray | None = None) -> float:

@@ -247,7 +247,8 @@ def test_json_on_stdout_is_the_file(tmp_path, capsys):
     out, err = capsys.readouterr()
     assert err == ""
     assert out == (tmp_path / "out" / "result.json").read_text()
-    # E. T. Jaynes, Brandeis lectures (1962): lam = -0.37105 in exp(-lam i) for a die of mean 4.5
+    # E. T. Jaynes, in Statistical Physics (W. A. Benjamin, 1963), from memory: lam = -0.37105 in exp(-lam i) for a
+    # die of mean 4.5
     assert json.loads(out)["charges"][0]["multiplier"] == pytest.approx(-0.37105, abs=6e-6)
 
 

@@ -83,7 +83,7 @@ def test_the_page_says_what_the_result_says(runs, record):
         "solved · proved",
         found["message"],
         "gravity_shift",
-        "-0.0317244395638",
+        "-0.032(4)",
         "0.012",
         "0.1643303732",
     ):

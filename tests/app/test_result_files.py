@@ -1,6 +1,7 @@
 """What stands in result.json, result.nc and the docs of both."""
 
 import json
+import re
 from importlib.resources import files
 from pathlib import Path
 
@@ -9,13 +10,16 @@ import numpy as np
 import pytest
 from scipy.io import netcdf_file
 
+import maxent
 from maxent.app import kinds
 from maxent.app.cli import main
 from maxent.app.config import Header, build, load
 from maxent.app.reference import fields_table, keys, table, update
+from maxent.families import Microstates
 from maxent.result import Check
 
 DOCS = Path(__file__).parents[2] / "docs"
+CONFIGS = DOCS.parent / "configs"
 SCHEMA = json.loads(files("maxent.app").joinpath("schema/result.schema.json").read_text())
 NAMES = sorted(f.stem for f in (DOCS.parent / "configs").glob("*.toml"))
 
@@ -169,3 +173,54 @@ def test_examples_of_the_docs_build(tmp_path):
         file = tmp_path / f"{n}.toml"
         file.write_text(block.split("```")[0])
         assert build(load(file)).targets
+
+
+def test_multipliers_of_counts_carry_the_error_of_sampling(tmp_path):
+    """Wolf's die: ``chi^-1 Sigma chi^-1`` by dense algebra, and the scatter of fits to counts drawn again."""
+    assert main(["solve", str(CONFIGS / "wolf_dice.toml"), "--out", str(tmp_path / "out"), "--quiet"]) == 0
+    found = json.loads((tmp_path / "out" / "result.json").read_text())
+    sigmas = np.array([c["multiplier_sigma"] for c in found["charges"]])
+    rows = np.array([[-2.5, -1.5, -0.5, 0.5, 1.5, 2.5], [1, 1, -2, -2, 1, 1]])
+    counts = np.array([3246, 3449, 2897, 2841, 3635, 3932])
+    throws = np.repeat(rows, counts, axis=1)
+    inverse = np.linalg.inv(np.array(found["covariance"]))
+    expected = np.sqrt(np.diag(inverse @ np.cov(throws) @ inverse / 20000))
+    np.testing.assert_allclose(sigmas, expected, rtol=1e-9)
+
+    family, draw = Microstates({"a": rows[0], "b": rows[1]}), np.random.default_rng(5)
+    means = draw.multinomial(20000, counts / 20000, size=400) @ rows.T / 20000
+    fits = [list(maxent.solve(family, {"a": a, "b": b}).multipliers.values()) for a, b in means]
+    np.testing.assert_allclose(np.std(fits, axis=0, ddof=1), sigmas, rtol=0.15)  # 400 fits: 3.5 % is one sigma
+
+
+def test_rounding_is_not_what_the_data_say(tmp_path, capsys):
+    assert main(["solve", str(CONFIGS / "wolf_dice.toml"), "--out", str(tmp_path / "out"), "--quiet"]) == 0
+    out = capsys.readouterr().out
+    page = (tmp_path / "out" / "report.html").read_text()
+    assert "multiplier  multiplier sigma\n" in out and "  digits" not in out
+    assert re.search(r"^gravity_shift .* -0\.032\(4\) +0\.004$", out, re.MULTILINE)
+    for text in (out, page):
+        assert "data fix" not in text
+        assert "fix when they are taken as exact numbers: " in text
+        assert "leave of the multipliers: gravity_shift -0.032(4) and long_axis -0.072(5)." in text
+
+
+def test_a_measured_target_beside_counts(tmp_path):
+    """Counts of one charge, an independent measurement of the other: no covariance between them."""
+    config = tmp_path / "mixed.toml"
+    config.write_text(
+        'kind = "states"\n[charges]\na = [0, 1, 2, 3]\nb = [1, 0, 0, 1]\n[counts]\nper_state = [4, 5, 6, 7]\n'
+        '[targets]\na = "from counts"\nb = { measured = [0.4, 0.1] }\n'
+    )
+    assert main(["solve", str(config), "--out", str(tmp_path / "out"), "--quiet"]) == 0
+    found = json.loads((tmp_path / "out" / "result.json").read_text())
+    sigma = np.array([c["sigma"] for c in found["charges"]])
+    inverse = np.linalg.inv(np.array(found["covariance"]) + np.diag([0.0, 0.1**2]))
+    expected = np.sqrt(np.diag(inverse @ np.diag(sigma**2) @ inverse))
+    np.testing.assert_allclose([c["multiplier_sigma"] for c in found["charges"]], expected, rtol=1e-9)
+
+
+def test_without_sigmas_there_are_none_of_the_multipliers(tmp_path):
+    assert main(["solve", str(CONFIGS / "jaynes_die.toml"), "--out", str(tmp_path / "out"), "--quiet"]) == 0
+    found = json.loads((tmp_path / "out" / "result.json").read_text())
+    assert [c["multiplier_sigma"] for c in found["charges"]] == [None]

@@ -103,7 +103,7 @@ def test_solved_with_two_charges_nearly_the_same():
     b = a + 1e-3 * x
     result = explained(Microstates({"a": a, "b": b}), {"a": p @ a, "b": p @ b})
     text = result.explanation[0]
-    assert "the data fix a and b together" in text and "but a - b is open by" in text
+    assert "the targets fix a and b together" in text and "but a - b is open by" in text
     # the multiplier of the difference, in standard deviations: that of the eigenvector of the covariance
     deviation = np.sqrt(np.diag(result.covariance))
     known = (np.array([1, -1]) / np.sqrt(2) * deviation) @ np.array([result.multipliers[n] for n in "ab"])

@@ -134,6 +134,7 @@ def build(options: Options, folder: File) -> Job:
         facts,
         labels=tuple(options.labels or ()),
         digests=files.digests,
+        errors=_sampling(targets, options, charges, counts),
     )
 
 
@@ -211,6 +212,26 @@ def _check_counts(problems: Problems, counts: np.ndarray) -> None:
         problems.add(path, "at least two observations are needed")
     elif counts.sum() > 2**53:
         problems.add(path, "more observations than can be counted exactly (2^53)")
+
+
+def _sampling(
+    targets: dict[str, Target], options: Options, charges: dict[str, Any], counts: np.ndarray | None
+) -> np.ndarray | None:
+    """Factor (m, p) of the covariance of the targets: that of the sample means, and independent standard errors beside.
+
+    Means over the same N observations are correlated: ``cov = sum_i n_i (f_i - mean)(f_i - mean)^T / (N (N - 1))``.
+    """
+    if counts is None:
+        return None
+    sampled = [options.targets[name] == "from counts" for name in targets]
+    alone = np.diag([0.0 if s else t.sigma or 0.0 for s, t in zip(sampled, targets.values(), strict=True)])
+    total = float(counts.sum())
+    weights = np.sqrt(counts / total / (total - 1))
+    rows = [
+        weights * charges[name] - weights * t.value if s else np.zeros(len(counts))
+        for s, (name, t) in zip(sampled, targets.items(), strict=True)
+    ]
+    return np.concatenate([np.array(rows), alone], axis=1)
 
 
 def _target(given: float | str | Room, values: np.ndarray, counts: np.ndarray | None, accuracy: float) -> Target:
