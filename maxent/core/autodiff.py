@@ -97,8 +97,11 @@ def minimiser_near(at: Iterate, reach: Any) -> Any:
     """
     h = jnp.maximum(at.curvature, 1e-150)
     off = jnp.abs(at.axes.T @ at.evaluation.values) + at.evaluation.rounding
-    nu2 = jnp.sum(off**2 / h)
-    r2 = jnp.sum((jnp.abs(at.axes.T) @ reach) ** 2 / h)
+    spread = jnp.abs(at.axes.T) @ reach
+    # combinations that were left where they are (no spread at all) have nothing to prove
+    there = ~(spread <= 1e-12 * jnp.max(reach))
+    nu2 = jnp.sum(jnp.where(there, off**2 / h, 0.0))
+    r2 = jnp.sum(jnp.where(there, spread**2 / h, 0.0))
     return jnp.where(jnp.isnan(r2), at.residual < 1e-9, r2 * nu2 < 0.25)
 
 
