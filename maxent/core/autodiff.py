@@ -19,8 +19,11 @@ import jax.numpy as jnp
 from maxent.core.blocks import Blocks
 from maxent.core.contract import EPS, Evaluation, Family
 from maxent.core.newton import PATIENCE, Iterate, at_floor, begin, newton_step
+from maxent.core.pytrees import announce
 
 __all__ = ["Fit", "attach", "fit", "minimiser_near", "norm", "values_at", "whitener"]
+
+announce()
 
 #: Eigenvalues of the normalised covariance below this are redundancies: the Gram matrix knows no better.
 REDUNDANT = 1e-13

@@ -17,7 +17,8 @@ import numpy as np
 import scipy.linalg as sla
 
 from maxent.core.contract import EPS, Barrier, Evaluation, Family, Lowest, namespace
-from maxent.core.spectral import divided_differences, log_trace_exp
+from maxent.core.differences import divided_differences
+from maxent.core.pytrees import register
 
 __all__ = ["Blocks", "Ground", "eigh", "eigvalsh"]
 
@@ -145,6 +146,7 @@ def operator_norm(matrix: np.ndarray, above: float) -> float:
     return float(max(-ritz[0], ritz[-1]))
 
 
+@register()
 @dataclass(frozen=True)
 class Blocks(Family):
     """m charges on a finite spectrum.
@@ -200,6 +202,8 @@ class Blocks(Family):
         """``ln Z(lam)`` for JAX; differentiable twice at any degeneracy."""
         import jax.numpy as jnp
         from jax.nn import logsumexp
+
+        from maxent.core.spectral import log_trace_exp
 
         terms = []
         if self.diagonal.shape[1]:

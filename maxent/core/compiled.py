@@ -6,68 +6,24 @@ Importing it never changes JAX's precision: every entry works inside ``jax.enabl
 
 from __future__ import annotations
 
-from dataclasses import fields
 from functools import partial
-from typing import Any, TypeVar
+from typing import Any
 
 import jax
 import jax.numpy as jnp
 import numpy as np
 
-from maxent.core.blocks import Blocks
 from maxent.core.contract import EPS, Evaluation, Family
 from maxent.core.newton import PATIENCE, Iterate, at_floor, begin, newton_step
+from maxent.core.pytrees import announce
 
-__all__ = ["evaluate_by_derivatives", "minimise", "register"]
-
-T = TypeVar("T")
+__all__ = ["evaluate_by_derivatives", "minimise"]
 
 #: Size of the exponent beyond which the compiled loop hands over to the host.
 FAR = 1e6
 
 
-class _Held:
-    """Something that rides along in a pytree without being an array; equal to itself alone."""
-
-    def __init__(self, value: Any):
-        self.value = value
-
-    def __eq__(self, other: object) -> bool:
-        return isinstance(other, _Held) and other.value is self.value
-
-    def __hash__(self) -> int:
-        return id(self.value)
-
-
-def register(*static: str, held: tuple[str, ...] = ()) -> Any:
-    """Class decorator: make a dataclass a pytree whose fields are leaves.
-
-    Fields named `static` are compared by value, those `held` (sparse matrices, Python objects) by identity.
-    Rebuilding sets the fields and nothing else: constructors validate, and a trace has nothing to validate.
-    """
-
-    def apply(cls: type[T]) -> type[T]:
-        names = [f.name for f in fields(cls)]  # type: ignore[arg-type]
-        leaves = [n for n in names if n not in static + held]
-
-        def take_apart(x: T) -> tuple[list[Any], tuple[Any, ...]]:
-            aux = (*(getattr(x, n) for n in static), *(_Held(getattr(x, n)) for n in held))
-            return [getattr(x, n) for n in leaves], aux
-
-        def rebuild(aux: tuple[Any, ...], children: Any) -> T:
-            x = object.__new__(cls)
-            for name, value in (*zip(leaves, children, strict=True), *zip(static + held, aux, strict=True)):
-                object.__setattr__(x, name, value.value if isinstance(value, _Held) else value)
-            return x
-
-        jax.tree_util.register_pytree_node(cls, take_apart, rebuild)
-        return cls
-
-    return apply
-
-
-register("factor")(Evaluation)
-register()(Blocks)
+announce()
 
 
 @jax.jit

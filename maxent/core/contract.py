@@ -15,6 +15,8 @@ from typing import Any
 
 import numpy as np
 
+from maxent.core.pytrees import register
+
 __all__ = [
     "EPS", "SAFETY", "Barrier", "Evaluation", "Face", "Family", "Lowest", "Problem", "Verdict", "namespace",
 ]  # fmt: skip
@@ -45,6 +47,7 @@ def namespace(x: Any) -> Any:
     return x.__array_namespace__()
 
 
+@register("factor")
 @dataclass(frozen=True)
 class Evaluation:
     """``ln Z`` and its derivatives at one point: all that one decomposition gives.

@@ -16,8 +16,11 @@ import numpy as np
 import optax
 
 from maxent.core.contract import EPS, Family
+from maxent.core.pytrees import announce
 
 __all__ = ["MANY", "minimise_limited"]
+
+announce()
 
 #: Above this many independent charges the JAX driver starts with this route (measured, docs/drivers.md).
 MANY = 300

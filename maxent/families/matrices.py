@@ -14,7 +14,7 @@ import numpy as np
 import scipy.sparse as sp
 
 from maxent.core.blocks import Blocks, Ground, eigh
-from maxent.core.compiled import register
+from maxent.core.pytrees import register
 from maxent.families.commuting import joint_eigenbasis
 from maxent.families.density import Group, MatricesState
 from maxent.families.finite import Finite, checked_charges, checked_multipliers, relative_to_prior

@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 
 from maxent.core.blocks import Blocks, Ground
-from maxent.core.compiled import register
+from maxent.core.pytrees import register
 from maxent.families.finite import Finite, checked_charges, checked_multipliers, relative_to_prior
 from maxent.families.operators import check_size
 

@@ -11,8 +11,8 @@ from typing import Any
 import numpy as np
 from jax.nn import logsumexp
 
-from maxent.core.compiled import register
 from maxent.core.contract import EPS, Family, Lowest
+from maxent.core.pytrees import register
 
 
 @register("names")

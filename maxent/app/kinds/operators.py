@@ -110,7 +110,7 @@ def build(options: Options, folder: File) -> Job:
         facts["prior"] = "given; the state is pulled towards it"
     if files.digests:
         facts["files"] = plural(len(files.digests), "file") + " read: " + ", ".join(files.digests)
-    from maxent.families import Matrices
+    from maxent.families.matrices import Matrices
 
     family = Matrices(charges, dims=None if options.dims is None else tuple(options.dims), log_prior=prior)
     targets = {name: given_target(options.targets[name], options.accuracy.get(name, 0.0)) for name in charges}

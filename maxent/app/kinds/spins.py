@@ -153,7 +153,7 @@ def build(options: Options, folder: File) -> Job:
     facts |= {f"parameter {name}": str(value) for name, value in options.parameters.items()}
     facts |= {f"density {name}": text for name, text in options.densities.items()}
     facts |= {f"charge {name}": text for name, text in options.charges.items()}
-    from maxent.families import Matrices
+    from maxent.families.matrices import Matrices
 
     family = Matrices(matrices, dims=sites.dims)
     return Job(family, targets, observed, facts)

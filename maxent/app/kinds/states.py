@@ -124,7 +124,7 @@ def build(options: Options, folder: File) -> Job:
         facts["weights"] = "log degeneracies given; counted in the entropy"
     if prior is not None:
         facts["prior"] = "given; the state is pulled towards it"
-    from maxent.families import Microstates
+    from maxent.families.microstates import Microstates
 
     family = Microstates(charges, log_weights=weights, log_prior=prior)
     return Job(
