@@ -74,7 +74,7 @@ def many_targets(count: int = 1000, part: int = 50) -> list[tuple[str, ...]]:
         )
         found = compiled.solve_many(family, columns)
     ours, bfgs, by_hand = spent["one call"] / count, spent["BFGS"] / part, spent["Newton"] / part
-    worst = max(float(np.abs(found.multipliers[n] - lam[:, j]).max()) for j, n in enumerate("abcd"))
+    worst = max(float(np.abs(np.asarray(found.multipliers[n]) - lam[:, j]).max()) for j, n in enumerate("abcd"))
     micro = lambda s: f"{1e6 * s:.0f} us"
     times, ratios = (micro(ours), micro(bfgs), micro(by_hand)), (f"{bfgs / ours:.1f}", f"{by_hand / ours:.1f}")
     return [(*times, *ratios, f"{first:.1f} s", f"{worst:.0e}")]

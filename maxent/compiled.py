@@ -16,11 +16,13 @@ import jax.numpy as jnp
 import numpy as np
 
 from maxent.core.autodiff import fit, values_at
+from maxent.core.blocks import Blocks
 from maxent.core.contract import Family
 from maxent.core.many import Many, fit_many
-from maxent.targets import suggestion
+from maxent.families.finite import Finite
+from maxent.targets import Exact, suggestion
 
-__all__ = ["Solution", "combine", "solve", "solve_many"]
+__all__ = ["Solution", "combine", "solve", "solve_many", "with_arrays"]
 
 class Solution(NamedTuple):
     """What `solve` returns: a pytree, differentiable in targets and in the arrays of the family.
@@ -54,7 +56,7 @@ def solve(family: Family, targets: Mapping[str, Any], *, iterations: int = 100) 
     Parameters
     ----------
     family : Family
-        Such as `maxent.families.Matrices`; may hold traced arrays.
+        Such as `maxent.families.Matrices`; its arrays may be traced (`combine`, `with_arrays`).
     targets : dict of str to float64
         Values of some of the charges; may be traced.
     iterations : int
@@ -80,8 +82,8 @@ def solve(family: Family, targets: Mapping[str, Any], *, iterations: int = 100) 
     ...     print(f"{even(4.5):.6f} {jax.grad(even)(4.5):.6f}")
     0.591712 0.105122
     """
-    names, free = _names(family, targets)
-    q = jnp.stack([jnp.asarray(targets[names[j]], float) for j in free]) if free else jnp.zeros(0)
+    names, free = _names(family, targets, iterations)
+    q = jnp.stack([_scalar(targets[names[j]], names[j]) for j in free])
     return _one(family.traced(), q, names, free, iterations)
 
 
@@ -131,7 +133,9 @@ def solve_many(
     ValueError
         Unknown names, targets of different lengths, or JAX in single precision.
     """
-    names, free = _names(family, targets)
+    names, free = _names(family, targets, iterations)
+    if batch is not None and (not isinstance(batch, int) or batch < 1):
+        raise ValueError(f"batch must be a positive integer, not {batch!r}")
     columns = [jnp.asarray(targets[names[j]], float) for j in free]
     shapes = {names[j]: c.shape for j, c in zip(free, columns, strict=True)}
     if not columns or any(len(s) != 1 for s in shapes.values()) or len(set(shapes.values())) > 1:
@@ -165,6 +169,8 @@ def combine(family: Family, charges: Mapping[str, Mapping[str, Any]]) -> Family:
     """
     old = tuple(family.names)  # type: ignore[attr-defined]
     rows = []
+    if not charges or any(not isinstance(parts, Mapping) for parts in charges.values()):
+        raise ValueError("combine takes new charges as a dict name -> coefficients by old name, at least one")
     for name, parts in charges.items():
         for part in parts:
             if part not in old:
@@ -176,7 +182,58 @@ def combine(family: Family, charges: Mapping[str, Mapping[str, Any]]) -> Family:
     return mixed
 
 
-def _names(family: Family, targets: Mapping[str, Any]) -> tuple[tuple[str, ...], tuple[int, ...]]:
+def with_arrays(family: Family, arrays: Any) -> Family:
+    """The same family with other arrays of the same shapes, which may be traced.
+
+    The way to derivatives by the charges themselves: ``arrays`` is what ``family.traced()`` gives, with other numbers.
+
+    Parameters
+    ----------
+    family : Family
+        `maxent.families.Matrices` or `maxent.families.Microstates`.
+    arrays : maxent.core.blocks.Blocks
+        Diagonal charges (m, n) and dense blocks (m, d, d).
+
+    Raises
+    ------
+    TypeError
+        Arrays that are not of this kind.
+
+    Examples
+    --------
+    >>> import jax
+    >>> from maxent.families import Microstates
+    >>> die = Microstates({"pips": [1.0, 2, 3, 4, 5, 6]})
+    >>> with jax.enable_x64(True):
+    ...     entropy = lambda arrays: solve(with_arrays(die, arrays), {"pips": 4.5}).entropy
+    ...     slope = jax.grad(entropy)(die.traced())
+    >>> slope.diagonal.shape
+    (1, 6)
+    """
+    if not isinstance(arrays, Blocks) or not isinstance(family, Finite):
+        raise TypeError("with_arrays takes a family with blocks, and what its traced() gives with other numbers")
+    return family._with(arrays, None)
+
+
+def _scalar(value: Any, name: str) -> Any:
+    """One target as a float64 scalar; Exact is unwrapped."""
+    value = value.value if isinstance(value, Exact) else value
+    try:
+        array = jnp.asarray(value, float)
+    except (TypeError, ValueError):
+        array = None
+    if array is None or isinstance(value, str) or array.shape != ():
+        raise TypeError(f"target {name!r} must be one number, not {type(value).__name__}")
+    return array
+
+
+def _names(
+    family: Family, targets: Mapping[str, Any], iterations: int
+) -> tuple[tuple[str, ...], tuple[int, ...]]:
+    if not isinstance(iterations, int) or iterations < 1:
+        raise ValueError(f"iterations must be a positive integer, not {iterations!r}")
+    if not targets:
+        raise ValueError("no targets given: at least one charge needs one")
     if jnp.zeros(0).dtype != np.float64:
         raise ValueError("compiled solves need double precision: call them inside `with jax.enable_x64(True):`")
     names = tuple(family.names)  # type: ignore[attr-defined]

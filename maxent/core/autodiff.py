@@ -21,7 +21,7 @@ from maxent.core.contract import EPS, Evaluation, Family
 from maxent.core.newton import PATIENCE, Iterate, at_floor, begin, newton_step
 from maxent.core.pytrees import announce
 
-__all__ = ["Fit", "attach", "fit", "minimiser_near", "norm", "values_at", "whitener"]
+__all__ = ["Fit", "attach", "consistent", "fit", "minimiser_near", "norm", "values_at", "whitener"]
 
 announce()
 
@@ -66,7 +66,8 @@ def fit(family: Family, targets: Any, free: tuple[int, ...], m: int, iterations:
     still, q = jax.lax.stop_gradient((family, targets))
     start, picked = jnp.zeros(len(free)), jnp.array(free, int)
     first = still.evaluate(spread_out(start, free, m))
-    transform = whitener(first.covariance[jnp.ix_(picked, picked)])
+    h0 = first.covariance[jnp.ix_(picked, picked)]
+    transform = whitener(h0)
 
     def evaluate(x: Any) -> Evaluation:
         lam = transform.T @ x
@@ -89,7 +90,23 @@ def fit(family: Family, targets: Any, free: tuple[int, ...], m: int, iterations:
     count, at = jax.lax.while_loop(unfinished, advance, (jnp.asarray(0), begin(evaluate, start)))
     lam = attach(family, targets, spread_out(transform.T @ at.lam, free, m), free)
     reach = still.reach()[picked] if isinstance(still, Blocks) else jnp.full(len(free), jnp.nan)
-    return Fit(lam, at_floor(at) & minimiser_near(at, jnp.abs(transform) @ reach), count)
+    agrees = consistent(h0, first.values[picked], q)
+    return Fit(lam, agrees & at_floor(at) & minimiser_near(at, jnp.abs(transform) @ reach), count)
+
+
+def consistent(covariance: Any, values: Any, targets: Any) -> Any:
+    """Whether combinations without any spread have the values they are asked to have.
+
+    `covariance` and `values` are those of any state of full support: such a combination is the same in all of them.
+    """
+    size = jnp.sqrt(jnp.diagonal(covariance))
+    unit = jnp.where(size > 0, 1 / jnp.where(size > 0, size, 1.0), 1 / (jnp.abs(values) + jnp.abs(targets) + 1e-300))
+    live = size > 0
+    chi = jnp.where(live[:, None] & live[None, :], covariance * unit[:, None] * unit[None, :], 0.0)
+    h, axes = jnp.linalg.eigh(chi)
+    off = jnp.abs(axes.T @ (unit * (values - targets)))
+    blur = jnp.abs(axes.T) @ (unit * (jnp.abs(values) + jnp.abs(targets)))
+    return jnp.all((h > REDUNDANT * h[-1]) | (off <= 1e-9 * (1 + blur)))
 
 
 def minimiser_near(at: Iterate, reach: Any) -> Any:

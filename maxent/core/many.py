@@ -12,7 +12,7 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 
-from maxent.core.autodiff import Fit, attach, fit, norm, values_at, whitener
+from maxent.core.autodiff import Fit, attach, consistent, fit, norm, values_at, whitener
 from maxent.core.blocks import Blocks
 from maxent.core.contract import EPS, Family
 
@@ -74,7 +74,11 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
     p0 = jax.nn.softmax(log_weights)
     mean = family.diagonal @ p0
     centred = family.diagonal - mean[:, None]
-    transform = whitener((centred * p0) @ centred.T)
+    covariance = (centred * p0) @ centred.T
+    transform = whitener(covariance)
+    # combinations without any spread keep the multiplier zero; a one on their diagonal leaves them alone
+    dead = jnp.where(jnp.any(transform != 0, axis=1), 0.0, 1.0)
+    agrees = jax.vmap(lambda t: consistent(covariance, mean, t))(targets)
     w = transform @ centred
     rows, columns = np.triu_indices(k)
     features = jnp.concatenate([jnp.ones((1, n)), w, w[rows] * w[columns]]).T
@@ -92,7 +96,7 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
         return top + jnp.log(moments[0]) + x @ q, first - q, second - jnp.outer(first, first)
 
     def newton(off: Any, chi: Any) -> Any:
-        ridge = (1e-14 * jnp.trace(chi) + 1e-300) * jnp.eye(k)
+        ridge = (1e-14 * jnp.trace(chi) + 1e-300) * jnp.eye(k) + jnp.diag(dead)
         return jax.scipy.linalg.cho_solve((jnp.linalg.cholesky(chi + ridge), True), off)
 
     def one(pair: tuple[Any, Any]) -> tuple[Any, ...]:
@@ -128,8 +132,8 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
         value, off, chi = evaluate(x, q)
         start = (jnp.asarray(1), x, value, off, chi, newton(off, chi), jnp.asarray(1.0))
         count, x, value, off, chi, step, _ = jax.lax.while_loop(unfinished, advance, start)
-        inverse = jnp.linalg.inv(chi + 1e-300 * jnp.eye(k))
-        exists = jnp.trace(inverse) * (2 * reach * (norm(off) + 16 * floor(x, chi))) ** 2 * jnp.trace(inverse) < 0.25
+        soft = jnp.trace(jnp.linalg.inv(chi + 1e-300 * jnp.eye(k) + jnp.diag(dead))) - jnp.sum(dead)
+        exists = (soft * 2 * reach * (norm(off) + 16 * floor(x, chi))) ** 2 < 0.25
         done = settled(x, off, chi, step) & exists
         x = jnp.where(done, x + step, x)
         left = jnp.where(done, jnp.zeros(k), off)
@@ -138,4 +142,4 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
     x, converged, steps, log_z, left = jax.lax.map(one, ((targets - mean) @ transform.T, blurs), batch_size=batch)
     lam = x @ transform
     inverse = jnp.linalg.pinv(transform)
-    return Many(Fit(lam, converged, steps), log_z - lam @ mean, targets + left @ inverse.T)
+    return Many(Fit(lam, converged & agrees, steps), log_z - lam @ mean, targets + left @ inverse.T)

@@ -107,7 +107,7 @@ def test_derivatives_by_the_arrays_of_the_family(kind, size):
             b.prior,
             b.prior_dense,
         )
-        s = compiled.solve(family._with(blocks, None), q)
+        s = compiled.solve(compiled.with_arrays(family, blocks), q)
         return jnp.stack([*s.multipliers.values(), s.entropy, *s.values.values()])
 
     h = 1e-6
@@ -201,6 +201,22 @@ def test_redundant_charges_share_their_multiplier():
     assert float(s.multipliers["pips"] + 2 * s.multipliers["twice"]) == pytest.approx(-0.37105, abs=6e-6)
 
 
+def test_contradictory_copies_do_not_converge():
+    states = Microstates({"e": np.arange(4), "two": 2 * np.arange(4) + 1, "five": np.full(4, 5.0)})
+    for targets, agrees in (
+        ({"e": 1.0, "two": 3.0, "five": 5.0}, True),
+        ({"e": 1.0, "two": 5.0, "five": 5.0}, False),
+        ({"e": 1.0, "two": 3.0, "five": 5.1}, False),
+    ):
+        assert bool(compiled.solve(states, targets).converged) is agrees
+        many = compiled.solve_many(states, {n: jnp.full(2, q) for n, q in targets.items()})
+        assert many.converged.tolist() == [agrees, agrees]
+    spin = np.array([[0, 0.5], [0.5, 0]])
+    doubled = Matrices({"a": spin, "b": 2 * spin + np.eye(2), "z": np.diag([0.5, -0.5])})
+    assert bool(compiled.solve(doubled, {"a": 0.3, "b": 1.6, "z": 0.1}).converged)
+    assert not bool(compiled.solve(doubled, {"a": 0.3, "b": 2.5, "z": 0.1}).converged)
+
+
 def test_same_shapes_compile_once():
     rng = np.random.default_rng(8)
     make = lambda: Microstates({"a": rng.normal(size=50), "b": rng.normal(size=50)})
@@ -219,5 +235,20 @@ def test_bad_input_is_named():
         compiled.solve_many(die, {"pips": 4.5})
     with pytest.raises(ValueError, match="'pip', which is no charge; did you mean 'pips'"):
         compiled.combine(die, {"x": {"pip": 1.0}})
+    with pytest.raises(ValueError, match="no targets given"):
+        compiled.solve(die, {})
+    with pytest.raises(ValueError, match="iterations must be a positive integer, not -1"):
+        compiled.solve(die, {"pips": 4.5}, iterations=-1)
+    with pytest.raises(ValueError, match="batch must be a positive integer, not 0"):
+        compiled.solve_many(die, {"pips": jnp.ones(2)}, batch=0)
+    with pytest.raises(TypeError, match="target 'pips' must be one number"):
+        compiled.solve(die, {"pips": "4"})
+    with pytest.raises(TypeError, match="target 'pips' must be one number"):
+        compiled.solve(die, {"pips": jnp.ones(2)})
+    with pytest.raises(ValueError, match="combine takes new charges"):
+        compiled.combine(die, {})
+    with pytest.raises(TypeError, match="with_arrays takes"):
+        compiled.with_arrays(die, np.ones(6))
+    assert float(compiled.solve(die, {"pips": maxent.Exact(4.5)}).values["pips"]) == pytest.approx(4.5)
     with jax.enable_x64(False), pytest.raises(ValueError, match="double precision"):
         compiled.solve(die, {"pips": 4.5})
