@@ -63,6 +63,28 @@ def _recall_jvp(primals: tuple, tangents: tuple) -> tuple[Any, Any]:
     return (log_partition, values), moved
 
 
+def positive_solve(matrix: Any, right: Any) -> Any:
+    """Solution of ``matrix @ x = right`` for a small positive definite matrix.
+
+    Unrolled Cholesky elimination up to 8 x 8: mapped over a batch it is a handful of vector operations, where LAPACK
+    would be called once for every matrix.
+    """
+    k = matrix.shape[0]
+    if k > 8:
+        return jax.scipy.linalg.cho_solve((jnp.linalg.cholesky(matrix), True), right)
+    rows, b = [matrix[i] for i in range(k)], [right[i] for i in range(k)]
+    for i in range(k):
+        for j in range(i + 1, k):
+            factor = rows[j][i] / rows[i][i]
+            rows[j] = rows[j] - factor * rows[i]
+            b[j] = b[j] - factor * b[i]
+    x: list[Any] = [None] * k
+    for i in reversed(range(k)):
+        known = sum((rows[i][j] * x[j] for j in range(i + 1, k)), jnp.zeros_like(b[i]))
+        x[i] = (b[i] - known) / rows[i][i]
+    return jnp.stack(x)
+
+
 def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many:
     """Damped Newton for listed states, from the inverted cumulant series, capped in the metric of the start.
 
@@ -81,7 +103,7 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
     agrees = jax.vmap(lambda t: consistent(covariance, mean, t))(targets)
     w = transform @ centred
     rows, columns = np.triu_indices(k)
-    features = jnp.concatenate([jnp.ones((1, n)), w, w[rows] * w[columns]]).T
+    features = jnp.concatenate([jnp.ones((1, n)), w, w[rows] * w[columns]])
     reach = jnp.sqrt(jnp.max(jnp.sum(w * w, axis=0)))
     third = jnp.einsum("an,bn,cn->abc", w * p0, w, w)
     blurs = EPS * norm(jnp.abs(transform) @ (jnp.abs(mean)[:, None] + jnp.abs(targets.T)), axis=0)
@@ -89,7 +111,7 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
     def evaluate(x: Any, q: Any) -> tuple[Any, Any, Any]:
         exponent = log_weights - x @ w
         top = jnp.max(exponent)
-        moments = jnp.exp(exponent - top) @ features
+        moments = features @ jnp.exp(exponent - top)
         first = moments[1 : k + 1] / moments[0]
         second = jnp.zeros((k, k)).at[rows, columns].set(moments[k + 1 :] / moments[0], unique_indices=True)
         second = second + jnp.triu(second, 1).T
@@ -97,7 +119,7 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
 
     def newton(off: Any, chi: Any) -> Any:
         ridge = (1e-14 * jnp.trace(chi) + 1e-300) * jnp.eye(k) + jnp.diag(dead)
-        return jax.scipy.linalg.cho_solve((jnp.linalg.cholesky(chi + ridge), True), off)
+        return positive_solve(chi + ridge, off)
 
     def one(pair: tuple[Any, Any]) -> tuple[Any, ...]:
         q, blur = pair
@@ -132,14 +154,19 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
         value, off, chi = evaluate(x, q)
         start = (jnp.asarray(1), x, value, off, chi, newton(off, chi), jnp.asarray(1.0))
         count, x, value, off, chi, step, _ = jax.lax.while_loop(unfinished, advance, start)
-        soft = jnp.trace(jnp.linalg.inv(chi + 1e-300 * jnp.eye(k) + jnp.diag(dead))) - jnp.sum(dead)
+        soft = jnp.trace(positive_solve(chi + 1e-300 * jnp.eye(k) + jnp.diag(dead), jnp.eye(k))) - jnp.sum(dead)
         exists = (soft * 2 * reach * (norm(off) + 16 * floor(x, chi))) ** 2 < 0.25
         done = settled(x, off, chi, step) & exists
         x = jnp.where(done, x + step, x)
         left = jnp.where(done, jnp.zeros(k), off)
         return x, done, count, value - 0.5 * jnp.where(done, off @ step, 0.0) - x @ q, left
 
-    x, converged, steps, log_z, left = jax.lax.map(one, ((targets - mean) @ transform.T, blurs), batch_size=batch)
+    white = (targets - mean) @ transform.T
+    # a batch takes as many steps as its slowest fit: fits that lie equally far out go together
+    order = jnp.argsort(norm(white, axis=1))
+    found = jax.lax.map(one, (white[order], blurs[order]), batch_size=batch)
+    back = jnp.argsort(order)
+    x, converged, steps, log_z, left = jax.tree.map(lambda a: a[back], found)
     lam = x @ transform
     inverse = jnp.linalg.pinv(transform)
     return Many(Fit(lam, converged & agrees, steps), log_z - lam @ mean, targets + left @ inverse.T)

@@ -370,6 +370,15 @@ class _Search:
         if np.any(wrong) or np.any(missed):
             self.lam = lam
             return None, np.where(wrong, 0.0, np.where(missed, np.sign(over), side)), False
+        # fresh, and against the sizes of the charges: `rounding` grows without bound with the multipliers
+        kept_off = np.abs(np.where(self.slack.is_penalised, 0.0, over))
+        kept_off = np.where(side != 0, np.maximum(kept_off, np.abs(residual - self.slack.edges(side))), kept_off)
+        if not np.all(kept_off <= ALLOWED * self.problem.size + self.problem.accuracy):
+            self.reason = (
+                f"rounding leaves a target or limit missed by {kept_off.max():.0e} at multipliers as large as "
+                f"{np.abs(lam).max():.0e}: a standard error may be too small for a value that no state has"
+            )
+            return None, side, False
         at, family = None, self.problem.family
         if self.whitening.rank:
             at = Iterate(x, 1.0, ev, *curvatures(ev), 0)

@@ -16,9 +16,12 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from maxent.core.contract import EPS, SAFETY, Problem
+from maxent.core.contract import EPS, SAFETY, Family, Problem
 
 __all__ = ["Slack"]
+
+#: Edges further out than this, in units of the size of the charge, are looked at: digits may cancel.
+FAR = 8.0
 
 
 @dataclass(frozen=True)
@@ -120,6 +123,52 @@ class Slack:
         """`problem` with the rounding of the interval ends added to its noise."""
         ends = np.maximum(*(np.where(np.isfinite(x), np.abs(x), 0.0) for x in (self.lower, self.upper)))
         return replace(problem, noise=problem.noise + EPS * ends)
+
+    def brought_near(self, family: Family, q: np.ndarray) -> tuple[np.ndarray, Slack, np.ndarray]:
+        """The same question with far edges that no state can reach brought near, so that no digits cancel.
+
+        A limit above the highest value of its charge forbids nothing, wherever it stands; but charges counted from a
+        limit of 1e10 have lost ten digits.  Such edges are moved to one size of the charge outside its spectrum.
+
+        Parameters
+        ----------
+        family : Family
+            Charges as the user gave them.
+        q : (m,) ndarray
+            Centres of the targets.
+
+        Returns
+        -------
+        q : (m,) ndarray
+            Centres near the spectrum; those of targets with an edge that may hold are the given ones.
+        slack : Slack
+            Counted from them.
+        upper, lower : (2, m) ndarray of bool
+            Which edges were moved: they can take part in no certificate.
+        """
+        q, lower, upper = np.array(q, float), self.lower.copy(), self.upper.copy()
+        moved = np.zeros((2, len(q)), bool)
+        scale = np.asarray(family.scale, float)
+        for j in np.flatnonzero(self.has_edge):
+            ends = q[j] + np.array([lower[j], upper[j]])
+            if not scale[j] > 0 or not np.any(np.abs(ends[np.isfinite(ends)]) > FAR * scale[j]):
+                continue
+            low = family.lowest(np.eye(len(q))[j])
+            if not np.isfinite([low.value, low.highest]).all():
+                continue
+            below, above = low.value - scale[j], low.highest + scale[j]
+            idle = np.array([np.isfinite(ends[0]) and ends[0] < below, np.isfinite(ends[1]) and ends[1] > above])
+            held = np.isfinite(ends) & ~idle
+            if not np.any(idle):
+                continue
+            if not np.any(held):
+                q[j] = below if not idle[1] else above if not idle[0] else 0.5 * (below + above)
+            elif abs(q[j]) > FAR * scale[j]:
+                continue  # the multiplier of the edge that may hold belongs to the centre as given
+            lower[j] = below - q[j] if idle[0] else lower[j]
+            upper[j] = above - q[j] if idle[1] else upper[j]
+            moved[:, j] = idle[1], idle[0]
+        return q, Slack(lower, upper, self.penalty), moved
 
     def pinned(self, v: np.ndarray) -> tuple[Slack, np.ndarray]:
         """Slack on the face that `v` exposes, counted from the edges there, and these edges (m,).
