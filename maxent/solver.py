@@ -8,10 +8,10 @@ from typing import Any
 
 import numpy as np
 
-from maxent.core.contract import Family, Problem, Verdict
-from maxent.core.decide import decide_targets
+from maxent.core.contract import Family, Verdict
+from maxent.core.decide import FAR, decide_targets
 from maxent.core.outcome import Outcome
-from maxent.core.relaxed import Relaxed, decide_relaxed
+from maxent.core.relaxed import Relaxed, decide_relaxed_targets
 from maxent.core.slack import Slack
 from maxent.diagnose.conditioning import conditioning
 from maxent.diagnose.conflict import UNREACHABLE, conflict
@@ -97,10 +97,10 @@ def solve(
     units = collect_units(names, {} if metric is None else metric)
     if driver == "auto":
         driver = "jax" if type(family).evaluate is Family.evaluate else "host"
-    problem, slack = Problem.pose(family, q, stated), collect_slack(names, targets)
+    slack = collect_slack(names, targets)
     if slack.any:
-        relaxed = decide_relaxed(problem, slack, driver=driver)
-        result = _result(names, q, slack, relaxed.outcome, driver, relaxed)
+        relaxed, centre, slack = decide_relaxed_targets(family, q, stated, slack, driver=driver)
+        result = _result(names, q, slack, relaxed.outcome, driver, relaxed, centre)
     else:
         result = _result(names, q, slack, decide_targets(family, q, stated, driver=driver), driver)
     return _explained(result, family, q, slack, units) if explain else result
@@ -109,6 +109,12 @@ def solve(
 def _explained(result: Result, family: Family, q: np.ndarray, slack: Slack, units: np.ndarray) -> Result:
     """The result with its conflict, nearest targets and explanation; `units` that are NaN take their default."""
     names, outcome = result.names, result.outcome
+    far = np.flatnonzero(np.abs(q) > FAR * family.scale)
+    if outcome.verdict is Verdict.INFEASIBLE and not slack.any and len(far):
+        # counted from such a target the charges have no digits left to explain anything with
+        worst = far[np.argmax(np.abs(q[far]) / np.maximum(family.scale[far], 1e-300))]
+        text = f"The target of {names[worst]} is {q[worst]:.3g}, where the charge has the size {family.scale[worst]:.3g}"
+        return replace(result, conflict=(names[worst],), explanation=(f"{text}: check its units.",))
     clash = tuple(names[j] for j in conflict(outcome.problem, outcome, slack))
     move = None
     if outcome.verdict in UNREACHABLE and not slack.any:
@@ -124,8 +130,15 @@ def _explained(result: Result, family: Family, q: np.ndarray, slack: Slack, unit
 
 
 def _result(
-    names: tuple[str, ...], q: np.ndarray, slack: Slack, outcome: Outcome, driver: str, relaxed: Relaxed | None = None
+    names: tuple[str, ...],
+    q: np.ndarray,
+    slack: Slack,
+    outcome: Outcome,
+    driver: str,
+    relaxed: Relaxed | None = None,
+    centre: np.ndarray | None = None,
 ) -> Result:
+    centre = q if centre is None else centre  # what the charges of `outcome` and `slack` are counted from
     found = user_multipliers(outcome) if relaxed is None else relaxed_multipliers(relaxed)
     solved, stated = outcome.verdict is Verdict.SOLVED, outcome.problem.accuracy
     blank = np.full(len(names), np.nan)
@@ -141,18 +154,18 @@ def _result(
         message=message(names, outcome, found, replayed, slack, relaxed),
         names=names,
         targets=named(q),
-        values=named(q + off),
-        residuals=named(off),
+        values=named(centre + off),
+        residuals=named(off + (centre - q)),
         multipliers=named(found.values if solved else blank),
         last_multipliers=named(found.values),
         multiplier_errors=named(found.errors if solved else blank),
         loose=solved and found.loose,
         replay=replayed,
         covariance=covariance,
-        certificate=_certificate(names, q, stated, slack, outcome),
+        certificate=_certificate(names, centre, stated, slack, outcome),
         face=_faces(names, outcome),
         excess=None if outcome.excess is None else named(outcome.excess),
-        redundancies=redundancies(names, q, outcome.whitening),
+        redundancies=redundancies(names, centre, outcome.whitening),
         conditioning=conditioning(names, factor) if factor is not None else None,
         iterations=outcome.iterations,
         driver=driver,

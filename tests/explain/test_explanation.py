@@ -180,3 +180,12 @@ def test_unfinished_claims_nothing():
 def test_no_charges_no_words():
     result = explained(Matrices({}, dims=(2, 2)), {})
     assert str(result.verdict) == "solved" and result.explanation == ()
+
+
+def test_a_target_in_other_units_is_named_and_nothing_else_is_claimed():
+    """Counted from 1e14 a spin has no digits left: no nearest targets, no statement about other charges."""
+    spin = Matrices({"x": np.array([[0.0, 1], [1, 0]]), "z": np.diag([1.0, -1])})
+    result = maxent.solve(spin, {"x": 1e14, "z": 0.5}, explain=True)
+    assert result.conflict == ("x",)
+    assert result.nearest is None
+    assert result.explanation == ("The target of x is 1e+14, where the charge has the size 1: check its units.",)
