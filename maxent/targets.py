@@ -89,6 +89,9 @@ class Measured:
 
 _KINDS = (Exact, Within, AtMost, AtLeast, Measured)
 
+#: Widths and units outside, and limits beyond, have squares that overflow or vanish.
+SMALLEST, LARGEST = 1e-150, 1e150
+
 
 def suggestion(name: str, known: Sequence[str]) -> str:
     """``"; did you mean 'x'?"`` when something known looks like `name`, else nothing."""
@@ -110,15 +113,17 @@ def collect(
     TypeError
         Targets that are not a mapping or not real numbers.
     ValueError
-        Unknown or missing names, NaN or infinite values, a tolerance or sigma that is not positive, a negative
-        accuracy.
+        Unknown or missing names, NaN or infinite values, a tolerance or sigma that is not positive or not between
+        1e-150 and 1e150, a negative accuracy.
     """
     if not isinstance(targets, Mapping):
         raise TypeError(f"targets must be a dict name -> value, not {type(targets).__name__}")
     _check_names(names, targets, "target", every=True)
     values = np.array([_number(targets[n], f"target {n!r}") for n in names], float)
-    for n in names:
+    for n, value in zip(names, values, strict=True):
         _width(n, targets[n])
+        if isinstance(targets[n], Within | AtMost | AtLeast | Measured) and abs(value) > LARGEST:
+            raise ValueError(f"target {n!r} is {value}; it must lie within {LARGEST}: choose another unit")
     if isinstance(accuracy, Mapping):
         _check_names(names, accuracy, "accuracy", every=False)
         stated = np.array([_number(accuracy.get(n, 0.0), f"accuracy {n!r}") for n in names], float)
@@ -136,7 +141,7 @@ def collect_slack(names: Sequence[str], targets: Mapping[str, Any]) -> Slack:
     Raises
     ------
     TypeError, ValueError
-        A tolerance or sigma that is not a positive finite number.
+        A tolerance or sigma that is not a positive number between 1e-150 and 1e150.
     """
     m = len(names)
     lower, upper, penalty = np.zeros(m), np.zeros(m), np.zeros((m, m))
@@ -159,7 +164,7 @@ def collect_units(names: Sequence[str], metric: Mapping[str, float]) -> np.ndarr
     Raises
     ------
     TypeError, ValueError
-        A metric that is no mapping, unknown names, units that are not positive finite numbers.
+        A metric that is no mapping, unknown names, units that are not positive numbers between 1e-150 and 1e150.
     """
     if not isinstance(metric, Mapping):
         raise TypeError(f"metric must be a dict name -> unit, not {type(metric).__name__}")
@@ -170,6 +175,7 @@ def collect_units(names: Sequence[str], metric: Mapping[str, float]) -> np.ndarr
             units[j] = _number(metric[name], f"metric {name!r}")
             if not units[j] > 0:
                 raise ValueError(f"metric {name!r} is {units[j]}; it must be positive")
+            _check_size(units[j], f"metric {name!r}")
     return units
 
 
@@ -182,7 +188,13 @@ def _width(name: str, target: Any) -> float:
     if not width > 0:
         hint = "; for none give the number alone" if width == 0 else ""
         raise ValueError(f"{what} of target {name!r} is {width}; it must be positive{hint}")
+    _check_size(width, f"{what} of target {name!r}")
     return width
+
+
+def _check_size(width: float, label: str) -> None:
+    if not SMALLEST <= width <= LARGEST:
+        raise ValueError(f"{label} is {width}; it must lie between {SMALLEST} and {LARGEST}: choose another unit")
 
 
 def _check_names(names: Sequence[str], given: Mapping[str, Any], what: str, *, every: bool) -> None:
