@@ -10,8 +10,9 @@ import numpy as np
 
 from maxent.core.contract import Family, Verdict
 from maxent.core.decide import FAR, decide_targets
+from maxent.core.far import decide_relaxed_targets
 from maxent.core.outcome import Outcome
-from maxent.core.relaxed import Relaxed, decide_relaxed_targets
+from maxent.core.relaxed import Relaxed
 from maxent.core.slack import Slack
 from maxent.diagnose.conditioning import conditioning
 from maxent.diagnose.conflict import UNREACHABLE, conflict

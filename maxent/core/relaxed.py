@@ -21,7 +21,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from maxent.core.contract import EPS, SAFETY, Face, Family, Problem, Verdict
-from maxent.core.decide import FAR, decide
+from maxent.core.decide import decide
 from maxent.core.faces import on_face
 from maxent.core.kinks import Kinks, Point, advance, look_ahead
 from maxent.core.newton import Iterate, curvatures
@@ -30,7 +30,7 @@ from maxent.core.penalised import Penalised
 from maxent.core.slack import Slack
 from maxent.core.whiten import Whitening, whiten
 
-__all__ = ["Relaxed", "decide_relaxed", "decide_relaxed_targets", "limit_on_face"]
+__all__ = ["Relaxed", "decide_relaxed", "limit_on_face"]
 
 #: Steps of the descent, rejected steps in a row, faces inside faces.
 LIMIT, PATIENCE, DEEPEST = 200, 12, 12
@@ -80,53 +80,6 @@ def decide_relaxed(problem: Problem, slack: Slack, *, driver: str = "host", dept
         return Relaxed(decide(problem, driver=driver, depth=depth), none, none)
     search = _Search.begin(slack.noisy(problem), slack, driver, depth)
     return search.contradiction() or search.descend()
-
-
-def decide_relaxed_targets(
-    family: Family, targets: np.ndarray, accuracy: np.ndarray, slack: Slack, *, driver: str = "host"
-) -> tuple[Relaxed, np.ndarray, Slack]:
-    """Verdict on giving the charges of `family` the values `targets` with residuals left open by `slack`.
-
-    Far targets are no trouble to digits: edges that no state can reach are brought near, and what is out of reach on
-    its own is answered before.
-
-    Returns
-    -------
-    relaxed : Relaxed
-    centre : (m,) ndarray
-        What its charges are counted from.
-    slack : Slack
-        Counted from there.
-    """
-    centre, slack, moved = slack.brought_near(family, targets)
-    problem = Problem.pose(family, centre, accuracy)
-    relaxed = _far(family, centre, slack, problem) or decide_relaxed(problem, slack, driver=driver)
-    outcome, v = relaxed.outcome, relaxed.outcome.direction
-    if v is not None and outcome.verdict is not Verdict.BOUNDARY:
-        # an edge that was moved can only weaken a certificate, and means something else in the targets as given
-        kept = slack.admissible(np.where(np.where(v > 0, *moved), 0.0, v))
-        if kept is not None and np.any((kept == 0) & (v != 0)):
-            margin, tolerance, _ = slack.verify(slack.noisy(problem), kept)
-            relaxed = replace(relaxed, outcome=replace(outcome, direction=kept, margin=margin, tolerance=tolerance))
-    return relaxed, centre, slack
-
-
-def _far(family: Family, centre: np.ndarray, slack: Slack, problem: Problem) -> Relaxed | None:
-    """Infeasible, when a target so far away that counting from it swallows the charge is out of reach on its own."""
-    m, scale = len(centre), family.scale
-    for j in np.flatnonzero((np.abs(centre) > FAR * scale) & ~slack.is_penalised):
-        v = np.eye(m)[j] * -np.sign(centre[j])
-        low, noisy = family.lowest(v), slack.noisy(problem)
-        margin = low.value - float(v @ centre) - slack.support(v)
-        tolerance = float(np.abs(v) @ noisy.unit + SAFETY * low.error)
-        if low.highest - low.value > SAFETY * EPS * scale[j] and margin > tolerance:
-            at_zero = whiten(Problem(family, EPS * scale, problem.accuracy))
-            whitening = replace(at_zero, mean=at_zero.mean - centre)
-            outcome = Outcome(
-                Verdict.INFEASIBLE, noisy, whitening, direction=v, margin=margin, tolerance=tolerance
-            )  # fmt: skip
-            return Relaxed(outcome, np.zeros(m), np.zeros(m))
-    return None
 
 
 def _unconstrained(problem: Problem) -> Outcome:
@@ -422,7 +375,7 @@ class _Search:
         kept_off = np.where(side != 0, np.maximum(kept_off, np.abs(residual - self.slack.edges(side))), kept_off)
         if not np.all(kept_off <= ALLOWED * self.problem.size + self.problem.accuracy):
             cause = "charges counted from a far value lose digits"
-            if np.any(self.slack.is_penalised):
+            if np.any(self.slack.is_penalised) and ev.level > 1 / ALLOWED:
                 cause = "a standard error may be too small for a measured value that no state has"
             self.reason = (
                 f"rounding leaves a target or limit missed by {kept_off.max():.0e}, with multipliers as large as "
