@@ -98,23 +98,25 @@ def solve(
     units = collect_units(names, {} if metric is None else metric)
     if driver == "auto":
         driver = "jax" if type(family).evaluate is Family.evaluate else "host"
-    slack = collect_slack(names, targets)
+    slack, centre = collect_slack(names, targets), q
     if slack.any:
         relaxed, centre, slack = decide_relaxed_targets(family, q, stated, slack, driver=driver)
         result = _result(names, q, slack, relaxed.outcome, driver, relaxed, centre)
     else:
         result = _result(names, q, slack, decide_targets(family, q, stated, driver=driver), driver)
-    return _explained(result, family, q, slack, units) if explain else result
+    return _explained(result, family, centre, slack, units) if explain else result
 
 
 def _explained(result: Result, family: Family, q: np.ndarray, slack: Slack, units: np.ndarray) -> Result:
     """The result with its conflict, nearest targets and explanation; `units` that are NaN take their default."""
     names, outcome = result.names, result.outcome
-    far = np.flatnonzero(np.abs(q) > FAR * family.scale)
-    if outcome.verdict is Verdict.INFEASIBLE and not slack.any and len(far):
+    at = np.zeros(len(q)) if outcome.direction is None else outcome.direction
+    far = np.flatnonzero((np.abs(q) > FAR * family.scale) & (at != 0))
+    if outcome.verdict is Verdict.INFEASIBLE and len(far):
         # counted from such a target the charges have no digits left to explain anything with
         worst = far[np.argmax(np.abs(q[far]) / np.maximum(family.scale[far], 1e-300))]
-        text = f"The target of {names[worst]} is {q[worst]:.3g}, where the charge has the size {family.scale[worst]:.3g}"
+        size = family.scale[worst]
+        text = f"The target of {names[worst]} is {q[worst]:.3g}, where the charge has the size {size:.3g}"
         return replace(result, conflict=(names[worst],), explanation=(f"{text}: check its units.",))
     clash = tuple(names[j] for j in conflict(outcome.problem, outcome, slack))
     move = None

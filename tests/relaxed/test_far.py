@@ -50,6 +50,7 @@ def test_a_far_limit_hides_no_verdict(die, x):
             targets = {"pips": far, "even": asked}
             result = maxent.solve(die, targets, explain=True)
             assert result.verdict is verdict
+            assert result.conflict == (("even",) if verdict is Verdict.INFEASIBLE else None)
             assert result.certificate.direction == pytest.approx({"pips": 0.0, "even": -1.0}, abs=1e-15)
             assert result.certificate.lowest == pytest.approx(-1.0, abs=1e-14)
             assert result.certificate.margin == pytest.approx(asked - 1.0, abs=1e-14)
@@ -68,8 +69,10 @@ def test_a_far_limit_hides_no_verdict(die, x):
 def test_a_far_limit_out_of_reach(die, x):
     for far, margin in ((AtLeast(x), x - 6), (AtMost(-x), x + 1), (Within(x, x / 2), x / 2 - 6)):
         targets = {"pips": far, "even": 0.6}
-        result = maxent.solve(die, targets)
+        result = maxent.solve(die, targets, explain=True)
         assert result.verdict is Verdict.INFEASIBLE
+        assert result.conflict == ("pips",)
+        assert "in every state" not in result.explanation[0] or "between 1 and 6" in result.explanation[0]
         assert result.certificate.verify(die, targets)
         along = abs(result.certificate.direction["pips"])
         assert result.certificate.margin == pytest.approx(margin * along, rel=1e-2 if x > 100 else 0.5)
