@@ -177,12 +177,20 @@ def check_target(path: Path, given: Any, problems: Problems) -> None:
     (key,) = keys
     what = {"within": "tolerance", "measured": "sigma"}.get(key)
     numbers = given.given[key]
+    from maxent.targets import LARGEST, SMALLEST  # only here: bad configs are told without loading the core
+
+    value = numbers if what is None else next(iter(numbers), 0.0)
+    if abs(value) > LARGEST:
+        problems.add((*path, key), f"a value beyond {LARGEST:.0e} is not taken: choose another unit")
+        return
     if what is None:
         return
     if len(numbers) != 2:
         problems.add((*path, key), f"expected [value, {what}], got {len(numbers)} numbers")
     elif not numbers[1] > 0:
         problems.add((*path, key), f"the {what} must be positive, got {numbers[1]}")
+    elif not SMALLEST <= numbers[1] <= LARGEST:
+        problems.add((*path, key), f"the {what} must lie in {SMALLEST:.0e}..{LARGEST:.0e}, got {numbers[1]}")
 
 
 def given_target(given: float | Room, accuracy: float) -> Target:

@@ -98,3 +98,12 @@ def test_a_run_that_ends_in_a_certificate(tmp_path, capsys):
     assert claim["asked"] == -6.5  # the largest that the tolerance allows -pips
     assert claim["lowest"] - claim["asked"] == pytest.approx(claim["margin"], abs=1e-13)
     assert {c["name"]: c["place"] for c in record["charges"]} == {"pips": "unknown", "even": "penalised"}
+
+
+@pytest.mark.parametrize("table", ["measured = [1.5, 1e300]", "at_most = 1e300", "within = [1.5, 1e-200]"])
+def test_numbers_out_of_range_are_told_with_their_place(tmp_path, capsys, table):
+    config = tmp_path / "far.toml"
+    config.write_text(f'kind = "states"\n[charges]\nenergy = [0, 1, 2]\n[targets]\nenergy = {{ {table} }}\n')
+    assert main(["check", str(config)]) == 2
+    (line,) = capsys.readouterr().err.strip().splitlines()
+    assert line.startswith(f"{config}:5: targets.energy.")
