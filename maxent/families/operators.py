@@ -15,7 +15,7 @@ __all__ = ["check_size", "checked_basis", "checked_dims", "operator_matrix", "to
 #: Largest relative deviation from Hermiticity that is taken for rounding.
 HERMITIAN = 1e-12
 #: Sizes between which products of a charge with itself and with rounding units stay in range.
-SMALLEST, LARGEST = 1e-280, 1e280
+SMALLEST, LARGEST = 1e-305, 1e305
 
 
 def to_csr(q: Any) -> sp.csr_array:
