@@ -111,7 +111,7 @@ def _explained(result: Result, family: Family, q: np.ndarray, slack: Slack, unit
     """The result with its conflict, nearest targets and explanation; `units` that are NaN take their default."""
     names, outcome = result.names, result.outcome
     at = np.zeros(len(q)) if outcome.direction is None else outcome.direction
-    far = np.flatnonzero((np.abs(q) > FAR * family.scale) & (at != 0))
+    far = np.flatnonzero((np.abs(q) / FAR > family.scale) & (at != 0))
     if outcome.verdict is Verdict.INFEASIBLE and len(far):
         # counted from such a target the charges have no digits left to explain anything with
         worst = far[np.argmax(np.abs(q[far]) / np.maximum(family.scale[far], 1e-300))]

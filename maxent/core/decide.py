@@ -66,7 +66,7 @@ def decide_targets(family: Family, targets: np.ndarray, accuracy: np.ndarray, *,
     """
     problem = Problem.pose(family, targets, accuracy)
     scale = family.scale
-    for j in np.flatnonzero(np.abs(targets) > FAR * scale):
+    for j in np.flatnonzero(np.abs(targets) / FAR > scale):
         v = np.eye(len(targets))[j] * -np.sign(targets[j])
         low = family.lowest(v)
         constant = low.highest - low.value <= SAFETY * EPS * scale[j]
