@@ -52,6 +52,7 @@ class Whitening:
     def to_user(self, x: np.ndarray) -> np.ndarray:
         """Unit direction in the user's charges of a whitened direction."""
         v = self.transform.T @ x
+        v = v / (np.abs(v).max() or 1.0)  # before it is squared: units may be extreme
         return v / np.linalg.norm(v)
 
     def values(self, whitened: np.ndarray) -> np.ndarray:

@@ -102,7 +102,8 @@ def user_covariance(outcome: Outcome) -> tuple[np.ndarray, np.ndarray]:
     if last.at is None or not last.whitening.rank:
         return np.zeros((m, m)), np.zeros((m, 0))
     factor = last.whitening.inverse @ (last.at.axes * np.sqrt(np.maximum(last.at.curvature, 0.0)))
-    return factor @ factor.T, factor
+    with np.errstate(over="ignore"):  # squares of charges beyond 1e150 are infinite in float64, as they are
+        return factor @ factor.T, factor
 
 
 def propagated(
