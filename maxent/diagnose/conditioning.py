@@ -52,11 +52,12 @@ def conditioning(names: Sequence[str], factor: np.ndarray) -> Conditioning | Non
 
     Singular values of the correlation-normalised factor are taken, which resolves condition numbers up to 1e30.
     """
-    deviation = np.linalg.norm(factor, axis=1)
-    live = np.flatnonzero(deviation > 0)
+    largest = np.abs(factor).max(axis=1, initial=0.0)
+    live = np.flatnonzero(largest > 0)
     if not len(live) or not factor.shape[1]:
         return None
-    u, s, _ = np.linalg.svd(factor[live] / deviation[live, None], full_matrices=False)
+    rows = factor[live] / largest[live, None]  # before it is squared: units may be extreme
+    u, s, _ = np.linalg.svd(rows / np.linalg.norm(rows, axis=1)[:, None], full_matrices=False)
     rank = min(len(live), factor.shape[1])
     spectrum = s[:rank] ** 2
 
