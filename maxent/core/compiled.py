@@ -55,8 +55,9 @@ def _minimise(family: Family, lam: Any, iterations: int) -> tuple[Any, Any]:
     def unfinished(carry: tuple[Any, Iterate]) -> Any:
         count, at = carry
         # a separating or diverging iterate is the host's business: faces and certificates are decided there
-        gone = at.evaluation.level > FAR if at.evaluation.lowest is None else at.evaluation.lowest > 0
-        return (count < iterations) & ~at_floor(at) & (at.rejected < PATIENCE) & ~gone & (at.evaluation.level < FAR)
+        ev = at.evaluation
+        here = ev.level < FAR if ev.lowest is None else (ev.level < FAR) & ~(ev.lowest > 0)
+        return (count < iterations) & ~at_floor(at) & (at.rejected < PATIENCE) & here
 
     def advance(carry: tuple[Any, Iterate]) -> tuple[Any, Iterate]:
         count, at = carry

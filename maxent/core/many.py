@@ -88,8 +88,8 @@ def positive_solve(matrix: Any, right: Any) -> Any:
 def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many:
     """Damped Newton for listed states, from the inverted cumulant series, capped in the metric of the start.
 
-    The last step is taken without another evaluation: with ``H(x + t s) <= exp(c t) H(x)``, c = spread(s.w), a Newton
-    step leaves a residual below ``c |r| / 2``-like multiples of its square, which is then below the rounding floor.
+    The last step is taken without another evaluation once the residual it leaves, at most the present one times the
+    spread of the step, is below the rounding floor.
     """
     k, n = family.diagonal.shape
     log_weights = jnp.zeros(n) if family.prior is None else family.prior
