@@ -62,7 +62,9 @@ def conditioning(names: Sequence[str], factor: np.ndarray) -> Conditioning | Non
     spectrum = s[:rank] ** 2
 
     def named(k: int) -> Combination:
-        vector = u[:, k] * (np.sign(u[np.argmax(np.abs(u[:, k])), k]) or 1.0)
+        size = np.abs(u[:, k])
+        # the first of the largest, ties to rounding included: the sign must not depend on the machine
+        vector = u[:, k] * np.sign(u[np.argmax(size >= (1 - 1e-6) * size.max()), k])
         coefficients = dict.fromkeys(names, 0.0) | {names[int(j)]: float(x) for j, x in zip(live, vector, strict=True)}
         return Combination(coefficients, float(spectrum[k]))
 

@@ -46,7 +46,7 @@ def redundancies(names: Sequence[str], targets: np.ndarray, whitening: Whitening
     for row in reduced:
         row = np.where(np.abs(row) > 1e-9 * np.abs(row).max(), row, 0.0)
         c = row / whitening.spread
-        c = c / c[np.argmax(np.abs(row))]
+        c = c / c[_last_largest(row)]
         coefficients = {n: float(x) for n, x in zip(names, c, strict=True) if x}
         out.append(Redundancy(coefficients, float(c @ (whitening.mean + targets))))
     return tuple(out)
@@ -57,7 +57,7 @@ def _reduced(rows: np.ndarray) -> np.ndarray:
     a = rows.copy()
     done: list[np.ndarray] = []
     while len(a):
-        i, j = np.unravel_index(np.argmax(np.abs(a)), a.shape)
+        i, j = np.unravel_index(_last_largest(a), a.shape)
         if abs(a[i, j]) < 1e-8:
             break
         pivot = a[i] / a[i, j]
@@ -65,3 +65,9 @@ def _reduced(rows: np.ndarray) -> np.ndarray:
         a = a - np.outer(a[:, j], pivot)
         done = [d - d[j] * pivot for d in done] + [pivot]
     return np.array(done)
+
+
+def _last_largest(a: np.ndarray) -> int:
+    """Flat index of the last of the largest entries, ties to rounding included: it must not depend on the machine."""
+    size = np.abs(a).ravel()
+    return int(np.flatnonzero(size >= (1 - 1e-6) * size.max())[-1])
