@@ -209,7 +209,8 @@ def levels(source: Any, *, energy: str = "energy", further: Mapping[str, Any] | 
     Traceback (most recent call last):
     ValueError: no joint levels: 'energy' and 'field' do not commute, |[A, B]| is 1 of 2|A||B|; take ...
     """
-    degeneracies, origin = None, None
+    degeneracies: Any = None
+    origin: Any = None
     if isinstance(source, Matrices | Microstates):
         if isinstance(source, Matrices):
             if source.blocks.dense:
