@@ -1,11 +1,10 @@
 """Single eigenstates: how alike they are, and how close to the window around them.
 
-Three questions about one symmetry sector, since levels of different sectors do not know of each other and mixing them
-makes any spectrum look uncorrelated: the ratio of neighbouring level spacings, the scatter of eigenstate expectation
-values about their smoothed mean, and the distance of reduced eigenstates from the reduced window (J. M. Deutsch, Phys.
-Rev. A 43, 2046 (1991); M. Srednicki, Phys. Rev. E 50, 888 (1994); from memory).  The smoothed mean at the energy E is
-``sum_m w_m O_mm / sum_m w_m`` with ``w_m = exp(-(E_m - E)^2/(2 s^2))`` over the levels of the sector.  Floor: quench.
-Must not know lattices: sectors come as isometries, blocks as sites of given dimensions.
+Two questions about one symmetry sector: the scatter of eigenstate expectation values about their smoothed mean, and
+the distance of reduced eigenstates from the reduced window (J. M. Deutsch, Phys. Rev. A 43, 2046 (1991); M. Srednicki,
+Phys. Rev. E 50, 888 (1994); from memory).  The smoothed mean at the energy E is ``sum_m w_m O_mm / sum_m w_m`` with
+``w_m = exp(-(E_m - E)^2/(2 s^2))`` over the levels of the sector.  Floor: quench.  Must not know lattices: sectors come
+as isometries, blocks as sites of given dimensions.
 """
 
 from __future__ import annotations
@@ -13,7 +12,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from typing import Any, NamedTuple
+from typing import Any
 
 import numpy as np
 import scipy.sparse as sp
@@ -21,68 +20,19 @@ import scipy.sparse as sp
 from maxent.core.blocks import eigh
 from maxent.families.operators import checked_basis, operator_matrix
 from maxent.memory import require_memory
-from maxent.quench.levels import EQUAL, distinct
+from maxent.quench.levels import distinct, number_list
+from maxent.quench.spacings import middle
 from maxent.quench.windows import SPACINGS, GaussianWindow, SharpWindow
 
 __all__ = [
-    "REFERENCES", "EigenstateRange", "Reference", "Scatter", "SpacingRatio", "block_scatter", "decay_exponent",
-    "eigenstate_means", "eigenstate_range", "eigenstate_scatter", "matching_levels", "reduced_states",
-    "sector_spectrum", "smoothed_mean", "spacing_ratio",
+    "EigenstateRange", "Scatter", "block_scatter", "decay_exponent", "eigenstate_means", "eigenstate_range",
+    "eigenstate_scatter", "matching_levels", "reduced_states", "sector_spectrum", "smoothed_mean",
 ]  # fmt: skip
 
 #: A sector whose restricted Hamiltonian leaves this much (of its norm) outside is no sector.
 LEAK = 1e-10
 #: The smoothing is this fraction of the width of the spectrum unless it is given.
 SMOOTHING = 1 / 30
-
-
-class Reference(NamedTuple):
-    """A mean spacing ratio to compare with, and where it comes from."""
-
-    value: float
-    source: str
-
-
-#: Mean spacing ratios of reference ensembles.
-REFERENCES = {
-    "uncorrelated levels": Reference(2 * math.log(2) - 1, "closed form"),
-    "orthogonal ensemble": Reference(
-        0.5307, "numerics for large matrices, from memory: Y. Y. Atas et al., Phys. Rev. Lett. 110, 084101 (2013)"
-    ),
-    "orthogonal ensemble, 3x3 surmise": Reference(4 - 2 * math.sqrt(3), "closed form"),
-    "unitary ensemble": Reference(
-        0.5996, "numerics for large matrices, from memory: Y. Y. Atas et al., Phys. Rev. Lett. 110, 084101 (2013)"
-    ),
-    "unitary ensemble, 3x3 surmise": Reference(2 * math.sqrt(3) / math.pi - 0.5, "closed form"),
-}
-
-
-@dataclass(frozen=True)
-class SpacingRatio:
-    """Mean ratio of neighbouring level spacings, the smaller over the larger.
-
-    Attributes
-    ----------
-    mean, error : float
-        Mean and its standard error, the ratios taken as independent.
-    number : int
-        How many ratios.
-    gaps, degenerate : int
-        Spacings in the part of the spectrum used, and how many of them are zero to rounding; ratios with such a spacing
-        are left out.
-    """
-
-    mean: float
-    error: float
-    number: int
-    gaps: int
-    degenerate: int
-
-    def __str__(self) -> str:
-        return (
-            f"mean spacing ratio {self.mean:.4f} +- {self.error:.4f} from {self.number} ratios, "
-            f"{self.degenerate} exact degeneracies among {self.gaps} spacings"
-        )
 
 
 @dataclass(frozen=True, eq=False)
@@ -148,54 +98,6 @@ class EigenstateRange:
     high: float
 
 
-def spacing_ratio(energies: Any, *, part: float = 0.8, most: float = 0.02, rtol: float = EQUAL) -> SpacingRatio:
-    """Mean ratio of neighbouring spacings of the levels of one symmetry sector.
-
-    Parameters
-    ----------
-    energies : (n,) array_like
-        Levels of one sector; merged sectors look uncorrelated whatever the system.
-    part : float, optional
-        Middle part of the levels that is used.
-    most : float, optional
-        Largest fraction of spacings that may be zero to rounding: many exact degeneracies mean an unresolved
-        symmetry, and a ratio without meaning.
-    rtol : float, optional
-        Spacings below this fraction of the spectral width are zero.
-
-    Returns
-    -------
-    SpacingRatio
-
-    Raises
-    ------
-    ValueError
-        Too many exact degeneracies (with their number), fewer than ten levels in the middle part, or a part that is
-        not between 0 and 1.
-
-    References
-    ----------
-    V. Oganesyan and D. A. Huse, Phys. Rev. B 75, 155111 (2007); from memory.
-    """
-    levels = np.sort(_numbers("energies", energies))
-    middle = levels[_middle(len(levels), part)]
-    if len(middle) < 10:
-        raise ValueError(f"a spacing ratio needs ten levels at least, the middle part has {len(middle)}")
-    gaps = np.diff(middle)
-    zero = gaps <= rtol * (levels[-1] - levels[0])
-    degenerate = int(zero.sum())
-    if degenerate > most * len(gaps):
-        raise ValueError(
-            f"{degenerate} of {len(gaps)} spacings are exact degeneracies: a symmetry is not resolved, or the point is "
-            "special; the spacing ratio says nothing here"
-        )
-    fine = ~(zero[1:] | zero[:-1])
-    first, second = gaps[:-1][fine], gaps[1:][fine]
-    ratios = np.minimum(first, second) / np.maximum(first, second)
-    error = float(np.std(ratios, ddof=1) / math.sqrt(len(ratios)))
-    return SpacingRatio(float(ratios.mean()), error, len(ratios), len(gaps), degenerate)
-
-
 def smoothed_mean(energies: Any, values: Any, at: Any, width: float) -> np.ndarray:
     """Gaussian average over the levels of one sector.
 
@@ -212,7 +114,7 @@ def smoothed_mean(energies: Any, values: Any, at: Any, width: float) -> np.ndarr
     -------
     (k, ...) ndarray
     """
-    e, x = _numbers("energies", energies), np.asarray(values)
+    e, x = number_list("energies", energies), np.asarray(values)
     if len(x) != len(e):
         raise ValueError(f"{len(x)} values for {len(e)} energies")
     distance = (np.atleast_1d(np.asarray(at, float))[:, None] - e) ** 2
@@ -253,7 +155,7 @@ def eigenstate_scatter(
     >>> eigenstate_scatter(e, 0.3 * e).std < 1e-12  # a smooth dependence on energy is no scatter
     True
     """
-    e, x = _numbers("energies", energies), _numbers("values", values)
+    e, x = number_list("energies", energies), number_list("values", values)
     if len(e) != len(x):
         raise ValueError(f"{len(x)} values for {len(e)} energies")
     picked, width, spacing = _picked(e, width, part, spacings)
@@ -283,7 +185,7 @@ def block_scatter(
     ValueError
         As for `eigenstate_scatter`.
     """
-    e, rho = _numbers("energies", energies), np.asarray(reduced)
+    e, rho = number_list("energies", energies), np.asarray(reduced)
     if rho.ndim != 3 or rho.shape[1] != rho.shape[2] or len(rho) != len(e):
         raise ValueError(f"reduced states must have shape ({len(e)}, k, k), not {rho.shape}")
     picked, width, spacing = _picked(e, width, part, spacings)
@@ -310,7 +212,7 @@ def decay_exponent(sizes: Sequence[float], deviations: Sequence[float]) -> float
     ValueError
         Fewer than three sizes, or numbers that are not positive.
     """
-    n, d = _numbers("sizes", sizes), _numbers("deviations", deviations)
+    n, d = number_list("sizes", sizes), number_list("deviations", deviations)
     if len(n) != len(d) or len(n) < 3:
         raise ValueError(f"a trend needs three sizes at least and a deviation for each, not {len(n)} and {len(d)}")
     if np.any(n <= 0) or np.any(d <= 0) or np.ptp(n) == 0:
@@ -341,7 +243,7 @@ def eigenstate_range(
     ValueError
         Values of another number than levels.
     """
-    x = _numbers("values", values)
+    x = number_list("values", values)
     if len(x) != window.levels.size:
         raise ValueError(f"{len(x)} values for {window.levels.size} levels")
     asked = window.mean if energy is None else float(energy)
@@ -375,7 +277,7 @@ def matching_levels(labels: Any, populations: Any, *, least: float = 1e-10) -> n
     ValueError
         Arrays that do not fit, or no sector with weight.
     """
-    labels, p = np.asarray(labels), _numbers("populations", populations)
+    labels, p = np.asarray(labels), number_list("populations", populations)
     if labels.shape != p.shape:
         raise ValueError(f"labels have shape {labels.shape}, populations {p.shape}")
     _, which = np.unique(labels, return_inverse=True)
@@ -499,16 +401,16 @@ def reduced_states(
 def _picked(e: np.ndarray, width: float | None, part: float, spacings: float) -> tuple[np.ndarray, float, float]:
     """Levels of the middle part, the width of the smoothing and the level spacing in the middle."""
     order = np.argsort(e, kind="stable")
-    picked = order[_middle(len(e), part)]
+    picked = order[middle(len(e), part)]
     if len(picked) < 2:
         raise ValueError(f"the middle part of {len(e)} levels holds {len(picked)}: too few for a scatter")
-    clusters, middle = distinct(e), float(np.median(e[picked]))
+    clusters, centre = distinct(e), float(np.median(e[picked]))
     if width is None:
         width = SMOOTHING * float(np.ptp(e))
-        width = max(width, spacings * _spacing(e, clusters, middle, width) * 1.1)
+        width = max(width, spacings * _spacing(e, clusters, centre, width) * 1.1)
     if not width > 0:
         raise ValueError(f"width must be positive, not {width}")
-    spacing = _spacing(e, clusters, middle, width)
+    spacing = _spacing(e, clusters, centre, width)
     if width < spacings * spacing:
         raise ValueError(
             f"smoothing of width {width:.4g} is less than {spacings:g} level spacings of {spacing:.2g}: widen it to "
@@ -523,17 +425,3 @@ def _spacing(e: np.ndarray, clusters: np.ndarray, at: float, width: float) -> fl
     weights = np.exp(-0.5 * (distance - distance.min()))
     shares = np.bincount(clusters, weights / weights.sum())
     return 2 * math.sqrt(math.pi) * width * float(np.sum(shares**2))
-
-
-def _middle(n: int, part: float) -> slice:
-    if not 0 < part <= 1:
-        raise ValueError(f"part must be a fraction in (0, 1], not {part!r}")
-    cut = int(0.5 * (1 - part) * n)
-    return slice(cut, n - cut)
-
-
-def _numbers(name: str, value: Any) -> np.ndarray:
-    array = np.asarray(value, float)
-    if array.ndim != 1 or not np.all(np.isfinite(array)):
-        raise ValueError(f"{name} must be a list of finite numbers, not of shape {array.shape}")
-    return array

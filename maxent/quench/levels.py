@@ -7,6 +7,7 @@ joint levels and are refused by name.  Floor: quench.  Must not know what a wind
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from functools import cached_property
@@ -20,7 +21,17 @@ from maxent.families.density import Group, MatricesState
 from maxent.families.matrices import Matrices
 from maxent.families.microstates import Microstates, MicrostatesState
 
-__all__ = ["Levels", "LevelSource", "distinct", "levels"]
+__all__ = [
+    "Levels",
+    "LevelSource",
+    "distinct",
+    "interval",
+    "levels",
+    "number_list",
+    "positive",
+    "weighted_mean",
+    "where",
+]
 
 #: Levels closer than this fraction of the spectral width are one level.
 EQUAL = 1e-10
@@ -273,6 +284,19 @@ def interval(name: str, limits: Any) -> tuple[float, float]:
     return low, high
 
 
+def number_list(name: str, value: Any) -> np.ndarray:
+    """A list of finite numbers.
+
+    Raises
+    ------
+    ValueError
+    """
+    array = np.asarray(value, float)
+    if array.ndim != 1 or not np.all(np.isfinite(array)):
+        raise ValueError(f"{name} must be a list of finite numbers, not of shape {array.shape}")
+    return array
+
+
 def _clash(family: Matrices) -> str:
     """Which charges do not commute, and by how much: ``|[A, B]|_F / (2 |A| |B|_F)`` of the traceless parts, 0 to 1."""
     worst, pair = 0.0, (0, 0)
@@ -290,3 +314,29 @@ def _clash(family: Matrices) -> str:
         f"no joint levels: {first!r} and {second!r} do not commute, |[A, B]| is {worst:.2g} of 2|A||B|; take a window "
         "in one of them, or fit both as charges of a state"
     )
+
+
+def where(bounds: Mapping[str, tuple[float, float]]) -> str:
+    """The limits in words, with a comma in front of each but the first."""
+    parts = [f"{n} = {lo:g}" if lo == hi else f"{n} in [{lo:g}, {hi:g}]" for n, (lo, hi) in bounds.items()]
+    return f" with {', '.join(parts)}" if parts else ""
+
+
+def positive(name: str, value: float) -> float:
+    """A positive number.
+
+    Raises
+    ------
+    ValueError
+    """
+    if not (isinstance(value, int | float | np.floating | np.integer) and math.isfinite(value) and value > 0):
+        raise ValueError(f"{name} must be a positive number, not {value!r}")
+    return float(value)
+
+
+def weighted_mean(weights: np.ndarray, values: Any) -> float:
+    """Mean of a quantity given by its value in each level."""
+    array = np.asarray(values, float)
+    if array.shape != weights.shape:
+        raise ValueError(f"values must have shape {weights.shape}, one per level, not {array.shape}")
+    return float(weights @ array)

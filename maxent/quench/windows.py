@@ -27,7 +27,7 @@ import numpy as np
 from scipy.optimize import brentq
 from scipy.special import logsumexp, ndtr
 
-from maxent.quench.levels import Levels, interval, levels
+from maxent.quench.levels import Levels, interval, levels, positive, weighted_mean, where
 
 __all__ = ["GaussianWindow", "SharpWindow", "Slope", "WindowScan", "gaussian_window", "scan_widths", "sharp_window"]
 
@@ -113,12 +113,12 @@ class GaussianWindow:
 
     def mean_of(self, values: Any) -> float:
         """Mean of a quantity given by its value (n,) in each level."""
-        return _mean_of(self.weights, values)
+        return weighted_mean(self.weights, values)
 
     def __str__(self) -> str:
         return (
             f"Gaussian window of width {self.width:.6g} (spacing {self.spacing:.2g}) about {self.centre:.6g}"
-            f"{_where(self.bounds)}: <E> = {self.mean:.6g}, beta_w = {self.beta:.6g}, "
+            f"{where(self.bounds)}: <E> = {self.mean:.6g}, beta_w = {self.beta:.6g}, "
             f"N_eff = {self.effective_states:.1f}"
         )
 
@@ -178,7 +178,7 @@ class SharpWindow:
 
     def mean_of(self, values: Any) -> float:
         """Mean of a quantity given by its value (n,) in each level."""
-        return _mean_of(self.weights, values)
+        return weighted_mean(self.weights, values)
 
     def family(self) -> Any:
         """The family of the charges on the states of the window, for further fits inside it."""
@@ -210,7 +210,7 @@ class SharpWindow:
         name = self.levels.energy
         if name not in self.bounds or not all(map(math.isfinite, self.bounds[name])):
             raise ValueError(f"the slope needs a window with two limits in {name!r}")
-        smoothing = _positive("smoothing", smoothing)
+        smoothing = positive("smoothing", smoothing)
         low, high = self.bounds[name]
         others = {n: b for n, b in self.bounds.items() if n != name}
         inside = self.levels.inside(others)
@@ -239,7 +239,7 @@ class SharpWindow:
     def __str__(self) -> str:
         width = self.widths.get(self.levels.energy, math.inf)
         return (
-            f"S = ln {self.count:.6g} = {self.entropy:.6g} in a window of width {width:.6g}{_where(self.bounds)}, "
+            f"S = ln {self.count:.6g} = {self.entropy:.6g} in a window of width {width:.6g}{where(self.bounds)}, "
             f"lowest state kept at {self.lowest[self.levels.energy]:.6g}"
         )
 
@@ -336,7 +336,7 @@ def gaussian_window(
     'beta 0.0250, centre 39.9750'
     """
     found, limits, inside = _prepared(source, within)
-    window = _placed(found, _positive("width", width), centre, mean, limits, inside)
+    window = _placed(found, positive("width", width), centre, mean, limits, inside)
     refusal = _refusal(window, spacings)
     if refusal:
         raise ValueError(refusal)
@@ -373,7 +373,7 @@ def scan_widths(
     found, limits, inside = _prepared(source, within)
     kept, refused = [], []
     for width in widths:
-        window = _placed(found, _positive("width", width), centre, mean, limits, inside)
+        window = _placed(found, positive("width", width), centre, mean, limits, inside)
         refusal = _refusal(window, spacings)
         if refusal:
             refused.append((window.width, refusal))
@@ -425,7 +425,7 @@ def _prepared(
     inside = found.inside(limits)
     if not inside.any():
         ranges = ", ".join(f"{n!r} {v.min():.6g}..{v.max():.6g}" for n, v in found.values.items() if n in limits)
-        raise ValueError(f"no state in the window{_where(limits)}; the levels have {ranges}")
+        raise ValueError(f"no state in the window{where(limits)}; the levels have {ranges}")
     return found, limits, inside
 
 
@@ -501,21 +501,3 @@ def _refusal(window: GaussianWindow, spacings: float) -> str:
 
 def _count(entropy: float) -> float:
     return math.exp(entropy) if entropy < 709 else math.inf
-
-
-def _mean_of(weights: np.ndarray, values: Any) -> float:
-    array = np.asarray(values, float)
-    if array.shape != weights.shape:
-        raise ValueError(f"values must have shape {weights.shape}, one per level, not {array.shape}")
-    return float(weights @ array)
-
-
-def _positive(name: str, value: float) -> float:
-    if not (isinstance(value, int | float | np.floating | np.integer) and math.isfinite(value) and value > 0):
-        raise ValueError(f"{name} must be a positive number, not {value!r}")
-    return float(value)
-
-
-def _where(bounds: Mapping[str, tuple[float, float]]) -> str:
-    parts = [f"{n} = {lo:g}" if lo == hi else f"{n} in [{lo:g}, {hi:g}]" for n, (lo, hi) in bounds.items()]
-    return f" with {', '.join(parts)}" if parts else ""

@@ -11,6 +11,7 @@ from maxent.families import Matrices
 from maxent.lattice import Chain, Ring, formula
 from maxent.quench import eigenstates as es
 from maxent.quench.levels import levels
+from maxent.quench.spacings import REFERENCES, spacing_ratio
 from maxent.quench.windows import gaussian_window, sharp_window
 
 #: ZZ + 0.9045 X + 0.8090 Z in Pauli matrices
@@ -60,21 +61,21 @@ def test_references():
     r, w = (r + 1) / 2, w / 2
     for beta, name in ((1, "orthogonal ensemble, 3x3 surmise"), (2, "unitary ensemble, 3x3 surmise")):
         density = (r + r**2) ** beta / (1 + r + r**2) ** (1 + 1.5 * beta)
-        assert_allclose(es.REFERENCES[name].value, (w @ (r * density)) / (w @ density), rtol=1e-13)
-    assert_allclose(es.REFERENCES["uncorrelated levels"].value, w @ (r * 2 / (1 + r) ** 2), rtol=1e-13)
+        assert_allclose(REFERENCES[name].value, (w @ (r * density)) / (w @ density), rtol=1e-13)
+    assert_allclose(REFERENCES["uncorrelated levels"].value, w @ (r * 2 / (1 + r) ** 2), rtol=1e-13)
 
 
 def test_random_levels():
     rng = np.random.default_rng(11)
-    loose = es.spacing_ratio(np.cumsum(rng.exponential(size=20001)), part=1.0)
-    assert abs(loose.mean - es.REFERENCES["uncorrelated levels"].value) < 4 * loose.error
+    loose = spacing_ratio(np.cumsum(rng.exponential(size=20001)), part=1.0)
+    assert abs(loose.mean - REFERENCES["uncorrelated levels"].value) < 4 * loose.error
     raw = rng.normal(size=(700, 700))
-    stiff = es.spacing_ratio(np.linalg.eigvalsh(raw + raw.T))
-    assert abs(stiff.mean - es.REFERENCES["orthogonal ensemble"].value) < 4 * stiff.error
+    stiff = spacing_ratio(np.linalg.eigvalsh(raw + raw.T))
+    assert abs(stiff.mean - REFERENCES["orthogonal ensemble"].value) < 4 * stiff.error
     assert stiff.mean > loose.mean + 5 * stiff.error
     raw = raw + 1j * rng.normal(size=(700, 700))
-    unitary = es.spacing_ratio(np.linalg.eigvalsh(raw + raw.conj().T))
-    assert abs(unitary.mean - es.REFERENCES["unitary ensemble"].value) < 4 * unitary.error
+    unitary = spacing_ratio(np.linalg.eigvalsh(raw + raw.conj().T))
+    assert abs(unitary.mean - REFERENCES["unitary ensemble"].value) < 4 * unitary.error
 
 
 @pytest.fixture(scope="module")
@@ -86,11 +87,11 @@ def reflected():
 
 def test_sectors_must_not_be_merged(reflected):
     # own computation: 0.529(6), 0.528(6) by sectors, 0.419 merged
-    even, odd = (es.spacing_ratio(e) for e in reflected)
+    even, odd = (spacing_ratio(e) for e in reflected)
     assert len(reflected[0]) == 2080 and len(reflected[1]) == 2016
     assert_allclose([even.mean, odd.mean], [0.529, 0.528], atol=5.1e-4)
     assert_allclose(even.error, 0.006, atol=5.1e-4)
-    merged = es.spacing_ratio(np.concatenate(reflected))
+    merged = spacing_ratio(np.concatenate(reflected))
     assert_allclose(merged.mean, 0.419, atol=5.1e-4)
     assert merged.mean < even.mean - 10 * even.error
 
@@ -103,7 +104,7 @@ def test_published_ring():
     """
     sector, e, v = ring("4*Sz[i]*Sz[i+1] - 2.1*Sx[i] + Sz[i]", 14)
     assert len(e) == 687
-    assert_allclose(es.spacing_ratio(e, part=0.5).mean, 0.5367165841894439, atol=1e-9)
+    assert_allclose(spacing_ratio(e, part=0.5).mean, 0.5367165841894439, atol=1e-9)
     x = es.eigenstate_means(v, formula("2*Sx[i]", Ring(14)).matrix() / 14, isometry=sector)
     assert_allclose(es.eigenstate_scatter(e, x).std, 0.012959986838054043, rtol=0.03)
 
@@ -112,13 +113,13 @@ def test_a_special_point_is_refused():
     # own computation, ring of 16: Delta = 0.55 0.392(15), 0.8 0.383(17); 0.5 has 60 degeneracies among 374 spacings
     text = "Sx[i]*Sx[i+1] + Sy[i]*Sy[i+1] + {}*Sz[i]*Sz[i+1]"
     for delta, mean, error in ((0.55, 0.392, 0.015), (0.8, 0.383, 0.017)):
-        found = es.spacing_ratio(ring(text.format(delta), 16, up=9)[1])
+        found = spacing_ratio(ring(text.format(delta), 16, up=9)[1])
         assert_allclose([found.mean, found.error], [mean, error], atol=5.1e-4)
         assert found.degenerate == 0
     e = ring(text.format(0.5), 16, up=9)[1]
     with pytest.raises(ValueError, match="60 of 374 spacings are exact degeneracies"):
-        es.spacing_ratio(e, part=1.0)
-    told = es.spacing_ratio(e, part=1.0, most=1.0)
+        spacing_ratio(e, part=1.0)
+    told = spacing_ratio(e, part=1.0, most=1.0)
     assert (told.degenerate, told.gaps) == (60, 374)
     assert "60 exact degeneracies among 374 spacings" in str(told)
 
@@ -261,10 +262,10 @@ def test_bad_input():
     e = np.sqrt(np.arange(100.0))
     flat = np.broadcast_to(np.eye(2) / 2, (100, 2, 2))
     for wrong, message in [
-        (lambda: es.spacing_ratio(e[:9]), "ten levels at least"),
-        (lambda: es.spacing_ratio(np.repeat(e, 2)), "exact degeneracies"),
-        (lambda: es.spacing_ratio(e, part=0.0), "part must be a fraction"),
-        (lambda: es.spacing_ratio([1.0, np.nan]), "energies must be a list of finite numbers"),
+        (lambda: spacing_ratio(e[:9]), "ten levels at least"),
+        (lambda: spacing_ratio(np.repeat(e, 2)), "exact degeneracies"),
+        (lambda: spacing_ratio(e, part=0.0), "part must be a fraction"),
+        (lambda: spacing_ratio([1.0, np.nan]), "energies must be a list of finite numbers"),
         (lambda: es.eigenstate_scatter(e, e[:-1]), "99 values for 100 energies"),
         (lambda: es.eigenstate_scatter(e, e, width=0.01), r"less than 5 level spacings of 0\.0"),
         (lambda: es.eigenstate_scatter(e, e, width=-1.0), "width must be positive"),
