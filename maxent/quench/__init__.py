@@ -1,0 +1,1 @@
+"""From initial data to the stationary state: charges, starts, dynamics, ensembles, comparison."""
