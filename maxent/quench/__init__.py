@@ -1,1 +1,60 @@
-"""From initial data to the stationary state: charges, starts, dynamics, ensembles, comparison."""
+"""From initial data to the stationary state: starts, charges, dynamics, ensembles, comparison.  Floor: quench.
+
+Names are loaded on first use; nothing here imports JAX before a family is fitted.
+"""
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from maxent.quench.conservation import Conservation as Conservation
+    from maxent.quench.conservation import conservation as conservation
+    from maxent.quench.conservation import require_conserved as require_conserved
+    from maxent.quench.dephasing import Dephased as Dephased
+    from maxent.quench.dephasing import dephase as dephase
+    from maxent.quench.evolution import Evolution as Evolution
+    from maxent.quench.evolution import evolve as evolve
+    from maxent.quench.spectrum import Spectrum as Spectrum
+    from maxent.quench.starts import Start as Start
+    from maxent.quench.starts import ground_start as ground_start
+    from maxent.quench.starts import read_start as read_start
+    from maxent.quench.starts import thermal_start as thermal_start
+    from maxent.quench.windows import gaussian_window as gaussian_window
+    from maxent.quench.windows import scan_widths as scan_widths
+    from maxent.quench.windows import sharp_window as sharp_window
+
+_HOME = {
+    "Conservation": "conservation",
+    "conservation": "conservation",
+    "require_conserved": "conservation",
+    "Dephased": "dephasing",
+    "dephase": "dephasing",
+    "Evolution": "evolution",
+    "evolve": "evolution",
+    "Spectrum": "spectrum",
+    "Start": "starts",
+    "ground_start": "starts",
+    "read_start": "starts",
+    "thermal_start": "starts",
+    "gaussian_window": "windows",
+    "scan_widths": "windows",
+    "sharp_window": "windows",
+}
+
+__all__ = [
+    "Conservation", "Dephased", "Evolution", "Spectrum", "Start", "conservation", "dephase", "evolve",
+    "gaussian_window", "ground_start", "read_start", "require_conserved", "scan_widths", "sharp_window",
+    "thermal_start",
+]  # fmt: skip
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOME:
+        raise AttributeError(f"module 'maxent.quench' has no attribute {name!r}")
+    value = getattr(import_module(f"maxent.quench.{_HOME[name]}"), name)
+    globals()[name] = value
+    return value
+
+
+def __dir__() -> list[str]:
+    return sorted([*globals(), *_HOME])
