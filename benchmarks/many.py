@@ -7,6 +7,7 @@ route of the JAX driver against SciPy's L-BFGS-B, to a residual of 1e-8.
 
 from __future__ import annotations
 
+import os
 import time
 from typing import Any
 
@@ -122,6 +123,7 @@ def many_multipliers(m: int = 2000, n: int = 20_000) -> list[tuple[str, ...]]:
 def main() -> None:
     """Measure and report."""
     measure.clean_environment("benchmarks.many")
+    os.sched_setaffinity(0, {max(os.sched_getaffinity(0))})  # on one core, all of them
     head = ["one call, per fit", "BFGS", "Newton by hand", "to BFGS", "to Newton", "first call", "worst error"]
     first = measure.table(head, many_targets())
     head = ["minimisation", "SciPy L-BFGS-B", "SciPy/ours", "steps", "residual", "whole solve", "verdict"]

@@ -64,32 +64,28 @@ def _recall_jvp(primals: tuple, tangents: tuple) -> tuple[Any, Any]:
 
 
 def positive_solve(matrix: Any, right: Any) -> Any:
-    """Solution of ``matrix @ x = right`` for a small positive definite matrix.
+    """Solution of ``matrix @ x = right`` for a small positive definite matrix; `right` is (k,) or (k, r).
 
-    Unrolled Cholesky elimination up to 8 x 8: mapped over a batch it is a handful of vector operations, where LAPACK
-    would be called once for every matrix.
+    Gauss-Jordan elimination (no pivoting is needed) on the whole array: mapped over a batch it is k vector operations,
+    where LAPACK would be called once for every matrix.
     """
     k = matrix.shape[0]
-    if k > 8:
-        return jax.scipy.linalg.cho_solve((jnp.linalg.cholesky(matrix), True), right)
-    rows, b = [matrix[i] for i in range(k)], [right[i] for i in range(k)]
+    a = jnp.concatenate([matrix, right.reshape(k, -1)], axis=1)
     for i in range(k):
-        for j in range(i + 1, k):
-            factor = rows[j][i] / rows[i][i]
-            rows[j] = rows[j] - factor * rows[i]
-            b[j] = b[j] - factor * b[i]
-    x: list[Any] = [None] * k
-    for i in reversed(range(k)):
-        known = sum((rows[i][j] * x[j] for j in range(i + 1, k)), jnp.zeros_like(b[i]))
-        x[i] = (b[i] - known) / rows[i][i]
-    return jnp.stack(x)
+        row = a[i] / a[i, i]
+        here = (np.arange(k) == i)[:, None]
+        a = jnp.where(here, row, a - a[:, i : i + 1] * row)
+    return a[:, k:].reshape(right.shape)
 
 
 def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many:
-    """Damped Newton for listed states, from the inverted cumulant series, capped in the metric of the start.
+    """Newton's method for listed states: single precision to the neighbourhood, double precision from there.
 
-    The last step is taken without another evaluation once the residual it leaves, at most the present one times the
-    spread of the step, is below the rounding floor.
+    Three stages for each fit: damped Newton in single precision, from the inverted cumulant series, capped in the
+    metric of the start; one evaluation in double precision, whose weights also give the moments after the step it asks
+    for (the step is tiny, four terms of the exponential series are exact to rounding); damped Newton in double
+    precision for what is not settled then.  A last step is taken without another evaluation once the residual it
+    leaves is below the rounding floor.
     """
     k, n = family.diagonal.shape
     log_weights = jnp.zeros(n) if family.prior is None else family.prior
@@ -102,64 +98,31 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
     dead = jnp.where(jnp.any(transform != 0, axis=1), 0.0, 1.0)
     agrees = jax.vmap(lambda t: consistent(covariance, mean, t))(targets)
     w = transform @ centred
-    rows, columns = np.triu_indices(k)
-    features = jnp.concatenate([jnp.ones((1, n)), w, w[rows] * w[columns]])
     reach = jnp.sqrt(jnp.max(jnp.sum(w * w, axis=0)))
     third = jnp.einsum("an,bn,cn->abc", w * p0, w, w)
     blurs = EPS * norm(jnp.abs(transform) @ (jnp.abs(mean)[:, None] + jnp.abs(targets.T)), axis=0)
-
-    def evaluate(x: Any, q: Any) -> tuple[Any, Any, Any]:
-        exponent = log_weights - x @ w
-        top = jnp.max(exponent)
-        moments = features @ jnp.exp(exponent - top)
-        first = moments[1 : k + 1] / moments[0]
-        second = jnp.zeros((k, k)).at[rows, columns].set(moments[k + 1 :] / moments[0], unique_indices=True)
-        second = second + jnp.triu(second, 1).T
-        return top + jnp.log(moments[0]) + x @ q, first - q, second - jnp.outer(first, first)
-
-    def newton(off: Any, chi: Any) -> Any:
-        ridge = (1e-14 * jnp.trace(chi) + 1e-300) * jnp.eye(k) + jnp.diag(dead)
-        return positive_solve(chi + ridge, off)
+    double = _Moments(w, log_weights, dead, reach, EPS)
+    single = _Moments(*(a.astype(jnp.float32) for a in (w, log_weights, dead, reach)), float(np.finfo(np.float32).eps))
 
     def one(pair: tuple[Any, Any]) -> tuple[Any, ...]:
         q, blur = pair
-
-        def floor(x: Any, chi: Any) -> Any:
-            return 4 * EPS * (1 + norm(x) * reach) * jnp.maximum(1.0, jnp.sqrt(norm(chi))) + 2 * blur
-
-        def settled(x: Any, off: Any, chi: Any, step: Any) -> Any:
-            # residual after one more full step, bounded through the spread of the step
-            after = norm(off) * norm(step) * reach
-            return (norm(off) <= floor(x, chi)) | ((norm(step) * reach < 1e-3) & (after <= floor(x, chi)))
-
-        def unfinished(carry: tuple) -> Any:
-            count, x, _, off, chi, step, radius = carry
-            return (count < iterations) & ~settled(x, off, chi, step) & (radius > 1e-9)
-
-        def advance(carry: tuple) -> tuple:
-            count, x, value, off, chi, step, radius = carry
-            length = norm(step)
-            step = step * jnp.minimum(1.0, radius / length)
-            new_value, new_off, new_chi = evaluate(x + step, q)
-            blind = 160 * EPS * (jnp.abs(value) + norm(x) * reach + 1)
-            ok = (new_value <= value - 1e-4 * (off @ step)) | ((off @ step < blind) & (norm(new_off) < norm(off)))
-            radius = jnp.where(ok, jnp.where(length > radius, 3 * radius, radius), 0.25 * jnp.minimum(length, radius))
-            x, value, off, chi = jax.tree.map(
-                lambda a, b: jnp.where(ok, a, b), (x + step, new_value, new_off, new_chi), (x, value, off, chi)
-            )
-            return count + 1, x, value, off, chi, newton(off, chi), radius
-
         # <w>(x) = -x + third[x, x]/2 - ..., inverted; far targets start on their ray instead
         x = jnp.where(norm(q) < 1.0, -q + 0.5 * third @ q @ q, -q / jnp.maximum(1.0, norm(q)))
-        value, off, chi = evaluate(x, q)
-        start = (jnp.asarray(1), x, value, off, chi, newton(off, chi), jnp.asarray(1.0))
-        count, x, value, off, chi, step, _ = jax.lax.while_loop(unfinished, advance, start)
+        rough = single.descend(single.unknown(x.astype(jnp.float32), q.astype(jnp.float32)), 0.0, min(iterations, 12))
+        near = jnp.where(single.settled(rough, 0.0), rough.x + rough.step, rough.x).astype(x.dtype)
+        found, weights = double.begin(jnp.where(jnp.all(jnp.isfinite(near)), near, x), q)
+        moved, small = double.moved(found, single.change(found.step, weights))
+        close = small & double.settled(moved, blur)
+        found = double.descend(found._replace(stop=close), blur, iterations)
+        found = jax.tree.map(lambda a, b: jnp.where(close, a, b), moved, found)
+        off, chi, step = found.off, found.chi, found.step
         soft = jnp.trace(positive_solve(chi + 1e-300 * jnp.eye(k) + jnp.diag(dead), jnp.eye(k))) - jnp.sum(dead)
-        exists = (soft * 2 * reach * (norm(off) + 16 * floor(x, chi))) ** 2 < 0.25
-        done = settled(x, off, chi, step) & exists
-        x = jnp.where(done, x + step, x)
+        exists = (soft * 2 * reach * (norm(off) + 16 * double.floor(found, blur))) ** 2 < 0.25
+        done = double.settled(found, blur) & exists
+        x = jnp.where(done, found.x + step, found.x)
         left = jnp.where(done, jnp.zeros(k), off)
-        return x, done, count, value - 0.5 * jnp.where(done, off @ step, 0.0) - x @ q, left
+        log_z = found.value - 0.5 * jnp.where(done, off @ step, 0.0) - x @ q
+        return x, done, rough.count + found.count, log_z, left
 
     white = (targets - mean) @ transform.T
     # a batch takes as many steps as its slowest fit: fits that lie equally far out go together
@@ -170,3 +133,123 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
     lam = x @ transform
     inverse = jnp.linalg.pinv(transform)
     return Many(Fit(lam, converged & agrees, steps), log_z - lam @ mean, targets + left @ inverse.T)
+
+
+class _Point(NamedTuple):
+    """Where one fit stands: value of the dual, residual, covariance, Newton step, and how far the model is trusted."""
+
+    x: Any
+    q: Any
+    value: Any
+    off: Any
+    chi: Any
+    step: Any
+    #: Bound on the part of the residual that the step leaves.
+    left_over: Any
+    radius: Any
+    count: Any
+    stop: Any
+
+
+class _Moments:
+    """Values and covariance of the whitened charges `w` (k, n) in one floating-point precision, and steps with them."""
+
+    def __init__(self, w: Any, log_weights: Any, dead: Any, reach: Any, eps: float):
+        k, n = w.shape
+        self.w, self.log_weights, self.dead, self.reach, self.eps, self.k = w, log_weights, dead, reach, eps, k
+        rows, columns = np.triu_indices(k)
+        self.features = jnp.concatenate([jnp.ones((1, n), w.dtype), w, w[rows] * w[columns]])
+        # spreads the upper triangle over both: a product is faster than scattering in every fit
+        where = np.zeros((len(rows), k, k), w.dtype)
+        where[range(len(rows)), rows, columns] = where[range(len(rows)), columns, rows] = 1.0
+        self.symmetric = jnp.asarray(where.reshape(len(rows), k * k))
+
+    def unknown(self, x: Any, q: Any) -> _Point:
+        """Point at x before anything is known there; any evaluation is better."""
+        k = self.k
+        big = jnp.full((), np.finfo(x.dtype).max, x.dtype)
+        zeros, one = jnp.zeros(k, x.dtype), jnp.ones((), x.dtype)
+        off, chi, none = zeros + jnp.sqrt(big) / k, jnp.eye(k, dtype=x.dtype), jnp.asarray(0)
+        return _Point(x, q, big, off, chi, zeros, big, one, none, jnp.asarray(False))
+
+    def begin(self, x: Any, q: Any) -> tuple[_Point, Any]:
+        """Point at x, evaluated, and the weights of the states there (not normalised)."""
+        exponent = self.log_weights - x @ self.w
+        top = jnp.max(exponent)
+        weights = jnp.exp(exponent - top)
+        value, off, chi = self.cumulants(self.features @ weights, top, x, q)
+        step = self.newton(off, chi)
+        one = jnp.ones((), x.dtype)
+        left_over = norm(step) * self.reach
+        return _Point(x, q, value, off, chi, step, left_over, one, jnp.asarray(1), jnp.asarray(False)), weights
+
+    def cumulants(self, moments: Any, top: Any, x: Any, q: Any) -> tuple[Any, Any, Any]:
+        """Dual function, residual and covariance from the sums over the states."""
+        k = self.k
+        first = moments[1 : k + 1] / moments[0]
+        second = (moments[k + 1 :] / moments[0] @ self.symmetric).reshape(k, k)
+        return top + jnp.log(moments[0]) + x @ q, first - q, second - jnp.outer(first, first)
+
+    def newton(self, off: Any, chi: Any) -> Any:
+        """Newton step; a ridge far below rounding keeps it finite."""
+        ridge = (45 * self.eps * jnp.trace(chi) + 1e-30 * self.eps) * jnp.eye(self.k, dtype=off.dtype)
+        return positive_solve(chi + ridge + jnp.diag(self.dead), off)
+
+    def floor(self, at: _Point, blur: Any) -> Any:
+        """Residual that rounding explains."""
+        return 4 * self.eps * (1 + norm(at.x) * self.reach) * jnp.maximum(1.0, jnp.sqrt(norm(at.chi))) + 2 * blur
+
+    def settled(self, at: _Point, blur: Any) -> Any:
+        """Whether the residual is at the rounding floor, now or after one more full step."""
+        floor = self.floor(at, blur)
+        after = norm(at.off) * at.left_over
+        return (norm(at.off) <= floor) | ((at.left_over < 1e-3) & (after <= floor))
+
+    def descend(self, start: _Point, blur: Any, iterations: int) -> _Point:
+        """Damped Newton steps until the point is settled."""
+
+        def unfinished(at: _Point) -> Any:
+            return (at.count < iterations) & ~(at.stop | self.settled(at, blur)) & (at.radius > 1e-9)
+
+        def advance(at: _Point) -> _Point:
+            length = norm(at.step)
+            step = at.step * jnp.minimum(1.0, at.radius / length)
+            new, _ = self.begin(at.x + step, at.q)
+            blind = 160 * self.eps * (jnp.abs(at.value) + norm(at.x) * self.reach + 1)
+            gain = at.off @ step
+            ok = (new.value <= at.value - 1e-4 * gain) | ((gain < blind) & (norm(new.off) < norm(at.off)))
+            radius = jnp.where(
+                ok, jnp.where(length > at.radius, 3 * at.radius, at.radius), 0.25 * jnp.minimum(length, at.radius)
+            )
+            kept = jax.tree.map(lambda a, b: jnp.where(ok, a, b), new, at)
+            return kept._replace(radius=radius, count=at.count + 1)
+
+        return jax.lax.while_loop(unfinished, advance, start)
+
+    def change(self, step: Any, weights: Any) -> Any:
+        """Sums over the states of g(t) and g(t) w with ``g(t) = exp(-t) - 1 + t`` and ``t = step.w``, |t| below 1e-3.
+
+        They are of second order in t: beside the sums with 1 - t single precision is enough for them.
+        """
+        weights = weights.astype(self.w.dtype)
+        size = jnp.maximum(norm(step), 1e-300)  # apart, so that the square of a tiny step is not lost
+        t = (step / size).astype(self.w.dtype) @ self.w
+        s = size.astype(self.w.dtype)
+        curved = weights * (t * t * (0.5 - s * t * (1 / 6 - s * t / 24)))
+        return size * size * (self.features[: self.k + 1] @ curved).astype(step.dtype) / jnp.sum(weights)
+
+    def moved(self, at: _Point, change: Any) -> tuple[_Point, Any]:
+        """The point after the full Newton step, from the moments before it; and whether the step is small enough.
+
+        exp(-t) = 1 - t + g(t): the means with 1 - t are known, those with g are `change`.  The step from there uses
+        the covariance before the move, which is off by a relative |t|.
+        """
+        mean = at.off + at.q
+        along = mean @ at.step
+        after = 1.0 - along + change[0], mean - at.chi @ at.step - mean * along + change[1:]
+        x = at.x + at.step
+        off = after[1] / after[0] - at.q
+        value = at.value + at.step @ at.q + jnp.log(after[0])
+        spread = norm(at.step) * self.reach
+        moved = at._replace(x=x, value=value, off=off, step=self.newton(off, at.chi), left_over=2 * spread)
+        return moved, spread < 1e-3
