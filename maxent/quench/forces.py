@@ -273,9 +273,8 @@ def parameter_slopes(
                 }
             return compiled.combine(family, mix).log_partition(lam)
 
-        value = log_partition(jnp.asarray(start))
-        gradient = jax.grad(log_partition)(jnp.asarray(start))
-        hessian = jax.hessian(log_partition)(jnp.asarray(start))
+        both = jax.value_and_grad(log_partition)
+        value, gradient, hessian = jax.jit(lambda x: (*both(x), jax.jacfwd(jax.grad(log_partition))(x)))(start)
         return ParameterSlopes(float(value), labels, np.asarray(gradient), np.asarray(hessian))
 
 
