@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from maxent.quench.conservation import Conservation as Conservation
-    from maxent.quench.conservation import conservation as conservation
+    from maxent.quench.conservation import check_conservation as check_conservation
     from maxent.quench.conservation import require_conserved as require_conserved
     from maxent.quench.dephasing import Dephased as Dephased
     from maxent.quench.dephasing import dephase as dephase
@@ -25,7 +25,7 @@ if TYPE_CHECKING:
 
 _HOME = {
     "Conservation": "conservation",
-    "conservation": "conservation",
+    "check_conservation": "conservation",
     "require_conserved": "conservation",
     "Dephased": "dephasing",
     "dephase": "dephasing",
@@ -42,8 +42,8 @@ _HOME = {
 }
 
 __all__ = [
-    "Conservation", "Dephased", "Evolution", "Spectrum", "Start", "conservation", "dephase", "evolve",
-    "gaussian_window", "ground_start", "read_start", "require_conserved", "scan_widths", "sharp_window",
+    "Conservation", "Dephased", "Evolution", "Spectrum", "Start", "check_conservation", "dephase",
+    "evolve", "gaussian_window", "ground_start", "read_start", "require_conserved", "scan_widths", "sharp_window",
     "thermal_start",
 ]  # fmt: skip
 
