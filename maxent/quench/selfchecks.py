@@ -104,7 +104,8 @@ def check_result(
     Returns
     -------
     tuple of SelfCheck
-        Values and covariances are in units of the standard deviations.  What is allowed grows where rounding of ln Z drowns the differences, as in very cold states.
+        Values and covariances are in units of the standard deviations.  What is allowed grows where rounding of
+        ln Z drowns the differences, as in very cold states.
 
     Raises
     ------

@@ -79,7 +79,7 @@ class GaussianWindow:
     @property
     def effective_states(self) -> float:
         """``exp(S)``: how many states the window holds."""
-        return _count(self.entropy)
+        return math.exp(self.entropy) if self.entropy < 709 else math.inf
 
     @cached_property
     def effective_levels(self) -> float:
@@ -149,7 +149,7 @@ class SharpWindow:
     @property
     def count(self) -> float:
         """Number of states inside."""
-        return _count(self.entropy)
+        return math.exp(self.entropy) if self.entropy < 709 else math.inf
 
     @property
     def widths(self) -> dict[str, float]:
@@ -497,7 +497,3 @@ def _refusal(window: GaussianWindow, spacings: float) -> str:
         f"levels, {window.spacing:.2g} apart: it must be at least {spacings:g} spacings wide (about "
         f"{spacings * window.spacing:.2g})"
     )
-
-
-def _count(entropy: float) -> float:
-    return math.exp(entropy) if entropy < 709 else math.inf
