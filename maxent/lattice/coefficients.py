@@ -253,8 +253,8 @@ class Coefficient:
                 total = total + outer * inner
         return total
 
-    def relabelled(self, rule: Callable[[int], int | str]) -> Coefficient:
-        """Replace the positions of list parameters by a rule."""
+    def relabelled(self, rule: Callable[[str, int], int | str]) -> Coefficient:
+        """Replace the positions of list parameters by a rule of (name, position)."""
         if not any(s.position is not None for s in self.symbols()):
             return self
         total = NOTHING
@@ -314,9 +314,9 @@ def _conjugate(atom: Atom) -> Atom:
     return atom if atom.function == "abs" else Call(atom.function, atom.argument.conjugate())
 
 
-def _relabel(atom: Atom, rule: Callable[[int], int | str]) -> Atom:
+def _relabel(atom: Atom, rule: Callable[[str, int], int | str]) -> Atom:
     if isinstance(atom, Symbol):
-        return atom._replace(position=rule(atom.position)) if isinstance(atom.position, int) else atom
+        return atom._replace(position=rule(atom.name, atom.position)) if isinstance(atom.position, int) else atom
     return Call(atom.function, atom.argument.relabelled(rule))
 
 

@@ -31,20 +31,20 @@ class OutsideError(Exception):
 
 
 def position_values(text: str, sites: Sites, parameters: Mapping[str, Any] | None = None) -> np.ndarray:
-    """Values of a function of the position, such as ``"2*pi*i/L"``, at all sites.
+    """Values of a function of the position, such as ``"2*pi*i/L"``, at all positions.
 
     Parameters
     ----------
     text : str
         Number in the formula language without operators; ``i`` stands for the position.
-    sites : Ring or Chain
-        Gives the positions 0..size-1.
+    sites : Ring, Chain or Lattice
+        Gives the positions 0..length-1.
     parameters : mapping from str to number or sequence of numbers, optional
         Values of the other names.
 
     Returns
     -------
-    float64, shape (size,)
+    float64, shape (length,)
 
     Raises
     ------
@@ -65,8 +65,8 @@ def position_values(text: str, sites: Sites, parameters: Mapping[str, Any] | Non
         close = difflib.get_close_matches(unknown[0], known, n=1)
         hint = f"; did you mean '{close[0]}'?" if close else "; the position is 'i'"
         fail(f"unknown symbol '{unknown[0]}'{hint}", text, max(text.find(unknown[0]), 0) + node.start)
-    values = np.empty(sites.size)
-    for i in range(sites.size):
+    values = np.empty(sites.length)
+    for i in range(sites.length):
         try:
             value = numbers.coefficient(node, dict.fromkeys(node.free, i), True).value(checked)
         except OutsideError:
@@ -98,8 +98,14 @@ class Numbers:
 
     def bound(self, node: Node, at: Mapping[str, int]) -> Iterator[dict[str, int]]:
         """Positions a `pairs` node runs over, added to those given."""
-        names, relation = node.value
-        every = range(self.sites.size)
+        names, relation, bonds = node.value
+        if relation == "<>":
+            chosen = self.sites.bonds.values() if bonds is None else [self.sites.bonds[bonds]]
+            for pairs in chosen:
+                for a, b in pairs:
+                    yield {**at, names[0]: a, names[1]: b}
+            return
+        every = range(self.sites.length)
         if len(names) == 1:
             for i in every:
                 yield {**at, names[0]: i}
@@ -117,7 +123,7 @@ class Numbers:
         if kind == "position":
             return Coefficient.constant((at[node.value], 0))
         if kind == "constant":
-            return Coefficient.constant((math.pi if node.value == "pi" else self.sites.size, 0))
+            return Coefficient.constant((math.pi if node.value == "pi" else self.sites.length, 0))
         if kind == "parameter":
             return self._symbol(node.value, None)
         if kind == "entry":
@@ -157,14 +163,19 @@ class Numbers:
         return Coefficient.symbol(name, position, 1 if is_complex(self.parameters[name]) else 0)
 
     def _entry(self, node: Node, at: Mapping[str, int]) -> Coefficient:
-        values = self.parameters[node.value]
+        name, member, per_site = node.value
+        values = self.parameters[name]
         assert isinstance(values, tuple)
-        place = self.sites.place(self.reader.position(node.items[0], at))
+        place: int | None = self.reader.position(node.items[0], at)
+        if not per_site or member is not None:
+            place = self.sites.place(self.reader.position(node.items[0], at))
         if place is None:
             raise OutsideError
+        if per_site and member is not None:
+            place = self.sites.site(place, member)
         if place >= len(values):
-            self._fail(f"parameter '{node.value}' has {len(values)} values, none for position {place}", node)
-        return self._symbol(node.value, place)
+            self._fail(f"parameter '{name}' has {len(values)} values, none for position {place}", node)
+        return self._symbol(name, place)
 
     def _computed(self, node: Node, at: Mapping[str, int]) -> Coefficient:
         items = [self.coefficient(x, at, True) for x in node.items]
@@ -184,11 +195,7 @@ class Numbers:
 
     def _raised(self, node: Node, items: list[Coefficient]) -> Coefficient:
         exponent = items[1].number
-        if (
-            exponent is not None
-            and items[0].number is None
-            and abs(complex(*map(float, exponent))) > _MOST_POWER
-        ):
+        if exponent is not None and items[0].number is None and abs(complex(*map(float, exponent))) > _MOST_POWER:
             self._fail(f"the exponent of a parameter must not exceed {_MOST_POWER}", node.items[1])
         if exponent is not None and abs(float(exponent[0])) > 4096:
             self._fail("the exponent must not exceed 4096", node.items[1])

@@ -38,7 +38,7 @@ def formula(
     text : str
         Operator in subscript notation, e.g. ``"J*Sz[i]*Sz[i+1] + h*Sx[i]"``; the language is described in
         docs/formulas.md.
-    sites : Ring or Chain
+    sites : Ring, Chain or Lattice
         Where the operators act.
     parameters : mapping from str to number or sequence of numbers, optional
         Values of the names in the formula; a sequence has one value per position and is used with a
@@ -77,6 +77,10 @@ def formula(
     expander = _Expander(reader, densities or {})
     try:
         words = expander.total(node)
+    except FormulaError:
+        raise
+    except ValueError as error:
+        fail(str(error), text, node.start)
     except OverflowError:
         fail("a number leaves the range of floating point", text, node.start)
     except RecursionError:
@@ -92,7 +96,7 @@ class _Expander:
 
     def __init__(self, reader: Reader, densities: Mapping[str, str], path: tuple[str, ...] = ()) -> None:
         self.reader, self.sites, self.parameters = reader, reader.sites, reader.parameters
-        self.local = reader.sites.local
+        self.slots = reader.sites.slots
         self.numbers = Numbers(reader)
         self.texts, self.path = densities, path
         self.open: dict[str, tuple[Node, str, _Expander]] = {}
@@ -118,16 +122,14 @@ class _Expander:
             if inside:
                 self._refuse_mixed(node)
             words = algebra.add(*(self.total(x, inside) for x in node.items))
-            return algebra.add(words, algebra.adjoint(words)) if node.value else words
+            return algebra.add(words, algebra.adjoint(words, self.slots)) if node.value else words
         if node.kind == "negative":
             return algebra.negative(self.total(node.items[0], inside))
         if node.kind == "dagger":
-            return algebra.adjoint(self.total(node.items[0], True))
+            return algebra.adjoint(self.total(node.items[0], True), self.slots)
         if node.kind == "quotient" and not node.items[1].free:
             divisor = self.numbers.coefficient(node.items[1], {}, True)
-            return algebra.scale(
-                self.total(node.items[0], True), self.numbers.inverse(divisor, node.items[1], {})
-            )
+            return algebra.scale(self.total(node.items[0], True), self.numbers.inverse(divisor, node.items[1], {}))
         if node.kind == "product":
             plain = [x for x in node.items if not x.is_operator and not x.free]
             rest = [x for x in node.items if x.is_operator or x.free]
@@ -152,7 +154,7 @@ class _Expander:
             )
         self._refuse_loose(node)
         total: Words = {}
-        for i in range(self.sites.size):
+        for i in range(self.sites.length):
             try:
                 algebra.accumulate(total, self.words(node, {name: i}))
             except OutsideError:
@@ -177,9 +179,7 @@ class _Expander:
         for item in node.items:
             if not item.free:
                 name = sorted(node.free)[0]
-                message = (
-                    f"in brackets with the free subscript '{name}' this could count once or for every {name}"
-                )
+                message = f"in brackets with the free subscript '{name}' this could count once or for every {name}"
                 self._fail(f"{message}; write it outside the brackets, or close with 'for {name}'", item)
 
     # --- operators at given positions
@@ -191,17 +191,13 @@ class _Expander:
             return {} if value.is_zero else {(): value}
         kind = node.kind
         if kind == "operator":
-            place = self.sites.place(self.reader.position(node.items[0], at))
-            if place is None:
-                return {}
-            symbols = self.local.symbols[node.value]
-            return {((place, letter),): Coefficient.constant(factor) for factor, letter in symbols}
+            return self._operator(node, at)
         if kind == "density":
             place = self.sites.place(self.reader.position(node.items[0], at))
             return {} if place is None else self._density(node, place)
         if kind == "sum":
             words = algebra.add(*self._fitting(node, at))
-            return algebra.add(words, algebra.adjoint(words)) if node.value else words
+            return algebra.add(words, algebra.adjoint(words, self.slots)) if node.value else words
         if kind == "negative":
             return algebra.negative(self.words(node.items[0], at))
         if kind == "product":
@@ -216,18 +212,33 @@ class _Expander:
             base = self.words(node.items[0], at)
             words = base
             for _ in range(int(node.items[1].value[0]) - 1):
-                words = algebra.multiply(words, base, self.local)
+                words = algebra.multiply(words, base, self.slots)
             return words
         if kind == "dagger":
-            return algebra.adjoint(self.words(node.items[0], at))
+            return algebra.adjoint(self.words(node.items[0], at), self.slots)
         if kind == "pairs":
             return algebra.add(*(words for words in self._pairs(node, at)))
         left, right = (self.words(x, at) for x in node.items)
         if kind == "commutator":
-            return algebra.commute(left, right, self.local)
-        return algebra.add(
-            algebra.multiply(left, right, self.local), algebra.multiply(right, left, self.local)
-        )
+            return algebra.commute(left, right, self.slots)
+        return algebra.add(algebra.multiply(left, right, self.slots), algebra.multiply(right, left, self.slots))
+
+    def _operator(self, node: Node, at: Mapping[str, int]) -> Words:
+        name, member, species = node.value
+        site: int | None = self.reader.position(node.items[0], at)
+        if member is not None:
+            place = self.sites.place(self.reader.position(node.items[0], at))
+            site = None if place is None else self.sites.site(place, member)
+        if site is None:
+            return {}
+        kind = self.sites.kind(site)
+        if species not in kind.species or name not in kind.slots[0].symbols:
+            written = f"{name}[..., {species}]" if species else name
+            self._fail(f"site {site} is a {kind.name} site: it has no '{written}'", node)
+        index = kind.species.index(species)
+        symbols = kind.slots[index].symbols[name]
+        slot = self.sites.first_slots[site] + index
+        return {((slot, letter),): Coefficient.constant(factor) for factor, letter in symbols}
 
     def _fitting(self, node: Node, at: Mapping[str, int]) -> Iterator[Words]:
         for item in node.items:
@@ -241,7 +252,7 @@ class _Expander:
         words: Words = {(): UNIT}
         for item in node.items:
             if item.is_operator:
-                words = algebra.multiply(words, self.words(item, at), self.local)
+                words = algebra.multiply(words, self.words(item, at), self.slots)
                 if not words:
                     return words
         for item in node.items:
@@ -295,7 +306,7 @@ def _require_hermitian(result: OperatorSum, node: Node, expander: _Expander) -> 
     reason = result.non_hermitian_word
     if reason is None:
         return
-    bad = next(word for word, c in result.words.items() if not c.is_real)
+    bad = algebra.unpaired(result.words, result.sites.slots)
     for summand in node.items if node.kind == "sum" else ():
         if bad in expander.total(summand):
             node = summand

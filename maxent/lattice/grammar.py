@@ -11,7 +11,7 @@ import ast
 import difflib
 from collections.abc import Mapping
 from fractions import Fraction
-from typing import Any, NoReturn
+from typing import Any, NamedTuple, NoReturn
 
 from maxent.lattice.coefficients import FUNCTIONS, Value
 from maxent.lattice.exact import Complex
@@ -21,6 +21,13 @@ from maxent.lattice.tokens import CONJUGATE, Token, fail, read
 
 CONSTANTS = ("pi", "L")
 FORMS = {"dagger": 1, "commutator": 2, "anticommutator": 2}
+_FOREIGN = {
+    ("X", "Y", "Z"): "Pauli matrices are for spin-1/2 sites",
+    ("Sx", "Sy", "Sz", "Splus", "Sminus"): "spin operators need sites with a spin, kind=Spin(...)",
+    ("c",): "fermion operators need sites with fermions, kind=Fermions(...)",
+    ("b",): "boson operators need sites with bosons, kind=Bosons(...)",
+    ("n",): "number operators need sites with fermions or bosons",
+}
 _SIGNS: dict[type[ast.operator], str] = {
     ast.Div: "quotient",
     ast.Pow: "power",
@@ -31,7 +38,7 @@ _SIGNS: dict[type[ast.operator], str] = {
 
 def reserved_names(sites: Sites) -> set[str]:
     """Names the language itself uses on such sites; parameters and densities cannot have them."""
-    return {*sites.local.symbols, *FUNCTIONS, *FORMS, *CONSTANTS, "for"}
+    return {*sites.symbols, *FUNCTIONS, *FORMS, *CONSTANTS, "for"}
 
 
 class Reader:
@@ -41,7 +48,7 @@ class Reader:
     ----------
     text : str
         The formula.
-    sites : Ring or Chain
+    sites : Ring, Chain or Lattice
         Gives the operators and the number of positions.
     parameters : mapping from str to value
         Checked parameters.
@@ -67,6 +74,7 @@ class Reader:
         self.reserved = reserved_names(sites)
         self.positions: set[str] = set()
         self.integers: set[str] = set()  # parameters that decide positions
+        self.ends: frozenset[str] = frozenset()  # subscripts that are ends of bonds, where the reading stands
         self.chunk_start = 0
         self.chunk = ""
 
@@ -86,9 +94,10 @@ class Reader:
         chunks = [(sign, start, self._parse(cut.source, start, end)) for sign, start, end in cut.summands]
         for _, _, tree in chunks:
             self._collect_positions(tree)
-        names = [token for token in cut.clause if token.kind == "name"]
-        for token in names:
+        clause = _clause(cut.clause)
+        for token in clause.names:
             self.positions.add(token.text)
+        self.ends = clause.ends
         summands = []
         has_conjugate = False
         try:
@@ -102,11 +111,11 @@ class Reader:
         except RecursionError:
             fail("too deeply nested; split the formula", self.text, 0)
         total = self._sum(summands, has_conjugate)
-        return self._pairs(total, cut.clause, names) if cut.clause else total
+        return self._pairs(total, clause) if cut.clause else total
 
     def position(self, index: Node, at: Mapping[str, int]) -> int:
         """Value of a subscript at given values of the free subscripts."""
-        size = self.sites.size
+        size = self.sites.length
         return integer_value(index, at, size=size, parameters=self.parameters, text=self.text)
 
     # --- text to ast
@@ -122,9 +131,10 @@ class Reader:
         for node in ast.walk(tree):
             names: list[ast.AST] = []
             if isinstance(node, ast.Subscript):
-                names = [x for x in ast.walk(node.slice) if isinstance(x, ast.Name)]
+                first = node.slice.elts[0] if isinstance(node.slice, ast.Tuple) else node.slice
+                names = [x for x in ast.walk(first) if isinstance(x, ast.Name)]
             elif isinstance(node, ast.BoolOp):
-                names = [x for part in node.values[1:] for x in ast.walk(part) if isinstance(x, ast.Name)]
+                names = [x for part in node.values[1:] for x in _chained(part)[:2]]
             for name in names:
                 assert isinstance(name, ast.Name)
                 if name.id not in self.parameters and name.id not in self.reserved:
@@ -181,7 +191,7 @@ class Reader:
             return Node("parameter", place, name)
         if name in CONSTANTS:
             return Node("constant", place, name)
-        if name in self.sites.local.symbols:
+        if name in self.sites.symbols:
             self._missing_subscript(f"operator '{name}'", name, tree)
         if name in self.densities:
             self._missing_subscript(f"density '{name}'", name, tree)
@@ -206,29 +216,27 @@ class Reader:
         candidates = self._candidates()
         cutoff = 0.75 if self.scalar else 0.5  # in a function of the position a new name may be the position
         same = [c for c in candidates if c.lower() == name.lower()]
-        close = same or (
-            difflib.get_close_matches(name, candidates, n=1, cutoff=cutoff) if len(name) > 1 else []
-        )
+        close = same or (difflib.get_close_matches(name, candidates, n=1, cutoff=cutoff) if len(name) > 1 else [])
         return close[0] if close else None
 
     def _unknown(self, name: str) -> str:
+        owner = next((what for names, what in _FOREIGN.items() if name in names and not self.scalar), "")
         close = self._close(name)
-        if close is not None:
+        if close is not None and not owner:
             return f"unknown symbol '{name}'; did you mean '{close}'?"
         known = ", ".join(self.parameters) or "none"
-        return f"unknown symbol '{name}'; expected an operator, a function or a parameter (given: {known})"
+        hint = f"; {owner}" if owner else ""
+        return f"unknown symbol '{name}'; expected an operator, a function or a parameter (given: {known}){hint}"
 
     def _subscript(self, tree: ast.Subscript) -> Node:
         base = tree.value
         assert isinstance(base, ast.Name)  # the order of tokens has been checked
         name = base.id
         if name in self.parameters:
-            values = self.parameters[name]
-            if not isinstance(values, tuple):
+            if not isinstance(self.parameters[name], tuple):
                 self._fail(f"parameter '{name}' is a single number: write '{name}' without a subscript", tree)
-            self._check_length(name, values, tree)
             kind = "entry"
-        elif name in self.sites.local.symbols:
+        elif name in self.sites.symbols:
             kind = "operator"
         elif name in self.densities:
             kind = "density"
@@ -239,38 +247,105 @@ class Reader:
         else:
             self._fail(self._unknown(name), tree)
         if self.scalar and kind != "entry":
-            self._fail(
-                "operators have no meaning here: expected a number that may depend on the position", tree
-            )
-        if isinstance(tree.slice, ast.Tuple):
-            self._fail(f"{self.sites.local.name} operators have one subscript", tree.slice.elts[1])
-        index = self._index(tree.slice)
+            self._fail("operators have no meaning here: expected a number that may depend on the position", tree)
+        first, *more = tree.slice.elts if isinstance(tree.slice, ast.Tuple) else [tree.slice]
+        index = self._index(first)
+        is_end = bool(index.free & self.ends)
+        self._check_order(index, is_end)
+        if kind == "entry":
+            value: Any = self._entry(name, index, more, is_end, tree)
+        elif kind == "operator":
+            value = self._operator(name, index, more, is_end)
+        else:
+            if more:
+                self._fail(f"density '{name}' has one subscript", more[0])
+            if is_end and len(self.sites.cell) > 1:
+                fail(f"density '{name}' has a position, not the end of a bond", self.text, index.start)
+            value = name
         if not index.free:
             # decided positions outside the sites are mistakes on rings too: only a running subscript wraps
-            place = self.position(index, {})
-            last = self.sites.size - 1
+            place, last = self.position(index, {}), self.sites.length - 1
             if not 0 <= place <= last:
-                fail(
-                    f"subscript {place} is out of range: positions run from 0 to {last}",
-                    self.text,
-                    index.start,
-                )
-        return Node(kind, self._place(tree), name, (index,), index.free, index.free, kind != "entry")
+                fail(f"subscript {place} is out of range: positions run from 0 to {last}", self.text, index.start)
+        return Node(kind, self._place(tree), value, (index,), index.free, index.free, kind != "entry")
 
-    def _check_length(self, name: str, values: tuple[Any, ...], tree: ast.AST) -> None:
-        size = self.sites.size
-        if len(values) > size or (self.sites.is_ring and len(values) != size):
-            self._fail(f"parameter '{name}' has {len(values)} values, but there are {size} positions", tree)
+    def _check_order(self, index: Node, is_end: bool) -> None:
+        if not index.free or index.kind == "position":
+            return
+        if not self.sites.has_order:
+            fail("the sites of a lattice have no order: use bonds, '... for <a, b>'", self.text, index.start)
+        if is_end and len(self.sites.cell) > 1:
+            fail("the end of a bond is a site: there is no arithmetic with it", self.text, index.start)
+
+    def _entry(
+        self, name: str, index: Node, more: list[ast.expr], is_end: bool, tree: ast.AST
+    ) -> tuple[str, int | None, bool]:
+        """Name, member of the cell, and whether the list has one value per site of a cell of several."""
+        values, cell = self.parameters[name], self.sites.cell
+        assert isinstance(values, tuple)
+        if len(cell) == 1:
+            if more:
+                self._fail(f"parameter '{name}' has one subscript", more[0])
+            member, per_site, count, what = None, False, self.sites.length, "positions"
+        elif is_end or more:
+            member = None if is_end else self._member(more[0])
+            if len(more) > (0 if is_end else 1):
+                self._fail(f"parameter '{name}' has too many subscripts", more[-1])
+            per_site, count, what = True, self.sites.size, "sites"
+        else:
+            member, per_site, count, what = None, False, self.sites.length, "positions"
+            if len(values) == self.sites.size:
+                place = self.text[index.start : self._end(tree) - 1].strip()
+                self._fail(f"parameter '{name}' has one value per site: write '{name}[{place}, {cell[0]}]'", tree)
+        if len(values) > count or ((self.sites.is_ring or per_site) and len(values) != count):
+            self._fail(f"parameter '{name}' has {len(values)} values, but there are {count} {what}", tree)
+        return name, member, per_site
+
+    def _operator(self, name: str, index: Node, more: list[ast.expr], is_end: bool) -> tuple[str, int | None, str]:
+        """Name, member of the cell (None when the subscript is a site), species."""
+        cell, kinds = self.sites.cell, self.sites.kinds
+        member: int | None = 0
+        rest = list(more)
+        if len(cell) > 1:
+            if is_end:
+                member = None
+                if rest and isinstance(rest[0], ast.Name) and rest[0].id in cell:
+                    self._fail("the end of a bond is a site already: leave its name out", rest[0])
+            elif not rest:
+                message = f"'{name}' needs a site of the unit cell: write '{name}[..., {cell[0]}]'"
+                fail(f"{message} (sites: {', '.join(cell)})", self.text, index.start)
+            else:
+                member = self._member(rest.pop(0))
+        if member is not None:
+            kinds = (kinds[member],)
+        fitting = [kind for kind in kinds if name in kind.slots[0].symbols]
+        if not fitting:
+            fail(f"'{name}' does not exist on a {kinds[0].name} site", self.text, index.start)
+        species = sorted({s for kind in fitting for s in kind.species})
+        if not rest:
+            if "" not in species:
+                forms = " or ".join(f"'{name}[..., {s}]'" for s in species)
+                fail(f"'{name}' needs a species: write {forms}", self.text, index.start)
+            return name, member, ""
+        if species == [""]:
+            needed = "two subscripts" if len(cell) > 1 and not is_end else "one subscript"
+            self._fail(f"{fitting[0].name} operators have {needed}", rest[0])
+        if not isinstance(rest[0], ast.Name) or rest[0].id not in species:
+            self._fail(f"unknown species; expected {' or '.join(s for s in species if s)}", rest[0])
+        if len(rest) > 1:
+            self._fail(f"'{name}' has too many subscripts", rest[1])
+        return name, member, rest[0].id
+
+    def _member(self, tree: ast.expr) -> int:
+        if not isinstance(tree, ast.Name) or tree.id not in self.sites.cell:
+            self._fail(f"unknown site of the unit cell; expected {' or '.join(self.sites.cell)}", tree)
+        return self.sites.cell.index(tree.id)
 
     # --- subscripts: integers only
 
     def _index(self, tree: ast.expr) -> Node:
         place = self._place(tree)
-        if (
-            isinstance(tree, ast.Constant)
-            and isinstance(tree.value, int)
-            and not isinstance(tree.value, bool)
-        ):
+        if isinstance(tree, ast.Constant) and isinstance(tree.value, int) and not isinstance(tree.value, bool):
             return Node("number", place, (tree.value, 0))
         if isinstance(tree, ast.Name):
             return self._index_name(tree)
@@ -312,16 +387,14 @@ class Reader:
         assert isinstance(tree.func, ast.Name)  # the order of tokens has been checked
         name, place = tree.func.id, self._place(tree)
         if name not in FUNCTIONS and name not in FORMS:
-            if name in self.sites.local.symbols or name in self.densities:
+            if name in self.sites.symbols or name in self.densities:
                 self._fail(f"'{name}' takes a subscript: write '{name}[...]' with square brackets", tree)
             if name in self.parameters or name in CONSTANTS:
                 self._fail(f"expected an operator between '{name}' and '('", tree)
             self._fail(self._unknown(name), tree)
         needed = FORMS.get(name, 1)
         if len(tree.args) != needed or tree.keywords:
-            self._fail(
-                f"'{name}' takes {needed} argument{'s' if needed > 1 else ''}, not {len(tree.args)}", tree
-            )
+            self._fail(f"'{name}' takes {needed} argument{'s' if needed > 1 else ''}, not {len(tree.args)}", tree)
         items = [self._node(x) for x in tree.args]
         if name in FORMS:
             return joined(name, place, items)
@@ -339,9 +412,7 @@ class Reader:
             return joined("product", place, items)
         kind = _SIGNS[type(tree.op)]
         if right.is_operator:
-            what = (
-                "divide by" if kind == "quotient" else "use as exponent" if kind == "power" else "round with"
-            )
+            what = "divide by" if kind == "quotient" else "use as exponent" if kind == "power" else "round with"
             fail(f"expected a number: an operator is nothing to {what}", self.text, right.start)
         if left.is_operator and kind in ("floor", "modulo"):
             fail("'//' and '%' are for numbers, not for operators", self.text, left.start)
@@ -377,42 +448,70 @@ class Reader:
 
     def _nested_pairs(self, tree: ast.BoolOp) -> Node:
         body, clause = tree.values
-        parts = [clause]
+        relation = ""
         if isinstance(clause, ast.Compare):
-            parts = [clause.left, *clause.comparators]
-        names = []
-        for part in parts:
-            assert isinstance(part, ast.Name)  # the order of tokens has been checked
-            names.append(Token("name", part.id, self._place(part)))
-        sign = "!=" if isinstance(clause, ast.Compare) and isinstance(clause.ops[0], ast.NotEq) else "<"
-        tokens = names if len(names) == 1 else [names[0], Token("sign", sign, names[0].end), names[1]]
-        return self._pairs(self._node(body), tokens, names)
+            relation = "!=" if isinstance(clause.ops[0], ast.NotEq) else "<"
+        elif isinstance(clause, ast.BinOp):
+            relation = "<>"
+        names = [Token("name", part.id, self._place(part)) for part in _chained(clause)]
+        found = _Clause(tuple(names[:2]), relation, names[2] if len(names) > 2 else None)
+        outside = self.ends
+        self.ends = (outside - {token.text for token in found.names}) | found.ends
+        node = self._node(body)
+        self.ends = outside
+        return self._pairs(node, found)
 
-    def _pairs(self, body: Node, clause: list[Token], names: list[Token]) -> Node:
-        for token in names:
+    def _pairs(self, body: Node, clause: _Clause) -> Node:
+        for token in clause.names:
             if token.text in self.parameters or token.text in self.densities or token.text in self.reserved:
-                fail(
-                    f"'{token.text}' has a meaning already and cannot be a subscript", self.text, token.start
-                )
-        bound = tuple(token.text for token in names)
+                fail(f"'{token.text}' has a meaning already and cannot be a subscript", self.text, token.start)
+        bound = tuple(token.text for token in clause.names)
         if len(set(bound)) != len(bound):
-            fail("the two subscripts behind 'for' must differ", self.text, names[1].start)
+            fail("the two subscripts behind 'for' must differ", self.text, clause.names[1].start)
+        if clause.relation == "<>":
+            self._check_bonds(clause)
         summands = body.items if body.kind == "sum" else (body,)
         for summand in summands:
             missing = [name for name in bound if name not in summand.free]
             if missing:
-                message = (
-                    f"this summand does not carry '{missing[0]}'; put the sum in brackets: (... for ...)"
-                )
+                message = f"this summand does not carry '{missing[0]}'; put the sum in brackets: (... for ...)"
                 fail(message, self.text, summand.start)
-        relation = clause[1].text if len(clause) == 3 else ""
-        free = body.free - set(bound)
-        return Node(
-            "pairs",
-            body.start,
-            (bound, relation),
-            (body,),
-            free,
-            body.subscripts - set(bound),
-            body.is_operator,
-        )
+        value = (bound, clause.relation, clause.bonds.text if clause.bonds else None)
+        left = set(bound)
+        return Node("pairs", body.start, value, (body,), body.free - left, body.subscripts - left, body.is_operator)
+
+    def _check_bonds(self, clause: _Clause) -> None:
+        known = ", ".join(self.sites.bonds)
+        if not known:
+            fail(f"{self.sites} has no bonds: give bonds={{'name': [...]}}", self.text, clause.names[0].start)
+        if clause.bonds is not None and clause.bonds.text not in self.sites.bonds:
+            fail(f"unknown bonds '{clause.bonds.text}'; expected {known}", self.text, clause.bonds.start)
+
+
+class _Clause(NamedTuple):
+    """What stands behind `for`: subscripts, relation ('', '<', '!=', or '<>' for bonds), name of the bonds."""
+
+    names: tuple[Token, ...]
+    relation: str
+    bonds: Token | None
+
+    @property
+    def ends(self) -> frozenset[str]:
+        """Subscripts that are ends of bonds."""
+        return frozenset(token.text for token in self.names) if self.relation == "<>" else frozenset()
+
+
+def _clause(tokens: list[Token]) -> _Clause:
+    """Sort the tokens behind an outermost `for`, whose order has been checked."""
+    if tokens and tokens[0].text == "<":
+        return _Clause((tokens[1], tokens[3]), "<>", tokens[6] if len(tokens) > 5 else None)
+    return _Clause(tuple(tokens[::2]), tokens[1].text if len(tokens) > 1 else "", None)
+
+
+def _chained(tree: ast.AST) -> list[ast.Name]:
+    """Names of a clause inside brackets, in order: of i, i < j, i != j, or a @ b @ name."""
+    if isinstance(tree, ast.Compare):
+        return [x for x in (tree.left, *tree.comparators) if isinstance(x, ast.Name)]
+    if isinstance(tree, ast.BinOp) and isinstance(tree.op, ast.MatMult):
+        return [*_chained(tree.left), *_chained(tree.right)]
+    return [tree] if isinstance(tree, ast.Name) else []

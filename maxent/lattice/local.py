@@ -1,15 +1,17 @@
-"""Operators of one site: the letters that words are made of, and how two letters on the same site multiply.
+"""Operators of one slot: the letters that words are made of, and how two letters on the same slot multiply.
 
-Floor: lattice (standard library and NumPy). Equation: spin 1/2 in the basis (up, down), S_a = sigma_a / 2,
-S_a S_b = delta_ab / 4 + (i / 2) epsilon_abc S_c. Letters are Hermitian and, with the identity, a basis of
-the one-site matrices; so a sum of words is Hermitian exactly when all its coefficients are real. Must not
-know where sites lie or how many there are: another kind of site is another table here.
+A slot is the smallest piece of a lattice that has operators of its own: a spin, one fermion mode, one boson mode.
+Letters are numbered, independent, and with the identity span the algebra of the slot; products and conjugates of
+letters are sums over letters with exact numbers, so a sum of words has one form only, and equality of two sums,
+hence hermiticity too, is decided without matrices.
+Floor: lattice (standard library and NumPy). Must not know where slots lie or how many there are: another kind of
+slot is another subclass.
 """
 
 from __future__ import annotations
 
+from abc import ABC, abstractmethod
 from collections.abc import Mapping
-from dataclasses import dataclass
 from fractions import Fraction
 
 import numpy as np
@@ -17,65 +19,86 @@ import numpy as np
 Exact = int | Fraction
 Factor = tuple[Exact, Exact]
 """Exact complex number as (real part, imaginary part)."""
+Combination = tuple[tuple[Factor, int], ...]
+"""Sum over letters: (factor, letter) each."""
 IDENTITY = -1
 """Letter number that stands for the identity; it never appears inside a word."""
 
 
-@dataclass(frozen=True, eq=False)
-class LocalOperators:
-    """Table of the operators of one kind of site.
+class LocalOperators(ABC):
+    """Table of the operators of one kind of slot.
 
     Parameters
     ----------
     name : str
-        What such a site is called in messages.
+        What such a slot is called in messages.
     dimension : int
-        Number of basis states of the site.
-    letters : tuple of str
-        Names of the Hermitian basis operators without the identity; a letter is its index in this tuple.
+        Number of basis states of the slot.
     symbols : mapping from str to tuple of (factor, letter)
         Every operator name a formula may use, as a sum over letters.
-    products : mapping from (letter, letter) to tuple of (factor, letter)
-        Product of two letters on one site, as a sum over letters; `IDENTITY` stands for the identity.
-    matrices : tuple of ndarray, each of shape (dimension, dimension)
-        The letters as matrices in the local basis.
+    odd : collection of int
+        Letters that change sign when they pass an odd letter of another slot (one fermion operator).
+    has_hermitian_letters : bool
+        Whether every letter is its own conjugate.
     """
 
-    name: str
-    dimension: int
-    letters: tuple[str, ...]
-    symbols: Mapping[str, tuple[tuple[Factor, int], ...]]
-    products: Mapping[tuple[int, int], tuple[tuple[Factor, int], ...]]
-    matrices: tuple[np.ndarray, ...]
+    def __init__(
+        self,
+        name: str,
+        dimension: int,
+        symbols: Mapping[str, Combination],
+        *,
+        odd: tuple[int, ...] = (),
+        has_hermitian_letters: bool = False,
+    ) -> None:
+        self.name, self.dimension, self.symbols = name, dimension, dict(symbols)
+        self.odd, self.has_hermitian_letters = frozenset(odd), has_hermitian_letters
+        self.products: dict[tuple[int, int], Combination] = {}
+        self._adjoints: dict[int, Combination] = {}
+        self._matrices: dict[int, np.ndarray] = {}
+
+    def product(self, left: int, right: int) -> Combination:
+        """Product of two letters, as a sum over letters; `IDENTITY` stands for the identity."""
+        found = self.products.get((left, right))
+        if found is None:
+            found = self.products[left, right] = self._product(left, right)
+        return found
+
+    def adjoint(self, letter: int) -> Combination:
+        """Hermitian conjugate of a letter, as a sum over letters."""
+        found = self._adjoints.get(letter)
+        if found is None:
+            found = self._adjoints[letter] = self._adjoint(letter)
+        return found
+
+    def matrix(self, letter: int) -> np.ndarray:
+        """Letter in the local basis, shape (dimension, dimension); read-only."""
+        found = self._matrices.get(letter)
+        if found is None:
+            found = self._matrices[letter] = self._matrix(letter)
+            found.setflags(write=False)
+        return found
+
+    def rank(self, letter: int) -> int:
+        """Place of a letter in a printed word: 0 creators first, 1 neutral, 2 annihilators last."""
+        return 1
+
+    @abstractmethod
+    def text(self, letter: int, subscript: str) -> str:
+        """Letter as the formula language reads it, e.g. ``Sx[i]*Sz[i]**2``; an empty subscript leaves it out."""
+
+    @abstractmethod
+    def _product(self, left: int, right: int) -> Combination: ...
+
+    @abstractmethod
+    def _adjoint(self, letter: int) -> Combination: ...
+
+    @abstractmethod
+    def _matrix(self, letter: int) -> np.ndarray: ...
 
 
-def _spin_half() -> LocalOperators:
-    half, quarter = Fraction(1, 2), Fraction(1, 4)
-    products: dict[tuple[int, int], tuple[tuple[Factor, int], ...]] = {}
-    for a in range(3):
-        products[a, a] = (((quarter, 0), IDENTITY),)
-        b, c = (a + 1) % 3, (a + 2) % 3
-        products[a, b] = (((0, half), c),)
-        products[b, a] = (((0, -half), c),)
-    symbols: dict[str, tuple[tuple[Factor, int], ...]] = {
-        "Sx": (((1, 0), 0),),
-        "Sy": (((1, 0), 1),),
-        "Sz": (((1, 0), 2),),
-        "Splus": (((1, 0), 0), ((0, 1), 1)),
-        "Sminus": (((1, 0), 0), ((0, -1), 1)),
-        "X": (((2, 0), 0),),
-        "Y": (((2, 0), 1),),
-        "Z": (((2, 0), 2),),
-    }
-    matrices = (
-        np.array([[0.0, 0.5], [0.5, 0.0]]),
-        np.array([[0.0, -0.5j], [0.5j, 0.0]]),
-        np.array([[0.5, 0.0], [0.0, -0.5]]),
-    )
-    for matrix in matrices:
-        matrix.setflags(write=False)
-    return LocalOperators("spin-1/2", 2, ("Sx", "Sy", "Sz"), symbols, products, matrices)
-
-
-SPIN_HALF = _spin_half()
-"""Spin 1/2: letters Sx, Sy, Sz; basis (up, down)."""
+def power_text(name: str, exponent: int, most: int = 16) -> list[str]:
+    """Factors of a power, none of them above the largest exponent that formulas take."""
+    parts = [f"{name}**{most}"] * (exponent // most)
+    rest = exponent % most
+    return parts + ([name] if rest == 1 else [f"{name}**{rest}"] if rest else [])

@@ -18,8 +18,8 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
+from maxent.lattice.assembly import assemble
 from maxent.lattice.exact import EPS
-from maxent.memory import require_memory
 
 _SX, _SY = 0, 1
 _CHUNK = 1 << 14
@@ -95,37 +95,17 @@ class BitTable:
         ResourceError
             When it would not fit; nothing has been allocated then.
         """
-        dim = 1 << self.size
-        most = sum(_most_entries(d, self.size) for d in self.diagonals)
-        wide = max(dim, most) >= 2**31
-        index = np.dtype(np.int64 if wide else np.int32)
-        rows_at_once = min(dim, _CHUNK)
-        entry = self.dtype.itemsize + index.itemsize
-        scratch = rows_at_once * (len(self.diagonals) * (entry + 1) * 2 + 64)
-        need = most * entry + (dim + 1) * index.itemsize + scratch
-        require_memory(need, f"2^{self.size} states need {{need}} for this operator", limit=limit)
-
-        import scipy.sparse  # a config with a wrong formula should not wait for it
-
-        data, columns = np.empty(most, self.dtype), np.empty(most, index)
-        starts = np.zeros(dim + 1, index)
-        flips = np.array([d.flips for d in self.diagonals], dtype=np.int64)[:, None]
-        filled = 0
-        for first in range(0, dim, rows_at_once):
-            rows = np.arange(first, min(first + rows_at_once, dim))
-            sources = rows ^ flips
-            values = np.empty(sources.shape, self.dtype)
-            for k, diagonal in enumerate(self.diagonals):
-                values[k] = _values(diagonal, sources[k], self.dtype)
-            kept = np.ascontiguousarray((values != 0).T)
-            count = int(np.count_nonzero(kept))
-            data[filled : filled + count] = values.T[kept]
-            columns[filled : filled + count] = sources.T[kept]
-            starts[first + 1 : first + 1 + len(rows)] = filled + np.cumsum(kept.sum(axis=1))
-            filled += count
-        matrix = scipy.sparse.csr_array((data[:filled], columns[:filled], starts), shape=(dim, dim))
-        matrix.sort_indices()
-        return matrix
+        return assemble(
+            self._rows,
+            dim=1 << self.size,
+            most=sum(_most_entries(d, self.size) for d in self.diagonals),
+            dtype=self.dtype,
+            count=len(self.diagonals),
+            chunk=_CHUNK,
+            scratch=64,
+            what=f"2^{self.size} states need {{need}} for this operator",
+            limit=limit,
+        )
 
     def action(self, vector: np.ndarray) -> np.ndarray:
         """Operator times vector, without a matrix.
@@ -148,6 +128,14 @@ class BitTable:
                 values = _values(diagonal, sources, self.dtype)
                 result[rows] += (values if vector.ndim == 1 else values[:, None]) * vector[sources]
         return result
+
+    def _rows(self, rows: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Columns and values of every generalised diagonal in the given rows."""
+        sources = rows ^ np.array([d.flips for d in self.diagonals], dtype=np.int64)[:, None]
+        values = np.empty(sources.shape, self.dtype)
+        for k, diagonal in enumerate(self.diagonals):
+            values[k] = _values(diagonal, sources[k], self.dtype)
+        return sources, values
 
 
 def _levels(weights: Iterable[tuple[int, float]]) -> tuple[_Level, ...]:

@@ -27,7 +27,8 @@ class Node:
     start : int
         Place in the text, counted from 0.
     value : object
-        The number, the name, whether a sum ends in h.c., or (names, relation) of `pairs`.
+        The number, the name, whether a sum ends in h.c., (names, relation, bonds) of `pairs`, (name, member of the
+        cell, species) of an operator, (name, member of the cell, whether per site) of an entry.
     items : tuple of Node
         The parts.
     free : frozenset of str

@@ -186,7 +186,7 @@ class ProductState:
         shared = [tuple(x for x in word if x[0] in common) for word in (left, right)]
         alone = [x for word in (left, right) for x in word if x[0] not in common]
         together = 0j
-        for factor, word in word_product(shared[0], shared[1], self.sites.local):
+        for factor, word in word_product(shared[0], shared[1], self.sites.slots):
             together += complex(*map(float, factor)) * self._word_mean(word)
         apart = self._word_mean(shared[0]) * self._word_mean(shared[1])
         return (together.real - apart) * math.prod(self._letter_mean(*x) for x in alone)

@@ -16,21 +16,23 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from maxent.lattice import words as algebra
-from maxent.lattice.coefficients import Coefficient, Value
+from maxent.lattice.coefficients import NOTHING, Coefficient, Value
 from maxent.lattice.exact import Complex, from_complex
 from maxent.lattice.matrices import BitTable
 from maxent.lattice.parameters import check_parameter, is_complex
 from maxent.lattice.printing import sum_text, word_text
 from maxent.lattice.sites import Sites
+from maxent.lattice.tables import WordTable
 from maxent.lattice.words import Word, Words
 
 
 class Term(NamedTuple):
-    """One word of a sum: symbolic coefficient, sites in order, and the operator name on each."""
+    """One word of a sum: symbolic coefficient, and in order of the product the site, operator and species of each."""
 
     coefficient: Coefficient
     positions: tuple[int, ...]
     operators: tuple[str, ...]
+    species: tuple[str, ...]
 
 
 class OperatorSum:
@@ -40,7 +42,7 @@ class OperatorSum:
 
     Parameters
     ----------
-    sites : Ring or Chain
+    sites : Ring, Chain or Lattice
         Where the words live.
     words : mapping from word to Coefficient
         Canonical words; zero coefficients are not allowed.
@@ -74,13 +76,16 @@ class OperatorSum:
         self._words = dict(sorted(words.items()))
         self._parameters = dict(parameters or {})
         self.frozen = frozenset(frozen)
-        self._table: BitTable | None = None
+        self._table: BitTable | WordTable | None = None
 
     # --- what it is
 
     @property
     def words(self) -> Words:
-        """Copy of the dictionary word -> coefficient; a word is a tuple of (site, letter number)."""
+        """Copy of the dictionary word -> coefficient; a word is a tuple of (slot, letter number).
+
+        A slot is a site, or one mode of it: see `Sites.homes`.
+        """
         return dict(self._words)
 
     @property
@@ -91,9 +96,14 @@ class OperatorSum:
     @property
     def terms(self) -> tuple[Term, ...]:
         """The words in canonical order, readable."""
-        names = self.sites.local.letters
+        slots, homes = self.sites.slots, self.sites.homes
         return tuple(
-            Term(c, tuple(site for site, _ in word), tuple(names[letter] for _, letter in word))
+            Term(
+                c,
+                tuple(homes[slot][0] for slot, _ in word),
+                tuple(slots[slot].text(letter, "") for slot, letter in word),
+                tuple(homes[slot][1] for slot, _ in word),
+            )
             for word, c in self._words.items()
         )
 
@@ -110,12 +120,13 @@ class OperatorSum:
 
     @property
     def non_hermitian_word(self) -> str | None:
-        """None for a Hermitian sum, otherwise one word with a coefficient that is not real, as text."""
-        for word, coefficient in self._words.items():
-            if not coefficient.is_real:
-                name = word_text(word, self.sites.local) or "1"
-                return f"{name} with the coefficient {coefficient}"
-        return None
+        """None for a Hermitian sum, otherwise one word whose coefficient the conjugate does not have, as text."""
+        word = algebra.unpaired(self._words, self.sites.slots)
+        if word is None:
+            return None
+        sign, name = word_text(word, self.sites)
+        coefficient = self._words.get(word, NOTHING).times((sign, 0))
+        return f"{name or '1'} with the coefficient {coefficient}"
 
     @property
     def is_hermitian(self) -> bool:
@@ -124,18 +135,30 @@ class OperatorSum:
 
     @property
     def range(self) -> int:
-        """Number of sites that the widest word covers (shortest arc on a ring); 0 without operators."""
-        return max((self.sites.reach([site for site, _ in word]) for word in self._words), default=0)
+        """Number of positions that the widest word covers (shortest arc on a ring); 0 without operators.
+
+        With several sites per unit cell these are cells; on a lattice given by bonds, sites of one word.
+        """
+        homes = self.sites.homes
+        return max((self.sites.reach([homes[slot][0] for slot, _ in word]) for word in self._words), default=0)
 
     @property
     def norm_bound(self) -> float:
         """Upper bound of the operator norm: sum over words of |coefficient| times norms of letters."""
-        norms = [float(np.linalg.norm(matrix, 2)) for matrix in self.sites.local.matrices]
-        return float(sum(abs(a) * np.prod([norms[x] for _, x in word]) for word, a in self._numeric()))
+        slots = self.sites.slots
+        norms: dict[tuple[int, int], float] = {}
+        for word in self._words:
+            for slot, letter in word:
+                key = (id(slots[slot]), letter)
+                if key not in norms:
+                    norms[key] = float(np.linalg.norm(slots[slot].matrix(letter), 2))
+        return float(sum(abs(a) * np.prod([norms[id(slots[s]), x] for s, x in word]) for word, a in self._numeric()))
 
     def __str__(self) -> str:
         """Write the normal form; `formula` reads it back to the same sum."""
-        return sum_text(self._words, self.sites, taken=self._parameters)
+        cells, size = self.sites.length, self.sites.size
+        per_site = {n for n, v in self._parameters.items() if isinstance(v, tuple) and len(v) == size != cells}
+        return sum_text(self._words, self.sites, taken=self._parameters, per_site=per_site)
 
     def __repr__(self) -> str:
         """Short description that fits a terminal."""
@@ -158,7 +181,7 @@ class OperatorSum:
 
     def adjoint(self) -> OperatorSum:
         """Hermitian conjugate."""
-        return self._like(algebra.adjoint(self._words))
+        return self._like(algebra.adjoint(self._words, self.sites.slots))
 
     def __add__(self, other: object) -> OperatorSum:
         """Sum with another sum on the same sites, or with a number times the identity."""
@@ -185,7 +208,7 @@ class OperatorSum:
         right = self._partner(other)
         if right is None:
             return NotImplemented
-        return self._join(right, algebra.multiply(self._words, right._words, self.sites.local))
+        return self._join(right, algebra.multiply(self._words, right._words, self.sites.slots))
 
     def __rmul__(self, other: object) -> OperatorSum:
         """Product, number first."""
@@ -203,7 +226,7 @@ class OperatorSum:
         right = self._partner(other)
         if right is None:
             raise TypeError(f"commutator: expected an OperatorSum, not {type(other).__name__}")
-        return self._join(right, algebra.commute(self._words, right._words, self.sites.local))
+        return self._join(right, algebra.commute(self._words, right._words, self.sites.slots))
 
     # --- parameters
 
@@ -232,9 +255,7 @@ class OperatorSum:
             needed = "a position" if isinstance(value, tuple) else "no position"
             raise ValueError(f"derivative: parameter '{name}' needs {needed}")
         if isinstance(value, tuple) and not 0 <= (position or 0) < len(value):
-            raise ValueError(
-                f"derivative: parameter '{name}' has no position {position} (0..{len(value) - 1})"
-            )
+            raise ValueError(f"derivative: parameter '{name}' has no position {position} (0..{len(value) - 1})")
         slopes = {word: c.derivative(name, position) for word, c in self._words.items()}
         return self._like({word: c for word, c in slopes.items() if not c.is_zero})
 
@@ -256,16 +277,14 @@ class OperatorSum:
                 raise ValueError(f"parameter '{name}' needs {len(old)} values, not {len(new)}")
             phases = {s.phase != 0 for c in self._words.values() for s in c.symbols() if s.name == name}
             if phases == {False} and is_complex(new):
-                raise ValueError(
-                    f"parameter '{name}' was real when the formula was read and cannot become complex"
-                )
+                raise ValueError(f"parameter '{name}' was real when the formula was read and cannot become complex")
             changed[name] = new
         return OperatorSum(self.sites, self._words, parameters=changed, frozen=self.frozen)
 
     # --- arrays
 
     def matrix(self, *, limit: int | None = None) -> Any:
-        """Sparse matrix in the basis of the sites (site 0 most significant, up before down).
+        """Sparse matrix in the basis of the sites (site 0 most significant; local order as in docs/formulas.md).
 
         Parameters
         ----------
@@ -274,7 +293,7 @@ class OperatorSum:
 
         Returns
         -------
-        scipy.sparse.csr_array, shape (2**L, 2**L)
+        scipy.sparse.csr_array, shape (d, d)
             float64 when the operator is real in this basis, otherwise complex128; no explicit zeros.
 
         Raises
@@ -282,20 +301,20 @@ class OperatorSum:
         ResourceError
             When the matrix would not fit, with the memory it would need; raised before anything is allocated.
         ValueError
-            When a coefficient has no finite value at the current parameters.
+            When a coefficient has no finite value at the current parameters, or bosons have no cut-off.
 
         Notes
         -----
-        Cost O(words * 2^L) bit operations.
+        Cost O(words * d), d = number of basis states.
         """
-        return self._bits().matrix(limit=limit)
+        return self._arrays().matrix(limit=limit)
 
     def action(self, vector: np.ndarray) -> np.ndarray:
         """Operator times vector, without a matrix.
 
         Parameters
         ----------
-        vector : real or complex, shape (2**L,) or (2**L, k)
+        vector : real or complex, shape (d,) or (d, k)
             One state, or k states as columns.
 
         Returns
@@ -305,14 +324,13 @@ class OperatorSum:
         Raises
         ------
         ValueError
-            When the first dimension is not 2**L.
+            When the first dimension is not the number of basis states d.
         """
         vector = np.asarray(vector)
-        if vector.ndim not in (1, 2) or vector.shape[0] != 2**self.sites.size:
-            raise ValueError(
-                f"action: the vector needs 2^{self.sites.size} rows, its shape is {vector.shape}"
-            )
-        return self._bits().action(vector)
+        if vector.ndim not in (1, 2) or vector.shape[0] != self.sites.states:
+            rows = f"2^{self.sites.size}" if self.sites.is_spin_half else self.sites.states
+            raise ValueError(f"action: the vector needs {rows} rows, its shape is {vector.shape}")
+        return self._arrays().action(vector)
 
     # --- helpers
 
@@ -330,9 +348,12 @@ class OperatorSum:
             result.append((word, value))
         return result
 
-    def _bits(self) -> BitTable:
+    def _arrays(self) -> BitTable | WordTable:
         if self._table is None:
-            self._table = BitTable(self._numeric(), self.sites.size)
+            if self.sites.is_spin_half:
+                self._table = BitTable(self._numeric(), self.sites.size)
+            else:
+                self._table = WordTable(self._numeric(), self.sites.slots)
         return self._table
 
     def _names(self) -> set[str]:
@@ -340,9 +361,7 @@ class OperatorSum:
 
     def _known(self, name: str) -> Value:
         if name in self.frozen:
-            raise ValueError(
-                f"parameter '{name}' decides positions in this formula: read the formula again instead"
-            )
+            raise ValueError(f"parameter '{name}' decides positions in this formula: read the formula again instead")
         if name not in self._parameters:
             raise ValueError(f"unknown parameter '{name}'; known: {', '.join(self._parameters) or 'none'}")
         return self._parameters[name]
@@ -362,9 +381,7 @@ class OperatorSum:
 
     def _join(self, other: OperatorSum, words: Words) -> OperatorSum:
         if self.sites != other.sites:
-            raise ValueError(
-                f"operators on different sites cannot be combined: {self.sites} and {other.sites}"
-            )
+            raise ValueError(f"operators on different sites cannot be combined: {self.sites} and {other.sites}")
         for name, value in other._parameters.items():
             if self._parameters.get(name, value) != value:
                 raise ValueError(f"parameter '{name}' has two values: {self._parameters[name]} and {value}")

@@ -20,6 +20,7 @@ _TOKEN = re.compile(
     r"(?P<space>\s+)|(?P<conjugate>h\.c\.)|(?P<number>(?:\d+\.\d*|\.\d+|\d+)(?:[eE][+-]?\d+)?j?)"
     r"|(?P<name>[^\W\d]\w*)|(?P<sign>\*\*|//|!=|[-+*/%()\[\],<>])"
 )
+_FORMS = "'for i < j', 'for i != j' or 'for i'"
 _CLOSING = {"(": ")", "[": "]"}
 _MOST_CHARACTERS = 1_000_000
 _MOST_BRACKETS = 40
@@ -168,9 +169,7 @@ class _Order:
         if token.text == "for":
             self._fail("expected a value before 'for'", token.start)
         if token.kind == "name" and keyword.iskeyword(token.text):
-            self._fail(
-                f"unknown symbol '{token.text}'; expected an operator, a function or a parameter", token.start
-            )
+            self._fail(f"unknown symbol '{token.text}'; expected an operator, a function or a parameter", token.start)
         if token.kind in ("name", "number"):
             return False
         if token.text in ("+", "-"):
@@ -218,21 +217,24 @@ class _Order:
         self._fail(f"expected an operator between '{before.text}' and '{token.text}'", token.start)
 
     def _clause(self, k: int) -> int:
-        """Check `for i`, `for i < j` or `for i != j`; returns the index of the token behind it."""
+        """Check `for i`, `for i < j`, `for i != j` or `for <a, b> in name`; returns the index behind it."""
         token = self.tokens[k]
         if self.open and self.open[-1] == "subscript":
             self._fail("'for' cannot stand in a subscript", token.start)
         clause = self.tokens[k + 1 :]
         length = 1
-        if not clause or clause[0].kind != "name":
-            self._fail("expected a subscript after 'for', as in 'for i < j' or 'for i != j'", token.end)
-        if len(clause) > 1 and clause[1].text in ("<", "!="):
+        if clause and clause[0].text == "<":
+            length = self._bond_clause(clause)
+        elif not clause or clause[0].kind != "name":
+            self._fail("expected a subscript after 'for', as in 'for i < j', 'for i != j' or 'for <a, b>'", token.end)
+        elif len(clause) > 1 and clause[1].text in ("<", "!="):
             if len(clause) < 3 or clause[2].kind != "name":
                 self._fail(f"expected a second subscript after '{clause[1].text}'", clause[1].end)
             length = 3
         if len(clause) > length and clause[length].text not in (")", ","):
             found = clause[length]
-            self._fail(f"expected 'for i < j', 'for i != j' or 'for i', found '{found.text}'", found.start)
+            forms = "'for <a, b>' or 'for <a, b> in name'" if clause[0].text == "<" else _FORMS
+            self._fail(f"expected {forms}, found '{found.text}'", found.start)
         if len(clause) > length and clause[length].text == "," and not self.open:
             self._fail("unexpected ',' behind 'for'", clause[length].start)
         if self.open:
@@ -240,6 +242,25 @@ class _Order:
         else:
             self.clause_at = k
         return k + 1 + length
+
+    def _bond_clause(self, clause: list[Token]) -> int:
+        """Check `<a, b>` with or without `in name` behind it; returns how many tokens it has."""
+        for k, expected in enumerate(("<", "", ",", "", ">")):
+            found = clause[k] if k < len(clause) else None
+            if found is None or (found.text != expected if expected else found.kind != "name"):
+                what = f"'{expected}'" if expected else "a subscript"
+                self._fail(f"expected {what} as in 'for <a, b>'", clause[k - 1].end if found is None else found.start)
+        length = 5
+        if len(clause) > 5 and clause[5].text == "in":
+            if len(clause) < 7 or clause[6].kind != "name":
+                self._fail("expected the name of bonds after 'in'", clause[5].end)
+            length = 7
+        if self.open:
+            # Python reads a @ b @ name; '@' has no other meaning here
+            for part, text in zip(clause[:length], (" ", "", "@", "", " ", "@ ", ""), strict=False):
+                if text:
+                    self.source[part.start : part.end] = text
+        return length
 
     def _cut(self) -> Cut:
         end = len(self.text)

@@ -51,7 +51,7 @@ def test_algebra_agrees_with_matrices():
 def test_sums_have_values_and_short_names():
     op = formula("J*Sz[i]*Sz[i+1]", RING, P)
     assert op.parameters["J"] == 0.7
-    assert repr(op) == "<OperatorSum of 4 words on Ring(size=4): J*Sz[i]*Sz[i+1]>"
+    assert repr(op) == "<OperatorSum of 4 words on Ring(4): J*Sz[i]*Sz[i+1]>"
     long = formula("Sx[i]*Sx[j]/abs(i-j) for i < j", RING)
     assert repr(long).endswith("...>") and len(repr(long)) < 120
     assert hash(op) == hash(formula(str(op), RING, P)) and op != "J*Sz[i]*Sz[i+1]"

@@ -125,7 +125,7 @@ def test_unusable_angles_are_named(theta, error, message):
 
 def test_operators_that_do_not_belong_are_refused():
     state = ProductState(RING, 0.3, 0.2)
-    with pytest.raises(ValueError, match=r"lives on Ring\(size=4\), the start state on Ring\(size=6\)"):
+    with pytest.raises(ValueError, match=r"lives on Ring\(4\), the start state on Ring\(6\)"):
         state.mean(formula("Sz[i]", Ring(4)))
     with pytest.raises(ValueError, match=r"not Hermitian: the word Sy\[0\] with the coefficient 1j"):
         state.mean(formula("Splus[i]", RING))
@@ -136,7 +136,7 @@ def test_operators_that_do_not_belong_are_refused():
 def test_lists_end_with_the_chain():
     with pytest.raises(FormulaError, match="^formula column 1: a subscript leaves the chain at position 4"):
         ProductState(Chain(5), "w[i+1]", 0.0, parameters={"w": [1, 2, 3, 4, 5]})
-    assert repr(ProductState(Chain(5), 0.0, 0.0)) == "<ProductState on Chain(size=5)>"
+    assert repr(ProductState(Chain(5), 0.0, 0.0)) == "<ProductState on Chain(5)>"
 
 
 def test_a_vector_that_does_not_fit_is_refused():
