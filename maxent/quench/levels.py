@@ -9,10 +9,10 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from functools import cached_property
 from itertools import combinations
-from typing import Any, Protocol, runtime_checkable
+from typing import Any
 
 import numpy as np
 import scipy.sparse as sp
@@ -20,10 +20,10 @@ import scipy.sparse as sp
 from maxent.families.density import Group, MatricesState
 from maxent.families.matrices import Matrices
 from maxent.families.microstates import Microstates, MicrostatesState
+from maxent.quench.spectrum import Spectrum
 
 __all__ = [
     "Levels",
-    "LevelSource",
     "distinct",
     "interval",
     "levels",
@@ -37,18 +37,6 @@ __all__ = [
 EQUAL = 1e-10
 
 
-@runtime_checkable
-class LevelSource(Protocol):
-    """Anything else that has energies and makes states diagonal in them, such as a spectrum by blocks."""
-
-    @property
-    def energies(self) -> np.ndarray:
-        """Energies (n,) of the levels."""
-
-    def state(self, weights: np.ndarray) -> Any:
-        """State with probabilities (n,) on the levels."""
-
-
 @dataclass(frozen=True, eq=False)
 class Levels:
     """Joint levels of commuting charges.
@@ -59,7 +47,7 @@ class Levels:
         Value of each charge in each level.
     energy : str
         Name of the charge that is the energy.
-    source : Matrices, Microstates, LevelSource or None
+    source : Matrices, Microstates, Spectrum or None
         Where the levels come from, and who makes states of them.
     log_degeneracies : (n,) ndarray or None
         Logarithms of how many states a level stands for; None where each stands for one.
@@ -154,10 +142,10 @@ class Levels:
                 family.flat, weights[: len(family.flat)], tuple(groups), family.dimension, family.basis, family.dims,
                 log_partition, entropy,
             )  # fmt: skip
-        return replace(self.source.state(weights), log_partition=log_partition)
+        return self.source.state(weights, log_partition=log_partition)
 
     def restrict(self, mask: np.ndarray) -> Any:
-        """The family of the charges on some of the levels alone, made by its own ``restrict``.
+        """The family of the charges on some of the levels alone.
 
         Parameters
         ----------
@@ -170,12 +158,15 @@ class Levels:
         Raises
         ------
         ValueError
-            Levels that do not come from a family.
+            Levels without a source.
         """
         if isinstance(self.source, Microstates):
             return self.source.restrict(self.source.index[mask])
-        if not isinstance(self.source, Matrices):
-            raise ValueError("only levels of Matrices or Microstates can be restricted to a window as a family")
+        if isinstance(self.source, Spectrum):
+            inside = {name: sp.diags_array(value[mask]) for name, value in self.values.items()}
+            return Matrices(inside, basis=self.source.vectors(np.flatnonzero(mask)), dims=self.source.dims)
+        if self.source is None:
+            raise ValueError("levels made from an array of energies have no states: give a family or a spectrum")
         family, at = self.source, len(self.source.flat)
         kept = family.flat[mask[:at]]
         parts = [sp.coo_array((np.ones(len(kept)), (kept, np.arange(len(kept)))), (family.dimension, len(kept)))]
@@ -192,7 +183,7 @@ def levels(source: Any, *, energy: str = "energy", further: Mapping[str, Any] | 
 
     Parameters
     ----------
-    source : Matrices, Microstates, LevelSource, or (n,) array_like
+    source : Matrices, Microstates, Spectrum, or (n,) array_like
         Charges that commute; or energies.
     energy : str, optional
         Name of the charge that is the energy.
@@ -236,7 +227,7 @@ def levels(source: Any, *, energy: str = "energy", further: Mapping[str, Any] | 
         origin = source
         if further:
             raise ValueError("further values go with a spectrum or an array; give all charges to the family instead")
-    elif isinstance(source, LevelSource):
+    elif isinstance(source, Spectrum):
         found, origin = {energy: np.asarray(source.energies, float)}, source
     else:
         found = {energy: np.asarray(source, float)}

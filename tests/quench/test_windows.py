@@ -11,6 +11,7 @@ import maxent
 from maxent.families import Matrices, Microstates
 from maxent.lattice import Chain, Ring, formula
 from maxent.quench.levels import distinct, levels
+from maxent.quench.spectrum import Spectrum
 from maxent.quench.windows import gaussian_window, scan_widths, sharp_window
 
 #: ZZ + 0.9045 X + 0.8090 Z in Pauli matrices
@@ -207,6 +208,30 @@ def test_joint_windows_are_sectors():
     assert_allclose(smooth.mean_of(levels(family).values["magnetisation"]), 1.0)
 
 
+def test_windows_of_a_spectrum():
+    """From energies by blocks as from a family of charges that commute."""
+    sites = Ring(6)
+    charges = xxz(sites)
+    family = Matrices(charges, dims=sites.dims)
+    spectrum = Spectrum(charges["energy"], companions=[charges["magnetisation"]], dims=sites.dims)
+    up = charges["magnetisation"].diagonal()
+    blocks = np.concatenate([np.full(b.size, up[b.index[0]]) for b in spectrum.blocks])
+    listed = levels(spectrum, further={"magnetisation": blocks})
+    zz = formula("Sz[0]*Sz[1]", sites).matrix()
+    bounds = {"energy": (-1.3, 0.45), "magnetisation": (-1, 1)}
+    for make in (lambda x: sharp_window(x, bounds), lambda x: gaussian_window(x, 0.9, mean=-0.2, spacings=3)):
+        ours, theirs = make(listed), make(family)
+        assert_allclose(ours.entropy, theirs.entropy, rtol=1e-12)
+        assert_allclose(ours.state.log_partition, theirs.state.log_partition, rtol=1e-12)
+        assert_allclose(ours.state.mean(zz), theirs.state.mean(zz), atol=1e-12)
+        assert_allclose(ours.state.reduced([0, 3]), theirs.state.reduced([0, 3]), atol=1e-12)
+    inside = sharp_window(listed, bounds).family()
+    lam = [0.7, -0.2]
+    assert inside.names == ("energy", "magnetisation")
+    assert_allclose(inside.state(lam).mean(zz), sharp_window(family, bounds).family().state(lam).mean(zz), atol=1e-12)
+    assert levels(spectrum).names == ("energy",)
+
+
 def test_three_charges_and_listed_states():
     n, m = np.divmod(np.arange(12), 4)
     listed = Microstates({"energy": n + 0.1 * m, "number": n, "magnetisation": m}, log_weights=np.log(1.0 + m))
@@ -253,7 +278,7 @@ def test_bad_input(energies):
         (lambda: levels(Microstates({"energy": [0, 1]}, log_prior=[0.0, 0.5])), "with a prior has no window"),
         (lambda: levels(Matrices({"energy": np.eye(2)}, log_prior=np.diag([0, 1.0]))), "with a prior has no window"),
         (lambda: sharp_window(energies, {"energy": (0, 1)}).state, "array of energies have no states"),
-        (lambda: sharp_window(energies, {"energy": (0, 1)}).family(), "only levels of Matrices or Microstates"),
+        (lambda: sharp_window(energies, {"energy": (0, 1)}).family(), "array of energies have no states"),
         (lambda: sharp_window(energies, {"energy": (0, 1)}).mean_of([1.0]), "one per level"),
         (lambda: levels(family, energy="h").state([1.0]), "one per level"),
     ]:
