@@ -10,7 +10,7 @@ from scipy.optimize import brentq, minimize_scalar
 
 import maxent
 from maxent.families import Matrices, Microstates
-from maxent.lattice import Chain, Ring, formula
+from maxent.lattice import Chain, Fermions, Ring, formula
 from maxent.quench.fixed_number import chemical_potential_at_number, log_partitions_by_number
 from maxent.quench.forces import generalised_force, parameter_response, parameter_slopes
 from maxent.quench.levels import levels
@@ -213,6 +213,22 @@ def test_parameters_inside_functions():
     assert_allclose([slopes.gradient[3], slopes.hessian[3, 3]], both(response), rtol=1e-11)
     middle = parameter_response(family, lam, {"energy": energy.derivative("J", 1)})
     assert_allclose([slopes.gradient[1], slopes.hessian[1, 1]], both(middle), rtol=1e-11)
+
+
+def test_parameters_of_fermions():
+    """Complex hopping and words that are not Hermitian one by one: JAX against the symbolic derivative."""
+    sites, given = Chain(3, Fermions()), {"t": 0.8, "V": 0.4, "z": np.exp(0.4j)}
+    energy = formula("-t*(z*dagger(c[i])*c[i+1] + h.c.) + V**2*n[i]*n[i+1]", sites, given)
+    slopes = parameter_slopes({"energy": energy}, {"energy": 0.7})
+    assert slopes.names == ("V", "t")  # z is complex: no derivative
+    family = Matrices({"energy": energy.matrix()})
+    for k, name in enumerate(slopes.names):
+        first = energy.derivative(name)
+        response = parameter_response(
+            family, {"energy": 0.7}, {"energy": first}, second={"energy": first.derivative(name)}
+        )
+        found = [slopes.gradient[k], slopes.hessian[k, k]]
+        assert_allclose(found, [response.log_partition, response.curvature], rtol=1e-11)
 
 
 def test_arrays_by_jax(mixed):
