@@ -17,6 +17,7 @@ from maxent.lattice.coefficients import FUNCTIONS, Value
 from maxent.lattice.exact import Complex
 from maxent.lattice.nodes import Node, integer_value, joined
 from maxent.lattice.sites import Sites
+from maxent.lattice.subscripts import Subscripts
 from maxent.lattice.tokens import CONJUGATE, Token, fail, read
 
 CONSTANTS = ("pi", "L")
@@ -248,98 +249,23 @@ class Reader:
             self._fail(self._unknown(name), tree)
         if self.scalar and kind != "entry":
             self._fail("operators have no meaning here: expected a number that may depend on the position", tree)
-        first, *more = tree.slice.elts if isinstance(tree.slice, ast.Tuple) else [tree.slice]
+        first, *rest = tree.slice.elts if isinstance(tree.slice, ast.Tuple) else [tree.slice]
         index = self._index(first)
+        more = [Token("name", x.id if isinstance(x, ast.Name) else "", self._place(x)) for x in rest]
         is_end = bool(index.free & self.ends)
-        self._check_order(index, is_end)
+        reader = Subscripts(self.sites, self.text, name, index, more, is_end)
         if kind == "entry":
-            value: Any = self._entry(name, index, more, is_end, tree)
-        elif kind == "operator":
-            value = self._operator(name, index, more, is_end)
+            values = self.parameters[name]
+            assert isinstance(values, tuple)
+            value: Any = reader.entry(values, self._place(tree), self._end(tree))
         else:
-            if more:
-                self._fail(f"density '{name}' has one subscript", more[0])
-            if is_end and len(self.sites.cell) > 1:
-                fail(f"density '{name}' has a position, not the end of a bond", self.text, index.start)
-            value = name
+            value = reader.operator() if kind == "operator" else reader.density()
         if not index.free:
             # decided positions outside the sites are mistakes on rings too: only a running subscript wraps
             place, last = self.position(index, {}), self.sites.length - 1
             if not 0 <= place <= last:
                 fail(f"subscript {place} is out of range: positions run from 0 to {last}", self.text, index.start)
         return Node(kind, self._place(tree), value, (index,), index.free, index.free, kind != "entry")
-
-    def _check_order(self, index: Node, is_end: bool) -> None:
-        if not index.free or index.kind == "position":
-            return
-        if not self.sites.has_order:
-            fail("the sites of a lattice have no order: use bonds, '... for <a, b>'", self.text, index.start)
-        if is_end and len(self.sites.cell) > 1:
-            fail("the end of a bond is a site: there is no arithmetic with it", self.text, index.start)
-
-    def _entry(
-        self, name: str, index: Node, more: list[ast.expr], is_end: bool, tree: ast.AST
-    ) -> tuple[str, int | None, bool]:
-        """Name, member of the cell, and whether the list has one value per site of a cell of several."""
-        values, cell = self.parameters[name], self.sites.cell
-        assert isinstance(values, tuple)
-        if len(cell) == 1:
-            if more:
-                self._fail(f"parameter '{name}' has one subscript", more[0])
-            member, per_site, count, what = None, False, self.sites.length, "positions"
-        elif is_end or more:
-            member = None if is_end else self._member(more[0])
-            if len(more) > (0 if is_end else 1):
-                self._fail(f"parameter '{name}' has too many subscripts", more[-1])
-            per_site, count, what = True, self.sites.size, "sites"
-        else:
-            member, per_site, count, what = None, False, self.sites.length, "positions"
-            if len(values) == self.sites.size:
-                place = self.text[index.start : self._end(tree) - 1].strip()
-                self._fail(f"parameter '{name}' has one value per site: write '{name}[{place}, {cell[0]}]'", tree)
-        if len(values) > count or ((self.sites.is_ring or per_site) and len(values) != count):
-            self._fail(f"parameter '{name}' has {len(values)} values, but there are {count} {what}", tree)
-        return name, member, per_site
-
-    def _operator(self, name: str, index: Node, more: list[ast.expr], is_end: bool) -> tuple[str, int | None, str]:
-        """Name, member of the cell (None when the subscript is a site), species."""
-        cell, kinds = self.sites.cell, self.sites.kinds
-        member: int | None = 0
-        rest = list(more)
-        if len(cell) > 1:
-            if is_end:
-                member = None
-                if rest and isinstance(rest[0], ast.Name) and rest[0].id in cell:
-                    self._fail("the end of a bond is a site already: leave its name out", rest[0])
-            elif not rest:
-                message = f"'{name}' needs a site of the unit cell: write '{name}[..., {cell[0]}]'"
-                fail(f"{message} (sites: {', '.join(cell)})", self.text, index.start)
-            else:
-                member = self._member(rest.pop(0))
-        if member is not None:
-            kinds = (kinds[member],)
-        fitting = [kind for kind in kinds if name in kind.slots[0].symbols]
-        if not fitting:
-            fail(f"'{name}' does not exist on a {kinds[0].name} site", self.text, index.start)
-        species = sorted({s for kind in fitting for s in kind.species})
-        if not rest:
-            if "" not in species:
-                forms = " or ".join(f"'{name}[..., {s}]'" for s in species)
-                fail(f"'{name}' needs a species: write {forms}", self.text, index.start)
-            return name, member, ""
-        if species == [""]:
-            needed = "two subscripts" if len(cell) > 1 and not is_end else "one subscript"
-            self._fail(f"{fitting[0].name} operators have {needed}", rest[0])
-        if not isinstance(rest[0], ast.Name) or rest[0].id not in species:
-            self._fail(f"unknown species; expected {' or '.join(s for s in species if s)}", rest[0])
-        if len(rest) > 1:
-            self._fail(f"'{name}' has too many subscripts", rest[1])
-        return name, member, rest[0].id
-
-    def _member(self, tree: ast.expr) -> int:
-        if not isinstance(tree, ast.Name) or tree.id not in self.sites.cell:
-            self._fail(f"unknown site of the unit cell; expected {' or '.join(self.sites.cell)}", tree)
-        return self.sites.cell.index(tree.id)
 
     # --- subscripts: integers only
 
