@@ -10,6 +10,7 @@ if TYPE_CHECKING:
     from maxent.quench.conservation import Conservation as Conservation
     from maxent.quench.conservation import check_conservation as check_conservation
     from maxent.quench.conservation import require_conserved as require_conserved
+    from maxent.quench.conservation import state_defect as state_defect
     from maxent.quench.dephasing import Dephased as Dephased
     from maxent.quench.dephasing import dephase as dephase
     from maxent.quench.evolution import Evolution as Evolution
@@ -22,11 +23,15 @@ if TYPE_CHECKING:
     from maxent.quench.windows import gaussian_window as gaussian_window
     from maxent.quench.windows import scan_widths as scan_widths
     from maxent.quench.windows import sharp_window as sharp_window
+    from maxent.quench.yardsticks import block_bound as block_bound
+    from maxent.quench.yardsticks import plateau_window as plateau_window
+    from maxent.quench.yardsticks import revival_time as revival_time
 
 _HOME = {
     "Conservation": "conservation",
     "check_conservation": "conservation",
     "require_conserved": "conservation",
+    "state_defect": "conservation",
     "Dephased": "dephasing",
     "dephase": "dephasing",
     "Evolution": "evolution",
@@ -39,12 +44,15 @@ _HOME = {
     "gaussian_window": "windows",
     "scan_widths": "windows",
     "sharp_window": "windows",
+    "block_bound": "yardsticks",
+    "plateau_window": "yardsticks",
+    "revival_time": "yardsticks",
 }
 
 __all__ = [
-    "Conservation", "Dephased", "Evolution", "Spectrum", "Start", "check_conservation", "dephase",
-    "evolve", "gaussian_window", "ground_start", "read_start", "require_conserved", "scan_widths", "sharp_window",
-    "thermal_start",
+    "Conservation", "Dephased", "Evolution", "Spectrum", "Start", "block_bound", "check_conservation", "dephase",
+    "evolve", "gaussian_window", "ground_start", "plateau_window", "read_start", "require_conserved", "revival_time",
+    "scan_widths", "sharp_window", "state_defect", "thermal_start",
 ]  # fmt: skip
 
 

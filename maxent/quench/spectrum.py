@@ -110,7 +110,7 @@ class Spectrum:
         for i, q in enumerate(others):
             if q.shape[0] != self.whole:
                 raise ValueError(f"companion {i} has dimension {q.shape[0]}, the Hamiltonian {self.whole}")
-        self.basis = None if basis is None else _csr_basis(basis, self.whole)
+        self.basis: Any = None if basis is None else _csr_basis(basis, self.whole)
         if self.basis is not None:
             h, others = self._inside(h), [self.conjugated(q) for q in others]
         self.hamiltonian = h if sp.issparse(h) else sp.csr_array(h)
@@ -315,7 +315,8 @@ class Spectrum:
         each = 16 if np.iscomplexobj(self.hamiltonian) else 8
         sizes = counts[counts > 1].astype(float)
         need = int(each * (np.sum(sizes**2) + 3 * np.max(sizes, initial=0.0) ** 2))
-        require_memory(need, f"{self.dimension} states in blocks of up to {counts.max()} need {{need}} for eigenvectors")
+        what = f"{self.dimension} states in blocks of up to {counts.max()}"
+        require_memory(need, f"{what} need {{need}} for eigenvectors")
 
     def _say(self, number: int, what: str) -> None:
         if self._progress is not None and self.blocks[number].size > 64:

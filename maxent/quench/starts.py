@@ -56,7 +56,7 @@ class Start:
     --------
     >>> up = Start.from_vector([1, 0], label="up")
     >>> value, accuracy = up.mean([[1, 0], [0, -1]])
-    >>> value, accuracy < 1e-15
+    >>> value, accuracy < 1e-14
     (1.0, True)
     """
 
