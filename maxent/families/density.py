@@ -2,16 +2,21 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
 import scipy.sparse as sp
 
 from maxent.families.operators import operator_matrix, to_csr
+from maxent.memory import require_memory
 
 __all__ = ["Group", "MatricesState"]
+
+#: Entries of the tables that reduced states are summed from.
+CHUNK = 1 << 20
 
 
 @dataclass(frozen=True)
@@ -79,27 +84,68 @@ class MatricesState:
         whole = self.dimension if self.basis is None else self.basis.shape[0]
         if q.shape[0] != whole:
             raise ValueError(f"the operator has dimension {q.shape[0]}, the family {whole}")
-        if self.basis is not None:
-            q = self.basis.conj().T @ (q @ self.basis)
-        total = float(np.real(q.diagonal())[self.flat] @ self.flat_weights)
-        if self.groups:
-            q = to_csr(q)
-        for g in self.groups:
-            image = q[g.index][:, g.index] @ g.vectors
+        q = to_csr(q)
+        line, *insides = self._inside(q)
+        total = float(np.real(line) @ self.flat_weights)
+        for g, inside in zip(self.groups, insides, strict=True):
+            image = inside @ g.vectors
             total += float(np.real(np.einsum("ik,ik->k", g.vectors.conj(), image)) @ g.weights)
         return total
 
-    def density(self) -> np.ndarray:
-        """The whole density matrix (D, D), dense."""
-        groups = [Group(self.flat, np.eye(len(self.flat)), self.flat_weights), *self.groups]
-        dtype = complex if any(np.iscomplexobj(g.vectors) for g in groups) else float
-        rho = np.zeros((self.dimension, self.dimension), dtype)
-        for g in groups:
-            rho[np.ix_(g.index, g.index)] += g.density()
+    def _inside(self, q: sp.csr_array) -> Iterator[Any]:
+        """An operator of the user's space: its diagonal on `flat`, then its sparse blocks on the groups."""
         if self.basis is None:
-            return rho
-        rho = self.basis @ rho @ self.basis.conj().T
-        return np.asarray(rho)
+            yield q.diagonal()[self.flat]
+            for g in self.groups:
+                yield q[g.index][:, g.index]
+            return
+        for i, columns in enumerate(self._columns):
+            image = q @ columns
+            yield columns.conj().multiply(image).sum(axis=0) if i == 0 else columns.conj().T @ image
+
+    @cached_property
+    def _columns(self) -> list[sp.csr_array]:
+        """The states of `flat` and of every group in the user's space, sparse (D, k) each."""
+        basis = sp.csc_array(self.basis)
+        return [basis[:, index].tocsr() for index in (self.flat, *(g.index for g in self.groups))]
+
+    def density(self) -> np.ndarray:
+        """The whole density matrix (D, D), dense.
+
+        Raises
+        ------
+        ResourceError
+            When it would not fit into memory; `reduced` and `mean` do without it.
+        """
+        d = self.dimension if self.basis is None else self.basis.shape[0]
+        require_memory(self._dtype.itemsize * d * d, f"the density matrix of {d} states needs {{need}}")
+        rho = np.zeros((d, d), self._dtype)
+        for rows, amplitudes, weights in self._amplitudes():
+            block = (amplitudes * weights) @ amplitudes.conj().T
+            if sp.issparse(block):
+                block = block.tocoo()
+                rho[rows[block.row], rows[block.col]] += block.data
+            else:
+                rho[np.ix_(rows, rows)] += block
+        return rho
+
+    @property
+    def _dtype(self) -> np.dtype:
+        """Of density matrices over the user's basis states."""
+        every = [float, *(g.vectors.dtype for g in self.groups), *([] if self.basis is None else [self.basis.dtype])]
+        return np.result_type(*every)
+
+    def _amplitudes(self) -> Iterator[tuple[np.ndarray, Any, np.ndarray]]:
+        """Eigenstates over the user's basis states: (rows (n,), amplitudes (n, k) sparse or dense, weights (k,))."""
+        if self.basis is None:
+            yield self.flat, sp.eye_array(len(self.flat), format="csr"), self.flat_weights
+            for g in self.groups:
+                yield g.index, g.vectors, g.weights
+            return
+        for columns, g in zip(self._columns, (None, *self.groups), strict=True):
+            rows = np.flatnonzero(np.diff(columns.indptr))
+            part = columns[rows]
+            yield (rows, part, self.flat_weights) if g is None else (rows, part @ g.vectors, g.weights)
 
     def reduced(self, sites: Sequence[int]) -> np.ndarray:
         """Density matrix of some sites, the others traced out.
@@ -128,34 +174,28 @@ class MatricesState:
             raise ValueError(f"sites must be different numbers in 0..{len(self.dims) - 1}, not {list(sites)}")
         shape = [self.dims[s] for s in kept]
         size = int(np.prod(shape, dtype=int))
-        pieces = self._in_user_space()
-        out = np.zeros((size, size), complex if any(np.iscomplexobj(p) for _, p in pieces) else float)
-        for index, block in pieces:
-            digits = np.unravel_index(index, self.dims)
-            inner = np.ravel_multi_index([digits[s] for s in kept], shape) if kept else np.zeros(len(index), int)
-            outside = [s for s in range(len(self.dims)) if s not in set(kept)]
-            rest = (
-                np.ravel_multi_index([digits[s] for s in outside], [self.dims[s] for s in outside])
-                if outside
-                else 0 * inner
-            )
-            if block.ndim == 1:
-                np.add.at(out, (inner, inner), block)
+        outside = [s for s in range(len(self.dims)) if s not in set(kept)]
+        out = np.zeros((size, size), self._dtype)
+        for rows, amplitudes, weights in self._amplitudes():
+            digits = np.unravel_index(rows, self.dims)
+            inner = np.ravel_multi_index([digits[s] for s in kept], shape) if kept else np.zeros(len(rows), int)
+            rest = np.zeros(len(rows), int)
+            for s in outside:
+                rest = rest * self.dims[s] + digits[s]
+            others, rest = np.unique(rest, return_inverse=True)
+            roots = np.sqrt(np.maximum(weights, 0.0))
+            if sp.issparse(amplitudes):
+                entries = sp.coo_array(amplitudes * roots)
+                where = (inner[entries.row], rest[entries.row] * amplitudes.shape[1] + entries.col)
+                spread = sp.csr_array((entries.data, where), shape=(size, len(others) * amplitudes.shape[1]))
+                out += (spread @ spread.conj().T).toarray()
                 continue
-            order = np.argsort(rest, kind="stable")
-            for same in np.split(order, np.flatnonzero(np.diff(rest[order])) + 1):
-                out[np.ix_(inner[same], inner[same])] += block[np.ix_(same, same)]
+            # the states of the other sites and the eigenstates are one index that is summed over, some at a time
+            step = max(1, CHUNK // (size * len(others)))
+            for k in range(0, amplitudes.shape[1], step):
+                part = amplitudes[:, k : k + step] * roots[k : k + step]
+                table = np.zeros((size, len(others), part.shape[1]), part.dtype)
+                table[inner, rest] = part
+                flat = table.reshape(size, -1)
+                out += flat @ flat.conj().T
         return out
-
-    def _in_user_space(self) -> list[tuple[np.ndarray, np.ndarray]]:
-        """Blocks (index, density or diagonal) over the product basis of the sites."""
-        if self.basis is None:
-            return [(self.flat, self.flat_weights), *[(g.index, g.density()) for g in self.groups]]
-        columns = sp.csr_array(self.basis)
-        if columns.nnz == columns.shape[1] and np.all(columns.data == 1.0):
-            where = columns.tocsc().indices  # a selection of product states
-            return [
-                (where[self.flat], self.flat_weights),
-                *[(where[g.index], g.density()) for g in self.groups],
-            ]
-        return [(np.arange(columns.shape[0]), self.density())]

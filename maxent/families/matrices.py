@@ -208,12 +208,12 @@ class Matrices(Finite):
         dense = self.blocks.prior_dense if of_prior else [a[j] for a in self.blocks.dense]
         for (index, frame), a in zip(self.placed, dense, strict=True):
             parts.append((index, a if frame is None else frame @ a @ frame.conj().T))
-        total = sp.csr_array((self.dimension, self.dimension))
-        for index, part in parts:
-            piece = sp.coo_array(part)
-            row, column = piece.coords
-            shape = (self.dimension, self.dimension)
-            total = total + sp.csr_array((piece.data, (index[row], index[column])), shape=shape)
+        pieces = [sp.coo_array(part) for _, part in parts]
+        rows = np.concatenate([i[p.coords[0]] for (i, _), p in zip(parts, pieces, strict=True)])
+        columns = np.concatenate([i[p.coords[1]] for (i, _), p in zip(parts, pieces, strict=True)])
+        data = np.concatenate([p.data for p in pieces])
+        total = sp.csr_array((data, (rows, columns)), shape=(self.dimension, self.dimension))
+        total.eliminate_zeros()
         return total
 
     # ------------------------------------------------------------------ sectors, windows
@@ -231,7 +231,8 @@ class Matrices(Finite):
         Matrices
             Its ``mean`` and ``reduced`` take the same operators as before.
         """
-        if sp.issparse(part) or np.ndim(part) == 2:
+        selects = not (sp.issparse(part) or np.ndim(part) == 2)
+        if not selects:
             isometry = checked_basis(part)
             if isometry.shape[0] != self.dimension:
                 raise ValueError(f"the isometry has {isometry.shape[0]} rows, the family {self.dimension} states")
@@ -242,14 +243,14 @@ class Matrices(Finite):
             isometry = sp.eye_array(self.dimension, format="csc")[:, keep].tocsr()
         if not isometry.shape[1]:
             raise ValueError("no state left after the restriction")
-        inside = lambda q: isometry.conj().T @ (q @ isometry)
+        inside = lambda q: q[keep][:, keep] if selects else isometry.conj().T @ (q @ isometry)
         charges = [inside(self._operator(j)) for j in range(len(self.names))]
         has_prior = self.blocks.has_prior
         prior = inside(self._operator(0, of_prior=True)) if has_prior else None
         basis = isometry if self.basis is None else self.basis @ isometry
         new = object.__new__(Matrices)
         new._build(charges, prior, self.names, isometry.shape[1], basis, self.dims)
-        if self._given is None or sp.issparse(part) or np.ndim(part) == 2:
+        if self._given is None or not selects:
             object.__setattr__(new, "_given", None)  # these charges were computed, not given
         return new
 
