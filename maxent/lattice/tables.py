@@ -96,8 +96,10 @@ class WordTable:
         ResourceError
             When it would not fit; nothing has been allocated then.
         """
-        most = int(sum(np.ceil(d.fraction * self.dim) for d in self.diagonals))
-        digits = sum(d > 1 for d in self.dims)
+        # whole numbers: d may be far beyond what a float holds, and must be refused with its size
+        most = sum((int(d.fraction * 2**40) + 1) * self.dim // 2**40 + 1 for d in self.diagonals)
+        kinds = set(self.dims)
+        states = f"{kinds.pop()}^{len(self.dims)}" if len(kinds) == 1 else str(self.dim)
         return assemble(
             self._rows,
             dim=self.dim,
@@ -105,8 +107,8 @@ class WordTable:
             dtype=self.dtype,
             count=len(self.diagonals),
             chunk=_CHUNK,
-            scratch=64 + 8 * digits,
-            what=f"{self.dim} states need {{need}} for this operator",
+            scratch=64 + 8 * len(self.dims),
+            what=f"{states} states need {{need}} for this operator",
             limit=limit,
         )
 

@@ -42,3 +42,36 @@ class Site:
 
 def comm(a, b):
     return a @ b - b @ a
+
+
+# --- other kinds of sites, each by its textbook matrices
+
+
+def spin(s):
+    """Sx, Sy, Sz of a spin s from S+|m> = sqrt(s(s+1) - m(m+1)) |m+1>, basis m = s..-s."""
+    m = np.arange(s, -s - 1, -1)
+    plus = np.diag(np.sqrt(s * (s + 1) - m[1:] * (m[1:] + 1)), 1)
+    return {
+        "Sx": (plus + plus.T) / 2,
+        "Sy": (plus - plus.T) / 2j,
+        "Sz": np.diag(m),
+        "Splus": plus,
+        "Sminus": plus.T,
+    }
+
+
+def boson(cutoff):
+    b = np.diag(np.sqrt(np.arange(1, cutoff + 1)), 1)
+    return {"b": b, "n": np.diag(np.arange(cutoff + 1))}
+
+
+def embedded(matrix, slot, dims):
+    """Matrix on one factor of a tensor product."""
+    factors = [np.eye(d) for d in dims]
+    factors[slot] = matrix
+    return reduce(np.kron, factors)
+
+
+def fermion(slot, size):
+    """Annihilator of a mode by strings of diag(1, -1) on the modes before it; basis (empty, occupied)."""
+    return reduce(np.kron, [np.diag([1, -1])] * slot + [np.array([[0, 1], [0, 0]])] + [np.eye(2)] * (size - slot - 1))
