@@ -142,10 +142,10 @@ class MatricesState:
             for g in self.groups:
                 yield g.index, g.vectors, g.weights
             return
-        for columns, g in zip(self._columns, (None, *self.groups), strict=True):
+        for columns, group in zip(self._columns, (None, *self.groups), strict=True):
             rows = np.flatnonzero(np.diff(columns.indptr))
             part = columns[rows]
-            yield (rows, part, self.flat_weights) if g is None else (rows, part @ g.vectors, g.weights)
+            yield (rows, part, self.flat_weights) if group is None else (rows, part @ group.vectors, group.weights)
 
     def reduced(self, sites: Sequence[int]) -> np.ndarray:
         """Density matrix of some sites, the others traced out.
