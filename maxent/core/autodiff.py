@@ -10,6 +10,7 @@ iteration itself is never differentiated.  Floor: core.
 
 from __future__ import annotations
 
+from dataclasses import replace
 from functools import partial
 from typing import Any, NamedTuple
 
@@ -65,7 +66,9 @@ def fit(family: Family, targets: Any, free: tuple[int, ...], m: int, iterations:
     # the iteration sees constants: its derivative is attached afterwards
     still, q = jax.lax.stop_gradient((family, targets))
     start, picked = jnp.zeros(len(free)), jnp.array(free, int)
-    first = still.evaluate(spread_out(start, free, m))
+    # spread and rank under the counting measure: a peaked prior can hide them
+    counting = replace(still, prior=None, prior_dense=()) if isinstance(still, Blocks) else still
+    first = counting.evaluate(spread_out(start, free, m))
     h0 = first.covariance[jnp.ix_(picked, picked)]
     transform = whitener(h0)
 

@@ -89,25 +89,34 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
     """
     k, n = family.diagonal.shape
     log_weights = jnp.zeros(n) if family.prior is None else family.prior
-    p0 = jax.nn.softmax(log_weights)
-    mean = family.diagonal @ p0
+    # spread and rank under the counting measure: peaked weights can hide them
+    mean = jnp.mean(family.diagonal, axis=1)
     centred = family.diagonal - mean[:, None]
-    covariance = (centred * p0) @ centred.T
+    covariance = centred @ centred.T / n
     transform = whitener(covariance)
     # combinations without any spread keep the multiplier zero; a one on their diagonal leaves them alone
     dead = jnp.where(jnp.any(transform != 0, axis=1), 0.0, 1.0)
     agrees = jax.vmap(lambda t: consistent(covariance, mean, t))(targets)
     w = transform @ centred
     reach = jnp.sqrt(jnp.max(jnp.sum(w * w, axis=0)))
-    third = jnp.einsum("an,bn,cn->abc", w * p0, w, w)
+    p0 = jax.nn.softmax(log_weights)
+    first = w @ p0
+    off_mean = w - first[:, None]
+    second, third = (off_mean * p0) @ off_mean.T, jnp.einsum("an,bn,cn->abc", off_mean * p0, off_mean, off_mean)
     blurs = EPS * norm(jnp.abs(transform) @ (jnp.abs(mean)[:, None] + jnp.abs(targets.T)), axis=0)
     double = _Moments(w, log_weights, dead, reach, EPS)
     single = _Moments(*(a.astype(jnp.float32) for a in (w, log_weights, dead, reach)), float(np.finfo(np.float32).eps))
 
-    def one(pair: tuple[Any, Any]) -> tuple[Any, ...]:
-        q, blur = pair
-        # <w>(x) = -x + third[x, x]/2 - ..., inverted; far targets start on their ray instead
-        x = jnp.where(norm(q) < 1.0, -q + 0.5 * third @ q @ q, -q / jnp.maximum(1.0, norm(q)))
+    def guess(q: Any) -> tuple[Any, Any]:
+        # <w>(x) = first - second x + third[x, x]/2 - ..., inverted; far targets start on their ray instead
+        ahead = double.newton(q - first, second)
+        distance = jnp.sqrt(jnp.maximum(ahead @ (q - first), 0.0))
+        bent = double.newton(0.5 * third @ ahead @ ahead, second)
+        x = jnp.where(distance < 1.0, bent - ahead, -ahead / jnp.maximum(1.0, distance))
+        return x * jnp.minimum(1.0, 10.0 / jnp.maximum(norm(x), 1.0)), distance
+
+    def one(pair: tuple[Any, ...]) -> tuple[Any, ...]:
+        q, blur, x = pair
         rough = single.descend(single.unknown(x.astype(jnp.float32), q.astype(jnp.float32)), 0.0, min(iterations, 12))
         near = jnp.where(single.settled(rough, 0.0), rough.x + rough.step, rough.x).astype(x.dtype)
         found, weights = double.begin(jnp.where(jnp.all(jnp.isfinite(near)), near, x), q)
@@ -126,8 +135,9 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
 
     white = (targets - mean) @ transform.T
     # a batch takes as many steps as its slowest fit: fits that lie equally far out go together
-    order = jnp.argsort(norm(white, axis=1))
-    found = jax.lax.map(one, (white[order], blurs[order]), batch_size=batch)
+    starts, distances = jax.vmap(guess)(white)
+    order = jnp.argsort(distances)
+    found = jax.lax.map(one, (white[order], blurs[order], starts[order]), batch_size=batch)
     back = jnp.argsort(order)
     x, converged, steps, log_z, left = jax.tree.map(lambda a: a[back], found)
     lam = x @ transform
