@@ -19,7 +19,6 @@ from functools import cached_property
 from typing import Any
 
 import numpy as np
-import scipy.sparse as sp
 
 from maxent.memory import require_memory
 from maxent.quench.dephasing import Dephased, dephase
@@ -30,7 +29,7 @@ __all__ = ["Evolution", "Fluctuation", "evolve"]
 
 EPS = float(np.finfo(float).eps)
 #: Default time up to which equal gaps are told apart, in units of 1/(spectral width).
-RESOLVED = 1e10
+RESOLVED = 1e11
 #: Phases may be off by this much, in radians.
 PHASE = 1e-2
 
@@ -171,7 +170,7 @@ class Evolution:
         name : str
         resolution : float, optional
             Time up to which gaps are told apart: those closer than 1/resolution are equal, those below it are zero.
-            Default 1e10/(spectral width), far above rounding.
+            Default 1e11/(spectral width), far above rounding.
 
         Returns
         -------
@@ -287,27 +286,28 @@ def evolve(
     for name, operator in observables.items():
         if progress is not None and n > 200:
             progress(f"elements of {name} between {n} energies")
-        elements[name] = _between_energies(dephased, dephased.spectrum.conjugated(operator))
+        elements[name] = _between_energies(dephased, operator)
     return Evolution(dephased, elements)
 
 
-def _between_energies(dephased: Dephased, q: sp.csr_array) -> np.ndarray:
+def _between_energies(dephased: Dephased, operator: Any) -> np.ndarray:
     """``A_mn`` by pairs of blocks: elements between levels times amplitudes, summed over the levels of each energy."""
     spectrum, n = dephased.spectrum, len(dephased.energies)
-    blocks = [
-        (i, block, np.flatnonzero((dephased.levels >= block.start) & (dephased.levels < block.start + block.size)))
-        for i, block in enumerate(spectrum.blocks)
-    ]
-    blocks = [found for found in blocks if len(found[2])]
-    out = np.zeros((n, n), complex)
-    for i, left, ours in blocks:
-        rows = q[left.index]
-        u = spectrum.block_vectors(i)[:, dephased.levels[ours] - left.start]
-        for j, right, theirs in blocks:
-            part = rows[:, right.index]
+    levels, out = dephased.levels, np.zeros((n, n), complex)
+    blocks, at = [], 0
+    for i, block in enumerate(spectrum.blocks):
+        first, last = np.searchsorted(levels, [block.start, block.start + block.size])
+        if last > first:
+            vectors = spectrum.block_vectors(i)[:, levels[first:last] - block.start]
+            blocks.append((slice(at, at + block.size), slice(first, last), vectors, block.index))
+            at += block.size
+    q = spectrum.conjugated(operator, states=np.concatenate([index for *_, index in blocks]))
+    for left, ours, u, _ in blocks:
+        rows = q[left].tocsc()
+        for right, theirs, v, _ in blocks:
+            part = rows[:, right]
             if not part.nnz:
                 continue
-            v = spectrum.block_vectors(j)[:, dephased.levels[theirs] - right.start]
             product = u.conj().T @ (part @ v)
             product = product * (dephased.amplitudes[ours].conj() @ dephased.amplitudes[theirs].T)
             product, m = _summed(product, dephased.clusters[ours], 0)

@@ -238,14 +238,23 @@ class Spectrum:
             out[np.ix_(block.index, columns)] = self.block_vectors(int(i))[:, numbers[columns] - block.start]
         return out if self.basis is None else self.basis @ out
 
-    def conjugated(self, operator: Any) -> Any:
-        """``B^H Q B`` as CSR, without what rounding left; the operator itself where there is no basis."""
+    def conjugated(self, operator: Any, *, states: Any = None) -> Any:
+        """``B^H Q B`` as CSR, without what rounding left; the operator itself where there is no basis.
+
+        Parameters
+        ----------
+        operator : OperatorSum or (D, D) array_like or scipy.sparse
+        states : (k,) ndarray of int, optional
+            Only between these states of the basis, in this order.
+        """
         q = as_matrix(operator, "operator")
         if q.shape[0] != self.whole:
             raise ValueError(f"the operator has dimension {q.shape[0]}, the Hamiltonian {self.whole}")
+        q = sp.csr_array(q)
         if self.basis is None:
-            return sp.csr_array(q)
-        return without_dirt(self.basis.conj().T @ (sp.csr_array(q) @ self.basis))
+            return q if states is None else q[states][:, states]
+        basis = self.basis if states is None else self.basis[:, states]
+        return without_dirt(basis.conj().T @ (q @ basis))
 
     def state(self, weights: Any, *, log_partition: float = float("nan")) -> MatricesState:
         """State with these probabilities on the levels.

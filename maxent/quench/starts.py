@@ -8,6 +8,8 @@ Hamiltonian drives the dynamics.
 from __future__ import annotations
 
 import math
+import zipfile
+import zlib
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -351,23 +353,27 @@ def read_start(file: str | Path, *, label: str | None = None) -> Start:
     path, _, name = text.rpartition(":") if ".npz:" in text else (text, "", "")
     if not path.endswith((".npy", ".npz")):
         raise ValueError(f"{text!r} is no file of arrays; expected name.npy or name.npz:array")
-    try:
-        loaded = np.load(path, allow_pickle=False)
-        if path.endswith(".npz"):
-            with loaded:
-                if not name and len(loaded.files) == 1:
-                    name = loaded.files[0]
-                if name not in loaded.files:
-                    raise KeyError(", ".join(map(repr, loaded.files)) or "none")
-                value = loaded[name]
-        else:
-            value = loaded
-    except KeyError as error:
-        asked = f"no array {name!r}" if name else "more than one array, say which after a colon"
-        raise ValueError(f"{path!r} has {asked}; it holds {error.args[0]}") from None
-    except (ValueError, EOFError) as error:
-        reason = "holds Python objects, which are not loaded" if "pickle" in str(error).lower() else "is damaged"
-        raise ValueError(f"{path!r} {reason}") from None
+    zipped = path.endswith(".npz")
+    with open(path, "rb") as stream:
+        head = stream.read(6)
+        if not head.startswith(b"PK" if zipped else b"\x93NUMPY"):
+            raise ValueError(f"{path!r} is not what its ending says")
+        stream.seek(0)
+        try:
+            loaded = np.load(stream, allow_pickle=False)
+            held = loaded.files if zipped else []
+            if zipped and not name and len(held) == 1:
+                name = held[0]
+            if zipped and name not in held:
+                asked = f"no array {name!r}" if name else "more than one array, say which after a colon"
+                raise KeyError(f"{path!r} has {asked}; it holds {', '.join(map(repr, held)) or 'none'}")
+            value = loaded[name] if zipped else loaded
+        except KeyError as error:
+            raise ValueError(error.args[0]) from None
+        except (ValueError, EOFError, zipfile.BadZipFile, zlib.error) as error:
+            pickled = "allow_pickle" in str(error)
+            reason = "holds Python objects, which are not loaded" if pickled else "is damaged"
+            raise ValueError(f"{path!r} {reason}") from None
     title = label or Path(path).name + (f":{name}" if name else "")
     return Start.from_density(value, label=title) if value.ndim == 2 else Start.from_vector(value, label=title)
 
