@@ -98,6 +98,7 @@ class Reader:
         clause = _clause(cut.clause)
         for token in clause.names:
             self.positions.add(token.text)
+        self._check_clause(clause)
         self.ends = clause.ends
         summands = []
         has_conjugate = False
@@ -381,6 +382,7 @@ class Reader:
             relation = "<>"
         names = [Token("name", part.id, self._place(part)) for part in _chained(clause)]
         found = _Clause(tuple(names[:2]), relation, names[2] if len(names) > 2 else None)
+        self._check_clause(found)
         outside = self.ends
         self.ends = (outside - {token.text for token in found.names}) | found.ends
         node = self._node(body)
@@ -388,14 +390,7 @@ class Reader:
         return self._pairs(node, found)
 
     def _pairs(self, body: Node, clause: _Clause) -> Node:
-        for token in clause.names:
-            if token.text in self.parameters or token.text in self.densities or token.text in self.reserved:
-                fail(f"'{token.text}' has a meaning already and cannot be a subscript", self.text, token.start)
         bound = tuple(token.text for token in clause.names)
-        if len(set(bound)) != len(bound):
-            fail("the two subscripts behind 'for' must differ", self.text, clause.names[1].start)
-        if clause.relation == "<>":
-            self._check_bonds(clause)
         summands = body.items if body.kind == "sum" else (body,)
         for summand in summands:
             missing = [name for name in bound if name not in summand.free]
@@ -406,7 +401,16 @@ class Reader:
         left = set(bound)
         return Node("pairs", body.start, value, (body,), body.free - left, body.subscripts - left, body.is_operator)
 
-    def _check_bonds(self, clause: _Clause) -> None:
+    def _check_clause(self, clause: _Clause) -> None:
+        """Refuse subscripts and bonds that cannot be, before the summands are read with them."""
+        for token in clause.names:
+            if token.text in self.parameters or token.text in self.densities or token.text in self.reserved:
+                fail(f"'{token.text}' has a meaning already and cannot be a subscript", self.text, token.start)
+        bound = tuple(token.text for token in clause.names)
+        if len(set(bound)) != len(bound):
+            fail("the two subscripts behind 'for' must differ", self.text, clause.names[1].start)
+        if clause.relation != "<>":
+            return
         known = ", ".join(self.sites.bonds)
         if not known:
             fail(f"{self.sites} has no bonds: give bonds={{'name': [...]}}", self.text, clause.names[0].start)

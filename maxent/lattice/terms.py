@@ -19,6 +19,7 @@ from maxent.lattice import words as algebra
 from maxent.lattice.coefficients import NOTHING, Coefficient, Value
 from maxent.lattice.exact import Complex, from_complex
 from maxent.lattice.matrices import BitTable
+from maxent.lattice.onebody import NotQuadraticError, OneBody, one_body
 from maxent.lattice.parameters import check_parameter, is_complex
 from maxent.lattice.printing import sum_text, word_text
 from maxent.lattice.sites import Sites
@@ -122,11 +123,7 @@ class OperatorSum:
     def non_hermitian_word(self) -> str | None:
         """None for a Hermitian sum, otherwise one word whose coefficient the conjugate does not have, as text."""
         word = algebra.unpaired(self._words, self.sites.slots)
-        if word is None:
-            return None
-        sign, name = word_text(word, self.sites)
-        coefficient = self._words.get(word, NOTHING).times((sign, 0))
-        return f"{name or '1'} with the coefficient {coefficient}"
+        return None if word is None else self._shown(word)
 
     @property
     def is_hermitian(self) -> bool:
@@ -332,7 +329,43 @@ class OperatorSum:
             raise ValueError(f"action: the vector needs {rows} rows, its shape is {vector.shape}")
         return self._arrays().action(vector)
 
+    def one_body(self) -> OneBody:
+        """One-body matrix, and pairing matrix where there is one, of a quadratic fermion or boson sum.
+
+        Returns
+        -------
+        OneBody
+            ``constant + sum A_st dagger(a_s) a_t + 1/2 sum (B_st dagger(a_s) dagger(a_t) + h.c.)`` at the current
+            parameters. Needs no cut-off.
+
+        Raises
+        ------
+        ValueError
+            When the sum is not Hermitian, the sites hold spins or both fermions and bosons, or a word is not
+            quadratic; names the first such word.
+
+        Examples
+        --------
+        >>> from maxent.lattice import Fermions, Ring, formula
+        >>> hopping = formula("-t*(dagger(c[i])*c[i+1] + h.c.)", Ring(3, Fermions()), {"t": 1.0})
+        >>> hopping.one_body().matrix.tolist()
+        [[0.0, -1.0, -1.0], [-1.0, 0.0, -1.0], [-1.0, -1.0, 0.0]]
+        """
+        bad = self.non_hermitian_word
+        if bad is not None:
+            raise ValueError(f"one_body: not Hermitian: it holds {bad}")
+        try:
+            return one_body(self._numeric(), self.sites)
+        except NotQuadraticError as error:
+            raise ValueError(f"one_body: not quadratic: it holds {self._shown(error.word)}") from None
+
     # --- helpers
+
+    def _shown(self, word: Word) -> str:
+        """Word with its coefficient, for messages."""
+        sign, name = word_text(word, self.sites)
+        coefficient = self._words.get(word, NOTHING).times((sign, 0))
+        return f"{name or '1'} with the coefficient {coefficient}"
 
     def _numeric(self) -> list[tuple[Word, complex]]:
         result = []
