@@ -5,7 +5,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from maxent.errors import FormulaError
-from maxent.lattice import Chain, Ring, formula
+from maxent.lattice import Bosons, Chain, Fermions, Lattice, Ring, Spin, formula
 
 PARAMETERS = {"J": 0.75, "i": 2.0, "w": [0.5, -1.0, 0.25, 2.0], "z": 0.5 + 0.25j}
 SITES = st.sampled_from([Ring(4), Chain(4)])
@@ -121,15 +121,33 @@ pieces = st.sampled_from(
 
 @settings(max_examples=600, deadline=None)
 @given(
-    st.lists(pieces, max_size=9).map("".join)
-    | st.lists(pieces, max_size=9).map(" ".join)
-    | st.text(max_size=12),
+    st.lists(pieces, max_size=9).map("".join) | st.lists(pieces, max_size=9).map(" ".join) | st.text(max_size=12),
     SITES,
 )
 def test_no_text_does_anything_but_a_sum_or_a_formula_error(text, sites):
-    densities = {"e": "Sz[i]*Sz[i+1]"}
+    refused_or_read(text, sites, {"e": "Sz[i]*Sz[i+1]"})
+
+
+def refused_or_read(text, sites, densities):
     try:
         formula(text, sites, {"J": 0.5, "w": [1.0, 2.0, 3.0, 4.0]}, densities)
     except FormulaError as error:
         assert "\n" not in str(error)
         assert 1 <= error.column <= len(error.text) + 1
+
+
+CELLS = Ring(2, {"a": Fermions("up", "down"), "s": Spin(1)}, bonds={"rungs": [("a", "s")], "legs": [("a", "a", 1)]})
+SQUARE = Lattice.grid(2, 2, kind=Bosons(cutoff=2))
+more_pieces = pieces | st.sampled_from(
+    ["<", ">", "<x, y>", "in", "rungs", "legs", "along", "for <x, y>", "a", "s", "up", "x", "y", "c[i, a, up]"]
+    + ["c[x, up]", "c[y, up]", "Sz[i, s]", "Sz[y]", "n[i]", "b[x]", "n[y]", "w[i, a]", "w[x]", "dagger(", "c", "n", "b"]
+)
+
+
+@settings(max_examples=600, deadline=None)
+@given(
+    st.lists(more_pieces, max_size=9).map("".join) | st.lists(more_pieces, max_size=9).map(" ".join),
+    st.sampled_from([CELLS, SQUARE]),
+)
+def test_no_text_about_cells_and_bonds_does_anything_else(text, sites):
+    refused_or_read(text, sites, {"e": "n[0]" if sites is SQUARE else "Sz[i, s]"})
