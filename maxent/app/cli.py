@@ -13,6 +13,7 @@ import os
 import sys
 from collections.abc import Callable, Sequence
 from pathlib import Path as File
+from typing import Any
 
 from maxent.errors import ConfigError
 from maxent.version import __version__
@@ -58,6 +59,24 @@ def parser() -> argparse.ArgumentParser:
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )
     check.add_argument("config", metavar="CONFIG", type=File, help="TOML file, see docs/config.md")
+    charges = commands.add_parser(
+        "charges",
+        help="find the local operators that a Hamiltonian conserves",
+        description="Find the translation-invariant local operators that commute with the Hamiltonian of a config, up "
+        "to a range and at infinite volume, and print them as charges that can be pasted into the config.",
+        epilog=f"example: multipliers charges configs/xxz_ring_quench.toml --range 5\n\n{_CODES}",
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    charges.add_argument("config", metavar="CONFIG", type=File, help="TOML file of kind spins, see docs/config.md")
+    charges.add_argument("--range", metavar="N", type=_whole, default=4, help="most neighbouring sites (default: 4)")
+    charges.add_argument(
+        "--momentum",
+        choices=["0", "pi", "both"],
+        default="0",
+        help="pi: operators whose sign alternates from cell to cell (default: 0)",
+    )
+    charges.add_argument("--json", action="store_true", help="print everything as JSON instead of the tables")
+    charges.add_argument("--quiet", action="store_true", help="no progress on stderr")
     return top
 
 
@@ -76,7 +95,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     """
     try:
         given = parser().parse_args(arguments)
-        return _solve(given) if given.command == "solve" else _check(given)
+        return {"solve": _solve, "check": _check, "charges": _charges}[given.command](given)
     except ConfigError as bad:
         print(bad, file=sys.stderr)
         return 2
@@ -126,6 +145,28 @@ def _check(given: argparse.Namespace) -> int:
     ]
     _show("\n\n".join(parts) + "\n")
     return 0
+
+
+def _charges(given: argparse.Namespace) -> int:
+    from maxent.app.charges import search, summary
+
+    momenta: Any = ("0", "pi") if given.momentum == "both" else (given.momentum,)
+    say: Callable[[str], None] = (lambda line: None) if given.quiet else _log
+    found = search(given.config, given.range, momenta, say=say)
+    if given.json:
+        from maxent.app.record import dump
+
+        _show(dump(found))
+    else:
+        _show(summary(found) + "\n")
+    return 0
+
+
+def _whole(text: str) -> int:
+    """Read a whole number from 1 on."""
+    if not text.isdecimal() or int(text) < 1:
+        raise argparse.ArgumentTypeError(f"expected a whole number from 1 on, got {text!r}")
+    return int(text)
 
 
 def _show(text: str) -> None:

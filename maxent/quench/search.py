@@ -215,7 +215,7 @@ class _Space:
             return None
         rows = np.zeros((len(level.lowest), self.size))
         rows[:, : level.lowest.shape[1]] = level.lowest
-        row = echelon(rows, np.arange(self.size))[0][0]
+        row = echelon(rows, [(np.arange(self.size), len(rows))])[0]
         charge = self.charge(row / np.linalg.norm(row), fractions=False)
         return NearlyConserved(level.value, len(rows), charge)
 
@@ -305,16 +305,15 @@ def _readable(space: _Space, levels: Sequence[_Level]) -> list[np.ndarray]:
     for k, level in enumerate(levels, start=1):
         new = []
         for some, rows in level.parts:
+            added = len(rows) - sum(bool(np.any(row[some])) for row in found)
             wide = space.ranges[some] == k
-            if not wide.any():
-                continue
-            order = np.lexsort((np.arange(len(some)), -space.ranges[some]))
-            form, pivots = echelon(rows, order)
-            for row in form[wide[pivots]]:
+            narrower = np.flatnonzero(~wide)
+            order = narrower[np.argsort(-space.ranges[some][narrower], kind="stable")]
+            form = echelon(rows, [(np.flatnonzero(wide), added), (order, len(rows) - added)])
+            for row in form[:added]:
                 full = np.zeros(space.size)
                 full[some] = row
                 new.append(full)
-        assert len(found) + len(new) == level.count, "the null spaces of the ranges are not nested"
         if level.count <= _MANY:
             for j, row in enumerate(new):
                 new[j] = shorten(row, [*found, *new[:j], *new[j + 1 :]])

@@ -25,38 +25,41 @@ ROUNDING = 1e-11
 _LARGEST = 9999
 
 
-def echelon(rows: np.ndarray, order: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Reduced echelon form of independent rows, with the columns taken in a given order.
+def echelon(rows: np.ndarray, groups: Sequence[tuple[np.ndarray, int]]) -> np.ndarray:
+    """Reduced echelon form of independent rows, with pivots in given columns.
 
     Parameters
     ----------
     rows : (d, n) ndarray
         Orthonormal.
-    order : (n,) int ndarray
-        Columns, those that shall hold the pivots first.
+    groups : sequence of ((k,) int ndarray, int)
+        Columns in order of preference, and how many pivots they shall hold; d pivots in all.
 
     Returns
     -------
-    form : (d, n) ndarray
-        Same row space; each row is 1 at its own pivot and 0 at those of the others.
-    pivots : (d,) int ndarray
-        In the order in which they were found.
+    (d, n) ndarray
+        Same row space, in the order of the pivots; each row is 1 at its own pivot and 0 at those of the others.
     """
     left = rows.copy()
     pivots: list[int] = []
-    for column in order:
+
+    def take(column: int) -> None:
         done = len(pivots)
-        if done == len(rows):
-            break
         best = done + int(np.argmax(np.abs(left[done:, column])))
-        if abs(left[best, column]) < 1e-6:
-            continue
         left[[done, best]] = left[[best, done]]
         left[done + 1 :] -= np.outer(left[done + 1 :, column] / left[done, column], left[done])
-        pivots.append(int(column))
+        pivots.append(column)
+
+    for columns, count in groups:
+        end = len(pivots) + count
+        for column in columns:
+            if len(pivots) < end and np.abs(left[len(pivots) :, column]).max() > 1e-3:
+                take(int(column))
+        while len(pivots) < end:  # only small entries are left: the largest one, whatever its place
+            sizes = np.abs(left[len(pivots) :, columns]).max(axis=0)
+            take(int(columns[np.argmax(sizes)]))
     # solved anew from the orthonormal rows, so that the elimination leaves no rounding behind
-    form = np.linalg.solve(rows[:, pivots], rows)
-    return cleaned(form), np.array(pivots, int)
+    return cleaned(np.linalg.solve(rows[:, pivots], rows))
 
 
 def cleaned(rows: np.ndarray) -> np.ndarray:

@@ -21,6 +21,7 @@ positional arguments:
   COMMAND
     solve     find the multipliers and write a run folder
     check     everything but the fit: read, build, show sizes
+    charges   find the local operators that a Hamiltonian conserves
 
 options:
   -h, --help  show this help message and exit

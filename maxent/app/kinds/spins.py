@@ -25,9 +25,9 @@ from maxent.app.job import (
 )  # fmt: skip
 from maxent.errors import FormulaError, ResourceError
 from maxent.memory import require_memory
-from maxent.text import plural
+from maxent.text import plural, suggestion
 
-__all__ = ["Options", "Sites", "Start", "build"]
+__all__ = ["Options", "Sites", "Start", "build", "hamiltonian"]
 
 _STRICT = {"extra": "forbid", "strict": True}
 
@@ -88,6 +88,9 @@ class Options:
     predictions: dict[str, str] = field(
         default_factory=dict, metadata=says("Name -> formula of a further operator whose mean is wanted.")
     )
+    hamiltonian: str = field(
+        default="energy", metadata=says("Name of the charge that is the Hamiltonian, for `multipliers charges`.")
+    )
 
 
 def build(options: Options, folder: File) -> Job:
@@ -128,6 +131,9 @@ def build(options: Options, folder: File) -> Job:
     start = None
     if options.start is not None:
         start = _start(options, sites, problems)
+    if options.hamiltonian not in (*options.charges, "energy"):
+        name = options.hamiltonian
+        problems.add(("hamiltonian",), f"no charge is called {name!r}{suggestion(name, options.charges)}")
     for name, given in options.targets.items():
         check_target(("targets", name), given, problems)
         if given == "from start" and options.start is None:
@@ -157,6 +163,38 @@ def build(options: Options, folder: File) -> Job:
 
     family = Matrices(matrices, dims=sites.dims)
     return Job(family, targets, observed, facts)
+
+
+def hamiltonian(options: Options) -> Any:
+    """Read the charge that is the Hamiltonian, without any matrix.
+
+    Parameters
+    ----------
+    options : Options
+
+    Returns
+    -------
+    OperatorSum
+
+    Raises
+    ------
+    BadInput
+        With all problems of this formula and of the densities.
+    """
+    from maxent import lattice
+
+    problems = Problems()
+    geometry: Any = {"ring": lattice.Ring, "chain": lattice.Chain}[options.sites.geometry]
+    try:
+        sites = geometry(options.sites.size)
+    except ValueError as bad:
+        raise BadInput([(("sites", "size"), str(bad))]) from bad
+    name = options.hamiltonian
+    if name not in options.charges:
+        raise BadInput([(("hamiltonian",), f"no charge is called {name!r}{suggestion(name, options.charges)}")])
+    operator = _Formulas(options, sites, problems).read(("charges", name), options.charges[name])
+    problems.raise_any()
+    return operator
 
 
 class _Formulas:
