@@ -40,8 +40,9 @@ class Conserved:
     defect : float
         ``|[H, Q]|_F / ((E_max - E_min) |Q_0|_F)``, from 0 to 1.
     exact : bool
-        The commutator was formed with exact coefficients.
+        The commutator was formed with exact coefficients: a defect of 0 is then proved.
     conserved : bool
+        Whether the defect is no more than rounding; coefficients given as decimals leave some, too.
     value, accuracy : float or None
         Mean in the start and its accuracy; None without a start.
     dephased : float or None
@@ -140,7 +141,7 @@ def check_conservation(
     width : float, optional
         E_max - E_min where it is known; taken from `dephased`, or computed.
     tolerance : float, optional
-        Largest relative commutator of matrices that counts as rounding.
+        Largest relative commutator that counts as rounding.
     progress : callable, optional
         Told in one line what is being done.
 
@@ -182,20 +183,19 @@ def check_conservation(
         if dephased is not None:
             value, accuracy = dephased.start.mean(matrices[name])
             later = dephased.state.mean(matrices[name])
-        conserved = size == 0.0 if exact else defect <= tolerance
-        found[name] = Conserved(name, defect, exact, conserved, value, accuracy, later)
+        found[name] = Conserved(name, defect, exact, defect <= tolerance, value, accuracy, later)
     mutual = np.zeros((len(names), len(names)))
     widths = {}
     for i, j in combinations(range(len(names)), 2):
         a, b = names[i], names[j]
-        size, exact = _commutator(charges[a], charges[b], matrices[a], matrices[b])
+        size, _ = _commutator(charges[a], charges[b], matrices[a], matrices[b])
         if size > 0.0:
             for name in (a, b):
                 if name not in widths:
                     low, high = extremes(matrices[name])
                     widths[name] = high - low
             ratio = _ratio(size, min(widths[a] * norms[b], widths[b] * norms[a]))
-            mutual[i, j] = mutual[j, i] = ratio if exact or ratio > tolerance else 0.0
+            mutual[i, j] = mutual[j, i] = ratio if ratio > tolerance else 0.0
     return Conservation(found, mutual, tolerance)
 
 

@@ -20,7 +20,6 @@ import scipy.sparse as sp
 import scipy.sparse.linalg as spla
 
 from maxent.families.operators import HERMITIAN
-from maxent.lattice.starts import ProductState
 from maxent.memory import require_memory
 from maxent.quench.operators import as_matrix, extremes, largest_row_sum
 from maxent.quench.spectrum import Spectrum
@@ -87,7 +86,7 @@ class Start:
             Not a list of finite numbers, or a norm that differs from 1 by more than 1e-8.
         """
         size = 0
-        if isinstance(vector, ProductState):
+        if hasattr(vector, "vector"):  # a product state of whatever sites
             size, vector = vector.sites.size, vector.vector()
         v = _numbers(vector, f"start {label!r}")
         if v.ndim != 1 or not len(v):

@@ -107,6 +107,15 @@ def test_nearly_conserved_is_told_from_rounding():
     assert 1e-8 < charge.defect < 1e-6
 
 
+def test_rounded_coefficients_count_as_conserved():
+    """Decimals of a charge cut after 12 digits leave a commutator of 1e-13, exactly formed as it is."""
+    ring = Ring(8)
+    text = "0.333333333333*(X[i]*Z[i+1]*X[i+2] - Z[i]) - 0.166666666667*(X[i]*X[i+1] + Y[i]*Y[i+1])"
+    charge = check_conservation(formula(ISING["H"], ring), {"I1": formula(text, ring)}).charges["I1"]
+    assert charge.exact and charge.conserved
+    assert 0 < charge.defect < 1e-11
+
+
 class TestStates:
     def test_against_the_dense_commutator(self):
         """A state of Sx and H is not stationary; relative |[H, rho]| by dense algebra."""

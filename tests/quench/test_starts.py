@@ -6,7 +6,7 @@ import scipy.linalg as sla
 from numpy.testing import assert_allclose
 
 from maxent.errors import ResourceError
-from maxent.lattice import Chain, ProductState, Ring, formula
+from maxent.lattice import Chain, ProductState, Ring, domain_wall, formula
 from maxent.quench import Start, ground_start, read_start, thermal_start
 
 SIGMA = {"x": np.array([[0, 1], [1, 0]]), "y": np.array([[0, -1j], [1j, 0]]), "z": np.diag([1, -1])}
@@ -44,6 +44,13 @@ class TestMeans:
         h = formula("Sx[i]*Sx[i+1] + Sy[i]*Sy[i+1] + Sz[i]*Sz[i+1]", ring)
         start = Start.from_vector(ProductState(ring, [0.0, np.pi], 0.0))
         assert_allclose(start.spread(h) / 8, np.sqrt(8 / 4) / 8, rtol=1e-12)
+
+    def test_domain_wall(self):
+        """Left half up, right half down: six bonds of equal spins, two of unlike ones on a ring of 8."""
+        ring = Ring(8)
+        start = Start.from_vector(domain_wall(ring, ["up"], ["down"]))
+        assert start.mean(formula("Sz[i]*Sz[i+1]", ring))[0] == (6 - 2) / 4
+        assert [start.mean(formula(f"Sz[{i}]", ring))[0] for i in (0, 3, 4, 7)] == [0.5, 0.5, -0.5, -0.5]
 
     def test_sharp_charge_has_no_spread(self):
         ring = Ring(8)
