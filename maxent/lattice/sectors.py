@@ -151,6 +151,7 @@ def symmetry_basis(
     Examples
     --------
     >>> from maxent.lattice import Ring
+    >>> from maxent.lattice.site_maps import translation
     >>> basis = symmetry_basis([translation(Ring(4))])
     >>> np.bincount(basis.labels["translation"]).tolist()
     [6, 3, 4, 3]
@@ -214,6 +215,7 @@ def sector(
     Examples
     --------
     >>> from maxent.lattice import Ring, formula
+    >>> from maxent.lattice.site_maps import translation
     >>> ring = Ring(12)
     >>> sector([translation(ring)], {"translation": 0}, {"magnetisation": (formula("Sz[i]", ring), 0)}).size
     80

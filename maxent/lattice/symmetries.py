@@ -36,6 +36,7 @@ __all__ = [
     "is_invariant",
     "reflection",
     "sector",
+    "sharp_sector",
     "sharp_value",
     "site_permutation",
     "species_exchange",
@@ -122,11 +123,53 @@ def adapted_basis(operators: Any, sites: Sites, *, more: Sequence[Any] = ()) -> 
     for m in found:
         candidate = m.index_map
         if m.conjugating:
-            if chosen and not chosen[-1].conjugating and all(_keeps_labels(candidate, u) for u in chosen):
+            useful = bool(chosen) or m.name != "conjugation"  # alone it leaves the product basis as it is
+            if useful and not any(u.conjugating for u in chosen) and all(_keeps_labels(candidate, u) for u in chosen):
                 chosen.append(candidate)
         elif all(candidate.commutes_with(u) for u in chosen):
             chosen.append(candidate)
     return symmetry_basis(chosen) if chosen else None
+
+
+def sharp_sector(
+    basis: SymmetryBasis, vectors: np.ndarray, charges: Mapping[str, Any] | None = None, *, tolerance: float = EQUAL
+) -> tuple[dict[str, int], dict[str, tuple[Any, float]]]:
+    """What has no spread in a start: the labels and values that `SymmetryBasis.columns` and `sector` take.
+
+    Parameters
+    ----------
+    basis : SymmetryBasis
+    vectors : (D,) or (D, k) ndarray
+        The start, or the vectors of a mixture.
+    charges : mapping from name to charge, optional
+        Charges that are diagonal in the product basis.
+    tolerance : float
+        As for `sharp_value`.
+
+    Returns
+    -------
+    values : dict of str to int
+        Labels of the maps of the basis that are sharp.
+    charges : dict of str to (charge, float)
+        Charges that are sharp.
+
+    Examples
+    --------
+    >>> from maxent.lattice import ProductState, Ring, formula
+    >>> ring = Ring(4)
+    >>> start = ProductState(ring, ["pi", 0.0], 0.0).vector()
+    >>> values, charges = sharp_sector(
+    ...     symmetry_basis([translation(ring, 2), spin_flip(ring)]), start, {"M": formula("Sz[i]", ring)}
+    ... )
+    >>> values, list(charges)
+    ({'translation_by_2': 0}, ['M'])
+    """
+    found = {m.name: sharp_value(m, vectors, tolerance=tolerance) for m in basis.maps}
+    sharp = {name: (q, sharp_value(q, vectors, tolerance=tolerance)) for name, q in (charges or {}).items()}
+    return (
+        {name: int(label) for name, label in found.items() if label is not None},
+        {name: (q, value) for name, (q, value) in sharp.items() if value is not None},
+    )
 
 
 def _keeps_labels(antiunitary: IndexMap, unitary: IndexMap) -> bool:

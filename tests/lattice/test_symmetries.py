@@ -20,6 +20,7 @@ from maxent.lattice.symmetries import (
     is_invariant,
     reflection,
     sector,
+    sharp_sector,
     sharp_value,
     site_permutation,
     species_exchange,
@@ -332,6 +333,41 @@ def test_sharp_values_of_starts():
     assert [sharp_value(spin_flip(ring), v) for v in cats] == [1, -1]
     assert sharp_value(translation(ring), np.stack(cats, axis=1)) is None
     assert sharp_value(magnetisation, np.stack(cats, axis=1)) == pytest.approx(0.0, abs=1e-14)
+
+
+def test_the_sector_of_a_start_holds_all_of_it():
+    ring = Ring(6)
+    charges = {"M": formula("Sz[i]", ring), "staggered": formula("(-1)**i*Sz[i]", ring)}
+    basis = symmetry_basis([translation(ring, 2), spin_flip(ring)])
+    three = ProductState(ring, [0.0, np.pi, np.pi], 0.0).vector()
+    two = ProductState(ring, [0.0, np.pi], 0.0).vector()
+    cat = two - translation(ring).index_map.apply(two)
+    for vector, labels, names in (
+        (three, {}, ["M", "staggered"]),
+        (two, {"translation_by_2": 0}, ["M", "staggered"]),
+        (cat, {"translation_by_2": 0, "spin_flip": -1}, ["M"]),
+    ):
+        values, sharp = sharp_sector(basis, vector, charges)
+        assert (values, list(sharp)) == (labels, names)
+    uniform = ProductState(ring, np.pi / 2, 0.0).vector()
+    values, sharp = sharp_sector(basis, uniform, charges)
+    assert (values, sharp) == ({"translation_by_2": 0, "spin_flip": 1}, {})
+    part = basis.only(basis.columns(values))
+    assert np.linalg.norm(part.matrix.conj().T @ uniform) == pytest.approx(1.0, abs=1e-14)
+
+
+def test_an_antiunitary_symmetry_alone_makes_operators_real():
+    chain = Chain(4)
+    other = formula("Sx[0]*Sy[1] + Sx[3]*Sy[2] + Sz[0] + 2*Sz[3]", chain)
+    assert find_symmetries([other], chain) == ()
+    op = formula("Sx[0]*Sy[1] - Sx[3]*Sy[2] + Sz[0] + Sz[3]", chain)
+    basis = adapted_basis([op], chain)
+    inside = blocked({"h": op}, basis)["h"]
+    assert op.matrix().dtype == complex
+    assert inside.dtype == float
+    np.testing.assert_allclose(
+        np.linalg.eigvalsh(inside.toarray()), np.linalg.eigvalsh(op.matrix().toarray()), atol=1e-14
+    )
 
 
 def test_sharp_momentum_of_a_fermion_wave():
