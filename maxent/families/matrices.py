@@ -7,6 +7,7 @@ from then on.  Cost of one evaluation: one eigendecomposition and m rotations pe
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any, ClassVar
 
@@ -215,6 +216,22 @@ class Matrices(Finite):
         total = sp.csr_array((data, (rows, columns)), shape=(self.dimension, self.dimension))
         total.eliminate_zeros()
         return total
+
+    def select(self, names: Sequence[str]) -> Matrices:
+        """The family of some of its charges, in the order asked for; nothing is diagonalised again.
+
+        Raises
+        ------
+        ValueError
+            No names, a name that is not there, or twice the same.
+        """
+        names = tuple(names)
+        if not names or len(set(names)) < len(names) or not set(names) <= set(self.names):
+            raise ValueError(f"select takes different names out of {', '.join(self.names)}, not {', '.join(names)}")
+        rows = np.eye(len(self.names))[[self.names.index(n) for n in names]]
+        new = self._with(self.blocks.combine(rows, np.zeros(len(names))), None)
+        object.__setattr__(new, "names", names)
+        return new
 
     # ------------------------------------------------------------------ sectors, windows
 

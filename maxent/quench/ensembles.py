@@ -1,0 +1,202 @@
+"""Ensembles fitted to one start: nested sets of charges, over all sectors and inside the one the start lives in.
+
+`Charges` holds what all fits of one Hamiltonian share: the charges in a symmetry basis, their families, the observables
+in the same basis.  When all charges commute the joint eigenbasis is found once and every further ensemble is a fit of
+numbers.  Floor: quench.  Must not know windows, dynamics or tables.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+import scipy.sparse as sp
+
+from maxent.families.density import MatricesState
+from maxent.families.matrices import Matrices
+from maxent.lattice import OperatorSum
+from maxent.lattice.symmetries import SymmetryBasis, adapted_basis, blocked, sharp_value
+from maxent.quench.corrections import leading_correction, second_derivatives
+from maxent.quench.spectrum import Spectrum
+from maxent.quench.starts import Start
+from maxent.result import Result
+from maxent.solver import solve
+
+__all__ = ["Charges", "Sector", "find_sector"]
+
+
+@dataclass(frozen=True, eq=False)
+class Sector:
+    """Values that have no spread in a start, and the states that share them.
+
+    Attributes
+    ----------
+    symmetries : dict of str to int
+        Labels of maps, as in `SymmetryBasis.labels`.
+    charges : dict of str to float
+    columns : (k,) ndarray of int
+        States of the basis.
+    """
+
+    symmetries: dict[str, int]
+    charges: dict[str, float]
+    columns: np.ndarray
+
+    @property
+    def values(self) -> dict[str, float]:
+        """All sharp values by name."""
+        return {**self.charges, **{name: float(v) for name, v in self.symmetries.items()}}
+
+
+class Charges:
+    """Charges of a Hamiltonian in the basis of their common symmetries.
+
+    Parameters
+    ----------
+    charges : mapping from str to OperatorSum
+        Hermitian, on the same sites; the Hamiltonian is one of them.
+    hamiltonian : str
+        Its name.
+    observables : mapping from str to OperatorSum, optional
+
+    Attributes
+    ----------
+    basis : SymmetryBasis or None
+    matrices : dict of str to scipy.sparse
+        Charges in the basis.
+    """
+
+    def __init__(
+        self,
+        charges: Mapping[str, OperatorSum],
+        hamiltonian: str,
+        *,
+        observables: Mapping[str, OperatorSum] | None = None,
+    ):
+        if hamiltonian not in charges:
+            raise ValueError(
+                f"the Hamiltonian {hamiltonian!r} is none of the charges {', '.join(map(repr, charges))}"
+            )
+        self.operators = dict(charges)
+        self.hamiltonian = hamiltonian
+        self.sites = charges[hamiltonian].sites
+        for name, op in {**self.operators, **(observables or {})}.items():
+            if op.sites != self.sites:
+                raise ValueError(f"{name!r} lives on {op.sites}, the Hamiltonian on {self.sites}")
+        self.basis: SymmetryBasis | None = adapted_basis(self.operators, self.sites)
+        given = {name: op.matrix() for name, op in self.operators.items()}
+        self.matrices = given if self.basis is None else blocked(given, self.basis)
+        self.observables = {name: op.matrix() for name, op in (observables or {}).items()}
+
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Names of the charges."""
+        return tuple(self.operators)
+
+    @property
+    def isometry(self) -> Any:
+        """The basis as a sparse matrix, or None."""
+        return None if self.basis is None else self.basis.matrix
+
+    @cached_property
+    def family(self) -> Matrices:
+        """Family of all charges."""
+        return Matrices(self.matrices, basis=self.isometry, dims=self.sites.dims)
+
+    @property
+    def commute(self) -> bool:
+        """Whether all charges commute with one another."""
+        return not self.family.blocks.dense
+
+    def subfamily(self, names: Sequence[str]) -> Matrices:
+        """Family of some charges."""
+        if tuple(names) == self.names:
+            return self.family
+        if self.commute:
+            return self.family.select(names)
+        return Matrices({n: self.matrices[n] for n in names}, basis=self.isometry, dims=self.sites.dims)
+
+    @cached_property
+    def conjugated(self) -> dict[str, Any]:
+        """Observables in the basis."""
+        if self.basis is None:
+            return self.observables
+        w = self.basis.matrix
+        return {name: (w.conj().T @ (q @ w)).tocsr() for name, q in self.observables.items()}
+
+    def means(self, state: MatricesState) -> dict[str, float]:
+        """Means of all observables in a state of this basis (all of its columns)."""
+        inner = replace(state, basis=None, dims=None)
+        return {name: inner.mean(q) for name, q in self.conjugated.items()}
+
+    def fit(self, names: Sequence[str], targets: Mapping[str, tuple[float, float]], sector: Sector | None) -> Result:
+        """Ensemble of some charges, over all sectors or inside one."""
+        family = self.subfamily(names)
+        if sector is not None:
+            family = family.restrict(sector.columns)
+        return solve(
+            family, {n: targets[n][0] for n in names}, accuracy={n: targets[n][1] for n in names}
+        )
+
+    def correction(self, result: Result, names: Sequence[str], spread: np.ndarray) -> dict[str, float]:
+        """Leading correction of every observable, `spread` (m, m) the covariance of these charges in the start."""
+        family = self.subfamily(names)
+        lam = np.array([result.multipliers[n] for n in names])
+
+        def at(x: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+            state = family.state(x)
+            return family.evaluate(x, 1).values, np.array(list(self.means(state).values()))
+
+        curvature = second_derivatives(at, lam, result.covariance)
+        if curvature is None:
+            return {}
+        size = leading_correction(curvature, spread, result.covariance)
+        return dict(zip(self.observables, map(float, size), strict=True))
+
+    def spectrum(self, *, progress: Any = None) -> Spectrum:
+        """Spectrum of the Hamiltonian, in blocks that no charge leaves when all commute."""
+        others = [q for n, q in self.operators.items() if n != self.hamiltonian] if self.commute else []
+        return Spectrum(
+            self.operators[self.hamiltonian], basis=self.isometry, companions=others, progress=progress
+        )
+
+
+def find_sector(charges: Charges, start: Start) -> Sector | None:
+    """Sector of all charges and symmetries without spread in the start; None when everything has spread.
+
+    Charges count that are diagonal in the product basis (a magnetisation, a particle number), since only those select
+    states.
+    """
+    basis = charges.basis
+    symmetries: dict[str, int] = {}
+    if basis is not None:
+        for m in basis.maps:
+            value = sharp_value(m, start.vectors)
+            if value is not None:
+                symmetries[m.name] = int(value)
+    sharp: dict[str, float] = {}
+    lines: dict[str, np.ndarray] = {}
+    for name, op in charges.operators.items():
+        if name == charges.hamiltonian:
+            continue
+        q = op.matrix()
+        line = q.diagonal().real
+        if (q - sp.diags_array(line)).count_nonzero():
+            continue
+        value = sharp_value(line, start.vectors)
+        if value is not None:
+            sharp[name], lines[name] = float(value), line
+    if not symmetries and not sharp:
+        return None
+    if basis is None:
+        keep = np.ones(len(start.vectors), bool)
+        for name, line in lines.items():
+            keep &= np.abs(line - sharp[name]) <= 1e-9 * max(1.0, float(np.abs(line).max()))
+        columns = np.flatnonzero(keep)
+    else:
+        columns = basis.columns(symmetries, {name: (lines[name], sharp[name]) for name in sharp})
+    everything = charges.matrices[charges.hamiltonian].shape[0]
+    return None if len(columns) == everything else Sector(symmetries, sharp, columns)
