@@ -40,6 +40,8 @@ class LocalCharge:
         Whether the commutator with H is zero in exact arithmetic, for the fractions as they are printed.
     hamiltonian : bool
         Whether this is the Hamiltonian itself.
+    names : tuple of str
+        Names of the sites of a cell of the lattice, where they have some.
     """
 
     range: int
@@ -49,6 +51,7 @@ class LocalCharge:
     defect: float
     exact: bool
     hamiltonian: bool = False
+    names: tuple[str, ...] = ()
 
     def formula(
         self, letters: Literal["spin", "pauli"] = "spin", *, subscript: str = "i", digits: int | None = None
@@ -65,8 +68,8 @@ class LocalCharge:
             Digits of coefficients that are no fractions, for people; default all.
         """
         return formula_text(
-            self.words, cell=self.cell, staggered=self.momentum == "pi", spin=letters == "spin", subscript=subscript,
-            digits=digits,
+            self.words, cell=self.cell, names=self.names, staggered=self.momentum == "pi", spin=letters == "spin",
+            subscript=subscript, digits=digits,
         )  # fmt: skip
 
 

@@ -196,7 +196,9 @@ class _Space:
         words: list[Word] = []
         for value, n in zip(values, on, strict=True):
             words.append((value, *letters(int(self.x[n]), int(self.z[n]))))
-        return LocalCharge(int(self.ranges[on].max()), tuple(words), self.h.cell, self.momentum, defect, exact)
+        return LocalCharge(
+            int(self.ranges[on].max()), tuple(words), self.h.cell, self.momentum, defect, exact, names=self.h.names
+        )
 
     def commutes(self, on: np.ndarray, values: Sequence[Fraction]) -> bool:
         """Whether fractions times some of the operators commute with H, in whole numbers."""
@@ -339,7 +341,7 @@ def _hamiltonian_first(
     replaced = max(
         (j for j, q in enumerate(charges) if q.range == h.range), key=lambda j: (round(abs(parts[j]), 9), -j)
     )
-    mine = LocalCharge(h.range, h.terms, h.cell, "0", 0.0, True, hamiltonian=True)
+    mine = LocalCharge(h.range, h.terms, h.cell, "0", 0.0, True, hamiltonian=True, names=h.names)
     others = [j for j in range(len(rows)) if j != replaced]
     return [own, *(rows[j] for j in others)], [mine, *(charges[j] for j in others)]
 

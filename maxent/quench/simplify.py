@@ -115,7 +115,14 @@ def rational(values: np.ndarray) -> list[Fraction] | None:
 
 
 def formula_text(
-    words: Sequence[Word], *, cell: int, staggered: bool, spin: bool, subscript: str, digits: int | None
+    words: Sequence[Word],
+    *,
+    cell: int,
+    names: Sequence[str],
+    staggered: bool,
+    spin: bool,
+    subscript: str,
+    digits: int | None,
 ) -> str:
     """Formula of the sum over all translates, up to a factor that makes it short.
 
@@ -124,6 +131,8 @@ def formula_text(
     words : sequence of (coefficient, letters, place)
     cell : int
         Sites per unit cell.
+    names : sequence of str
+        Names of the sites to one value of the subscript; empty if there is one without a name.
     staggered : bool
         Whether the sign alternates from cell to cell.
     spin : bool
@@ -134,18 +143,20 @@ def formula_text(
         Digits of coefficients that are no fractions; None keeps all.
     """
     scaled: list[Word] = [(c * 2 ** len(a.replace("I", "")) if spin else c, a, o) for c, a, o in words]
-    groups: dict[str, dict[int, Fraction | float]] = {}
+    sites = max(len(names), 1)
+    period = cell // sites
+    groups: dict[tuple[str, int], dict[int, Fraction | float]] = {}
     for c, pattern, place in scaled:
-        groups.setdefault(pattern, {})[place] = c
+        groups.setdefault((pattern, place % sites), {})[place // sites] = c
     factor = _factor([c for c, _, _ in scaled])
     parts: list[tuple[Fraction | float, str]] = []
-    for pattern in sorted(groups, key=_reading_order):
+    for pattern, first in sorted(groups, key=_reading_order):
         operators = "*".join(
-            f"{'S' + a.lower() if spin else a}[{subscript}{f'+{s}' if s else ''}]"
-            for s, a in enumerate(pattern)
+            f"{'S' + a.lower() if spin else a}[{_place(subscript, s, names)}]"
+            for s, a in enumerate(pattern, start=first)
             if a != "I"
         )
-        for c, where in _places(groups[pattern], cell, subscript):
+        for c, where in _places(groups[pattern, first], period, subscript):
             parts.append((c * factor if isinstance(c, Fraction) else c * float(factor), where + operators))
     if parts[0][0] < 0 and all(isinstance(c, Fraction) for c, _ in parts):
         parts = [(-c, a) for c, a in parts]
@@ -156,13 +167,20 @@ def formula_text(
         text += sign + (operators if size == "1" else f"{size}*{operators}")
     if not staggered:
         return text
-    cells = subscript if cell == 1 else f"({subscript}//{cell})"
+    cells = subscript if period == 1 else f"({subscript}//{period})"
     return f"(-1)**{cells}*{text}" if len(parts) == 1 and parts[0][0] > 0 else f"(-1)**{cells}*({text})"
 
 
-def _reading_order(pattern: str) -> tuple[int, int, str]:
+def _reading_order(group: tuple[str, int]) -> tuple[int, int, str, int]:
     """Wide words last, like the normal form of formulas: by number of operators, width and letters."""
-    return len(pattern.replace("I", "")), len(pattern), pattern
+    pattern, first = group
+    return len(pattern.replace("I", "")), len(pattern), pattern, first
+
+
+def _place(subscript: str, site: int, names: Sequence[str]) -> str:
+    """What stands between the brackets of an operator: subscript, and name of the site in its cell."""
+    cells, at = divmod(site, max(len(names), 1))
+    return f"{subscript}{f'+{cells}' if cells else ''}{f', {names[at]}' if names else ''}"
 
 
 def _places(at: dict[int, Fraction | float], cell: int, subscript: str) -> Iterator[tuple[Fraction | float, str]]:

@@ -37,12 +37,15 @@ class Density:
     coefficients : (n,) float64 ndarray
     cell : int
         Sites per unit cell.
+    names : tuple of str
+        Names of the sites of a cell of the lattice, where they have some; `cell` is a multiple of their number.
     """
 
     x: np.ndarray
     z: np.ndarray
     coefficients: np.ndarray
     cell: int = 1
+    names: tuple[str, ...] = ()
 
     @property
     def range(self) -> int:
@@ -93,8 +96,9 @@ def density(operator: OperatorSum | Iterable[Sequence[Any]], *, cell: int | None
     """
     if cell is not None and (isinstance(cell, bool) or not isinstance(cell, int) or cell < 1):
         raise ValueError(f"cell: the sites per unit cell must be a whole number from 1 on, not {cell!r}")
+    names: tuple[str, ...] = ()
     if isinstance(operator, OperatorSum):
-        found, cell = _from_sum(operator, cell)
+        found, cell, names = _from_sum(operator, cell)
     else:
         cell = cell or 1
         found = _from_words(operator, cell)
@@ -105,7 +109,7 @@ def density(operator: OperatorSum | Iterable[Sequence[Any]], *, cell: int | None
     if _width(*keys[-1]) > WIDEST:
         raise ValueError(f"a term covers {_width(*keys[-1])} sites; the most is {WIDEST}")
     pairs = np.array(keys, np.int64)
-    return Density(pairs[:, 0], pairs[:, 1], np.array([found[key] for key in keys]), cell)
+    return Density(pairs[:, 0], pairs[:, 1], np.array([found[key] for key in keys]), cell, names)
 
 
 def _from_words(words: Iterable[Sequence[Any]], cell: int) -> dict[tuple[int, int], float]:
@@ -129,8 +133,12 @@ def _from_words(words: Iterable[Sequence[Any]], cell: int) -> dict[tuple[int, in
     return found
 
 
-def _from_sum(operator: OperatorSum, cell: int | None) -> tuple[dict[tuple[int, int], float], int]:
+def _from_sum(
+    operator: OperatorSum, cell: int | None
+) -> tuple[dict[tuple[int, int], float], int, tuple[str, ...]]:
     sites = operator.sites
+    names = sites.cell if len(sites.cell) > 1 else ()
+    step = max(len(names), 1)
     if any(d != 2 for d in sites.dims) or any(o not in _SPINS for t in operator.terms for o in t.operators):
         raise TypeError("the search is for spin-1/2 sites so far: spins Sx, Sy, Sz, or X, Y, Z")
     if not sites.is_ring:
@@ -155,13 +163,15 @@ def _from_sum(operator: OperatorSum, cell: int | None) -> tuple[dict[tuple[int, 
         return all(float(np.abs(c - np.roll(c, shift)).max()) <= 1e-12 * largest for c in patterns.values())
 
     if cell is None:
-        cell = next(p for p in range(1, size + 1) if size % p == 0 and repeats(p))
-        if cell == size and size > 1:
+        cell = next(p for p in range(step, size + 1, step) if size % p == 0 and repeats(p))
+        if cell == size > step:
             raise ValueError(f"not translation-invariant: no shift by fewer than {size} sites leaves it as it is")
+    elif cell % step:
+        raise ValueError(f"cell: {cell} sites are no multiple of the {step} sites of the lattice's cells")
     elif size % cell or not repeats(cell):
         raise ValueError(f"not invariant under translation by {cell} of {size} sites")
     words = [(float(c[s]), text, s) for text, c in patterns.items() for s in range(cell)]
-    return _from_words(words, cell), cell
+    return _from_words(words, cell), cell, names
 
 
 def _unwound(positions: Sequence[int], names: Sequence[str], size: int) -> tuple[int, str]:

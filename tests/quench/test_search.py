@@ -8,7 +8,7 @@ import pytest
 import scipy.sparse as sp
 
 from maxent.errors import ResourceError
-from maxent.lattice import Chain, Ring, formula
+from maxent.lattice import Bosons, Chain, Fermions, Ring, Spin, formula
 from maxent.quench import search as module
 from maxent.quench.search import search
 from maxent.quench.strings import density
@@ -478,6 +478,35 @@ def test_the_cell_of_a_sum_on_a_ring():
     assert search(formula(text, Ring(8)), 2, cell=4).hamiltonian.cell == 4
     h = formula(text, Ring(8))
     assert all(h.commutator(formula(q.formula(), Ring(8))).terms == () for q in f.charges)
+
+
+@pytest.mark.parametrize(("momentum", "counts"), [("0", (1, 4, 8)), ("pi", (0, 0, 0))])
+def test_named_sites_of_a_cell(momentum, counts):
+    ring = Ring(4, cell=("a", "b"))
+    hops = "X[i,a]*X[i,b] + Y[i,a]*Y[i,b] + 0.5*X[i,b]*X[i+1,a] + 0.5*Y[i,b]*Y[i+1,a]"
+    f = search(formula(hops, ring), 3, momentum=momentum)
+    assert f.hamiltonian.cell == 2 and f.counts == counts
+    assert all(formula(hops, ring).commutator(formula(q.formula(), ring)).terms == () for q in f.charges)
+    if momentum == "0":
+        assert "Sz[i, a] + Sz[i, b]" in [q.formula() for q in f.charges]
+
+
+def test_a_pattern_over_named_cells():
+    ring = Ring(8, cell=("a", "b"))
+    text = "Z[i,a]*Z[i,b] + (2 + (-1)**i)*Z[i,b]*Z[i+1,a]"
+    f = search(formula(text, ring), 2)
+    assert f.hamiltonian.cell == 4
+    assert all(formula(text, ring).commutator(formula(q.formula(), ring)).terms == () for q in f.charges)
+    with pytest.raises(ValueError, match="3 sites are no multiple of the 2 sites"):
+        search(formula(text, ring), 2, cell=3)
+
+
+@pytest.mark.parametrize(
+    ("text", "kind"), [("Sz[i]*Sz[i+1]", Spin(1)), ("dagger(c[i])*c[i+1] + h.c.", Fermions()), ("n[i]", Bosons(cutoff=1))]
+)
+def test_other_kinds_of_sites_are_refused(text, kind):
+    with pytest.raises(TypeError, match="the search is for spin-1/2 sites so far"):
+        search(formula(text, Ring(6, kind)))
 
 
 def test_words_across_the_end_of_the_ring():
