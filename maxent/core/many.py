@@ -105,7 +105,8 @@ def _diagonal(family: Blocks, targets: Any, iterations: int, batch: int) -> Many
     second, third = (off_mean * p0) @ off_mean.T, jnp.einsum("an,bn,cn->abc", off_mean * p0, off_mean, off_mean)
     blurs = EPS * norm(jnp.abs(transform) @ (jnp.abs(mean)[:, None] + jnp.abs(targets.T)), axis=0)
     double = _Moments(w, log_weights, dead, reach, EPS)
-    single = _Moments(*(a.astype(jnp.float32) for a in (w, log_weights, dead, reach)), float(np.finfo(np.float32).eps))
+    short = [a.astype(jnp.float32) for a in (w, log_weights, dead, reach)]
+    single = _Moments(short[0], short[1], short[2], short[3], float(np.finfo(np.float32).eps))
 
     def guess(q: Any) -> tuple[Any, Any]:
         # <w>(x) = first - second x + third[x, x]/2 - ..., inverted; far targets start on their ray instead

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import asdict, dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -29,6 +29,7 @@ from maxent.quench.spectrum import Spectrum
 from maxent.quench.starts import Start
 from maxent.quench.windows import GaussianWindow, WindowScan, gaussian_window, scan_widths
 from maxent.quench.yardsticks import block_bound, plateau_window, revival_time
+from maxent.result import Result
 from maxent.text import plural
 
 __all__ = ["Comparison", "Ensemble", "compare"]
@@ -193,8 +194,6 @@ class Comparison:
 
     def to_dict(self) -> dict[str, Any]:
         """Plain data for JSON, without the long arrays; NaN becomes None."""
-        from dataclasses import asdict
-
         plain = {
             key: getattr(self, key)
             for key in (
@@ -371,44 +370,34 @@ class _Study:
         out = []
         for kind, names in self._sets():
             label = kind if kind != "generalised" else f"generalised: {', '.join(names)}"
-            index = [self.charges.names.index(n) for n in names]
             for inside in (None, sector) if sector is not None else (None,):
                 if self.progress is not None:
                     self.progress(f"{label}{'' if inside is None else ', in the sector of the start'}")
                 result = self.charges.fit(names, targets, inside)
-                common = {
-                    "label": label,
-                    "kind": kind,
-                    "charges": names,
-                    "sector": {} if inside is None else inside.values,
-                    "verdict": str(result.verdict),
-                    "message": result.message,
-                }
-                if result.state is None:
-                    out.append(Ensemble(**common))
-                    continue
-                state = result.state
-                spread = covariance[np.ix_(index, index)]
-                corrections: dict[str, float] = {}
-                if inside is None and result.success and self.charges.observables:
-                    corrections = self.charges.correction(result, names, spread)
-                means = self.charges.means(state) if inside is None else self._direct_means(state)
-                chi = np.diagonal(result.covariance) if result.success else np.full(len(names), np.nan)
-                out.append(
-                    Ensemble(
-                        **common,
-                        multipliers=dict(result.multipliers),
-                        multiplier_errors=dict(result.multiplier_errors),
-                        entropy=result.entropy,
-                        means=means,
-                        distances=_distances(state, reference),
-                        corrections=corrections,
-                        variances={
-                            n: (float(spread[k, k]), float(chi[k])) for k, n in enumerate(names)
-                        },
-                    )
-                )
+                sharp = {} if inside is None else inside.values
+                plain = Ensemble(label, kind, names, sharp, str(result.verdict), result.message)
+                out.append(plain if result.state is None else self._filled(plain, result, covariance, reference))
         return out
+
+    def _filled(self, plain: Ensemble, result: Result, covariance: np.ndarray, reference: Any) -> Ensemble:
+        """The ensemble with what its state says."""
+        names, state = plain.charges, result.state
+        index = [self.charges.names.index(n) for n in names]
+        spread = covariance[np.ix_(index, index)]
+        corrections: dict[str, float] = {}
+        if not plain.sector and result.success and self.charges.observables:
+            corrections = self.charges.correction(result, names, spread)
+        chi = np.diagonal(result.covariance) if result.success else np.full(len(names), np.nan)
+        return replace(
+            plain,
+            multipliers=dict(result.multipliers),
+            multiplier_errors=dict(result.multiplier_errors),
+            entropy=result.entropy,
+            means=self._direct_means(state) if plain.sector else self.charges.means(state),
+            distances=_distances(state, reference),
+            corrections=corrections,
+            variances={n: (float(spread[k, k]), float(chi[k])) for k, n in enumerate(names)},
+        )
 
     def _sets(self) -> list[tuple[str, tuple[str, ...]]]:
         """Nested sets of charges: the Hamiltonian, then the charges in order, sums of one-site operators first."""

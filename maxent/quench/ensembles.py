@@ -188,7 +188,8 @@ def find_sector(charges: Charges, start: Start) -> Sector | None:
             continue
         value = sharp_value(line, start.vectors)
         if value is not None:
-            sharp[name], lines[name] = float(value), line
+            small = abs(value) <= 1e-13 * float(np.abs(line).max(initial=0.0))
+            sharp[name], lines[name] = 0.0 if small else float(value), line
     if not symmetries and not sharp:
         return None
     if basis is None:

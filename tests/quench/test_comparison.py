@@ -1,0 +1,203 @@
+"""Ensembles side by side: against dense matrices, closed forms and what nested ensembles must obey."""
+
+from __future__ import annotations
+
+import json
+
+import numpy as np
+import pytest
+import scipy.linalg as sl
+
+from maxent.lattice import Chain, ProductState, Ring, formula
+from maxent.quench.comparison import compare
+from maxent.quench.corrections import second_derivatives
+from maxent.quench.distances import relative_entropy, root_fidelity, trace_distance
+from maxent.quench.sizes import SizeSeries, size_series
+from maxent.quench.starts import Start
+
+DENSITY = {"h": "Sx[i]*Sx[i+1] + Sy[i]*Sy[i+1] + 0.6*Sz[i]*Sz[i+1]"}
+
+
+def study(size, theta=("pi/3",), phi="2*pi*i/L", **options):
+    ring = Ring(size)
+    f = lambda text: formula(text, ring, {}, DENSITY)
+    charges = {"energy": f("h[i]"), "magnetisation": f("Sz[i]"), "current": f("1j*commutator(h[i], h[i+1])")}
+    observables = {"zz": f("Sz[i]*Sz[i+1]/L"), "first": f("Sz[0]")}
+    start = Start.from_vector(ProductState(ring, list(theta) if len(theta) > 1 else theta[0], phi))
+    return {"charges": charges, "start": start, "observables": observables, **options}
+
+
+@pytest.fixture(scope="module")
+def spiral():
+    given = study(8)
+    return given, compare(**given)
+
+
+def gibbs(operators, lam):
+    k = sum(x * q.matrix().toarray() for x, q in zip(lam, operators, strict=True))
+    rho = sl.expm(-(k - np.linalg.eigvalsh(k)[0] * np.eye(len(k))))
+    return rho / np.trace(rho).real
+
+
+def reduced(rho, size, block):
+    t = rho.reshape(2**block, 2 ** (size - block), 2**block, 2 ** (size - block))
+    return np.trace(t, axis1=1, axis2=3)
+
+
+def test_columns_against_dense_matrices(spiral):
+    given, found = spiral
+    psi = given["start"].vectors[:, 0]
+    e, u = np.linalg.eigh(given["charges"]["energy"].matrix().toarray())
+    same = np.abs(e[:, None] - e[None, :]) < 1e-9
+    c = u.conj().T @ psi
+    dephased = u @ (np.outer(c, c.conj()) * same) @ u.conj().T
+    for name, op in given["observables"].items():
+        assert found.truth[name] == pytest.approx(np.trace(dephased @ op.matrix()).real, abs=1e-12)
+    for ensemble in found.ensembles:
+        if not ensemble.multipliers or ensemble.sector:
+            continue
+        operators = [given["charges"][n] for n in ensemble.charges]
+        rho = gibbs(operators, [ensemble.multipliers[n] for n in ensemble.charges])
+        for n, op in zip(ensemble.charges, operators, strict=True):
+            assert np.trace(rho @ op.matrix()).real == pytest.approx(found.targets[n], abs=1e-10)
+        for n, op in given["observables"].items():
+            assert ensemble.means[n] == pytest.approx(np.trace(rho @ op.matrix()).real, abs=1e-10)
+        for block, distance in ensemble.distances.items():
+            expected = trace_distance(reduced(rho, 8, block), reduced(dephased, 8, block))
+            assert distance == pytest.approx(expected, abs=1e-10)
+        p = np.linalg.eigvalsh(rho)
+        assert ensemble.entropy == pytest.approx(-np.sum(p * np.log(p)), abs=1e-10)
+
+
+def test_entropy_drop_is_the_relative_entropy_of_nested_ensembles(spiral):
+    given, found = spiral
+    states, dropped = [np.eye(256) / 256], []
+    names = []
+    for step in found.ranking.by_entropy:
+        names.append(step.charge)
+        label = [e for e in found.ensembles if set(e.charges) == set(names) and not e.sector and e.multipliers]
+        if not label:
+            return  # an order of its own: not among the columns
+        operators = [given["charges"][n] for n in label[0].charges]
+        states.append(gibbs(operators, [label[0].multipliers[n] for n in label[0].charges]))
+        dropped.append(step.entropy_drop)
+    for before, after, drop in zip(states, states[1:], dropped, strict=False):
+        assert drop == pytest.approx(relative_entropy(after, before), abs=1e-10)
+
+
+def test_ranking_orders_and_predictor(spiral):
+    _, found = spiral
+    steps = found.ranking.by_entropy
+    assert {s.charge for s in steps} == {"energy", "magnetisation", "current"}
+    assert all(s.entropy_drop >= -1e-12 for s in steps)
+    last = steps[-1]  # near the ensemble before, the quadratic predictor is close
+    assert last.predicted_drop == pytest.approx(last.entropy_drop, rel=0.2)
+    assert "gains end" in found.ranking.suggestion
+
+
+def test_sector_column_of_a_sharp_start_and_redundant_charge():
+    found = compare(**study(8, ("0", "pi"), 0.0))
+    assert found.sharp["magnetisation"] == pytest.approx(0, abs=1e-12)
+    whole, inside = found.ensemble("canonical"), found.ensemble("canonical", sector=True)
+    assert whole.verdict == inside.verdict == "solved"
+    assert whole.multipliers["energy"] != pytest.approx(inside.multipliers["energy"], rel=0.1)
+    ring = Ring(8)  # inside: exact over the 70 states of zero magnetisation
+    h = formula(DENSITY["h"], ring).matrix().toarray()
+    keep = np.flatnonzero(np.abs(formula("Sz[i]", ring).matrix().diagonal()) < 1e-12)
+    e = np.linalg.eigvalsh(h[np.ix_(keep, keep)])
+    p = np.exp(-inside.multipliers["energy"] * (e - e[0]))
+    assert p @ e / p.sum() == pytest.approx(found.targets["energy"], abs=1e-11)
+    # a charge without spread inside the sector is constant there: redundant, multiplier zero
+    assert found.ensemble("grand canonical", sector=True).multipliers["magnetisation"] == 0.0
+
+
+def test_leading_correction_is_that_of_the_spreads():
+    # independent spins: <Z_0 Z_1> in the ensemble is m^2; a start of sharp M has 1/(L-1) less of the variance
+    ring = Ring(6)
+    h = formula("Sz[i]", ring)
+    found = compare({"energy": h}, ProductState(ring, ["0", "0", "pi"], 0.0).vector(),
+                    observables={"zz": formula("Sz[i]*Sz[i+1]/L", ring)}, ranking=False)  # fmt: skip
+    canonical = found.ensemble("canonical")
+    m = found.targets["energy"] / 6
+    assert canonical.means["zz"] == pytest.approx(m * m, abs=1e-12)
+    # o(q) = (q/L)^2: second derivative 2/L^2; V_start - chi = -L (1/4 - m^2)
+    assert canonical.corrections["zz"] == pytest.approx(-(0.25 - m * m) / 6, rel=1e-3)
+
+
+def test_second_derivatives_of_a_closed_form():
+    at = lambda lam: (np.array([-lam[0], -2 * lam[1]]), np.array([lam[0] ** 2 * lam[1], np.sin(lam[0])]))
+    lam = np.array([0.4, -0.3])
+    found = second_derivatives(at, lam, np.diag([1.0, 2.0]))
+    expected = [[[2 * lam[1], lam[0]], [lam[0], 0.0]], [[-np.sin(0.4), 0.0], [0.0, 0.0]]]
+    np.testing.assert_allclose(found, expected, atol=1e-3)  # o = -q0^2 q1/2 and sin(-q0)
+    assert second_derivatives(at, lam, np.ones((2, 2))) is None
+
+
+def test_charge_that_is_not_conserved_is_refused_unless_insisted_on():
+    given = study(6)
+    given["charges"]["tilt"] = formula("Sx[i]", Ring(6))
+    with pytest.raises(ValueError, match=r"'tilt'.*insist on it"):
+        compare(**given)
+    found = compare(**given, insist=["tilt"])
+    assert any("least biased state at one instant" in note for note in found.notes)
+    assert found.conservation.broken == ("tilt",)
+
+
+def test_open_chain_without_symmetry_and_small_blocks():
+    chain = Chain(6)
+    h = formula("Sx[i]*Sx[i+1] + Sy[i]*Sy[i+1] + 0.3*i*Sz[i]", chain)
+    found = compare({"energy": h, "magnetisation": formula("Sz[i]", chain)},
+                    ProductState(chain, ["0", "pi"], 0.0).vector(), blocks=(1, 2, 5))  # fmt: skip
+    assert set(found.block_bounds) == {1, 2}
+    assert any("larger than half" in note for note in found.notes)
+    assert found.speed is None and found.revival is None
+    assert found.sharp == {"magnetisation": 0.0}
+
+
+def test_bad_input():
+    given = study(4)
+    with pytest.raises(ValueError, match="none of the charges"):
+        compare(**{**given, "hamiltonian": "H"})
+    with pytest.raises(ValueError, match="16 amplitudes|dimension 16"):
+        compare(given["charges"], np.ones(8) / 8**0.5)
+    with pytest.raises(ValueError, match="norm"):
+        compare(given["charges"], np.ones(16))
+    with pytest.raises(ValueError, match="lives on"):
+        compare({**given["charges"], "other": formula("Sz[i]", Ring(5))}, given["start"])
+    with pytest.raises(TypeError, match="formula"):
+        compare({"energy": np.eye(16)}, given["start"])
+
+
+def test_plain_data_is_json(spiral):
+    _, found = spiral
+    again = json.loads(json.dumps(found.to_dict(), allow_nan=False))
+    assert again["ensembles"][0]["label"] == "canonical"
+    assert again["conservation"]["charges"]["current"]["conserved"] is True
+    assert found.best() in found.labels
+
+
+def test_statements_need_three_sizes():
+    series = size_series(lambda n: study(n, ranking=False, blocks=(1, 2)), [8, 6, 4])
+    assert series.sizes.tolist() == [4, 6, 8]
+    assert series.statements and all("neighbouring sites" in s or "grows" in s for s in series.statements)
+    assert SizeSeries(series.comparisons[:2]).statements == ()
+    sizes, values = series.deviations("canonical", "zz")
+    assert sizes.tolist() == [4, 6, 8] and np.isfinite(values).all()
+    assert {k: v.tolist() for k, v in series.sequences().items()} == {"L = 4n": [0, 2], "L = 4n + 2": [1]}
+    with pytest.raises(ValueError, match="different numbers"):
+        size_series(study, [4, 4])
+
+
+def test_distances():
+    rng = np.random.default_rng(3)
+    a, b = (x @ x.conj().T for x in rng.normal(size=(2, 4, 4)) + 1j * rng.normal(size=(2, 4, 4)))
+    a, b = a / np.trace(a).real, b / np.trace(b).real
+    t, f = trace_distance(a, b), root_fidelity(a, b)
+    assert 1 - f <= t <= np.sqrt(1 - f * f)
+    assert t <= np.sqrt(relative_entropy(a, b) / 2)  # Pinsker's inequality
+    expected = np.trace(a @ (sl.logm(a) - sl.logm(b))).real
+    assert relative_entropy(a, b) == pytest.approx(expected, rel=1e-10)
+    assert root_fidelity(a, b) == pytest.approx(np.trace(sl.sqrtm(sl.sqrtm(a) @ b @ sl.sqrtm(a))).real, rel=1e-7)
+    assert relative_entropy(np.eye(2) / 2, np.diag([1.0, 0.0])) == np.inf
+    with pytest.raises(ValueError, match="shapes"):
+        trace_distance(np.eye(2), np.eye(3))
