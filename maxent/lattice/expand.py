@@ -96,7 +96,7 @@ class _Expander:
 
     def __init__(self, reader: Reader, densities: Mapping[str, str], path: tuple[str, ...] = ()) -> None:
         self.reader, self.sites, self.parameters = reader, reader.sites, reader.parameters
-        self.slots = reader.sites.slots
+        self.slots, self.slot_numbers = reader.sites.slots, reader.sites.slot_numbers
         self.numbers = Numbers(reader)
         self.texts, self.path = densities, path
         self.open: dict[str, tuple[Node, str, _Expander]] = {}
@@ -225,19 +225,18 @@ class _Expander:
 
     def _operator(self, node: Node, at: Mapping[str, int]) -> Words:
         name, member, species = node.value
-        site: int | None = self.reader.position(node.items[0], at)
+        index = self.reader.position(node.items[0], at)
+        site: int | None = index
         if member is not None:
-            place = self.sites.place(self.reader.position(node.items[0], at))
+            place = self.sites.place(index)
             site = None if place is None else self.sites.site(place, member)
         if site is None:
             return {}
-        kind = self.sites.kind(site)
-        if species not in kind.species or name not in kind.slots[0].symbols:
+        slot = self.slot_numbers.get((site, species))
+        symbols = None if slot is None else self.slots[slot].symbols.get(name)
+        if slot is None or symbols is None:
             written = f"{name}[..., {species}]" if species else name
-            self._fail(f"site {site} is a {kind.name} site: it has no '{written}'", node)
-        index = kind.species.index(species)
-        symbols = kind.slots[index].symbols[name]
-        slot = self.sites.first_slots[site] + index
+            self._fail(f"site {site} is a {self.sites.kind(site).name} site: it has no '{written}'", node)
         return {((slot, letter),): Coefficient.constant(factor) for factor, letter in symbols}
 
     def _fitting(self, node: Node, at: Mapping[str, int]) -> Iterator[Words]:

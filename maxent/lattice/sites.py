@@ -104,6 +104,11 @@ class Sites(ABC):
         return tuple((site, name) for site in range(self.size) for name in self.kind(site).species)
 
     @cached_property
+    def slot_numbers(self) -> dict[tuple[int, str], int]:
+        """Slot of every site and species."""
+        return {home: slot for slot, home in enumerate(self.homes)}
+
+    @cached_property
     def first_slots(self) -> tuple[int, ...]:
         """First slot of every site, and the number of slots as the last entry."""
         starts = [0]

@@ -1,8 +1,10 @@
-"""Letters of a spin s: ordered products of Sx, Sy and Sz, with exact structure constants.
+"""Letters of a spin s: Hermitian polynomials in Sx, Sy and Sz, with exact structure constants.
 
-The letters are Sx^a Sy^b Sz^c with b = 0 or 1 and 1 <= a + b + c <= 2s: since Sx^2 + Sy^2 + Sz^2 = s(s+1), these
-and the identity are (2s+1)^2 independent matrices. For s = 1/2 they are Sx, Sy and Sz. Products and conjugates are
-found with matrices over the rationals: in the basis scaled so that
+The letters are made from Sx^a Sy^b Sz^c with b = 0 or 1 and 1 <= a + b + c <= 2s: a pure power is a letter, a mixed
+product is one together with its conjugate, Sx^a Sy^b Sz^c + Sz^c Sy^b Sx^a. Since Sx^2 + Sy^2 + Sz^2 = s(s+1), these
+and the identity are (2s+1)^2 independent matrices; for s = 1/2 they are Sx, Sy and Sz. Letters are Hermitian, so a
+sum of words is Hermitian exactly when all its coefficients are real. Products are found with matrices over the
+rationals: in the basis scaled so that
 
     S+ |m> = (s - m) |m+1>,  S- |m> = (s + m) |m-1>,  Sz |m> = m |m>
 
@@ -50,26 +52,23 @@ class SpinOperators(LocalOperators):
         }
         if top == 1:
             symbols |= {"X": (((2, 0), 0),), "Y": (((2, 0), 1),), "Z": (((2, 0), 2),)}
-        super().__init__(f"spin-{spin}", top + 1, symbols, has_hermitian_letters=top == 1)
+        super().__init__(f"spin-{spin}", top + 1, symbols, has_hermitian_letters=True)
 
     def text(self, letter: int, subscript: str) -> str:
-        """Product of powers of Sx, Sy, Sz."""
+        """Power of Sx, Sy or Sz, or a mixed product with its conjugate in brackets."""
         names = [name + (f"[{subscript}]" if subscript else "") for name in ("Sx", "Sy", "Sz")]
-        factors = zip(names, self.exponents[letter], strict=True)
-        return "*".join(part for name, exponent in factors for part in power_text(name, exponent))
+        factors = [power_text(n, e) for n, e in zip(names, self.exponents[letter], strict=True) if e]
+        if len(factors) == 1:
+            return "*".join(factors[0])
+        forward, back = ("*".join(x for part in order for x in part) for order in (factors, factors[::-1]))
+        return f"({forward} + {back})"
 
     def _product(self, left: int, right: int) -> Combination:
         (a, turns), (b, more) = self._scaled[left], self._scaled[right]
         return self._expand(_times(a, b), turns + more)
 
     def _adjoint(self, letter: int) -> Combination:
-        a, b, c = self.exponents[letter]
-        x, y, z = self._components
-        product = _identity(self.dimension)
-        for matrix, exponent in ((z, c), (y, b), (x, a)):
-            for _ in range(exponent):
-                product = _times(product, matrix)
-        return self._expand(product, b)
+        return (((1, 0), letter),)
 
     def _matrix(self, letter: int) -> np.ndarray:
         rows, turns = self._scaled[letter]
@@ -104,14 +103,14 @@ class SpinOperators(LocalOperators):
     @cached_property
     def _scaled(self) -> list[tuple[_Rows, int]]:
         """Every letter as a rational matrix times i to the power given."""
-        x, y, z = self._components
         found = []
-        for a, b, c in self.exponents:
-            product = _identity(self.dimension)
-            for matrix, exponent in ((x, a), (y, b), (z, c)):
-                for _ in range(exponent):
-                    product = _times(product, matrix)
-            found.append((product, b))
+        for exponents in self.exponents:
+            factors = [m for m, exponent in zip(self._components, exponents, strict=True) for _ in range(exponent)]
+            letter = _product(factors)
+            if sum(e > 0 for e in exponents) > 1:
+                back = _product(factors[::-1])
+                letter = [[x + y for x, y in zip(a, b, strict=True)] for a, b in zip(letter, back, strict=True)]
+            found.append((letter, exponents[1]))
         return found
 
     def _expand(self, rows: _Rows, turns: int) -> Combination:
@@ -149,6 +148,13 @@ class SpinOperators(LocalOperators):
 
 def _identity(size: int) -> _Rows:
     return [[Fraction(int(r == c)) for c in range(size)] for r in range(size)]
+
+
+def _product(factors: Sequence[_Rows]) -> _Rows:
+    product = factors[0]
+    for factor in factors[1:]:
+        product = _times(product, factor)
+    return product
 
 
 def _times(a: _Rows, b: _Rows) -> _Rows:
