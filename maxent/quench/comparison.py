@@ -19,7 +19,7 @@ from maxent.families.density import MatricesState
 from maxent.lattice import OperatorSum
 from maxent.quench.conservation import Conservation, check_conservation, require_conserved
 from maxent.quench.dephasing import Dephased, dephase
-from maxent.quench.distances import trace_distance
+from maxent.quench.distances import block_distances, nested_blocks
 from maxent.quench.eigenstates import eigenstate_range
 from maxent.quench.ensembles import Charges, Sector, find_sector
 from maxent.quench.evolution import Evolution, evolve
@@ -315,7 +315,7 @@ class _Study:
         with self._clock("dephased state"):
             dephased = dephase(spectrum, self.start)
             truth_state = dephased.state
-            reference = {sites: truth_state.reduced(sites) for sites in map(self._sites_of, self.blocks)}
+            reference = nested_blocks(truth_state, [self._sites_of(b) for b in self.blocks])
             truth = c.means(truth_state)
             initial = {n: self.start.mean(q)[0] for n, q in c.observables.items()}
         with self._clock("conservation"):
@@ -394,7 +394,7 @@ class _Study:
             multiplier_errors=dict(result.multiplier_errors),
             entropy=result.entropy,
             means=self._direct_means(state) if plain.sector else self.charges.means(state),
-            distances=_distances(state, reference),
+            distances=block_distances(state, reference),
             corrections=corrections,
             variances={n: (float(spread[k, k]), float(chi[k])) for k, n in enumerate(names)},
         )
@@ -451,7 +451,7 @@ class _Study:
                     sector.values if inside and sector is not None else {},
                     entropy=window.entropy,
                     means=self.charges.means(window.state),
-                    distances=_distances(window.state, reference),
+                    distances=block_distances(window.state, reference),
                     facts=facts,
                 )
             )
@@ -529,7 +529,7 @@ class _Study:
             {} if sector is None else sector.values,
             means=medians,
             ranges=ranges,
-            distances=_distances(state, reference),
+            distances=block_distances(state, reference),
             facts={"energy": float(spectrum.energies[level])},
         )
 
@@ -616,10 +616,6 @@ class _Clock:
 
     def __exit__(self, *_: object) -> None:
         self.seconds[self.part] = time.process_time() - self.begun
-
-
-def _distances(state: MatricesState, reference: Mapping[tuple[int, ...], np.ndarray]) -> dict[int, float]:
-    return {len(sites): trace_distance(state.reduced(sites), rho) for sites, rho in reference.items()}
 
 
 def _start_covariance(start: Start, operators: Sequence[Any]) -> np.ndarray:

@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 import numpy as np
 
-__all__ = ["relative_entropy", "root_fidelity", "trace_distance"]
+from maxent.families.density import MatricesState
+
+__all__ = ["block_distances", "nested_blocks", "relative_entropy", "root_fidelity", "trace_distance"]
 
 #: Eigenvalues of a density matrix below this are rounding.
 NOTHING = 1e-15
@@ -66,6 +69,30 @@ def relative_entropy(a: Any, b: Any) -> float:
         return float("inf")
     on, there = p > NOTHING, q > NOTHING
     return max(float(p[on] @ np.log(p[on]) - weight[there] @ np.log(q[there])), 0.0)
+
+
+def nested_blocks(state: MatricesState, blocks: Sequence[tuple[int, ...]]) -> dict[tuple[int, ...], np.ndarray]:
+    """Reduced states of nested blocks: the largest is formed from the state, the others are traced out of it."""
+    if not blocks:
+        return {}
+    largest = max(blocks, key=len)
+    whole = state.reduced(largest)
+    assert state.dims is not None
+    out = {}
+    for sites in blocks:
+        first = largest.index(sites[0])
+        left, mid, right = (
+            int(np.prod([state.dims[i] for i in part], dtype=int))
+            for part in (largest[:first], sites, largest[first + len(sites) :])
+        )
+        out[sites] = np.einsum("aibajb->ij", whole.reshape(left, mid, right, left, mid, right))
+    return out
+
+
+def block_distances(state: MatricesState, reference: Mapping[tuple[int, ...], np.ndarray]) -> dict[int, float]:
+    """Trace distance of the state of each block, by its number of sites, to a reference state by sites."""
+    found = nested_blocks(state, list(reference))
+    return {len(sites): trace_distance(found[sites], rho) for sites, rho in reference.items()}
 
 
 def _root(a: np.ndarray) -> np.ndarray:

@@ -15,7 +15,7 @@ from typing import Any
 
 import numpy as np
 
-from maxent.quench.distances import trace_distance
+from maxent.quench.distances import block_distances, trace_distance
 from maxent.quench.ensembles import Charges
 from maxent.result import Result
 
@@ -114,10 +114,7 @@ class _Fits:
     def distances(self, names: Sequence[str]) -> dict[int, float]:
         key = frozenset(names)
         if key not in self._distances:
-            state = self.result(names).state
-            self._distances[key] = {
-                len(sites): trace_distance(state.reduced(sites), rho) for sites, rho in self.reference.items()
-            }
+            self._distances[key] = block_distances(self.result(names).state, self.reference)
         return self._distances[key]
 
     def step(self, before: tuple[str, ...], name: str) -> Step | None:
