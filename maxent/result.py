@@ -108,7 +108,7 @@ class Certificate:
         ValueError
             Names that do not fit.
         """
-        names = family.names  # type: ignore[attr-defined]
+        names = names_of(family)
         q, accuracy = collect(names, targets, self.accuracy)
         v = np.array([self.direction.get(n, 0.0) for n in names])
         slack = collect_slack(names, targets)
@@ -147,7 +147,7 @@ class Certificate:
         ValueError
             Names that do not fit.
         """
-        names = family.names  # type: ignore[attr-defined]
+        names = names_of(family)
         q, accuracy = collect(names, targets, self.accuracy)
         v = np.array([self.direction.get(n, 0.0) for n in names], float)
         slack = collect_slack(names, targets)
@@ -380,6 +380,7 @@ class Result:
         ValueError
             A target leaves something open and `targets` are not given, or the names do not fit.
         """
+        names_of(family)
         if targets is None:
             relaxed = [n for n, place in self.slack.items() if place != "exact"]
             if relaxed:
@@ -442,3 +443,16 @@ class Result:
             numbers = self.targets[n], self.values[n], self.multipliers[n]
             lines.append("  {}: target {:.10g}, value {:.10g}, multiplier {:.10g}".format(n, *numbers))
         return "\n".join(lines)
+
+
+def names_of(family: Any) -> tuple[str, ...]:
+    """Names of the charges of a family.
+
+    Raises
+    ------
+    TypeError
+        Not a family with named charges.
+    """
+    if not isinstance(family, Family) or not hasattr(family, "names"):
+        raise TypeError(f"family must be the one given to maxent.solve, not {type(family).__name__}")
+    return tuple(family.names)

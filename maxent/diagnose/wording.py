@@ -16,18 +16,28 @@ __all__ = ["combination_text", "message", "places"]
 
 #: Margins below this are a close call: the verdict hangs on the last digits of the targets.
 CLOSE = 1e-9
+#: Most parts of a combination that a sentence spells out.
+MOST = 12
 
 
 def combination_text(names: Sequence[str], v: np.ndarray, *, digits: int = 4) -> str:
-    """``0.8 energy - 0.6 magnetisation``; parts below 1e-12 of the largest are left out."""
+    """``0.8 energy - 0.6 magnetisation``; parts below 1e-12 of the largest are left out.
+
+    Of more than `MOST` parts the largest are written, in the order of the names, and the others counted.
+    """
     parts: list[str] = []
-    largest = np.abs(v).max(initial=0.0)
-    for name, x in zip(names, v, strict=True):
-        if abs(x) > 1e-12 * largest:
+    size = np.abs(v)
+    told = size > 1e-12 * size.max(initial=0.0)
+    count = int(told.sum())
+    if count > MOST:
+        told[np.argsort(-size, kind="stable")[MOST:]] = False
+    for name, x, there in zip(names, v, told, strict=True):
+        if there:
             sign = ("-" if x < 0 else "") if not parts else (" - " if x < 0 else " + ")
             number = f"{abs(x):.{digits}g}"
             parts.append(sign + (name if number == "1" else f"{number} {name}"))
-    return "".join(parts) or "0"
+    rest = f" + {count - MOST} smaller parts" if count > MOST else ""
+    return "".join(parts) + rest or "0"
 
 
 def message(

@@ -157,3 +157,11 @@ def test_every_message_is_one_line():
 )
 def test_combinations_as_text(v, text):
     assert combination_text(("a", "b", "c"), np.array(v)) == text
+
+
+def test_long_combinations_are_cut():
+    names = [f"c{k}" for k in range(600)]
+    v = np.linspace(1.0, 2.0, 600)
+    text = combination_text(names, v)
+    assert text.endswith("c599 + 588 smaller parts") and len(text) < 300
+    assert combination_text(["a", "b"], np.array([1.0, -0.5])) == "a - 0.5 b"
