@@ -6,11 +6,15 @@ from pathlib import Path
 
 import pytest
 
+from maxent import lattice
 from maxent.errors import FormulaError
 from maxent.lattice import Ring, formula
 
 PAGE = Path(__file__).parents[2] / "docs" / "formulas.md"
 SHOWN = re.findall(r"^\| `([^`]+)` \| (formula column .*?) \|$", PAGE.read_text(encoding="utf-8"), re.M)
+ELSEWHERE = re.findall(
+    r"^\| `([^`]+)` \| `([^`]+)` \| (formula column .*?) \|$", PAGE.read_text(encoding="utf-8"), re.M
+)
 
 
 def test_examples():
@@ -21,11 +25,18 @@ def test_examples():
 
 
 def test_the_table_of_errors_was_found():
-    assert len(SHOWN) == 10
+    assert (len(SHOWN), len(ELSEWHERE)) == (10, 5)
 
 
 @pytest.mark.parametrize(("text", "message"), SHOWN)
 def test_errors(text, message):
     with pytest.raises(FormulaError) as caught:
         formula(text, Ring(4), {"J": 1.0}, hermitian=True)
+    assert str(caught.value) == message
+
+
+@pytest.mark.parametrize(("sites", "text", "message"), ELSEWHERE)
+def test_errors_on_other_sites(sites, text, message):
+    with pytest.raises(FormulaError) as caught:
+        formula(text, eval(sites, vars(lattice).copy()))
     assert str(caught.value) == message
