@@ -90,7 +90,7 @@ def _text(pattern: Pattern, sites: Sites, place: Callable[[int], str]) -> tuple[
     texts = []
     for _, (offset, inner, letter) in shown:
         site, species = sites.homes[inner % width]
-        words = [place(offset), sites.cell[site], species]
+        words = [place(offset), sites.cell[site] if len(sites.cell) > 1 else "", species]
         texts.append(sites.slots[inner].text(letter, ", ".join(word for word in words if word)))
     return sign, "*".join(texts)
 

@@ -129,6 +129,21 @@ def test_spinful_ring_by_hand():
     np.testing.assert_allclose(matrix(text, sites), 0.7 * (hop + hop.T) - 0.4 * onsite, atol=1e-14)
 
 
+def test_a_cell_of_one_named_site_needs_no_name():
+    for sites in (Ring(3, {"a": Spin(1)}), Ring(3, cell=("a",)), Ring(3, cell="a")):
+        op = formula("J*Sz[i]*Sz[i+1] + K*Sx[1]", sites, P)
+        assert formula(str(op), sites, P) == op
+        assert formula("Sz[x]*Sz[y] for <x, y>", sites) == formula("Sz[i]*Sz[i+1]", sites)
+
+
+def test_derivatives_by_entries_of_a_list_per_site():
+    op = formula("sites[i, a]**2*Sz[i, b] + (sites[x]*Sx[x]*Sx[y] for <x, y> in rungs)", ladder(), P)
+    found = op.derivative("sites", 2)  # site 2 is (1, a)
+    assert found == formula("2*sites[1, a]*Sz[1, b] + Sx[1, a]*Sx[1, b]", ladder(), P)
+    hop = formula("w[i]*(dagger(c[i])*c[i+1] + h.c.)", Ring(3, Fermions()), {"w": [1, 2, 3]})
+    assert hop.derivative("w", 2) == formula("dagger(c[2])*c[0] + h.c.", hop.sites)
+
+
 # --- lattices given by bonds
 
 
