@@ -132,6 +132,23 @@ class Charges:
         inner = replace(state, basis=None, dims=None)
         return {name: inner.mean(q) for name, q in self.conjugated.items()}
 
+    @cached_property
+    def lines(self) -> np.ndarray:
+        """Means of every observable in every joint eigenstate, (observables, states), for charges that commute.
+
+        In the order of the weights of a state of `family`: any ensemble is then a product of numbers.
+        """
+        state = self.family.state(np.zeros(len(self.names)))
+        out = np.empty((len(self.observables), len(state.populations)))
+        for row, q in zip(out, map(sp.csr_array, self.conjugated.values()), strict=True):
+            n = len(state.flat)
+            row[:n] = np.real(q.diagonal())[state.flat]
+            for g in state.groups:
+                image = q[g.index][:, g.index] @ g.vectors
+                row[n : n + len(g.weights)] = np.real(np.einsum("ik,ik->k", g.vectors.conj(), image))
+                n += len(g.weights)
+        return out
+
     def fit(self, names: Sequence[str], targets: Mapping[str, tuple[float, float]], sector: Sector | None) -> Result:
         """Ensemble of some charges, over all sectors or inside one."""
         family = self.subfamily(names)
@@ -147,8 +164,10 @@ class Charges:
         lam = np.array([result.multipliers[n] for n in names])
 
         def at(x: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-            state = family.state(x)
-            return family.evaluate(x, 1).values, np.array(list(self.means(state).values()))
+            state, values = family.state(x), family.evaluate(x, 1).values
+            if self.commute:
+                return values, self.lines @ np.concatenate([state.flat_weights, *[g.weights for g in state.groups]])
+            return values, np.array(list(self.means(state).values()))
 
         curvature = second_derivatives(at, lam, result.covariance)
         if curvature is None:

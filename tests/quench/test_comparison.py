@@ -12,6 +12,7 @@ from maxent.lattice import Chain, ProductState, Ring, formula
 from maxent.quench.comparison import compare
 from maxent.quench.corrections import second_derivatives
 from maxent.quench.distances import relative_entropy, root_fidelity, trace_distance
+from maxent.quench.ensembles import Charges
 from maxent.quench.sizes import SizeSeries, size_series
 from maxent.quench.starts import Start
 
@@ -122,6 +123,18 @@ def test_leading_correction_is_that_of_the_spreads():
     assert canonical.means["zz"] == pytest.approx(m * m, abs=1e-12)
     # o(q) = (q/L)^2: second derivative 2/L^2; V_start - chi = -L (1/4 - m^2)
     assert canonical.corrections["zz"] == pytest.approx(-(0.25 - m * m) / 6, rel=1e-3)
+
+
+def test_means_by_numbers_are_those_of_dense_matrices():
+    given = study(6)
+    charges = Charges(given["charges"], "energy", observables=given["observables"])
+    assert charges.commute
+    lam = np.array([0.7, -0.4, 0.3])
+    state = charges.family.state(lam)
+    rho = gibbs(given["charges"].values(), lam)
+    expected = [np.trace(rho @ q.matrix()).real for q in given["observables"].values()]
+    weights = np.concatenate([state.flat_weights, *[g.weights for g in state.groups]])
+    np.testing.assert_allclose(charges.lines @ weights, expected, atol=1e-13)
 
 
 def test_second_derivatives_of_a_closed_form():
