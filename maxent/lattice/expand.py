@@ -101,6 +101,7 @@ class _Expander:
         self.texts, self.path = densities, path
         self.open: dict[str, tuple[Node, str, _Expander]] = {}
         self.cache: dict[tuple[str, int], Words] = {}
+        self.operators: dict[tuple[str, int, str], Words] = {}
 
     @property
     def integers(self) -> set[str]:
@@ -232,12 +233,17 @@ class _Expander:
             site = None if place is None else self.sites.site(place, member)
         if site is None:
             return {}
+        known = self.operators.get((name, site, species))
+        if known is not None:
+            return known
         slot = self.slot_numbers.get((site, species))
         symbols = None if slot is None else self.slots[slot].symbols.get(name)
         if slot is None or symbols is None:
             written = f"{name}[..., {species}]" if species else name
             self._fail(f"site {site} is a {self.sites.kind(site).name} site: it has no '{written}'", node)
-        return {((slot, letter),): Coefficient.constant(factor) for factor, letter in symbols}
+        words: Words = {((slot, letter),): Coefficient.constant(factor) for factor, letter in symbols}
+        self.operators[name, site, species] = words  # sums of words are never changed in place
+        return words
 
     def _fitting(self, node: Node, at: Mapping[str, int]) -> Iterator[Words]:
         for item in node.items:

@@ -217,16 +217,20 @@ class ProductState(LocalProduct):
         self._means: dict[tuple[int, int], complex] = {}
 
     def _letter_mean(self, slot: int, letter: int) -> complex:
+        known = self._means.get((slot, letter))
+        if known is None:
+            known = self._means[slot, letter] = self._compute_mean(slot, letter)
+        return known
+
+    def _compute_mean(self, slot: int, letter: int) -> complex:
         local = self.sites.slots[slot]
         assert isinstance(local, SpinOperators)
         if letter < 3:
             return float(local.spin) * float(self.directions[slot, letter])
-        if (slot, letter) not in self._means:
-            amplitudes, matrix = self._amplitudes(slot), local.matrix(letter)
-            value = complex(np.vdot(amplitudes, matrix @ amplitudes))
-            noise = 2.0**-50 * float(np.abs(matrix).max())
-            self._means[slot, letter] = complex(*(x if abs(x) > noise else 0.0 for x in (value.real, value.imag)))
-        return self._means[slot, letter]
+        amplitudes, matrix = self._amplitudes(slot), local.matrix(letter)
+        value = complex(np.vdot(amplitudes, matrix @ amplitudes))
+        noise = 2.0**-50 * float(np.abs(matrix).max())
+        return complex(*(x if abs(x) > noise else 0.0 for x in (value.real, value.imag)))
 
     def _amplitudes(self, slot: int) -> np.ndarray:
         top = self.sites.slots[slot].dimension - 1
