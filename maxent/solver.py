@@ -21,7 +21,7 @@ from maxent.diagnose.explanation import explain as sentences
 from maxent.diagnose.multipliers import Multipliers, relaxed_multipliers, replay, user_covariance, user_multipliers
 from maxent.diagnose.nearest import default_units, nearest
 from maxent.diagnose.redundancy import redundancies
-from maxent.diagnose.wording import message, places
+from maxent.diagnose.wording import LARGEST_LOG, message, places
 from maxent.result import Certificate, FaceChain, Result
 from maxent.targets import collect, collect_slack, collect_units
 
@@ -213,7 +213,8 @@ def _faces(names: Sequence[str], outcome: Outcome) -> FaceChain | None:
         at = at.face
     log_dimension = chain[-1].log_dimension
     directions = tuple(_named(names, x.direction) for x in chain if x.direction is not None)
-    dimension = float(np.exp(log_dimension))
-    if abs(dimension - np.rint(dimension)) < 1e-9 * dimension:  # a count, up to the rounding of its logarithm
+    dimension = float(np.exp(log_dimension)) if log_dimension < LARGEST_LOG else float("inf")
+    # a count, up to the rounding of its logarithm
+    if np.isfinite(dimension) and abs(dimension - np.rint(dimension)) < 1e-9 * dimension:
         dimension = float(np.rint(dimension))
     return FaceChain(dimension, log_dimension, len(chain), directions, tuple(x.gap for x in chain))

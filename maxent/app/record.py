@@ -139,7 +139,7 @@ def _face(result: Any) -> dict[str, Any] | None:
     if face is None:
         return None
     return {
-        "dimension": round(face.dimension),
+        "dimension": round(face.dimension) if math.isfinite(face.dimension) else None,
         "depth": face.depth,
         "directions": [_combination(d) for d in face.directions],
         "gaps": [_finite(gap) for gap in face.gaps],

@@ -59,7 +59,7 @@ def certificate(found: Mapping[str, Any]) -> str:
 def face(found: Mapping[str, Any]) -> str:
     """Say where the limit state of a boundary verdict lives."""
     dimension, depth = found["dimension"], found["depth"]
-    states = "a single state" if dimension == 1 else f"{dimension} dimensions"
+    states = "a single state" if dimension == 1 else f"{dimension or 'unboundedly many'} dimensions"
     steps = "in one step" if depth == 1 else f"in {depth} steps, each inside the face before"
     gaps = listing((number(gap, 3) for gap in found["gaps"]), last="and")
     return (

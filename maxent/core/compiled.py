@@ -61,7 +61,7 @@ def _minimise(family: Family, lam: Any, iterations: int) -> tuple[Any, Any]:
 
     def advance(carry: tuple[Any, Iterate]) -> tuple[Any, Iterate]:
         count, at = carry
-        return count + 1, newton_step(family.evaluate, at)
+        return count + 1, newton_step(family.evaluate, at, family.inside)
 
     count, at = jax.lax.while_loop(unfinished, advance, (jnp.asarray(0), start))
     return at.lam, count

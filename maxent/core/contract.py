@@ -245,6 +245,13 @@ class Family:
         """Upper bounds (m,) of the spread of each charge, for a first look; infinite where none is known."""
         return np.full(len(self.scale), np.inf)
 
+    def inside(self, lam: Any, step: Any, evaluation: Evaluation) -> Any:
+        """`step` as it is where ``ln Z`` is finite everywhere; otherwise one that stays inside the domain, traceable.
+
+        It may be another step along which the dual falls, since the family knows what bends there.
+        """
+        return step
+
     def domain(self) -> np.ndarray | None:
         """Rows g of an array (c, m): ``ln Z`` is finite only for ``g.lam >= 0``, with finite slope on that edge."""
         return None

@@ -27,6 +27,10 @@ FAR = 1e6
 #: Relative depth below which rounding, amplified by the closeness of the boundary, defeats the existence proof.
 CLOSE = 1e-8
 
+#: Ratio of the largest to the smallest variance at which the coordinates of unbounded charges are made anew
+#: at once, and when the residual is below NEAR.
+WIDE, CLEAR, NEAR = 1e6, 1e2, 1e-3
+
 #: Newton steps before the search turns to faces and the analytic centre.
 LIMIT = 200
 
@@ -109,7 +113,7 @@ def nothing_free(problem: Problem, memo: Memo) -> Outcome | None:
 
 def first_look(problem: Problem, memo: Memo) -> Outcome | None:
     """Steepest direction at the start; settles many unreachable targets without any iteration."""
-    start = np.linalg.lstsq(memo.whitening.transform.T, problem.family.start(), rcond=None)[0]
+    start = memo.whitening.inverse.T @ problem.family.start()
     memo.at = begin(memo.family.evaluate, start)
     return outside(problem, memo, memo.at.evaluation.values)
 
@@ -124,7 +128,12 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
         lam, memo.iterations = route(memo.family.traced(), memo.here.lam)
         memo.at = begin(memo.family.evaluate, lam)
     best, lowest, before, stalled = np.inf, np.inf, np.inf, 0
+    unbounded, renewed = not np.all(np.isfinite(memo.family.reach())), False
     for count in range(LIMIT):
+        if unbounded and _skewed(memo, renewed):
+            # the last steps in coordinates made for this state: they resolve a condensate to its last digits
+            renewed, best = memo.here.residual < NEAR, np.inf
+            _whiten_anew(problem, memo)
         at = memo.here
         ev, size = at.evaluation, float(at.residual)
         memo.trace.append((size, float(ev.log_partition), float(ev.level)))
@@ -147,10 +156,37 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
             memo.floored = bool(size <= 1e4 * ev.rounding)
             return None
         before = size
-        memo.at = newton_step(memo.family.evaluate, at)
+        memo.at = newton_step(memo.family.evaluate, at, memo.family.inside)
         memo.step = memo.at.lam - at.lam
         memo.iterations += 1
     return None
+
+
+def _skewed(memo: Memo, renewed: bool) -> bool:
+    """Whether the coordinates of unbounded charges no longer fit the state, near the end more narrowly."""
+    h = memo.here.curvature
+    return bool(h[-1] > WIDE * h[0] or (not renewed and memo.here.residual < NEAR and h[-1] > CLEAR * h[0]))
+
+
+def _whiten_anew(problem: Problem, memo: Memo) -> None:
+    """Coordinates in which the covariance at hand is the identity.
+
+    For unbounded charges alone: a level with n particles has a variance of n^2, and coordinates made for a few
+    particles resolve its exponent ~1/n with a relative error of eps n only.
+    """
+    at = memo.here
+    root = np.sqrt(np.maximum(at.curvature, 1e-30 * at.curvature[-1]))
+    renewed = lambda x: root * (at.axes.T @ x)
+    memo.whitening = replace(
+        memo.whitening,
+        transform=(at.axes / root).T @ memo.whitening.transform,
+        inverse=memo.whitening.inverse @ (at.axes * root),
+        mean=memo.whitening.values(at.evaluation.values),
+    )
+    memo.family = problem.family.combine(memo.whitening.transform, np.zeros(len(root)))
+    memo.unit = np.abs(memo.whitening.transform) @ problem.unit
+    memo.near = [(margin, renewed(x)) for margin, x in memo.near]
+    memo.at = begin(memo.family.evaluate, renewed(at.lam))
 
 
 def _promises_separation(problem: Problem, memo: Memo) -> bool:
@@ -230,7 +266,7 @@ def interior(problem: Problem, memo: Memo) -> Outcome | None:
     for _ in range(2 * LIMIT):
         if memo.floored or memo.here.rejected > PATIENCE:
             break
-        memo.at = newton_step(memo.family.evaluate, memo.here)
+        memo.at = newton_step(memo.family.evaluate, memo.here, memo.family.inside)
         memo.floored = bool(at_floor(memo.at))
         memo.iterations += 1
     if memo.floored or memo.here.residual <= 1e3 * memo.here.evaluation.rounding:

@@ -83,8 +83,10 @@ def begin(evaluate: Callable[[Any], Evaluation], lam: Any) -> Iterate:
     return Iterate(lam, 1.0 + norm(lam), evaluation, *curvatures(evaluation), xp.asarray(0))
 
 
-def newton_step(evaluate: Callable[[Any], Evaluation], at: Iterate) -> Iterate:
-    """One trial step.
+def newton_step(
+    evaluate: Callable[[Any], Evaluation], at: Iterate, inside: Callable[[Any, Any, Evaluation], Any] | None = None
+) -> Iterate:
+    """One trial step; `inside` is `Family.inside`, which keeps it in the domain.
 
     While the predicted decrease can be seen in F, F decides; below that (F is blind for residuals under 1e-8) the
     residual and the slope at the far end decide.  A non-finite trial is a rejected step.
@@ -94,6 +96,9 @@ def newton_step(evaluate: Callable[[Any], Evaluation], at: Iterate) -> Iterate:
     g, size = -ev.values, norm(ev.values)
     floored = xp.maximum(h, 1e-32 * h[-1] + 1e-300)
     s, predicted = trust_step(g, floored, axes, radius)
+    if inside is not None and (kept := inside(lam, s, ev)) is not s:
+        s = kept
+        predicted = xp.maximum(-(g @ s) - 0.5 * xp.sum(floored * (axes.T @ s) ** 2), -0.5 * (g @ s))
     new = evaluate(lam + s)
     blind = 8 * EPS * (xp.abs(ev.log_partition) + xp.maximum(ev.level, new.level) + 1)
     new_size, length = norm(new.values), norm(s)

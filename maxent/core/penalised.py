@@ -115,6 +115,10 @@ class Penalised(Family):
         """Bounds of the family, for the same reason."""
         return self.inner.reach()
 
+    def inside(self, lam: Any, step: Any, evaluation: Evaluation) -> Any:
+        """Steps of the family: the penalty has no edge."""
+        return self.inner.inside(lam, step, evaluation)
+
     def domain(self) -> np.ndarray | None:
         """Domain of the family."""
         return self.inner.domain()

@@ -135,10 +135,12 @@ def _nearest(f: Findings, at: Nearest) -> list[str]:
 def _boundary(f: Findings) -> list[str]:
     text = []
     at: Outcome | None = f.outcome
-    lead, dimension = "Only states of lowest", 0
+    lead, dimension = "Only states of lowest", 0.0
     while at is not None and at.face is not None and at.direction is not None:
-        dimension = round(float(np.exp(at.log_dimension)))
-        face = "a single state" if dimension == 1 else f"a face of {number(dimension, 12)} states"
+        dimension = float(np.rint(np.exp(at.log_dimension))) if at.log_dimension < 30 else np.inf
+        states = "infinitely many" if at.log_dimension == np.inf else f"10^{at.log_dimension / np.log(10):.1f}"
+        states = number(dimension, 12) if np.isfinite(dimension) else states
+        face = "a single state" if dimension == 1 else f"a face of {states} states"
         text.append(
             f"{lead} {_exposing(f, at)} can have these values: {face}, with a gap of {number(at.gap, 2)} of the whole "
             "range to the next level."

@@ -16,6 +16,9 @@ __all__ = ["combination_text", "message", "places"]
 
 #: Margins below this are a close call: the verdict hangs on the last digits of the targets.
 CLOSE = 1e-9
+
+#: Logarithms of larger dimensions overflow; independent levels and bosons have faces of that size.
+LARGEST_LOG = 700.0
 #: Most parts of a combination that a sentence spells out.
 MOST = 12
 
@@ -131,11 +134,14 @@ def _boundary(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float)
     depth = 1
     while last.face is not None and last.face.face is not None:
         last, depth = last.face, depth + 1
-    dimension = np.exp(last.log_dimension)
+    dimension = "infinite"
+    if np.isfinite(last.log_dimension):
+        large = last.log_dimension > 30
+        dimension = f"10^{last.log_dimension / np.log(10):.1f}" if large else f"{np.exp(last.log_dimension):.0f}"
     chain = f" after {depth} faces" if depth > 1 else ""
     return (
         f"On the boundary of what any state can reach, to the accuracy of the inputs (margin {o.margin:.0e}, "
-        f"resolvable {o.tolerance:.0e}): no finite multipliers; limit state on a {dimension:.0f}-dimensional "
+        f"resolvable {o.tolerance:.0e}): no finite multipliers; limit state on a {dimension}-dimensional "
         f"face{chain}, exposing combination {combination_text(names, o.direction)}."
     )
 

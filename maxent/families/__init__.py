@@ -10,10 +10,15 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from maxent.families.matrices import Matrices as Matrices
     from maxent.families.microstates import Microstates as Microstates
+    from maxent.families.modes import Modes as Modes
 
-__all__ = ["Matrices", "Microstates"]
+__all__ = ["Matrices", "Microstates", "Modes"]
 
-_HOME = {"Matrices": "maxent.families.matrices", "Microstates": "maxent.families.microstates"}
+_HOME = {
+    "Matrices": "maxent.families.matrices",
+    "Microstates": "maxent.families.microstates",
+    "Modes": "maxent.families.modes",
+}
 
 
 def __getattr__(name: str) -> Any:

@@ -1,0 +1,103 @@
+"""One level: ``ln Z`` of a copy, mean occupation and its variance, for fermions, bosons, distinguishable particles.
+
+With w the energy of one particle in units of the temperature, n = 1/(e^w + s), s = 1 for fermions, -1 for bosons, 0 for
+distinguishable particles (of which ``ln Z = e^-w``, the 1/N! counted); variance n (1 - s n).  Every form is chosen so
+that nothing overflows or cancels for w from 1e-8 to 1e5.  Floor: families.  Knows nothing of charges and levels.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from maxent.core.contract import namespace
+
+__all__ = ["SIGNS", "dual_of_logs", "exponents", "level_entropy", "level_terms", "log_partitions", "unmixing"]
+
+#: s in n = 1/(e^w + s).
+SIGNS = {"fermions": 1, "bosons": -1, "distinguishable": 0}
+
+
+def level_terms(w: Any, statistics: str) -> tuple[Any, Any, Any]:
+    """``ln Z``, mean and variance of the occupation of one copy of each level.
+
+    Parameters
+    ----------
+    w : (n,) array
+        Exponents ``lam.q_k``; positive for bosons.
+    statistics : {"fermions", "bosons", "distinguishable"}
+
+    Returns
+    -------
+    log_z, occupation, variance : (n,) arrays
+    """
+    xp = namespace(w)
+    if statistics == "fermions":
+        e = xp.exp(-xp.abs(w))
+        sum_ = 1.0 + e
+        occupation = xp.where(w > 0, e, 1.0) / sum_
+        return xp.maximum(-w, 0.0) + xp.log1p(e), occupation, e / sum_**2
+    if statistics == "bosons":
+        e, rest = xp.exp(-w), -xp.expm1(-w)
+        return -xp.where(w < np.log(2), xp.log(rest), xp.log1p(-xp.minimum(e, 0.75))), e / rest, e / rest**2
+    e = xp.exp(-w)
+    return e, e, e
+
+
+def log_partitions(w: Any, statistics: str) -> Any:
+    """``ln Z`` of one copy of each level, (n,), for JAX: differentiable twice; +inf where bosons are not confined."""
+    import jax.numpy as jnp
+
+    if statistics == "fermions":
+        return jnp.logaddexp(0.0, -w)
+    if statistics == "bosons":
+        inside = jnp.where(w > 0, w, 1.0)
+        return jnp.where(w > 0, -jnp.log(-jnp.expm1(-inside)), jnp.inf)
+    return jnp.exp(-w)
+
+
+def exponents(occupation: np.ndarray, statistics: str) -> np.ndarray:
+    """The exponents w with these occupations, ``ln((1 - s n)/n)``; infinite for empty and for full levels."""
+    with np.errstate(divide="ignore"):
+        return np.log1p(-SIGNS[statistics] * occupation) - np.log(occupation)
+
+
+def level_entropy(w: np.ndarray, occupation: np.ndarray, statistics: str) -> np.ndarray:
+    """Entropy ``ln Z + w n`` of one copy of each level in nats, (n,); 0 where w is infinite."""
+    finite = np.isfinite(w)
+    w = np.where(finite, w, 1.0)
+    if statistics == "fermions":  # symmetric in particles and holes, as ln Z + w n is not
+        e = np.exp(-np.abs(w))
+        return np.where(finite, np.log1p(e) + np.abs(w) * e / (1 + e), 0.0)
+    return np.where(finite, level_terms(w, statistics)[0] + w * occupation, 0.0)
+
+
+def unmixing(w: np.ndarray, u: np.ndarray, statistics: str) -> float:
+    """A number c such that no variance falls faster than ``exp(-c |t|)`` along ``w + t u``.
+
+    The logarithmic slope of the variance is tanh(w/2) for fermions, 1 for distinguishable particles and coth(w/2) for
+    bosons, where it falls only as w grows, and the slope with it.
+    """
+    if not len(u):
+        return 0.0
+    size = np.abs(u)
+    return float(np.max(size / np.tanh(0.5 * w)) if statistics == "bosons" else size.max())
+
+
+def dual_of_logs(w: np.ndarray, statistics: str) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Value, occupation and curvature of ``max_n [ln n + ln(1 - n) - w n]``, without ``ln(1 - n)`` unless fermions.
+
+    Conjugates of self-concordant barriers are self-concordant (Nesterov, Nemirovskii 1994, from memory).  For bosons
+    and distinguishable particles w must be positive.
+    """
+    if statistics != "fermions":
+        return -np.log(w) - 1.0, 1.0 / w, 1.0 / w**2
+    root = np.hypot(w, 2.0)
+    # the occupation 2/(2 + w + r) and the one of the holes, 2/(2 - w + r), without cancellation
+    small = 4.0 / (root + np.abs(w))  # = r - |w|
+    minority = 2.0 / (2.0 + root + np.abs(w))
+    majority = 2.0 / (2.0 + small)
+    n = np.where(w > 0, minority, majority)
+    value = np.log(minority) + np.log(majority) - w * n
+    return value, n, 1.0 / (minority**-2 + majority**-2)
