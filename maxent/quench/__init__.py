@@ -7,6 +7,9 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from maxent.quench.comparison import Comparison as Comparison
+    from maxent.quench.comparison import Ensemble as Ensemble
+    from maxent.quench.comparison import compare as compare
     from maxent.quench.conservation import Conservation as Conservation
     from maxent.quench.conservation import check_conservation as check_conservation
     from maxent.quench.conservation import require_conserved as require_conserved
@@ -15,6 +18,8 @@ if TYPE_CHECKING:
     from maxent.quench.dephasing import dephase as dephase
     from maxent.quench.evolution import Evolution as Evolution
     from maxent.quench.evolution import evolve as evolve
+    from maxent.quench.sizes import SizeSeries as SizeSeries
+    from maxent.quench.sizes import size_series as size_series
     from maxent.quench.spectrum import Spectrum as Spectrum
     from maxent.quench.starts import Start as Start
     from maxent.quench.starts import ground_start as ground_start
@@ -28,14 +33,18 @@ if TYPE_CHECKING:
     from maxent.quench.yardsticks import revival_time as revival_time
 
 _HOME = {
+    "Comparison": "comparison",
     "Conservation": "conservation",
     "check_conservation": "conservation",
     "require_conserved": "conservation",
     "state_defect": "conservation",
     "Dephased": "dephasing",
+    "Ensemble": "comparison",
+    "compare": "comparison",
     "dephase": "dephasing",
     "Evolution": "evolution",
     "evolve": "evolution",
+    "SizeSeries": "sizes",
     "Spectrum": "spectrum",
     "Start": "starts",
     "ground_start": "starts",
@@ -44,15 +53,17 @@ _HOME = {
     "gaussian_window": "windows",
     "scan_widths": "windows",
     "sharp_window": "windows",
+    "size_series": "sizes",
     "block_bound": "yardsticks",
     "plateau_window": "yardsticks",
     "revival_time": "yardsticks",
 }
 
 __all__ = [
-    "Conservation", "Dephased", "Evolution", "Spectrum", "Start", "block_bound", "check_conservation", "dephase",
-    "evolve", "gaussian_window", "ground_start", "plateau_window", "read_start", "require_conserved", "revival_time",
-    "scan_widths", "sharp_window", "state_defect", "thermal_start",
+    "Comparison", "Conservation", "Dephased", "Ensemble", "Evolution", "SizeSeries", "Spectrum", "Start", "block_bound",
+    "check_conservation", "compare", "dephase", "evolve", "gaussian_window", "ground_start", "plateau_window",
+    "read_start", "require_conserved", "revival_time", "scan_widths", "sharp_window", "size_series", "state_defect",
+    "thermal_start",
 ]  # fmt: skip
 
 
