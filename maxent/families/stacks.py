@@ -25,7 +25,7 @@ from maxent.core.contract import EPS, Barrier, Evaluation, Family, Lowest, names
 from maxent.core.pytrees import register
 from maxent.families.fillings import bends, log_weights, occupations, trace_log, vacancies
 
-__all__ = ["Free", "Part", "Stacks", "adjoint", "eigh", "rotated"]
+__all__ = ["Free", "Part", "Stacks", "adjoint", "best_multiple", "eigh", "rotated"]
 
 
 #: Blocks up to this size, in stacks from this many on, are worked on element by element.
@@ -105,7 +105,24 @@ def doublets(charges: np.ndarray, vectors: np.ndarray) -> tuple[np.ndarray, np.n
     a, b, c = np.real(charges[:, :, 0, 0]), charges[:, :, 0, 1], np.real(charges[:, :, 1, 1])
     cross = b * (u.conj() * x)
     first = a * np.abs(u) ** 2 + c * np.abs(x) ** 2 + 2 * np.real(cross)
-    return first, a + c - first, a * (u.conj() * v) + c * (x.conj() * y) + b * (u.conj() * y) + b.conj() * (x.conj() * v)
+    beside = a * (u.conj() * v) + c * (x.conj() * y) + b * (u.conj() * y) + b.conj() * (x.conj() * v)
+    return first, a + c - first, beside
+
+
+def best_multiple(x: np.ndarray, weights: np.ndarray, low: float) -> float:
+    """The t > 0 that minimises ``sum w f(t x) - t low`` of bosons; 1/x of the lowest level where there is none."""
+    if low >= 0:
+        return 1.0 / float(x.min())
+    t = float(weights.sum()) / -low
+    for _ in range(60):
+        n, v = occupations(t * x, -1), vacancies(t * x, -1)
+        slope, bend = -(weights * x) @ n - low, (weights * x * x) @ (n * v)
+        # in 1/t the slope is nearly linear: Newton's step there stays positive
+        new = t / min(max(1.0 + slope / (bend * t), 0.2), 5.0)
+        if abs(new - t) <= 1e-3 * t:
+            break
+        t = new
+    return t
 
 
 def levels_of(matrices: np.ndarray) -> np.ndarray:
@@ -175,19 +192,7 @@ class Stacks(Family):
             return np.zeros(len(self.constant))
         u = np.asarray(self.confining)
         x, w = self.spectrum(u)
-        low = float(self.constant @ u)
-        t = 1.0 / float(x.min())
-        if low < 0:  # minimise sum f(t x) - t c.u, convex in t with a pole at 0
-            t = float(w.sum()) / -low
-            for _ in range(60):
-                n, v = occupations(t * x, -1), vacancies(t * x, -1)
-                slope, bend = -(w * x) @ n - low, (w * x * x) @ (n * v)
-                # in 1/t the slope is nearly linear: Newton's step there stays positive
-                new = t * max(0.2, min(5.0, 1.0 / max(1.0 + slope / (bend * t), 0.2)))
-                if abs(new - t) <= 1e-3 * t:
-                    break
-                t = new
-        return t * u
+        return best_multiple(x, w, float(self.constant @ u)) * u
 
     # ------------------------------------------------------------------ the log-partition function
 

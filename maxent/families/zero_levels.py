@@ -336,7 +336,7 @@ def _fall(x: np.ndarray, t: float, p: np.ndarray) -> np.ndarray:
     # 1/2 + s/(4 R) with R >= |s|/2: for negative s through the squares, 4 R^2 - s^2 = (2R - s)(2R + s)
     s = a + b
     lift = 8 * t * t + 2 * (4 * r[:, :, None] * r[:, None, :] - a * b)
-    weight = np.where(s > 0, (2 * both + s) / (4 * both), lift / (2 * both - s) / (4 * both))
+    weight = np.where(s > 0, 2 * both + s, lift / (2 * both + np.abs(s))) / (4 * both)
     return p[:, :, None] * p[:, None, :] * weight
 
 
