@@ -6,6 +6,7 @@ from maxent.lattice.expand import formula
 from maxent.lattice.kinds import Bosons, Fermions, Spin
 from maxent.lattice.onebody import OneBody
 from maxent.lattice.patterns import PatternState, domain_wall
+from maxent.lattice.recognition import Recognition, recognise
 from maxent.lattice.sites import Chain, Lattice, Ring, Sites
 from maxent.lattice.starts import ProductState
 from maxent.lattice.terms import OperatorSum, Term
@@ -20,6 +21,7 @@ __all__ = [
     "OperatorSum",
     "PatternState",
     "ProductState",
+    "Recognition",
     "Ring",
     "Sites",
     "Spin",
@@ -28,4 +30,5 @@ __all__ = [
     "domain_wall",
     "formula",
     "position_values",
+    "recognise",
 ]

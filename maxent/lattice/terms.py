@@ -18,6 +18,7 @@ import numpy as np
 from maxent.lattice import words as algebra
 from maxent.lattice.coefficients import NOTHING, Coefficient, Value
 from maxent.lattice.exact import Complex, from_complex
+from maxent.lattice.jordan_wigner import MajoranaForm, majorana_form
 from maxent.lattice.matrices import BitTable
 from maxent.lattice.onebody import NotQuadraticError, OneBody, one_body
 from maxent.lattice.parameters import check_parameter, is_complex
@@ -358,6 +359,33 @@ class OperatorSum:
             return one_body(self._numeric(), self.sites)
         except NotQuadraticError as error:
             raise ValueError(f"one_body: not quadratic: it holds {self._shown(error.word)}") from None
+
+    def majorana_form(self) -> MajoranaForm:
+        """Quadratic form in Majorana operators of a sum of spins 1/2, at the current parameters.
+
+        Raises
+        ------
+        ValueError
+            When the sum is not Hermitian, a site is no spin 1/2, or a word is quadratic neither everywhere nor inside a
+            parity sector; names the first such word.
+
+        Examples
+        --------
+        >>> from maxent.lattice import Ring, formula
+        >>> formula("X[i]*X[i+1]", Ring(4)).majorana_form().needs_parity
+        True
+        """
+        bad = self.non_hermitian_word
+        if bad is not None:
+            raise ValueError(f"majorana_form: not Hermitian: it holds {bad}")
+        try:
+            return majorana_form(self._numeric(), self.sites)
+        except NotQuadraticError as error:
+            raise ValueError(f"majorana_form: not quadratic: it holds {self._shown(error.word)}") from None
+
+    def word_text(self, word: Word) -> str:
+        """A word of `words` as formulas write it."""
+        return word_text(word, self.sites)[1] or "1"
 
     # --- helpers
 
