@@ -28,8 +28,11 @@ FAR = 1e6
 CLOSE = 1e-8
 
 #: Ratio of the largest to the smallest variance at which the coordinates of unbounded charges are made anew
-#: at once, and when the residual is below NEAR.
+#: at once, and when the Newton decrement is below NEAR.
 WIDE, CLEAR, NEAR = 1e6, 1e2, 1e-3
+
+#: Relative distance to the edge of the domain at which a residual that no longer falls is what the edge leaves.
+EDGE = 1e-9
 
 #: Newton steps before the search turns to faces and the analytic centre.
 LIMIT = 200
@@ -128,11 +131,12 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
         lam, memo.iterations = route(memo.family.traced(), memo.here.lam)
         memo.at = begin(memo.family.evaluate, lam)
     best, lowest, before, stalled = np.inf, np.inf, np.inf, 0
+    rows = None if memo.depth else problem.family.domain()
     unbounded, renewed = not np.all(np.isfinite(memo.family.reach())), False
     for count in range(LIMIT):
         if unbounded and _skewed(memo, renewed):
             # the last steps in coordinates made for this state: they resolve a condensate to its last digits
-            renewed, best = memo.here.residual < NEAR, np.inf
+            renewed, best = _decrement(memo) < NEAR, np.inf
             _whiten_anew(problem, memo)
         at = memo.here
         ev, size = at.evaluation, float(at.residual)
@@ -155,6 +159,8 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
         if (stalled >= 4 and size <= 1e3 * ev.rounding) or at.rejected > PATIENCE:
             memo.floored = bool(size <= 1e4 * ev.rounding)
             return None
+        if rows is not None and size > 0.9 * before and _at_edge(rows, memo.whitening.transform.T @ at.lam):
+            return None
         before = size
         memo.at = newton_step(memo.family.evaluate, at, memo.family.inside)
         memo.step = memo.at.lam - at.lam
@@ -162,10 +168,21 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
     return None
 
 
+def _at_edge(rows: np.ndarray, lam: np.ndarray) -> bool:
+    """Whether the multipliers have come so near to the edge of the domain that it is what holds them."""
+    return bool(np.any(rows @ lam <= EDGE * (np.abs(rows) @ np.abs(lam))))
+
+
 def _skewed(memo: Memo, renewed: bool) -> bool:
     """Whether the coordinates of unbounded charges no longer fit the state, near the end more narrowly."""
     h = memo.here.curvature
-    return bool(h[-1] > WIDE * h[0] or (not renewed and memo.here.residual < NEAR and h[-1] > CLEAR * h[0]))
+    return bool(h[-1] > WIDE * h[0] or (not renewed and _decrement(memo) < NEAR and h[-1] > CLEAR * h[0]))
+
+
+def _decrement(memo: Memo) -> float:
+    """Newton decrement: the residual in units of the fluctuations, whatever the coordinates."""
+    along, h = memo.here.axes.T @ memo.here.evaluation.values, memo.here.curvature
+    return float(np.sqrt(np.sum(along**2 / np.maximum(h, 1e-150))))
 
 
 def _whiten_anew(problem: Problem, memo: Memo) -> None:

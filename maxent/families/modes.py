@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -24,6 +25,9 @@ from maxent.families.statistics import dual_of_logs, exponents, level_entropy, l
 from maxent.families.steps import kept_inside
 
 __all__ = ["Modes", "ModesState", "fill"]
+
+#: Nothing is exact: a rounding above zero where there are no levels.
+TINY = 1e-300
 
 
 @register("names", "statistics")
@@ -158,7 +162,7 @@ class Modes(Family):
     def scale(self) -> np.ndarray:
         """Operator norm of each charge for fermions; otherwise of one particle in one level.  Shape (m,)."""
         if self.statistics != "fermions":
-            return np.abs(self.charges).max(axis=1, initial=0.0) + np.abs(self.constant)
+            return self._largest + np.abs(self.constant)
         up = np.maximum(self.charges, 0.0) @ self.degeneracy
         down = np.minimum(self.charges, 0.0) @ self.degeneracy
         return np.maximum(np.abs(up + self.constant), np.abs(down + self.constant))
@@ -212,7 +216,7 @@ class Modes(Family):
             # rounding of the sums, and of w by |lam| |q| at the levels that fluctuate: a condensate amplifies it
             spread = xp.sqrt(xp.trace(covariance)) if order == 2 else xp.asarray(1.0)
             size = xp.sqrt(self.constant @ self.constant)
-            rounding = 4 * EPS * (1 + size + spread * (1 + spread * xp.sqrt(lam @ lam)))
+            rounding = 4 * EPS * (size + spread * (1 + spread * xp.sqrt(lam @ lam))) + TINY
         if xp is np and (not inside or not np.isfinite(log_z)):
             return Evaluation(np.inf, np.full(m, np.nan), np.eye(m), np.inf, np.inf)
         factor = (lambda: self._factor(lam)) if xp is np else None
@@ -269,16 +273,15 @@ class Modes(Family):
         return self
 
     def reference(self) -> tuple[np.ndarray, np.ndarray]:
-        """Means and rows of the state with every copy half full, or of the state at the start where there is no such.
+        """Means and rows with every copy of a level half full, the counting measure of fermions.
 
-        The counting measure of fermions is the first one; an infinite number of states has none.
+        Others have none; one particle in every copy takes its place, whatever the targets are.
         """
-        if self.statistics == "fermions":
-            return 0.5 * (self.charges @ self.degeneracy) + self.constant, triangle_rows(
-                self.charges, 0.25 * self.degeneracy
-            )
-        lam = self.start()
-        return self.evaluate(lam, 1).values, self._factor(lam)
+        n, variance = (
+            (0.5, 0.25) if self.statistics == "fermions" else (1.0, 2.0 if self.statistics == "bosons" else 1.0)
+        )
+        mean = n * (self.charges @ self.degeneracy) + self.constant
+        return mean, triangle_rows(self.charges, variance * self.degeneracy)
 
     def combine(self, matrix: np.ndarray, offset: np.ndarray) -> Modes:
         """Family of the charges ``matrix @ Q - offset``; shares the charges where only the offset changes."""
@@ -311,12 +314,27 @@ class Modes(Family):
             degeneracy = float(self.degeneracy[flat].sum() * np.log(2.0))
             return Lowest(held + below, held + above, EPS * (above - below + size), values, degeneracy)
         every = height if self.edges is None else np.concatenate([height, v @ self.edges])
-        sinks, rises = self._slack(v, every), self._slack(-v, -every)
+        unit = EPS * float(np.abs(v) @ self._largest)
+        sinks, rises = self._slack(every, unit), self._slack(-every, unit)
         low, high = held - sinks, held + rises
         values = self.constant.copy() if with_values and np.isfinite(low) else None
-        return Lowest(low, high, EPS * size, values, np.inf if np.any(every == 0) else 0.0)
+        flat = np.inf if np.any(np.abs(height) <= SAFETY * unit) else 0.0
+        return Lowest(low, high, EPS * size + unit * self._particles, values, flat)
 
-    def _slack(self, v: np.ndarray, height: np.ndarray) -> float:
+    @cached_property
+    def _largest(self) -> np.ndarray:
+        """Size of each charge of one particle, (m,)."""
+        return np.abs(self.charges).max(axis=1, initial=0.0)
+
+    @cached_property
+    def _particles(self) -> float:
+        """Number of particles that the target of the confining combination stands for; rounding grows with it."""
+        if self.anchor is None or not self.charges.shape[1]:
+            return 0.0
+        mean = float(self.degeneracy @ (self.anchor @ self.charges)) / float(self.degeneracy.sum())
+        return max(-float(self.anchor @ self.constant), 0.0) / mean
+
+    def _slack(self, height: np.ndarray, unit: float) -> float:
         """How far rounding of ``v.q`` can carry ``<v.Q>`` below its value without particles; inf for real levels below.
 
         Particles in levels where v.q is negative by rounding alone are no more than the confined ones: with
@@ -325,13 +343,12 @@ class Modes(Family):
         below = np.flatnonzero(height < 0)
         if not len(below):
             return 0.0
-        q = self.charges if self.edges is None else np.concatenate([self.charges, self.edges], axis=1)
-        q = q[:, below]
-        if np.any(-height[below] > SAFETY * EPS * (np.abs(v) @ np.abs(q))):
+        if height[below].min() < -SAFETY * unit:
             return np.inf
         if self.anchor is None:
             return 0.0
-        confined = self.anchor @ q
+        q = self.charges if self.edges is None else np.concatenate([self.charges, self.edges], axis=1)
+        confined = self.anchor @ q[:, below]
         rho = np.max(-height[below] / np.where(confined > 0, confined, np.inf))
         return float(rho * max(-float(self.anchor @ self.constant), 0.0))
 
@@ -393,7 +410,7 @@ class Modes(Family):
         """Largest ``|q_jk|`` of each charge: bounds the stiffness, unless bosons."""
         if self.statistics == "bosons":
             return np.full(len(self.constant), np.inf)
-        return np.abs(self.charges).max(axis=1, initial=0.0)
+        return self._largest
 
     # ------------------------------------------------------------------ states
 

@@ -16,7 +16,7 @@ from scipy.optimize import brentq
 
 from maxent.core.contract import Evaluation, namespace
 from maxent.families.reachable import PASS
-from maxent.families.statistics import level_terms
+from maxent.families.statistics import level_terms, mean_occupations
 
 __all__ = ["kept_inside"]
 
@@ -93,9 +93,15 @@ def _along(levels: Levels, lam: np.ndarray, step: np.ndarray, evaluation: Evalua
             if falling.any():
                 most = min(most, STAY * float(np.min(here[falling] / -moved[falling])))
 
+    more, bend = 0.0, 0.0
+    if evaluation.lowest is None:  # a penalty in the same dual: what its slope and curvature add
+        _, n, variance = level_terms(w, levels.statistics)
+        more = start + float(weight @ n) + held
+        bend = float(step @ evaluation.covariance @ step) - float((weight * change) @ variance)
+
     def slope(t: float) -> float:
         with np.errstate(over="ignore", invalid="ignore"):
-            return -float(weight @ level_terms(w + t * change, levels.statistics)[1]) - held
+            return more + t * bend - held - float(weight @ mean_occupations(w + t * change, levels.statistics))
 
     t = min(1.0, most)
     at = slope(t)
