@@ -81,17 +81,27 @@ def pauli_word(letters: Mapping[int, str]) -> Word:
     ValueError
         A letter that is not X, Y or Z.
     """
-    word: Word = (1.0 + 0j, ())
-    for site in sorted(letters):
-        letter = letters[site]
-        if letter == "Z":
-            word = times((-1j * word[0], word[1]), (2 * site, 2 * site + 1))
-        elif letter in ("X", "Y"):
-            tail = (-1j) ** site * word[0]  # Z_l = -i g_{2l} g_{2l+1}
-            word = times((tail, word[1]), (*range(2 * site), 2 * site + (letter == "Y")))
-        else:
-            raise ValueError(f"a Pauli matrix is X, Y or Z, not {letter!r}")
-    return word
+    for site, letter in letters.items():
+        if letter not in ("X", "Y", "Z"):
+            raise ValueError(f"a Pauli matrix is X, Y or Z, not {letter!r} at site {site}")
+    flips = [site for site in sorted(letters) if letters[site] != "Z"]
+    start = 0 if len(flips) % 2 else min(letters, default=0)
+    phase, word = 1.0 + 0j, []
+    # an odd word carries its string from the first site on
+    is_open = bool(len(flips) % 2)
+    for site in range(start, max(letters, default=-1) + 1):
+        letter, even, odd = letters.get(site, "I"), 2 * site, 2 * site + 1
+        if letter in ("X", "Y"):
+            # opening: X Z = -i g_odd, Y Z = i g_even; closing: the letter after its string
+            turn, g = ((1.0, even) if letter == "X" else (1.0, odd)) if is_open else (
+                (-1j, odd) if letter == "X" else (1j, even)
+            )  # fmt: skip
+            phase, is_open = phase * turn, not is_open
+            word.append(g)
+        elif is_open != (letter == "Z"):  # a string over a free site, or a Z outside of strings; both cancel
+            phase *= -1j
+            word += [even, odd]
+    return phase, tuple(word)
 
 
 def parity_word(sites: int) -> Word:

@@ -1,0 +1,176 @@
+"""States of spin rings in sectors of sharp parity: means of quadratic forms, and of any spin word by Pfaffians.
+
+Inside a sector ``<O> = (<O>_G + eta <O P>_G)/(1 + eta <P>_G)`` with the Gaussian state G that ignores the parity.  Where the
+denominator is small (an odd number of quasiparticles at low temperature) the states are sorted by their lowest filled
+level instead: a sum of terms, each of which fills one level, leaves those below it empty and has an even number above,
+so that nothing cancels.  Floor: families.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from itertools import product
+from typing import Any
+
+import numpy as np
+
+from maxent.families.gaussian_states import checked_modes
+from maxent.families.pfaffians import Word, log_pfaffian, parity_word, pauli_word, times
+
+__all__ = ["RingState", "SectorState"]
+
+#: Sites of a reduced state: all 4^l products of Pauli matrices are taken.
+MOST_SITES = 5
+
+
+@dataclass(frozen=True, eq=False)
+class SectorState:
+    """One sector.
+
+    Attributes
+    ----------
+    parity : {1, -1, 0}
+        P, or 0 where the parity is not looked at.
+    weight : float
+        Probability of the sector.
+    frame : (2L, 2n) ndarray
+        Majorana operators of the free quasiparticles.
+    levels : (n,) ndarray
+    mean : (n,) ndarray
+        Occupations of the quasiparticles.
+    parity_of_levels : {1, -1, 0}
+        ``(-1)^(number of quasiparticles)``.
+    pinned : (2L, 2L) ndarray
+        Covariance of what is not free.
+    """
+
+    parity: int
+    weight: float
+    frame: np.ndarray
+    levels: np.ndarray
+    mean: np.ndarray
+    parity_of_levels: int
+    pinned: np.ndarray
+
+    def covariance(self, filling: np.ndarray) -> np.ndarray:
+        """``<i g_a g_b>`` where ``<i g' g''>`` of quasiparticle k is ``filling[k]``."""
+        half = self.frame[:, 0::2] * filling @ self.frame[:, 1::2].T
+        return self.pinned + half - half.T
+
+    def mean_form(self, a: np.ndarray) -> float:
+        """Mean of ``(i/4) sum A_ab g_a g_b``."""
+        return 0.25 * float(np.sum(a * self.covariance(2 * self.mean - 1)))
+
+    def terms(self) -> Iterator[tuple[float, np.ndarray, int]]:
+        """Probability, filling and sign of Gaussian states that make up the sector; sign 0: not projected."""
+        s, e = self.parity_of_levels, self.levels
+        thermal = -np.tanh(0.5 * e)
+        if s >= 0 or 1 - np.prod(-thermal) > 0.1:
+            yield 1.0, thermal, s
+            return
+        order = np.argsort(e, kind="stable")
+        small = np.exp(-e[order])
+        above = np.concatenate([np.cumsum(np.log1p(small[::-1]))[::-1][1:], [0.0]])
+        even = 1 + np.array([np.prod(np.tanh(0.5 * e[order[j + 1 :]])) for j in range(len(e))])
+        share = np.exp(-(e[order] - e[order[0]]) + above) * even
+        share = share / share.sum()
+        for j in np.flatnonzero(share > 1e-18):
+            filling = thermal.copy()
+            filling[order[:j]] = -1.0
+            filling[order[j]] = 1.0
+            yield float(share[j]), filling, -1
+
+    def mean_word(self, word: Word, sites: int) -> float:
+        """Mean of a word of Majorana operators."""
+        if not self.parity:
+            return float(self._plain(word, -np.tanh(0.5 * self.levels)).real)
+        phase, letters = parity_word(sites)
+        other = times((word[0] * phase, word[1]), letters)
+        total = 0.0
+        for share, filling, sign in self.terms():
+            if not sign:
+                total += share * self._plain(word, filling).real
+                continue
+            whole = self._plain((phase, tuple(letters)), filling).real
+            top = self._plain(word, filling) + self.parity * self._plain(other, filling)
+            total += share * float(top.real / (1 + self.parity * whole))
+        return total
+
+    def _plain(self, word: Word, filling: np.ndarray) -> complex:
+        at = list(word[1])
+        if len(at) % 2:
+            return 0j
+        sign, size = log_pfaffian(self.covariance(filling)[np.ix_(at, at)])
+        return complex(word[0] * (-1j) ** (len(at) // 2) * sign * np.exp(size))
+
+
+@dataclass(frozen=True, eq=False)
+class RingState:
+    """A state of L spins, diagonal in the parity.
+
+    Attributes
+    ----------
+    sites : int
+    sectors : tuple of SectorState
+    form : callable
+        ``form(terms, parity)`` makes (A, c) of an operator in a sector.
+    entropy, log_partition : float
+    """
+
+    sites: int
+    sectors: tuple[SectorState, ...]
+    form: Callable[[Any, int], tuple[np.ndarray, float]]
+    entropy: float
+    log_partition: float = float("nan")
+
+    def mean(self, operator: Any) -> float:
+        """Expectation value of a sum of products of Pauli matrices, given as charges are; quadratic or not."""
+        terms, total = list(operator), 0.0
+        try:
+            for s in self.sectors:
+                a, c = self.form(terms, s.parity)
+                total += s.weight * (s.mean_form(a) + c)
+        except ValueError:
+            return float(sum(c * self.mean_word(letters) for c, letters in terms))
+        return float(total)
+
+    def mean_word(self, letters: Mapping[int, str]) -> float:
+        """Expectation value of a product of Pauli matrices; 0 where it changes the parity.
+
+        Raises
+        ------
+        ValueError
+            A site that does not exist, or a letter that is none.
+        """
+        if any(not 0 <= x < self.sites for x in letters):
+            raise ValueError(f"sites must lie in 0..{self.sites - 1}, not {sorted(letters)}")
+        word = pauli_word(letters)
+        if len(word[1]) % 2:
+            return 0.0
+        return float(sum(s.weight * s.mean_word(word, self.sites) for s in self.sectors))
+
+    def reduced(self, sites: Sequence[int]) -> np.ndarray:
+        """Density matrix (2^l, 2^l) of some spins, the others traced out; the first one is the slowest index.
+
+        Raises
+        ------
+        ValueError
+            Sites that do not exist or repeat, or more than five.
+        """
+        kept = checked_modes(sites, self.sites)
+        if len(kept) > MOST_SITES:
+            raise ValueError(f"reduced states of spin rings have up to {MOST_SITES} sites, not {len(kept)}")
+        pauli = {
+            "I": np.eye(2), "X": np.array([[0, 1], [1, 0]]), "Y": np.array([[0, -1j], [1j, 0]]), "Z": np.diag([1, -1]),
+        }  # fmt: skip
+        rho = np.zeros((1 << len(kept), 1 << len(kept)), complex)
+        for choice in product("IXYZ", repeat=len(kept)):
+            letters = {x: c for x, c in zip(kept, choice, strict=True) if c != "I"}
+            value = self.mean_word(letters)
+            if value:
+                matrix = np.eye(1)
+                for c in choice:
+                    matrix = np.kron(matrix, pauli[c])
+                rho += value * matrix / (1 << len(kept))
+        return rho
