@@ -79,7 +79,7 @@ def search(
         "formula": options.charges[name],
         "hamiltonian_range": h.range,
         "cell": h.cell,
-        "sites": options.sites.size,
+        "sites": options.sites.largest,
         "searches": [_search(result, options, letters, subscript) for result in found],
     }
 
@@ -113,7 +113,7 @@ def _search(result: Any, options: Any, letters: str, subscript: str) -> dict[str
         for n in result.nearly
     ]
     remarks = list(result.remarks)
-    size, cells = options.sites.size, result.hamiltonian.cell * (2 if result.momentum == "pi" else 1)
+    size, cells = options.sites.largest, result.hamiltonian.cell * (2 if result.momentum == "pi" else 1)
     if size < result.shortest_ring or size % cells:
         of = f", a multiple of {cells}" if cells > 1 else ""
         remarks.insert(0, f"They are conserved on rings of at least {result.shortest_ring} sites{of}; this has {size}.")

@@ -6,7 +6,7 @@ Must not know: TOML, the command line.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -15,7 +15,8 @@ from maxent.errors import ConfigError
 from maxent.text import number, suggestion
 
 __all__ = [
-    "ACCURACY", "TARGET", "BadInput", "Job", "Problems", "Room", "Target", "check_target", "given_target", "says",
+    "ACCURACY", "TARGET", "BadInput", "Job", "Problems", "Room", "Study", "Target", "check_target", "given_target",
+    "says",
 ]  # fmt: skip
 
 ACCURACY = (
@@ -113,6 +114,22 @@ class Target:
 
 
 @dataclass(frozen=True)
+class Study:
+    """A comparison of ensembles with the dynamics, beside the fit.
+
+    Parameters
+    ----------
+    sizes : tuple of int
+        Ascending.
+    build : callable
+        Size -> keyword arguments of `maxent.quench.comparison.compare`; errors as `BadInput`.
+    """
+
+    sizes: tuple[int, ...]
+    build: Callable[[int], Mapping[str, Any]]
+
+
+@dataclass(frozen=True)
 class Job:
     """A problem ready to be solved.
 
@@ -133,6 +150,10 @@ class Job:
     errors : (m, p) ndarray or None
         ``errors @ errors.T`` is the covariance of the targets, where it was sampled; None takes the standard errors of
         the targets as independent.
+    remarks : callable
+        Result -> what its reader must know beyond it, one sentence each.
+    study : Study or None
+        What is done besides the fit.
     """
 
     family: Any
@@ -142,6 +163,8 @@ class Job:
     labels: tuple[str, ...] = ()
     digests: Mapping[str, str] = field(default_factory=dict)
     errors: Any = None
+    remarks: Callable[[Any], list[str]] = lambda result: []
+    study: Study | None = None
 
     def target_errors(self) -> Any:
         """Give a factor (m, p) of the covariance of the targets; None when no target has a standard error."""

@@ -109,6 +109,8 @@ def _fields(schema: dict[str, Any], above: str = "") -> Iterator[tuple[str, str]
 
 
 def _default(value: Any) -> str:
+    if isinstance(value, bool):
+        return f"`{str(value).lower()}`"
     return "–" if value is MISSING or value is None or value == "" else f"`{value}`"
 
 
@@ -118,6 +120,8 @@ def _takes(hint: Any) -> str:
         return " or ".join(_takes(t) for t in inner if t is not NoneType)
     if origin is Literal:
         return " or ".join(f'`"{word}"`' for word in inner)
+    if origin is list and is_dataclass(inner[0]):
+        return "list of tables"
     if origin is list:
         return f"list of ({_takes(inner[0])})" if get_origin(inner[0]) else f"list of {_takes(inner[0])}s"
     if origin is dict:

@@ -31,7 +31,7 @@ BAD = [
     (
         "kind unknown",
         'kind = "quarks"\n',
-        ["1: kind: unknown kind 'quarks'; expected operators, spins or states"],
+        ["1: kind: unknown kind 'quarks'; expected bosons, fermions, operators, spins or states"],
     ),
     ("kind of the wrong type", "kind = 3\n", ["1: kind: expected text, got 3"]),
     (
@@ -56,7 +56,8 @@ energy = nan
         [
             "2: titel: unknown key; did you mean 'title'?",
             "3: driver: expected 'auto', 'host' or 'jax', got the text 'gpu'",
-            "5: sites.geometry: expected 'ring' or 'chain', got the text 'rnig'; did you mean 'ring'?",
+            "5: sites.geometry: expected 'ring', 'chain', 'ladder' or 'bonds', got the text 'rnig'; "
+            "did you mean 'ring'?",
             "6: sites.size: expected a whole number, got 3.5",
             "7: sites.colour: unknown key",
             "9: charges.energy: expected text, got 3",
