@@ -441,7 +441,8 @@ class _Study:
                 where = " in the sector of the start" if inside else ""
                 self.notes.append(f"No Gaussian window{where}: {refused}.")
                 continue
-            inner = window
+            if inside or sector is None:  # levels of other sectors have no place beside single eigenstates
+                inner = window
             facts = {"beta": window.beta, "centre": window.centre, "width": window.width, "spacing": window.spacing}
             out.append(
                 Ensemble(

@@ -14,7 +14,7 @@ from maxent.quench.corrections import second_derivatives
 from maxent.quench.distances import relative_entropy, root_fidelity, trace_distance
 from maxent.quench.ensembles import Charges
 from maxent.quench.sizes import SizeSeries, size_series
-from maxent.quench.starts import Start
+from maxent.quench.starts import Start, ground_start
 
 DENSITY = {"h": "Sx[i]*Sx[i+1] + Sy[i]*Sy[i+1] + 0.6*Sz[i]*Sz[i+1]"}
 
@@ -110,6 +110,36 @@ def test_sector_column_of_a_sharp_start_and_redundant_charge():
     assert p @ e / p.sum() == pytest.approx(found.targets["energy"], abs=1e-11)
     # a charge without spread inside the sector is constant there: redundant, multiplier zero
     assert found.ensemble("grand canonical", sector=True).multipliers["magnetisation"] == 0.0
+
+
+def test_single_eigenstates_need_a_window_in_their_own_sector():
+    # momentum 0 has too few levels for a window where all sectors together have enough
+    ring = Ring(10)
+    h = formula("-4*Sx[i]*Sx[i+1] - Sz[i]", ring)
+    start = ground_start(formula("-4*Sx[i]*Sx[i+1] - 4*Sz[i]", ring))
+    observables = {"z": formula("2*Sz[0]", ring)}
+    found = compare({"energy": h}, start, observables=observables, blocks=(1,), ranking=False)
+    assert any(note.startswith("No Gaussian window in the sector of the start") for note in found.notes)
+    assert found.ensemble("Gaussian window").means["z"] == pytest.approx(0.28, abs=0.02)
+    assert "single eigenstate" not in found.labels and found.window == {}
+
+
+def test_single_eigenstates_are_those_of_the_matching_sector():
+    ring = Ring(10)
+    h = formula("4*Sz[i]*Sz[i+1] + 1.8*Sx[i] + 1.6*Sz[i]", ring)
+    observables = {"z": formula("2*Sz[0]", ring)}
+    found = compare({"energy": h}, ProductState(ring, 2.0, 0.5).vector(), observables=observables, blocks=(1,))
+    window, single = (found.ensemble(x, sector=True) for x in ("Gaussian window", "single eigenstate"))
+    e, z = found.levels["energy"], found.levels["z"]
+    assert found.sharp == {"translation": 0.0} and len(e) == 108  # necklaces of ten beads in two colours
+    # quantiles by hand: the first level at which the weights up to it reach that part
+    weight = np.exp(-0.5 * ((e - window.facts["centre"]) / window.facts["width"]) ** 2)
+    order = np.argsort(z)
+    reached = np.cumsum(weight[order]) / weight.sum()
+    low, median, high = (z[order][np.searchsorted(reached, part)] for part in (0.1, 0.5, 0.9))
+    assert single.means["z"] == pytest.approx(median, abs=1e-12)
+    assert single.ranges["z"] == pytest.approx((low, high), abs=1e-12)
+    assert window.means["z"] == pytest.approx(weight @ z / weight.sum(), abs=1e-12)
 
 
 def test_leading_correction_is_that_of_the_spreads():
