@@ -8,16 +8,22 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from maxent.families.bilinears import Bilinears as Bilinears
     from maxent.families.matrices import Matrices as Matrices
     from maxent.families.microstates import Microstates as Microstates
     from maxent.families.modes import Modes as Modes
+    from maxent.families.periodic import Periodic as Periodic
+    from maxent.families.spin_rings import SpinRing as SpinRing
 
-__all__ = ["Matrices", "Microstates", "Modes"]
+__all__ = ["Bilinears", "Matrices", "Microstates", "Modes", "Periodic", "SpinRing"]
 
 _HOME = {
+    "Bilinears": "maxent.families.bilinears",
     "Matrices": "maxent.families.matrices",
     "Microstates": "maxent.families.microstates",
     "Modes": "maxent.families.modes",
+    "Periodic": "maxent.families.periodic",
+    "SpinRing": "maxent.families.spin_rings",
 }
 
 

@@ -249,9 +249,9 @@ class Bilinears(Family):
         """How fast curvature can fall along `u`; see `maxent.families.stacks.Stacks.stiffness`."""
         return self.particles.stiffness(lam, u, exact=exact)
 
-    def room(self, lam: Any, step: Any) -> Any:
-        """Part of `step` that keeps bosons inside their domain; None for fermions."""
-        return self.particles.room(lam, step)
+    def inside(self, lam: Any, step: Any, evaluation: Evaluation) -> Any:
+        """The part of `step` that keeps bosons inside their domain; of fermions all of it."""
+        return self.particles.inside(lam, step, evaluation)
 
     def state(self, lam: Any) -> Any:
         """Gaussian state at multipliers `lam`, shape (m,): a FermionState, BosonState or PeriodicState.

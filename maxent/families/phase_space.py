@@ -28,7 +28,7 @@ from maxent.families.antisymmetric import canonical_form
 from maxent.families.fillings import bends, log_weights, occupations
 from maxent.families.gaussian_states import BosonState, symplectic_form
 from maxent.families.quadratic import Quadratic
-from maxent.families.stacks import best_multiple
+from maxent.families.stacks import best_multiple, outside
 
 __all__ = ["PhaseSpace", "Whereabouts"]
 
@@ -179,8 +179,7 @@ class PhaseSpace(Family):
         try:
             root = xp.linalg.cholesky(matrix)
         except np.linalg.LinAlgError:
-            blank = np.full((m, m), np.nan)
-            return Evaluation(np.inf, np.full(m, np.nan), blank, np.float64(0), np.float64(0), lowest=np.float64(0))
+            return outside(m)
         inside = xp.all(xp.isfinite(root))
         root = root if xp is np else xp.where(inside, root, xp.eye(2 * n))
         x, u = xp.linalg.eigh(1j * (root.T @ xp.asarray(symplectic_form(n)) @ root))
@@ -200,7 +199,7 @@ class PhaseSpace(Family):
         rows = [real_rows(z * xp.sqrt(weight)), pull @ inverse.T]
         covariance = rows[0] @ rows[0].T + rows[1] @ rows[1].T
         spread = xp.sqrt(xp.linalg.matrix_norm(covariance)) if m else xp.asarray(0.0)
-        level = xp.abs(low) + xp.sum(nu * (0.5 + filling[n:])) + 0.5 * xp.abs(d @ r)
+        level = xp.abs(low) + xp.sum(nu * (0.5 + filling[n:])) + 0.5 * xp.abs(d @ r) + xp.max(nu)
         soft = xp.linalg.matrix_norm(rows[0]) if m else 0.0
         condition = xp.linalg.matrix_norm(root) * xp.linalg.matrix_norm(inverse)
         rounding = 4 * EPS * (1 + level) * xp.maximum(1.0, spread) + EPS * condition * soft
@@ -246,15 +245,15 @@ class PhaseSpace(Family):
         share = float(np.abs(np.linalg.eigvalsh(inverse @ self.at(u) @ inverse.T)).max())
         return share * (6.0 + float(self.thermal(lam)[0].max()))
 
-    def room(self, lam: Any, step: Any) -> Any:
+    def inside(self, lam: Any, step: Any, evaluation: Evaluation) -> Any:
         """Part of `step` on which M loses at most 9/10 in any direction."""
         xp = namespace(lam)
         if not self.matrices.shape[1]:
-            return xp.asarray(1.0)
+            return step
         e, u = xp.linalg.eigh(self.at(lam))
         half = u / xp.sqrt(xp.where(e > 0, e, 1.0))
         fall = -xp.min(xp.linalg.eigvalsh(half.T @ self.at(step) @ half))
-        return xp.minimum(1.0, 0.9 / xp.maximum(fall, 1e-300))
+        return step * xp.minimum(1.0, 0.9 / xp.maximum(fall, 1e-300))
 
     def _blur(self, v: np.ndarray) -> float:
         """Eigenvalues of M closer to zero than this are zero to rounding."""

@@ -1,8 +1,8 @@
 """States of spin rings in sectors of sharp parity: means of quadratic forms, and of any spin word by Pfaffians.
 
-Inside a sector ``<O> = (<O>_G + eta <O P>_G)/(1 + eta <P>_G)`` with the Gaussian state G that ignores the parity.  Where the
-denominator is small (an odd number of quasiparticles at low temperature) the states are sorted by their lowest filled
-level instead: a sum of terms, each of which fills one level, leaves those below it empty and has an even number above,
+Inside a sector ``<O> = (<O>_G + eta <O P>_G)/(1 + eta <P>_G)`` with the Gaussian state G that ignores the parity.
+Where the denominator is small (an odd number of quasiparticles at low temperature) the states are sorted by their
+lowest filled level instead: each term fills one level, leaves those below it empty and has an even number above,
 so that nothing cancels.  Floor: families.
 """
 

@@ -6,10 +6,11 @@ of Majorana operators where P = 1 and another where P = -1 (E. Lieb, T. Schultz,
     Z = sum_{eta = 1, -1} Tr (1 + eta P)/2 exp(-sum_j lam_j Q_j^eta).
 
 With levels ``e_k >= 0`` of ``sum_j lam_j A_j`` and the parity sigma of the state without quasiparticles, the states of
-a sector are those with an even (odd) number of quasiparticles for ``eta sigma = 1`` (-1).  The Kubo-Mori covariance is a
-sum of squares over hops ``eta+_k eta_l``, pairs ``eta+_k eta+_l`` and occupations, whose weights are probabilities of
-`maxent.families.projected`: nothing special happens at zero modes or at lam = 0.  Floor: families; must not know
-lattices.
+a sector are those with an even (odd) number of quasiparticles for ``eta sigma = 1`` (-1).
+
+The Kubo-Mori covariance is a sum of squares over hops ``eta+_k eta_l``, pairs ``eta+_k eta+_l`` and occupations, whose
+weights are probabilities of `maxent.families.projected`: nothing special happens at zero modes or at lam = 0.  Floor:
+families; must not know lattices.
 """
 
 from __future__ import annotations

@@ -25,7 +25,7 @@ from maxent.core.contract import EPS, Barrier, Evaluation, Family, Lowest, names
 from maxent.core.pytrees import register
 from maxent.families.fillings import bends, log_weights, occupations, trace_log, vacancies
 
-__all__ = ["Free", "Part", "Stacks", "adjoint", "best_multiple", "eigh", "rotated"]
+__all__ = ["Free", "Part", "Stacks", "adjoint", "best_multiple", "eigh", "outside", "rotated"]
 
 
 #: Blocks up to this size, in stacks from this many on, are worked on element by element.
@@ -123,6 +123,12 @@ def best_multiple(x: np.ndarray, weights: np.ndarray, low: float) -> float:
             break
         t = new
     return t
+
+
+def outside(m: int) -> Evaluation:
+    """What is said of a point outside the domain."""
+    nothing = np.float64(np.inf)
+    return Evaluation(np.inf, np.full(m, np.nan), np.eye(m), nothing, nothing, lowest=np.float64(-np.inf))
 
 
 def levels_of(matrices: np.ndarray) -> np.ndarray:
@@ -243,8 +249,7 @@ class Stacks(Family):
         m = self.constant.shape[0]
         inside = xp.asarray(True) if s > 0 else xp.all(every > 0)
         if xp is np and not inside:
-            blank = np.full((m, m), np.nan)
-            return Evaluation(np.inf, np.full(m, np.nan), blank, np.float64(0), np.float64(0), lowest=np.float64(0))
+            return outside(m)
         if xp is not np and s < 0:  # finite numbers under a trace, whatever the point
             x, pairs = xp.where(x > 0, x, 1.0), [(xp.where(e > 0, e, 1.0), u) for e, u in pairs]
             every = xp.where(every > 0, every, 1.0)
@@ -281,7 +286,7 @@ class Stacks(Family):
         if s > 0:
             level = xp.maximum(xp.abs(low + below), xp.abs(low + above))
         else:
-            level = xp.abs(low) + xp.sum(weights * every * occupations(every, s))
+            level = xp.abs(low) + xp.sum(weights * every * occupations(every, s)) + xp.max(every)
         size = xp.asarray(1.0) if alone or not m else xp.sqrt(xp.linalg.matrix_norm(covariance))
         rounding = 4 * EPS * (1 + level) * xp.maximum(1.0, size)
         if s < 0:  # the occupation of a level near zero magnifies its rounding
@@ -363,17 +368,17 @@ class Stacks(Family):
             most = max(most, np.abs(np.linalg.eigvalsh(adjoint(half) @ change @ half)).max(initial=0.0))
         return size + 4.0 * float(most)
 
-    def room(self, lam: Any, step: Any) -> Any:
+    def inside(self, lam: Any, step: Any, evaluation: Evaluation) -> Any:
         """For bosons, the part of `step` on which no level loses more than 9/10 of its distance from zero."""
         if self.sign > 0:
-            return None
+            return step
         xp = namespace(lam)
         fall = xp.max(-(step @ self.flat) / (lam @ self.flat)) if self.flat.shape[1] else xp.asarray(0.0)
         for k, change in zip(self.exponent(lam), self.exponent(step), strict=True):
             e, u = eigh(k)
             half = u / xp.sqrt(xp.where(e > 0, e, 1.0))[:, None, :]
             fall = xp.maximum(fall, -xp.min(xp.linalg.eigvalsh(adjoint(half) @ change @ half)))
-        return xp.minimum(1.0, 0.9 / xp.maximum(fall, 1e-300))
+        return step * xp.minimum(1.0, 0.9 / xp.maximum(fall, 1e-300))
 
     def glance(self, v: np.ndarray) -> float:
         """Upper bound of ``lowest``: fill the modes, not the levels, that have negative energy."""
