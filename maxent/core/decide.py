@@ -132,7 +132,7 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
         memo.at = begin(memo.family.evaluate, lam)
     best, lowest, before, stalled = np.inf, np.inf, np.inf, 0
     rows = None if memo.depth else problem.family.domain()
-    unbounded, renewed = not np.all(np.isfinite(memo.family.reach())), False
+    unbounded, renewed = _is_unbounded(memo.family), False
     for count in range(LIMIT):
         if unbounded and _skewed(memo, renewed):
             # the last steps in coordinates made for this state: they resolve a condensate to its last digits
@@ -166,6 +166,15 @@ def descend(problem: Problem, memo: Memo) -> Outcome | None:
         memo.step = memo.at.lam - at.lam
         memo.iterations += 1
     return None
+
+
+def _is_unbounded(family: Family) -> bool:
+    """Whether the charges have no largest or no lowest value; a family that knows its reach is not even asked."""
+    reach = family.reach()
+    if not len(reach) or np.all(np.isfinite(reach)):
+        return False
+    low = family.lowest(np.eye(len(reach))[0])
+    return not np.isfinite(low.highest - low.value)
 
 
 def _at_edge(rows: np.ndarray, lam: np.ndarray) -> bool:

@@ -150,8 +150,8 @@ class Modes(Family):
 
     @property
     def size(self) -> int:
-        """Number of levels, copies counted, rounded; values are totals."""
-        return round(float(self.copies.sum()))
+        """Number of levels that are not pinned, copies counted, rounded; values are totals."""
+        return round(float(self.degeneracy.sum()))
 
     @property
     def entropy_floor(self) -> float:  # type: ignore[override]

@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 import scipy.sparse as sp
 
-from maxent.families import Matrices, Microstates
+from maxent.families import Matrices, Microstates, Modes
 from tests.conformance.dense import Dense, random_hermitian, random_unitary
 
 NAMES = ("plateau", "second", "third")
@@ -143,6 +143,31 @@ def _blocks(*, has_prior: bool) -> Example:
     return Example(name, family, Dense(stack, log_prior), 3, _plain_observable(9, is_complex=True))
 
 
+def _modes(name: str) -> Example:
+    """Five copies of levels as the 32 states of their occupations; charge 0 does not see two of them."""
+    rng = np.random.default_rng(15)
+    copies = [1, 1, 1, 2] if name == "degenerate" else [1, 1, 1, 1, 1]
+    plateau = [0, 0, 1.0, 1.5] if name == "degenerate" else [0, 0, 1.0, 1.5, 2.0]
+    rows = np.array([plateau, rng.standard_normal(len(copies)), rng.standard_normal(len(copies))])
+    constant = np.array([0.0, 0.4, -1.3]) if name == "degenerate" else np.zeros(3)
+    counts = (np.arange(32)[None, :] >> np.arange(5)[:, None]) & 1
+    one = np.repeat(rows, copies, axis=1)
+    dense = Dense(_diagonal(one @ counts + constant[:, None]), np.zeros((32, 32)))
+    constants = dict(zip(NAMES, constant, strict=True))
+    family = Modes(dict(zip(NAMES, rows, strict=True)), degeneracy=copies, constants=constants)
+
+    def observable(rng: np.random.Generator) -> tuple[Any, np.ndarray]:
+        x = rng.standard_normal(len(copies))
+        return x, np.diag(np.repeat(x, copies) @ counts)
+
+    return Example(f"modes-{name}", family, dense, 4, observable)
+
+
+def states_of(family: Any) -> int:
+    """Number of states of a family; the size of `Modes` is the number of places for one fermion."""
+    return 2**family.size if isinstance(family, Modes) else family.size
+
+
 def examples() -> list[Example]:
     """Every family in every form it can take."""
     return [
@@ -151,4 +176,5 @@ def examples() -> list[Example]:
         *(_matrices(n) for n in ("real", "complex", "log_prior", "basis")),
         _blocks(has_prior=False),
         _blocks(has_prior=True),
+        *(_modes(n) for n in ("plain", "degenerate")),
     ]

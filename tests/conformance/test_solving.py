@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 import maxent
-from maxent.families import Matrices, Microstates
+from maxent.families import Matrices, Microstates, Modes
 from tests.conformance.examples import NAMES, Example, examples
 from tests.conformance.views import plateau_face
 
@@ -36,6 +36,12 @@ def more_charges(example: Example, extra: dict) -> object:
         weights[family.index] = np.diag(example.dense.log_prior)
         kind = "log_weights" if example.degenerate_weights is not None else "log_prior"
         return Microstates(charges, **({kind: weights} if example.has_weights else {}))
+    if isinstance(family, Modes):
+        charges = dict(zip(NAMES, family.charges, strict=True))
+        constants = dict(zip(NAMES, family.constant, strict=True))
+        for name, c in extra.items():
+            charges[name], constants[name] = c[:3] @ family.charges, c[:3] @ family.constant + c[3]
+        return Modes(charges, degeneracy=family.degeneracy, constants=constants)
     charges = dict(zip(NAMES, example.dense.charges, strict=True))
     for name, c in extra.items():
         charges[name] = np.einsum("j,jab->ab", c[:3], example.dense.charges) + c[3] * np.eye(example.dense.d)
