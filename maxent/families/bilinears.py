@@ -41,6 +41,10 @@ class Bilinears(Family):
         ``(h, D, constant)``; for bosons also ``(h, D, constant, l)`` with ``sum (l_a b+_a + h.c.)``.  D may be None.
         Or a `Periodic`, for all charges or none.
     statistics : {"fermions", "bosons"}
+    number : int, optional
+        Fix the number of fermions.  That is another ensemble: the number gets no multiplier and does not fluctuate,
+        ``beta mu = ln Z_N - ln Z_{N+1}`` (`insertion` of the state) takes its place, and the state is not Gaussian, so
+        that it answers means of quadratic operators only.  Charges given by matrices, without pairing; host driver.
 
     Raises
     ------
@@ -66,14 +70,14 @@ class Bilinears(Family):
     solved (8, 8)
     """
 
-    particles: Stacks
+    particles: Any
     names: tuple[str, ...]
     statistics: str
     places: Any
     #: The charges as they were given; no field: a family that was combined or compressed has lost them.
     _given: ClassVar[tuple[Quadratic, ...] | None] = None
 
-    def __init__(self, charges: Any, *, statistics: str = "fermions"):
+    def __init__(self, charges: Any, *, statistics: str = "fermions", number: int | None = None):
         charges = checked_charges(charges, "Bilinears")
         if statistics not in STATISTICS:
             raise ValueError(f"statistics must be one of {', '.join(map(repr, STATISTICS))}, not {statistics!r}")
@@ -85,9 +89,13 @@ class Bilinears(Family):
             listed = ", ".join(f"{n!r} {d}" for n, d in sizes.items())
             raise ValueError(f"charges have different numbers of modes: {listed}")
         _same_ring(operators)
-        self._build(tuple(operators.values()), tuple(operators), statistics)
+        if number is not None:
+            _fixable(operators, statistics, number)
+        self._build(tuple(operators.values()), tuple(operators), statistics, number)
 
-    def _build(self, operators: tuple[Quadratic, ...], names: tuple[str, ...], statistics: str) -> None:
+    def _build(
+        self, operators: tuple[Quadratic, ...], names: tuple[str, ...], statistics: str, number: int | None
+    ) -> None:
         if statistics == "bosons" and any(not q.conserves_number for q in operators):
             from maxent.families.phase_space import PhaseSpace, Whereabouts
 
@@ -103,6 +111,10 @@ class Bilinears(Family):
             from maxent.families.confinement import confined
 
             particles = confined(particles)
+        if number is not None:
+            from maxent.families.fixed_number import Canonical
+
+            particles = Canonical(particles, int(number))
         self._set(particles, names, statistics, places)
         object.__setattr__(self, "_given", operators)
 
@@ -122,6 +134,11 @@ class Bilinears(Family):
         """Number of modes; values are totals, not per mode."""
         layout = self.places.layout
         return layout.like.modes if isinstance(layout, Momenta) else layout.modes
+
+    @property
+    def number(self) -> int | None:
+        """The fixed number of particles on the levels that are free; None where the number is not fixed."""
+        return getattr(self.particles, "number", None)
 
     @property
     def block_sizes(self) -> tuple[int, ...]:
@@ -152,7 +169,7 @@ class Bilinears(Family):
         if not names or len(set(names)) < len(names) or not set(names) <= set(given):
             raise ValueError(f"select takes different names out of {', '.join(given)}, not {', '.join(names)}")
         new = object.__new__(Bilinears)
-        new._build(tuple(given[n] for n in names), names, self.statistics)
+        new._build(tuple(given[n] for n in names), names, self.statistics, self.number)
         return new
 
     def restrict(self, modes: Sequence[int]) -> Bilinears:
@@ -178,7 +195,7 @@ class Bilinears(Family):
             linear = None if q.linear is None else q.linear[kept]
             inside.append(Quadratic(h, pairing if pairing is not None and pairing.any() else None, q.constant, linear))
         new = object.__new__(Bilinears)
-        new._build(tuple(inside), self.names, self.statistics)
+        new._build(tuple(inside), self.names, self.statistics, self.number)
         return new
 
     # ------------------------------------------------------------------ the contract
@@ -269,7 +286,27 @@ class Bilinears(Family):
             smallest = self.particles.smallest_level(lam)
             if smallest <= 0:
                 raise ValueError(f"bosons outside their domain: a level of lam.Q lies at {smallest:.6g}, not above 0")
+        if self.number is not None:
+            return self.particles.state_in(lam, self.places)
         return self.places.state(self.particles, lam)
+
+
+def _fixable(operators: dict[str, Quadratic], statistics: str, number: Any) -> None:
+    """Whether the number of particles can be fixed.
+
+    Raises
+    ------
+    ValueError
+    """
+    n = next(iter(operators.values())).modes
+    if isinstance(number, bool) or not isinstance(number, int | np.integer) or not 0 <= number <= n:
+        raise ValueError(f"number must be an integer in 0..{n}, the number of modes, not {number!r}")
+    if statistics != "fermions":
+        raise ValueError("a fixed number is provided for fermions")
+    for name, q in operators.items():
+        if q.is_periodic or not q.conserves_number:
+            what = "is periodic: give it as a matrix" if q.is_periodic else "does not conserve the number of particles"
+            raise ValueError(f"charge {name!r} {what}")
 
 
 def _same_ring(operators: dict[str, Quadratic]) -> None:

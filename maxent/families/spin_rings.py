@@ -343,6 +343,10 @@ class SpinRing(Family):
         assert ev.factor is not None
         return ev.values, ev.factor()
 
+    def reach(self) -> np.ndarray:
+        """Upper bounds (m,) of the spread of each charge."""
+        return 2 * self.scale
+
     def combine(self, matrix: np.ndarray, offset: np.ndarray) -> SpinRing:
         """Family of the charges ``matrix @ Q - offset``."""
         return self._with(tuple(s.combined(matrix, offset) for s in self.sectors))
