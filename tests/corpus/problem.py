@@ -31,9 +31,9 @@ class Draft:
     rank : int
         Number of independent charges, multiples of the identity not counted.
     family : str
-        "Microstates" or "Matrices".
+        "Microstates", "Matrices" or "Modes".
     size : int
-        Number of states (also with no charges at all).
+        Number of states (also with no charges at all), or of levels.
     log_weights, log_prior : arrays or None
     distance : float or None
         Outside only: an upper bound of the distance to the reachable set, exact if `distance_is_exact`.
@@ -50,6 +50,8 @@ class Draft:
     entropy : float or None
         Entropy of the state, or of the limit state on the face, where it is known.
     note : str
+    statistics, degeneracy, particles : str, (n,) array, float
+        Modes only: which particles, copies of each level, and how many particles the target stands for.
     """
 
     charges: tuple
@@ -69,6 +71,9 @@ class Draft:
     multipliers: np.ndarray | None = None
     entropy: float | None = None
     note: str = ""
+    statistics: str | None = None
+    degeneracy: np.ndarray | None = None
+    particles: float = 1.0
 
     def change(self, **fields) -> Draft:
         """Copy with some fields replaced."""
@@ -84,7 +89,7 @@ class Draft:
         """
         matrix = np.asarray(matrix, float)
         offset = np.zeros(len(matrix)) if offset is None else np.asarray(offset, float)
-        unit = np.ones(self.size) if self.family == "Microstates" else np.eye(self.size)
+        unit = np.eye(self.size) if self.family == "Matrices" else np.ones(self.size)
         dense = np.array([to_dense(a) for a in self.charges])
         charges = [np.tensordot(row, dense, axes=1) + c * unit for row, c in zip(matrix, offset, strict=True)]
         square = matrix.shape[0] == matrix.shape[1]
@@ -126,6 +131,9 @@ class Problem:
     multipliers: dict | None
     entropy: float | None
     note: str
+    statistics: str | None = None
+    degeneracy: np.ndarray | None = field(default=None, repr=False)
+    particles: float = 1.0
 
     @property
     def identity(self) -> str:
@@ -133,8 +141,10 @@ class Problem:
 
     def build(self):
         """The family of the public interface that holds these charges."""
-        from maxent.families import Matrices, Microstates
+        from maxent.families import Matrices, Microstates, Modes
 
+        if self.family == "Modes":
+            return Modes(dict(self.charges), self.statistics, self.degeneracy)
         if self.family == "Microstates":
             weights = self.log_weights
             if not self.charges and weights is None:
@@ -153,11 +163,19 @@ class Problem:
 
     def scale(self, name) -> float:
         """|Q_j| + |q_j|: the unit of a relative residual."""
+        if self.family == "Modes":
+            from tests.corpus import levels
+
+            return levels.size(self, name) + abs(self.targets[name])
         return size_of(self.charges[name], self) + abs(self.targets[name])
 
     def spread(self, name) -> float:
         """Standard deviation of the charge when every state counts the same."""
         charge = self.charges[name]
+        if self.family == "Modes":
+            from tests.corpus import levels  # which makes drafts of this module
+
+            return levels.spread(self, name)
         if self.family == "Microstates":
             return float(np.std(self.live(charge)))
         dense = to_dense(charge)
@@ -200,4 +218,7 @@ def named(draft: Draft, kind: str, seed: int, index: int) -> Problem:
         multipliers=None if lam is None else {n: float(x) for n, x in zip(names, lam, strict=True)},
         entropy=draft.entropy,
         note=draft.note,
+        statistics=draft.statistics,
+        degeneracy=draft.degeneracy,
+        particles=draft.particles,
     )

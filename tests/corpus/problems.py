@@ -11,7 +11,7 @@ import zlib
 
 import numpy as np
 
-from tests.corpus import around, dependents, feasible
+from tests.corpus import around, dependents, feasible, levels
 from tests.corpus.problem import Problem, named
 
 INSIDE = {
@@ -58,7 +58,16 @@ DEPENDENT = {
     "no-charge": (dependents.empty, 8),
 }
 
-KINDS = INSIDE | EDGES | DEPENDENT
+LEVELS = {
+    **{f"levels-{s}": (levels.inside(s), 8) for s in levels.SIGNS},
+    "levels-condensed": (levels.inside("bosons", condensed=True), 12),
+    **{f"{place}-levels-{s}": (levels.edge(s, place), 8) for place in COUNTS for s in levels.SIGNS},
+    **{f"redundant-levels-{s}": (levels.redundant(levels.inside(s)), 6) for s in levels.SIGNS},
+    **{f"redundant-boundary-levels-{s}": (levels.redundant(levels.edge(s, "boundary")), 4) for s in levels.SIGNS},
+    **{f"inconsistent-levels-{s}": (levels.contradicted(levels.inside(s)), 6) for s in levels.SIGNS},
+}
+
+KINDS = INSIDE | EDGES | DEPENDENT | LEVELS
 
 
 def make(kind: str, seed: int, index: int) -> Problem:
