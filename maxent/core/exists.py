@@ -31,20 +31,21 @@ def minimiser_exists(family: Family, at: Iterate, unit: np.ndarray) -> tuple[boo
     h = np.maximum(at.curvature, 1e-150)  # below that nothing can be proved, and squares would overflow
     along = np.abs(at.axes.T) @ (unit + at.evaluation.error) + np.abs(at.axes.T @ at.evaluation.values)
     nu2 = float(np.sum(along**2 / h))
+    nu = float(np.sqrt(nu2))  # roots before products: either sum may be near the end of the range
     # one pass over the charges settles most well-conditioned fits, however many multipliers there are
     reach = family.reach()
     if np.all(np.isfinite(reach)):
-        crude = float(np.sqrt(np.sum((np.abs(at.axes.T) @ reach) ** 2 / h) * nu2))
+        crude = float(np.sqrt(np.sum((np.abs(at.axes.T) @ reach) ** 2 / h))) * nu
         if crude < 0.5:
             return True, crude, "proved"
     bounds = np.array([_bound(family, at, k, exact=False) for k in range(len(h))])
     if np.isnan(bounds).any():
         return _probed(family, at, h, nu2)
     for k in np.argsort(h):  # cheap bounds first, exact ones where they matter, softest direction first
-        if np.sqrt(np.sum(bounds**2 / h) * nu2) < 0.5:
+        if float(np.sqrt(np.sum(bounds**2 / h))) * nu < 0.5:
             break
         bounds[k] = min(bounds[k], _bound(family, at, int(k), exact=True))
-    shift = float(np.sqrt(np.sum(bounds**2 / h) * nu2))
+    shift = float(np.sqrt(np.sum(bounds**2 / h))) * nu
     return shift < 0.5, shift, "proved"
 
 
