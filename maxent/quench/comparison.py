@@ -109,7 +109,7 @@ class Comparison:
     times : (t,) ndarray
     traces : dict of str to (t,) ndarray
     speed, revival : float or None
-        Largest group velocity, given or estimated from the lowest levels of neighbouring momenta, and L/(2 v).
+        Largest group velocity, given or estimated from the lowest excitations of neighbouring momenta, and L/(2 v).
     plateau : (float, float) or None
     horizon : float
         1/(smallest gap that takes part): only longer averages dephase everything.
@@ -570,7 +570,11 @@ class _Study:
         return float(self.sites.size if self.sites.is_ring else 2 * self.sites.size)
 
     def _estimated_speed(self, spectrum: Spectrum) -> float | None:
-        """Largest slope of the lowest level against momentum; None where there are no momenta."""
+        """Largest slope of the lowest level against momentum; None where there are no momenta.
+
+        Slopes at the momentum of the ground state are left out: it is no excitation, and in a system with a gap its
+        distance to the levels beside it is that gap, over a step of momentum that shrinks with the size.
+        """
         basis = self.charges.basis
         name = "translation"
         if basis is None or name not in basis.labels:
@@ -584,12 +588,15 @@ class _Study:
         if order < 3 or not np.isfinite(lowest).all():
             return None
         sites_per_step = self.sites.size / order
-        slope = float(np.abs(np.diff(lowest, append=lowest[:1])).max() / (2 * np.pi / order)) * sites_per_step
+        steps = np.abs(np.diff(lowest, append=lowest[:1]))  # from each momentum to the next
+        ground = int(np.argmin(lowest))
+        steps[[ground, ground - 1]] = 0.0
+        slope = float(steps.max() / (2 * np.pi / order)) * sites_per_step
         if slope <= 1e-9 * max(spectrum.width, 1e-300):
             return None
         self.notes.append(
-            f"Largest group velocity {slope:.3g} sites per time: estimated from the lowest levels of neighbouring "
-            "momenta; give `speed` where it is known."
+            f"Largest group velocity {slope:.3g} sites per time: estimated from the lowest excitations of "
+            "neighbouring momenta; give `speed` where it is known."
         )
         return slope
 

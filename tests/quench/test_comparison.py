@@ -142,6 +142,27 @@ def test_single_eigenstates_are_those_of_the_matching_sector():
     assert window.means["z"] == pytest.approx(weight @ z / weight.sum(), abs=1e-12)
 
 
+@pytest.mark.parametrize(
+    ("text", "speed", "within"),
+    [
+        # largest slope of 2 sqrt(1 + h^2 - 2 h cos k) is 2 min(1, h); levels of gapped rings must not count the gap
+        ("-X[i]*X[i+1] - 0.5*Z[i]", 1.0, 0.13),
+        ("-X[i]*X[i+1] - 1.5*Z[i]", 2.0, 0.05),
+        ("-X[i]*X[i+1] - 3*Z[i]", 2.0, 0.13),
+        # cos k, and the spinons (pi/2) |sin k| of the isotropic ring: slopes are means over a step of momentum
+        ("Sx[i]*Sx[i+1] + Sy[i]*Sy[i+1]", 1.0, 0.07),
+        ("Sx[i]*Sx[i+1] + Sy[i]*Sy[i+1] + Sz[i]*Sz[i+1]", np.pi / 2, 0.25),
+    ],
+)
+def test_estimated_speed(text, speed, within):
+    ring = Ring(10)
+    start = ProductState(ring, ["0.3", "1.9"], 0.0).vector()
+    found = compare({"energy": formula(text, ring)}, start, blocks=(1, 2), ranking=False)
+    assert found.speed == pytest.approx(speed, abs=within) and found.speed < speed
+    assert found.revival == pytest.approx(10 / (2 * found.speed))
+    assert any("estimated from the lowest excitations" in note for note in found.notes)
+
+
 def test_leading_correction_is_that_of_the_spreads():
     # independent spins: <Z_0 Z_1> in the ensemble is m^2; a start of sharp M has 1/(L-1) less of the variance
     ring = Ring(6)
