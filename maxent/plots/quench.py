@@ -70,7 +70,7 @@ def plot_ensembles(
     names = brief_names(ensembles)
     step = len(names) + 1.5
     rows = step * len(chosen)
-    with drawing(ax, (SIZE[0], float(np.clip(0.75 + 0.165 * rows, 1.6, 8.5)))) as ax:
+    with drawing(ax, (SIZE[0], max(0.75 + 0.165 * rows, 1.6))) as ax:
         if not chosen:
             return say(ax, "No observables were given.")
         if not ensembles:
@@ -194,7 +194,7 @@ def plot_ranking(ranking: Ranking | None, *, ax: Axes | None = None) -> Axes:
     orders = [(title, getattr(ranking, attribute, ())) for attribute, title in _ORDERS]
     orders = [(title, steps) for title, steps in orders if steps]
     rows = sum(len(steps) + 1.4 for _, steps in orders)
-    with drawing(ax, (SIZE[0], float(np.clip(1.0 + 0.17 * rows, 1.5, 8.5)))) as ax:
+    with drawing(ax, (SIZE[0], max(1.0 + 0.17 * rows, 1.5))) as ax:
         if not orders:
             return say(ax, "The charges were not ranked." if ranking is None else "No charge could be added.")
         ax.set_axis_off()
