@@ -34,6 +34,9 @@ from maxent.text import plural
 
 __all__ = ["Comparison", "Ensemble", "compare"]
 
+#: Columns of `Comparison.levels` that are no observables.
+TAKEN = ("energy", "level", "weight")
+
 
 @dataclass(frozen=True)
 class Ensemble:
@@ -287,6 +290,9 @@ class _Study:
                 raise TypeError(f"{name!r} must be made by maxent.lattice.formula, not {type(op).__name__}")
             if op.non_hermitian_word is not None:
                 raise ValueError(f"{name!r} is not Hermitian: it holds {op.non_hermitian_word}")
+        taken = [name for name in observables if name in TAKEN]
+        if taken:
+            raise ValueError(f"observable {taken[0]!r}: this name is taken in the table of levels; choose another")
         self.progress = progress
         self.seconds: dict[str, float] = {}
         self.notes: list[str] = []

@@ -220,6 +220,8 @@ def test_open_chain_without_symmetry_and_small_blocks():
 
 def test_bad_input():
     given = study(4)
+    with pytest.raises(ValueError, match="'energy': this name is taken"):
+        compare(**{**given, "observables": {"energy": given["charges"]["energy"]}})
     with pytest.raises(ValueError, match="none of the charges"):
         compare(**{**given, "hamiltonian": "H"})
     with pytest.raises(ValueError, match="16 amplitudes|dimension 16"):
