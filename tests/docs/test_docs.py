@@ -5,6 +5,7 @@ import re
 import shlex
 import shutil
 from pathlib import Path
+from xml.etree import ElementTree
 
 import pytest
 
@@ -119,3 +120,15 @@ def test_the_shown_table_is_what_the_main_job_prints(workplace, capsys):
     assert printed.keys() == shown.keys()
     for head, numbers in shown.items():
         assert printed[head] == pytest.approx(numbers, rel=1e-9), head
+
+
+def test_every_figure_is_shown_and_can_be_heard():
+    shown = {(p.parent / target).resolve() for p in PAGES for target in LINK.findall(read(p))}
+    drawn = sorted((ROOT / "docs" / "figures").glob("*"))
+    assert drawn and {f.resolve() for f in drawn} <= shown
+    for figure in drawn:
+        root = ElementTree.fromstring(read(figure))
+        title, description, *_ = root
+        assert title.tag.endswith("title") and description.tag.endswith("desc"), figure.name
+        assert len(title.text) > 10 and len(description.text) > 50, figure.name
+        assert not re.search(r'href="(?!#)', read(figure)), f"{figure.name} loads something"
