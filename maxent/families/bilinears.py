@@ -131,7 +131,12 @@ class Bilinears(Family):
 
     @property
     def size(self) -> int:
-        """Number of modes; values are totals, not per mode."""
+        """Number of levels that are not pinned, 2^size states for fermions; values are totals, not per mode."""
+        return round(self.particles.levels)
+
+    @property
+    def modes(self) -> int:
+        """Number of modes of the operators."""
         layout = self.places.layout
         return layout.like.modes if isinstance(layout, Momenta) else layout.modes
 
@@ -185,7 +190,7 @@ class Bilinears(Family):
         given = self.operators()
         if any(q.is_periodic for q in given.values()):
             raise ValueError("periodic charges cannot be restricted to some modes: give them as matrices")
-        kept = np.array(checked_modes(modes, self.size), int)
+        kept = np.array(checked_modes(modes, self.modes), int)
         if not len(kept):
             raise ValueError("no mode left after the restriction")
         inside = []
@@ -244,7 +249,8 @@ class Bilinears(Family):
 
     def face(self, v: np.ndarray, tol: float) -> Face | None:
         """The states in which all negative levels are filled and all positive ones empty: levels at zero are free."""
-        ground = self.particles.ground(v, tol)
+        away = abs(self.lowest(v).value) > max(100 * tol, 1e-9 * float(np.abs(v) @ self.scale))
+        ground = None if away else self.particles.ground(v, tol)
         if ground is None:
             return None
         family = self._with(self.particles.compress(ground), self.places.on_face(ground))

@@ -14,7 +14,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 from functools import cached_property
-from typing import Any, NamedTuple
+from typing import Any, ClassVar, NamedTuple
 
 import numpy as np
 from scipy.optimize import brentq
@@ -110,6 +110,8 @@ class FixedNumberState:
     entropy: float
     log_partition: float
     insertion: float
+    #: These families have no prior.
+    relative_entropy: ClassVar[None] = None
 
     @property
     def modes(self) -> int:
@@ -152,6 +154,11 @@ class Canonical(Family):
     def constant(self) -> np.ndarray:
         """The numbers c_j."""
         return np.asarray(self.free.constant)
+
+    @property
+    def levels(self) -> float:
+        """Number of levels."""
+        return self.free.levels
 
     @property
     def dense(self) -> tuple[Any, ...]:

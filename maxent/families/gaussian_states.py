@@ -12,7 +12,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
-from typing import Any
+from typing import Any, ClassVar
 
 import numpy as np
 
@@ -70,6 +70,8 @@ class FermionState:
     covariance: np.ndarray
     entropy: float
     log_partition: float = float("nan")
+    #: These families have no prior.
+    relative_entropy: ClassVar[None] = None
 
     @classmethod
     def of(cls, covariance: Any) -> FermionState:
@@ -247,6 +249,8 @@ class BosonState:
     displacement: np.ndarray
     entropy: float
     log_partition: float = float("nan")
+    #: These families have no prior.
+    relative_entropy: ClassVar[None] = None
 
     @classmethod
     def of(cls, covariance: Any, displacement: Any = None) -> BosonState:

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, ClassVar
 
 import numpy as np
 
@@ -45,6 +45,8 @@ class PeriodicState:
     momentum_occupations: np.ndarray
     entropy: float
     log_partition: float = float("nan")
+    #: These families have no prior.
+    relative_entropy: ClassVar[None] = None
 
     @classmethod
     def of_momenta(

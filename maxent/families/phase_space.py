@@ -116,6 +116,11 @@ class PhaseSpace(Family):
         return cls(np.array(c), np.array(m), np.array(d))
 
     @property
+    def levels(self) -> int:
+        """Number of modes."""
+        return int(self.matrices.shape[1] // 2)
+
+    @property
     def dense(self) -> tuple[Any, ...]:
         """The matrices as one block."""
         return (self.matrices[:, None],) if self.matrices.shape[1] else ()

@@ -11,7 +11,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from itertools import product
-from typing import Any
+from typing import Any, ClassVar
 
 import numpy as np
 
@@ -123,6 +123,8 @@ class RingState:
     form: Callable[[Any, int], tuple[np.ndarray, float]]
     entropy: float
     log_partition: float = float("nan")
+    #: These families have no prior.
+    relative_entropy: ClassVar[None] = None
 
     def mean(self, operator: Any) -> float:
         """Expectation value of a sum of products of Pauli matrices, given as charges are; quadratic or not."""

@@ -242,7 +242,7 @@ class SpinRing(Family):
     >>> ring = SpinRing(n, {"energy": bonds + fields})
     >>> result = maxent.solve(ring, {"energy": -30.0})
     >>> print(result.verdict, round(result.multipliers["energy"], 4))
-    solved 0.5909
+    solved 0.7316
     """
 
     sites: int
@@ -283,8 +283,8 @@ class SpinRing(Family):
 
     @property
     def size(self) -> int:
-        """Number of sites; values are totals, not per site."""
-        return self.sites
+        """Number of states; values are totals, not per site."""
+        return sum(1 << (s.matrices.shape[1] // 2 - bool(s.inner)) for s in self.sectors)
 
     @cached_property
     def scale(self) -> np.ndarray:
@@ -389,7 +389,8 @@ class SpinRing(Family):
         """
         forms = [s.form(v)[0].levels for s in self.sectors]
         top = max((float(e.max(initial=0.0)) for e in forms), default=0.0)
-        found = self._ground(v, max(100 * tol, 1e-9 * top))
+        away = abs(min(s.bounds(v)[0] for s in self.sectors)) > max(100 * tol, 1e-9 * float(np.abs(v) @ self.scale))
+        found = None if away else self._ground(v, max(100 * tol, 1e-9 * top))
         if found is None or not top > 0:
             return None
         sectors, gap, width = found

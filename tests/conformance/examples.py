@@ -13,7 +13,8 @@ from typing import Any
 import numpy as np
 import scipy.sparse as sp
 
-from maxent.families import Matrices, Microstates, Modes
+from maxent.families import Bilinears, Matrices, Microstates, Modes
+from maxent.families.gaussian_states import majorana_operators
 from tests.conformance.dense import Dense, random_hermitian, random_unitary
 
 NAMES = ("plateau", "second", "third")
@@ -163,9 +164,53 @@ def _modes(name: str) -> Example:
     return Example(f"modes-{name}", family, dense, 4, observable)
 
 
+def many_body(h: np.ndarray, pairing: np.ndarray | None = None, constant: float = 0.0) -> np.ndarray:
+    """A quadratic operator of n modes as a (2^n, 2^n) matrix, mode 0 the slowest index, 1 = occupied."""
+    n = len(h)
+    g = majorana_operators(n)
+    c = [(0.5 * (g[2 * j] + 1j * g[2 * j + 1])).toarray() for j in range(n)]
+    total = constant * np.eye(1 << n, dtype=complex)
+    for a in range(n):
+        for b in range(n):
+            total += h[a, b] * c[a].conj().T @ c[b]
+            if pairing is not None:
+                pair = 0.5 * pairing[a, b] * c[a].conj().T @ c[b].conj().T
+                total += pair + pair.conj().T
+    return total
+
+
+def random_pairing(rng: np.random.Generator, n: int) -> np.ndarray:
+    """A complex antisymmetric matrix."""
+    d = rng.standard_normal((n, n)) + 1j * rng.standard_normal((n, n))
+    return (d - d.T) / 2
+
+
+def _bilinears(name: str) -> Example:
+    """Four modes as their 16 states; charge 0 has two levels at zero, in a frame of its own."""
+    rng = np.random.default_rng(16)
+    n, is_paired = 4, name == "paired"
+    matrices = [
+        _plateau(rng, [0, 0, 1, 1.5], is_complex=True),
+        *(0.4 * random_hermitian(rng, n, is_complex=True) for _ in "ab"),
+    ]
+    pairings = [None, 0.4 * random_pairing(rng, n), 0.4 * random_pairing(rng, n)] if is_paired else [None] * 3
+    given = [(h, d, c) for h, d, c in zip(matrices, pairings, [0.0, 0.4, -1.3], strict=True)]
+    dense = Dense(np.array([many_body(*q) for q in given]), np.zeros((16, 16)))
+
+    def observable(rng: np.random.Generator) -> tuple[Any, np.ndarray]:
+        x = random_hermitian(rng, n, is_complex=True), random_pairing(rng, n), 0.0
+        return x, many_body(*x)
+
+    return Example(f"bilinears-{name}", Bilinears(dict(zip(NAMES, given, strict=True))), dense, 4, observable)
+
+
+#: Families of levels rather than of states.
+LEVELS = (Modes, Bilinears)
+
+
 def states_of(family: Any) -> int:
-    """Number of states of a family; the size of `Modes` is the number of places for one fermion."""
-    return 2**family.size if isinstance(family, Modes) else family.size
+    """Number of states of a family; the size of families of levels is the number of places for one fermion."""
+    return 2**family.size if isinstance(family, LEVELS) else family.size
 
 
 def examples() -> list[Example]:
@@ -177,4 +222,5 @@ def examples() -> list[Example]:
         _blocks(has_prior=False),
         _blocks(has_prior=True),
         *(_modes(n) for n in ("plain", "degenerate")),
+        *(_bilinears(n) for n in ("plain", "paired")),
     ]

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 import maxent
-from maxent.families import Matrices, Microstates, Modes
+from maxent.families import Bilinears, Matrices, Microstates, Modes
 from tests.conformance.examples import NAMES, Example, examples
 from tests.conformance.views import plateau_face
 
@@ -42,6 +42,16 @@ def more_charges(example: Example, extra: dict) -> object:
         for name, c in extra.items():
             charges[name], constants[name] = c[:3] @ family.charges, c[:3] @ family.constant + c[3]
         return Modes(charges, degeneracy=family.degeneracy, constants=constants)
+    if isinstance(family, Bilinears):
+        given = list(family.operators().values())
+        h = np.array([q.matrices()[0] for q in given])
+        pairings = [q.matrices()[1] for q in given]
+        d = np.array([np.zeros_like(h[0]) if p is None else p for p in pairings])
+        numbers = np.array([q.constant for q in given])
+        charges = family.operators()
+        for name, c in extra.items():
+            charges[name] = np.tensordot(c[:3], h, 1), np.tensordot(c[:3], d, 1), float(c[:3] @ numbers + c[3])
+        return Bilinears(charges)
     charges = dict(zip(NAMES, example.dense.charges, strict=True))
     for name, c in extra.items():
         charges[name] = np.einsum("j,jab->ab", c[:3], example.dense.charges) + c[3] * np.eye(example.dense.d)

@@ -6,9 +6,9 @@ import numpy as np
 import pytest
 import scipy.sparse as sp
 
-from maxent.families import Matrices, Microstates, Modes
+from maxent.families import Bilinears, Matrices, Microstates, Modes
 from tests.conformance.dense import partial_trace, random_unitary
-from tests.conformance.examples import NAMES, examples
+from tests.conformance.examples import LEVELS, NAMES, examples
 from tests.conformance.views import plateau_face
 
 every_example = pytest.mark.parametrize("example", examples(), ids=lambda e: e.name)
@@ -42,6 +42,8 @@ def test_charges_are_operators_like_any_other(example):
         operators = list(listed)
     elif isinstance(example.family, Modes):  # operators have no constants
         operators = list(example.family.charges)
+    elif isinstance(example.family, Bilinears):
+        operators = list(example.family.operators().values())
     else:
         operators = list(example.dense.charges)
     values = example.family.evaluate(LAM).values
@@ -80,7 +82,7 @@ def test_state_on_a_face(example, rng):
     means(example, face.family.state(LAM), rho, rng)
 
 
-@pytest.mark.parametrize("example", [e for e in examples() if not isinstance(e.family, Modes)], ids=lambda e: e.name)
+@pytest.mark.parametrize("example", [e for e in examples() if not isinstance(e.family, LEVELS)], ids=lambda e: e.name)
 def test_restriction_to_listed_states(example, rng):
     """A sector by indices or by a mask: the same states, and the user's operators still fit."""
     d = example.dense.d
