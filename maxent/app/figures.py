@@ -40,6 +40,8 @@ class Figure:
         What is to be seen in it, with the numbers: for a reader who does not see it.
     svg : str
         The figure, an ``svg`` element with title and words inside.
+    study : bool, optional
+        Whether it belongs to the comparison of ensembles.
     """
 
     name: str
@@ -47,6 +49,7 @@ class Figure:
     caption: str
     words: str
     svg: str
+    study: bool = False
 
 
 def draw(result: Any, *, labels: Sequence[str] = ()) -> tuple[Figure, ...]:

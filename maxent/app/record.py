@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import json
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 from maxent.app.config import Config
@@ -29,6 +29,8 @@ def record(
     asked_driver: str,
     facts: Mapping[str, str],
     versions: Mapping[str, str],
+    notes: Sequence[str] = (),
+    quench: Mapping[str, Any] | None = None,
 ) -> dict[str, Any]:
     """Collect everything a result says, with the names of the charges.
 
@@ -46,6 +48,10 @@ def record(
         What was built, for people.
     versions : mapping of str to str
         Versions of the programs that took part.
+    notes : sequence of str, optional
+        What a reader must know beyond the result.
+    quench : mapping, optional
+        Comparison of the ensembles with the dynamics (study.py).
 
     Returns
     -------
@@ -88,6 +94,8 @@ def record(
         "driver": result.driver,
         "asked_driver": asked_driver,
         "size": int(job.family.size),
+        "notes": list(notes),
+        "quench": quench,
         "facts": dict(facts),
         "versions": {"maxent": __version__, **versions},
     }

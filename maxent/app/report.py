@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from typing import Any
 
-from maxent.app import words
+from maxent.app import study_words, words
 from maxent.app.figures import Figure, recoloured
 from maxent.text import combination, number
 
@@ -48,8 +48,16 @@ def render(record: Mapping[str, Any], *, figures: Sequence[Figure] = ()) -> str:
         "face": words.face,
         "redundancy": words.redundancy,
         "recoloured": recoloured,
+        "numbers": study_words.columns_of_numbers,
     }
     head, rows = words.charge_table(record)
     return environment.get_template("report.html").render(
-        r=record, short=words.verdict(record), head=head, rows=rows, figures=figures
+        r=record,
+        short=words.verdict(record),
+        head=head,
+        rows=rows,
+        figures=[f for f in figures if not f.study],
+        study=study_words.tables(record["quench"]) if record["quench"] else (),
+        study_notes=study_words.notes(record["quench"]) if record["quench"] else (),
+        study_figures=[f for f in figures if f.study],
     )

@@ -88,10 +88,23 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
         seconds |= spent
         apart = f", {spent['compile']:.2f} s of them compiling" if "compile" in spent else ""
         say(f"fit: {plural(result.iterations, 'iteration')} in {seconds['fit']:.2f} s{apart}")
+        notes = job.remarks(result)
+        for note in notes:
+            say(f"note: {note}")
+        series, quench = None, None
+        if job.study is not None:
+            from maxent.app import study
+
+            clock = time.perf_counter()
+            series = study.run(config, job.study, say)
+            quench, seconds["quench"] = study.section(series), time.perf_counter() - clock
+            say(f"quench: {plural(len(job.study.sizes), 'size')} in {seconds['quench']:.2f} s")
         from maxent.app.record import record as collect
 
-        found = collect(config, job, result, asked_driver=asked, facts=sizes(job), versions=_versions())
-        _write(part, config, job, result, found, say)
+        found = collect(
+            config, job, result, asked_driver=asked, facts=sizes(job), versions=_versions(), notes=notes, quench=quench
+        )
+        _write(part, config, job, result, found, series, say)
         manifest = {
             "started": time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime(started)),
             "seconds": seconds | {"total": time.perf_counter() - begun},
@@ -266,7 +279,9 @@ def _fit(config: Config, job: Job, driver: str) -> Any:
         raise config.error([((), str(bad))]) from bad
 
 
-def _write(part: File, config: Config, job: Job, result: Any, record: Mapping[str, Any], say: Say) -> None:
+def _write(
+    part: File, config: Config, job: Job, result: Any, record: Mapping[str, Any], series: Any, say: Say
+) -> None:
     from maxent.app import arrays
     from maxent.app.record import dump
 
@@ -274,7 +289,11 @@ def _write(part: File, config: Config, job: Job, result: Any, record: Mapping[st
     (part / "result.json").write_text(dump(record), encoding="utf-8")
     probabilities = getattr(result.state, "probabilities", None)
     arrays.write(part / "result.nc", record, probabilities=probabilities, labels=job.labels)
-    figures = _figures(part, job, result, say)
+    if series is not None:
+        from maxent.app.study import write_arrays
+
+        write_arrays(part / "quench", series)
+    figures = _figures(part, job, result, series, say)
     if find_spec("jinja2") is None:
         say("no report.html: it needs the package jinja2 (pip install 'maxent-states[report]')")
         return
@@ -283,13 +302,17 @@ def _write(part: File, config: Config, job: Job, result: Any, record: Mapping[st
     (part / "report.html").write_text(render(record, figures=figures), encoding="utf-8")
 
 
-def _figures(part: File, job: Job, result: Any, say: Say) -> Any:
+def _figures(part: File, job: Job, result: Any, series: Any, say: Say) -> Any:
     if find_spec("matplotlib") is None:
         say("no figures: they need the package matplotlib (pip install 'maxent-states[report]')")
         return ()
     from maxent.app.figures import draw
 
     figures = draw(result, labels=job.labels)
+    if series is not None:
+        from maxent.app.study_figures import draw as draw_study
+
+        figures += draw_study(series)
     if figures:
         (part / "figures").mkdir()
     for figure in figures:

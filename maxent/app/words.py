@@ -163,5 +163,10 @@ def summary(record: Mapping[str, Any]) -> str:
         parts.append(table(numbers, right=[1]))
     if record["explanation"] and not record["conflict"]:
         parts.append("\n".join(record["explanation"]))
+    parts += record["notes"]
+    if record["quench"]:
+        from maxent.app.study_words import summary as study_summary
+
+        parts.append(study_summary(record["quench"]))
     parts.append(f"{plural(record['iterations'], 'iteration')}, driver {record['driver']}")
     return "\n\n".join(parts)

@@ -113,7 +113,7 @@ class Geometry:
         """Key that an error of the lattice speaks of."""
         if "bond" in text:
             return "bonds"
-        return "cell" if "cell" in text or "name of a site" in text else self._size_key
+        return "cell" if any(word in text for word in ("cell", "name of a site", "site names")) else self._size_key
 
     def _check_sizes(self, problems: Problems) -> None:
         if self.size is not None and self.sizes is not None:

@@ -63,7 +63,7 @@ class Quench:
         default=None,
         metadata=says("Times of the traces: the last of 400, or a list; up to four revival times by default."),
     )
-    velocity: float | None = field(
+    speed: float | None = field(
         default=None, metadata=says("Largest group velocity in sites per time, where it is known; else estimated.")
     )
     insist: list[str] = field(
@@ -300,7 +300,7 @@ class _Part:
             "blocks": tuple(sorted(set(asked.blocks))),
             "width": asked.window,
             "times": times,
-            "speed": asked.velocity,
+            "speed": asked.speed,
             "insist": tuple(asked.insist),
             "resolution": asked.resolution,
             "ranking": asked.ranking,
@@ -387,14 +387,14 @@ def _check_quench(options: LatticeOptions, problems: Problems) -> None:
     if options.hamiltonian not in options.charges:
         name = options.hamiltonian
         hint = suggestion(name, options.charges)
-        problems.add(("quench",), f"no charge is called {name!r}{hint}; name the Hamiltonian with `hamiltonian`")
+        problems.add(("quench",), f"no charge is called {name!r}, which should be the Hamiltonian{hint}")
     for name, given in options.targets.items():
         if given != "from start":
             problems.add(("targets", name), "with [quench] every target is 'from start': the dynamics keeps them")
     for name in asked.insist:
         if name not in options.charges:
             problems.add(("quench", "insist"), f"no charge is called {name!r}{suggestion(name, options.charges)}")
-    for key, value in (("window", asked.window), ("velocity", asked.velocity), ("resolution", asked.resolution)):
+    for key, value in (("window", asked.window), ("speed", asked.speed), ("resolution", asked.resolution)):
         if value is not None and not value > 0:
             problems.add(("quench", key), f"must be positive, got {number(value)}")
     if not asked.blocks or min(asked.blocks) < 1:
