@@ -107,6 +107,24 @@ def test_order_of_the_four_charges(four_charges):
     assert "odd: multiplier zero, no entropy drop for this start." in four_charges.ranking.suggestion
 
 
+def test_entropy_drops_are_relative_entropies(four_charges):
+    """S_k - S_(k+1) = S(rho_(k+1) || rho_k) for nested sets with the same targets (closed form), by dense matrices."""
+    ring = Ring(8)
+    operators = [formula(text, ring).matrix().toarray() for text in TRANSVERSE.values()]
+
+    def state_and_log(multipliers):
+        e, u = np.linalg.eigh(sum(x * q for x, q in zip(multipliers, operators, strict=False)))
+        logs = -e - np.log(np.sum(np.exp(-e)))
+        return (u * np.exp(logs)) @ u.conj().T, (u * logs) @ u.conj().T
+
+    nested = [e.multipliers.values() for e in four_charges.ensembles if e.multipliers and not e.sector]
+    states = [state_and_log([0.0] * 4), *map(state_and_log, nested)]
+    steps = four_charges.ranking.by_entropy
+    for (_, before), (rho, after), step in zip(states, states[1:], steps, strict=False):
+        assert_allclose(step.entropy_drop, np.trace(rho @ (after - before)).real, rtol=0, atol=1e-12)
+    assert len(states) == 1 + len(steps) == 5
+
+
 # ------------------------------------------------------------------ transverse-field chain: towards infinite size
 
 #: P. Calabrese, F. H. L. Essler, M. Fagotti, Phys. Rev. Lett. 106, 227203 (2011) and J. Stat. Mech. (2012) P07016,
