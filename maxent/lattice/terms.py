@@ -383,6 +383,24 @@ class OperatorSum:
         except NotQuadraticError as error:
             raise ValueError(f"majorana_form: not quadratic: it holds {self._shown(error.word)}") from None
 
+    def pauli_terms(self) -> list[tuple[float, dict[int, str]]]:
+        """Coefficients and Pauli letters by site of a Hermitian sum of spins 1/2, at the current parameters.
+
+        Raises
+        ------
+        ValueError
+            When a site is no spin 1/2, or the sum is not Hermitian.
+
+        Examples
+        --------
+        >>> from maxent.lattice import Chain, formula
+        >>> formula("2*Sx[i]*Sx[i+1] + 1", Chain(2)).pauli_terms()
+        [(1.0, {}), (0.5, {0: 'X', 1: 'X'})]
+        """
+        if not self.sites.is_spin_half or not self.is_hermitian:
+            raise ValueError("pauli_terms: a Hermitian sum of spins 1/2 is needed")
+        return [(a.real * 0.5 ** len(word), {site: "XYZ"[x] for site, x in word}) for word, a in self._numeric()]
+
     def word_text(self, word: Word) -> str:
         """A word of `words` as formulas write it."""
         return word_text(word, self.sites)[1] or "1"

@@ -25,7 +25,7 @@ from maxent.quench.operators import as_matrix, extremes, largest_row_sum
 from maxent.quench.spectrum import Spectrum
 from maxent.text import plural
 
-__all__ = ["Start", "ground_start", "read_start", "thermal_start"]
+__all__ = ["Start", "ground_start", "read_array", "read_start", "thermal_start"]
 
 EPS = float(np.finfo(float).eps)
 #: Norms, traces and probabilities may be off by this much; within it they are set right and count as inaccuracy.
@@ -348,6 +348,25 @@ def read_start(file: str | Path, *, label: str | None = None) -> Start:
     TypeError, ValueError
         Not such a file, no such array in it, not a vector or a density matrix.
     """
+    value, title = read_array(file)
+    title = label or title
+    return Start.from_density(value, label=title) if value.ndim == 2 else Start.from_vector(value, label=title)
+
+
+def read_array(file: str | Path) -> tuple[np.ndarray, str]:
+    """Array of a file `name.npy` or `name.npz:array`, and a short name for it; pickled objects are never loaded.
+
+    Parameters
+    ----------
+    file : str or pathlib.Path
+
+    Raises
+    ------
+    OSError
+        The file cannot be opened.
+    ValueError
+        Not such a file, or no such array in it.
+    """
     text = str(file)
     path, _, name = text.rpartition(":") if ".npz:" in text else (text, "", "")
     if not path.endswith((".npy", ".npz")):
@@ -373,8 +392,7 @@ def read_start(file: str | Path, *, label: str | None = None) -> Start:
             pickled = "allow_pickle" in str(error)
             reason = "holds Python objects, which are not loaded" if pickled else "is damaged"
             raise ValueError(f"{path!r} {reason}") from None
-    title = label or Path(path).name + (f":{name}" if name else "")
-    return Start.from_density(value, label=title) if value.ndim == 2 else Start.from_vector(value, label=title)
+    return value, Path(path).name + (f":{name}" if name else "")
 
 
 def _lowest_space(q: Any, width: float, tolerance: float, most: int) -> tuple[np.ndarray, float | None]:
