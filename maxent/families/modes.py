@@ -21,10 +21,21 @@ from maxent.families.finite import checked_charges
 from maxent.families.levels import ModesState, checked_degeneracy, checked_statistics, fill, level_values
 from maxent.families.operators import check_size
 from maxent.families.reachable import PASS, face_normals, inward, triangle_rows
-from maxent.families.statistics import dual_of_logs, exponents, level_entropy, level_terms, log_partitions, unmixing
+from maxent.families.statistics import (
+    SIGNS,
+    dual_of_logs,
+    exponents,
+    level_entropy,
+    level_terms,
+    log_partitions,
+    unmixing,
+)
 from maxent.families.steps import kept_inside
 
 __all__ = ["Modes", "ModesState", "fill"]
+
+#: Levels below zero by less than this many roundings of ``v.q`` are at zero; directions come out of products.
+LOOSE = 16 * SAFETY
 
 #: Nothing is exact: a rounding above zero where there are no levels.
 TINY = 1e-300
@@ -76,6 +87,7 @@ class Modes(Family):
     index: np.ndarray
     pinned: np.ndarray
     copies: np.ndarray
+    filling: float
     names: tuple[str, ...]
     statistics: str
 
@@ -116,7 +128,7 @@ class Modes(Family):
             raise ValueError(f"constants name {sorted(unknown)[0]!r}, which is no charge")
         self._set(
             charges=values, degeneracy=g, constant=constant, edges=edges, anchor=anchor, index=np.arange(n),
-            pinned=np.zeros(n), copies=g, names=tuple(given), statistics=statistics,
+            pinned=np.zeros(n), copies=g, filling=1.0, names=tuple(given), statistics=statistics,
         )  # fmt: skip
 
     @classmethod
@@ -238,8 +250,10 @@ class Modes(Family):
         number of levels.  Where every level has a charge of its own: the multipliers themselves.
         """
         m, n = self.charges.shape
-        if m == n and np.count_nonzero(self.charges) == n and np.all(np.diag(self.charges)):
-            return self._closed_form()
+        if 0 < n <= m and np.count_nonzero(self.charges) == n:
+            there = self.charges != 0
+            if np.all(there.sum(axis=0) == 1) and np.all(there.sum(axis=1) <= 1):
+                return self._closed_form(np.argmax(there, axis=0))
         if self.anchor is None or not n:
             return np.zeros(m)
         height = self.anchor @ self.charges
@@ -248,15 +262,17 @@ class Modes(Family):
         per_level = total * mean / asked if asked > 0 else 1.0
         return self.anchor * (np.log1p(per_level) if self.statistics == "bosons" else np.log(per_level)) / mean
 
-    def _closed_form(self) -> np.ndarray:
-        """Multipliers of each level's own occupation; far out where it is pinned or asks for what cannot be."""
-        own = np.diag(self.charges)
-        n = -self.constant / (own * self.degeneracy)
+    def _closed_form(self, charge: np.ndarray) -> np.ndarray:
+        """Multipliers where each level has a `charge` (n,) of its own; far out where it is pinned or beyond reach."""
+        own = self.charges[charge, np.arange(len(charge))]
+        n = -self.constant[charge] / (own * self.degeneracy)
         most = 1.0 if self.statistics == "fermions" else np.inf
         w = np.where(n > 0.5, -40.0, 40.0)
         some = (n > 1e-17) & (n < most)
         w[some] = exponents(n[some], self.statistics)
-        return w / own
+        lam = np.zeros(len(self.constant))
+        lam[charge] = w / own
+        return lam
 
     def inside(self, lam: Any, step: Any, evaluation: Evaluation) -> Any:
         """Steps along which the dual falls and bosons stay confined; of fermions, the given ones."""
@@ -275,11 +291,10 @@ class Modes(Family):
     def reference(self) -> tuple[np.ndarray, np.ndarray]:
         """Means and rows with every copy of a level half full, the counting measure of fermions.
 
-        Others have none; one particle in every copy takes its place, whatever the targets are.
+        Others have none: `filling` particles in every copy take its place, the same for all combinations of charges.
         """
-        n, variance = (
-            (0.5, 0.25) if self.statistics == "fermions" else (1.0, 2.0 if self.statistics == "bosons" else 1.0)
-        )
+        n = 0.5 if self.statistics == "fermions" else self.filling
+        variance = n * (1 - SIGNS[self.statistics] * n)
         mean = n * (self.charges @ self.degeneracy) + self.constant
         return mean, triangle_rows(self.charges, variance * self.degeneracy)
 
@@ -290,7 +305,9 @@ class Modes(Family):
         names = self.names if matrix.shape[0] == len(self.names) else ()
         constant = matrix @ self.constant - offset
         if xp is np and matrix.shape[0] == m and np.array_equal(matrix, np.eye(m)):
-            return self._with(constant=constant, names=names)
+            moved = self._with(constant=constant, names=names)
+            # many particles: coordinates made for one would drown in the rounding of the targets
+            return moved._with(filling=max(1.0, moved._particles / float(np.maximum(self.degeneracy.sum(), 1.0))))
         charges = matrix @ self.charges
         edges = None if self.edges is None else matrix @ self.edges
         anchor = self.anchor
@@ -343,7 +360,7 @@ class Modes(Family):
         below = np.flatnonzero(height < 0)
         if not len(below):
             return 0.0
-        if height[below].min() < -SAFETY * unit:
+        if height[below].min() < -LOOSE * unit:
             return np.inf
         if self.anchor is None:
             return 0.0

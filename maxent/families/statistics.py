@@ -14,7 +14,8 @@ import numpy as np
 from maxent.core.contract import namespace
 
 __all__ = [
-    "SIGNS", "dual_of_logs", "exponents", "level_entropy", "level_terms", "log_partitions", "mean_occupations", "unmixing",
+    "SIGNS", "dual_of_logs", "exponents", "level_entropy", "level_terms", "log_partitions", "mean_occupations",
+    "unmixing",
 ]  # fmt: skip
 
 #: s in n = 1/(e^w + s).

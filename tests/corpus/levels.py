@@ -1,9 +1,9 @@
 """Independent levels: fermions, bosons and distinguishable particles; and what is asked of them without the solver.
 
 Truth inside: multipliers are drawn, values follow from 1/(e^w + s).  Truth on the edge: the first charge is zero on k
-levels; on the others it is positive, or for fermions of either sign.  A state that is empty where it is positive and full
-where it is negative has the lowest value there is, and every state with that value is such a one; the target comes from
-multipliers on the k levels.  The normal makes the distance of a step outside exact.  Bosons and distinguishable
+levels; on the others it is positive, or for fermions of either sign.  A state that is empty where it is positive and
+full where it is negative has the lowest value there is, and every state with that value is such a one; the target comes
+from multipliers on the k levels.  The normal makes the distance of a step outside exact.  Bosons and distinguishable
 particles have the particle number among their charges.
 """
 
@@ -28,10 +28,10 @@ def entropy(w, copies, statistics: str) -> float:
     total = mpmath.mpf(0)
     with mpmath.workdps(40):
         for x, g in zip(w, copies, strict=True):
-            x = mpmath.mpf(float(x))
-            n = mpmath.exp(-x) if statistics == "distinguishable" else 1 / (mpmath.exp(x) + SIGNS[statistics])
-            log_z = {"fermions": lambda x: mpmath.log1p(mpmath.exp(-x)), "bosons": lambda x: mpmath.log1p(n)}
-            total += mpmath.mpf(float(g)) * (log_z.get(statistics, lambda x: n)(x) + x * n)
+            x, s = mpmath.mpf(float(x)), SIGNS[statistics]
+            n = 1 / (mpmath.exp(x) + s)
+            log_z = s * mpmath.log1p(s * mpmath.exp(-x)) if s else n
+            total += mpmath.mpf(float(g)) * (log_z + x * n)
     return float(total)
 
 
@@ -167,7 +167,7 @@ def ends(problem, coefficients: dict) -> np.ndarray:
     height = sum(v * np.asarray(problem.charges[n]) for n, v in coefficients.items())
     if problem.statistics == "fermions":
         return np.array([problem.degeneracy @ np.minimum(height, 0), problem.degeneracy @ np.maximum(height, 0)])
-    unit = 1e-14 * sum(abs(v) * np.abs(problem.charges[n]).max() for n, v in coefficients.items())
+    unit = 1e-13 * sum(abs(v) * np.abs(problem.charges[n]).max() for n, v in coefficients.items())
     return np.array([0.0 if height.min() > -unit else -np.inf, 0.0 if height.max() < unit else np.inf])
 
 
@@ -202,6 +202,6 @@ def lowest_at_50_digits(problem, direction: dict):
     if problem.statistics == "fermions":
         copies = [mpmath.mpf(float(g)) for g in problem.degeneracy]
         return mpmath.fsum(g * min(h, 0) for g, h in zip(copies, height, strict=True)) - asked
-    unit = 1e-14 * sum(abs(v) * np.abs(problem.charges[n]).max() for n, v in direction.items())
+    unit = 1e-13 * sum(abs(v) * np.abs(problem.charges[n]).max() for n, v in direction.items())
     assert min(height) > -unit
     return -asked
