@@ -209,14 +209,51 @@ def find_sector(charges: Charges, start: Start) -> Sector | None:
         if value is not None:
             small = abs(value) <= 1e-13 * float(np.abs(line).max(initial=0.0))
             sharp[name], lines[name] = 0.0 if small else float(value), line
+    chosen = _columns(charges, start, symmetries, lines, sharp)
+    parity = _parity(charges)
+    if parity is not None:
+        value = sharp_value(parity, start.vectors)
+        if value is not None and not np.isin(parity[_kept(lines, sharp, len(parity))], [value]).all():
+            try:
+                chosen = _columns(charges, start, symmetries, {**lines, "parity": parity}, {**sharp, "parity": value})
+                sharp["parity"] = float(value)
+            except ValueError:
+                pass  # a map of the basis exchanges the parities: its label stands for both
     if not symmetries and not sharp:
         return None
-    if basis is None:
-        keep = np.ones(len(start.vectors), bool)
-        for name, line in lines.items():
-            keep &= np.abs(line - sharp[name]) <= 1e-9 * max(1.0, float(np.abs(line).max()))
-        columns = np.flatnonzero(keep)
-    else:
-        columns = basis.columns(symmetries, {name: (lines[name], sharp[name]) for name in sharp})
+    columns = chosen
     everything = charges.matrices[charges.hamiltonian].shape[0]
     return None if len(columns) == everything else Sector(symmetries, sharp, columns)
+
+
+def _columns(
+    charges: Charges, start: Start, symmetries: dict[str, int], lines: dict[str, np.ndarray], sharp: dict[str, float]
+) -> np.ndarray:
+    """States of the basis with these values."""
+    if charges.basis is None:
+        return np.flatnonzero(_kept(lines, sharp, len(start.vectors)))
+    return charges.basis.columns(symmetries, {name: (lines[name], sharp[name]) for name in sharp})
+
+
+def _kept(lines: dict[str, np.ndarray], sharp: dict[str, float], states: int) -> np.ndarray:
+    """Which product states have these values of diagonal charges."""
+    keep = np.ones(states, bool)
+    for name, line in lines.items():
+        keep &= np.abs(line - sharp[name]) <= 1e-9 * max(1.0, float(np.abs(line).max()))
+    return keep
+
+
+def _parity(charges: Charges) -> np.ndarray | None:
+    """``(-1)^n`` of the product states, n the sum of the levels of all sites and species, where every charge keeps it.
+
+    For spins 1/2 that is the product of all Pauli Z, for fermions and bosons the parity of their number.
+    """
+    line = np.ones(1)
+    for slot in charges.sites.slots:  # one for every site and species
+        line = np.multiply.outer(line, (-1.0) ** np.arange(slot.dimension)).ravel()
+    for op in charges.operators.values():
+        q = sp.coo_array(op.matrix())
+        if np.any((line[q.coords[0]] != line[q.coords[1]]) & (q.data != 0)):
+            return None
+    return line
+

@@ -22,6 +22,8 @@ __all__ = ["SizeSeries", "size_series"]
 FEWEST = 3
 #: Deviations may grow by this factor from one size to the next and still count as not growing.
 NOISE = 1.05
+#: A trace distance up to here is called a description, with its size beside it.
+SMALL = 0.1
 
 
 @dataclass(frozen=True)
@@ -71,55 +73,66 @@ class SizeSeries:
 
     @property
     def statements(self) -> tuple[str, ...]:
-        """What the series supports, in sentences; empty for fewer than three sizes.
+        """What the series supports, in sentences; empty for fewer than three sizes or none that can be compared.
 
-        For each ensemble and column: the largest block on which the distance at the largest sizes of every sequence
-        is not growing, and the accuracy there, the largest of those distances.
+        Sizes can be compared inside one sequence.  An ensemble describes a block where its distance is small (at most
+        0.1) at the end of every sequence and does not grow there; the accuracy is the largest of those distances.
+        Single eigenstates get no sentence: they are one choice among many.
         """
-        if len(self.comparisons) < FEWEST:
+        if len(self.comparisons) < FEWEST or all(len(which) < 2 for which in self.sequences().values()):
             return ()
-        said = []
+        kinds = {e.label: e.kind for c in self.comparisons for e in c.ensembles}
+        said = [
+            self._statement(label, sector)
+            for label in self.labels
+            for sector in (False, True)
+            if kinds[label] != "eigenstate"
+        ]
+        return tuple(s for s in said if s)
+
+    def _statement(self, label: str, sector: bool) -> str:
         blocks = sorted(set.intersection(*(set(c.block_bounds) for c in self.comparisons)))
-        for label in self.labels:
-            for sector in (False, True):
-                accuracy: dict[int, float] = {}
-                grows: list[int] = []
-                for block in blocks:
-                    sizes, values = self.distances(label, block, sector=sector)
-                    if len(sizes) < FEWEST:
-                        continue
-                    steady, worst = self._steady(sizes, values)
-                    if steady and len(accuracy) == block - blocks[0]:
-                        accuracy[block] = worst
-                    elif not steady:
-                        grows.append(block)
-                if not accuracy and not grows:
-                    continue
-                where = f"{label}{' in the sector of the start' if sector else ''}"
-                if accuracy:
-                    each = ", ".join(f"{x:.2g}" for x in accuracy.values())
-                    text = (
-                        f"{where}: describes the long-time state of {listing([str(b) for b in accuracy], 'and')} "
-                        f"neighbouring sites to {each} (largest trace distance at the ends of the sequences of "
-                        f"{len(self.comparisons)} sizes, none of which grows)"
-                    )
-                    text += f"; on {listing([str(b) for b in grows], 'and')} it grows." if grows else "."
-                else:
-                    text = f"{where}: the distance grows with size; nothing can be said about the long-time state."
-                said.append(text)
-        return tuple(said)
+        close: dict[int, float] = {}
+        far: dict[int, float] = {}
+        grows: list[int] = []
+        for block in blocks:
+            sizes, values = self.distances(label, block, sector=sector)
+            if len(sizes) < FEWEST:
+                continue
+            steady, worst = self._steady(sizes, values)
+            if not steady:
+                grows.append(block)
+            elif worst <= SMALL:
+                close[block] = worst
+            else:
+                far[block] = worst
+        parts = []
+        if close:
+            parts.append(f"describes the long-time state of {_sites(close)} to {_sizes(close)}")
+        if far:
+            parts.append(f"misses that of {_sites(far)} by {_sizes(far)}")
+        if grows:
+            parts.append(f"moves away from that of {_sites(grows)} as the size grows")
+        if not parts:
+            return ""
+        where = f"{label}{' in the sector of the start' if sector else ''}"
+        return f"{where}: {listing(parts, 'and')} (trace distance at the ends of {self._compared()})."
+
+    def _compared(self) -> str:
+        """The sequences, with their sizes."""
+        several = [which for which in self.sequences().values() if len(which) > 1]
+        return listing([f"L = {', '.join(str(self.sizes[i]) for i in which)}" for which in several], "and")
 
     def _steady(self, sizes: np.ndarray, values: np.ndarray) -> tuple[bool, float]:
-        """Whether no sequence grows at its end, and the largest value there."""
+        """Whether no sequence grows at its end, and the largest value there; lone sizes do not count."""
         steady, worst = True, 0.0
-        for _, which in self.sequences().items():
+        for which in self.sequences().values():
             here = np.flatnonzero(np.isin(sizes, self.sizes[which]))
-            if not len(here):
+            if len(here) < 2:
                 continue
             tail = values[here]
             worst = max(worst, float(tail[-1]))
-            if len(tail) > 1 and tail[-1] > NOISE * tail[-2] + 1e-9:
-                steady = False
+            steady = steady and bool(tail[-1] <= NOISE * tail[-2] + 1e-9)
         return steady, worst
 
     def _one(self, c: Comparison, label: str, sector: bool) -> Any:
@@ -160,3 +173,11 @@ def size_series(
 
 def _columns(rows: list[tuple[int, float]]) -> tuple[np.ndarray, np.ndarray]:
     return np.array([n for n, _ in rows]), np.array([x for _, x in rows])
+
+
+def _sites(blocks: Iterable[int]) -> str:
+    return f"{listing([str(b) for b in blocks], 'and')} neighbouring sites"
+
+
+def _sizes(found: Mapping[int, float]) -> str:
+    return listing([f"{x:.2g}" if x > 1e-9 else "0" for x in found.values()], "and")

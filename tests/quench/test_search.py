@@ -502,7 +502,8 @@ def test_a_pattern_over_named_cells():
 
 
 @pytest.mark.parametrize(
-    ("text", "kind"), [("Sz[i]*Sz[i+1]", Spin(1)), ("dagger(c[i])*c[i+1] + h.c.", Fermions()), ("n[i]", Bosons(cutoff=1))]
+    ("text", "kind"),
+    [("Sz[i]*Sz[i+1]", Spin(1)), ("dagger(c[i])*c[i+1] + h.c.", Fermions()), ("n[i]", Bosons(cutoff=1))],
 )
 def test_other_kinds_of_sites_are_refused(text, kind):
     with pytest.raises(TypeError, match="the search is for spin-1/2 sites so far"):
