@@ -68,7 +68,7 @@ def notes(found: Mapping[str, Any]) -> list[str]:
             if note:
                 out.setdefault(note, []).append(c["size"])
     which = lambda sizes: "" if len(sizes) == len(every) else f"{listing(map(str, sizes), 'and')} sites: "
-    return [which(sizes) + note for note, sizes in out.items()]
+    return [(which(sizes) + note).replace("`", "") for note, sizes in out.items()]
 
 
 def tables(found: Mapping[str, Any]) -> list[Table]:
@@ -168,8 +168,8 @@ def _start(c: Mapping[str, Any]) -> Table:
         ("Hamiltonian", c["hamiltonian"]),
         ("sites, states", f"{c['size']}, {c['dimension']}"),
         ("without spread in the start", _pairs(c["sharp"]) or "nothing"),
-        ("effective dimension of the long-time state", _short(c["effective_dimension"], 5)),
-        ("entropy of the long-time state (not comparable with those of ensembles)", _short(c["dephased_entropy"], 6)),
+        ("effective dimension", _short(c["effective_dimension"], 5)),
+        ("entropy", f"{_short(c['dephased_entropy'], 6)} in the long run (not comparable with those of ensembles)"),
         ("largest group velocity, sites per time", _short(c["speed"], 4)),
         ("revival time L/(2 v)", _short(c["revival"], 4)),
         ("plateau in time", "–" if c["plateau"] is None else f"{c['plateau'][0]:.4g} to {c['plateau'][1]:.4g}"),
@@ -193,10 +193,10 @@ def _conservation(c: Mapping[str, Any]) -> Table:
     return Table(
         "Conservation",
         c["conservation"]["message"],
-        ("charge", "", "defect", "mean in the start", "drift"),
+        ("charge", "verdict", "defect", "mean in the start", "drift"),
         rows,
-        "Defect: size of the commutator with the Hamiltonian, from 0 to 1, the largest possible. Drift: mean in the "
-        "long-time state minus mean in the start.",
+        "Defect: size of the commutator with the Hamiltonian, from 0 to 1, the largest possible. Drift: how far "
+        "the mean in the long-time state is from that in the start.",
     )
 
 
@@ -289,8 +289,8 @@ def _distances(c: Mapping[str, Any]) -> Table:
         "Trace distance of the reduced state from that of the long-time state; 0: the same, 1: told apart by one look.",
         tuple(head),
         tuple(rows) if blocks else (),
-        "Bound: ½ √(d²/d_eff), d the dimension of the block and d_eff the effective dimension; at any time the block "
-        "is on average no farther from its long-time state. Written as 1 where it says nothing.",
+        "Bound: ½ √(d²/d_eff), d the dimension of the block and d_eff the effective dimension; averaged over all times "
+        "the block is no farther than this from its long-time state. Written as 1 where it says nothing.",
     )
 
 

@@ -77,11 +77,32 @@ def hostile(base):
     return base / "hostile"
 
 
+def study(base):
+    """A run with a comparison of ensembles over three sizes, in a sector, with a long name."""
+    config = base / "study.toml"
+    config.write_text(
+        """kind = "spins"
+sites = {geometry = "ring", sizes = [4, 5, 6]}
+start = {pattern = ["up"]}
+quench = {blocks = [1, 2], ranking = true}
+[charges]
+energy = "Sx[i]*Sx[i+1] + 0.7*Sz[i]*Sz[i+1] + 0.4*Sz[i] + 0.3*Sx[i]"
+[targets]
+energy = "from start"
+[predictions]
+"<b>$z_1$ & a correlator with a long_name" = "Sz[i]*Sz[i+1]/L"
+"""
+    )
+    assert main(["solve", str(config), "--out", str(base / "study"), "--quiet"]) == 0
+    return base / "study"
+
+
 @pytest.fixture(scope="module")
 def pages(runs, tmp_path_factory):
     """(name, width) -> what the browser measured."""
     base = tmp_path_factory.mktemp("browser")
-    folders = {name: run.folder for name, run in runs.items()} | {"hostile": hostile(base)}
+    folders = {name: run.folder for name, run in runs.items()} 
+    folders |= {"hostile": hostile(base), "study": study(base)}
     frames = [
         f'<iframe name="{name} {width}" style="border:0;width:{width}px;height:3000px" '
         f'srcdoc="{html.escape((folder / "report.html").read_text())}"></iframe>'
