@@ -101,7 +101,7 @@ energy = "from start"
 def pages(runs, tmp_path_factory):
     """(name, width) -> what the browser measured."""
     base = tmp_path_factory.mktemp("browser")
-    folders = {name: run.folder for name, run in runs.items()} 
+    folders = {name: run.folder for name, run in runs.items()}
     folders |= {"hostile": hostile(base), "study": study(base)}
     frames = [
         f'<iframe name="{name} {width}" style="border:0;width:{width}px;height:3000px" '
