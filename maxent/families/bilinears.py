@@ -228,8 +228,14 @@ class Bilinears(Family):
         return self.particles.reference()
 
     def traced(self) -> Family:
-        """The blocks alone."""
-        return self.particles
+        """The blocks alone.
+
+        Raises
+        ------
+        TypeError
+            With a fixed number, which only the host knows.
+        """
+        return self.particles.traced()
 
     def start(self) -> np.ndarray:
         """Infinite temperature; for bosons a point where every level is confined."""

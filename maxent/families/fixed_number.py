@@ -232,6 +232,15 @@ class Canonical(Family):
         """The same particles with the charges ``matrix @ Q - offset``."""
         return Canonical(self.free.combine(matrix, offset), self.number)
 
+    def traced(self) -> Family:
+        """Not there: the sum over phases is made on the host.
+
+        Raises
+        ------
+        TypeError
+        """
+        raise TypeError("a fixed number runs on the host driver: solve with driver='host'")
+
     def reach(self) -> np.ndarray:
         """Upper bounds (m,) of the spread of each charge."""
         return 2 * self.scale

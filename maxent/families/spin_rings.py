@@ -343,6 +343,15 @@ class SpinRing(Family):
         assert ev.factor is not None
         return ev.values, ev.factor()
 
+    def traced(self) -> Family:
+        """Not there: decompositions of real antisymmetric matrices are LAPACK's.
+
+        Raises
+        ------
+        TypeError
+        """
+        raise TypeError("spin rings run on the host driver: solve with driver='host'")
+
     def reach(self) -> np.ndarray:
         """Upper bounds (m,) of the spread of each charge."""
         return 2 * self.scale

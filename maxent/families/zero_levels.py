@@ -27,6 +27,9 @@ if TYPE_CHECKING:
 
 __all__ = ["barrier", "polished_directions"]
 
+#: Directions closer than this lead to the same polished one.
+SAME = 1e-9
+
 #: Blocks that may hold levels at zero in one candidate; more would be polished one Python step at a time.
 MOST_BLOCKS = 512
 
@@ -36,19 +39,22 @@ def polished_directions(stacks: Stacks, v: np.ndarray, *, most: int = 8) -> Iter
     if len(v) < 2:
         return
     queue = [(v, k, 0) for k in _counts(stacks, v)]
-    tried: set[tuple[int, int]] = set()
-    while queue and len(tried) < most:
+    known: list[tuple[int, np.ndarray]] = []
+    while queue and most > 0:
         at, k, generation = queue.pop(0)
-        if (k, generation) in tried:
+        if any(k == j and np.abs(at - x).max() < SAME for j, x in known):
             continue
-        tried.add((k, generation))
+        most -= 1
+        known.append((k, at))
         try:
             better = polish(stacks, at, k)
         except np.linalg.LinAlgError:  # a candidate that cannot be refined is no candidate
             continue
         if better is None:
             continue
-        yield better
+        if all(np.abs(better - x).max() > 0 for _, x in known):
+            yield better
+        known.append((k, better))
         if generation < 2:
             queue += [(better, j, generation + 1) for j in _counts(stacks, better) if j != k]
 

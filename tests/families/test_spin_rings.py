@@ -177,6 +177,15 @@ def test_the_ground_state_of_an_open_chain():
         assert -p @ np.log(p) == pytest.approx(entropy, abs=1e-10)
 
 
+def test_rings_and_fixed_numbers_run_on_the_host():
+    ring = SpinRing(4, {"field": [(1.0, {j: "Z"}) for j in range(4)]})
+    fixed = Bilinears({"h": np.diag([0, 1.0, 2.0])}, number=1)
+    for family, targets in ((ring, {"field": 1.0}), (fixed, {"h": 0.7})):
+        assert maxent.solve(family, targets).success
+        with pytest.raises(TypeError, match="host driver"):
+            maxent.solve(family, targets, driver="jax")
+
+
 def test_faces_keep_the_parity():
     """Two spins pinned, three free: half of their states in each sector."""
     n = 5
