@@ -113,12 +113,14 @@ def best_multiple(x: np.ndarray, weights: np.ndarray, low: float) -> float:
     """The t > 0 that minimises ``sum w f(t x) - t low`` of bosons; 1/x of the lowest level where there is none."""
     if low >= 0:
         return 1.0 / float(x.min())
-    t = float(weights.sum()) / -low
-    for _ in range(60):
+    total, mean = float(weights @ x), float(weights @ x) / float(weights.sum())
+    # right for equal levels; where next to nothing is asked for, the first guess will do
+    t = min(float(np.log1p(total / -low)) / mean, 30.0 / float(x.min()))
+    for _ in range(20):
         n, v = occupations(t * x, -1), vacancies(t * x, -1)
         slope, bend = -(weights * x) @ n - low, (weights * x * x) @ (n * v)
         # in 1/t the slope is nearly linear: Newton's step there stays positive
-        new = t / min(max(1.0 + slope / (bend * t), 0.2), 5.0)
+        new = t / min(max(1.0 + slope / max(bend * t, 1e-300), 0.5), 2.0)
         if abs(new - t) <= 1e-3 * t:
             break
         t = new
