@@ -120,9 +120,11 @@ def summary(found: Mapping[str, Any]) -> str:
 
 def _closest(c: Mapping[str, Any]) -> str:
     best, largest = c["best"], max(c["block_bounds"], key=int, default=None)
-    if not best or largest is None:
+    if not best:
         return "No ensemble could be fitted and compared."
-    distances = {e["label"]: e["distances"].get(largest) for e in c["ensembles"] if not e["sector"] and e["means"]}
+    if largest is None:
+        return ""  # no blocks: ensembles are compared in the means alone
+    distances = {e["label"]: e["distances"].get(largest) for e in c["ensembles"] if not e["sector"] and e["distances"]}
     where = "one site" if largest == "1" else f"{largest} neighbouring sites"
     text = (
         f"At {plural(c['size'], 'site')} the ensemble closest to the long-time state is: {best}. Its trace distance on "

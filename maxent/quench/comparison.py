@@ -34,6 +34,8 @@ from maxent.text import plural
 
 __all__ = ["Comparison", "Ensemble", "compare"]
 
+#: A spread in energy up to here, as a share of the spectrum, is rounding: the start is an eigenstate.
+SHARP = 1e-10
 #: Columns of `Comparison.levels` that are no observables.
 TAKEN = ("energy", "level", "weight")
 
@@ -184,7 +186,7 @@ class Comparison:
 
         Of ensembles that lie equally close (within 1e-9) the one with fewest charges is taken.
         """
-        usable = [e for e in self.ensembles if e.means and not e.sector and e.kind != "eigenstate"]
+        usable = [e for e in self.ensembles if (e.means or e.distances) and not e.sector and e.kind != "eigenstate"]
         if not usable:
             return ""
         if observable is not None:
@@ -439,7 +441,10 @@ class _Study:
         s = width if width is not None else self.start.spread(self.charges.operators[h].matrix())
         out: list[Ensemble] = []
         inner: GaussianWindow | None = None
-        for inside in (False, True) if sector is not None else (False,):
+        sharp = s <= SHARP * spectrum.width
+        if sharp:
+            self.notes.append("No Gaussian window: the start has no spread in energy that could be its width.")
+        for inside in () if sharp else (False, True) if sector is not None else (False,):
             within = {"matching sector": 1.0} if inside else None
             try:
                 window = gaussian_window(found, s, mean=energy, within=within)

@@ -217,6 +217,23 @@ def test_open_chain_without_symmetry_and_small_blocks():
     assert found.sharp == {"magnetisation": 0.0}
 
 
+def test_without_observables_ensembles_are_still_compared_on_blocks():
+    given = study(6, ranking=False) | {"observables": {}}
+    found = compare(**given)
+    assert found.best() == "generalised: energy, magnetisation, current"
+    assert found.ensemble(found.best()).distances[3] < found.ensemble("canonical").distances[3]
+
+
+def test_an_eigenstate_gets_no_window():
+    ring = Ring(4)
+    h = formula(DENSITY["h"], ring)
+    for start in (ProductState(ring, ["0"], 0.0).vector(), ground_start(h)):  # spread zero, and zero up to rounding
+        found = compare({"energy": h}, start, observables={"zz": formula("Sz[i]*Sz[i+1]", ring)})
+        windows = [note for note in found.notes if "window" in note]
+        assert windows == ["No Gaussian window: the start has no spread in energy that could be its width."]
+        assert found.effective_dimension == pytest.approx(1.0) and found.window == {}
+
+
 def test_bad_input():
     given = study(4)
     with pytest.raises(ValueError, match="'energy': this name is taken"):
