@@ -296,6 +296,10 @@ BAD_STARTS = [
         '[[start.mixture]]\nweight = 0.5\npattern = ["up"]\n',
         "11: start.mixture: weights must be probabilities that add up to 1, got 0.5",
     ),
+    (
+        '[[start.mixture]]\nweight = 0.5\npattern = ["up"]\n[[start.mixture]]\nweight = 0.75\npattern = ["down"]\n',
+        "11: start.mixture: weights must be probabilities that add up to 1, got 0.5 and 0.75",
+    ),
 ]
 
 

@@ -281,7 +281,8 @@ class StartMaker:
         weights = [part.weight for part in table.mixture]
         if not weights or min(weights) < 0 or abs(math.fsum(weights) - 1) > 1e-8:
             self.problems.add(
-                (*path, "mixture"), f"weights must be probabilities that add up to 1, got {listing(weights, 'and')}"
+                (*path, "mixture"),
+                f"weights must be probabilities that add up to 1, got {listing(map(str, weights), 'and')}",
             )
             return None
         if any(part is None for part in parts):
