@@ -154,6 +154,10 @@ class Job:
         Result -> what its reader must know beyond it, one sentence each.
     study : Study or None
         What is done besides the fit.
+    mean : callable
+        State and operator -> mean of a prediction.
+    unit : str
+        What `family.size` counts.
     """
 
     family: Any
@@ -165,6 +169,8 @@ class Job:
     errors: Any = None
     remarks: Callable[[Any], list[str]] = lambda result: []
     study: Study | None = None
+    mean: Callable[[Any, Any], float] = lambda state, operator: state.mean(operator)
+    unit: str = "state"
 
     def target_errors(self) -> Any:
         """Give a factor (m, p) of the covariance of the targets; None when no target has a standard error."""

@@ -181,7 +181,7 @@ def _conditioning(found: Any) -> dict[str, Any] | None:
 def _predictions(job: Job, result: Any) -> list[dict[str, Any]]:
     reached = result.state is not None
     return [
-        {"name": name, "value": _finite(result.state.mean(operator)) if reached else None}
+        {"name": name, "value": _finite(job.mean(result.state, operator)) if reached else None}
         for name, operator in job.predictions.items()
     ]
 

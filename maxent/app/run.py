@@ -81,7 +81,7 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
         _refuse_existing(out, force)
     job = build(config)
     seconds = {"build": time.perf_counter() - begun}
-    say(f"{file}: {plural(len(job.targets), 'charge')}, {plural(job.family.size, 'state')}")
+    say(f"{file}: {plural(len(job.targets), 'charge')}, {plural(job.family.size, job.unit)}")
     target = out if out is not None else File("runs") / name(config, job, asked)
     with folder(target, force=force) as part:
         result, spent = _timed_fit(config, job, asked)
@@ -337,6 +337,8 @@ def sizes(job: Job) -> dict[str, str]:
     -------
     dict of str to str
     """
+    if job.unit != "state":
+        return dict(job.facts)
     blocks = job.family.blocks
     n_alone, dense = blocks.diagonal.shape[1], [a.shape[-1] for a in blocks.dense]
     if dense:

@@ -18,7 +18,8 @@ import numpy as np
 
 from maxent.families.antisymmetric import canonical_form
 from maxent.families.gaussian_states import BosonState, FermionState, symplectic_form
-from maxent.families.majoranas import to_majoranas
+from maxent.families.majoranas import covariance, to_majoranas
+from maxent.families.pfaffians import log_pfaffian
 from maxent.families.quadratic import Quadratic
 from maxent.families.spin_rings import SpinRing
 from maxent.lattice import OneBody, OperatorSum
@@ -229,7 +230,19 @@ def gaussian_ground(
 
 def _ground_sector(form: Quadratic, eta: int, rtol: float) -> tuple[float, int, float, np.ndarray, float]:
     """Lowest energy at the parity eta, eta, logarithm of the degeneracy, covariance, and the largest level."""
+    if not eta and form.conserves_number:
+        h, _ = form.matrices()
+        levels, vectors = np.linalg.eigh(h)
+        largest = float(np.abs(levels).max(initial=0.0))
+        full = np.where(np.abs(levels) <= rtol * largest, 0.5, np.where(levels < 0, 1.0, 0.0))
+        count = float(np.sum(full == 0.5)) * math.log(2.0)
+        g = covariance((vectors.conj() * full) @ vectors.T)
+        return form.constant + float(levels[full == 1.0].sum()), 0, count, g, largest
     a, half = to_majoranas(*form.matrices())
+    x, u = np.linalg.eigh(1j * a)
+    n = len(a) // 2
+    if n and x[n] > 10 * rtol * x[-1]:
+        return _gapped_sector(form.constant + half, eta, x, u, rtol)
     shape = canonical_form(a)
     e = shape.levels
     width = float(e.max(initial=0.0))
@@ -247,8 +260,26 @@ def _ground_sector(form: Quadratic, eta: int, rtol: float) -> tuple[float, int, 
         lowest = e - first <= rtol * width
         filling[lowest] += 2.0 / lowest.sum()
         energy, log_count = energy + first, math.log(lowest.sum())
-    covariance = shape.frame[:, 0::2] * filling @ shape.frame[:, 1::2].T
-    return energy, eta, log_count, covariance - covariance.T, width
+    g = shape.frame[:, 0::2] * filling @ shape.frame[:, 1::2].T
+    return energy, eta, log_count, g - g.T, width
+
+
+def _gapped_sector(
+    constant: float, eta: int, x: np.ndarray, u: np.ndarray, rtol: float
+) -> tuple[float, int, float, np.ndarray, float]:
+    """`_ground_sector` of levels x = -e, .., -e, e, .., e that all differ from zero."""
+    n = len(x) // 2
+    filling = -np.sign(x)
+    moments = lambda f: np.real((u * f) @ u.conj().T / 1j)
+    g, e = moments(filling), x[n:]
+    energy, log_count = constant - 0.5 * float(e.sum()), 0.0
+    # prod Z = (-1)^n Pf G
+    if eta and np.sign(log_pfaffian(g)[0]) * (-1) ** n != eta:
+        lowest = np.abs(x) - e[0] <= rtol * e[-1]
+        d = int(lowest.sum()) // 2
+        filling[lowest] *= 1 - 2.0 / d
+        g, energy, log_count = moments(filling), energy + float(e[0]), math.log(d)
+    return energy, eta, log_count, 0.5 * (g - g.T), float(e[-1])
 
 
 def vacuum_parity(covariance: np.ndarray) -> int:

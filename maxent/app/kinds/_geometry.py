@@ -69,8 +69,8 @@ class Geometry:
         """What lives on a site, or a mapping from the sites of a cell to that."""
         raise NotImplementedError
 
-    def arrange(self, problems: Problems) -> dict[int, Any]:
-        """Make the sites of every size; empty after a problem."""
+    def arrange(self, problems: Problems, *, listed: bool = True) -> dict[int, Any]:
+        """Make the sites of every size; empty after a problem. `listed`: the states will be listed one by one."""
         from maxent import lattice
 
         found = len(problems.found)
@@ -81,7 +81,8 @@ class Geometry:
             problems.add(("sites", self._kind_key), str(bad))
         if len(problems.found) > found:
             return {}
-        self._refuse_endless(kind, problems)
+        if listed:
+            self._refuse_endless(kind, problems)
         if len(problems.found) > found:
             return {}
         bonds = None if self.bonds is None else {name: list(map(_step, steps)) for name, steps in self.bonds.items()}
@@ -139,6 +140,9 @@ class Geometry:
     def _refuse_endless(self, kind: Any, problems: Problems) -> None:
         """Refuse sizes whose number of states is beyond any machine, before anybody lists the sites."""
         kinds = list(kind.values()) if isinstance(kind, dict) else [kind] * max(1, len(self.cell))
+        if any(k.dimension == 0 for k in kinds):
+            problems.add(("sites",), "bosons need a `cutoff`, the largest occupation of a mode that is kept")
+            return
         if self.geometry == "ladder" and not isinstance(kind, dict):
             kinds = [kind] * len(_LADDER)
         states = prod(k.dimension for k in kinds)
@@ -200,9 +204,12 @@ class BosonSites(Geometry):
 
     __pydantic_config__ = STRICT
 
-    cutoff: int = field(
-        kw_only=True,
-        metadata=says("Largest occupation of a mode that is kept; the report says how much it is felt."),
+    cutoff: int | None = field(
+        default=None,
+        metadata=says(
+            "Largest occupation of a mode that is kept; the report says how much it is felt. "
+            'Not for `method = "gaussian"`, which keeps all.'
+        ),
     )
     species: list[str] = field(
         default_factory=list,

@@ -25,6 +25,7 @@ from maxent.app.job import (
     given_target,
     says,
 )  # fmt: skip
+from maxent.app.kinds._gaussian import METHOD, SECTORS, check_gaussian, gaussian_job
 from maxent.app.kinds._geometry import STRICT, Geometry
 from maxent.app.kinds._starts import StartMaker, StartTable, as_start
 from maxent.app.locate import Path
@@ -106,6 +107,8 @@ class LatticeOptions:
         default="energy",
         metadata=says("Name of the charge that is the Hamiltonian, for `[quench]` and `multipliers charges`."),
     )
+    method: Literal["matrices", "gaussian"] = field(default="matrices", metadata=says(METHOD))
+    sectors: Literal["both", "even", "odd", "unprojected"] = field(default="both", metadata=says(SECTORS))
     quench: Quench | None = field(
         default=None,
         metadata=says("With this table, even empty, ensembles are compared with the long-time state: docs/quench.md."),
@@ -131,11 +134,14 @@ def build(options: LatticeOptions, folder: File) -> Job:
         With all problems at once.
     """
     problems = Problems()
-    every = options.sites.arrange(problems)
+    gaussian = options.method == "gaussian"
+    every = options.sites.arrange(problems, listed=not gaussian)
+    check_gaussian(options, problems)
     _check_quench(options, problems)
     problems.raise_any()
     sites = every[options.sites.largest]
-    _refuse_too_large(options, sites, problems)
+    if not gaussian:
+        _refuse_too_large(options, sites, problems)
     from maxent.app.data import Files
 
     files = Files(folder)
@@ -153,6 +159,8 @@ def build(options: LatticeOptions, folder: File) -> Job:
             part.refuse_not_conserved(problems)
         problems.raise_any()
     part = parts[options.sites.largest]
+    if gaussian:
+        return gaussian_job(options, sites, part, _facts(options, sites, ""), files.digests)
     matrices = {name: _matrix(("charges", name), op) for name, op in part.charges.items()}
     targets = part.targets(matrices)
     observed = {name: _matrix(("predictions", name), op) for name, op in part.predictions.items()}
@@ -182,7 +190,7 @@ def hamiltonian(options: LatticeOptions) -> Any:
         With all problems of this formula and of the densities.
     """
     problems = Problems()
-    every = options.sites.arrange(problems)
+    every = options.sites.arrange(problems, listed=options.method != "gaussian")
     problems.raise_any()
     name = options.hamiltonian
     if name not in options.charges:
@@ -242,7 +250,8 @@ class _Part:
             self.observables = {n: formulas.read(("quench", "observables", n), text) for n, text in given.items()}
         self._make: Callable[[], Any] | None = None
         if options.start is not None:
-            maker = StartMaker(sites, options.parameters, formulas.read, files, problems)
+            gaussian = options.method == "gaussian"
+            maker = StartMaker(sites, options.parameters, formulas.read, files, problems, gaussian=gaussian)
             self._make = maker.prepare(options.start)
         self._made: Any = None
 
@@ -344,12 +353,14 @@ class _Part:
                 except ValueError as bad:
                     problems.add(("charges", name), f"{bad}: insist = [{name!r}] in [quench]")
 
+    def notes(self, result: Any) -> list[str]:
+        """What the start has to say."""
+        note = getattr(self._made, "note", "")
+        return [f"Start: {note}"] if note else []
+
     def remarks(self, result: Any) -> list[str]:
         """What a reader of the result must know: no stationary state, a cut-off that is felt."""
-        said = []
-        note = getattr(self._made, "note", "")
-        if note:
-            said.append(f"Start: {note}")
+        said = self.notes(result)
         broken = None if result.state is None else self.not_conserved()
         if broken is not None:
             from maxent.quench.conservation import require_conserved, state_defect
@@ -437,7 +448,7 @@ def _facts(options: LatticeOptions, sites: Any, symmetries: str) -> dict[str, st
         what = f"{options.sites.geometry} of {plural(size, 'site')}: {listing(names, 'and')}"
     if len(sites.cell) > 1:
         what += f", {plural(sites.length, 'cell')} of {listing(sites.cell, 'and')}"
-    facts = {"sites": what, "states": str(sites.states)}
+    facts = {"sites": what} | ({} if options.method == "gaussian" else {"states": str(sites.states)})
     if options.sites.sizes is not None:
         facts["sizes"] = ", ".join(map(str, options.sites.all_sizes))
     if symmetries:

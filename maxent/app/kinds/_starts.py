@@ -168,10 +168,22 @@ class StartMaker:
         Path and formula -> Hermitian operator, or None after a problem.
     files : Files
     problems : Problems
+    gaussian : bool
+        Whether ground states, thermal states and files become covariance matrices instead of vectors.
     """
 
-    def __init__(self, sites: Any, parameters: Any, read: Callable[[Path, str], Any], files: Files, problems: Problems):
+    def __init__(
+        self,
+        sites: Any,
+        parameters: Any,
+        read: Callable[[Path, str], Any],
+        files: Files,
+        problems: Problems,
+        *,
+        gaussian: bool = False,
+    ):
         self.sites, self.parameters, self.read, self.files, self.problems = sites, parameters, read, files, problems
+        self.gaussian = gaussian
 
     def prepare(self, table: StartTable, path: Path = ("start",)) -> Callable[[], Any] | None:
         """Check everything that is quick; what is left to do makes a `LocalProduct` or a `Start`.
@@ -226,6 +238,10 @@ class StartMaker:
             return None
 
         def make() -> Any:
+            if self.gaussian:
+                from maxent.quench.gaussian_starts import gaussian_ground
+
+                return gaussian_ground(operator)
             from maxent.quench.starts import ground_start
 
             return ground_start(operator)
@@ -238,6 +254,10 @@ class StartMaker:
             return None
 
         def make() -> Any:
+            if self.gaussian:
+                from maxent.quench.gaussian_starts import gaussian_thermal
+
+                return gaussian_thermal(operator, table.beta)
             from maxent.lattice.symmetries import adapted_basis
             from maxent.quench.starts import thermal_start
 
@@ -256,6 +276,8 @@ class StartMaker:
         except ValueError as bad:
             self.problems.add(where, str(bad))
             return None
+        if self.gaussian:
+            return self._covariance(where, table.file, value)
         states = self.sites.states
         if value.ndim not in (1, 2) or set(value.shape) != {states}:
             shape = " x ".join(map(str, value.shape))
@@ -273,6 +295,24 @@ class StartMaker:
             made = make()
         except BadInput as bad:
             self.problems.found += bad.problems
+            return None
+        return lambda: made
+
+    def _covariance(self, where: Path, name: str, value: Any) -> Callable[[], Any] | None:
+        from maxent.lattice import Bosons
+        from maxent.quench.gaussian_starts import gaussian_state
+
+        modes = len(self.sites.slots)
+        if value.shape != (2 * modes, 2 * modes):
+            shape = " x ".join(map(str, value.shape))
+            text = f"{name!r} has shape {shape}; {plural(modes, 'mode')} need a covariance of {2 * modes} x {2 * modes}"
+            self.problems.add(where, text)
+            return None
+        statistics = "bosons" if isinstance(self.sites.kind(0), Bosons) else "fermions"
+        try:
+            made = gaussian_state(value, statistics=statistics, label=name)
+        except ValueError as bad:
+            self.problems.add(where, str(bad))
             return None
         return lambda: made
 
