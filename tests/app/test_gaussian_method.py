@@ -1,0 +1,128 @@
+"""Option `method`: one config run as many-body matrices and as free particles, and what free particles refuse."""
+
+import numpy as np
+import pytest
+
+import maxent
+from maxent.app.config import build, load
+from maxent.app.run import sizes
+from maxent.errors import ConfigError
+
+SPINS = """kind = "spins"
+sites = {geometry = "GEOMETRY", size = 6}
+[charges]
+energy = "-X[i]*X[i+1] - 0.5*Z[i]"
+second = "X[i]*Z[i+1]*X[i+2] + 0.1*Y[i]*Y[i+1]"
+[start]
+START
+[targets]
+energy = "from start"
+second = "from start"
+[predictions]
+z = "Z[2]"
+zz = "Z[i]*Z[i+1]/L"
+far = "X[0]*X[3]"
+"""
+FERMIONS = """kind = "fermions"
+sites = {geometry = "ring", size = 5}
+[charges]
+energy = "-(dagger(c[i])*c[i+1] + h.c.) + 0.3*(c[i]*c[i+1] + h.c.)"
+number = "n[i]"
+[start]
+START
+[targets]
+energy = "from start"
+number = 2.0
+[predictions]
+pair = "c[0]*c[1] + h.c."
+"""
+THERMAL = 'thermal_of = "-X[i]*X[i+1] - 1.5*Z[i]"\nbeta = 0.8'
+
+
+def built(tmp_path, text, head=""):
+    file = tmp_path / "c.toml"
+    file.write_text(head + text, encoding="utf-8")
+    return build(load(file))
+
+
+def solved(job):
+    result = maxent.solve(job.family, job.asked())
+    return result, {name: job.mean(result.state, q) for name, q in job.predictions.items()}
+
+
+@pytest.mark.parametrize("geometry", ["ring", "chain"])
+@pytest.mark.parametrize("start", [THERMAL, 'pattern = ["up", "up", "down"]', "theta = 0.7"])
+def test_one_config_both_ways(tmp_path, geometry, start):
+    text = SPINS.replace("GEOMETRY", geometry).replace("START", start)
+    many, free = built(tmp_path, text), built(tmp_path, text, 'method = "gaussian"\n')
+    for name, target in many.targets.items():
+        assert free.targets[name].value == pytest.approx(target.value, abs=1e-11)
+    (a, means), (b, others) = solved(many), solved(free)
+    assert str(a.verdict) == str(b.verdict) == "solved"
+    assert b.entropy == pytest.approx(a.entropy, abs=1e-11)
+    np.testing.assert_allclose(list(b.multipliers.values()), list(a.multipliers.values()), atol=1e-9)
+    np.testing.assert_allclose(list(others.values()), list(means.values()), atol=1e-10)
+    assert sizes(free)["method"].startswith("gaussian: free fermions")
+
+
+@pytest.mark.parametrize(
+    "start", ["pattern = [1, 0, 0, 1, 0]", 'thermal_of = "-(dagger(c[i])*c[i+1] + h.c.) - 0.4*n[i]"\nbeta = 0.6']
+)
+def test_fermions_both_ways(tmp_path, start):
+    text = FERMIONS.replace("START", start)
+    (a, means), (b, others) = solved(built(tmp_path, text)), solved(built(tmp_path, text, 'method = "gaussian"\n'))
+    assert str(a.verdict) == str(b.verdict) == "solved"
+    assert b.entropy == pytest.approx(a.entropy, abs=1e-11)
+    np.testing.assert_allclose(list(others.values()), list(means.values()), atol=1e-10)
+
+
+def test_one_gaussian_state_is_cheap_and_nearly_right(tmp_path):
+    text = SPINS.replace("GEOMETRY", "ring").replace("START", THERMAL).replace("size = 6", "size = 40")
+    text = text.replace('thermal_of = "-X[i]*X[i+1] - 1.5*Z[i]"\nbeta = 0.8', 'pattern = ["up", "up", "up", "down"]')
+    (a, means), (b, others) = (
+        solved(built(tmp_path, text, f'method = "gaussian"\nsectors = "{s}"\n')) for s in ("both", "unprojected")
+    )
+    assert b.entropy == pytest.approx(a.entropy, abs=1e-6)
+    np.testing.assert_allclose(list(others.values()), list(means.values()), atol=1e-6)
+
+
+def test_a_covariance_from_a_file(tmp_path):
+    g = np.zeros((12, 12))
+    g[0::2, 1::2], g[1::2, 0::2] = -0.3 * np.eye(6), 0.3 * np.eye(6)
+    np.save(tmp_path / "g.npy", g)
+    text = SPINS.replace("GEOMETRY", "chain").replace("START", 'file = "g.npy"')
+    job = built(tmp_path, text, 'method = "gaussian"\n')
+    assert job.targets["energy"].value == pytest.approx(-0.5 * 6 * 0.3)
+    assert list(job.digests) == ["g.npy"]
+    np.save(tmp_path / "g.npy", 4 * g)
+    with pytest.raises(ConfigError, match=r"c\.toml:8: .* no state has this covariance: \|iG\| reaches 1\.2"):
+        built(tmp_path, text, 'method = "gaussian"\n')
+    np.save(tmp_path / "g.npy", g[:4, :4])
+    with pytest.raises(ConfigError, match=r"4 x 4; 6 modes need a covariance of 12 x 12"):
+        built(tmp_path, text, 'method = "gaussian"\n')
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "said"),
+    [
+        ('second = "X[i]*Z[i+1]*X[i+2]', 'second = "X[i]*X[i+2]', r"c\.toml:6: .*needs quadratic charges.*Sx"),
+        ("[predictions]", "[quench]\n[predictions]", "needs method = .matrices."),
+        ("theta = 0.7", "[[start.mixture]]\nweight = 1.0\ntheta = 0.1", "no mixtures"),
+    ],
+)
+def test_what_free_particles_refuse(tmp_path, old, new, said):
+    text = SPINS.replace("GEOMETRY", "ring").replace("START", "theta = 0.7").replace(old, new)
+    with pytest.raises(ConfigError, match=said):
+        built(tmp_path, text, 'method = "gaussian"\n')
+
+
+def test_keys_of_the_other_method(tmp_path):
+    text = SPINS.replace("GEOMETRY", "ring").replace("START", "theta = 0.7")
+    with pytest.raises(ConfigError, match=r"c\.toml:1: sectors: goes with method"):
+        built(tmp_path, text, 'sectors = "even"\n')
+    bosons = 'kind = "bosons"\nsites = {geometry = "chain", size = 2}\ncharges = {n = "n[i]"}\ntargets = {n = 1.0}\n'
+    with pytest.raises(ConfigError, match="bosons need a `cutoff`"):
+        built(tmp_path, bosons)
+    job = built(tmp_path, bosons, 'method = "gaussian"\n')
+    result, _ = solved(job)
+    assert result.multipliers["n"] == pytest.approx(np.log(3.0))  # 1/2 per mode
