@@ -219,8 +219,8 @@ def _ensembles(c: Mapping[str, Any]) -> Table:
         "Each fitted to the means of the start, over all sectors and inside the sector that the start lives in.",
         ("ensemble", "verdict", "entropy", "multipliers, or what defines it"),
         rows,
-        "State = exp(−Σ multiplier · charge) / Z. A window has no multipliers; beta is the slope of its entropy at its "
-        "mean energy.",
+        "State = exp(−Σ multiplier · charge) / Z. A window has no multipliers; its beta is the slope of the log of the "
+        "density of states near its mean energy.",
     )
 
 
@@ -336,7 +336,8 @@ def _windows(c: Mapping[str, Any]) -> Table | None:
         "Gaussian windows of several widths around the energy of the start.",
         ("width", "centre", "mean energy", "beta", "entropy"),
         rows,
-        "beta = (mean − centre)/width² is the slope of the entropy at the mean energy, not at the centre.",
+        "beta = (mean − centre)/width² is the slope of the log of the density of states near the mean energy, not the "
+        "centre.",
     )
 
 

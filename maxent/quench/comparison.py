@@ -341,7 +341,7 @@ class _Study:
                 spectrum, dephased, targets[h][0], width, sector, reference
             )
         with self._clock("time averages"):
-            times_, traces, fluctuations, groups = self._dynamics(dephased, times, found_speed, resolution)
+            times_, traces, fluctuations, groups = self._dynamics(dephased, truth, times, found_speed, resolution)
         bounds = {
             len(s): block_bound(len(rho), dephased.effective_dimension, equal_gaps=groups)
             for s, rho in reference.items()
@@ -548,7 +548,12 @@ class _Study:
     # ------------------------------------------------------------------ dynamics
 
     def _dynamics(
-        self, dephased: Dephased, times: Any, speed: float | None, resolution: float | None
+        self,
+        dephased: Dephased,
+        truth: Mapping[str, float],
+        times: Any,
+        speed: float | None,
+        resolution: float | None,
     ) -> tuple[np.ndarray, dict[str, np.ndarray], dict[str, float], int]:
         if not self.charges.observables:
             return np.empty(0), {}, {}, 1
@@ -568,6 +573,11 @@ class _Study:
             f = evolution.fluctuation(name, resolution=resolution)
             fluctuations[name] = f.standard_deviation
             groups, closest = max(groups, f.largest_group), min(closest, f.closest)
+            if resolution is not None and abs(f.mean - truth[name]) > 1e-9 * max(1.0, abs(truth[name])):
+                self.notes.append(
+                    f"Over times up to the resolution {f.resolution:.3g} not all levels dephase: there {name} averages "
+                    f"{f.mean:.4g}, not {truth[name]:.4g}, and its temporal fluctuation is about that mean."
+                )
             if f.cut:
                 self.notes.append(
                     f"Temporal fluctuation of {name}: {plural(f.cut, 'chain')} of gaps closer than the resolution "

@@ -176,7 +176,8 @@ def _columns(rows: list[tuple[int, float]]) -> tuple[np.ndarray, np.ndarray]:
 
 
 def _sites(blocks: Iterable[int]) -> str:
-    return f"{listing([str(b) for b in blocks], 'and')} neighbouring sites"
+    each = listing([str(b) for b in blocks], "and")
+    return "1 site" if each == "1" else f"{each} neighbouring sites"
 
 
 def _sizes(found: Mapping[int, float]) -> str:

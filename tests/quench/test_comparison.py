@@ -224,6 +224,13 @@ def test_without_observables_ensembles_are_still_compared_on_blocks():
     assert found.ensemble(found.best()).distances[3] < found.ensemble("canonical").distances[3]
 
 
+def test_a_coarse_resolution_in_time_is_told():
+    given = study(6, ("pi/3", 1.0), 0.0, ranking=False)  # told apart up to 0.1: nothing dephases, the start remains
+    note = next(n for n in compare(**given, resolution=0.1).notes if "up to the resolution" in n)
+    assert f"there zz averages {given['start'].mean(given['observables']['zz'])[0]:.4g}, not" in note
+    assert not any("up to the resolution" in n for n in compare(**given).notes)
+
+
 def test_an_eigenstate_gets_no_window():
     ring = Ring(4)
     h = formula(DENSITY["h"], ring)
