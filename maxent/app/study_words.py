@@ -291,8 +291,9 @@ def _distances(c: Mapping[str, Any]) -> Table:
         "Trace distance of the reduced state from that of the long-time state; 0: the same, 1: told apart by one look.",
         tuple(head),
         tuple(rows) if blocks else (),
-        "Bound: ½ √(d²/d_eff), d the dimension of the block and d_eff the effective dimension; averaged over all times "
-        "the block is no farther than this from its long-time state. Written as 1 where it says nothing.",
+        "Bound: ½ √(g d²/d_eff), d the dimension of the block, d_eff the effective dimension and g the most pairs of "
+        "levels that share one gap; averaged over all times the block is no farther than this from its long-time "
+        "state. Written as 1 where it says nothing.",
     )
 
 

@@ -13,6 +13,7 @@ from dataclasses import asdict, dataclass, field, replace
 from typing import Any
 
 import numpy as np
+import scipy.sparse as sp
 
 from maxent.errors import ResourceError
 from maxent.families.density import MatricesState
@@ -555,18 +556,20 @@ class _Study:
         speed: float | None,
         resolution: float | None,
     ) -> tuple[np.ndarray, dict[str, np.ndarray], dict[str, float], int]:
-        if not self.charges.observables:
-            return np.empty(0), {}, {}, 1
+        observables = self.charges.observables or {"": sp.eye_array(self.dimension)}  # gaps are grouped in any case
         if times is None:
             scale = dephased.spectrum.width / self.sites.size
             last = 4 * revival_time(self._length, speed) if speed else 60.0 / scale if scale > 0 else 1.0
             times = np.linspace(0.0, last, 400)
         times = np.asarray(times, float)
         try:
-            evolution: Evolution = evolve(dephased, self.charges.observables, progress=self.progress)
+            evolution: Evolution = evolve(dephased, observables, progress=self.progress)
         except ResourceError as refused:
             self.notes.append(f"No traces in time and no temporal fluctuations: {refused}.")
-            return np.empty(0), {}, {}, 1
+            return np.empty(0), {}, {}, max(len(dephased.energies) - 1, 1)  # no gap is shared by more pairs
+        if not self.charges.observables:
+            groups = evolution.fluctuation("", resolution=resolution).largest_group
+            return np.empty(0), {}, {}, max(groups, 1)
         traces = {n: evolution.trace(n, times) for n in evolution.names}
         fluctuations, groups, closest = {}, 1, np.inf
         for name in evolution.names:

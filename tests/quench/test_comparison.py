@@ -231,6 +231,16 @@ def test_a_coarse_resolution_in_time_is_told():
     assert not any("up to the resolution" in n for n in compare(**given).notes)
 
 
+def test_bounds_count_equal_gaps_without_observables_too():
+    ring = Ring(6)  # free fermions: many pairs of levels share a gap
+    h, start = formula("-X[i]*X[i+1] - 0.5*Z[i]", ring), ProductState(ring, 0.3, 0.0).vector()
+    one = compare({"energy": h}, start, observables={"z": formula("Z[i]", ring)}).block_bounds
+    assert compare({"energy": h}, start).block_bounds == pytest.approx(one, rel=1e-12)
+    d_eff = compare({"energy": h}, start).effective_dimension
+    g = (2 * one[1] / 2) ** 2 * d_eff
+    assert g == pytest.approx(round(g), abs=1e-9) and g > 1.5
+
+
 def test_an_eigenstate_gets_no_window():
     ring = Ring(4)
     h = formula(DENSITY["h"], ring)
