@@ -18,6 +18,16 @@ if TYPE_CHECKING:
     from maxent.quench.dephasing import dephase as dephase
     from maxent.quench.evolution import Evolution as Evolution
     from maxent.quench.evolution import evolve as evolve
+    from maxent.quench.gaussian_evolution import gaussian_evolve as gaussian_evolve
+    from maxent.quench.gaussian_forms import gaussian_family as gaussian_family
+    from maxent.quench.gaussian_forms import gaussian_mean as gaussian_mean
+    from maxent.quench.gaussian_starts import gaussian_ground as gaussian_ground
+    from maxent.quench.gaussian_starts import gaussian_pattern as gaussian_pattern
+    from maxent.quench.gaussian_starts import gaussian_state as gaussian_state
+    from maxent.quench.gaussian_starts import gaussian_thermal as gaussian_thermal
+    from maxent.quench.gaussian_starts import read_covariance as read_covariance
+    from maxent.quench.infinite_chains import HardCoreChain as HardCoreChain
+    from maxent.quench.infinite_chains import TransverseFieldChain as TransverseFieldChain
     from maxent.quench.sizes import SizeSeries as SizeSeries
     from maxent.quench.sizes import size_series as size_series
     from maxent.quench.spectrum import Spectrum as Spectrum
@@ -25,6 +35,7 @@ if TYPE_CHECKING:
     from maxent.quench.starts import ground_start as ground_start
     from maxent.quench.starts import read_start as read_start
     from maxent.quench.starts import thermal_start as thermal_start
+    from maxent.quench.truncated import truncated_ensembles as truncated_ensembles
     from maxent.quench.windows import gaussian_window as gaussian_window
     from maxent.quench.windows import scan_widths as scan_widths
     from maxent.quench.windows import sharp_window as sharp_window
@@ -33,6 +44,17 @@ if TYPE_CHECKING:
     from maxent.quench.yardsticks import revival_time as revival_time
 
 _HOME = {
+    "gaussian_evolve": "gaussian_evolution",
+    "gaussian_family": "gaussian_forms",
+    "gaussian_mean": "gaussian_forms",
+    "gaussian_ground": "gaussian_starts",
+    "gaussian_pattern": "gaussian_starts",
+    "gaussian_state": "gaussian_starts",
+    "gaussian_thermal": "gaussian_starts",
+    "read_covariance": "gaussian_starts",
+    "HardCoreChain": "infinite_chains",
+    "TransverseFieldChain": "infinite_chains",
+    "truncated_ensembles": "truncated",
     "Comparison": "comparison",
     "Conservation": "conservation",
     "check_conservation": "conservation",
@@ -60,10 +82,12 @@ _HOME = {
 }
 
 __all__ = [
-    "Comparison", "Conservation", "Dephased", "Ensemble", "Evolution", "SizeSeries", "Spectrum", "Start", "block_bound",
-    "check_conservation", "compare", "dephase", "evolve", "gaussian_window", "ground_start", "plateau_window",
-    "read_start", "require_conserved", "revival_time", "scan_widths", "sharp_window", "size_series", "state_defect",
-    "thermal_start",
+    "Comparison", "Conservation", "Dephased", "Ensemble", "Evolution", "HardCoreChain", "SizeSeries", "Spectrum",
+    "Start", "TransverseFieldChain", "block_bound", "check_conservation", "compare", "dephase", "evolve",
+    "gaussian_evolve", "gaussian_family", "gaussian_ground", "gaussian_mean", "gaussian_pattern", "gaussian_state",
+    "gaussian_thermal", "gaussian_window", "ground_start", "plateau_window", "read_covariance", "read_start",
+    "require_conserved", "revival_time", "scan_widths", "sharp_window", "size_series", "state_defect",
+    "thermal_start", "truncated_ensembles",
 ]  # fmt: skip
 
 
