@@ -126,7 +126,7 @@ def _bent(levels: Levels, lam: np.ndarray, k: int, evaluation: Evaluation) -> np
     start, pull = w - float(q @ rest), g * float(q @ along)
     # new = start + pull n(new), and 1/w - 1/2 <= n(w) <= 1/w brackets the root
     low, high = _positive_root(start - 0.5 * pull, pull), _positive_root(start, pull)
-    filled = lambda x: float(mean_occupations(np.float64(x), "bosons"))
+    filled = lambda x: float(mean_occupations(np.asarray(x), "bosons"))
     excess = lambda x: x - start - pull * filled(x)
     inside = excess(low) < 0 < excess(high)
     new = brentq(excess, low, high, xtol=1e-300, rtol=1e-12) if inside else high

@@ -190,12 +190,7 @@ def find_sector(charges: Charges, start: Start) -> Sector | None:
     states.
     """
     basis = charges.basis
-    symmetries: dict[str, int] = {}
-    if basis is not None:
-        for m in basis.maps:
-            value = sharp_value(m, start.vectors)
-            if value is not None:
-                symmetries[m.name] = int(value)
+    symmetries, inside = ({}, None) if basis is None else sharp_labels(basis, start)
     sharp: dict[str, float] = {}
     lines: dict[str, np.ndarray] = {}
     for name, op in charges.operators.items():
@@ -209,13 +204,13 @@ def find_sector(charges: Charges, start: Start) -> Sector | None:
         if value is not None:
             small = abs(value) <= 1e-13 * float(np.abs(line).max(initial=0.0))
             sharp[name], lines[name] = 0.0 if small else float(value), line
-    chosen = _columns(charges, start, symmetries, lines, sharp)
+    chosen = _columns(charges, inside, lines, sharp)
     parity = _parity(charges)
     if parity is not None:
         value = sharp_value(parity, start.vectors)
         if value is not None and not np.isin(parity[_kept(lines, sharp, len(parity))], [value]).all():
             try:
-                chosen = _columns(charges, start, symmetries, {**lines, "parity": parity}, {**sharp, "parity": value})
+                chosen = _columns(charges, inside, {**lines, "parity": parity}, {**sharp, "parity": value})
                 sharp["parity"] = float(value)
             except ValueError:
                 pass  # a map of the basis exchanges the parities: its label stands for both
@@ -226,13 +221,62 @@ def find_sector(charges: Charges, start: Start) -> Sector | None:
     return None if len(columns) == everything else Sector(symmetries, sharp, columns)
 
 
+def sharp_labels(basis: SymmetryBasis, start: Start) -> tuple[dict[str, int], np.ndarray]:
+    """Which symmetries, powers and products of them a start has a sharp value of, and the states that share them.
+
+    A start that repeats after two sites has weight at momenta 0 and pi: the translation has spread there, its square
+    has none.  In general the labels k of all maps, as elements of Z_r1 x Z_r2 x ..., that share every sharp value with
+    the start are ``k_0`` plus the subgroup that the differences of the labels in the start generate.
+
+    Returns
+    -------
+    values : dict of str to int
+        Label by the name of a map, or `name^p` for its p-th power where that is the lowest sharp one; `joint sectors`
+        where products of maps restrict the labels further, with the number of joint labels that are left.
+    columns : (d,) bool ndarray
+    """
+    maps = basis.maps
+    orders = np.array([m.order for m in maps])
+    labels = np.array([basis.labels[m.name] for m in maps])
+    raw = np.array([(1 - k) // 2 if (k < 0).any() else k for k in labels]).T  # parities +1, -1 are labels 0, 1
+    weight = np.sum(np.abs(basis.matrix.conj().T @ start.vectors) ** 2 * start.weights, axis=1)
+    tuples, which = np.unique(raw, axis=0, return_inverse=True)
+    share = np.bincount(which.ravel(), weight)
+    there = tuples[share > 1e-20]
+    first = there[0]
+    group = {tuple(0 for _ in maps)}
+    while True:
+        more = group | {tuple((np.array(g) + k - first) % orders) for g in group for k in there}
+        if len(more) == len(group):
+            break
+        group = more
+    allowed = np.array([tuple(k) in {tuple((np.array(g) + first) % orders) for g in group} for k in tuples])
+    values: dict[str, int] = {}
+    apart = 1
+    for a, m in enumerate(maps):
+        spread = {g[a] for g in group}
+        power = len(spread)  # a cyclic subgroup of that many elements: the power of the map that is one on it
+        if power == orders[a]:
+            apart *= power
+            continue
+        apart *= power
+        whole = int(first[a]) % (int(orders[a]) // power)
+        sign = (labels[a] < 0).any()
+        values[m.name if power == 1 else f"{m.name}^{power}"] = 1 - 2 * whole if sign else whole
+    if len(group) < apart:
+        values["joint sectors"] = len(group)
+    return values, allowed[which.ravel()]
+
+
 def _columns(
-    charges: Charges, start: Start, symmetries: dict[str, int], lines: dict[str, np.ndarray], sharp: dict[str, float]
+    charges: Charges, inside: np.ndarray | None, lines: dict[str, np.ndarray], sharp: dict[str, float]
 ) -> np.ndarray:
     """States of the basis with these values."""
     if charges.basis is None:
-        return np.flatnonzero(_kept(lines, sharp, len(start.vectors)))
-    return charges.basis.columns(symmetries, {name: (lines[name], sharp[name]) for name in sharp})
+        return np.flatnonzero(_kept(lines, sharp, charges.matrices[charges.hamiltonian].shape[0]))
+    assert inside is not None
+    columns = charges.basis.columns({}, {name: (lines[name], sharp[name]) for name in sharp})
+    return columns[inside[columns]]
 
 
 def _kept(lines: dict[str, np.ndarray], sharp: dict[str, float], states: int) -> np.ndarray:
