@@ -235,6 +235,7 @@ def compare(
     insist: Iterable[str] = (),
     resolution: float | None = None,
     ranking: bool = True,
+    by_symmetry: bool = True,
     progress: Callable[[str], None] | None = None,
 ) -> Comparison:
     """Compare the ensembles of some charges with the long-time state of a start.
@@ -262,6 +263,9 @@ def compare(
         Time up to which equal gaps are told apart.
     ranking : bool, optional
         Whether the charges are ranked, which costs further fits.
+    by_symmetry : bool, optional
+        Whether symmetries without spread in the start (momentum, parity, their powers and products) narrow the sector
+        of the second column, or sharp charges alone.
     progress : callable, optional
         Told in one line what is being done.
 
@@ -277,7 +281,9 @@ def compare(
     ResourceError
         Blocks that would not fit into memory.
     """
-    return _Study(charges, start, hamiltonian, observables or {}, blocks, progress).run(
+    study = _Study(charges, start, hamiltonian, observables or {}, blocks, progress)
+    study.by_symmetry = by_symmetry
+    return study.run(
         width, times, speed, tuple(insist), resolution, ranking
     )
 
@@ -297,6 +303,7 @@ class _Study:
         if taken:
             raise ValueError(f"observable {taken[0]!r}: this name is taken in the table of levels; choose another")
         self.progress = progress
+        self.by_symmetry = True
         self.seconds: dict[str, float] = {}
         self.notes: list[str] = []
         self.start = start if isinstance(start, Start) else Start.from_vector(start)
@@ -333,9 +340,9 @@ class _Study:
             if warning:
                 self.notes.append(warning)
         targets = {n: self.start.mean(q.matrix()) for n, q in c.operators.items()}
-        sector = find_sector(c, self.start)
+        sector = find_sector(c, self.start, by_symmetry=self.by_symmetry)
         with self._clock("ensembles"):
-            ensembles = self._fits(targets, reference, sector)
+            ensembles = self._fits(targets, reference, sector, conservation.broken)
         found_speed = speed if speed is not None else self._estimated_speed(spectrum)
         with self._clock("windows and eigenstates"):
             more, level_data, window, scan = self._windows(
@@ -374,10 +381,12 @@ class _Study:
 
     # ------------------------------------------------------------------ fitted ensembles
 
-    def _fits(self, targets: Any, reference: Any, sector: Sector | None) -> list[Ensemble]:
+    def _fits(
+        self, targets: Any, reference: Any, sector: Sector | None, broken: Sequence[str]
+    ) -> list[Ensemble]:
         covariance = _start_covariance(self.start, [op.matrix() for op in self.charges.operators.values()])
         out = []
-        for kind, names in self._sets():
+        for kind, names in self._sets(broken):
             label = kind if kind != "generalised" else f"generalised: {', '.join(names)}"
             for inside in (None, sector) if sector is not None else (None,):
                 if self.progress is not None:
@@ -396,7 +405,10 @@ class _Study:
         corrections: dict[str, float] = {}
         if not plain.sector and result.success and self.charges.observables:
             corrections = self.charges.correction(result, names, spread)
-        chi = np.diagonal(result.covariance) if result.success else np.full(len(names), np.nan)
+        chi = np.full(len(names), np.nan)
+        if result.success:
+            whole = result.covariance if plain.sector else self.charges.fluctuations(result, names)
+            chi = np.diagonal(whole)
         return replace(
             plain,
             multipliers=dict(result.multipliers),
@@ -408,10 +420,13 @@ class _Study:
             variances={n: (float(spread[k, k]), float(chi[k])) for k, n in enumerate(names)},
         )
 
-    def _sets(self) -> list[tuple[str, tuple[str, ...]]]:
-        """Nested sets of charges: the Hamiltonian, then the charges in order, sums of one-site operators first."""
+    def _sets(self, broken: Sequence[str]) -> list[tuple[str, tuple[str, ...]]]:
+        """Nested sets of charges: the Hamiltonian, then the numbers, then the other charges in order.
+
+        A number is a conserved sum of diagonal one-site operators.
+        """
         c, h = self.charges, self.charges.hamiltonian
-        numbers = tuple(n for n in c.names if n != h and c.operators[n].range <= 1)
+        numbers = tuple(n for n in c.names if n != h and n not in broken and self._is_number(c.operators[n]))
         sets: list[tuple[str, tuple[str, ...]]] = [("canonical", (h,))]
         if numbers:
             sets.append(("grand canonical", (h, *numbers)))
@@ -421,6 +436,10 @@ class _Study:
                 joined = (*joined, name)
                 sets.append(("generalised", joined))
         return sets
+
+    def _is_number(self, op: OperatorSum) -> bool:
+        q = op.matrix() if op.range <= 1 else None
+        return q is not None and not (q - sp.diags_array(q.diagonal())).count_nonzero()
 
     def _direct_means(self, state: MatricesState) -> dict[str, float]:
         return {n: state.mean(q) for n, q in self.charges.observables.items()}

@@ -172,8 +172,26 @@ class Charges:
         curvature = second_derivatives(at, lam, result.covariance)
         if curvature is None:
             return {}
-        size = leading_correction(curvature, spread, result.covariance)
+        size = leading_correction(curvature, spread, self.fluctuations(result, names))
         return dict(zip(self.observables, map(float, size), strict=True))
+
+    def fluctuations(self, result: Result, names: Sequence[str]) -> np.ndarray:
+        """Symmetrised covariance of charges in an ensemble over all sectors, as it is taken in the start.
+
+        The covariance of a result is the Kubo-Mori one, the response of the values to the multipliers.  The two differ
+        for charges that do not commute with one another.
+        """
+        if self.commute:
+            return result.covariance
+        inner = replace(result.state, basis=None, dims=None)
+        q = [self.matrices[n] for n in names]
+        values = [result.values[n] for n in names]
+        out = np.empty((len(q), len(q)))
+        for i in range(len(q)):
+            for j in range(i + 1):
+                product = 0.5 * (q[i] @ q[j] + q[j] @ q[i])
+                out[i, j] = out[j, i] = inner.mean(product) - values[i] * values[j]
+        return out
 
     def spectrum(self, *, progress: Any = None) -> Spectrum:
         """Spectrum of the Hamiltonian, in blocks that no charge leaves when all commute."""
@@ -183,14 +201,17 @@ class Charges:
         )
 
 
-def find_sector(charges: Charges, start: Start) -> Sector | None:
+def find_sector(charges: Charges, start: Start, *, by_symmetry: bool = True) -> Sector | None:
     """Sector of all charges and symmetries without spread in the start; None when everything has spread.
 
     Charges count that are diagonal in the product basis (a magnetisation, a particle number), since only those select
-    states.
+    states.  With ``by_symmetry=False`` charges alone count.
     """
     basis = charges.basis
-    symmetries, inside = ({}, None) if basis is None else sharp_labels(basis, start)
+    symmetries: dict[str, int] = {}
+    inside = None if basis is None else np.ones(basis.size, bool)
+    if basis is not None and by_symmetry:
+        symmetries, inside = sharp_labels(basis, start)
     sharp: dict[str, float] = {}
     lines: dict[str, np.ndarray] = {}
     for name, op in charges.operators.items():
@@ -205,7 +226,7 @@ def find_sector(charges: Charges, start: Start) -> Sector | None:
             small = abs(value) <= 1e-13 * float(np.abs(line).max(initial=0.0))
             sharp[name], lines[name] = 0.0 if small else float(value), line
     chosen = _columns(charges, inside, lines, sharp)
-    parity = _parity(charges)
+    parity = _parity(charges) if by_symmetry else None
     if parity is not None:
         value = sharp_value(parity, start.vectors)
         if value is not None and not np.isin(parity[_kept(lines, sharp, len(parity))], [value]).all():

@@ -338,3 +338,19 @@ def test_statements_tell_description_from_failure():
     assert "single eigenstate" not in said
     lone = size_series(lambda n: study(n, ranking=False, blocks=(1,)), [4, 5, 6])
     assert lone.statements == ()  # no two sizes of one sequence
+
+
+def test_spread_of_charges_that_do_not_commute_is_symmetrised_in_both():
+    ring = Ring(5)
+    f = lambda text: formula(text, ring)
+    charges = {"energy": f("Sx[i]*Sx[i+1] + Sy[i]*Sy[i+1] + Sz[i]*Sz[i+1]"), "x": f("Sx[i]"), "z": f("Sz[i]")}
+    start = ProductState(ring, ["0.3", "1.1", "0.2", "1.5", "0.7"], 0.0).vector()
+    found = compare(charges, start, observables={"xz": f("Sx[0]*Sz[1]")}, ranking=False)
+    for label, names in (("grand canonical", ("energy", "z")), ("generalised: energy, z, x", ("energy", "z", "x"))):
+        ensemble = found.ensemble(label)
+        rho = gibbs([charges[n] for n in names], [ensemble.multipliers[n] for n in names])
+        for n in names:
+            q = charges[n].matrix().toarray()
+            plain = np.trace(rho @ q @ q).real - np.trace(rho @ q).real ** 2
+            assert ensemble.variances[n][1] == pytest.approx(plain, rel=1e-9)
+    assert found.conservation.clashes == (("x", "z"),)

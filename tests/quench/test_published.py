@@ -223,7 +223,7 @@ def test_alternating_start_with_the_fourth_charge(size, delta):
     found = compare(
         {"energy": formula(exchange(delta), ring), "magnetisation": formula("Sz[i]", ring),
          "fourth": formula(fourth_charge(delta), ring)},
-        ProductState(ring, ["0", "pi"], 0.0).vector(), ranking=False, blocks=(1,),
+        ProductState(ring, ["0", "pi"], 0.0).vector(), ranking=False, blocks=(1,), by_symmetry=False,
         observables={"near": formula("Z[0]*Z[1]", ring), "next": formula("Z[0]*Z[2]", ring)},
     )  # fmt: skip
     # closed form, found with the charge: 3 Delta/8 per site, no term of third order in Delta
@@ -245,7 +245,7 @@ def test_inverse_temperature_over_all_sectors_and_inside_one():
     ring = Ring(12)
     found = compare(
         {"energy": formula(exchange(1.5), ring), "magnetisation": formula("Sz[i]", ring)},
-        ProductState(ring, ["0", "pi"], 0.0).vector(), ranking=False, blocks=(1,),
+        ProductState(ring, ["0", "pi"], 0.0).vector(), ranking=False, blocks=(1,), by_symmetry=False,
     )  # fmt: skip
     betas = [found.ensemble("canonical", sector=inside).multipliers["energy"] for inside in (False, True)]
     assert_allclose(betas, [1.494, 1.277], atol=5.1e-4)
