@@ -1,5 +1,9 @@
 """Fixtures of every test: a seeded generator and deterministic hypothesis.  Nothing here touches JAX's precision."""
 
+import os
+
+os.environ.setdefault("OMP_NUM_THREADS", "1")  # small matrices: several threads cost more than they bring
+
 import numpy as np
 import pytest
 from hypothesis import settings

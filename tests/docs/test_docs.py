@@ -97,7 +97,7 @@ def test_the_readme_has_two_commands():
         assert line[:4] == ["python3", "-m", "venv", ".venv"]
     config = ROOT / words[0][words[0].index("solve") + 1]
     assert config.exists() and "--force" in words[0]
-    assert words[1][-3:] == [".venv/bin/python", "-m", "pytest"]
+    assert words[1][-7:] == [".venv/bin/python", "-m", "pytest", "-n", "auto", "--dist", "loadfile"]
 
 
 def rows(table):
