@@ -491,8 +491,10 @@ class _Study:
         scan = None
         within = {"matching sector": 1.0} if sector is not None else None
         if inner is not None:
-            scan = scan_widths(found, s * np.array([0.25, 0.5, 1.0, 2.0]), mean=energy, within=within)
             out.append(self._single(inner, data, matching, sector, reference, spectrum))
+        if out:  # where the sector has too few levels the scan is over all sectors
+            limits = within if inner is not None else None
+            scan = scan_widths(found, s * np.array([0.25, 0.5, 1.0, 2.0]), mean=energy, within=limits)
         window_facts = {} if inner is None else {"mean": inner.mean, "width": inner.width, "beta": inner.beta}
         return out, data, window_facts, scan
 
