@@ -7,7 +7,7 @@ candidate face.  Floor: core.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -19,6 +19,10 @@ if TYPE_CHECKING:
     from maxent.core.blocks import Blocks
 
 __all__ = ["face_sizes", "normal_directions", "normals", "polished_directions"]
+
+
+#: Longest step on the unit sphere.
+LONGEST = 0.3
 
 
 def face_sizes(levels: np.ndarray) -> list[int]:
@@ -189,6 +193,16 @@ class Cluster:
             total += 2 * np.real(z @ z.conj().T)
         return total
 
+    def step(self, v: np.ndarray, rho: State) -> tuple[np.ndarray, State, bool]:
+        """Step from v, the corrected state, and whether spread and gradient are at rounding."""
+        charges, one = self.charges(), self.identity()
+        mean = charges @ one / self.k
+        move = SphereStep(charges - np.outer(mean, one), mean, self.curvature(rho), v)
+        if not move.done and self.k > 1 and move.spread > 1e-13:
+            # values of the traceless charges in the corrected state
+            rho = State.clipped(move.corrected(rho.vector() - one / self.k) + one / self.k, self)
+        return move.step, rho, move.done
+
 
 @dataclass
 class State:
@@ -198,7 +212,7 @@ class State:
     dense: list[np.ndarray]
 
     @classmethod
-    def uniform(cls, cluster: Cluster) -> State:
+    def even(cls, cluster: Cluster) -> State:
         dense = [
             np.eye(k, dtype=a.dtype) / cluster.k for a, k in zip(cluster.blocks.dense, cluster.sizes(), strict=True)
         ]
@@ -216,7 +230,7 @@ class State:
         flat = weights[new.on]
         trace = flat.sum() + sum(np.trace(b).real for b in dense)
         if not trace > 0.25:  # the cluster has changed: start the state afresh
-            return State.uniform(new)
+            return State.even(new)
         return State(flat / trace, [b / trace for b in dense])
 
     def vector(self) -> np.ndarray:
@@ -274,63 +288,99 @@ def polish(blocks: Blocks, v: np.ndarray, k: int, *, passes: int = 12) -> np.nda
     All linear algebra is r x r whatever k is.  The spread of the cluster is penalised with weight 1/omega,
     omega ~ (current spread)^2; theta itself is never set to zero, which would call a target just outside a boundary.
     """
-    best = (-np.inf, v)
-    rho: State | None = None
-    cluster: Cluster | None = None
-    last = float("inf")
+    found = ascend(lambda at: Cluster.find(blocks, at, k), State, v, passes)
+    assert found is not None
+    last, best, value = found
+    # the last direction is the sharpest one; lowest levels that agree to rounding do not tell them apart
+    low = blocks.lowest(last)
+    return last if low.value >= value - 1e-15 * abs(low.highest) else best
+
+
+def ascend(
+    find: Callable[[np.ndarray], Any], content: Any, v: np.ndarray, passes: int
+) -> tuple[np.ndarray, np.ndarray, float] | None:
+    """Second-order steps on the unit sphere towards the direction that a set of levels is pinned in.
+
+    Parameters
+    ----------
+    find : callable
+        Direction -> the levels held there (`lowest`, `step(v, content)`), or None where they cannot be told.
+    content : type
+        What the levels hold: ``even(levels)`` to begin with, ``carried(old, new)`` from there.
+    v : (m,) ndarray
+    passes : int
+
+    Returns
+    -------
+    last, best : (m,) ndarrays
+        Last direction, and the one of largest lowest value, which is the third entry.
+    """
+    best, value, last = v, -np.inf, float("inf")
+    held: Any = None
+    filled: Any = None
     for _ in range(passes):
-        before, cluster = cluster, Cluster.find(blocks, v, k)
-        rho = State.uniform(cluster) if rho is None or before is None else rho.carried(before, cluster)
-        if cluster.lowest > best[0]:
-            best = (cluster.lowest, v)
-        step, rho, done = _second_order_step(cluster, v, rho)
+        before, held = held, find(v)
+        if held is None:
+            return None
+        filled = content.even(held) if before is None else filled.carried(before, held)
+        if held.lowest > value:
+            best, value = v, held.lowest
+        step, filled, done = held.step(v, filled)
         if done:
             break
         length = float(np.linalg.norm(step))
-        if length > 0.3:
-            step = step * (0.3 / length)
+        if length > LONGEST:
+            step = step * (LONGEST / length)
         v = (v + step) / np.linalg.norm(v + step)
         if length < 2e-16 or 0.5 * last < length < 1e-12:
             break
         last = length
-    # the last direction is the sharpest one; lowest levels that agree to rounding do not tell them apart
-    low = blocks.lowest(v)
-    return v if low.value >= best[0] - 1e-15 * abs(low.highest) else best[1]
+    return v, best, float(value)
 
 
-def _second_order_step(cluster: Cluster, v: np.ndarray, rho: State) -> tuple[np.ndarray, State, bool]:
-    """Step in the complement of v, the corrected state, and whether spread and gradient are at rounding."""
-    charges, one, k = cluster.charges(), cluster.identity(), cluster.k
-    mean = charges @ one / k
-    traceless = charges - np.outer(mean, one)
-    bend = cluster.curvature(rho)
-    # the unit sphere bends as well; on a boundary theta is zero, outside it is the distance
-    kappa = max(float(mean @ v), 0.0)
-    complement = complement_of(v)
-    left, size, right = _thin_svd(traceless.T @ complement)
-    size = np.where(size > 1e-12, size, 0.0)
-    residual = traceless.T @ v
-    spread = np.linalg.norm(residual)
-    omega = max(spread**2, 1e-24)
-    axes = complement @ right.T
-    hessian = axes.T @ bend @ axes + np.diag(size**2 / omega) + kappa * np.eye(len(v) - 1)
-    pull = axes.T @ mean - size * (left.T @ residual) / omega
-    gradient = np.linalg.norm((axes.T @ mean)[size < 1e-3])
-    if spread < 4e-14 and gradient < 4e-14:
-        return np.zeros_like(v), rho, True
-    hessian = hessian + 1e-9 * np.eye(len(pull))  # directions without curvature do not move theta: leave them alone
-    d = 1 / np.sqrt(np.maximum(np.diag(hessian), 1e-9))
-    step = axes @ (d * np.linalg.lstsq(d[:, None] * hessian * d, d * pull, rcond=1e-13)[0])
-    length = float(np.linalg.norm(step))
-    if k > 1 and spread > 1e-13:
-        shown = step * min(1.0, 0.3 / max(length, 1e-300))
-        # values of the traceless charges in the corrected state
-        wanted = bend @ shown + kappa * shown + (mean @ v) * v - mean
-        y = rho.vector() - one / k
-        strong = size > 1e-2 * size.max(initial=0.0)
-        y = y + left[:, strong] @ ((axes.T @ (wanted - traceless @ y))[strong] / size[strong])
-        rho = State.clipped(y + one / k, cluster)
-    return step, rho, False
+class SphereStep:
+    """One second-order step in the complement of a unit vector v.
+
+    Parameters
+    ----------
+    charges : (m, p) ndarray
+        What each charge does to the held levels; `v` shall bring ``charges.T @ v`` to zero.
+    mean : (m,) ndarray
+        Slope of the lowest value.
+    bend : (m, m) ndarray
+        Curvature of the lowest value, positive.
+    v : (m,) ndarray
+    """
+
+    def __init__(self, charges: np.ndarray, mean: np.ndarray, bend: np.ndarray, v: np.ndarray):
+        self.charges, self.mean, self.bend, self.v = charges, mean, bend, v
+        # the unit sphere bends as well; on a boundary theta is zero, outside it is the distance
+        self.kappa = max(float(mean @ v), 0.0)
+        complement = complement_of(v)
+        self.left, size, right = _thin_svd(charges.T @ complement)
+        self.size = size = np.where(size > 1e-12, size, 0.0)
+        residual = charges.T @ v
+        self.spread = float(np.linalg.norm(residual))
+        omega = max(self.spread**2, 1e-24)
+        self.axes = axes = complement @ right.T
+        hessian = axes.T @ bend @ axes + np.diag(size**2 / omega) + self.kappa * np.eye(len(v) - 1)
+        pull = axes.T @ mean - size * (self.left.T @ residual) / omega
+        gradient = np.linalg.norm((axes.T @ mean)[size < 1e-3])
+        self.done = bool(self.spread < 4e-14 and gradient < 4e-14)  # both at rounding
+        if self.done:
+            self.step = np.zeros_like(v)
+            return
+        hessian = hessian + 1e-9 * np.eye(len(pull))  # directions without curvature do not move theta: leave them alone
+        d = 1 / np.sqrt(np.maximum(np.diag(hessian), 1e-9))
+        self.step = axes @ (d * np.linalg.lstsq(d[:, None] * hessian * d, d * pull, rcond=1e-13)[0])
+
+    def corrected(self, content: np.ndarray) -> np.ndarray:
+        """What the held levels have to hold at the new direction, from what they hold (p,)."""
+        shown = self.step * min(1.0, LONGEST / max(float(np.linalg.norm(self.step)), 1e-300))
+        wanted = self.bend @ shown + self.kappa * shown + (self.mean @ self.v) * self.v - self.mean
+        strong = self.size > 1e-2 * self.size.max(initial=0.0)
+        missing = (self.axes.T @ (wanted - self.charges @ content))[strong]
+        return content + self.left[:, strong] @ (missing / self.size[strong])
 
 
 def _thin_svd(tall: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:

@@ -20,7 +20,7 @@ import numpy as np
 
 from maxent.core.blocks import real_rows
 from maxent.core.contract import EPS, Barrier
-from maxent.core.polish import complement_of, matrix_of, vectors_of
+from maxent.core.polish import SphereStep, ascend, matrix_of, vectors_of
 
 if TYPE_CHECKING:
     from maxent.families.stacks import Stacks
@@ -78,7 +78,7 @@ class Held:
     """
 
     stacks: Stacks
-    value: float
+    lowest: float
     mean: np.ndarray
     flat: np.ndarray
     places: list[tuple[int, int, np.ndarray]]
@@ -153,6 +153,15 @@ class Held:
             total += rows @ rows.T
         return total
 
+    def step(self, v: np.ndarray, filling: Filling) -> tuple[np.ndarray, Filling, bool]:
+        """Step from v, the corrected filling, and whether levels and gradient are at rounding."""
+        size = max((np.abs(e).max(initial=0.0) for e in self.levels), default=0.0)
+        size = max(size, float(np.abs(v @ self.stacks.flat).max(initial=0.0)))
+        move = SphereStep(self.charges, self.mean, self.bend(filling, size), v)
+        if not move.done and len(self.places) + len(self.flat) and move.spread > 1e-13:
+            filling = Filling.clipped(move.corrected(filling.vector(self)), self)
+        return move.step, filling, move.done
+
 
 @dataclass
 class Filling:
@@ -207,71 +216,12 @@ class Filling:
 
 def polish(stacks: Stacks, v: np.ndarray, k: int, *, passes: int = 12) -> np.ndarray | None:
     """Maximise the lowest value of ``v.Q`` over unit vectors that hold the k smallest levels at zero."""
-    best, last = (-np.inf, v), float("inf")
-    filling: Filling | None = None
-    held: Held | None = None
-    for _ in range(passes):
-        before, held = held, Held.find(stacks, v, k)
-        if held is None:
-            return None
-        filling = Filling.even(held) if filling is None or before is None else filling.carried(before, held)
-        if held.value > best[0]:
-            best = (held.value, v)
-        step, filling, done = _second_order_step(held, v, filling)
-        if done:
-            break
-        length = float(np.linalg.norm(step))
-        if length > 0.3:
-            step = step * (0.3 / length)
-        v = (v + step) / np.linalg.norm(v + step)
-        if length < 2e-16 or 0.5 * last < length < 1e-12:
-            break
-        last = length
-    low = stacks.lowest(v)
-    return v if low.value >= best[0] - 8 * low.error or stacks.sign < 0 else best[1]
-
-
-def _second_order_step(held: Held, v: np.ndarray, filling: Filling) -> tuple[np.ndarray, Filling, bool]:
-    """Step in the complement of v, the corrected filling, and whether levels and gradient are at rounding."""
-    charges, mean = held.charges, held.mean
-    size = max((np.abs(e).max(initial=0.0) for e in held.levels), default=0.0)
-    size = max(size, float(np.abs(v @ held.stacks.flat).max(initial=0.0)))
-    bend = held.bend(filling, size)
-    kappa = max(float(mean @ v), 0.0)  # the unit sphere bends as well; outside, the value is the distance
-    complement = complement_of(v)
-    left, strength, right = np.linalg.svd(charges.T @ complement, full_matrices=False)
-    strength = np.where(strength > 1e-12, strength, 0.0)
-    residual = charges.T @ v
-    spread = float(np.linalg.norm(residual))
-    omega = max(spread**2, 1e-24)
-    axes = complement @ right.T
-    rest = complement @ _null(right)
-    basis = np.concatenate([axes, rest], axis=1)
-    weight = np.concatenate([strength, np.zeros(rest.shape[1])])
-    hessian = basis.T @ bend @ basis + np.diag(weight**2 / omega) + kappa * np.eye(len(v) - 1)
-    pull = basis.T @ mean
-    pull[: len(strength)] -= strength * (left.T @ residual) / omega
-    gradient = np.linalg.norm((basis.T @ mean)[weight < 1e-3])
-    if spread < 4e-14 and gradient < 4e-14:
-        return np.zeros_like(v), filling, True
-    hessian = hessian + 1e-9 * np.eye(len(pull))  # directions without curvature are left alone
-    d = 1 / np.sqrt(np.maximum(np.diag(hessian), 1e-9))
-    step = basis @ (d * np.linalg.lstsq(d[:, None] * hessian * d, d * pull, rcond=1e-13)[0])
-    if len(held.places) + len(held.flat) and spread > 1e-13:
-        shown = step * min(1.0, 0.3 / max(float(np.linalg.norm(step)), 1e-300))
-        # what the held levels have to contribute at the new direction
-        wanted = bend @ shown + kappa * shown + (mean @ v) * v - mean
-        y = filling.vector(held)
-        strong = strength > 1e-2 * strength.max(initial=0.0)
-        y = y + left[:, strong] @ ((axes.T @ (wanted - charges @ y))[strong] / strength[strong])
-        filling = Filling.clipped(y, held)
-    return step, filling, False
-
-
-def _null(right: np.ndarray) -> np.ndarray:
-    """Orthonormal columns that complete the rows of `right`."""
-    k, n = right.shape
-    return np.linalg.svd(right, full_matrices=True)[2][k:].T if k < n else np.zeros((n, 0))
+    found = ascend(lambda at: Held.find(stacks, at, k), Filling, v, passes)
+    if found is None:
+        return None
+    last, best, value = found
+    low = stacks.lowest(last)
+    return last if low.value >= value - 8 * low.error or stacks.sign < 0 else best
 
 
 def barrier(stacks: Stacks, lam: np.ndarray) -> Barrier | None:

@@ -281,9 +281,7 @@ def compare(
     ResourceError
         Blocks that would not fit into memory.
     """
-    study = _Study(charges, start, hamiltonian, observables or {}, blocks, progress)
-    study.by_symmetry = by_symmetry
-    return study.run(
+    return _Study(charges, start, hamiltonian, observables or {}, blocks, by_symmetry, progress).run(
         width, times, speed, tuple(insist), resolution, ranking
     )
 
@@ -292,7 +290,14 @@ class _Study:
     """One comparison in the making; each method is one part of it."""
 
     def __init__(
-        self, charges: Any, start: Any, hamiltonian: str, observables: Any, blocks: Sequence[int], progress: Any
+        self,
+        charges: Any,
+        start: Any,
+        hamiltonian: str,
+        observables: Any,
+        blocks: Sequence[int],
+        by_symmetry: bool,
+        progress: Any,
     ):
         for name, op in {**charges, **observables}.items():
             if not isinstance(op, OperatorSum):
@@ -303,7 +308,7 @@ class _Study:
         if taken:
             raise ValueError(f"observable {taken[0]!r}: this name is taken in the table of levels; choose another")
         self.progress = progress
-        self.by_symmetry = True
+        self.by_symmetry = by_symmetry
         self.seconds: dict[str, float] = {}
         self.notes: list[str] = []
         self.start = start if isinstance(start, Start) else Start.from_vector(start)

@@ -225,19 +225,18 @@ def find_sector(charges: Charges, start: Start, *, by_symmetry: bool = True) -> 
         if value is not None:
             small = abs(value) <= 1e-13 * float(np.abs(line).max(initial=0.0))
             sharp[name], lines[name] = 0.0 if small else float(value), line
-    chosen = _columns(charges, inside, lines, sharp)
+    columns = _columns(charges, inside, lines, sharp)
     parity = _parity(charges) if by_symmetry else None
     if parity is not None:
         value = sharp_value(parity, start.vectors)
         if value is not None and not np.isin(parity[_kept(lines, sharp, len(parity))], [value]).all():
             try:
-                chosen = _columns(charges, inside, {**lines, "parity": parity}, {**sharp, "parity": value})
+                columns = _columns(charges, inside, {**lines, "parity": parity}, {**sharp, "parity": value})
                 sharp["parity"] = float(value)
             except ValueError:
                 pass  # a map of the basis exchanges the parities: its label stands for both
     if not symmetries and not sharp:
         return None
-    columns = chosen
     everything = charges.matrices[charges.hamiltonian].shape[0]
     return None if len(columns) == everything else Sector(symmetries, sharp, columns)
 

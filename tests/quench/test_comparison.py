@@ -325,10 +325,8 @@ def test_parity_without_spread_makes_a_sector():
     v = v[:, w > 0.5]
     e = np.linalg.eigvalsh(v.T @ energy.matrix().toarray()[np.ix_(even, even)] @ v)
     p = np.exp(-inside.multipliers["energy"] * (e - e[0]))
-    if set(found.sharp) == {"parity", "translation"}:
-        assert p @ e / p.sum() == pytest.approx(found.targets["energy"], abs=1e-10)
-    else:  # the reflection is used as well and fixes nothing more here than a subspace of these
-        assert set(found.sharp) <= {"parity", "translation", "reflection"}
+    assert found.sharp == {"parity": 1.0, "translation": 0.0}
+    assert p @ e / p.sum() == pytest.approx(found.targets["energy"], abs=1e-10)
 
 
 def test_statements_tell_description_from_failure():
