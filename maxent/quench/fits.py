@@ -1,0 +1,105 @@
+"""Fitted columns of a comparison: nested sets of charges, over all sectors and inside that of the start.
+
+Floor: quench.  Must not know windows or dynamics.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+import scipy.sparse as sp
+
+from maxent.lattice import OperatorSum
+from maxent.quench.columns import Ensemble
+from maxent.quench.distances import block_distances
+from maxent.quench.ensembles import Charges
+from maxent.quench.setting import Setting
+from maxent.quench.starts import Start
+from maxent.result import Result
+
+__all__ = ["fitted_columns", "is_number", "nested_sets"]
+
+
+def fitted_columns(setting: Setting, broken: Sequence[str]) -> list[Ensemble]:
+    """Every nested set of charges fitted to the start.
+
+    Parameters
+    ----------
+    setting : Setting
+    broken : sequence of str
+        Charges that are not conserved: they join last.
+    """
+    charges, sector = setting.charges, setting.sector
+    covariance = start_covariance(setting.start, [op.matrix() for op in charges.operators.values()])
+    out = []
+    for kind, names in nested_sets(charges, broken):
+        label = kind if kind != "generalised" else f"generalised: {', '.join(names)}"
+        for inside in (None, sector) if sector is not None else (None,):
+            setting.say(f"{label}{'' if inside is None else ', in the sector of the start'}")
+            result = charges.fit(names, setting.targets, inside)
+            sharp = {} if inside is None else inside.values
+            plain = Ensemble(label, kind, names, sharp, str(result.verdict), result.message)
+            out.append(plain if result.state is None else _filled(setting, plain, result, covariance))
+    return out
+
+
+def nested_sets(charges: Charges, broken: Sequence[str]) -> list[tuple[str, tuple[str, ...]]]:
+    """Kind and names of nested sets: the Hamiltonian, then the numbers, then the other charges in order."""
+    h = charges.hamiltonian
+    numbers = tuple(n for n in charges.names if n != h and n not in broken and is_number(charges.operators[n]))
+    sets: list[tuple[str, tuple[str, ...]]] = [("canonical", (h,))]
+    if numbers:
+        sets.append(("grand canonical", (h, *numbers)))
+    joined = (h, *numbers)
+    for name in charges.names:
+        if name not in joined:
+            joined = (*joined, name)
+            sets.append(("generalised", joined))
+    return sets
+
+
+def is_number(op: OperatorSum) -> bool:
+    """Whether an operator is a sum of diagonal one-site operators."""
+    q = op.matrix() if op.range <= 1 else None
+    return q is not None and not (q - sp.diags_array(q.diagonal())).count_nonzero()
+
+
+def _filled(setting: Setting, plain: Ensemble, result: Result, covariance: np.ndarray) -> Ensemble:
+    """The ensemble with what its state says."""
+    charges, names, state = setting.charges, plain.charges, result.state
+    index = [charges.names.index(n) for n in names]
+    spread = covariance[np.ix_(index, index)]
+    corrections: dict[str, float] = {}
+    if not plain.sector and result.success and charges.observables:
+        corrections = charges.correction(result, names, spread)
+    chi = np.full(len(names), np.nan)
+    if result.success:
+        whole = result.covariance if plain.sector else charges.fluctuations(result, names)
+        chi = np.diagonal(whole)
+    inside = {n: state.mean(q) for n, q in charges.observables.items()} if plain.sector else charges.means(state)
+    return replace(
+        plain,
+        multipliers=dict(result.multipliers),
+        multiplier_errors=dict(result.multiplier_errors),
+        entropy=result.entropy,
+        means=inside,
+        distances=block_distances(state, setting.reference),
+        corrections=corrections,
+        variances={n: (float(spread[k, k]), float(chi[k])) for k, n in enumerate(names)},
+    )
+
+
+def start_covariance(start: Start, operators: Sequence[Any]) -> np.ndarray:
+    """Symmetrised covariance of operators in a start."""
+    images = [q @ start.vectors for q in operators]
+    means = [float(start.weights @ np.real(np.einsum("ik,ik->k", start.vectors.conj(), x))) for x in images]
+    off = [x - m * start.vectors for x, m in zip(images, means, strict=True)]
+    n = len(operators)
+    out = np.empty((n, n))
+    for i in range(n):
+        for j in range(i + 1):
+            out[i, j] = out[j, i] = float(start.weights @ np.real(np.einsum("ik,ik->k", off[i].conj(), off[j])))
+    return out

@@ -1,0 +1,89 @@
+"""What the parts of one comparison share: charges, start, spectrum, targets, sector, blocks, notes.  Floor: quench."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from types import TracebackType
+
+import numpy as np
+
+from maxent.quench.dephasing import Dephased
+from maxent.quench.ensembles import Charges, Sector
+from maxent.quench.spectrum import Spectrum
+from maxent.quench.starts import Start
+
+__all__ = ["Clock", "Setting"]
+
+
+@dataclass(frozen=True, eq=False)
+class Setting:
+    """Everything the columns of a comparison are made from.
+
+    Attributes
+    ----------
+    charges : Charges
+    start : Start
+    spectrum : Spectrum
+    dephased : Dephased
+    targets : dict of str to (float, float)
+        Mean of each charge in the start, and its accuracy.
+    sector : Sector or None
+        That of the start; None when nothing is without spread.
+    reference : dict of sites to ndarray
+        Reduced states of the dephased state, by the sites of the block.
+    progress : callable or None
+    notes : list of str
+        Grows as the parts find what the reader must know.
+    """
+
+    charges: Charges
+    start: Start
+    spectrum: Spectrum
+    dephased: Dephased
+    targets: dict[str, tuple[float, float]]
+    sector: Sector | None
+    reference: dict[tuple[int, ...], np.ndarray]
+    progress: Callable[[str], None] | None = None
+    notes: list[str] = field(default_factory=list)
+
+    @property
+    def length(self) -> float:
+        """Number of sites around the ring; an open chain is as good as a ring of twice its length."""
+        sites = self.charges.sites
+        return float(sites.size if sites.is_ring else 2 * sites.size)
+
+    @property
+    def sharp(self) -> dict[str, float]:
+        """Values without spread in the start."""
+        return {} if self.sector is None else self.sector.values
+
+    def say(self, text: str) -> None:
+        """Tell what is being done."""
+        if self.progress is not None:
+            self.progress(text)
+
+
+class Clock:
+    """CPU time of the parts."""
+
+    def __init__(self, progress: Callable[[str], None] | None) -> None:
+        self.seconds: dict[str, float] = {}
+        self._progress = progress
+        self._part, self._begun = "", 0.0
+
+    def __call__(self, part: str) -> Clock:
+        """Name the part that is timed next."""
+        self._part = part
+        if self._progress is not None:
+            self._progress(part)
+        return self
+
+    def __enter__(self) -> None:
+        self._begun = time.process_time()
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self.seconds[self._part] = time.process_time() - self._begun
