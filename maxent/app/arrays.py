@@ -12,11 +12,13 @@ from typing import Any
 
 import numpy as np
 
+from maxent.app import sections
+
 __all__ = ["write"]
 
 
 def write(file: File, record: Mapping[str, Any], *, probabilities: Any = None, labels: Sequence[str] = ()) -> None:
-    """Write targets, values, multipliers, covariance, predictions and probabilities of a record.
+    """Write targets, values, multipliers, covariance, predictions, further sections and probabilities of a record.
 
     Parameters
     ----------
@@ -58,6 +60,7 @@ def write(file: File, record: Mapping[str, Any], *, probabilities: Any = None, l
                 [p["value"] for p in record["predictions"]],
                 "mean in the state found",
             )
+        sections.write_arrays(out, record["sections"])
         if probabilities is not None:
             out.createDimension("state", len(probabilities))
             _numbers(out, "probability", ("state",), probabilities, "probability of each listed state")

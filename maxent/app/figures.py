@@ -42,6 +42,8 @@ class Figure:
         The figure, an ``svg`` element with title and words inside.
     study : bool, optional
         Whether it belongs to the comparison of ensembles.
+    section : str, optional
+        Name of the further section that it belongs to.
     """
 
     name: str
@@ -50,6 +52,7 @@ class Figure:
     words: str
     svg: str
     study: bool = False
+    section: str = ""
 
 
 def draw(result: Any, *, labels: Sequence[str] = ()) -> tuple[Figure, ...]:

@@ -6,13 +6,16 @@ Must not know: TOML, the command line.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from maxent.app.locate import Path
 from maxent.errors import ConfigError
 from maxent.text import number, suggestion
+
+if TYPE_CHECKING:
+    from maxent.app.sections import Section
 
 __all__ = [
     "ACCURACY", "TARGET", "BadInput", "Job", "Problems", "Room", "Study", "Target", "check_target", "given_target",
@@ -158,6 +161,8 @@ class Job:
         State and operator -> mean of a prediction.
     unit : str
         What `family.size` counts.
+    further : callable
+        Result -> further tables and curves, computed after the fit (sections.py).
     """
 
     family: Any
@@ -171,6 +176,7 @@ class Job:
     study: Study | None = None
     mean: Callable[[Any, Any], float] = lambda state, operator: state.mean(operator)
     unit: str = "state"
+    further: Callable[[Any], Sequence[Section]] = lambda result: ()
 
     def target_errors(self) -> Any:
         """Give a factor (m, p) of the covariance of the targets; None when no target has a standard error."""

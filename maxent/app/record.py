@@ -13,6 +13,7 @@ from typing import Any
 
 from maxent.app.config import Config
 from maxent.app.job import Job
+from maxent.app.sections import Section, entry
 from maxent.diagnose.explanation import left_by_sigmas
 from maxent.version import __version__
 
@@ -31,6 +32,7 @@ def record(
     versions: Mapping[str, str],
     notes: Sequence[str] = (),
     quench: Mapping[str, Any] | None = None,
+    sections: Sequence[Section] = (),
 ) -> dict[str, Any]:
     """Collect everything a result says, with the names of the charges.
 
@@ -52,6 +54,8 @@ def record(
         What a reader must know beyond the result.
     quench : mapping, optional
         Comparison of the ensembles with the dynamics (study.py).
+    sections : sequence of Section, optional
+        Further tables and curves.
 
     Returns
     -------
@@ -96,6 +100,7 @@ def record(
         "size": int(job.family.size),
         "notes": list(notes),
         "quench": quench,
+        "sections": [entry(s) for s in sections],
         "facts": dict(facts),
         "versions": {"maxent": __version__, **versions},
     }

@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from typing import Any
 
-from maxent.app import study_words, words
+from maxent.app import sections, study_words, words
 from maxent.app.figures import Figure, recoloured
 from maxent.text import combination, number
 
@@ -56,7 +56,11 @@ def render(record: Mapping[str, Any], *, figures: Sequence[Figure] = ()) -> str:
         short=words.verdict(record),
         head=head,
         rows=rows,
-        figures=[f for f in figures if not f.study],
+        figures=[f for f in figures if not f.study and not f.section],
+        sections=[
+            (table, [f for f in figures if f.section == entry["name"]])
+            for table, entry in zip(sections.tables(record["sections"]), record["sections"], strict=True)
+        ],
         study=study_words.tables(record["quench"]) if record["quench"] else (),
         study_notes=study_words.notes(record["quench"]) if record["quench"] else (),
         study_figures=[f for f in figures if f.study],

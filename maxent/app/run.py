@@ -13,7 +13,7 @@ import platform
 import shutil
 import sys
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass
 from importlib import metadata
@@ -91,6 +91,8 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
         notes = job.remarks(result)
         for note in notes:
             say(f"note: {note}")
+        sections, spent = _further(job, result)
+        seconds |= spent
         series, quench = None, None
         if job.study is not None:
             from maxent.app import study
@@ -102,8 +104,9 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
         from maxent.app.record import record as collect
 
         found = collect(
-            config, job, result, asked_driver=asked, facts=sizes(job), versions=_versions(), notes=notes, quench=quench
-        )
+            config, job, result, asked_driver=asked, facts=sizes(job), versions=_versions(), notes=notes, quench=quench,
+            sections=sections,
+        )  # fmt: skip
         _write(part, config, job, result, found, series, say)
         manifest = {
             "started": time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime(started)),
@@ -279,6 +282,13 @@ def _fit(config: Config, job: Job, driver: str) -> Any:
         raise config.error([((), str(bad))]) from bad
 
 
+def _further(job: Job, result: Any) -> tuple[Sequence[Any], dict[str, float]]:
+    """Further sections of the job and, where there are any, their seconds."""
+    clock = time.perf_counter()
+    sections = job.further(result)
+    return sections, {"sections": time.perf_counter() - clock} if sections else {}
+
+
 def _write(
     part: File, config: Config, job: Job, result: Any, record: Mapping[str, Any], series: Any, say: Say
 ) -> None:
@@ -293,7 +303,7 @@ def _write(
         from maxent.app.study import write_arrays
 
         write_arrays(part / "quench", series)
-    figures = _figures(part, job, result, series, say)
+    figures = _figures(part, job, result, record, series, say)
     if find_spec("jinja2") is None:
         say("no report.html: it needs the package jinja2 (pip install 'maxent-states[report]')")
         return
@@ -302,13 +312,17 @@ def _write(
     (part / "report.html").write_text(render(record, figures=figures), encoding="utf-8")
 
 
-def _figures(part: File, job: Job, result: Any, series: Any, say: Say) -> Any:
+def _figures(part: File, job: Job, result: Any, record: Mapping[str, Any], series: Any, say: Say) -> Any:
     if find_spec("matplotlib") is None:
         say("no figures: they need the package matplotlib (pip install 'maxent-states[report]')")
         return ()
     from maxent.app.figures import draw
 
     figures = draw(result, labels=job.labels)
+    if record["sections"]:
+        from maxent.app.section_figures import draw as draw_sections
+
+        figures += draw_sections(record["sections"])
     if series is not None:
         from maxent.app.study_figures import draw as draw_study
 

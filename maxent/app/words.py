@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from maxent.app import sections
 from maxent.text import combination, listing, number, plural, table, with_error
 
 __all__ = ["certificate", "charge_table", "face", "redundancy", "summary", "verdict"]
@@ -163,6 +164,7 @@ def summary(record: Mapping[str, Any]) -> str:
         parts.append(table(numbers, right=[1]))
     if record["explanation"] and not record["conflict"]:
         parts.append("\n".join(record["explanation"]))
+    parts += sections.summary(record["sections"])
     parts += record["notes"]
     if record["quench"]:
         from maxent.app.study_words import summary as study_summary
