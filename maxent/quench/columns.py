@@ -13,6 +13,8 @@ import numpy as np
 
 from maxent.quench.conservation import Conservation
 from maxent.quench.ranking import Ranking
+from maxent.quench.selfchecks import SelfCheck
+from maxent.quench.thermodynamics import Quantity
 from maxent.quench.windows import WindowScan
 
 __all__ = ["Comparison", "Ensemble"]
@@ -47,6 +49,10 @@ class Ensemble:
         Variance of each charge in the start and in the ensemble.
     facts : dict of str to float
         Further numbers: beta, centre and width of a window, energy of an eigenstate.
+    quantities : tuple of Quantity
+        Thermodynamics of a solved fit: temperature, potentials, heat capacities, each with its formula.
+    self_checks : tuple of SelfCheck
+        Checks of a solved fit by other routes; each can fail.
     """
 
     label: str
@@ -64,6 +70,8 @@ class Ensemble:
     corrections: dict[str, float] = field(default_factory=dict)
     variances: dict[str, tuple[float, float]] = field(default_factory=dict)
     facts: dict[str, float] = field(default_factory=dict)
+    quantities: tuple[Quantity, ...] = ()
+    self_checks: tuple[SelfCheck, ...] = ()
 
 
 @dataclass(frozen=True, eq=False)
@@ -190,7 +198,10 @@ class Comparison:
             "mutual": self.conservation.mutual,
             "message": self.conservation.message,
         }
-        plain["ensembles"] = [asdict(e) for e in self.ensembles]
+        plain["ensembles"] = [
+            asdict(e) | {"self_checks": [asdict(check) | {"agrees": bool(check)} for check in e.self_checks]}
+            for e in self.ensembles
+        ]
         plain["window_scan"] = None if self.window_scan is None else [
             {"width": w.width, "centre": w.centre, "mean": w.mean, "beta": w.beta, "entropy": w.entropy}
             for w in self.window_scan.windows

@@ -24,6 +24,7 @@ from maxent.quench.distances import nested_blocks
 from maxent.quench.ensembles import Charges, find_sector
 from maxent.quench.fits import fitted_columns
 from maxent.quench.microcanonical import microcanonical_columns
+from maxent.quench.potentials import find_potentials
 from maxent.quench.ranking import rank_charges
 from maxent.quench.setting import Clock, Setting
 from maxent.quench.speeds import estimated_speed
@@ -50,6 +51,8 @@ def compare(
     insist: Iterable[str] = (),
     resolution: float | None = None,
     ranking: bool = True,
+    numbers: Iterable[str] | None = None,
+    fields: Iterable[str] | None = None,
     by_symmetry: bool = True,
     progress: Callable[[str], None] | None = None,
 ) -> Comparison:
@@ -81,6 +84,9 @@ def compare(
     by_symmetry : bool, optional
         Whether symmetries without spread in the start (momentum, parity, their powers and products) narrow the sector
         of the second column, or sharp charges alone.
+    numbers, fields : iterable of str, optional
+        Charges that have a chemical potential, or a field; they join after the Hamiltonian.  By default the conserved
+        sums of diagonal one-site operators, those of particles as numbers and those of spins as field charges.
     progress : callable, optional
         Told in one line what is being done.
 
@@ -122,9 +128,10 @@ def compare(
             notes.append(warning)
     targets = {n: given.mean(q.matrix()) for n, q in c.operators.items()}
     sector = find_sector(c, given, by_symmetry=by_symmetry)
-    setting = Setting(c, given, spectrum, dephased, targets, sector, reference, progress, notes)
+    potentials = find_potentials(c, conservation.broken, numbers=numbers, fields=fields)
+    setting = Setting(c, given, spectrum, dephased, targets, sector, reference, potentials, progress, notes)
     with clock("ensembles"):
-        fitted = fitted_columns(setting, conservation.broken)
+        fitted = fitted_columns(setting)
     v = speed if speed is not None else _speed(setting)
     with clock("windows and eigenstates"):
         micro = microcanonical_columns(setting, width=width)

@@ -77,9 +77,7 @@ class Charges:
         observables: Mapping[str, OperatorSum] | None = None,
     ):
         if hamiltonian not in charges:
-            raise ValueError(
-                f"the Hamiltonian {hamiltonian!r} is none of the charges {', '.join(map(repr, charges))}"
-            )
+            raise ValueError(f"the Hamiltonian {hamiltonian!r} is none of the charges {', '.join(map(repr, charges))}")
         self.operators = dict(charges)
         self.hamiltonian = hamiltonian
         self.sites = charges[hamiltonian].sites
@@ -119,6 +117,11 @@ class Charges:
             return self.family.select(names)
         return Matrices({n: self.matrices[n] for n in names}, basis=self.isometry, dims=self.sites.dims)
 
+    def family_of(self, names: Sequence[str], sector: Sector | None) -> Matrices:
+        """Family of some charges over all sectors, or inside one."""
+        family = self.subfamily(names)
+        return family if sector is None else family.restrict(sector.columns)
+
     @cached_property
     def conjugated(self) -> dict[str, Any]:
         """Observables in the basis."""
@@ -151,12 +154,8 @@ class Charges:
 
     def fit(self, names: Sequence[str], targets: Mapping[str, tuple[float, float]], sector: Sector | None) -> Result:
         """Ensemble of some charges, over all sectors or inside one."""
-        family = self.subfamily(names)
-        if sector is not None:
-            family = family.restrict(sector.columns)
-        return solve(
-            family, {n: targets[n][0] for n in names}, accuracy={n: targets[n][1] for n in names}
-        )
+        family = self.family_of(names, sector)
+        return solve(family, {n: targets[n][0] for n in names}, accuracy={n: targets[n][1] for n in names})
 
     def correction(self, result: Result, names: Sequence[str], spread: np.ndarray) -> dict[str, float]:
         """Leading correction of every observable, `spread` (m, m) the covariance of these charges in the start."""
@@ -196,9 +195,7 @@ class Charges:
     def spectrum(self, *, progress: Any = None) -> Spectrum:
         """Spectrum of the Hamiltonian, in blocks that no charge leaves when all commute."""
         others = [q for n, q in self.operators.items() if n != self.hamiltonian] if self.commute else []
-        return Spectrum(
-            self.operators[self.hamiltonian], basis=self.isometry, companions=others, progress=progress
-        )
+        return Spectrum(self.operators[self.hamiltonian], basis=self.isometry, companions=others, progress=progress)
 
 
 def find_sector(charges: Charges, start: Start, *, by_symmetry: bool = True) -> Sector | None:
@@ -320,4 +317,3 @@ def _parity(charges: Charges) -> np.ndarray | None:
         if np.any((line[q.coords[0]] != line[q.coords[1]]) & (q.data != 0)):
             return None
     return line
-

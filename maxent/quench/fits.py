@@ -10,46 +10,42 @@ from dataclasses import replace
 from typing import Any
 
 import numpy as np
-import scipy.sparse as sp
 
-from maxent.lattice import OperatorSum
 from maxent.quench.columns import Ensemble
 from maxent.quench.distances import block_distances
-from maxent.quench.ensembles import Charges
+from maxent.quench.potentials import thermodynamic_facts
 from maxent.quench.setting import Setting
 from maxent.quench.starts import Start
 from maxent.result import Result
 
-__all__ = ["fitted_columns", "is_number", "nested_sets"]
+__all__ = ["fitted_columns", "nested_sets"]
 
 
-def fitted_columns(setting: Setting, broken: Sequence[str]) -> list[Ensemble]:
-    """Every nested set of charges fitted to the start.
-
-    Parameters
-    ----------
-    setting : Setting
-    broken : sequence of str
-        Charges that are not conserved: they join last.
-    """
+def fitted_columns(setting: Setting) -> list[Ensemble]:
+    """Every nested set of charges fitted to the start."""
     charges, sector = setting.charges, setting.sector
     covariance = start_covariance(setting.start, [op.matrix() for op in charges.operators.values()])
     out = []
-    for kind, names in nested_sets(charges, broken):
+    for kind, names in nested_sets(setting):
         label = kind if kind != "generalised" else f"generalised: {', '.join(names)}"
         for inside in (None, sector) if sector is not None else (None,):
             setting.say(f"{label}{'' if inside is None else ', in the sector of the start'}")
             result = charges.fit(names, setting.targets, inside)
             sharp = {} if inside is None else inside.values
             plain = Ensemble(label, kind, names, sharp, str(result.verdict), result.message)
-            out.append(plain if result.state is None else _filled(setting, plain, result, covariance))
+            if result.state is not None:
+                plain = _filled(setting, plain, result, covariance)
+                quantities, checks = thermodynamic_facts(result, charges, setting.potentials, inside)
+                plain = replace(plain, quantities=quantities, self_checks=checks)
+            out.append(plain)
     return out
 
 
-def nested_sets(charges: Charges, broken: Sequence[str]) -> list[tuple[str, tuple[str, ...]]]:
-    """Kind and names of nested sets: the Hamiltonian, then the numbers, then the other charges in order."""
-    h = charges.hamiltonian
-    numbers = tuple(n for n in charges.names if n != h and n not in broken and is_number(charges.operators[n]))
+def nested_sets(setting: Setting) -> list[tuple[str, tuple[str, ...]]]:
+    """Kind and names of nested sets: the Hamiltonian, then numbers and field charges, then the others in order."""
+    charges, h = setting.charges, setting.charges.hamiltonian
+    known = {*setting.potentials.numbers, *setting.potentials.fields}
+    numbers = tuple(n for n in charges.names if n in known)
     sets: list[tuple[str, tuple[str, ...]]] = [("canonical", (h,))]
     if numbers:
         sets.append(("grand canonical", (h, *numbers)))
@@ -59,12 +55,6 @@ def nested_sets(charges: Charges, broken: Sequence[str]) -> list[tuple[str, tupl
             joined = (*joined, name)
             sets.append(("generalised", joined))
     return sets
-
-
-def is_number(op: OperatorSum) -> bool:
-    """Whether an operator is a sum of diagonal one-site operators."""
-    q = op.matrix() if op.range <= 1 else None
-    return q is not None and not (q - sp.diags_array(q.diagonal())).count_nonzero()
 
 
 def _filled(setting: Setting, plain: Ensemble, result: Result, covariance: np.ndarray) -> Ensemble:

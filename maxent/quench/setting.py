@@ -11,6 +11,7 @@ import numpy as np
 
 from maxent.quench.dephasing import Dephased
 from maxent.quench.ensembles import Charges, Sector
+from maxent.quench.potentials import Potentials
 from maxent.quench.spectrum import Spectrum
 from maxent.quench.starts import Start
 
@@ -33,6 +34,8 @@ class Setting:
         That of the start; None when nothing is without spread.
     reference : dict of sites to ndarray
         Reduced states of the dephased state, by the sites of the block.
+    potentials : Potentials
+        Numbers and field charges.
     progress : callable or None
     notes : list of str
         Grows as the parts find what the reader must know.
@@ -45,6 +48,7 @@ class Setting:
     targets: dict[str, tuple[float, float]]
     sector: Sector | None
     reference: dict[tuple[int, ...], np.ndarray]
+    potentials: Potentials
     progress: Callable[[str], None] | None = None
     notes: list[str] = field(default_factory=list)
 
