@@ -15,6 +15,7 @@ import numpy as np
 from numpy.polynomial import chebyshev
 
 from maxent.core.contract import EPS, Family
+from maxent.families.density import MatricesState
 from maxent.families.microstates import Microstates
 from maxent.quench.forces import Response
 from maxent.result import Result
@@ -37,17 +38,25 @@ class SelfCheck:
     difference : float
         Largest difference between the two routes, relative to the size of what is compared.
     allowed : float
-    detail : str
-        The two numbers that differ most.
+    found, expected : float
+        The two numbers that differ most; NaN where there was nothing to compare.
     """
 
     name: str
     difference: float
     allowed: float
-    detail: str
+    found: float = math.nan
+    expected: float = math.nan
 
     def __bool__(self) -> bool:
         return bool(self.difference <= self.allowed)
+
+    @property
+    def detail(self) -> str:
+        """The two numbers, in words."""
+        if math.isnan(self.found) and math.isnan(self.expected):
+            return "nothing to compare" if self else "no numbers to compare"
+        return f"{self.found:.12g} against {self.expected:.12g}"
 
     def __str__(self) -> str:
         word = "agrees" if self else "FAILS"
@@ -87,7 +96,12 @@ def chebyshev_slopes(
 
 
 def check_result(
-    result: Result, family: Family, *, nodes: int = NODES, progress: Callable[[str], None] | None = None
+    result: Result,
+    family: Family,
+    *,
+    nodes: int = NODES,
+    every: bool = True,
+    progress: Callable[[str], None] | None = None,
 ) -> tuple[SelfCheck, ...]:
     """Check a solved result: entropy, values and covariance against the spectrum and against differences.
 
@@ -98,7 +112,10 @@ def check_result(
     family : Family
         The one that was solved.
     nodes : int, optional
-        Evaluations per charge.
+        Evaluations along each direction.
+    every : bool, optional
+        Whether differences are taken along every multiplier, which costs `nodes` evaluations for each and compares the
+        whole covariance and its symmetry; otherwise along one combination of all of them.
     progress : callable, optional
 
     Returns
@@ -125,41 +142,55 @@ def check_result(
     spectral, dual = _entropy(result.state, family), float(family.evaluate(lam, 0).log_partition + lam @ q)
     checks = [_compared("entropy, spectrum against ln Z + lam.q", spectral, dual, 1 + np.abs(lam) @ np.abs(q), SUM)]
     level = 4 * EPS * (1 + float(family.evaluate(lam, 2).level))
-    noise, slopes, bends, jacobian = (
-        np.zeros((2, len(q))),
-        np.zeros(len(q)),
-        np.zeros(len(q)),
-        np.zeros((len(q), len(q))),
-    )
     live = np.flatnonzero(spread > 0)
-    for j in live:
+    unit = spread[live]
+    axes = np.eye(len(lam))[live] / unit[:, None]
+    if not every and len(live) > 1:
+        # unequal weights of both signs: no charge and no pair of charges drops out
+        weights = (-1.0) ** np.arange(len(live)) / np.sqrt(1.0 + np.arange(len(live)))
+        axes = weights[None] @ axes
+        length = float(np.sqrt(axes[0] @ chi @ axes[0]))
+        axes = axes / length if length > 0 else axes
+    n = len(axes)
+    noise, slopes, bends, moved = np.zeros((2, n)), np.zeros(n), np.zeros(n), np.zeros((len(live), n))
+    for k, axis in enumerate(axes):
         if progress is not None:
-            progress(f"differences of ln Z by the multiplier of {names[j]}")
-        axis = np.zeros(len(lam))
-        axis[j] = 1.0
-        reach = -family.lowest(axis).value - family.lowest(-axis).value
-        radius = min(0.3 / spread[j], 2.0 / reach)
+            what = f"the multiplier of {names[live[k]]}" if n == len(live) else "one combination of the multipliers"
+            progress(f"differences of ln Z by {what}")
+        radius = _radius(family, lam, axis)
         # rounding of ln Z, carried by the derivatives of the polynomials at the middle of the interval
-        steep = 1 / (radius * spread[j])
-        noise[:, j] = level * nodes**1.5 * steep, level * nodes**2.5 * steep**2
+        noise[:, k] = level * nodes**1.5 / radius, level * nodes**2.5 / radius**2
 
         def along(t: float, axis: np.ndarray = axis) -> np.ndarray:
             found = family.evaluate(lam + t * axis, 1)
             return np.concatenate([[found.log_partition], found.values])
 
         first, second = chebyshev_slopes(along, 0.0, radius, nodes=nodes)
-        slopes[j], bends[j], jacobian[:, j] = -first[0], second[0], -first[1:]
-    unit = spread[live]
-    inner = lambda a: a[np.ix_(live, live)] / np.outer(unit, unit)
+        slopes[k], bends[k], moved[:, k] = -first[0], second[0], -first[1:][live] / unit
     size = np.max((np.abs(q[live]) + unit) / unit, initial=1.0)
     first, second = np.maximum((FIRST, SECOND), noise.max(axis=1, initial=0.0)).tolist()
-    return (
-        *checks,
-        _compared("values against differences of ln Z", slopes[live] / unit, q[live] / unit, size, first),
-        _compared("covariance against differences of the values", inner(jacobian), inner(chi), size, first),
-        _compared("symmetry of these differences (Maxwell)", inner(jacobian), inner(jacobian).T, size, first),
-        _compared("variances against second differences of ln Z", bends[live] / unit**2, np.ones(len(live)), 1, second),
-    )
+    checks += [
+        _compared("values against differences of ln Z", slopes, axes @ q, size, first),
+        _compared(
+            "covariance against differences of the values", moved, chi[live] @ axes.T / unit[:, None], size, first
+        ),
+    ]
+    if n == len(live):
+        checks.append(_compared("symmetry of these differences (Maxwell)", moved, moved.T, size, first))
+    return (*checks, _compared("variances against second differences of ln Z", bends, np.ones(n), 1, second))
+
+
+def _radius(family: Family, lam: np.ndarray, axis: np.ndarray) -> float:
+    """How far differences reach along a direction in which the standard deviation is 1.
+
+    Zeros of Z are farther away than a small share of 1, and than one over the range of the combination; where the
+    charges have no upper end, ln Z ends at some multipliers.
+    """
+    reach = -family.lowest(axis).value - family.lowest(-axis).value
+    radius = min(0.3, 2.0 / reach) if math.isfinite(reach) else 0.3
+    while not all(math.isfinite(family.evaluate(lam + s * radius * axis, 0).log_partition) for s in (-2, 2)):
+        radius /= 2
+    return radius
 
 
 def check_response(
@@ -170,6 +201,7 @@ def check_response(
     at: float,
     radius: float,
     nodes: int = NODES,
+    fits: bool = True,
 ) -> tuple[SelfCheck, ...]:
     """Check the answer to a parameter against families built, and solved again, at other values of it.
 
@@ -183,6 +215,8 @@ def check_response(
     at, radius : float
         Nodes lie in ``[at - radius, at + radius]``.
     nodes : int, optional
+    fits : bool, optional
+        Whether problems are solved again at every node, for the Maxwell relation.
 
     Returns
     -------
@@ -192,6 +226,13 @@ def check_response(
     names = tuple(response.values)
     lam = np.array([multipliers[n] for n in names])
     first, second = chebyshev_slopes(lambda a: family_at(a).evaluate(lam, 0).log_partition, at, radius, nodes=nodes)
+    size = lambda x: 1.0 + float(np.max(np.abs(x)))
+    checks = (
+        _compared("d ln Z/da against differences", first, response.log_partition, size(first), FIRST),
+        _compared("d2 ln Z/da2 against differences", second, response.curvature, size(second), SECOND),
+    )
+    if not fits:
+        return checks
     targets = dict(zip(names, np.asarray(family_at(at).evaluate(lam, 1).values).tolist(), strict=True))
 
     def refit(a: float) -> list[float]:
@@ -200,20 +241,18 @@ def check_response(
 
     moved, _ = chebyshev_slopes(refit, at, radius, nodes=nodes)
     known = np.array([response.multipliers[n] for n in names])
-    size = lambda x: 1.0 + float(np.max(np.abs(x)))
-    return (
-        _compared("d ln Z/da against differences", first, response.log_partition, size(first), FIRST),
-        _compared("d2 ln Z/da2 against differences", second, response.curvature, size(second), SECOND),
-        _compared("d lam/da at fixed values against new fits (Maxwell)", moved, known, size(known), SECOND),
-    )
+    name = "d lam/da at fixed values against new fits (Maxwell)"
+    return (*checks, _compared(name, moved, known, size(known), SECOND))
 
 
 def _entropy(state: Any, family: Family) -> float:
-    """Entropy from the populations alone."""
+    """Entropy of the state by itself: from its populations where it has them, else from its spectrum of modes."""
     if isinstance(family, Microstates):
         p, weights = state.weights, family.degeneracy
         logs = np.log(np.where(p > 0, p, 1.0)) - (0.0 if weights is None else weights)
         return -float(p @ logs)
+    if not isinstance(state, MatricesState):
+        return float(state.entropy)
     p = state.populations
     p = p[p > 0]
     return -math.fsum(p * np.log(p))
@@ -222,9 +261,8 @@ def _entropy(state: Any, family: Family) -> float:
 def _compared(name: str, found: Any, expected: Any, size: float, allowed: float) -> SelfCheck:
     a, b = np.atleast_1d(np.asarray(found, float)), np.atleast_1d(np.asarray(expected, float))
     if not a.size:
-        return SelfCheck(name, 0.0, allowed, "nothing to compare")
+        return SelfCheck(name, 0.0, allowed)
     difference = np.abs(a - b)
     worst = np.unravel_index(int(np.argmax(np.where(np.isnan(difference), np.inf, difference))), a.shape)
     relative = float(difference[worst] / size)
-    detail = f"{a[worst]:.12g} against {b[worst]:.12g}"
-    return SelfCheck(name, relative if math.isfinite(relative) else math.inf, allowed, detail)
+    return SelfCheck(name, relative if math.isfinite(relative) else math.inf, allowed, float(a[worst]), float(b[worst]))
