@@ -17,12 +17,16 @@ import scipy.sparse as sp
 
 from maxent.core.contract import Family
 from maxent.core.slack import Slack
-from maxent.diagnose.proofs.bounds import above, below, scaled
+from maxent.diagnose.proofs.bounds import Bound, above, below, scaled
 from maxent.diagnose.proofs.cholesky import lowest_eigenvalue
+from maxent.diagnose.proofs.free import bound_of_bilinears, bound_of_modes
 from maxent.diagnose.proofs.interior import Part, reachable_ball
 from maxent.diagnose.proofs.listed import lowest_listed
+from maxent.diagnose.proofs.sums import dot
+from maxent.families.bilinears import Bilinears
 from maxent.families.matrices import Matrices
 from maxent.families.microstates import Microstates
+from maxent.families.modes import Modes
 
 __all__ = ["NOT_PROVABLE", "NO_METHOD", "PROVED", "Proof", "prove_interior", "prove_outside"]
 
@@ -64,6 +68,39 @@ class Proof:
         return self.status == PROVED
 
 
+@singledispatch
+def _bound(family: Any, v: np.ndarray, targets: np.ndarray) -> Bound | None:
+    """Lower bound of ``v.(Q - q)`` from the charges as they were given; None where the numbers overflow.
+
+    Raises
+    ------
+    _NoMethodError
+    """
+    return _lowest(_given(family), v, targets)
+
+
+@_bound.register
+def _(family: Modes, v: np.ndarray, targets: np.ndarray) -> Bound | None:
+    return bound_of_modes(family, v, targets)
+
+
+@_bound.register
+def _(family: Bilinears, v: np.ndarray, targets: np.ndarray) -> Bound | None:
+    if not family.is_given:
+        raise _NoMethodError("the charges of this family were computed (combined, or cut to a face), not given")
+    if any(not q.conserves_number for q in family.operators().values()) and family.statistics == "bosons":
+        raise _NoMethodError("for bosons with pairing or linear terms there is none")
+    return bound_of_bilinears(family, v, targets)
+
+
+class _NoMethodError(Exception):
+    """Nothing can be proved of a family; the text says why."""
+
+
+def _no_method(why: str) -> Proof:
+    return Proof(NO_METHOD, float("nan"), None, "", f"{why}; the evidence is the one of float64")
+
+
 @dataclass(frozen=True)
 class _Given:
     """Charges to the last bit: numbers on single states (m, n), and blocks of m matrices each."""
@@ -80,28 +117,21 @@ class _Given:
         return largest
 
 
-@singledispatch
-def _given(family: Any) -> _Given | None:
-    """The charges of a family as they were given; None where there is no proof method."""
-    return None
+def _given(family: Family) -> _Given:
+    """The charges of a family as they were given.
 
-
-@_given.register
-def _(family: Microstates) -> _Given | None:
-    return _Given(np.asarray(family.blocks.diagonal, float), ())
-
-
-@_given.register
-def _(family: Matrices) -> _Given | None:
+    Raises
+    ------
+    _NoMethodError
+    """
+    if isinstance(family, Microstates):
+        return _Given(np.asarray(family.blocks.diagonal, float), ())
+    if not isinstance(family, Matrices):
+        raise _NoMethodError(f"{type(family).__name__} does not list its charges exactly")
     charges = family.as_given()
-    return None if charges is None else _Given(*charges)
-
-
-def _no_method(family: Family) -> Proof:
-    why = f"{type(family).__name__} does not list its charges exactly"
-    if isinstance(family, Matrices):
-        why = "the charges of this family were computed (combined, compressed or rebuilt), not given"
-    return Proof(NO_METHOD, float("nan"), None, "", f"{why}; the evidence is the one of float64")
+    if charges is None:
+        raise _NoMethodError("the charges of this family were computed (combined, compressed or rebuilt), not given")
+    return _Given(*charges)
 
 
 # ---------------------------------------------------------------- certificates
@@ -127,23 +157,29 @@ def prove_outside(
     margin : float
         What float64 says, for the sentence.
     """
-    given = _given(family)
-    if given is None:
-        return _no_method(family)
-    open_ = _support(slack, v)
-    if open_ is None:
-        detail = "the targets do not limit v.(Q - q): the direction has a charge with no limit on that side"
-        return Proof(NOT_PROVABLE, float("-inf"), None, "", detail)
-    found = _lowest(given, v, targets)
+    try:
+        found = _bound(family, v, targets) if np.isfinite(v).all() else None
+    except _NoMethodError as none:
+        return _no_method(str(none))
+    except (OverflowError, np.linalg.LinAlgError):  # the latter: no convergence of the eigenvalues
+        found = None
     if found is None:
         detail = "the numbers overflow, or no decomposition could be completed"
         return Proof(NOT_PROVABLE, float("nan"), None, "", detail)
-    lowest, exact, method = found
-    lowest -= open_
-    loss = _product(np.abs(v), accuracy)
+    if found.lowest is None:
+        detail = "v.(Q - q) has no lowest value: a level lies below zero by more than rounding"
+        return Proof(NOT_PROVABLE, float("-inf"), None, found.method, detail)
+    open_ = _support(slack, found.direction)
+    if open_ is None:
+        detail = "the targets do not limit v.(Q - q): the direction has a charge with no limit on that side"
+        return Proof(NOT_PROVABLE, float("-inf"), None, "", detail)
+    lowest, exact, method = found.lowest - open_, found.exact, found.method
+    loss = dot([abs(x) for x in found.direction], accuracy)
     low = below(lowest)
     left = f" - {float(open_):.6g}, which the targets leave open," if open_ else ""
-    claim = f"v.(Q - q){left} >= {low:.6g} in every state ({method}; float64 says {margin:.6g})"
+    moved = found.direction != tuple(Fraction(x) for x in v.tolist())
+    where = " for a direction within rounding of v" if moved else ""
+    claim = f"v.(Q - q){left} >= {low:.6g} in every state{where} ({method}; float64 says {margin:.6g})"
     if kind == "face":
         status, detail = NOT_PROVABLE, f"the targets lie on the boundary: an equality, which no margin proves; {claim}"
         detail += ": taken to the last bit, the targets lie outside" if lowest > loss else ""
@@ -157,43 +193,33 @@ def prove_outside(
     return Proof(status, low, str(lowest) if exact else None, method, detail)
 
 
-def _product(x: np.ndarray, y: np.ndarray) -> Fraction:
-    """``x.y`` exactly."""
-    return sum((Fraction(a) * Fraction(b) for a, b in zip(x.tolist(), y.tolist(), strict=True)), Fraction(0))
+def _support(slack: Slack, direction: Sequence[Fraction]) -> Fraction | None:
+    """Largest ``x.r`` of the residuals r that are allowed, exactly; None where there is none."""
+    on = np.array([x != 0 for x in direction], bool)
+    ends = np.where([x > 0 for x in direction], slack.upper, slack.lower)[on]
+    return dot([x for x in direction if x], ends) if np.isfinite(ends).all() else None
 
 
-def _support(slack: Slack, v: np.ndarray) -> Fraction | None:
-    """Largest ``v.r`` of the residuals r that are allowed, exactly; None where there is none."""
-    on = v != 0
-    ends = np.where(v > 0, slack.upper, slack.lower)[on]
-    return _product(v[on], ends) if np.isfinite(ends).all() and np.isfinite(v).all() else None
-
-
-def _lowest(given: _Given, v: np.ndarray, targets: np.ndarray) -> tuple[Fraction, bool, str] | None:
-    """Lower bound of ``v.(Q - q)``, whether it is the minimum itself, and how it was found."""
-    if not np.isfinite(v).all():
-        return None
+def _lowest(given: _Given, v: np.ndarray, targets: np.ndarray) -> Bound | None:
+    """Lower bound of ``v.(Q - q)`` over single states and blocks."""
     pair = scaled(v, given.sizes())
     if pair is None:
         return None
-    w, exponent = pair
+    (w, exponent), direction = pair, tuple(Fraction(x) for x in v.tolist())
     back = Fraction(2) ** exponent
-    asked = _product(v, targets)
+    asked = dot(direction, targets)
     lowest: Fraction | None = None
     exact, method = False, ""
-    try:
-        if given.listed.shape[1]:
-            lowest, exact = lowest_listed(w, given.listed)
-            method = EXACT if exact else FLOAT
-        for block in given.blocks:
-            found = lowest_eigenvalue(w, block, asked=asked / back, enough=lowest)
-            if found is None:
-                return None
-            if lowest is None or found[0] < lowest:
-                (lowest, method), exact = found, False
-    except (OverflowError, np.linalg.LinAlgError):  # the latter: no convergence of the eigenvalues
-        return None
-    return None if lowest is None else (lowest * back - asked, exact, method)
+    if given.listed.shape[1]:
+        lowest, exact = lowest_listed(w, given.listed)
+        method = EXACT if exact else FLOAT
+    for block in given.blocks:
+        found = lowest_eigenvalue(w, block, asked=asked / back, enough=lowest)
+        if found is None:
+            return None
+        if lowest is None or found[0] < lowest:
+            (lowest, method), exact = found, False
+    return None if lowest is None else Bound(lowest * back - asked, exact, method, direction)
 
 
 # ---------------------------------------------------------------- solved targets
@@ -221,9 +247,10 @@ def prove_interior(
     -----
     The theorem and its proof stand in `maxent.diagnose.proofs.interior`.  Redundant charges allow no ball.
     """
-    given = _given(family)
-    if given is None:
-        return _no_method(family)
+    try:
+        given = _given(family)
+    except _NoMethodError as none:
+        return _no_method(str(none))
     if not len(targets):
         return Proof(PROVED, float("inf"), None, BALL, "nothing is asked")
     parts = _parts(family, given, state)

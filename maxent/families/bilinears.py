@@ -150,6 +150,11 @@ class Bilinears(Family):
         """Sizes of the blocks that stay matrices, largest first; everything else is numbers."""
         return tuple(sorted((d for a in self.particles.dense for d in [a.shape[2]] * a.shape[1]), reverse=True))
 
+    @property
+    def is_given(self) -> bool:
+        """Whether the charges are those that were given, not results of arithmetic."""
+        return self._given is not None
+
     def operators(self) -> dict[str, Quadratic]:
         """The charges as they were given.
 

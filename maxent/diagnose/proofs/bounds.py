@@ -9,17 +9,40 @@ Floor: diagnose.
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import dataclass
 from fractions import Fraction
 
 import numpy as np
 
-__all__ = ["TINY", "UNIT", "above", "below", "gamma", "matrix_norm", "scaled"]
+__all__ = ["TINY", "UNIT", "Bound", "above", "below", "gamma", "matrix_norm", "scaled"]
 
 #: Unit roundoff of float64, rounding to nearest.
 UNIT = Fraction(1, 2**53)
 
 #: Largest absolute error that one underflow can bring, gradual or flushed to zero.
 TINY = Fraction(1, 2**1022)
+
+
+@dataclass(frozen=True)
+class Bound:
+    """``x.(Q - q)`` lies nowhere below a number, for a direction x.
+
+    Attributes
+    ----------
+    lowest : Fraction or None
+        That number; None where ``x.(Q - q)`` has no lowest value.
+    exact : bool
+        Whether it is the minimum itself.
+    method : str
+        How it was found.
+    direction : tuple of Fraction
+        x: the direction that was asked about, or one within rounding of it.
+    """
+
+    lowest: Fraction | None
+    exact: bool
+    method: str
+    direction: tuple[Fraction, ...]
 
 
 def gamma(k: int) -> Fraction:
