@@ -93,7 +93,7 @@ def update(page: str) -> str:
     str
     """
     return re.sub(
-        r"(<!-- (?:keys: ([a-z ]+)|fields) -->\n).*?(<!-- end -->)",
+        r"(<!-- (?:keys: ([a-z_ ]+)|fields) -->\n).*?(<!-- end -->)",
         lambda found: f"{found[1]}\n{table(found[2]) if found[2] else fields_table()}\n\n{found[3]}",
         page,
         flags=re.DOTALL,

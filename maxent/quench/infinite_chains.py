@@ -27,7 +27,7 @@ from maxent.families.gaussian_states import FermionState, binary_entropy
 from maxent.families.modes import Modes
 from maxent.quench.momentum_averages import average, momentum_nodes
 
-__all__ = ["HardCoreChain", "StationaryState", "TransverseFieldChain"]
+__all__ = ["HardCoreChain", "StationaryState", "TransverseFieldChain", "block_at_nodes", "ensemble_occupations"]
 
 Function = Callable[[np.ndarray], np.ndarray]
 
@@ -80,6 +80,29 @@ class TransverseFieldChain:
         C_{1-m} is -Z_j for m = 1 and ``Y_j Z..Z Y_{j+m-1}`` above: the convention map in docs/gaussian-conventions.md.
         """
         return lambda k: (1 if m == 0 else 2) * self.level(k) * np.cos(m * k)
+
+    def constant(self, m: int) -> float:
+        """Value per site of I_m without excitations, ``-(1/2) sum q(k)``."""
+        q = self.charge(m)
+        return -0.5 * float(average(q))
+
+    def correlations(self, size: int, k: np.ndarray, n: np.ndarray) -> np.ndarray:
+        """What each momentum adds to ``<i g_{2(j+r)} g_{2j+1}>``, r = 1-size .. size-1, at occupations n.
+
+        These are X Z..Z X for r > 0, -Z for r = 0 and Y Z..Z Y for r < 0.
+        """
+        r = np.arange(1 - size, size)[:, None]
+        half = np.maximum(self.level(k) / 2, 1e-300)
+        return (self.coupling * np.cos((r - 1) * k) - self.field * np.cos(r * k)) / half * (1 - 2 * n)
+
+    def block(self, values: np.ndarray) -> FermionState:
+        """State of a block of sites with these correlations."""
+        size = (len(values) + 1) // 2
+        at = np.arange(size)
+        part = values[at[:, None] - at[None, :] + size - 1]
+        g = np.zeros((2 * size, 2 * size))
+        g[0::2, 1::2], g[1::2, 0::2] = part, -part.T
+        return FermionState.of(g)
 
     def cosine(self, k: np.ndarray, before: float) -> tuple[np.ndarray, np.ndarray]:
         """Cosine and sine of the angle between the modes of two fields; `before` may be infinite."""
@@ -152,6 +175,20 @@ class HardCoreChain:
         In spins ``c+_j c_{j+m} + h.c. = (X_j Z..Z X_{j+m} + Y_j Z..Z Y_{j+m})/2``.
         """
         return lambda k: (1 if m == 0 else 2) * np.cos(m * k)
+
+    def constant(self, m: int) -> float:
+        """Value of a charge without particles: 0."""
+        return 0.0
+
+    def correlations(self, size: int, k: np.ndarray, n: np.ndarray) -> np.ndarray:
+        """What each momentum adds to ``<c+_{j+r} c_j>``, r = 1-size .. size-1, at occupations n."""
+        return np.cos(np.arange(1 - size, size)[:, None] * k) * n
+
+    def block(self, values: np.ndarray) -> FermionState:
+        """State of a block of sites with these correlations."""
+        size = (len(values) + 1) // 2
+        at = np.arange(size)
+        return FermionState.of_correlations(values[at[:, None] - at[None, :] + size - 1])
 
     def after_superlattice(self, amplitude: float) -> StationaryState:
         """Half-filled ground state of ``H + A sum (-1)^j n_j``, released into H.
@@ -236,24 +273,8 @@ class StationaryState:
         """
         if size < 1:
             raise ValueError(f"a block has at least one site, not {size}")
-        r = np.arange(1 - size, size)[:, None]
-        if isinstance(self.chain, TransverseFieldChain):
-            j, h = self.chain.coupling, self.chain.field
-
-            def row(k: np.ndarray) -> np.ndarray:
-                half = np.maximum(self.chain.level(k) / 2, 1e-300)
-                return (j * np.cos((r - 1) * k) - h * np.cos(r * k)) / half * (1 - 2 * self.occupations(k))
-
-            # <i g_{2(j+r)} g_{2j+1}> is X Z..Z X for r > 0, -Z for r = 0, Y Z..Z Y for r < 0
-            values = average(row)
-            at = np.arange(size)
-            part = values[at[:, None] - at[None, :] + size - 1]
-            g = np.zeros((2 * size, 2 * size))
-            g[0::2, 1::2], g[1::2, 0::2] = part, -part.T
-            return FermionState.of(g)
-        values = average(lambda k: np.cos(r * k) * self.occupations(k))
-        at = np.arange(size)
-        return FermionState.of_correlations(values[at[:, None] - at[None, :] + size - 1])
+        values = average(lambda k: self.chain.correlations(size, k, self.occupations(k)))
+        return self.chain.block(values)
 
     def mean_word(self, letters: Mapping[int, str]) -> float:
         """Mean of a product of Pauli matrices, sites counted from anywhere.
@@ -295,11 +316,39 @@ class StationaryState:
         result = solve(family, {name: float((row * n) @ weights) for name, row in rows.items()})
         if not result.success or result.state is None or not np.all(np.isfinite(list(result.multipliers.values()))):
             return result, None
-        lam = dict(result.multipliers)
+        return result, StationaryState(self.chain, ensemble_occupations(result.multipliers, charges))
 
-        def occupations(at: np.ndarray) -> np.ndarray:
-            x = sum((lam[name] * q(at) for name, q in charges.items()), np.zeros_like(at))
-            small = np.exp(-np.abs(x))
-            return np.where(x > 0, small, 1.0) / (1 + small)
 
-        return result, StationaryState(self.chain, occupations)
+def ensemble_occupations(multipliers: Mapping[str, float], charges: Mapping[str, Function]) -> Function:
+    """Occupations ``1/(1 + exp(sum lam_j q_j(k)))`` at any momenta.
+
+    Parameters
+    ----------
+    multipliers : mapping of str to float
+        Finite, by name.
+    charges : mapping of str to callable
+        One-particle values at momenta, by the same names.
+    """
+    lam = dict(multipliers)
+
+    def occupations(at: np.ndarray) -> np.ndarray:
+        x = sum((lam[name] * q(at) for name, q in charges.items()), np.zeros_like(at))
+        small = np.exp(-np.abs(x))
+        return np.where(x > 0, small, 1.0) / (1 + small)
+
+    return occupations
+
+
+def block_at_nodes(chain: Any, occupations: np.ndarray, size: int, *, level: int = 9) -> FermionState:
+    """State of neighbouring sites where occupations are known at the nodes of `momentum_nodes` only.
+
+    Parameters
+    ----------
+    chain : TransverseFieldChain or HardCoreChain
+    occupations : (2^level + 1,) ndarray
+    size : int
+        Sites; correlations over `size` sites must be resolved by the nodes.
+    level : int, optional
+    """
+    k, weights = momentum_nodes(level)
+    return chain.block(chain.correlations(size, k, occupations) @ weights)
