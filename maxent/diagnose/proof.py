@@ -22,6 +22,7 @@ from maxent.diagnose.proofs.cholesky import lowest_eigenvalue
 from maxent.diagnose.proofs.free import bound_of_bilinears, bound_of_modes
 from maxent.diagnose.proofs.interior import Part, reachable_ball
 from maxent.diagnose.proofs.listed import lowest_listed
+from maxent.diagnose.proofs.occupations import occupied_ball
 from maxent.diagnose.proofs.sums import dot
 from maxent.families.bilinears import Bilinears
 from maxent.families.matrices import Matrices
@@ -247,16 +248,13 @@ def prove_interior(
     -----
     The theorem and its proof stand in `maxent.diagnose.proofs.interior`.  Redundant charges allow no ball.
     """
-    try:
-        given = _given(family)
-    except _NoMethodError as none:
-        return _no_method(str(none))
     if not len(targets):
         return Proof(PROVED, float("inf"), None, BALL, "nothing is asked")
-    parts = _parts(family, given, state)
     centre = "allowed values" if slack.any else "these"
     try:
-        found = reachable_ball(parts, _allowed(slack, targets, values), accuracy)
+        found = _ball(family, state, _allowed(slack, targets, values), accuracy)
+    except _NoMethodError as none:
+        return _no_method(str(none))
     except OverflowError:
         found = None
     if found is None:
@@ -283,8 +281,22 @@ def _allowed(slack: Slack, targets: np.ndarray, values: np.ndarray) -> np.ndarra
     return out
 
 
-def _parts(family: Family, given: _Given, state: Any) -> list[Part]:
+def _ball(family: Family, state: Any, targets: np.ndarray, accuracy: np.ndarray) -> tuple[Fraction, bool] | None:
+    """A ball of reachable targets around these, and whether it covers the stated accuracy; None without one.
+
+    Raises
+    ------
+    _NoMethodError
+    """
+    if isinstance(family, Modes):
+        if family.edges is not None:
+            raise _NoMethodError("at the edge of a continuum reachable targets need not have multipliers")
+        return occupied_ball(family, state.occupations, targets, accuracy)
+    if isinstance(family, Bilinears):
+        raise _NoMethodError("of quadratic charges certificates are proved, solved targets are not")
+    given = _given(family)
     if isinstance(family, Microstates):
-        return [Part(given.listed, state.weights)]
+        return reachable_ball([Part(given.listed, state.weights)], targets, accuracy)
     parts = [Part(given.listed, state.flat_weights)]
-    return parts + [Part(block, g.weights, g.vectors) for block, g in zip(given.blocks, state.groups, strict=True)]
+    parts += [Part(block, g.weights, g.vectors) for block, g in zip(given.blocks, state.groups, strict=True)]
+    return reachable_ball(parts, targets, accuracy)

@@ -38,7 +38,7 @@ def confined(particles: Any) -> Any:
     if found is None:
         noise = EPS * np.maximum(matrices.scale, 1e-300)
         outcome = decide(Problem(matrices, noise, np.zeros(m)))
-        found = outcome.direction if outcome.verdict is Verdict.INFEASIBLE else None
+        found = outcome.direction if outcome.verdict in (Verdict.INFEASIBLE, Verdict.INCONSISTENT) else None
     if found is None or not _height(matrices, found) > 0:
         raise ValueError(
             "no charge confines the bosons: every combination of the charges has a level at or below zero, so that "

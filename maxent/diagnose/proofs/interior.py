@@ -21,7 +21,7 @@ to 1; how well they were computed decides how large r is, never whether the stat
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from typing import Any
@@ -32,7 +32,7 @@ import scipy.linalg as sla
 from maxent.diagnose.proofs.bounds import TINY, UNIT, above, below, gamma, matrix_norm
 from maxent.diagnose.proofs.combine import dense
 
-__all__ = ["Part", "reachable_ball"]
+__all__ = ["Part", "Sums", "ball", "reachable_ball"]
 
 
 @dataclass(frozen=True)
@@ -55,8 +55,8 @@ class Part:
 
 
 @dataclass
-class _Sums:
-    """B, k, t, g of the theorem in float64, what rounding may add to B and k, and R^2."""
+class Sums:
+    """B, k, t, g of a theorem in float64, what rounding may add to B and k, and R^2."""
 
     overlap: np.ndarray
     overlap_error: np.ndarray
@@ -84,12 +84,17 @@ def reachable_ball(parts: Sequence[Part], targets: np.ndarray, accuracy: np.ndar
 
     None when nothing can be proved.
     """
-    m = len(targets)
+    return ball(lambda transform: _evaluate(parts, targets, transform), accuracy)
+
+
+def ball(evaluate: Callable[[np.ndarray], Sums], accuracy: np.ndarray) -> tuple[Fraction, bool] | None:
+    """The ball that the sums of a transform T prove, with a T that makes B close to 1; as `reachable_ball`."""
+    m = len(accuracy)
     transform = np.eye(m)
     with np.errstate(all="ignore"):
         for attempt in range(3):
             # again: the first whitening of nearly dependent charges is only as good as their covariance
-            sums = _evaluate(parts, targets, transform)
+            sums = evaluate(transform)
             symmetric = 0.5 * (sums.overlap + sums.overlap.T)
             if not np.isfinite(symmetric).all():
                 return None
@@ -128,7 +133,7 @@ def _stretch(transform: np.ndarray) -> Fraction:
     return min(_length(transform), root)
 
 
-def _reach(sums: _Sums, m: int) -> Fraction | None:
+def _reach(sums: Sums, m: int) -> Fraction | None:
     """The radius r of the theorem."""
     numbers = (sums.overlap, sums.overlap_error, sums.residual, sums.residual_error, sums.means, sums.trace)
     if not all(np.isfinite(x).all() for x in numbers):
@@ -142,9 +147,9 @@ def _reach(sums: _Sums, m: int) -> Fraction | None:
     return Fraction(below((1 - off - spread * rest) / below_line))
 
 
-def _evaluate(parts: Sequence[Part], targets: np.ndarray, transform: np.ndarray) -> _Sums:
+def _evaluate(parts: Sequence[Part], targets: np.ndarray, transform: np.ndarray) -> Sums:
     m = len(targets)
-    sums = _Sums(np.zeros((m, m)), np.zeros((m, m)), np.zeros(m), np.zeros(m), 0.0, np.zeros(m))
+    sums = Sums(np.zeros((m, m)), np.zeros((m, m)), np.zeros(m), np.zeros(m), 0.0, np.zeros(m))
     for part in parts:
         if part.vectors is None:
             _add_numbers(sums, part, targets, transform, len(parts))
@@ -156,7 +161,7 @@ def _evaluate(parts: Sequence[Part], targets: np.ndarray, transform: np.ndarray)
     return sums
 
 
-def _add_numbers(sums: _Sums, part: Part, targets: np.ndarray, transform: np.ndarray, count: int) -> None:
+def _add_numbers(sums: Sums, part: Part, targets: np.ndarray, transform: np.ndarray, count: int) -> None:
     """States that carry numbers: F, A and G are diagonal, and F^H F = p."""
     p, f = part.weights, part.charges
     if not len(p):
@@ -176,7 +181,7 @@ def _add_numbers(sums: _Sums, part: Part, targets: np.ndarray, transform: np.nda
     sums.square = max(sums.square, Fraction(float(heights.max())) * (1 + gamma(m + 8)) + m * TINY)
 
 
-def _add_block(sums: _Sums, part: Part, targets: np.ndarray, transform: np.ndarray, count: int) -> None:
+def _add_block(sums: Sums, part: Part, targets: np.ndarray, transform: np.ndarray, count: int) -> None:
     """A block: F = V sqrt(w), G = V^H A V as it comes out, made Hermitian to the last bit."""
     vectors = part.vectors
     assert vectors is not None
