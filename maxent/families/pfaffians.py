@@ -12,7 +12,7 @@ from collections.abc import Mapping
 
 import numpy as np
 
-__all__ = ["Word", "log_pfaffian", "parity_word", "pauli_word", "times", "word_mean"]
+__all__ = ["Word", "complement", "log_pfaffian", "parity_word", "pauli_word", "word_mean"]
 
 #: A phase and the Majorana operators it multiplies, in ascending order.
 Word = tuple[complex, tuple[int, ...]]
@@ -57,22 +57,6 @@ def log_pfaffian(matrix: np.ndarray) -> tuple[complex, float]:
     return sign.item(), total
 
 
-def times(word: Word, letters: tuple[int, ...] | range) -> Word:
-    """`word` times a product of Majorana operators; equal ones annihilate."""
-    phase, out = word[0], list(word[1])
-    for g in letters:
-        k = len(out)
-        while k > 0 and out[k - 1] > g:
-            k -= 1
-        if (len(out) - k) % 2:
-            phase = -phase
-        if k > 0 and out[k - 1] == g:
-            out.pop(k - 1)
-        else:
-            out.insert(k, g)
-    return phase, tuple(out)
-
-
 def pauli_word(letters: Mapping[int, str]) -> Word:
     """The Majorana word of a product of Pauli matrices on different sites, such as ``{0: "X", 3: "X"}``.
 
@@ -107,6 +91,15 @@ def pauli_word(letters: Mapping[int, str]) -> Word:
 def parity_word(sites: int) -> Word:
     """The parity ``prod_j Z_j`` of all sites."""
     return (-1j) ** sites, tuple(range(2 * sites))
+
+
+def complement(word: Word, sites: int) -> Word:
+    """`word` times the parity of all sites: the letters it does not have."""
+    phase, letters = parity_word(sites)
+    own = set(word[1])
+    # g_a moves past the a letters before its like; letters below are not moved when the last ones go first
+    turn = (-1) ** sum(own)
+    return word[0] * phase * turn, tuple(g for g in letters if g not in own)
 
 
 def word_mean(covariance: np.ndarray, word: Word) -> complex:

@@ -16,7 +16,7 @@ from typing import Any, ClassVar
 import numpy as np
 
 from maxent.families.gaussian_states import checked_modes
-from maxent.families.pfaffians import Word, log_pfaffian, parity_word, pauli_word, times
+from maxent.families.pfaffians import Word, complement, log_pfaffian, parity_word, pauli_word
 
 __all__ = ["RingState", "SectorState"]
 
@@ -43,6 +43,8 @@ class SectorState:
         ``(-1)^(number of quasiparticles)``.
     pinned : (2L, 2L) ndarray
         Covariance of what is not free.
+    alone : bool
+        Whether there is exactly one quasiparticle.
     """
 
     parity: int
@@ -52,6 +54,7 @@ class SectorState:
     mean: np.ndarray
     parity_of_levels: int
     pinned: np.ndarray
+    alone: bool = False
 
     def covariance(self, filling: np.ndarray) -> np.ndarray:
         """``<i g_a g_b>`` where ``<i g' g''>`` of quasiparticle k is ``filling[k]``."""
@@ -65,6 +68,10 @@ class SectorState:
     def terms(self) -> Iterator[tuple[float, np.ndarray, int]]:
         """Probability, filling and sign of Gaussian states that make up the sector; sign 0: not projected."""
         s, e = self.parity_of_levels, self.levels
+        if self.alone:
+            for j in np.flatnonzero(self.mean > 1e-18):
+                yield float(self.mean[j]), np.where(np.arange(len(e)) == j, 1.0, -1.0), 0
+            return
         thermal = -np.tanh(0.5 * e)
         if s >= 0 or 1 - np.prod(-thermal) > 0.1:
             yield 1.0, thermal, s
@@ -86,7 +93,7 @@ class SectorState:
         if not self.parity:
             return float(self._plain(word, -np.tanh(0.5 * self.levels)).real)
         phase, letters = parity_word(sites)
-        other = times((word[0] * phase, word[1]), letters)
+        other = complement(word, sites)
         total = 0.0
         for share, filling, sign in self.terms():
             if not sign:

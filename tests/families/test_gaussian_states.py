@@ -2,14 +2,16 @@
 
 from __future__ import annotations
 
+from functools import reduce
+
 import numpy as np
 import pytest
 import scipy.linalg as sla
 
-from maxent.families.antisymmetric import canonical_form
+from maxent.families.antisymmetric import canonical_form, canonical_forms
 from maxent.families.gaussian_distances import relative_entropy, root_fidelity, trace_distance, trace_distance_bounds
 from maxent.families.gaussian_states import BosonState, FermionState, majorana_operators
-from maxent.families.pfaffians import log_pfaffian, pauli_word, times
+from maxent.families.pfaffians import complement, log_pfaffian, pauli_word
 from maxent.families.phase_space import PhaseSpace
 
 
@@ -36,6 +38,22 @@ def test_canonical_form(rng, n, zero_modes):
     np.testing.assert_allclose(form.frame.T @ a @ form.frame, block, atol=1e-12)
     assert np.all(form.levels >= 0)
     assert form.orientation == pytest.approx(np.linalg.det(form.frame), abs=1e-10)
+
+
+@pytest.mark.parametrize("size", [2, 4, 6])
+def test_stacks_of_canonical_forms(rng, size):
+    """Generic blocks, zero blocks, blocks with a zero level, and levels that are equal."""
+    stack = np.array([antisymmetric(rng, size) for _ in range(6)])
+    stack[1] = 0
+    stack[2, :, -1] = stack[2, -1, :] = 0
+    stack[3] = np.kron(np.eye(size // 2), [[0, 1.5], [-1.5, 0]])
+    stack[4, 1:, 0] = stack[4, 0, 1:] = 0
+    form = canonical_forms(stack)
+    for a, e, o, det in zip(stack, form.levels, form.frame, form.orientation, strict=True):
+        np.testing.assert_allclose(o.T @ o, np.eye(size), atol=1e-14)
+        np.testing.assert_allclose(o.T @ a @ o, np.kron(np.diag(e), [[0, 1], [-1, 0]]), atol=1e-13)
+        assert np.all(e >= 0) and det == pytest.approx(np.linalg.det(o), abs=1e-12)
+    np.testing.assert_allclose(np.sort(form.levels[0]), np.linalg.eigvalsh(1j * stack[0])[size // 2 :], atol=1e-13)
 
 
 @pytest.mark.parametrize("n", [0, 2, 6, 9, 40])
@@ -77,9 +95,11 @@ def test_words_are_the_operators_they_stand_for():
         for j in range(4):
             expected = np.kron(expected, one[letters[j]] if j in letters else np.eye(2))
         np.testing.assert_allclose(product, expected, atol=1e-15)
-    phase, word = times((1.0, (1, 3)), (2, 1))
-    assert word == (2, 3)
-    np.testing.assert_allclose(phase * g[2] @ g[3], g[1] @ g[3] @ g[2] @ g[1], atol=1e-15)
+    parity = np.diag([(-1.0) ** bin(i).count("1") for i in range(1 << 4)])
+    for letters in ((), (1, 3), (0, 2, 4, 7), (5,)):
+        phase, rest = complement((1.0, letters), 4)
+        both = [reduce(np.matmul, [g[i] for i in word], np.eye(1 << 4)) for word in (letters, rest)]
+        np.testing.assert_allclose(phase * both[1], both[0] @ parity, atol=1e-15)
 
 
 @pytest.mark.parametrize(("n", "size"), [(2, 0.2), (3, 0.5), (4, 1.0)])

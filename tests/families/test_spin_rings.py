@@ -10,7 +10,7 @@ import maxent
 from maxent.families import Bilinears, Matrices, SpinRing
 from maxent.families.majoranas import from_majoranas
 from maxent.families.projected import filled
-from maxent.families.spin_rings import quadratic_form
+from maxent.families.ring_forms import quadratic_form
 
 LETTERS = {"X": np.array([[0, 1], [1, 0]], complex), "Y": np.array([[0, -1j], [1j, 0]]), "Z": np.diag([1.0 + 0j, -1])}
 
