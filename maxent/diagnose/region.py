@@ -19,14 +19,15 @@ from scipy.sparse.linalg import ArpackNoConvergence, eigsh
 
 from maxent.core.blocks import Blocks
 from maxent.core.contract import Family
+from maxent.families.bilinears import Bilinears
 from maxent.families.finite import Finite
 
 __all__ = ["Region", "region"]
 
 #: Gap between polygon and supporting lines that no picture shows, in units of the larger extent of each axis.
 FINE = 1e-3
-#: Directions at most, and the number below which no picture is worth drawing.
-MOST, LEAST = 128, 24
+#: Directions at most; the number below which no picture is worth drawing; those that look for where a region ends.
+MOST, LEAST, AROUND = 128, 16, 24
 
 Support = Callable[[np.ndarray], tuple[float, np.ndarray | None]]
 #: Angle of a direction, lowest value along it (may be -inf), and a point of the set that has it.
@@ -115,10 +116,13 @@ def region(
         return Region((i, j), zero + corners * unit, outline, False, float("nan"), asked + 4)
     extent = np.where(high - low > 1e-12, high - low, 1.0)
     scaled = lambda theta: _scaled(ask, theta, extent)
-    found, gap = _sandwich([scaled(t) for t in np.arange(8) * np.pi / 4], scaled, budget)
+    first: list[Side] = []
+    for k, (theta, height, point) in enumerate(axes):
+        first += [(theta, height / extent[k % 2], None if point is None else point / extent), scaled(theta + np.pi / 4)]
+    found, gap = _sandwich(first, scaled, budget)
     corners = _corners(np.array([p for _, _, p in found if p is not None]) * extent)
     outline = np.ones(len(corners), bool)
-    return Region((i, j), zero + corners * unit, outline, True, gap, len(found) + 4)
+    return Region((i, j), zero + corners * unit, outline, True, gap, len(found))
 
 
 # ---------------------------------------------------------------------- the support function
@@ -130,20 +134,25 @@ def _support(family: Family) -> tuple[Support, float]:
     Large blocks that are sparse in their own basis are asked by Lanczos' iteration: a picture needs five digits.
     """
     whole: Support = lambda v: (lambda low: (low.value, low.values))(family.lowest(v, with_values=True))
+    if isinstance(family, Bilinears):  # all levels of every block are needed
+        return whole, 2e-4 + sum(a.shape[1] * _levels(a) for a in family.particles.dense)
     if not isinstance(family, Finite):
         return whole, 1e-3
     blocks = family.blocks
     n = blocks.size
-    cost = 1e-4 + 4e-9 * n
-    for a in blocks.dense:
-        d = a.shape[1]
-        cost += (4 if np.iscomplexobj(a) else 2) * (1e-7 * d**2 + 3e-10 * d**3)
+    cost = 1e-4 + 4e-9 * n + sum(_levels(a) for a in blocks.dense)
     if cost < 5e-3:
         return whole, cost
     sparse = _sparse(blocks)
     entries = sparse[0].nnz + sparse[1].nnz
     iterated = 4e-3 + 4e-6 * n + (2e-7 if sparse[0].dtype.kind == "c" else 8e-8) * entries
     return (lambda v: _iterated(sparse, v), iterated) if iterated < cost else (whole, cost)
+
+
+def _levels(block: np.ndarray) -> float:
+    """Seconds for the levels and vectors of a block, from the last axis of an array."""
+    d = block.shape[-1]
+    return (4 if np.iscomplexobj(block) else 2) * (1e-7 * d**2 + 3e-10 * d**3)
 
 
 def _sparse(blocks: Blocks) -> tuple[sp.csr_array, sp.csr_array]:
@@ -253,7 +262,7 @@ def _unbounded(ask: Support, budget: int, around: list[np.ndarray]) -> tuple[np.
         _, height, point = _scaled(ask, theta, np.ones(2))
         return theta, height, point if point is not None and np.abs(point).max() < 5 * far else None
 
-    asked, _ = _sandwich([near(t) for t in np.arange(LEAST) * 2 * np.pi / LEAST], near, max(budget, LEAST))
+    asked, _ = _sandwich([near(t) for t in np.arange(AROUND) * 2 * np.pi / AROUND], near, max(budget, AROUND))
     points = [p for _, _, p in asked if p is not None and np.abs(p).max() < reach]
     inside = np.array([*points, *around] or [np.zeros(2)])
     low, high = inside.min(axis=0), inside.max(axis=0)

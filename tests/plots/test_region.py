@@ -8,7 +8,7 @@ from scipy.spatial import ConvexHull
 import maxent
 from maxent.diagnose import region as module
 from maxent.diagnose.region import region
-from maxent.families import Matrices, Microstates
+from maxent.families import Bilinears, Matrices, Microstates
 from maxent.families.rules import ratio_tail
 
 X, Z = np.array([[0.0, 1.0], [1.0, 0.0]]), np.diag([1.0, -1.0])
@@ -183,6 +183,28 @@ def test_work_is_capped_by_size_and_not_by_a_clock(rng):
     assert few.gap > many.gap
     again = region(family, (0, 1), seconds=0.05)
     assert np.array_equal(few.corners, again.corners)
+
+
+def test_large_quadratic_families_get_few_directions(monkeypatch):
+    """Levels of hopping matrices: the corners are reachable values, and the number of questions is capped."""
+    n = 160
+    hop = lambda k: np.eye(n, k=k) + np.eye(n, k=-k)
+    family = Bilinears({"near": hop(1), "far": hop(2)})
+    asked = []
+    lowest = Bilinears.lowest
+    monkeypatch.setattr(Bilinears, "lowest", lambda self, v, **how: asked.append(v) or lowest(self, v, **how))
+    found = region(family, (0, 1), seconds=0.1)
+    assert found.directions == len(asked) == 16
+    theta = np.linspace(0, 2 * np.pi, 9)[:-1] + 0.1
+    for u in np.stack([np.cos(theta), np.sin(theta)], axis=1):
+        levels = np.linalg.eigvalsh(u[0] * hop(1) + u[1] * hop(2))
+        low = levels[levels < 0].sum()
+        inner = (found.corners @ u).min()
+        extent = np.ptp(found.corners, axis=0)
+        assert -1e-9 <= inner - low <= found.gap * np.linalg.norm(u * extent) * 1.001
+    assert region(family, (0, 1), seconds=0.01) is None
+    many = region(family, (0, 1), seconds=3.0)
+    assert many.directions > 20 and many.gap < found.gap
 
 
 @pytest.mark.parametrize("pair", [(0, 0), (0, 2), (-1, 0), (2, None)])
