@@ -32,6 +32,8 @@ EPS = float(np.finfo(float).eps)
 OFF = 1e-8
 #: Levels closer than this fraction of the spectral width are one level.
 EQUAL = 1e-10
+#: A next level closer than this fraction of the spectral width is told to be close.
+NEAR = 1e-7
 #: Ground spaces up to this dimension are found one vector at a time.
 MOST = 64
 
@@ -242,7 +244,8 @@ def ground_start(
     """Ground state of a Hamiltonian, in general another one than that of the dynamics.
 
     Levels within `rtol` of the spectral width above the lowest are one degenerate level; the start is then the equal
-    mixture of the whole ground space, since no vector in it is distinguished, and its note says so.
+    mixture of the whole ground space, since no vector in it is distinguished, and its note says so, with the distance
+    of the levels where it is more than rounding. Levels further apart are told apart, and the lowest is taken alone.
 
     Parameters
     ----------
@@ -277,14 +280,26 @@ def ground_start(
         vectors, rest = every[:, :n], float(energies[n]) if n < len(energies) else None
     else:
         vectors, rest = _lowest_space(q, width, tolerance, most)
-    low = float(np.real(np.vdot(vectors[:, 0], q @ vectors[:, 0])))
+    image = q @ vectors
+    levels = np.real(np.einsum("ik,ik->k", vectors.conj(), image))
+    low = float(levels.min())
     n = vectors.shape[1]
-    error = np.linalg.norm(q @ vectors - low * vectors, axis=0).max()
+    error = np.linalg.norm(image - low * vectors, axis=0).max()
     gap = None if rest is None else rest - low
     text = f"energy {low:.10g}"
-    if n > 1:
-        text = f"{n}-fold degenerate ground space, taken as the equal mixture of all of it; " + text
-    text += "" if gap is None else f", next level {gap:.3g} higher"
+    apart = float(levels.max()) - low
+    if apart > 64 * EPS * max(abs(low), width):
+        text = (
+            f"the {n} lowest levels lie {apart:.2g} apart, {apart / width:.1g} of the width of the spectrum, and count "
+            f"as one: taken as their equal mixture; {text}"
+        )
+    elif n > 1:
+        text = f"{n}-fold degenerate ground space, taken as the equal mixture of all of it; {text}"
+    if gap is not None:
+        text += f", next level {gap:.3g} higher"
+        if gap < NEAR * width:
+            taken = "the lowest vector alone was taken" if n == 1 else "it is not part of the mixture"
+            text += f", only {gap / width:.1g} of the width of the spectrum: nearly degenerate, but {taken}"
     accuracy = EPS if gap is None else min(float(error) / gap + 2 * EPS, 1.0)
     return Start(np.ascontiguousarray(vectors), np.full(n, 1.0 / n), label, accuracy, f"{label}: {text}.")
 

@@ -119,6 +119,38 @@ class TestGroundStates:
         gap = float(start.note.rsplit("next level ", 1)[1].split()[0])
         assert_allclose(gap, 1 - np.cos(2 * np.pi / 10), rtol=5e-3)  # one magnon of the smallest momentum
 
+    @pytest.mark.parametrize("d", [40, 600])
+    @pytest.mark.parametrize(
+        ("gap", "vectors", "said"),
+        [
+            (0.0, 2, "2-fold degenerate ground space, taken as the equal mixture of all of it; energy -1, next"),
+            (5e-11, 2, "the 2 lowest levels lie 1e-10 apart, 5e-11 of the width of the spectrum, and count as one"),
+            (5e-10, 1, "energy -1, next level 1e-09 higher, only 5e-10 of the width of the spectrum: nearly "
+                       "degenerate, but the lowest vector alone was taken."),
+            (1e-6, 1, "energy -1, next level 2e-06 higher."),
+        ],
+    )  # fmt: skip
+    def test_levels_that_nearly_meet(self, gap, vectors, said, d):
+        """Levels -1, -1 + gap * width, then 0 to 1, in a rotated basis: what is taken, and the words for it."""
+        levels = np.concatenate([[-1.0, -1.0 + 2 * gap], np.linspace(0.0, 1.0, d - 2)])
+        rng = np.random.default_rng(3)
+        a = rng.normal(size=d)
+        mirror = np.eye(d) - 2 * np.outer(a, a) / (a @ a)
+        start = ground_start((mirror * levels) @ mirror, label="trap")
+        assert start.vectors.shape[1] == vectors
+        assert start.note.startswith(f"trap: {said}")
+        assert_allclose(start.weights, 1 / vectors)
+        value, accuracy = start.mean((mirror * np.arange(d)) @ mirror)  # mean number of the level
+        assert abs(value - (vectors - 1) / 2) <= accuracy < 1e-4
+
+    def test_a_level_that_nearly_joins_a_mixture(self):
+        start = ground_start(np.diag([0.0, 0.0, 1e-9, 0.5, 1.0]))
+        assert start.vectors.shape[1] == 2
+        assert start.note.endswith(
+            "2-fold degenerate ground space, taken as the equal mixture of all of it; energy 0, next level 1e-09 "
+            "higher, only 1e-09 of the width of the spectrum: nearly degenerate, but it is not part of the mixture."
+        )
+
     def test_too_large_a_ground_space_is_refused(self):
         with pytest.raises(ValueError, match="holds more than 3 states"):
             ground_start(formula("-Sx[i]*Sx[i+1] - Sy[i]*Sy[i+1] - Sz[i]*Sz[i+1]", Ring(10)), most=3)
