@@ -167,7 +167,7 @@ def plot_eigenstates(comparison: Comparison, observable: str, *, ax: Axes | None
 
 def _window(ax: Axes, comparison: Comparison, name: str) -> None:
     """Mean of the window over one width to each side of its mean energy."""
-    found = [e for e in comparison.ensembles if e.kind == "microcanonical" and name in e.means]
+    found = [e for e in comparison.ensembles if e.label == "Gaussian window" and name in e.means]
     matching = [e for e in found if bool(e.sector) == bool(comparison.sharp)]
     if not matching or not comparison.window:
         return

@@ -34,9 +34,12 @@ _LETTER, _MARK = 0.0505, 0.36
 
 
 def brief_names(ensembles: Iterable[Ensemble]) -> dict[str, str]:
-    """Short name of each label, in order: generalised ensembles by the number of their charges."""
+    """Short name of each label, in order: of ensembles that list their charges by how many these are."""
+    several = {"generalised": "generalised", "microcanonical": "sharp"}
     found = {
-        e.label: f"generalised, {len(e.charges)} charges" if e.kind == "generalised" else short(e.label, 26)
+        e.label: f"{several[e.kind]}, {len(e.charges)} charges"
+        if e.kind in several and len(e.charges) > 1
+        else short(e.label, 26)
         for e in ensembles
     }
     if len(set(found.values())) < len(found):

@@ -150,7 +150,7 @@ def describe_eigenstates(comparison: Comparison, observable: str) -> str:
         f"The dephased value is {_n(comparison.truth[name])}.",
     ]
     for e in comparison.ensembles:
-        if e.kind == "microcanonical" and name in e.means and bool(e.sector) == bool(comparison.sharp):
+        if e.label == "Gaussian window" and name in e.means and bool(e.sector) == bool(comparison.sharp):
             middle, width = comparison.window.get("mean"), comparison.window.get("width")
             said.append(f"The window of width {_n(width)} about {_n(middle)} has {_n(e.means[name])}.")
     for e in comparison.ensembles:

@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 
 from maxent.quench.conservation import Conservation
+from maxent.quench.eigenstate_tests import EigenstateTests
 from maxent.quench.ranking import Ranking
 from maxent.quench.selfchecks import SelfCheck
 from maxent.quench.thermodynamics import Quantity
@@ -42,7 +43,9 @@ class Ensemble:
     ranges : dict of str to (float, float)
         10 % and 90 % quantile over single eigenstates.
     distances : dict of int to float
-        Trace distance to the dephased state on blocks of so many sites.
+        Trace distance to the dephased state on blocks of so many sites; of single eigenstates the median.
+    distance_ranges : dict of int to (float, float)
+        10 % and 90 % quantile over single eigenstates.
     corrections : dict of str to float
         Leading correction of each observable for the difference of the spreads of the charges.
     variances : dict of str to (float, float)
@@ -67,6 +70,7 @@ class Ensemble:
     means: dict[str, float] = field(default_factory=dict)
     ranges: dict[str, tuple[float, float]] = field(default_factory=dict)
     distances: dict[int, float] = field(default_factory=dict)
+    distance_ranges: dict[int, tuple[float, float]] = field(default_factory=dict)
     corrections: dict[str, float] = field(default_factory=dict)
     variances: dict[str, tuple[float, float]] = field(default_factory=dict)
     facts: dict[str, float] = field(default_factory=dict)
@@ -97,6 +101,8 @@ class Comparison:
         The entropy is not comparable with those of ensembles.
     block_bounds : dict of int to float
         Bound on the time-averaged trace distance of a block from its dephased state.
+    block_sites : dict of int to tuple of int
+        Which sites form the block of each size.
     times : (t,) ndarray
     traces : dict of str to (t,) ndarray
     speed, revival : float or None
@@ -110,6 +116,8 @@ class Comparison:
     window : dict of str to float
         Mean energy and width of the window in the matching sector; empty where there is none.
     window_scan : WindowScan or None
+    eigenstate_tests : EigenstateTests
+        Level spacings, scatter of eigenstate values and block distances inside one symmetry sector.
     ranking : Ranking or None
     notes : tuple of str
         What the reader must know, one sentence each.
@@ -131,6 +139,7 @@ class Comparison:
     effective_dimension: float
     dephased_entropy: float
     block_bounds: dict[int, float]
+    block_sites: dict[int, tuple[int, ...]]
     times: np.ndarray
     traces: dict[str, np.ndarray]
     speed: float | None
@@ -141,6 +150,7 @@ class Comparison:
     levels: dict[str, np.ndarray]
     window: dict[str, float]
     window_scan: WindowScan | None
+    eigenstate_tests: EigenstateTests
     ranking: Ranking | None
     notes: tuple[str, ...]
     seconds: dict[str, float]
@@ -189,8 +199,8 @@ class Comparison:
             key: getattr(self, key)
             for key in (
                 "size", "dimension", "hamiltonian", "start_label", "start_note", "sharp", "targets", "initial",
-                "truth", "fluctuations", "effective_dimension", "dephased_entropy", "block_bounds", "speed",
-                "revival", "plateau", "horizon", "window", "notes",
+                "truth", "fluctuations", "effective_dimension", "dephased_entropy", "block_bounds", "block_sites",
+                "speed", "revival", "plateau", "horizon", "window", "notes",
             )
         }  # fmt: skip
         plain["conservation"] = {
@@ -206,6 +216,7 @@ class Comparison:
             {"width": w.width, "centre": w.centre, "mean": w.mean, "beta": w.beta, "entropy": w.entropy}
             for w in self.window_scan.windows
         ]  # fmt: skip
+        plain["eigenstate_tests"] = self.eigenstate_tests.to_dict()
         plain["ranking"] = None if self.ranking is None else asdict(self.ranking)
         return _plain(plain)
 

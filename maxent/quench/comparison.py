@@ -17,10 +17,12 @@ import numpy as np
 from maxent.lattice import OperatorSum
 from maxent.lattice.sites import Sites
 from maxent.quench.averages import time_averages
+from maxent.quench.blocks import block_sites
 from maxent.quench.columns import Comparison, Ensemble
 from maxent.quench.conservation import check_conservation, require_conserved
 from maxent.quench.dephasing import dephase
 from maxent.quench.distances import nested_blocks
+from maxent.quench.eigenstate_tests import eigenstate_tests
 from maxent.quench.ensembles import Charges, find_sector
 from maxent.quench.fits import fitted_columns
 from maxent.quench.microcanonical import microcanonical_columns
@@ -110,13 +112,13 @@ def compare(
         raise ValueError(f"the start has {given.dimension} amplitudes, the Hamiltonian dimension {dimension}")
     clock = Clock(progress)
     notes: list[str] = []
-    sites = _blocks(c.sites, blocks, notes)
+    chosen = _blocks(c.sites, blocks, notes)
     with clock("spectrum"):
         spectrum = c.spectrum(progress=progress)
         spectrum.energies  # noqa: B018  computed on first use; here, so that its time is counted here
     with clock("dephased state"):
         dephased = dephase(spectrum, given)
-        reference = nested_blocks(dephased.state, sites)
+        reference = nested_blocks(dephased.state, list(chosen.values()))
         truth = c.means(dephased.state)
         initial = {n: given.mean(q)[0] for n, q in c.observables.items()}
     with clock("conservation"):
@@ -129,12 +131,16 @@ def compare(
     targets = {n: given.mean(q.matrix()) for n, q in c.operators.items()}
     sector = find_sector(c, given, by_symmetry=by_symmetry)
     potentials = find_potentials(c, conservation.broken, numbers=numbers, fields=fields)
-    setting = Setting(c, given, spectrum, dephased, targets, sector, reference, potentials, progress, notes)
+    setting = Setting(
+        c, given, spectrum, dephased, targets, sector, reference, potentials, progress, conservation.clashes, notes
+    )
     with clock("ensembles"):
         fitted = fitted_columns(setting)
     v = speed if speed is not None else _speed(setting)
     with clock("windows and eigenstates"):
         micro = microcanonical_columns(setting, width=width)
+    with clock("eigenstate tests"):
+        tests = eigenstate_tests(setting)
     with clock("time averages"):
         averages = time_averages(setting, truth, times=times, speed=v, resolution=resolution)
     bounds = {
@@ -161,6 +167,7 @@ def compare(
         effective_dimension=dephased.effective_dimension,
         dephased_entropy=dephased.state.entropy,
         block_bounds=bounds,
+        block_sites=chosen,
         times=averages.times,
         traces=averages.traces,
         speed=v,
@@ -171,6 +178,7 @@ def compare(
         levels=micro.levels,
         window=micro.window,
         window_scan=micro.scan,
+        eigenstate_tests=tests,
         ranking=ranked,
         notes=tuple(notes),
         seconds=clock.seconds,
@@ -189,15 +197,17 @@ def _check(charges: Mapping[str, Any], observables: Mapping[str, Any]) -> None:
         raise ValueError(f"observable {taken[0]!r}: this name is taken in the table of levels; choose another")
 
 
-def _blocks(sites: Sites, blocks: Sequence[int], notes: list[str]) -> list[tuple[int, ...]]:
-    """Sites of each block: the first ones of a ring, those in the middle of a chain; no more than half of all."""
+def _blocks(sites: Sites, blocks: Sequence[int], notes: list[str]) -> dict[int, tuple[int, ...]]:
+    """Sites of each block, no more than half of all, with a note on those that are left out."""
     wanted = [b for b in blocks if 1 <= b <= sites.size // 2]
     if len(wanted) < len(tuple(blocks)):
         notes.append(
             f"Blocks larger than half of the {plural(sites.size, 'site')} are left out: they measure the complement."
         )
-    first = {b: 0 if sites.is_ring else (sites.size - b) // 2 for b in wanted}
-    return [tuple(range(first[b], first[b] + b)) for b in wanted]
+    found = block_sites(sites, wanted)
+    if len(found) < len(set(wanted)):
+        notes.append(f"Blocks of more than {plural(max(found), 'site')} are left out: bonds connect no more.")
+    return found
 
 
 def _speed(setting: Setting) -> float | None:

@@ -9,7 +9,9 @@ import numpy as np
 
 from maxent.families.density import MatricesState
 
-__all__ = ["block_distances", "nested_blocks", "relative_entropy", "root_fidelity", "trace_distance"]
+__all__ = [
+    "block_distances", "nested_blocks", "nested_states", "relative_entropy", "root_fidelity", "trace_distance",
+]  # fmt: skip
 
 #: Eigenvalues of a density matrix below this are rounding.
 NOTHING = 1e-15
@@ -76,16 +78,34 @@ def nested_blocks(state: MatricesState, blocks: Sequence[tuple[int, ...]]) -> di
     if not blocks:
         return {}
     largest = max(blocks, key=len)
-    whole = state.reduced(largest)
     assert state.dims is not None
+    return nested_states(state.reduced(largest), state.dims, largest, blocks)
+
+
+def nested_states(
+    whole: np.ndarray, dims: Sequence[int], largest: tuple[int, ...], blocks: Sequence[tuple[int, ...]]
+) -> dict[tuple[int, ...], np.ndarray]:
+    """States of blocks that lie inside the largest, traced out of its state, or of many at once.
+
+    Parameters
+    ----------
+    whole : (..., k, k) ndarray
+        State of the largest block, its sites in the order given.
+    dims : sequence of int
+        Dimensions of all sites.
+    largest : tuple of int
+    blocks : sequence of tuples of int
+        Each a run of neighbouring entries of the largest.
+    """
     out = {}
     for sites in blocks:
         first = largest.index(sites[0])
         left, mid, right = (
-            int(np.prod([state.dims[i] for i in part], dtype=int))
+            int(np.prod([dims[i] for i in part], dtype=int))
             for part in (largest[:first], sites, largest[first + len(sites) :])
         )
-        out[sites] = np.einsum("aibajb->ij", whole.reshape(left, mid, right, left, mid, right))
+        shape = (*whole.shape[:-2], left, mid, right, left, mid, right)
+        out[sites] = np.einsum("...aibajb->...ij", whole.reshape(shape))
     return out
 
 

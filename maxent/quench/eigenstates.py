@@ -27,6 +27,7 @@ from maxent.quench.windows import SPACINGS, GaussianWindow, SharpWindow
 __all__ = [
     "EigenstateRange", "Scatter", "block_scatter", "decay_exponent", "eigenstate_means", "eigenstate_range",
     "eigenstate_scatter", "matching_levels", "reduced_states", "sector_spectrum", "smoothed_mean",
+    "weighted_quantiles",
 ]  # fmt: skip
 
 #: A sector whose restricted Hamiltonian leaves this much (of its norm) outside is no sector.
@@ -253,8 +254,14 @@ def eigenstate_range(
     e = window.levels.energies
     index = int(inside[np.argmin(np.abs(e[inside] - asked))])
     equal = int(np.sum(window.levels.clusters[inside] == window.levels.clusters[index]))
-    low, median, high = np.quantile(x[inside], [0.1, 0.5, 0.9], weights=window.weights[inside], method="inverted_cdf")
-    return EigenstateRange(index, float(e[index]), float(x[index]), equal, float(median), float(low), float(high))
+    low, median, high = weighted_quantiles(x[inside], window.weights[inside])
+    return EigenstateRange(index, float(e[index]), float(x[index]), equal, median, low, high)
+
+
+def weighted_quantiles(values: Any, weights: Any) -> tuple[float, float, float]:
+    """10 % quantile, median and 90 % quantile of values (n,) with weights (n,): values that occur, none between."""
+    low, median, high = np.quantile(values, [0.1, 0.5, 0.9], weights=weights, method="inverted_cdf")
+    return float(low), float(median), float(high)
 
 
 def matching_levels(labels: Any, populations: Any, *, least: float = 1e-10) -> np.ndarray:

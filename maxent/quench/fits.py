@@ -17,6 +17,7 @@ from maxent.quench.potentials import thermodynamic_facts
 from maxent.quench.setting import Setting
 from maxent.quench.starts import Start
 from maxent.result import Result
+from maxent.text import listing
 
 __all__ = ["fitted_columns", "nested_sets"]
 
@@ -25,10 +26,21 @@ def fitted_columns(setting: Setting) -> list[Ensemble]:
     """Every nested set of charges fitted to the start."""
     charges, sector = setting.charges, setting.sector
     covariance = start_covariance(setting.start, [op.matrix() for op in charges.operators.values()])
-    out = []
+    out: list[Ensemble] = []
+    shown: dict[tuple[str, ...], str] = {}  # label by the charges that are not fixed in the sector
     for kind, names in nested_sets(setting):
         label = kind if kind != "generalised" else f"generalised: {', '.join(names)}"
         for inside in (None, sector) if sector is not None else (None,):
+            if inside is not None:
+                free = tuple(n for n in names if n not in inside.charges)
+                if free in shown:
+                    fixed = [n for n in names if n in inside.charges]
+                    setting.notes.append(
+                        f"In the sector of the start {listing(fixed, 'and')} {'is' if len(fixed) == 1 else 'are'} "
+                        f"fixed, and {label} is the same state as {shown[free]}: it is shown once."
+                    )
+                    continue
+                shown[free] = label
             setting.say(f"{label}{'' if inside is None else ', in the sector of the start'}")
             result = charges.fit(names, setting.targets, inside)
             sharp = {} if inside is None else inside.values

@@ -1,20 +1,28 @@
 """Windows and single eigenstates as columns of a comparison.
 
-Floor: quench.  The windows themselves are those of `maxent.quench.windows`.  Must not know fits or dynamics.
+Gaussian windows and sharp ones stand beside each other, over all sectors and inside that of the start.  A sharp window
+is as wide as a flat distribution of the same spread, ``sqrt(12)`` times the standard deviation in the start, and lies
+where its mean comes closest to that of the start; numbers and field charges join it with limits of their own, or are
+held where they have no spread.  The windows themselves are those of `maxent.quench.windows`.  Floor: quench.  Must not
+know fits or dynamics.
 """
 
 from __future__ import annotations
 
-from typing import NamedTuple
+import math
+from collections.abc import Mapping
+from dataclasses import replace
+from typing import Any, NamedTuple
 
 import numpy as np
 
 from maxent.quench.columns import Ensemble
-from maxent.quench.distances import block_distances
-from maxent.quench.eigenstates import eigenstate_range
-from maxent.quench.levels import levels
+from maxent.quench.distances import block_distances, nested_states, trace_distance
+from maxent.quench.eigenstates import eigenstate_range, reduced_states, weighted_quantiles
+from maxent.quench.levels import Levels, levels
 from maxent.quench.setting import Setting
-from maxent.quench.windows import GaussianWindow, WindowScan, gaussian_window, scan_widths
+from maxent.quench.windows import SPACINGS, GaussianWindow, WindowScan, gaussian_window, scan_widths, sharp_window
+from maxent.text import listing, number, plural
 
 __all__ = ["Microcanonical", "matching_levels", "microcanonical_columns"]
 
@@ -22,6 +30,16 @@ __all__ = ["Microcanonical", "matching_levels", "microcanonical_columns"]
 SHARP = 1e-10
 #: Widths of the scan, in units of that of the window.
 SCAN = (0.25, 0.5, 1.0, 2.0)
+#: Name of the limit that keeps the sector of the start.
+MATCHING = "sector of the start"
+#: A flat distribution of width D has the variance D^2/12.
+FLAT = math.sqrt(12.0)
+#: The entropy of a sharp window is smoothed over this part of its width before it is differentiated.
+SMOOTHING = 0.25
+#: Positions of a sharp window that are tried, and how often its limits are adjusted in turn.
+POSITIONS, ROUNDS = 401, 3
+#: Single eigenstates whose blocks are compared: at most so many, holding all but this weight of the window.
+EIGENSTATES, LEFT_OUT = 1000, 1e-4
 
 
 class Microcanonical(NamedTuple):
@@ -42,49 +60,24 @@ def microcanonical_columns(setting: Setting, *, width: float | None) -> Microcan
     width : float or None
         Width of the Gaussian window; by default the energy spread of the start.
     """
-    charges, sector, spectrum = setting.charges, setting.sector, setting.spectrum
-    h = charges.hamiltonian
-    energy = setting.targets[h][0]
+    h = setting.charges.hamiltonian
     matching = matching_levels(setting)
-    found = levels(spectrum, energy=h, further={"matching sector": matching.astype(float)})
-    s = width if width is not None else setting.start.spread(charges.operators[h].matrix())
-    out: list[Ensemble] = []
-    inner: GaussianWindow | None = None
-    sharp = s <= SHARP * spectrum.width
-    if sharp:
-        setting.notes.append("No Gaussian window: the start has no spread in energy that could be its width.")
-    for inside in () if sharp else (False, True) if sector is not None else (False,):
-        within = {"matching sector": 1.0} if inside else None
-        try:
-            window = gaussian_window(found, s, mean=energy, within=within)
-        except ValueError as refused:
-            where = " in the sector of the start" if inside else ""
-            setting.notes.append(f"No Gaussian window{where}: {refused}.")
-            continue
-        if inside or sector is None:  # levels of other sectors have no place beside single eigenstates
-            inner = window
-        facts = {"beta": window.beta, "centre": window.centre, "width": window.width, "spacing": window.spacing}
-        out.append(
-            Ensemble(
-                "Gaussian window",
-                "microcanonical",
-                (h,),
-                setting.sharp if inside else {},
-                entropy=window.entropy,
-                means=charges.means(window.state),
-                distances=block_distances(window.state, setting.reference),
-                facts=facts,
-            )
-        )
     data = eigenstate_table(setting, matching)
+    found = levels(setting.spectrum, energy=h, further={MATCHING: matching.astype(float), **_values(setting)})
+    s = width if width is not None else setting.start.spread(setting.charges.operators[h].matrix())
+    if s <= SHARP * setting.spectrum.width:
+        setting.notes.append("No window in energy: the start has no spread in energy that could be its width.")
+        return Microcanonical([], data, {}, None)
+    out, inner = _gaussian_columns(setting, found, s)
+    energy = setting.targets[h][0]
     scan = None
-    within = {"matching sector": 1.0} if sector is not None else None
+    if out:  # where the sector has too few levels the scan is over all states of the last window
+        scan = scan_widths(found, s * np.array(SCAN), mean=energy, within=inner.bounds if inner else None)
+    out += _sharp_columns(setting, found, s)
+    facts: dict[str, float] = {}
     if inner is not None:
         out.append(_single(setting, inner, data, matching))
-    if out:  # where the sector has too few levels the scan is over all sectors
-        limits = within if inner is not None else None
-        scan = scan_widths(found, s * np.array(SCAN), mean=energy, within=limits)
-    facts = {} if inner is None else {"mean": inner.mean, "width": inner.width, "beta": inner.beta}
+        facts = {"mean": inner.mean, "width": inner.width, "beta": inner.beta}
     return Microcanonical(out, data, facts, scan)
 
 
@@ -124,25 +117,180 @@ def eigenstate_table(setting: Setting, matching: np.ndarray) -> dict[str, np.nda
     }
 
 
+def _values(setting: Setting) -> dict[str, np.ndarray]:
+    """Value (d,) in each level of the numbers and field charges that have one there; the others are told."""
+    spectrum, found = setting.spectrum, {}
+    for name, line in setting.lines.items():
+        values = np.empty(spectrum.dimension)
+        constant = True
+        for block in spectrum.blocks:
+            part = line[block.index]
+            constant &= bool(np.ptp(part) <= 1e-9 * max(1.0, float(np.abs(line).max())))
+            values[block.levels] = part[0]
+        if constant:
+            found[name] = values
+    if setting.clashes:
+        each = [f"{a} and {b}" for a, b in setting.clashes]
+        joint = listing([setting.charges.hamiltonian, *found], "and")
+        setting.notes.append(
+            f"No joint window in {listing(each, 'or')}: they do not commute and have no common levels; "
+            f"windows are in {joint}."
+        )
+    return found
+
+
+# ---------------------------------------------------------------------- Gaussian windows
+
+
+def _gaussian_columns(setting: Setting, found: Levels, width: float) -> tuple[list[Ensemble], GaussianWindow | None]:
+    """Gaussian windows over all sectors and in that of the start, and the window there.
+
+    Where symmetries leave too few levels in the sector, the window is in all states with its numbers instead.
+    """
+    energy = setting.targets[found.energy][0]
+    out: list[Ensemble] = []
+    inner: GaussianWindow | None = None
+    numbers = {n: x for n, x in setting.sharp.items() if n in found.values}
+    for inside in (False, True) if setting.sector is not None else (False,):
+        within: dict[str, float] | None = {MATCHING: 1.0} if inside else None
+        label, sector = "Gaussian window", setting.sharp if inside else {}
+        window = _gaussian(setting, found, width, energy, within, " in the sector of the start" if inside else "")
+        if window is None and inside and numbers and not _same(found, {MATCHING: 1.0}, numbers):
+            label = f"Gaussian window at {_pairs(numbers)}"
+            sector = numbers
+            window = _gaussian(setting, found, width, energy, numbers, f" at {_pairs(numbers)}")
+        elif window is not None and (inside or setting.sector is None):
+            inner = window  # levels of other sectors have no place beside single eigenstates
+        if window is not None:
+            facts = {
+                "beta": window.beta, "mean": window.mean, "centre": window.centre, "width": window.width,
+                "spacing": window.spacing,
+            }  # fmt: skip
+            out.append(_column(setting, label, (found.energy,), sector, window, facts))
+    return out, inner
+
+
+def _gaussian(
+    setting: Setting, found: Levels, width: float, energy: float, within: Mapping[str, float] | None, where: str
+) -> GaussianWindow | None:
+    try:
+        return gaussian_window(found, width, mean=energy, within=within)
+    except ValueError as refused:
+        setting.notes.append(f"No Gaussian window{where}: {refused}.")
+        return None
+
+
+def _same(found: Levels, one: Mapping[str, float], other: Mapping[str, float]) -> bool:
+    return bool(np.array_equal(found.inside(one), found.inside(other)))
+
+
+# ---------------------------------------------------------------------- sharp windows
+
+
+def _sharp_columns(setting: Setting, found: Levels, width: float) -> list[Ensemble]:
+    """Sharp windows in the energy, and jointly in the numbers and field charges."""
+    numbers = [n for n in found.values if n not in (found.energy, MATCHING)]
+    held = {n: x for n, x in setting.sharp.items() if n in numbers}
+    free = [n for n in numbers if n not in held]
+    spread = {n: FLAT * setting.start.spread(setting.charges.operators[n].matrix()) for n in free}
+    out = []
+    for inside in (False, True) if setting.sector is not None else (False,):
+        limits = {MATCHING: 1.0} if inside else {}
+        cases: list[tuple[list[str], dict[str, float]]] = [([], {})]  # numbers with limits, and numbers held
+        if free or (held and not inside):  # in the sector those that are held are fixed anyway
+            cases.append((free, {} if inside else held))
+        for among, values in cases:
+            names = [found.energy, *(n for n in numbers if among or values)]
+            label = "sharp window" + (f": {', '.join(names)}" if len(names) > 1 else "")
+            widths = {found.energy: FLAT * width, **{n: spread[n] for n in among}}
+            column = _sharp(setting, found, widths, {**limits, **values})
+            if isinstance(column, str):
+                setting.notes.append(f"No {label}{' in the sector of the start' if inside else ''}: {column}.")
+                continue
+            sector = setting.sharp if inside else {}
+            out.append(replace(column, label=label, charges=tuple(names), sector=sector))
+    return out
+
+
+def _sharp(setting: Setting, found: Levels, widths: Mapping[str, float], held: Mapping[str, float]) -> Ensemble | str:
+    """A sharp window whose means are as close to those of the start as its widths allow, or why there is none."""
+    bounds = _placed(found, widths, {n: setting.targets[n][0] for n in widths}, held)
+    kept = found.inside(bounds)
+    distinct = len(np.unique(found.clusters[kept]))
+    if distinct < SPACINGS:
+        return f"{plural(distinct, 'distinct level')} in a width of {number(widths[found.energy], 4)} are too few"
+    window = sharp_window(found, bounds)
+    facts = {"states": float(np.count_nonzero(kept)), "mean": window.mean}
+    for n in widths:
+        name = "" if n == found.energy else f" of {n}"
+        facts[f"width{name}"] = window.widths[n]
+        facts |= {f"lowest{name}": window.lowest[n], f"highest{name}": window.highest[n]}
+    smoothing = SMOOTHING * widths[found.energy]
+    try:
+        slope = window.slope(smoothing)
+    except ValueError:
+        pass  # too few levels for a slope; the column stands without beta
+    else:
+        facts = {"beta": slope.beta, "beta at": slope.energy, "smoothed over": smoothing, **facts}
+    return _column(setting, "", (), {}, window, facts)
+
+
+def _placed(
+    found: Levels, widths: Mapping[str, float], means: Mapping[str, float], held: Mapping[str, float]
+) -> dict[str, Any]:
+    """Limits of the given widths where the mean of each charge among the states kept comes closest to the one asked."""
+    centres = dict(means)
+    pair = lambda n: (centres[n] - widths[n] / 2, centres[n] + widths[n] / 2)
+    for _ in range(ROUNDS if len(widths) > 1 else 1):
+        for n, width in widths.items():
+            others = {**held, **{m: pair(m) for m in widths if m != n}}
+            values = np.sort(found.values[n][found.inside(others)])
+            if not len(values):
+                continue
+            tried = means[n] + width * np.linspace(-1.0, 1.0, POSITIONS)
+            tried = tried[np.argsort(np.abs(tried - means[n]), kind="stable")]  # of equals the one nearest
+            low = np.searchsorted(values, tried - width / 2)
+            high = np.searchsorted(values, tried + width / 2, side="right")
+            total = np.concatenate([[0.0], np.cumsum(values)])
+            count = high - low
+            mean = np.where(count > 0, (total[high] - total[low]) / np.maximum(count, 1), np.inf)
+            centres[n] = float(tried[np.argmin(np.abs(mean - means[n]))])
+    return {**held, **{n: pair(n) for n in widths}}
+
+
+# ---------------------------------------------------------------------- columns
+
+
+def _column(
+    setting: Setting, label: str, names: tuple[str, ...], sector: dict[str, float], window: Any, facts: dict[str, float]
+) -> Ensemble:
+    return Ensemble(
+        label,
+        "microcanonical",
+        names,
+        sector,
+        entropy=window.entropy,
+        means=setting.charges.means(window.state),
+        distances=block_distances(window.state, setting.reference),
+        facts=facts,
+    )
+
+
 def _single(setting: Setting, window: GaussianWindow, data: dict[str, np.ndarray], matching: np.ndarray) -> Ensemble:
-    spectrum = setting.spectrum
-    medians, ranges, level, count = {}, {}, -1, 1
+    """Median and quantiles over the single eigenstates of a window, each with its probability there."""
+    medians, ranges = {}, {}
     for name in setting.charges.observables:
         full = np.zeros(len(matching))
         full[data["level"]] = data[name]
         r = eigenstate_range(window, full)
-        medians[name], ranges[name], level, count = r.median, (r.low, r.high), r.index, r.degeneracy
-    if level < 0:
-        inside = np.flatnonzero(matching)
-        level = int(inside[np.argmin(np.abs(spectrum.energies[inside] - window.mean))])
-    if count > 1:
+        medians[name], ranges[name] = r.median, (r.low, r.high)
+    closest = eigenstate_range(window, setting.spectrum.energies)
+    if closest.degeneracy > 1:
         setting.notes.append(
-            f"The eigenstate closest to the mean energy is {count}-fold degenerate inside its sector: "
-            "its single values are one choice among many."
+            f"The eigenstate closest to the mean energy is {closest.degeneracy}-fold degenerate inside its sector: "
+            "values of single eigenstates are one choice among many there."
         )
-    weights = np.zeros(spectrum.dimension)
-    weights[level] = 1.0
-    state = spectrum.state(weights)
+    distances, distance_ranges = _single_distances(setting, window)
     return Ensemble(
         "single eigenstate",
         "eigenstate",
@@ -150,6 +298,35 @@ def _single(setting: Setting, window: GaussianWindow, data: dict[str, np.ndarray
         setting.sharp,
         means=medians,
         ranges=ranges,
-        distances=block_distances(state, setting.reference),
-        facts={"energy": float(spectrum.energies[level])},
+        distances=distances,
+        distance_ranges=distance_ranges,
+        facts={"energy": closest.energy},
     )
+
+
+def _single_distances(
+    setting: Setting, window: GaussianWindow
+) -> tuple[dict[int, float], dict[int, tuple[float, float]]]:
+    """Median and quantiles of the distances of the blocks of single eigenstates from the dephased state."""
+    spectrum, blocks = setting.spectrum, list(setting.reference)
+    if not blocks or spectrum.dims is None:
+        return {}, {}
+    heaviest = np.argsort(-window.weights, kind="stable")
+    count = int(np.searchsorted(np.cumsum(window.weights[heaviest]), 1.0 - LEFT_OUT)) + 1
+    chosen = np.sort(heaviest[:count])
+    chosen = chosen[np.argsort(spectrum.energies[chosen], kind="stable")][:: -(-len(chosen) // EIGENSTATES)]
+    largest = max(blocks, key=len)
+    found: dict[int, list[float]] = {len(sites): [] for sites in blocks}
+    for part in np.array_split(chosen, -(-len(chosen) // 64)):
+        states = reduced_states(spectrum.vectors(part), spectrum.dims, largest)
+        for sites, rho in nested_states(states, spectrum.dims, largest, blocks).items():
+            found[len(sites)] += [trace_distance(x, setting.reference[sites]) for x in rho]
+    medians, ranges = {}, {}
+    for block, values in found.items():
+        low, medians[block], high = weighted_quantiles(values, window.weights[chosen])
+        ranges[block] = (low, high)
+    return medians, ranges
+
+
+def _pairs(values: Mapping[str, float]) -> str:
+    return ", ".join(f"{n} = {number(x, 6)}" for n, x in values.items())

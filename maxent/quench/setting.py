@@ -5,10 +5,13 @@ from __future__ import annotations
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, field
+from functools import cached_property
 from types import TracebackType
 
 import numpy as np
+import scipy.sparse as sp
 
+from maxent.lattice.symmetries import SiteMap, find_symmetries
 from maxent.quench.dephasing import Dephased
 from maxent.quench.ensembles import Charges, Sector
 from maxent.quench.potentials import Potentials
@@ -37,6 +40,8 @@ class Setting:
     potentials : Potentials
         Numbers and field charges.
     progress : callable or None
+    clashes : tuple of (str, str)
+        Charges that do not commute with one another.
     notes : list of str
         Grows as the parts find what the reader must know.
     """
@@ -50,6 +55,7 @@ class Setting:
     reference: dict[tuple[int, ...], np.ndarray]
     potentials: Potentials
     progress: Callable[[str], None] | None = None
+    clashes: tuple[tuple[str, str], ...] = ()
     notes: list[str] = field(default_factory=list)
 
     @property
@@ -62,6 +68,34 @@ class Setting:
     def sharp(self) -> dict[str, float]:
         """Values without spread in the start."""
         return {} if self.sector is None else self.sector.values
+
+    @cached_property
+    def inside(self) -> np.ndarray:
+        """Vectors (d, k) of the start in the basis of the spectrum."""
+        basis = self.spectrum.basis
+        return np.asarray(self.start.vectors if basis is None else basis.conj().T @ self.start.vectors)
+
+    @cached_property
+    def basis_amplitudes(self) -> np.ndarray:
+        """Weight (d,) of the start on each state of the basis."""
+        return np.abs(self.inside) ** 2 @ self.start.weights
+
+    @cached_property
+    def hamiltonian_symmetries(self) -> tuple[SiteMap, ...]:
+        """Symmetries of the Hamiltonian alone, those that further charges break included."""
+        return find_symmetries([self.charges.operators[self.charges.hamiltonian]], self.charges.sites)
+
+    @cached_property
+    def lines(self) -> dict[str, np.ndarray]:
+        """Value (d,) of numbers and field charges in each state of the basis, of those that are diagonal there."""
+        found = {}
+        for name in (*self.potentials.numbers, *self.potentials.fields):
+            q = sp.csr_array(self.charges.matrices[name])
+            line = np.real(q.diagonal())
+            rest = abs(q - sp.diags_array(line))
+            if rest.nnz == 0 or rest.max() <= 1e-10 * max(float(np.abs(line).max()), 1e-300):
+                found[name] = line
+        return found
 
     def say(self, text: str) -> None:
         """Tell what is being done."""

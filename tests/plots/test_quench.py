@@ -103,7 +103,8 @@ def test_dots_and_rings_are_the_deviations(neel):
     assert [p[0, 0] for p in dots] == pytest.approx(expected[False], abs=1e-15)
     assert [p[0, 0] for p in rings] == pytest.approx(expected[True], abs=1e-15)
     texts, rows = [t.get_text() for t in ax.get_yticklabels()], ax.get_yticks()
-    whole = [e.label for _ in neel.truth for e in neel.ensembles if not e.sector]
+    names = brief_names(neel.ensembles)
+    whole = [names[e.label] for _ in neel.truth for e in neel.ensembles if not e.sector]
     assert [texts[list(rows).index(p[0, 1])] for p in dots] == whole
     assert [t.get_text() for t in ax.texts] == ["zz", NAME]
 
@@ -190,7 +191,7 @@ def test_trace_with_its_stationary_value(neel):
     assert line(ax, "revival")[:, 0] == pytest.approx(neel.revival)
     for e in neel.ensembles:
         if not e.sector:
-            found = line(ax, e.label)
+            found = line(ax, brief_names(neel.ensembles)[e.label])
             assert found[:, 1] == pytest.approx(e.means["zz"]) and found[:, 0].min() > neel.times[-1]
     low, high = ax.get_ylim()
     assert low < min(neel.traces["zz"]) and high > max(neel.traces["zz"])
