@@ -169,6 +169,9 @@ class Family:
     #: Lower bound of the entropy of any state; the dual below it triggers a look, it is never evidence.
     entropy_floor: float = -np.inf
 
+    #: Whether `stiffness` and `reach` are theorems; a verdict that rests on them alone is otherwise "tested".
+    stiffness_is_proved: bool = True
+
     # ------------------------------------------------------------------ required
 
     @property
@@ -244,6 +247,13 @@ class Family:
     def reach(self) -> Any:
         """Upper bounds (m,) of the spread of each charge, for a first look; infinite where none is known."""
         return np.full(len(self.scale), np.inf)
+
+    def norm_needed(self, lam: np.ndarray, off: np.ndarray, unit: np.ndarray) -> float | None:
+        """A number that, below 1, proves every target within `unit` of the values at `lam` plus `off` to be interior.
+
+        Asked where `stiffness` is not a theorem; None where no proof is known.
+        """
+        return None
 
     def inside(self, lam: Any, step: Any, evaluation: Evaluation) -> Any:
         """`step` as it is where ``ln Z`` is finite everywhere; otherwise one that stays inside the domain, traceable.

@@ -283,6 +283,15 @@ class Bilinears(Family):
         """How fast curvature can fall along `u`; see `maxent.families.stacks.Stacks.stiffness`."""
         return self.particles.stiffness(lam, u, exact=exact)
 
+    @property
+    def stiffness_is_proved(self) -> bool:  # type: ignore[override]
+        """Whether `stiffness` is a theorem: for levels that are numbers."""
+        return not self.particles.dense
+
+    def norm_needed(self, lam: np.ndarray, off: np.ndarray, unit: np.ndarray) -> float | None:
+        """Proof that targets are interior, see `maxent.families.leeway`."""
+        return self.particles.norm_needed(lam, off, unit)
+
     def inside(self, lam: Any, step: Any, evaluation: Evaluation) -> Any:
         """The part of `step` that keeps bosons inside their domain; of fermions all of it."""
         return self.particles.inside(lam, step, evaluation)
