@@ -6,12 +6,16 @@ Must not know: the command line, the report.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from typing import Any
+from collections.abc import Callable, Mapping
+from typing import TYPE_CHECKING, Any
 
 from maxent.app.job import BadInput, Job, Problems, Target
+from maxent.app.kinds._momentum import check_momentum, momentum_section
 from maxent.errors import ResourceError
 from maxent.text import plural
+
+if TYPE_CHECKING:
+    from maxent.app.sections import Section
 
 __all__ = ["METHOD", "SECTORS", "check_gaussian", "gaussian_job"]
 
@@ -27,6 +31,7 @@ SECTORS = (
 
 def check_gaussian(options: Any, problems: Problems) -> None:
     """Note what goes with one method only."""
+    check_momentum(options, problems)
     if options.method != "gaussian":
         if options.sectors != "both":
             problems.add(("sectors",), 'goes with method = "gaussian", which is not given')
@@ -79,6 +84,10 @@ def gaussian_job(options: Any, sites: Any, part: Any, facts: Mapping[str, str], 
     method = f"gaussian: {what}, {plural(family.size, 'mode')}"
     if options.sectors != "both":
         method += f", sectors {options.sectors}"
+    further: Callable[[Any], list[Section]] = lambda result: []
+    if options.momentum is not None:
+        points, drives = options.momentum.points, part.drives
+        further = lambda result: [momentum_section(sites, points, part.start, drives, result)]
     return Job(
         family,
         targets,
@@ -88,4 +97,5 @@ def gaussian_job(options: Any, sites: Any, part: Any, facts: Mapping[str, str], 
         remarks=part.notes,
         mean=gaussian_mean,
         unit="mode",
+        further=further,
     )

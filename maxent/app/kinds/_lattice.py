@@ -27,6 +27,7 @@ from maxent.app.job import (
 )  # fmt: skip
 from maxent.app.kinds._gaussian import METHOD, SECTORS, check_gaussian, gaussian_job
 from maxent.app.kinds._geometry import STRICT, Geometry
+from maxent.app.kinds._momentum import MOMENTUM, Momentum
 from maxent.app.kinds._starts import StartMaker, StartTable, as_start
 from maxent.app.locate import Path
 from maxent.errors import FormulaError, ResourceError
@@ -109,6 +110,7 @@ class LatticeOptions:
     )
     method: Literal["matrices", "gaussian"] = field(default="matrices", metadata=says(METHOD))
     sectors: Literal["both", "even", "odd", "unprojected"] = field(default="both", metadata=says(SECTORS))
+    momentum: Momentum | None = field(default=None, metadata=says(MOMENTUM))
     quench: Quench | None = field(
         default=None,
         metadata=says("With this table, even empty, ensembles are compared with the long-time state: docs/quench.md."),
