@@ -105,6 +105,25 @@ def write_arrays(folder: File, series: Any) -> None:
             _line(out, "weight", "level", c.levels["weight"], "weight of each eigenstate in the start")
             for k, name in enumerate(names):
                 _line(out, f"eigenstate_{k}", "level", c.levels[name], f"mean of {name} in each eigenstate")
+            for s, test in enumerate(c.eigenstate_tests.sectors):
+                _tested(out, s, test, names)
+
+
+def _tested(out: Any, number: int, test: Any, names: list[str]) -> None:
+    """Deviations of the eigenstates of a sector that was tested."""
+    found = [*test.scatter.values(), *test.distances.values()]
+    if not found:
+        return
+    dimension = f"tested_{number}"
+    out.createDimension(dimension, len(found[0].energies))
+    where = ", ".join(f"{n} = {x:g}" for n, x in test.sector.items()) or "all states"
+    _line(out, f"tested_energy_{number}", dimension, found[0].energies, f"energies of eigenstates tested in {where}")
+    for name, scatter in test.scatter.items():
+        text = f"{name} minus its running mean"
+        _line(out, f"tested_{number}_deviation_{names.index(name)}", dimension, scatter.deviations, text)
+    for block, scatter in test.distances.items():
+        text = f"trace distance of a block of size {block} from the window"
+        _line(out, f"tested_{number}_distance_{block}", dimension, scatter.deviations, text)
 
 
 def _line(out: Any, name: str, dimension: str, values: Any, text: str) -> None:

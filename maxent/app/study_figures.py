@@ -93,6 +93,16 @@ def draw(series: Any) -> tuple[Figure, ...]:
             plots.describe_widths(c.window_scan, canonical=beta),
             lambda: plots.plot_widths(c.window_scan, canonical=beta),
         )
+    for k, name in enumerate(names):
+        if len(series.scatter(name)[0]) > 1:
+            add(
+                f"scatter-{k + 1}",
+                f"Scatter of {name} over eigenstates by size",
+                "Standard deviation about the running mean inside one sector, against its number of levels; the "
+                "numbers beside the marks are sizes. Dashed: what eigenstates that thermalise follow.",
+                plots.describe_scatter(series, name),
+                partial(plots.plot_scatter, series, name),
+            )
     if len(series.comparisons) > 1 and series.labels:
         blocks = sorted(set.intersection(*(set(x.block_bounds) for x in series.comparisons)))
         for k, what in enumerate([*names, *blocks[-1:]]):

@@ -19,7 +19,7 @@ from maxent.plots.bars import plot_populations, plot_spectrum
 from maxent.plots.curves import describe_curves, plot_curves
 from maxent.plots.dynamics import plot_eigenstates, plot_trace, plot_widths
 from maxent.plots.plane import plot_region
-from maxent.plots.quench import plot_distances, plot_ensembles, plot_ranking, plot_sizes
+from maxent.plots.quench import plot_distances, plot_ensembles, plot_ranking, plot_scatter, plot_sizes
 from maxent.plots.steps import plot_convergence
 from maxent.plots.style import to_svg
 from maxent.plots.words import (
@@ -27,6 +27,7 @@ from maxent.plots.words import (
     describe_eigenstates,
     describe_ensembles,
     describe_ranking,
+    describe_scatter,
     describe_sizes,
     describe_trace,
     describe_widths,
@@ -34,7 +35,7 @@ from maxent.plots.words import (
 
 __all__ = [
     "describe_curves", "describe_distances", "describe_eigenstates", "describe_ensembles", "describe_ranking",
-    "describe_sizes", "describe_trace", "describe_widths", "plot_convergence", "plot_curves", "plot_distances",
-    "plot_eigenstates", "plot_ensembles", "plot_populations", "plot_ranking", "plot_region", "plot_sizes",
-    "plot_spectrum", "plot_trace", "plot_widths", "to_svg",
+    "describe_scatter", "describe_sizes", "describe_trace", "describe_widths", "plot_convergence", "plot_curves",
+    "plot_distances", "plot_eigenstates", "plot_ensembles", "plot_populations", "plot_ranking", "plot_region",
+    "plot_scatter", "plot_sizes", "plot_spectrum", "plot_trace", "plot_widths", "to_svg",
 ]  # fmt: skip

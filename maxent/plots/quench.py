@@ -26,16 +26,18 @@ from maxent.plots.keys import (
     sector_handle,
     usable,
 )
-from maxent.plots.style import COLOUR, SIZE, drawing, say, short
+from maxent.plots.style import COLOUR, SIZE, decades, drawing, say, short
 
 if TYPE_CHECKING:
     from maxent.quench.comparison import Comparison, Ensemble
     from maxent.quench.ranking import Ranking, Step
     from maxent.quench.sizes import SizeSeries
 
-__all__ = ["plot_distances", "plot_ensembles", "plot_ranking", "plot_sizes"]
+__all__ = ["plot_distances", "plot_ensembles", "plot_ranking", "plot_scatter", "plot_sizes"]
 
 _ORDERS = (("by_entropy", "by entropy"), ("by_distance", "by distance"))
+#: What is smaller is rounding of numbers of order one.
+ROUNDING = 1e-12
 _SEQUENCES = {"L = 4n": "o", "L = 4n + 2": "s", "L odd": "^"}
 
 
@@ -165,11 +167,18 @@ def plot_distances(comparison: Comparison, *, ax: Axes | None = None) -> Axes:
             alone = not any(o.label == e.label and not o.sector for o in ensembles)
             label = names[e.label] if not e.sector or alone else f"_{e.label} in the sector"
             style = ensemble_mark(i, sector=bool(e.sector))
+            for at, block in zip(x, e.distances, strict=True):
+                if block in e.distance_ranges:
+                    ends = e.distance_ranges[block]
+                    known = "10–90 % of eigenstates" in ax.get_legend_handles_labels()[1]
+                    bar = "_10–90 % of eigenstates" if known else "10–90 % of eigenstates"
+                    ax.plot([at, at], ends, color=COLOUR["rule"], lw=3.2, solid_capstyle="butt", zorder=0.6, label=bar)
             ax.plot(x, list(e.distances.values()), label=label, clip_on=False, **style)
         blocks = sorted({b for e in ensembles for b in e.distances})
         ax.set_xlim(blocks[0] - 0.55, blocks[-1] + 0.55)
         ax.set_xticks(blocks)
-        highest = max([*bounds.values(), *(x for e in ensembles for x in e.distances.values())])
+        every = [x for e in ensembles for x in (*e.distances.values(), *(r[1] for r in e.distance_ranges.values()))]
+        highest = max([*bounds.values(), *every])
         ax.set_ylim(0.0, 1.06 * highest if highest > 1e-12 else 1.0)
         ax.set_xlabel("sites of the block")
         ax.set_ylabel("trace distance")
@@ -297,6 +306,62 @@ def plot_sizes(series: SizeSeries, what: str | int, *, sector: bool = False, ax:
         handles += [Line2D([], [], marker=m, label=s, mec=COLOUR["soft"], **shape) for s, m in _SEQUENCES.items()
                     if s in drawn]  # fmt: skip
         key(ax, handles)
+        return ax
+
+
+def plot_scatter(series: SizeSeries, observable: str, *, ax: Axes | None = None) -> Axes:
+    """Scatter of eigenstate values about their running mean, against the number of levels of the sector.
+
+    Both axes are logarithmic.  The dashed guide falls as the inverse root of the number of levels, which eigenstates
+    that thermalise follow; it goes through the largest sector.
+
+    Parameters
+    ----------
+    series : SizeSeries
+    observable : str
+    ax : Axes, optional
+        Where to draw; a new figure without a window by default.
+
+    Returns
+    -------
+    Axes
+
+    Raises
+    ------
+    ValueError
+        No such observable.
+    """
+    for c in series.comparisons:
+        observable_of(c, observable)
+    sizes, dimensions, scatter = series.scatter(observable)
+    seen = scatter > ROUNDING
+    with drawing(ax, (SIZE[0], 2.1 + key_height(3))) as ax:
+        if not len(sizes):
+            return say(ax, "No sector has enough levels for a test.")
+        if not seen.any():
+            return say(ax, "All eigenstates have the same value.")
+        ax.set_xscale("log")
+        ax.set_yscale("log")
+        ends = np.array([dimensions.min() / 1.25, dimensions.max() * 1.25])
+        last = int(np.flatnonzero(seen)[np.argmax(dimensions[seen])])
+        guide = scatter[last] * np.sqrt(dimensions[last] / ends)
+        style: dict[str, Any] = {"color": COLOUR["soft"], "lw": 0.9, "ls": (0, (4, 2)), "zorder": 0.6}
+        ax.plot(ends, guide, label="levels to the power −1/2", **style)
+        for sequence, which in series.sequences().items():
+            here = seen & np.isin(sizes, series.sizes[which])
+            if here.any():
+                style = {"marker": _SEQUENCES[sequence], "ms": 5.0, "color": COLOUR["edge"], "lw": 0.8}
+                ax.plot(dimensions[here], scatter[here], label=sequence, **style)
+                for x, y, n in zip(dimensions[here], scatter[here], sizes[here], strict=True):
+                    ax.annotate(f"{n}", (x, y), xytext=(4, 4), textcoords="offset points", color=COLOUR["soft"])
+        low, high = min(scatter[seen].min(), guide.min()), max(scatter[seen].max(), guide.max())
+        ax.set_xlim(*ends)
+        ax.set_ylim(low / 1.3, high * 1.45)
+        decades(ax.xaxis, *ends)
+        decades(ax.yaxis, low / 1.3, high * 1.45)
+        ax.set_xlabel("levels in the sector")
+        ax.set_ylabel(f"scatter of {short(observable, 22)}", parse_math=False)
+        key(ax)
         return ax
 
 

@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from maxent.plots.keys import observable_of, reading, usable
+from maxent.quench.eigenstates import decay_exponent
 from maxent.quench.yardsticks import Plateau
 from maxent.text import listing, number, plural
 
@@ -21,8 +22,8 @@ if TYPE_CHECKING:
     from maxent.quench.windows import WindowScan
 
 __all__ = [
-    "describe_distances", "describe_eigenstates", "describe_ensembles", "describe_ranking", "describe_sizes",
-    "describe_trace", "describe_widths",
+    "describe_distances", "describe_eigenstates", "describe_ensembles", "describe_ranking", "describe_scatter",
+    "describe_sizes", "describe_trace", "describe_widths",
 ]  # fmt: skip
 
 #: What is smaller is rounding of numbers of order one.
@@ -70,7 +71,7 @@ def describe_distances(comparison: Comparison) -> str:
         return "No blocks were compared."
     blocks = listing([str(b) for b in ensembles[0].distances], "and")
     said = f"Trace distance to the dephased state on blocks of {blocks} {_sites(ensembles[0].distances)}: "
-    said += "; ".join(f"{_where(e)} {_row(e.distances)}" for e in ensembles) + "."
+    said += "; ".join(f"{_where(e)} {_row(e.distances)}{_spans(e)}" for e in ensembles) + "."
     bounds = {b: x for b, x in comparison.block_bounds.items() if x < 1}
     if not bounds:
         return f"{said} No bound on the temporal fluctuations of a block is below 1."
@@ -180,6 +181,33 @@ def describe_sizes(series: SizeSeries, what: str | int, *, sector: bool = False)
     return f"{head}{where}: {'; '.join(said)}." if said else f"No ensemble has values{where}."
 
 
+def describe_scatter(series: SizeSeries, observable: str) -> str:
+    """Scatter of eigenstate values by the number of levels, see `plot_scatter`.
+
+    Raises
+    ------
+    ValueError
+        No such observable.
+    """
+    for c in series.comparisons:
+        observable_of(c, observable)
+    sizes, dimensions, scatter = series.scatter(observable)
+    if not len(sizes):
+        return "No sector has enough levels for a test."
+    if scatter.max() <= _ROUNDING:
+        return "All eigenstates have the same value."
+    rows = zip(scatter, sizes, dimensions, strict=True)
+    each = listing([f"{_n(x)} at {plural(int(n), 'site')} ({plural(int(d), 'level')})" for x, n, d in rows], "and")
+    said = f"Scatter of {observable} over the eigenstates of one sector about their running mean: {each}."
+    if len(sizes) >= 3 and scatter.min() > _ROUNDING and len(set(dimensions)) > 1:
+        power = decay_exponent(dimensions.tolist(), scatter.tolist())
+        said += (
+            f" It goes as the number of levels to the power {_n(-power)}; where eigenstates thermalise the power "
+            "is -1/2, where conserved quantities abound it is near 0."
+        )
+    return said
+
+
 def describe_widths(scan: WindowScan | None, *, canonical: float | None = None) -> str:
     """Slope of the entropy by width of the window, see `plot_widths`."""
     if scan is None or not scan.windows:
@@ -211,6 +239,14 @@ def _sites(blocks: Mapping[int, float]) -> str:
 
 def _row(values: Mapping[int, float]) -> str:
     return listing([_n(x) for x in values.values()], "and")
+
+
+def _spans(e: Ensemble) -> str:
+    """Quantiles of the distances of single eigenstates; empty for ensembles."""
+    if not e.distance_ranges:
+        return ""
+    each = [f"{_n(low)} to {_n(high)}" for low, high in e.distance_ranges.values()]
+    return f" (medians; 10 % to 90 % {listing(each, 'and')})"
 
 
 def _n(x: float | None) -> str:

@@ -63,6 +63,30 @@ class SizeSeries:
         found = [(c.size, self._one(c, label, sector)) for c in self.comparisons]
         return _columns([(n, e.distances[block]) for n, e in found if e is not None and block in e.distances])
 
+    def scatter(self, observable: str) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Scatter of eigenstate values about their running mean inside one sector, by size.
+
+        Sizes whose sector of the start is tested, if there are any; otherwise those where another sector is.
+
+        Parameters
+        ----------
+        observable : str
+
+        Returns
+        -------
+        sizes, dimensions, scatter : (k,) ndarrays
+            Numbers of sites, numbers of levels of the sector, standard deviations.
+        """
+        first = [(c.size, test) for c in self.comparisons for test in c.eigenstate_tests.sectors[:1]]
+        rows = [(n, test) for n, test in first if observable in test.scatter]
+        if any(test.of_start for _, test in rows):
+            rows = [(n, test) for n, test in rows if test.of_start]
+        return (
+            np.array([n for n, _ in rows], int),
+            np.array([test.size for _, test in rows], int),
+            np.array([test.scatter[observable].std for _, test in rows], float),
+        )
+
     def sequences(self) -> dict[str, np.ndarray]:
         """Positions of the sizes of each sequence: odd, multiples of 4, and even others."""
         names = {0: "L = 4n", 2: "L = 4n + 2", 1: "L odd", 3: "L odd"}
