@@ -23,7 +23,7 @@ from maxent.app.study_cells import (
     ratio_cell,
     rounded,
 )
-from maxent.text import combination, listing, plural
+from maxent.text import combination, listing, number, plural
 
 __all__ = ["Table", "tables"]
 
@@ -136,7 +136,7 @@ def _thermodynamics(c: Mapping[str, Any]) -> Table | None:
             failed = [k["name"] for k in checks if not k["agrees"]]
             worst = max(k["difference"] for k in checks if k["difference"] is not None)
             text = f"FAILED: {listing(failed, 'and')}" if failed else f"all {len(checks)} agree"
-            rows.append(("self-checks", text, f"largest relative difference {rounded(worst, 2)}"))
+            rows.append(("self-checks", text, f"largest relative difference {number(worst, 2)}"))
     return Table(
         "Thermodynamics",
         "What the canonical and the grand canonical fit mean; chi is the covariance of the charges.",

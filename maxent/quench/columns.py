@@ -180,9 +180,11 @@ class Comparison:
     def best(self, observable: str | None = None) -> str:
         """Ensemble closest to the truth: in one observable, or on the largest block.
 
-        Of ensembles that lie equally close (within 1e-9) the one with fewest charges is taken.
+        Of the fitted ones over all sectors: windows depend on a width, and small ones hold few states.  Of ensembles
+        that lie equally close (within 1e-9) the one with fewest charges is taken.
         """
-        usable = [e for e in self.ensembles if (e.means or e.distances) and not e.sector and e.kind != "eigenstate"]
+        fitted = [e for e in self.ensembles if e.kind not in ("microcanonical", "eigenstate")]
+        usable = [e for e in fitted if (e.means or e.distances) and not e.sector]
         if not usable:
             return ""
         if observable is not None:

@@ -197,7 +197,8 @@ def _sharp_columns(setting: Setting, found: Levels, width: float) -> list[Ensemb
     for inside in (False, True) if setting.sector is not None else (False,):
         limits = {MATCHING: 1.0} if inside else {}
         cases: list[tuple[list[str], dict[str, float]]] = [([], {})]  # numbers with limits, and numbers held
-        if free or (held and not inside):  # in the sector those that are held are fixed anyway
+        fixed = inside or _same(found, held, {MATCHING: 1.0})  # then those held select nothing that is not shown
+        if free or (held and not fixed):
             cases.append((free, {} if inside else held))
         for among, values in cases:
             names = [found.energy, *(n for n in numbers if among or values)]
