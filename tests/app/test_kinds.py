@@ -33,7 +33,7 @@ def solved(found):
 
 
 def test_kinds_are_found_by_listing_the_folder():
-    assert kinds.names() == ["bosons", "fermions", "infinite_chain", "operators", "spins", "states"]
+    assert kinds.names() == ["bosons", "fermions", "infinite_chain", "levels", "operators", "spins", "states"]
 
 
 # ---------------------------------------------------------------- states
