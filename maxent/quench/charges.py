@@ -10,7 +10,8 @@ from typing import Literal
 
 import numpy as np
 
-from maxent.quench.simplify import Word, formula_text
+from maxent.quench.formula_texts import fermion_formula, formula_text
+from maxent.quench.simplify import Word
 from maxent.quench.strings import Density
 from maxent.text import plural
 
@@ -28,10 +29,11 @@ class LocalCharge:
     range : int
         Sites that its widest word covers.
     words : tuple of (coefficient, letters, place)
-        Pauli strings from their first site that is no identity on, and the place of that site in the unit cell. The
-        coefficients are `fractions.Fraction` where all of them are recognised as such.
+        Pauli strings from their first letter that is no identity on, and the place of that letter in the unit cell. The
+        coefficients are `fractions.Fraction` where all of them are recognised as such. For fermions there is one
+        letter per mode, see `maxent.quench.fermion_words`.
     cell : int
-        Sites per unit cell.
+        Letters per unit cell: sites, or modes of fermions.
     momentum : str
         "0", or "pi" where the sign alternates from cell to cell.
     defect : float
@@ -42,6 +44,8 @@ class LocalCharge:
         Whether this is the Hamiltonian itself.
     names : tuple of str
         Names of the sites of a cell of the lattice, where they have some.
+    species : tuple of str
+        Species of fermions, one empty name where they need none; empty for spins.
     """
 
     range: int
@@ -52,21 +56,27 @@ class LocalCharge:
     exact: bool
     hamiltonian: bool = False
     names: tuple[str, ...] = ()
+    species: tuple[str, ...] = ()
 
     def formula(
         self, letters: Literal["spin", "pauli"] = "spin", *, subscript: str = "i", digits: int | None = None
     ) -> str:
-        """Formula that `maxent.lattice.formula` reads on a ring, proportional to the operator.
+        """Formula that `maxent.lattice.formula` reads on a ring, proportional to the operator up to a constant.
 
         Parameters
         ----------
         letters : "spin" or "pauli"
-            Operators Sx, Sy, Sz or X, Y, Z.
+            Operators Sx, Sy, Sz or X, Y, Z. Fermions have c, dagger(c) and n, and their constant is left out.
         subscript : str
             Name of the free subscript; no parameter may have it.
         digits : int, optional
             Digits of coefficients that are no fractions, for people; default all.
         """
+        if self.species:
+            return fermion_formula(
+                self.words, cell=self.cell, names=self.names, species=self.species, staggered=self.momentum == "pi",
+                subscript=subscript, digits=digits,
+            )  # fmt: skip
         return formula_text(
             self.words, cell=self.cell, names=self.names, staggered=self.momentum == "pi", spin=letters == "spin",
             subscript=subscript, digits=digits,
@@ -137,23 +147,28 @@ class LocalCharges:
     def fragmented(self) -> bool:
         """Whether the number grows with the range as where states fall into many disconnected sets.
 
-        True when there are more diagonal operators than sites of the range, or more than four new ones per site of the
-        cell and three at the largest range: sets of charges of integrable chains grow more slowly.
+        True when there are more diagonal operators than sites of the range (modes, for fermions), or more than four new
+        ones per site of the cell and three at the largest range: sets of charges of integrable chains grow more slowly.
+        Every pair of species counts as a site: free fermions of several species mix them all.
         """
-        cell = self.hamiltonian.cell
+        h = self.hamiltonian
         new = self.counts[-1] - (self.counts[-2] if self.range > 1 else 0)
-        return self.diagonal > cell * self.range or (self.range > 2 and new > 4 * cell + 3)
+        return self.diagonal > h.cell * self.range or (self.range > 2 and new > 4 * h.cell * h.modes + 3)
 
     @property
     def shortest_ring(self) -> int:
         """Sites of the smallest ring on which the formulas are conserved for sure."""
-        cells = self.hamiltonian.cell * (2 if self.momentum == "pi" else 1)
+        cells = self.hamiltonian.sites * (2 if self.momentum == "pi" else 1)
         return -(-(self.range + self.hamiltonian.range - 1) // cells) * cells
 
     @property
     def remarks(self) -> tuple[str, ...]:
         """What has to be known to read the result, one sentence each."""
         h, said = self.hamiltonian, []
+        if h.is_open:
+            said.append(
+                "Found for the infinite chain, of which the open one is a piece: its ends may break what is found."
+            )
         if h.range > self.range:
             said.append(f"The Hamiltonian covers {h.range} sites and is not among operators of range {self.range}.")
         if self.fragmented:

@@ -8,10 +8,11 @@ import pytest
 import scipy.sparse as sp
 
 from maxent.errors import ResourceError
-from maxent.lattice import Bosons, Chain, Fermions, Ring, Spin, formula
+from maxent.lattice import Bosons, Chain, Fermions, Lattice, Ring, Spin, formula
+from maxent.quench import null_spaces
 from maxent.quench import search as module
+from maxent.quench.densities import density
 from maxent.quench.search import search
-from maxent.quench.strings import density
 
 MODELS = {
     "XXX": [(1, "XX"), (1, "YY"), (1, "ZZ")],
@@ -414,7 +415,7 @@ def test_a_larger_hamiltonian_than_the_range(found):
 
 
 def test_large_blocks_give_the_same_as_small_ones(monkeypatch, found):
-    monkeypatch.setattr(module, "_DENSE", 8)
+    monkeypatch.setattr(null_spaces, "DENSE", 8)
     for name in ("mixed-field Ising", "XXX", "classical Ising", "dimerised XX"):
         f = search(MODELS[name], 4, cell=PERIOD.get(name))
         assert f.counts == COUNTS[name][:4]
@@ -502,12 +503,76 @@ def test_a_pattern_over_named_cells():
 
 
 @pytest.mark.parametrize(
-    ("text", "kind"),
-    [("Sz[i]*Sz[i+1]", Spin(1)), ("dagger(c[i])*c[i+1] + h.c.", Fermions()), ("n[i]", Bosons(cutoff=1))],
+    ("text", "kind", "said"),
+    [
+        ("Sz[i]*Sz[i+1]", Spin(1), "for spins 1/2 and fermions so far, not for spin-1 sites"),
+        ("n[i]", Bosons(cutoff=1), "no end of local operators, and a cut-off changes their commutators"),
+        ("n[i]", Bosons(), "a boson mode has no end of local operators"),
+        ("Sz[i, s]", {"s": Spin(), "f": Fermions()}, "needs sites of one kind: spin-1/2 and fermion"),
+    ],
 )
-def test_other_kinds_of_sites_are_refused(text, kind):
-    with pytest.raises(TypeError, match="the search is for spin-1/2 sites so far"):
+def test_other_kinds_of_sites_are_refused(text, kind, said):
+    with pytest.raises(TypeError, match=said):
         search(formula(text, Ring(6, kind)))
+
+
+def test_a_lattice_given_by_bonds_has_no_translations():
+    with pytest.raises(TypeError, match="needs a ring or an open chain: a lattice given by its bonds"):
+        search(formula("Sz[i]*Sz[j] for <i, j>", Lattice.grid(3, 3)))
+
+
+# ---- open chains
+
+
+def test_an_open_chain_is_searched_like_a_ring():
+    text = "(1 + 0.5*(-1)**i)*(X[i]*X[i+1] + Y[i]*Y[i+1])"
+    for size in (4, 7, 9):
+        f = search(formula(text, Chain(size)), 3)
+        assert f.hamiltonian.cell == 2 and f.hamiltonian.is_open and f.counts == (1, 4, 8)
+        assert "its ends may break what is found" in f.remarks[0]
+    assert not any("ends" in remark for remark in search(formula(text, Ring(8)), 3).remarks)
+    words = search(formula("Sz[i]*Sz[i+2] + 0.5*Sx[i]", Chain(5)), 2).hamiltonian
+    assert words.terms == ((0.25, "X", 0), (0.25, "ZIZ", 0)) and words.cell == 1
+
+
+def test_occupations_at_the_ends_of_a_chain_are_no_terms_of_their_own():
+    # n n and Z Z differ by single letters, of which the ends of the chain have half as many
+    text = "0.5*n[i]*n[i+1] + (dagger(c[i])*c[i+1] + h.c.)"
+    open_, closed = (density(formula(text, line(8, Fermions()))) for line in (Chain, Ring))
+    assert open_.terms == closed.terms and (-0.25, "Z", 0) in open_.terms
+
+
+def test_what_the_ends_break():
+    """The energy current of the XX chain commutes with H on a ring, and not on a chain: exact commutators."""
+    chain = Chain(7)
+    h = formula("X[i]*X[i+1] + Y[i]*Y[i+1]", chain)
+    current = next(q for q in search(h, 2).charges if "X[i]*Y[i+1]" in q.formula("pauli"))
+    broken = h.commutator(formula(current.formula(), chain))
+    assert broken.terms and all(set(t.positions) <= {0, 1, 2} or set(t.positions) <= {4, 5, 6} for t in broken.terms)
+    assert h.commutator(formula("Sz[i]", chain)).terms == ()
+
+
+@pytest.mark.parametrize(
+    ("text", "options", "said"),
+    [
+        ("Sz[i]*Sz[i+1] + 0.1*Sz[0]", {}, "not translation-invariant in the bulk: no shift by fewer than 6 sites"),
+        ("Sz[i]*Sz[i+1] + 0.1*Sz[5]", {}, "not translation-invariant in the bulk"),
+        ("i*Sz[i]", {}, "not translation-invariant in the bulk"),
+        ("(i%3)*Sz[i]*Sz[i+1]", {"cell": 2}, "not invariant under translation by 2 of 6 sites"),
+        ("Sz[i]", {"cell": 7}, "not invariant under translation by 7 of 6 sites"),
+    ],
+)
+def test_chains_that_do_not_repeat(text, options, said):
+    with pytest.raises(ValueError, match=said):
+        search(formula(text, Chain(6)), 2, **options)
+
+
+def test_every_place_of_a_cell_must_be_on_the_chain():
+    # the third place of the cell shows twice among 5 bonds with a cell of 2, once with one of 3
+    assert search(formula("(i%2)*Sz[i]*Sz[i+1]", Chain(6)), 1).hamiltonian.cell == 2
+    assert search(formula("((i+1)%3)*Sz[i]*Sz[i+1]", Chain(6)), 1).hamiltonian.cell == 3
+    with pytest.raises(ValueError, match="not translation-invariant in the bulk"):
+        search(formula("Sz[0]*Sz[1]", Chain(2)), 1)
 
 
 def test_words_across_the_end_of_the_ring():
@@ -528,7 +593,6 @@ def test_words_across_the_end_of_the_ring():
         (lambda: formula("(-1)**i*Sz[i]", Ring(6)), {"cell": 1}, ValueError, "translation by 1 of 6 sites"),
         (lambda: formula("Sz[i]", Ring(6)), {"cell": 4}, ValueError, "translation by 4 of 6 sites"),
         (lambda: formula("Sz[i]*Sz[i+3]", Ring(6)), {}, ValueError, "covers 4 of 6 sites"),
-        (lambda: formula("Sz[i]", Chain(6)), {}, TypeError, "needs a ring"),
         (lambda: formula("Splus[i]", Ring(6)), {}, ValueError, "not Hermitian: it holds"),
         (lambda: formula("3", Ring(6)), {}, ValueError, "is zero"),
         (lambda: [(1, "XX"), (-1, "XX")], {}, ValueError, "is zero"),
@@ -537,6 +601,7 @@ def test_words_across_the_end_of_the_ring():
         (lambda: [(1, "XQ")], {}, TypeError, "letters I, X, Y, Z, not 'XQ'"),
         (lambda: [(1, "X" + 40 * "I" + "X")], {}, ValueError, "covers 42 sites"),
         (lambda: [(1, "X" + 24 * "I" + "X")], {}, ValueError, "too wide"),
+        (lambda: [(1, "X")], {"up_to": 10**9}, ValueError, "range 1000000000 of the search and 1 of the .* too wide"),
         (lambda: [(1, "X")], {"up_to": 0}, ValueError, "whole number from 1 on, not 0"),
         (lambda: [(1, "X")], {"up_to": 2.0}, ValueError, "whole number from 1 on, not 2.0"),
         (lambda: [(1, "X")], {"cell": 0}, ValueError, "whole number from 1 on, not 0"),
