@@ -22,7 +22,8 @@ __all__ = ["minimiser_exists"]
 def minimiser_exists(family: Family, at: Iterate, unit: np.ndarray) -> tuple[bool, float, str]:
     """Whether a minimiser exists for all targets within `unit`, the number R nu, and how it was found out.
 
-    Where the bound behind R nu is no theorem (`Family.stiffness_is_proved`), another proof of the same is tried.
+    R nu also says that the iterate is near the minimiser.  Where the bound behind it is no theorem
+    (`Family.stiffness_is_proved`), another proof of existence is tried, `Family.norm_needed`.
 
     Returns
     -------

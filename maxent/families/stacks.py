@@ -24,6 +24,7 @@ from maxent.core.blocks import Blocks, real_rows, rotate_with
 from maxent.core.contract import EPS, Barrier, Evaluation, Family, Lowest, namespace
 from maxent.core.pytrees import register
 from maxent.families.fillings import bends, log_weights, occupations, trace_log, vacancies
+from maxent.families.steps import multiple
 
 __all__ = ["Free", "Part", "Stacks", "adjoint", "best_multiple", "eigh", "outside", "rotated"]
 
@@ -378,16 +379,22 @@ class Stacks(Family):
         return norm_needed(self, lam, off, unit)
 
     def inside(self, lam: Any, step: Any, evaluation: Evaluation) -> Any:
-        """For bosons, the part of `step` on which no level loses more than 9/10 of its distance from zero."""
+        """For bosons, a multiple of `step` on which no level loses more than 9/10 of its distance from zero."""
         if self.sign > 0:
             return step
         xp = namespace(lam)
-        fall = xp.max(-(step @ self.flat) / (lam @ self.flat)) if self.flat.shape[1] else xp.asarray(0.0)
-        for k, change in zip(self.exponent(lam), self.exponent(step), strict=True):
+        shares, weights = [(step @ self.flat) / (lam @ self.flat)], [self.flat_weights]
+        for w, k, change in zip(self.weights, self.exponent(lam), self.exponent(step), strict=True):
             e, u = eigh(k)
             half = u / xp.sqrt(xp.where(e > 0, e, 1.0))[:, None, :]
-            fall = xp.maximum(fall, -xp.min(xp.linalg.eigvalsh(adjoint(half) @ change @ half)))
-        return step * xp.minimum(1.0, 0.9 / xp.maximum(fall, 1e-300))
+            shares.append(xp.reshape(xp.linalg.eigvalsh(adjoint(half) @ change @ half), (-1,)))
+            weights.append(xp.full(shares[-1].shape, w))
+        share = xp.concat(shares)
+        fall = xp.max(-share) if share.shape[0] else xp.asarray(0.0)
+        longest = 0.9 / xp.maximum(fall, 1e-300)
+        if xp is np:
+            step = step * multiple(share, np.concatenate(weights), float(step @ evaluation.values), float(longest))
+        return step * xp.minimum(1.0, longest)
 
     def glance(self, v: np.ndarray) -> float:
         """Upper bound of ``lowest``: fill the modes, not the levels, that have negative energy."""

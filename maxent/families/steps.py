@@ -18,7 +18,7 @@ from maxent.core.contract import Evaluation, namespace
 from maxent.families.reachable import PASS
 from maxent.families.statistics import level_terms, mean_occupations
 
-__all__ = ["kept_inside"]
+__all__ = ["kept_inside", "multiple"]
 
 #: Steps end at this part of the way to the edge of the domain.
 STAY = 0.99
@@ -40,6 +40,28 @@ class Levels(Protocol):
     def edges(self) -> Any: ...
     @property
     def statistics(self) -> str: ...
+
+
+def multiple(share: np.ndarray, weights: np.ndarray, falls: float, longest: float) -> float:
+    """How many times a step that changes levels x by ``share x`` may be taken: where overfilled levels empty.
+
+    Newton's step halves the occupation of such a level, whose ``ln Z`` is ``-ln x``.  With that for all of them the
+    slope of the dual after t steps is ``-falls + sum w s (1 - 1/(1 + t s))``, above the true one, since the curvature
+    ``n (1 + n)`` is below ``1/x^2``: the dual still falls where this vanishes.  1 where that is not beyond the step.
+
+    Parameters
+    ----------
+    share, weights : (n,) ndarrays
+    falls : float
+        By how much the dual falls per step at its beginning, times minus one: ``values . step``.
+    longest : float
+        Steps that stay inside the domain.
+    """
+    slope = lambda t: float((weights * share) @ (t * share / (1.0 + t * share))) - falls
+    end = min(LONGEST, longest)
+    if not (falls > 0 and end > 1.0 and slope(1.0) < 0):
+        return 1.0
+    return end if slope(end) <= 0 else float(brentq(slope, 1.0, end, rtol=1e-3))
 
 
 def kept_inside(levels: Levels, lam: Any, step: Any, evaluation: Evaluation) -> Any:
