@@ -120,8 +120,10 @@ def write_arrays(out: Any, entries: Sequence[Mapping[str, Any]]) -> None:
         if not numbers or not numbers[0]["values"]:
             continue
         out.createDimension(dimension, len(numbers[0]["values"]))
+        named: set[str] = set()
         for c in numbers:
-            variable = out.createVariable(f"{dimension}_{_identifier(c['name'])}", "d", (dimension,))
+            name = _unique(f"{dimension}_{_identifier(c['name'])}", named)
+            variable = out.createVariable(name, "d", (dimension,))
             variable[:] = np.array(c["values"], dtype=float)
             variable.long_name = c["meaning"].encode()
 
@@ -152,3 +154,13 @@ def _plain(value: Any) -> Any:
 
 def _identifier(name: str) -> str:
     return re.sub(r"[^a-z0-9]+", "_", name.lower()).strip("_")
+
+
+def _unique(name: str, named: set[str]) -> str:
+    """`name`, with a number behind it if a column before has it: names may differ in what identifiers cannot show."""
+    count, out = 1, name
+    while out in named:
+        count += 1
+        out = f"{name}_{count}"
+    named.add(out)
+    return out

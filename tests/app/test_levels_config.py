@@ -100,6 +100,14 @@ def test_a_condensate_and_its_fluctuations(tmp_path):
     assert f"deviation of {(held * (1 + held)) ** 0.5:.3g}" in note
 
 
+def test_a_charge_may_be_called_occupation(tmp_path):
+    """The names of its table are no reserved words."""
+    code, found = run(tmp_path, TRAP.replace("number", "occupation"))
+    assert code == 0
+    names = [c["name"] for c in found["sections"][0]["columns"]]
+    assert names == ["level", "charge occupation", "charge energy", "copies", "occupation", "spread"]
+
+
 def test_levels_that_were_left_out_are_told(tmp_path):
     _, found = run(tmp_path, TRAP.replace("energy = 200.0", "energy = 600.0"))
     (note,) = found["notes"]
