@@ -51,7 +51,8 @@ def occupation_section(
     own = len(charges) == n and n > 1 and all(np.count_nonzero(v) == 1 for v in charges.values())
     columns = [first]
     if not own:
-        columns += [Column(f"charge {name}", values[shown].tolist(), "of one particle there") for name, values in charges.items()]
+        one = "of one particle there"
+        columns += [Column(f"charge {name}", values[shown].tolist(), one) for name, values in charges.items()]
     columns += [
         Column("copies", state.degeneracy[shown].tolist(), "number of copies of the level, or weight"),
         Column("occupation", occupied.tolist(), "mean number of particles in one copy"),
