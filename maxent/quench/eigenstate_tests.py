@@ -265,7 +265,7 @@ def _labels(setting: Setting, index: np.ndarray) -> dict[str, float]:
     if basis is not None:
         found |= {m.name: float(basis.labels[m.name][index[0]]) for m in basis.maps if m.name in basis.labels}
     for name, line in setting.lines.items():
-        found[name] = float(line[index[0]]) + 0.0
+        found[name] = round(float(line[index[0]]), 10) + 0.0  # what the basis rounds is no value
     return found
 
 

@@ -16,6 +16,8 @@ from maxent.lattice import ProductState, Ring, formula
 from maxent.plots import dynamics
 from maxent.plots.keys import brief_names
 from maxent.quench.comparison import compare
+from maxent.quench.eigenstate_tests import EigenstateTests, SectorTest
+from maxent.quench.eigenstates import Scatter
 from maxent.quench.ranking import Ranking
 from maxent.quench.sizes import SizeSeries
 from maxent.quench.starts import Start
@@ -277,6 +279,67 @@ def test_sizes_refuse_what_is_not_there(series):
         with pytest.raises(ValueError, match=rf"no .*{what}"):
             plots.describe_sizes(series, what)
     assert said(plots.plot_sizes(series, "zz", sector=True)) == plots.describe_sizes(series, "zz", sector=True)
+
+
+# ---------------------------------------------------------------- scatter
+
+
+def with_tests(c, **levels):
+    """The comparison with a tested sector whose scatter of `zz` is known."""
+    sectors = tuple(
+        SectorTest(
+            {"momentum": 0.0},
+            size,
+            of_start,
+            None,
+            "",
+            {"zz": Scatter(size, np.zeros(2), np.array([-x, x]), 1.0, 0.1)},
+            {},
+        )
+        for size, x, of_start in levels["tests"]
+    )
+    return dataclasses.replace(c, eigenstate_tests=EigenstateTests(sectors, {}))
+
+
+def test_scatter_against_the_number_of_levels(series):
+    four, five, six, eight = series.comparisons
+    plain = (
+        with_tests(four, tests=[]),
+        with_tests(five, tests=[(50, 0.3, False)]),
+        with_tests(six, tests=[(100, 0.2, True)]),
+    )
+    several = SizeSeries((*plain, with_tests(eight, tests=[(400, 0.1, True), (900, 0.7, False)])))
+    ax = plots.plot_scatter(several, "zz")  # where sectors of starts are tested the others are left out
+    assert line(ax, "L = 4n + 2") == pytest.approx(np.array([[100, 0.2]]))
+    assert line(ax, "L = 4n") == pytest.approx(np.array([[400, 0.1]]))
+    guide = line(ax, "levels to the power −1/2")
+    assert guide[:, 1] * np.sqrt(guide[:, 0]) == pytest.approx(0.1 * 20)  # through the largest sector
+    assert (ax.get_xscale(), ax.get_yscale()) == ("log", "log") and {t.get_text() for t in ax.texts} == {"6", "8"}
+    words = plots.describe_scatter(several, "zz")
+    assert "0.2 at 6 sites (100 levels) and 0.1 at 8 sites (400 levels)" in words and "power" not in words
+    three = SizeSeries(
+        tuple(
+            with_tests(c, tests=[(n, n**-0.5, True)]) for c, n in zip((five, six, eight), (50, 100, 400), strict=True)
+        )
+    )
+    assert "to the power -0.5;" in plots.describe_scatter(three, "zz")
+    nothing = SizeSeries(tuple(with_tests(c, tests=[]) for c in series.comparisons))
+    assert said(plots.plot_scatter(nothing, "zz")) == plots.describe_scatter(nothing, "zz")
+    alike = SizeSeries((with_tests(six, tests=[(100, 1e-17, True)]),))
+    assert said(plots.plot_scatter(alike, "zz")) == plots.describe_scatter(alike, "zz")
+    for f in (plots.plot_scatter, plots.describe_scatter):
+        with pytest.raises(ValueError, match="no observable 'xx'"):
+            f(several, "xx")
+    ET.fromstring(svg(ax))
+
+
+def test_distances_of_single_eigenstates_have_their_range(neel):
+    ax = plots.plot_distances(neel)
+    (single,) = [e for e in neel.ensembles if e.distance_ranges]
+    bars = lines(ax, "10–90 % of eigenstates")
+    assert [tuple(b[:, 1]) for b in bars] == list(single.distance_ranges.values())
+    assert key(ax).count("10–90 % of eigenstates") == 1
+    assert "(medians; 10 % to 90 % " in plots.describe_distances(neel)
 
 
 # ---------------------------------------------------------------- nothing to show
