@@ -12,9 +12,11 @@ import argparse
 import os
 import sys
 from collections.abc import Callable, Sequence
+from contextlib import AbstractContextManager, nullcontext
 from pathlib import Path as File
 from typing import Any
 
+from maxent.app.threads import one_thread
 from maxent.errors import ConfigError
 from maxent.version import __version__
 
@@ -93,6 +95,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     int
         Exit code.
     """
+    one_thread()
     try:
         given = parser().parse_args(arguments)
         return {"solve": _solve, "check": _check, "charges": _charges}[given.command](given)
@@ -116,8 +119,15 @@ def main(arguments: Sequence[str] | None = None) -> int:
 def _solve(given: argparse.Namespace) -> int:
     from maxent.app.run import solve
 
-    say: Callable[[str], None] = (lambda line: None) if given.quiet else _log
-    outcome = solve(given.config, out=given.out, force=given.force, driver=given.driver, say=say)
+    with _progress(given.quiet) as say:
+        outcome = solve(given.config, out=given.out, force=given.force, driver=given.driver, say=say)
+    if not given.quiet:
+        for line in (*outcome.said, f"wrote {outcome.folder}"):
+            _log(line)
+    from maxent.app.thermodynamics_words import every_failure
+
+    for line in every_failure(outcome.record):
+        _log(line)
     if given.json:
         from maxent.app.record import dump
 
@@ -151,8 +161,8 @@ def _charges(given: argparse.Namespace) -> int:
     from maxent.app.charges import search, summary
 
     momenta: Any = ("0", "pi") if given.momentum == "both" else (given.momentum,)
-    say: Callable[[str], None] = (lambda line: None) if given.quiet else _log
-    found = search(given.config, given.range, momenta, say=say)
+    with _progress(given.quiet) as say:
+        found = search(given.config, given.range, momenta, say=say)
     if given.json:
         from maxent.app.record import dump
 
@@ -177,6 +187,12 @@ def _show(text: str) -> None:
     except BrokenPipeError:
         # whatever Python still wants to flush at its end must go somewhere
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+
+def _progress(quiet: bool) -> AbstractContextManager[Callable[[str], None]]:
+    from maxent.app.progress import Progress
+
+    return nullcontext(lambda line: None) if quiet else Progress(_log)
 
 
 def _log(line: str) -> None:

@@ -18,8 +18,8 @@ if TYPE_CHECKING:
     from maxent.app.sections import Section
 
 __all__ = [
-    "ACCURACY", "TARGET", "BadInput", "Job", "Problems", "Room", "Study", "Target", "check_target", "given_target",
-    "says",
+    "ACCURACY", "TARGET", "BadInput", "Coupling", "Job", "Problems", "Roles", "Room", "Study", "Target", "check_target",
+    "given_target", "says",
 ]  # fmt: skip
 
 ACCURACY = (
@@ -133,6 +133,47 @@ class Study:
 
 
 @dataclass(frozen=True)
+class Coupling:
+    """A parameter of the charges whose generalised force is wanted.
+
+    Parameters
+    ----------
+    name : str
+    value : float
+    derivatives : mapping of str to OperatorSum
+        Derivative of every charge that depends on it.
+    charges : callable
+        Value of the parameter -> all charges by name, `OperatorSum` each.
+    """
+
+    name: str
+    value: float
+    derivatives: Mapping[str, Any]
+    charges: Callable[[float], Mapping[str, Any]]
+
+
+@dataclass(frozen=True)
+class Roles:
+    """What the charges are for the thermodynamics of the result.
+
+    Parameters
+    ----------
+    energy : str
+    numbers, fields : tuple of str
+        Charges with a chemical potential, or a field.
+    couplings : tuple of Coupling
+    at_number : callable
+        Result -> further quantities (`maxent.quench.thermodynamics.Quantity`) at fixed particle number.
+    """
+
+    energy: str
+    numbers: tuple[str, ...] = ()
+    fields: tuple[str, ...] = ()
+    couplings: tuple[Coupling, ...] = ()
+    at_number: Callable[[Any], Sequence[Any]] = lambda result: ()
+
+
+@dataclass(frozen=True)
 class Job:
     """A problem ready to be solved.
 
@@ -163,6 +204,8 @@ class Job:
         What `family.size` counts.
     further : callable
         Result -> further tables and curves, computed after the fit (sections.py).
+    roles : Roles or None
+        What the charges are for thermodynamics; None where no energy can be told.
     """
 
     family: Any
@@ -177,6 +220,7 @@ class Job:
     mean: Callable[[Any, Any], float] = lambda state, operator: state.mean(operator)
     unit: str = "state"
     further: Callable[[Any], Sequence[Section]] = lambda result: ()
+    roles: Roles | None = None
 
     def target_errors(self) -> Any:
         """Give a factor (m, p) of the covariance of the targets; None when no target has a standard error."""

@@ -33,6 +33,7 @@ def record(
     notes: Sequence[str] = (),
     quench: Mapping[str, Any] | None = None,
     sections: Sequence[Section] = (),
+    thermodynamics: Mapping[str, Any] | None = None,
 ) -> dict[str, Any]:
     """Collect everything a result says, with the names of the charges.
 
@@ -56,6 +57,8 @@ def record(
         Comparison of the ensembles with the dynamics (study.py).
     sections : sequence of Section, optional
         Further tables and curves.
+    thermodynamics : mapping, optional
+        Thermodynamics of the result (thermodynamics.py).
 
     Returns
     -------
@@ -99,6 +102,7 @@ def record(
         "asked_driver": asked_driver,
         "size": int(job.family.size),
         "notes": list(notes),
+        "thermodynamics": thermodynamics,
         "quench": quench,
         "sections": [entry(s) for s in sections],
         "facts": dict(facts),

@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from typing import Any
 
-from maxent.app import sections, study_words, words
+from maxent.app import sections, study_words, thermodynamics_words, words
 from maxent.app.figures import Figure, recoloured
 from maxent.text import combination, number
 
@@ -61,6 +61,10 @@ def render(record: Mapping[str, Any], *, figures: Sequence[Figure] = ()) -> str:
             (table, [f for f in figures if f.section == entry["name"]])
             for table, entry in zip(sections.tables(record["sections"]), record["sections"], strict=True)
         ],
+        thermo=thermodynamics_words.tables(record["thermodynamics"]) if record["thermodynamics"] else (),
+        agreement=thermodynamics_words.agreement(record["thermodynamics"]) if record["thermodynamics"] else "",
+        failures=thermodynamics_words.failures(record["thermodynamics"]) if record["thermodynamics"] else (),
+        units=thermodynamics_words.UNITS,
         study=study_words.tables(record["quench"]) if record["quench"] else (),
         study_notes=study_words.notes(record["quench"]) if record["quench"] else (),
         study_figures=[f for f in figures if f.study],

@@ -23,6 +23,7 @@ from typing import Any
 
 from maxent.app.config import Config, build, load
 from maxent.app.job import Job
+from maxent.app.threads import enough
 from maxent.errors import ConfigError, ResourceError
 from maxent.memory import size_text
 from maxent.text import plural
@@ -43,10 +44,13 @@ class Outcome:
         The content of `result.json` (record.py).
     folder : pathlib.Path
         Where it was written.
+    said : tuple of str
+        What its user is to see beside it: seconds spent compiling, files that are missing and why.
     """
 
     record: Mapping[str, Any]
     folder: File
+    said: tuple[str, ...] = ()
 
 
 def solve(file: File, *, out: File | None, force: bool, driver: str | None, say: Say) -> Outcome:
@@ -63,7 +67,7 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
     driver : str or None
         "auto", "host" or "jax"; None takes what the config says.
     say : callable
-        Receives lines of progress.
+        Receives lines of progress: what is being done now.
 
     Returns
     -------
@@ -75,39 +79,42 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
         Bad config, or a folder that cannot be written; nothing is left behind then.
     """
     started, begun = time.time(), time.perf_counter()
+    say(f"{file}: reading and building")
     config = load(file)
     asked = driver or config.header.driver
     if out is not None:
         _refuse_existing(out, force)
     job = build(config)
     seconds = {"build": time.perf_counter() - begun}
-    say(f"{file}: {plural(len(job.targets), 'charge')}, {plural(job.family.size, job.unit)}")
     target = out if out is not None else File("runs") / name(config, job, asked)
-    with folder(target, force=force) as part:
+    with folder(target, force=force) as part, enough(_largest(job)):
+        say(f"fit of {plural(len(job.targets), 'charge')} on {plural(job.family.size, job.unit)}")
         result, spent = _timed_fit(config, job, asked)
         seconds |= spent
-        apart = f", {spent['compile']:.2f} s of them compiling" if "compile" in spent else ""
-        say(f"fit: {plural(result.iterations, 'iteration')} in {seconds['fit']:.2f} s{apart}")
         notes = job.remarks(result)
-        for note in notes:
-            say(f"note: {note}")
         sections, spent = _further(job, result)
         seconds |= spent
+        from maxent.app.thermodynamics import section
+
+        clock = time.perf_counter()
+        say("thermodynamics")
+        thermodynamics, seconds["thermodynamics"] = section(job, result, say), time.perf_counter() - clock
         series, quench = None, None
         if job.study is not None:
             from maxent.app import study
 
             clock = time.perf_counter()
+            say("comparison with the long-time state")
             series = study.run(config, job.study, say)
             quench, seconds["quench"] = study.section(series), time.perf_counter() - clock
-            say(f"quench: {plural(len(job.study.sizes), 'size')} in {seconds['quench']:.2f} s")
         from maxent.app.record import record as collect
 
         found = collect(
             config, job, result, asked_driver=asked, facts=sizes(job), versions=_versions(), notes=notes, quench=quench,
-            sections=sections,
+            sections=sections, thermodynamics=thermodynamics,
         )  # fmt: skip
-        _write(part, config, job, result, found, series, say)
+        say("files, figures and report")
+        said = _write(part, config, job, result, found, series)
         manifest = {
             "started": time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime(started)),
             "seconds": seconds | {"total": time.perf_counter() - begun},
@@ -127,8 +134,9 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
             },
         }
         (part / "manifest.json").write_text(json.dumps(manifest, indent=2) + "\n", encoding="utf-8")
-    say(f"wrote {target}")
-    return Outcome(found, target)
+    if "compile" in seconds:
+        said = (f"fit: {seconds['fit']:.2f} s, {seconds['compile']:.2f} s of them compiling", *said)
+    return Outcome(found, target, said)
 
 
 def check(file: File) -> tuple[Config, Job]:
@@ -290,8 +298,9 @@ def _further(job: Job, result: Any) -> tuple[Sequence[Any], dict[str, float]]:
 
 
 def _write(
-    part: File, config: Config, job: Job, result: Any, record: Mapping[str, Any], series: Any, say: Say
-) -> None:
+    part: File, config: Config, job: Job, result: Any, record: Mapping[str, Any], series: Any
+) -> tuple[str, ...]:
+    """Write the files of a run; say which are missing for want of a package."""
     from maxent.app import arrays
     from maxent.app.record import dump
 
@@ -303,19 +312,19 @@ def _write(
         from maxent.app.study import write_arrays
 
         write_arrays(part / "quench", series)
-    figures = _figures(part, job, result, record, series, say)
-    if find_spec("jinja2") is None:
-        say("no report.html: it needs the package jinja2 (pip install 'maxent-states[report]')")
-        return
-    from maxent.app.report import render
+    drawn, written = find_spec("matplotlib") is not None, find_spec("jinja2") is not None
+    figures = _figures(part, job, result, record, series) if drawn else ()
+    if written:
+        from maxent.app.report import render
 
-    (part / "report.html").write_text(render(record, figures=figures), encoding="utf-8")
+        (part / "report.html").write_text(render(record, figures=figures), encoding="utf-8")
+    missing = [] if drawn else ["no figures: they need the package matplotlib (pip install 'maxent-states[report]')"]
+    if not written:
+        missing.append("no report.html: it needs the package jinja2 (pip install 'maxent-states[report]')")
+    return tuple(missing)
 
 
-def _figures(part: File, job: Job, result: Any, record: Mapping[str, Any], series: Any, say: Say) -> Any:
-    if find_spec("matplotlib") is None:
-        say("no figures: they need the package matplotlib (pip install 'maxent-states[report]')")
-        return ()
+def _figures(part: File, job: Job, result: Any, record: Mapping[str, Any], series: Any) -> Any:
     from maxent.app.figures import draw
 
     figures = draw(result, labels=job.labels)
@@ -333,6 +342,13 @@ def _figures(part: File, job: Job, result: Any, record: Mapping[str, Any], serie
         text = f'<?xml version="1.0" encoding="utf-8"?>\n{figure.svg}'
         (part / "figures" / f"{figure.name}.svg").write_text(text, encoding="utf-8")
     return figures
+
+
+def _largest(job: Job) -> int:
+    """Dimension of the largest matrix that is decomposed."""
+    if job.unit != "state":
+        return int(job.family.size)
+    return max((a.shape[-1] for a in job.family.blocks.dense), default=0)
 
 
 def _versions() -> dict[str, str]:

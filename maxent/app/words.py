@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
-from maxent.app import sections
+from maxent.app import sections, thermodynamics_words
 from maxent.text import combination, listing, number, plural, table, with_error
 
 __all__ = ["certificate", "charge_table", "face", "redundancy", "summary", "verdict"]
@@ -164,6 +164,8 @@ def summary(record: Mapping[str, Any]) -> str:
         parts.append(table(numbers, right=[1]))
     if record["explanation"] and not record["conflict"]:
         parts.append("\n".join(record["explanation"]))
+    if record["thermodynamics"]:
+        parts.append(thermodynamics_words.summary(record["thermodynamics"]))
     parts += sections.summary(record["sections"])
     parts += record["notes"]
     if record["quench"]:

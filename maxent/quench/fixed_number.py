@@ -6,14 +6,19 @@ each number still give one.  Floor: quench.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import math
+from collections.abc import Callable, Mapping
 
 import numpy as np
 from scipy.special import logsumexp
 
+from maxent.families.microstates import Microstates
 from maxent.quench.levels import Levels
+from maxent.quench.levels import levels as joint_levels
+from maxent.quench.thermodynamics import Quantity
+from maxent.solver import solve
 
-__all__ = ["chemical_potential_at_number", "log_partitions_by_number"]
+__all__ = ["at_fixed_number", "chemical_potential_at_number", "log_partitions_by_number"]
 
 
 def log_partitions_by_number(levels: Levels, beta: float, *, number: str = "number") -> dict[int, float]:
@@ -80,3 +85,71 @@ def chemical_potential_at_number(log_partitions: Mapping[int, float], number: in
     if beta == 0:
         raise ValueError("at beta = 0 only beta mu is defined")
     return (log_partitions[number] - log_partitions[number + 1]) / beta
+
+
+def at_fixed_number(
+    energies: Callable[[int], np.ndarray | None],
+    number: int,
+    energy: float,
+    *,
+    accuracy: float = 0.0,
+    name: str = "number",
+) -> tuple[Quantity, Quantity]:
+    """Temperature and chemical potential of the state of largest entropy among those of N particles.
+
+    Parameters
+    ----------
+    energies : callable
+        Particle number -> levels of the Hamiltonian with so many particles; None where there are none.
+    number : int
+        N.
+    energy : float
+        Mean energy.
+    accuracy : float, optional
+        How far it may be off.
+    name : str, optional
+        What is counted.
+
+    Returns
+    -------
+    tuple of Quantity
+        Inverse temperature, fitted to the energy among N particles alone, and ``mu = (ln Z_N - ln Z_{N+1})/beta``; with
+        the reason where one is not defined.
+
+    Examples
+    --------
+    >>> levels = {1: np.array([0.0, 1.0]), 2: np.array([1.0])}       # two levels for fermions, at 0 and 1
+    >>> for quantity in at_fixed_number(levels.get, 1, 0.3):
+    ...     print(quantity)
+    inverse temperature at number = 1 = 0.8472978604  [beta with <energy> = 0.3 among states of number = 1]
+    chemical potential at number = 1 = 1.420955794  [mu = (ln Z_N - ln Z_{N+1})/beta, N = 1]
+    """
+    what = f"{name} = {number}"
+    names = (f"inverse temperature at {what}", f"chemical potential at {what}")
+    formulas = (
+        f"beta with <energy> = {energy:.8g} among states of {what}",
+        f"mu = (ln Z_N - ln Z_{{N+1}})/beta, N = {number}",
+    )
+    undefined = lambda k, reason: Quantity(names[k], formulas[k], math.nan, math.nan, math.nan, reason)
+    own, more = energies(number), energies(number + 1)
+    if own is None:
+        return undefined(0, f"there is no state of {what}"), undefined(1, f"there is no state of {what}")
+    fit = solve(Microstates({"energy": own}), {"energy": energy}, accuracy=accuracy)
+    if not fit.success:
+        reason = f"the energy among states of {what}: {fit.verdict}"
+        return undefined(0, reason), undefined(1, reason)
+    beta, error = fit.multipliers["energy"], fit.multiplier_errors["energy"]
+    if fit.redundancies:
+        reason = f"all states of {what} have the same energy"
+        return undefined(0, reason), undefined(1, reason)
+    first = Quantity(names[0], formulas[0], beta, error)
+    if more is None:
+        return first, undefined(1, f"there is no state of {name} = {number + 1}")
+    if abs(beta) <= error:
+        return first, undefined(1, f"beta is zero within its error {error:.1g}: only beta mu is defined")
+    counts = np.repeat([number, number + 1], [len(own), len(more)])
+    both = joint_levels(Microstates({"energy": np.concatenate([own, more]), "number": counts}))
+    mu = lambda b: chemical_potential_at_number(log_partitions_by_number(both, b), number, b)
+    step = 1e-4 * abs(beta)
+    slope = (mu(beta + step) - mu(beta - step)) / (2 * step)
+    return first, Quantity(names[1], formulas[1], mu(beta), abs(slope) * error)

@@ -26,6 +26,7 @@ from maxent.families.microstates import Microstates
 from maxent.families.operators import operator_matrix
 from maxent.lattice.coefficients import Coefficient, Symbol
 from maxent.lattice.exact import ONE, to_complex
+from maxent.lattice.sectors import blocked
 from maxent.lattice.terms import OperatorSum
 from maxent.result import Result
 
@@ -323,7 +324,7 @@ def _extended(family: Matrices | Microstates, operators: Mapping[str, Any]) -> F
         if family.basis is not None:
             if matrix.shape[0] != family.basis.shape[0]:
                 raise ValueError(f"{name!r} has dimension {matrix.shape[0]}, the family {family.basis.shape[0]}")
-            matrix = family.basis.conj().T @ (matrix @ family.basis)
+            matrix = blocked({name: matrix}, family.basis)[name]  # rounding would join blocks
         matrices[name] = sp.csr_array(matrix)
     return Matrices(matrices)
 

@@ -21,7 +21,7 @@ from maxent.quench.forces import Response
 from maxent.result import Result
 from maxent.solver import solve
 
-__all__ = ["SelfCheck", "chebyshev_slopes", "check_response", "check_result"]
+__all__ = ["SelfCheck", "chebyshev_slopes", "check_response", "check_result", "compared"]
 
 NODES = 20
 #: Allowed differences relative to the size of what is compared: sums, first and second derivatives.
@@ -140,7 +140,7 @@ def check_result(
     chi = result.covariance
     spread = np.sqrt(np.maximum(np.diag(chi), 0.0))
     spectral, dual = _entropy(result.state, family), float(family.evaluate(lam, 0).log_partition + lam @ q)
-    checks = [_compared("entropy, spectrum against ln Z + lam.q", spectral, dual, 1 + np.abs(lam) @ np.abs(q), SUM)]
+    checks = [compared("entropy, spectrum against ln Z + lam.q", spectral, dual, 1 + np.abs(lam) @ np.abs(q), SUM)]
     level = 4 * EPS * (1 + float(family.evaluate(lam, 2).level))
     live = np.flatnonzero(spread > 0)
     unit = spread[live]
@@ -170,14 +170,14 @@ def check_result(
     size = np.max((np.abs(q[live]) + unit) / unit, initial=1.0)
     first, second = np.maximum((FIRST, SECOND), noise.max(axis=1, initial=0.0)).tolist()
     checks += [
-        _compared("values against differences of ln Z", slopes, axes @ q, size, first),
-        _compared(
+        compared("values against differences of ln Z", slopes, axes @ q, size, first),
+        compared(
             "covariance against differences of the values", moved, chi[live] @ axes.T / unit[:, None], size, first
         ),
     ]
     if n == len(live):
-        checks.append(_compared("symmetry of these differences (Maxwell)", moved, moved.T, size, first))
-    return (*checks, _compared("variances against second differences of ln Z", bends, np.ones(n), 1, second))
+        checks.append(compared("symmetry of these differences (Maxwell)", moved, moved.T, size, first))
+    return (*checks, compared("variances against second differences of ln Z", bends, np.ones(n), 1, second))
 
 
 def _radius(family: Family, lam: np.ndarray, axis: np.ndarray) -> float:
@@ -228,8 +228,8 @@ def check_response(
     first, second = chebyshev_slopes(lambda a: family_at(a).evaluate(lam, 0).log_partition, at, radius, nodes=nodes)
     size = lambda x: 1.0 + float(np.max(np.abs(x)))
     checks = (
-        _compared("d ln Z/da against differences", first, response.log_partition, size(first), FIRST),
-        _compared("d2 ln Z/da2 against differences", second, response.curvature, size(second), SECOND),
+        compared("d ln Z/da against differences", first, response.log_partition, size(first), FIRST),
+        compared("d2 ln Z/da2 against differences", second, response.curvature, size(second), SECOND),
     )
     if not fits:
         return checks
@@ -242,7 +242,7 @@ def check_response(
     moved, _ = chebyshev_slopes(refit, at, radius, nodes=nodes)
     known = np.array([response.multipliers[n] for n in names])
     name = "d lam/da at fixed values against new fits (Maxwell)"
-    return (*checks, _compared(name, moved, known, size(known), SECOND))
+    return (*checks, compared(name, moved, known, size(known), SECOND))
 
 
 def _entropy(state: Any, family: Family) -> float:
@@ -258,7 +258,16 @@ def _entropy(state: Any, family: Family) -> float:
     return -math.fsum(p * np.log(p))
 
 
-def _compared(name: str, found: Any, expected: Any, size: float, allowed: float) -> SelfCheck:
+def compared(name: str, found: Any, expected: Any, size: float, allowed: float) -> SelfCheck:
+    """Compare two arrays or numbers; the check fails where one of them is not finite.
+
+    Parameters
+    ----------
+    name : str
+    found, expected : array_like
+    size, allowed : float
+        The largest difference is divided by `size`, and may be `allowed`.
+    """
     a, b = np.atleast_1d(np.asarray(found, float)), np.atleast_1d(np.asarray(expected, float))
     if not a.size:
         return SelfCheck(name, 0.0, allowed)

@@ -339,7 +339,7 @@ class Thermodynamics:
         gradient = self._gradient(d)
         r = self.result
         error = float(sum(abs(g) * r.multiplier_errors[n] for g, n in zip(gradient, r.names, strict=True) if g))
-        pull = self._multiplier_errors
+        pull = self.multiplier_factor
         sigma = float(np.linalg.norm(gradient @ pull)) if np.any(pull) else 0.0
         return Quantity(d.name, d.formula, value, error, sigma)
 
@@ -383,8 +383,8 @@ class Thermodynamics:
         return _Point(lam, np.array([r.values[n] for n in r.names]), np.asarray(r.covariance), r.log_partition)
 
     @cached_property
-    def _multiplier_errors(self) -> np.ndarray:
-        """Rows (m, p); ``rows @ rows.T`` is the covariance of the multipliers that follows from that of the targets."""
+    def multiplier_factor(self) -> np.ndarray:
+        """Factor (m, p) of the covariance of the multipliers that follows from that of the targets, or zero."""
         r = self.result
         pull = np.array([r.sigmas.get(n, 0.0) for n in r.names])
         errors = np.diag(pull) if self.errors is None else self.errors

@@ -43,7 +43,7 @@ def test_manifest_tells_versions_times_and_digests(runs):
     base = runs["wolf_dice"].folder
     manifest = json.loads((base / "manifest.json").read_text())
     assert {"maxent", "numpy", "scipy", "jax", "python"} <= set(manifest["versions"])
-    assert set(manifest["seconds"]) == {"build", "fit", "total"}
+    assert set(manifest["seconds"]) == {"build", "fit", "thermodynamics", "total"}
     assert manifest["seed"] is None
     files = {f: content for f, content in tree(base).items() if f != "manifest.json"}
     assert manifest["files"] == {f: sha256(content).hexdigest() for f, content in files.items()}

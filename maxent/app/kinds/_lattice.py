@@ -29,6 +29,7 @@ from maxent.app.kinds._gaussian import METHOD, SECTORS, check_gaussian, gaussian
 from maxent.app.kinds._geometry import STRICT, Geometry
 from maxent.app.kinds._momentum import MOMENTUM, Momentum
 from maxent.app.kinds._starts import StartMaker, StartTable, as_start
+from maxent.app.kinds._thermodynamics import THERMODYNAMICS, LatticeThermodynamics, check_roles, lattice_roles
 from maxent.app.locate import Path
 from maxent.errors import FormulaError, ResourceError
 from maxent.memory import require_memory
@@ -39,6 +40,8 @@ if TYPE_CHECKING:
 
 __all__ = ["LatticeOptions", "Quench", "build", "hamiltonian"]
 
+#: Columns of the table of levels that are no observables, as in maxent/quench/comparison.py, which is slow to import.
+TAKEN = ("energy", "level", "weight")
 #: Spaces with fewer states are not worth a change of basis.
 SMALL = 64
 _EPS = 2.0**-52
@@ -111,6 +114,7 @@ class LatticeOptions:
     method: Literal["matrices", "gaussian"] = field(default="matrices", metadata=says(METHOD))
     sectors: Literal["both", "even", "odd", "unprojected"] = field(default="both", metadata=says(SECTORS))
     momentum: Momentum | None = field(default=None, metadata=says(MOMENTUM))
+    thermodynamics: LatticeThermodynamics | None = field(default=None, metadata=says(THERMODYNAMICS))
     quench: Quench | None = field(
         default=None,
         metadata=says("With this table, even empty, ensembles are compared with the long-time state: docs/quench.md."),
@@ -140,6 +144,7 @@ def build(options: LatticeOptions, folder: File) -> Job:
     every = options.sites.arrange(problems, listed=not gaussian)
     check_gaussian(options, problems)
     _check_quench(options, problems)
+    check_roles(options.thermodynamics, options.charges, problems, usual=options.hamiltonian)
     problems.raise_any()
     sites = every[options.sites.largest]
     if not gaussian:
@@ -161,8 +166,10 @@ def build(options: LatticeOptions, folder: File) -> Job:
             part.refuse_not_conserved(problems)
         problems.raise_any()
     part = parts[options.sites.largest]
+    roles = lattice_roles(options, part, problems)
+    problems.raise_any()
     if gaussian:
-        return gaussian_job(options, sites, part, _facts(options, sites, ""), files.digests)
+        return replace(gaussian_job(options, sites, part, _facts(options, sites, ""), files.digests), roles=roles)
     matrices = {name: _matrix(("charges", name), op) for name, op in part.charges.items()}
     targets = part.targets(matrices)
     observed = {name: _matrix(("predictions", name), op) for name, op in part.predictions.items()}
@@ -171,7 +178,7 @@ def build(options: LatticeOptions, folder: File) -> Job:
     study = None
     if options.quench is not None:
         study = Study(options.sites.all_sizes, lambda size: parts[size].arguments())
-    return Job(family, targets, observed, facts, digests=files.digests, remarks=part.remarks, study=study)
+    return Job(family, targets, observed, facts, digests=files.digests, remarks=part.remarks, study=study, roles=roles)
 
 
 def hamiltonian(options: LatticeOptions) -> Any:
@@ -315,6 +322,8 @@ class _Part:
             "insist": tuple(asked.insist),
             "resolution": asked.resolution,
             "ranking": asked.ranking,
+            "numbers": None if options.thermodynamics is None else options.thermodynamics.numbers,
+            "fields": None if options.thermodynamics is None else options.thermodynamics.fields,
         }
 
     @property
@@ -410,6 +419,10 @@ def _check_quench(options: LatticeOptions, problems: Problems) -> None:
     for key, value in (("window", asked.window), ("speed", asked.speed), ("resolution", asked.resolution)):
         if value is not None and not value > 0:
             problems.add(("quench", key), f"must be positive, got {number(value)}")
+    above = ("quench", "observables") if asked.observables else ("predictions",)
+    for name in asked.observables or options.predictions:
+        if name in TAKEN:
+            problems.add((*above, name), "this name is taken in the table of levels of [quench]; choose another")
     if not asked.blocks or min(asked.blocks) < 1:
         problems.add(("quench", "blocks"), f"expected numbers of sites from 1 on, got {asked.blocks}")
     times = asked.times

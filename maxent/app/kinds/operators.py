@@ -15,6 +15,7 @@ import numpy as np
 
 from maxent.app.data import Files
 from maxent.app.job import ACCURACY, TARGET, Job, Problems, Room, check_target, given_target, says
+from maxent.app.kinds._thermodynamics import THERMODYNAMICS, Thermodynamics, check_roles, roles
 from maxent.text import number, plural
 
 __all__ = ["Options", "build"]
@@ -49,6 +50,7 @@ class Options:
         default_factory=dict,
         metadata=says("Name -> a further Hermitian matrix whose mean is wanted: rows, or a file."),
     )
+    thermodynamics: Thermodynamics | None = field(default=None, metadata=says(THERMODYNAMICS))
 
 
 def build(options: Options, folder: File) -> Job:
@@ -102,6 +104,7 @@ def build(options: Options, folder: File) -> Job:
                 ("dims",),
                 f"the product of the dimensions is {prod(options.dims)}, but {first} is {size} x {size}",
             )
+    check_roles(options.thermodynamics, charges, problems, prior=prior is not None)
     for name, given in options.targets.items():
         check_target(("targets", name), given, problems)
     problems.raise_any()
@@ -114,7 +117,8 @@ def build(options: Options, folder: File) -> Job:
 
     family = Matrices(charges, dims=None if options.dims is None else tuple(options.dims), log_prior=prior)
     targets = {name: given_target(options.targets[name], options.accuracy.get(name, 0.0)) for name in charges}
-    return Job(family, targets, predictions, facts, digests=files.digests)
+    known = None if prior is not None else roles(options.thermodynamics, charges)
+    return Job(family, targets, predictions, facts, digests=files.digests, roles=known)
 
 
 def _inline(rows: list[list[float | str]]) -> np.ndarray:

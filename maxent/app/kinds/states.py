@@ -15,6 +15,7 @@ import numpy as np
 
 from maxent.app.data import Files
 from maxent.app.job import ACCURACY, TARGET, Job, Problems, Room, Target, check_target, given_target, says
+from maxent.app.kinds._thermodynamics import THERMODYNAMICS, Thermodynamics, check_roles, roles
 from maxent.text import plural
 
 __all__ = ["Counts", "Options", "build"]
@@ -69,6 +70,7 @@ class Options:
         default_factory=dict,
         metadata=says("Name -> a further quantity whose mean is wanted: a list, or a file."),
     )
+    thermodynamics: Thermodynamics | None = field(default=None, metadata=says(THERMODYNAMICS))
 
 
 def build(options: Options, folder: File) -> Job:
@@ -106,6 +108,7 @@ def build(options: Options, folder: File) -> Job:
             problems.add((key,), "drops every state")
     if counts is not None:
         _check_counts(problems, counts)
+    check_roles(options.thermodynamics, charges, problems, prior=prior is not None)
     for name, given in options.targets.items():
         check_target(("targets", name), given, problems)
         if given == "from counts" and options.counts is None:
@@ -135,6 +138,7 @@ def build(options: Options, folder: File) -> Job:
         labels=tuple(options.labels or ()),
         digests=files.digests,
         errors=_sampling(targets, options, charges, counts),
+        roles=None if prior is not None else roles(options.thermodynamics, charges),
     )
 
 
