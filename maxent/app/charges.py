@@ -19,6 +19,10 @@ __all__ = ["SCHEMA", "search", "summary"]
 
 SCHEMA = "maxent.charges/1"
 _SHOWN = 40
+_KINDS = ("spins", "fermions")
+_REFUSED = {
+    "bosons": "no search for bosons: a mode has no end of local operators, and a cut-off changes their commutators",
+}
 _SUBSCRIPTS = ("i", "j", "k", "n", "site")
 
 
@@ -30,7 +34,7 @@ def search(
     Parameters
     ----------
     file : pathlib.Path
-        Config of kind `spins`.
+        Config of kind `spins` or `fermions`.
     up_to : int
         Largest range.
     momenta : sequence of "0" and "pi"
@@ -45,17 +49,20 @@ def search(
     Raises
     ------
     ConfigError
-        Bad config, no translation-invariant Hamiltonian of spins 1/2 on a ring, or a range that needs more memory
-        than there is.
+        Bad config, no translation-invariant Hamiltonian of spins 1/2 or fermions on a line, or a range that needs more
+        memory than there is.
     """
     config = load(file)
-    if config.header.kind != "spins":
-        raise config.error([(("kind",), "the search for conserved operators is for the kind 'spins' so far")])
-    from maxent.app.kinds import spins
+    kind = config.header.kind
+    if kind not in _KINDS:
+        raise config.error(
+            [(("kind",), _REFUSED.get(kind, "the search for conserved operators is for spins 1/2 and fermions"))]
+        )
+    from maxent.app.kinds import fermions, spins
 
     options = config.options
     try:
-        operator = spins.hamiltonian(options)
+        operator = (spins if kind == "spins" else fermions).hamiltonian(options)
     except BadInput as bad:
         raise config.error(bad.problems) from bad
     from maxent.quench.search import search as find
@@ -65,11 +72,14 @@ def search(
         found = [find(operator, up_to, momentum=momentum, progress=say) for momentum in momenta]
     except ResourceError as bad:
         raise config.error([((), str(bad))]) from bad
-    except (TypeError, ValueError) as bad:
+    except TypeError as bad:  # the sites are none that can be searched
+        key = "geometry" if options.sites.geometry == "bonds" else "spin"
+        raise config.error([(("sites", key), str(bad))]) from bad
+    except ValueError as bad:
         raise config.error([(("charges", name), str(bad))]) from bad
     texts = " ".join([options.charges[name], *options.densities.values()])
     letters = "spin" if re.search(r"\bS(?:x|y|z|plus|minus)\b", texts) else "pauli"
-    taken = {*options.parameters, *options.densities}
+    taken = {*options.parameters, *options.densities, *operator.sites.cell, *found[0].hamiltonian.species}
     subscript = next(s for s in (*_SUBSCRIPTS, *(f"i{k}" for k in range(len(taken)))) if s not in taken)
     h = found[0].hamiltonian
     return {
@@ -78,13 +88,13 @@ def search(
         "hamiltonian": name,
         "formula": options.charges[name],
         "hamiltonian_range": h.range,
-        "cell": h.cell,
-        "sites": options.sites.largest,
-        "searches": [_search(result, options, letters, subscript) for result in found],
+        "cell": h.sites,
+        "sites": operator.sites.size,
+        "searches": [_search(result, options, operator, letters, subscript) for result in found],
     }
 
 
-def _search(result: Any, options: Any, letters: str, subscript: str) -> dict[str, Any]:
+def _search(result: Any, options: Any, operator: Any, letters: str, subscript: str) -> dict[str, Any]:
     names = _names(result, options.hamiltonian)
     charges = []
     for name, charge, normed in zip(names, result.charges, result.orthonormal, strict=True):
@@ -95,6 +105,7 @@ def _search(result: Any, options: Any, letters: str, subscript: str) -> dict[str
                 "range": charge.range,
                 "formula": text,
                 "hamiltonian": charge.hamiltonian,
+                "kept_by_ends": _kept_by_ends(operator, charge, text, options),
                 "exact": charge.exact,
                 "defect": charge.defect,
                 "words": _words(charge),
@@ -113,8 +124,8 @@ def _search(result: Any, options: Any, letters: str, subscript: str) -> dict[str
         for n in result.nearly
     ]
     remarks = list(result.remarks)
-    size, cells = options.sites.largest, result.hamiltonian.cell * (2 if result.momentum == "pi" else 1)
-    if size < result.shortest_ring or size % cells:
+    size, cells = operator.sites.size, result.hamiltonian.sites * (2 if result.momentum == "pi" else 1)
+    if operator.sites.is_ring and (size < result.shortest_ring or size % cells):
         of = f", a multiple of {cells}" if cells > 1 else ""
         remarks.insert(0, f"They are conserved on rings of at least {result.shortest_ring} sites{of}; this has {size}.")
     return {
@@ -129,6 +140,19 @@ def _search(result: Any, options: Any, letters: str, subscript: str) -> dict[str
         "shortest_ring": result.shortest_ring,
         "remarks": remarks,
     }
+
+
+def _kept_by_ends(operator: Any, charge: Any, text: str, options: Any) -> bool | None:
+    """Whether the Hamiltonian of an open chain, ends included, commutes with a charge of its bulk; None on a ring."""
+    if operator.sites.is_ring:
+        return None
+    if charge.hamiltonian:
+        return True
+    from maxent.lattice import formula
+
+    left = operator.commutator(formula(text, operator.sites, options.parameters, options.densities)).coefficients
+    sizes = abs(operator.coefficients).max() * max(abs(float(c)) for c, _, _ in charge.words)
+    return not len(left) or bool(abs(left).max() <= 1e-9 * sizes)
 
 
 def _names(result: Any, hamiltonian: str) -> list[str]:
@@ -192,7 +216,9 @@ def _part(entry: Mapping[str, Any]) -> str:
 def _comment(charge: Mapping[str, Any]) -> str:
     if charge["hamiltonian"]:
         return f"range {charge['range']}; the Hamiltonian"
-    return f"range {charge['range']}; {'exact' if charge['exact'] else 'defect ' + number(charge['defect'], 2)}"
+    how = "exact" if charge["exact"] else "defect " + number(charge["defect"], 2)
+    ends = "" if charge["kept_by_ends"] is not False else " in the bulk, broken by the ends"
+    return f"range {charge['range']}; {how}{ends}"
 
 
 def _shortened(text: str, most: int = 160) -> str:

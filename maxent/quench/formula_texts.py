@@ -139,7 +139,10 @@ def _joined(parts: Sequence[Part], digits: int | None) -> str:
     for value, operators in parts:
         size = _size(-value if value < 0 else value, digits)
         sign = ("-" if value < 0 else "") if not text else (" - " if value < 0 else " + ")
-        text += sign + (operators if size == "1" else f"{size}*{operators}")
+        if size.replace(".", "").isdecimal() and operators.startswith("1j*"):
+            text += f"{sign}{size}j*{operators.removeprefix('1j*')}"
+        else:
+            text += sign + (operators if size == "1" else f"{size}*{operators}")
     return text
 
 

@@ -100,7 +100,7 @@ def test_free_fermions_with_spin_conserve_more_than_bilinears(found):
 
 @pytest.mark.parametrize("name", MODELS)
 def test_printed_formulas_commute_on_a_ring(found, name):
-    """Exact algebra of the parsed formulas, and matrices made without the parser, with the sign at the end of the ring."""
+    """Exact algebra of parsed formulas, and matrices made without the parser, signs at the end of the ring included."""
     kind, text, _ = MODELS[name]
     f = found[name]
     size = f.shortest_ring
