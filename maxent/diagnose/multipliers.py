@@ -50,7 +50,8 @@ def user_multipliers(outcome: Outcome) -> Multipliers:
     if at is None or not w.rank:
         return Multipliers(np.zeros(len(w.mean)), np.zeros(len(w.mean)), False)
     lam = w.minimum_norm(w.transform.T @ at.lam)
-    errors = np.abs(w.transform.T @ (at.axes / np.maximum(at.curvature, 1e-300))) @ uncertainty(outcome)
+    with np.errstate(over="ignore", invalid="ignore"):  # on the way to an unreachable target curvatures may vanish
+        errors = np.abs(w.transform.T @ (at.axes / np.maximum(at.curvature, 1e-300))) @ uncertainty(outcome)
     relative = np.max(errors * w.spread) / max(float(np.max(np.abs(lam * w.spread))), 1.0)
     return Multipliers(lam, errors, bool(relative > LOOSE))
 

@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import numpy as np
 
-from tests.corpus import levels as modes
 from tests.corpus import pieces
 from tests.corpus.problem import Problem, to_dense
 
@@ -35,16 +34,16 @@ def combination(problem: Problem, coefficients: dict) -> np.ndarray:
 
 def levels(problem: Problem, coefficients: dict) -> np.ndarray:
     """Sorted levels of sum_j v_j Q_j; of many independent levels the lowest and the highest sum."""
-    if problem.family == "Modes":
-        return modes.ends(problem, coefficients)
+    if problem.own:
+        return problem.own.ends(problem, coefficients)
     h = combination(problem, coefficients)
     return np.sort(h) if h.ndim == 1 else np.linalg.eigvalsh(h)
 
 
 def replayed(problem: Problem, multipliers: dict) -> float:
     """Largest relative residual of the state that the multipliers alone define, computed from scratch."""
-    if problem.family == "Modes":
-        found = modes.replayed(problem, multipliers)
+    if problem.own:
+        found = problem.own.replayed(problem, multipliers)
         return worst_residual(problem, {n: found[n] - q for n, q in problem.targets.items()})
     h = combination(problem, multipliers)
     for logs in (problem.log_weights, problem.log_prior):

@@ -19,7 +19,8 @@ SIGNS = {"fermions": 1, "bosons": -1, "distinguishable": 0}
 
 
 def occupations(w, statistics: str) -> np.ndarray:
-    """1/(e^w + s), w within what exp can hold."""
+    """1/(e^w + s)."""
+    w = np.minimum(w, 700.0)  # what exp can hold
     return np.exp(-w) if statistics == "distinguishable" else 1 / (np.expm1(w) + (SIGNS[statistics] + 1))
 
 

@@ -31,9 +31,9 @@ class Draft:
     rank : int
         Number of independent charges, multiples of the identity not counted.
     family : str
-        "Microstates", "Matrices" or "Modes".
+        "Microstates", "Matrices", "Modes", "Bilinears" or "Periodic".
     size : int
-        Number of states (also with no charges at all), or of levels.
+        Number of states (also with no charges at all), of levels, or of modes.
     log_weights, log_prior : arrays or None
     distance : float or None
         Outside only: an upper bound of the distance to the reachable set, exact if `distance_is_exact`.
@@ -51,7 +51,7 @@ class Draft:
         Entropy of the state, or of the limit state on the face, where it is known.
     note : str
     statistics, degeneracy, particles : str, (n,) array, float
-        Modes only: which particles, copies of each level, and how many particles the target stands for.
+        Levels and modes: which particles, copies of each level, how many particles the target stands for.
     """
 
     charges: tuple
@@ -141,8 +141,13 @@ class Problem:
 
     def build(self):
         """The family of the public interface that holds these charges."""
-        from maxent.families import Matrices, Microstates, Modes
+        from maxent.families import Bilinears, Matrices, Microstates, Modes, Periodic
 
+        if self.family == "Bilinears":
+            return Bilinears(dict(self.charges), statistics=self.statistics)
+        if self.family == "Periodic":
+            hops = {n: self.own.distances(q) for n, q in self.charges.items()}
+            return Bilinears({n: Periodic(self.size, t) for n, t in hops.items()}, statistics=self.statistics)
         if self.family == "Modes":
             return Modes(dict(self.charges), self.statistics, self.degeneracy)
         if self.family == "Microstates":
@@ -152,6 +157,13 @@ class Problem:
             return Microstates(dict(self.charges), log_weights=weights, log_prior=self.log_prior)
         dims = None if self.charges else (2,) * int(np.log2(self.size))
         return Matrices(dict(self.charges), dims=dims, log_prior=self.log_prior)
+
+    @property
+    def own(self):
+        """The module that answers questions about particles; None for states."""
+        from tests.corpus import bilinears, levels  # which make drafts of this module
+
+        return {"Modes": levels, "Bilinears": bilinears, "Periodic": bilinears}.get(self.family)
 
     def live(self, charge) -> np.ndarray:
         """A microstate charge on the states that have a weight at all."""
@@ -163,19 +175,15 @@ class Problem:
 
     def scale(self, name) -> float:
         """|Q_j| + |q_j|: the unit of a relative residual."""
-        if self.family == "Modes":
-            from tests.corpus import levels
-
-            return levels.size(self, name) + abs(self.targets[name])
+        if self.own:
+            return self.own.size(self, name) + abs(self.targets[name])
         return size_of(self.charges[name], self) + abs(self.targets[name])
 
     def spread(self, name) -> float:
         """Standard deviation of the charge when every state counts the same."""
         charge = self.charges[name]
-        if self.family == "Modes":
-            from tests.corpus import levels  # which makes drafts of this module
-
-            return levels.spread(self, name)
+        if self.own:
+            return self.own.spread(self, name)
         if self.family == "Microstates":
             return float(np.std(self.live(charge)))
         dense = to_dense(charge)

@@ -2,7 +2,7 @@
 
 Each problem is drawn from its own generator, seeded by (seed, kind, index), so `make(kind, seed, index)`
 gives back any single one.  How its truth is known stands in the docstring of the function that makes it
-(`feasible`, `edges`, `points`, `around`, `dependents`); none of them calls the solver.
+(`feasible`, `edges`, `points`, `around`, `dependents`, `levels`, `bilinears`); none of them calls the solver.
 """
 
 from __future__ import annotations
@@ -11,7 +11,7 @@ import zlib
 
 import numpy as np
 
-from tests.corpus import around, dependents, feasible, levels
+from tests.corpus import around, bilinears, dependents, feasible, levels
 from tests.corpus.problem import Problem, named
 
 INSIDE = {
@@ -67,7 +67,19 @@ LEVELS = {
     **{f"inconsistent-levels-{s}": (levels.contradicted(levels.inside(s)), 6) for s in levels.SIGNS},
 }
 
-KINDS = INSIDE | EDGES | DEPENDENT | LEVELS
+PARTICLES = ("fermions", "bosons")
+
+QUADRATIC = {
+    **{f"quadratic-{s}": (bilinears.inside(s), 8) for s in PARTICLES},
+    **{f"{place}-quadratic-{s}": (bilinears.edge(s, place), 8) for place in COUNTS for s in PARTICLES},
+    **{f"redundant-quadratic-{s}": (levels.redundant(bilinears.inside(s)), 4) for s in PARTICLES},
+    **{f"redundant-boundary-quadratic-{s}": (levels.redundant(bilinears.edge(s, "boundary")), 4) for s in PARTICLES},
+    **{f"inconsistent-quadratic-{s}": (levels.contradicted(bilinears.inside(s)), 6) for s in PARTICLES},
+    **{f"ring-{s}": (bilinears.inside(s, ring=True), 4) for s in PARTICLES},
+    **{f"{place}-ring-{s}": (bilinears.edge(s, place, ring=True), 8) for place in COUNTS for s in PARTICLES},
+}
+
+KINDS = INSIDE | EDGES | DEPENDENT | LEVELS | QUADRATIC
 
 
 def make(kind: str, seed: int, index: int) -> Problem:

@@ -13,7 +13,7 @@ import numpy as np
 import pytest
 
 import maxent
-from tests.corpus import judge, levels
+from tests.corpus import judge
 from tests.corpus.__main__ import main
 from tests.corpus.problem import to_dense
 from tests.corpus.problems import KINDS, corpus, make, problems
@@ -149,8 +149,8 @@ CERTIFIED = [k for k in KINDS if k.startswith(("outside", "boundary", "inconsist
 
 def lowest_at_50_digits(problem, direction) -> mpmath.mpf:
     """min <sum_j v_j (Q_j - q_j)> from the float64 inputs taken as exact numbers."""
-    if problem.family == "Modes":
-        return levels.lowest_at_50_digits(problem, direction)
+    if problem.own:
+        return problem.own.lowest_at_50_digits(problem, direction)
     if problem.family == "Microstates":
         q = {n: mpmath.mpf(x) for n, x in problem.targets.items()}
         points = {n: problem.live(a) for n, a in problem.charges.items()}
