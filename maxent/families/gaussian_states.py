@@ -21,7 +21,7 @@ from maxent.families.pfaffians import pauli_word, word_mean
 from maxent.families.quadratic import Quadratic, quadratic
 from maxent.memory import require_memory
 
-__all__ = ["BosonState", "FermionState", "binary_entropy", "symplectic_form"]
+__all__ = ["BosonState", "FermionState", "binary_entropy", "quadratic_of", "symplectic_form"]
 
 #: What a covariance matrix may miss its bounds by.
 ROUNDING = 1e-10
@@ -51,6 +51,19 @@ def checked_modes(modes: Sequence[int], n: int) -> list[int]:
     if len(set(kept)) < len(kept) or any(not 0 <= s < n for s in kept):
         raise ValueError(f"modes must be different numbers in 0..{n - 1}, not {list(modes)}")
     return kept
+
+
+def quadratic_of(operator: Any, statistics: str, modes: int) -> Quadratic:
+    """A quadratic operator of so many modes, given as charges are.
+
+    Raises
+    ------
+    TypeError, ValueError
+    """
+    q = operator if isinstance(operator, Quadratic) else quadratic(operator, "operator", statistics)
+    if q.modes != modes:
+        raise ValueError(f"the operator has {q.modes} modes, the state {modes}")
+    return q
 
 
 @dataclass(frozen=True)
@@ -150,13 +163,10 @@ class FermionState:
         ------
         TypeError, ValueError
         """
-        q = quadratic(operator, "operator", "fermions")
-        return self.mean_of(q)
+        return self.mean_of(quadratic_of(operator, "fermions", self.modes))
 
     def mean_of(self, q: Quadratic) -> float:
         """`mean` of an operator that was checked."""
-        if q.modes != self.modes:
-            raise ValueError(f"the operator has {q.modes} modes, the state {self.modes}")
         a, half = to_majoranas(*q.matrices())
         return float(0.25 * np.sum(a * self.covariance) + half + q.constant)
 
@@ -309,9 +319,7 @@ class BosonState:
         ------
         TypeError, ValueError
         """
-        q = quadratic(operator, "operator", "bosons")
-        if q.modes != self.modes:
-            raise ValueError(f"the operator has {q.modes} modes, the state {self.modes}")
+        q = quadratic_of(operator, "bosons", self.modes)
         m, d, constant = q.phase_space()
         r = self.displacement
         return float(0.5 * np.sum(m * (self.covariance + np.outer(r, r))) + d @ r + constant)

@@ -18,7 +18,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from maxent.core.blocks import Blocks
+from maxent.core.blocks import Blocks, real_rows
 from maxent.families.antisymmetric import Canonical, canonical_forms
 from maxent.families.majoranas import from_majoranas
 from maxent.families.projected import filled
@@ -173,9 +173,44 @@ class Sector:
         return Stacks(self.constant, np.zeros((m, 0)), np.zeros(0), dense, (0.5,) * len(dense), 1)
 
     def sharpen(self, v: np.ndarray) -> Iterator[np.ndarray]:
-        """Polished directions."""
+        """Polished directions: of levels at zero, and of several lowest levels of which one is filled."""
         if self.modes:
             yield from self.stacks().sharpen(v)
+            yield from self._equalised(v)
+
+    def _equalised(self, v: np.ndarray) -> Iterator[np.ndarray]:
+        """Directions near `v` along which the lowest levels of an odd number of quasiparticles are equal.
+
+        Equal levels mean that ``v.Q`` is a number on them, which is linear in v as long as the levels stand still.
+        """
+        lines = self.lines(v)
+        order = np.sort(lines.levels)
+        if lines.sign >= 0 or len(order) < 2 or not order[-1] > 0:
+            return
+        decades = np.log10(np.maximum(order / order[-1] - order[0] / order[-1], 1e-14))
+        jumps = np.diff(decades)
+        counts = [int(i) + 1 for i in np.argsort(-jumps, kind="stable")[:3] if i > 0 and jumps[i] > 0.7]
+        for g in [*counts, len(order)]:
+            better = self._equal(v, g)
+            if better is not None:
+                yield better
+
+    def _equal(self, v: np.ndarray, g: int) -> np.ndarray | None:
+        """`v` turned until the g lowest levels are equal; None where that leads far away."""
+        for _ in range(6):
+            lines = self.lines(v)
+            hops = self._hops(lines.forms, np.sort(np.argsort(lines.levels, kind="stable")[:g]))
+            even = np.einsum("jaa->j", hops).real / g
+            axes, weights, _ = np.linalg.svd(real_rows(hops - even[:, None, None] * np.eye(g)))
+            fixed = axes[:, : int(np.sum(weights > 1e-9 * weights[0]))]
+            step = fixed @ (fixed.T @ v)
+            left = float(np.linalg.norm(v - step))
+            if left < 0.5:
+                return None
+            v = (v - step) / left
+            if np.linalg.norm(step) < 1e-15:
+                break
+        return v
 
     def _frame(self, forms: list[Canonical]) -> np.ndarray:
         """Majorana operators of the quasiparticles, (2L, 2n)."""
@@ -199,6 +234,7 @@ class Sector:
         first = float(e.min()) if alone else 0.0
         gap, width = float(e[~free].min(initial=np.inf)) - first, float(e[free].max(initial=first)) - first
         if alone:
+            gap = min(gap, float(np.sort(e)[1:3].sum()) if len(e) > 2 else np.inf)  # two more quasiparticles
             which = np.flatnonzero(free)
             columns = np.stack([2 * which, 2 * which + 1], axis=1).ravel()
             return Alone(self.parity, constant, self._hops(lines.forms, which), frame[:, columns], pinned), gap, width

@@ -13,13 +13,13 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
-from functools import cached_property
-from typing import Any
+from typing import Any, ClassVar
 
 import numpy as np
 
-from maxent.core.contract import EPS, Evaluation, Face, Family, Lowest
+from maxent.core.contract import EPS, Evaluation, Face, Lowest
 from maxent.families.finite import checked_charges
+from maxent.families.hosted import Hosted
 from maxent.families.parity_sectors import Alone, Lines, Sector
 from maxent.families.ring_forms import blocked, quadratic_form, sparse_form
 from maxent.families.ring_states import RingState
@@ -32,7 +32,7 @@ CHOICES = {"both": (1, -1), "even": (1,), "odd": (-1,), "unprojected": (0,)}
 
 
 @dataclass(frozen=True, init=False, eq=False)
-class SpinRing(Family):
+class SpinRing(Hosted):
     """Charges of a ring (or an open chain) of spins 1/2 that are quadratic in fermions in each parity sector.
 
     Parameters
@@ -72,6 +72,7 @@ class SpinRing(Family):
     sites: int
     names: tuple[str, ...]
     sectors: tuple[Sector | Alone, ...]
+    what: ClassVar[str] = "spin rings"
 
     def __init__(self, sites: int, charges: Any, *, sectors: str = "both"):
         charges = checked_charges(charges, "SpinRing")
@@ -102,6 +103,11 @@ class SpinRing(Family):
         return object.__new__(SpinRing)._set(self.sites, names, sectors)
 
     @property
+    def constant(self) -> np.ndarray:
+        """What each charge has as a number in the first sector, (m,)."""
+        return self.sectors[0].constant
+
+    @property
     def entropy_floor(self) -> float:  # type: ignore[override]
         """0: states are counted."""
         return 0.0
@@ -111,16 +117,6 @@ class SpinRing(Family):
         """Number of states; values are totals, not per site."""
         return sum(s.size for s in self.sectors)
 
-    @cached_property
-    def scale(self) -> np.ndarray:
-        """Operator norm of each charge, shape (m,)."""
-        lows = [self.lowest(v) for v in np.eye(len(self.sectors[0].constant))]
-        return np.array([max(abs(low.value), abs(low.highest)) for low in lows])
-
-    def log_partition(self, lam: Any) -> float:
-        """``ln Z(lam)``, on the host."""
-        return float(self.evaluate(lam).log_partition)
-
     def evaluate(self, lam: Any, order: int = 2) -> Evaluation:
         """``ln Z``, values and covariance: both sectors weighed by their partition functions.
 
@@ -129,8 +125,7 @@ class SpinRing(Family):
         TypeError
             For arrays of JAX.
         """
-        if not isinstance(lam, np.ndarray):
-            raise TypeError("spin rings run on the host driver: give NumPy arrays, or solve with driver='host'")
+        self.require_host(lam)
         parts = [s.evaluated(lam) for s in self.sectors]
         log_z = float(np.logaddexp.reduce([p.log_z for p in parts]))
         share = [float(np.exp(p.log_z - log_z)) for p in parts]
@@ -148,25 +143,6 @@ class SpinRing(Family):
             np.float64(log_z), values, 0.5 * (covariance + covariance.T), np.float64(rounding), np.float64(level),
             factor=factor, lowest=np.float64(min(p.lowest for p in parts)),
         )  # fmt: skip
-
-    def reference(self) -> tuple[np.ndarray, np.ndarray]:
-        """Infinite-temperature means (m,) and charges minus mean as rows (m, p)."""
-        ev = self.evaluate(np.zeros(len(self.sectors[0].constant)))
-        assert ev.factor is not None
-        return ev.values, ev.factor()
-
-    def traced(self) -> Family:
-        """Not there: decompositions of real antisymmetric matrices are LAPACK's.
-
-        Raises
-        ------
-        TypeError
-        """
-        raise TypeError("spin rings run on the host driver: solve with driver='host'")
-
-    def reach(self) -> np.ndarray:
-        """Upper bounds (m,) of the spread of each charge."""
-        return 2 * self.scale
 
     def combine(self, matrix: np.ndarray, offset: np.ndarray) -> SpinRing:
         """Family of the charges ``matrix @ Q - offset``."""
@@ -209,9 +185,29 @@ class SpinRing(Family):
         return kept, gap, width
 
     def sharpen(self, v: np.ndarray) -> Iterator[np.ndarray]:
-        """Polished directions of each sector, the one with the lowest value first."""
+        """Polished directions of each sector, the one with the lowest value first; then those where sectors meet."""
         for s in sorted(self.sectors, key=lambda s: s.lines(v).low):
             yield from s.sharpen(v)
+        if len(self.sectors) == 2:
+            yield from self._levelled(v)
+
+    def _levelled(self, v: np.ndarray) -> Iterator[np.ndarray]:
+        """The direction near `v` along which both sectors have the same lowest value."""
+        for _ in range(6):
+            lines = [s.lines(v) for s in self.sectors]
+            first, second = (s.lowest_values(x) for s, x in zip(self.sectors, lines, strict=True))
+            apart = first - second
+            size = float(apart @ apart)
+            if abs(lines[0].low - lines[1].low) > 0.1 * max(x.top for x in lines) or not size > 0:
+                return
+            step = apart * (float(apart @ v) / size)
+            left = float(np.linalg.norm(v - step))
+            if left < 0.5:
+                return
+            v = (v - step) / left
+            if np.linalg.norm(step) < 1e-15:
+                break
+        yield v
 
     def state(self, lam: Any) -> RingState:
         """State at multipliers `lam`, shape (m,).
@@ -222,7 +218,7 @@ class SpinRing(Family):
             Not m finite numbers.
         """
         lam = np.asarray(lam, float)
-        m = len(self.sectors[0].constant)
+        m = len(self.constant)
         if lam.shape != (m,) or not np.all(np.isfinite(lam)):
             raise ValueError(f"multipliers must be {m} finite numbers, not {lam.tolist()}")
         parts = [s.thermal(lam) for s in self.sectors]
