@@ -1,4 +1,4 @@
-"""Search for local conserved operators: seconds by range, for an easy and for the worst kind of chain, and for fermions.
+"""Search for local conserved operators: seconds by range, for an easy and the worst kind of chain, and for fermions.
 
 Mixed-field Ising chains have no symmetry but the translations, so that their equations fall into two blocks only. The
 Hubbard chain has sixteen operators per site.
@@ -42,10 +42,10 @@ def main() -> None:
             begun = time.process_time()
             found = search(chain, up_to)
             spent = time.process_time() - begun
-            near = found.nearly[-1]
+            near, goal = found.nearly[-1], up_to == RANGES.get(name, (4, 5))[1]
             rows.append([
                 name, up_to, _unknowns(found, up_to), ", ".join(map(str, found.counts)),
-                "" if near is None else f"{near.value:.3f}", seconds(spent), f"<= {GOAL} s" if up_to == RANGES.get(name, (4, 5))[1] else "",
+                "" if near is None else f"{near.value:.3f}", seconds(spent), f"<= {GOAL} s" if goal else "",
             ])  # fmt: skip
     head = ["chain", "range", "unknowns", "conserved", "next singular value", "time", "goal"]
     text = (
