@@ -1,4 +1,4 @@
-"""Scalar functions of free particles and their trace functions: ``Tr ln(1 + e^-X)`` and ``-Tr ln(1 - e^-X)``.
+"""Trace functions of free particles, ``Tr ln(1 + e^-X)`` and ``-Tr ln(1 - e^-X)``, with their second derivatives.
 
 One rule serves every quadratic family: ``ln Z = Tr f(X)``, ``d ln Z = -Re Tr(n(X) dX)``, and second derivatives are
 divided differences of the occupation n.  These are written as products that neither cancel nor overflow, whatever the
@@ -16,31 +16,9 @@ from functools import cache
 from typing import Any
 
 from maxent.core.contract import namespace
+from maxent.families.statistics import log_weights, occupations, vacancies
 
-__all__ = ["bends", "log_weights", "occupations", "trace_log", "vacancies"]
-
-
-def log_weights(x: Any, sign: int) -> Any:
-    """``ln(1 + e^-x)`` for fermions (`sign` 1), ``-ln(1 - e^-x)`` for bosons (-1); x > 0 for bosons."""
-    xp = namespace(x)
-    if sign > 0:
-        return xp.maximum(-x, 0.0) + xp.log1p(xp.exp(-xp.abs(x)))
-    near = x < 0.6931471805599453
-    return xp.where(near, -xp.log(-xp.expm1(-xp.where(near, x, 1.0))), -xp.log1p(-xp.exp(-xp.where(near, 1.0, x))))
-
-
-def occupations(x: Any, sign: int) -> Any:
-    """Mean occupation ``1/(e^x + sign)``; keeps its relative accuracy for any x."""
-    xp = namespace(x)
-    if sign > 0:
-        small = xp.exp(-xp.abs(x))
-        return xp.where(x > 0, small, 1.0) / (1.0 + small)
-    return xp.exp(-x) / -xp.expm1(-x)
-
-
-def vacancies(x: Any, sign: int) -> Any:
-    """``1 - n`` for fermions, ``1 + n`` for bosons."""
-    return occupations(-x, 1) if sign > 0 else -1.0 / namespace(x).expm1(-x)
+__all__ = ["bends", "trace_log"]
 
 
 def bends(x: Any, sign: int) -> Any:

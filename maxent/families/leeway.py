@@ -17,7 +17,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from maxent.core.blocks import real_rows
-from maxent.families.fillings import occupations, vacancies
+from maxent.families.statistics import occupations, vacancies
 
 if TYPE_CHECKING:
     from maxent.families.stacks import Stacks

@@ -11,7 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from maxent.families.statistics import SIGNS, exponents, level_entropy, level_terms
+from maxent.families.statistics import SIGNS, exponents, level_entropy, level_terms, log_weights
 
 __all__ = ["ModesState", "checked_degeneracy", "checked_statistics", "fill", "level_values"]
 
@@ -52,7 +52,7 @@ class ModesState:
         """
         out = np.zeros(len(self.occupations))
         on = np.isfinite(self.own_multipliers)
-        out[on] = level_terms(self.own_multipliers[on], self.statistics)[2]
+        out[on] = level_terms(self.own_multipliers[on], SIGNS[self.statistics])[2]
         return out
 
     def mean(self, operator: Any) -> float:
@@ -121,12 +121,13 @@ def fill(occupations: Any, statistics: str = "fermions", *, degeneracy: Any = No
         allowed = "0..1" if statistics == "fermions" else "0 or more"
         raise ValueError(f"the occupation of level {bad[0]} is {n[bad[0]]:.6g}: {statistics} have {allowed} per copy")
     g = checked_degeneracy(degeneracy, len(n))
-    w = exponents(n, statistics)
+    sign = SIGNS[statistics]
+    w = exponents(n, sign)
     on = np.isfinite(w)
     log_z = float("nan")
     if not np.any(w == -np.inf):
-        log_z = float(g[on] @ level_terms(w[on], statistics)[0])
-    return ModesState(w, n, g, statistics, log_z, float(g @ level_entropy(w, n, statistics)))
+        log_z = float(g[on] @ log_weights(w[on], sign))
+    return ModesState(w, n, g, statistics, log_z, float(g @ level_entropy(w, n, sign)))
 
 
 # ---------------------------------------------------------------- checked input

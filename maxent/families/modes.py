@@ -166,6 +166,11 @@ class Modes(Family):
         return round(float(self.degeneracy.sum()))
 
     @property
+    def _sign(self) -> int:
+        """S in ``n = 1/(e^w + s)``."""
+        return SIGNS[self.statistics]
+
+    @property
     def entropy_floor(self) -> float:  # type: ignore[override]
         """0 for fermions and bosons."""
         return -np.inf if self.statistics == "distinguishable" else 0.0
@@ -185,7 +190,7 @@ class Modes(Family):
         """``ln Z(lam)``, traceable by JAX; +inf where bosons are not confined."""
         import jax.numpy as jnp
 
-        log_z = jnp.sum(self.degeneracy * log_partitions(lam @ self.charges, self.statistics)) - lam @ self.constant
+        log_z = jnp.sum(self.degeneracy * log_partitions(lam @ self.charges, self._sign)) - lam @ self.constant
         if self.edges is None:
             return log_z
         return jnp.where(jnp.min(lam @ self.edges + self._play(lam)) >= 0, log_z, jnp.inf)
@@ -212,7 +217,7 @@ class Modes(Family):
                     if xp is np and not inside:
                         break
                     w = xp.where(w > 0, w, 1.0) if xp is not np else w
-                f, occupation, variance = level_terms(w, self.statistics)
+                f, occupation, variance = level_terms(w, self._sign)
                 log_z = log_z + g @ f
                 low, high = low + g @ xp.minimum(w, 0.0), high + g @ xp.maximum(w, 0.0)
                 largest = xp.maximum(largest, xp.max(xp.abs(w), initial=0.0))
@@ -238,7 +243,7 @@ class Modes(Family):
         return Evaluation(log_z, values + self.constant, covariance, rounding, level, factor=factor, lowest=lowest)
 
     def _factor(self, lam: np.ndarray) -> np.ndarray:
-        return triangle_rows(self.charges, self.degeneracy * level_terms(lam @ self.charges, self.statistics)[2])
+        return triangle_rows(self.charges, self.degeneracy * level_terms(lam @ self.charges, self._sign)[2])
 
     # ------------------------------------------------------------------ where the search starts and may go
 
@@ -269,7 +274,7 @@ class Modes(Family):
         most = 1.0 if self.statistics == "fermions" else np.inf
         w = np.where(n > 0.5, -40.0, 40.0)
         some = (n > 1e-17) & (n < most)
-        w[some] = exponents(n[some], self.statistics)
+        w[some] = exponents(n[some], self._sign)
         lam = np.zeros(len(self.constant))
         lam[charge] = w / own
         return lam
@@ -294,7 +299,7 @@ class Modes(Family):
         Others have none: `filling` particles in every copy take its place, the same for all combinations of charges.
         """
         n = 0.5 if self.statistics == "fermions" else self.filling
-        variance = n * (1 - SIGNS[self.statistics] * n)
+        variance = n * (1 - self._sign * n)
         mean = n * (self.charges @ self.degeneracy) + self.constant
         return mean, triangle_rows(self.charges, variance * self.degeneracy)
 
@@ -410,7 +415,7 @@ class Modes(Family):
         copies = self.degeneracy if fermions else np.ones(n)
         if not n or (not fermions and not w.min() > 0):
             return None
-        value, occupation, curvature = dual_of_logs(copies * w, self.statistics)
+        value, occupation, curvature = dual_of_logs(copies * w, self._sign)
         gradient = -n * (self.charges @ (copies * occupation) + self.constant)
         rows = n * triangle_rows(self.charges, copies**2 * curvature)
         blur = n * (np.abs(lam) @ np.abs(self.charges))
@@ -421,13 +426,11 @@ class Modes(Family):
     def stiffness(self, lam: np.ndarray, u: np.ndarray, *, exact: bool = True) -> float | None:
         """Largest ``|u.q_k|``, for bosons times ``coth(w_k/2)``: a seminorm of u, and better than the spread."""
         w = lam @ self.charges if self.statistics == "bosons" else np.zeros(0)
-        return unmixing(w, u @ self.charges, self.statistics)
+        return unmixing(w, u @ self.charges, self._sign)
 
     def reach(self) -> Any:
         """Largest ``|q_jk|`` of each charge: bounds the stiffness, unless bosons."""
-        if self.statistics == "bosons":
-            return np.full(len(self.constant), np.inf)
-        return self._largest
+        return np.full(len(self.constant), np.inf) if self._sign < 0 else self._largest
 
     # ------------------------------------------------------------------ states
 
@@ -442,21 +445,20 @@ class Modes(Family):
         if isinstance(lam, dict):
             raise TypeError("multipliers are a list in the order of the family's names, not a dict")
         array = np.asarray(lam, float)
-        m = len(self.constant)
-        if array.shape != (m,):
-            raise ValueError(f"multipliers must have shape ({m},), not {array.shape}")
+        if array.shape != self.constant.shape:
+            raise ValueError(f"multipliers must have shape {self.constant.shape}, not {array.shape}")
         if not np.all(np.isfinite(array)):
             raise ValueError(f"multipliers must be finite, not {array.tolist()}")
         w = array @ self.charges
-        if self.statistics == "bosons" and len(w) and not w.min() > 0:
+        if self._sign < 0 and len(w) and not w.min() > 0:
             k = int(np.argmin(w))
             raise ValueError(
                 f"multipliers outside the domain of bosons: lam.q is {w[k]:.6g} at level {self.index[k]}, not above 0"
             )
-        f, occupation, _ = level_terms(w, self.statistics)
+        f, occupation, _ = level_terms(w, self._sign)
         every, filled = self.pinned.copy(), np.where(self.pinned == -np.inf, 1.0, 0.0)
         every[self.index], filled[self.index] = w, occupation
-        entropy = float(self.degeneracy @ level_entropy(w, occupation, self.statistics))
+        entropy = float(self.degeneracy @ level_entropy(w, occupation, self._sign))
         log_z = float(self.degeneracy @ f - array @ self.constant)
         return ModesState(every, filled, self.copies, self.statistics, log_z, entropy)
 

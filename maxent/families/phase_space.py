@@ -25,10 +25,11 @@ from maxent.core.contract import EPS, Evaluation, Family, Lowest, namespace
 from maxent.core.polish import complement_of
 from maxent.core.pytrees import register
 from maxent.families.antisymmetric import canonical_form
-from maxent.families.fillings import bends, log_weights, occupations
+from maxent.families.fillings import bends
 from maxent.families.gaussian_states import BosonState, symplectic_form
 from maxent.families.quadratic import Quadratic
 from maxent.families.stacks import best_multiple, outside
+from maxent.families.statistics import log_weights, occupations
 
 __all__ = ["PhaseSpace", "Whereabouts"]
 

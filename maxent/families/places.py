@@ -14,13 +14,13 @@ from typing import Any
 import numpy as np
 import scipy.sparse as sp
 
-from maxent.families.fillings import log_weights, occupations, vacancies
 from maxent.families.gaussian_states import BosonState, FermionState, binary_entropy
 from maxent.families.majoranas import covariance
 from maxent.families.periodic import Periodic
 from maxent.families.periodic_states import PeriodicState
 from maxent.families.quadratic import Quadratic
 from maxent.families.stacks import Free, Stacks, adjoint, eigh
+from maxent.families.statistics import log_weights, occupations, vacancies
 from maxent.memory import require_memory
 
 __all__ = ["Momenta", "Nodes", "Places", "entropies", "from_modes", "from_momenta"]

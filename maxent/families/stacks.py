@@ -23,7 +23,8 @@ import numpy as np
 from maxent.core.blocks import Blocks, real_rows, rotate_with
 from maxent.core.contract import EPS, Barrier, Evaluation, Family, Lowest, namespace
 from maxent.core.pytrees import register
-from maxent.families.fillings import bends, log_weights, occupations, trace_log, vacancies
+from maxent.families.fillings import bends, trace_log
+from maxent.families.statistics import log_weights, occupations, vacancies
 from maxent.families.steps import multiple
 
 __all__ = ["Free", "Part", "Stacks", "adjoint", "best_multiple", "eigh", "outside", "rotated"]

@@ -14,8 +14,8 @@ import numpy as np
 from maxent.core.contract import namespace
 
 __all__ = [
-    "SIGNS", "dual_of_logs", "exponents", "level_entropy", "level_terms", "log_partitions", "mean_occupations",
-    "unmixing",
+    "SIGNS", "dual_of_logs", "exponents", "level_entropy", "level_terms", "log_partitions", "log_weights",
+    "occupations", "unmixing", "vacancies",
 ]  # fmt: skip
 
 #: s in n = 1/(e^w + s).
@@ -25,68 +25,81 @@ SIGNS = {"fermions": 1, "bosons": -1, "distinguishable": 0}
 FAR = 700.0
 
 
-def level_terms(w: Any, statistics: str) -> tuple[Any, Any, Any]:
-    """``ln Z``, mean and variance of the occupation of one copy of each level.
+def level_terms(x: Any, sign: int) -> tuple[Any, Any, Any]:
+    """``ln Z``, mean and variance of the occupation of one copy of each level, in one pass.
 
     Parameters
     ----------
-    w : (n,) array
-        Exponents ``lam.q_k``; positive for bosons.
-    statistics : {"fermions", "bosons", "distinguishable"}
+    x : array
+        Exponents, such as ``lam.q_k``; positive for bosons.
+    sign : {1, -1, 0}
+        s: fermions, bosons, distinguishable particles.
 
     Returns
     -------
-    log_z, occupation, variance : (n,) arrays
+    log_z, occupation, variance : arrays
     """
-    xp = namespace(w)
-    if statistics == "fermions":
-        e = xp.exp(-xp.abs(w))
-        sum_ = 1.0 + e
-        occupation = xp.where(w > 0, e, 1.0) / sum_
-        return xp.maximum(-w, 0.0) + xp.log1p(e), occupation, e / sum_**2
-    if statistics == "bosons":
-        n = 1.0 / xp.expm1(xp.minimum(w, FAR))
-        return xp.log1p(n), n, n * (1.0 + n)
-    e = xp.exp(-w)
-    return e, e, e
+    xp = namespace(x)
+    if sign > 0:
+        small = xp.exp(-xp.abs(x))
+        sum_ = 1.0 + small
+        return xp.maximum(-x, 0.0) + xp.log1p(small), xp.where(x > 0, small, 1.0) / sum_, small / sum_**2
+    n = occupations(x, sign)
+    return (xp.log1p(n), n, n * (1.0 + n)) if sign else (n, n, n)
 
 
-def mean_occupations(w: np.ndarray, statistics: str) -> np.ndarray:
-    """Mean occupation alone, (n,): a third of the work."""
-    if statistics == "fermions":
-        return level_terms(w, statistics)[1]
-    return 1.0 / np.expm1(np.minimum(w, FAR)) if statistics == "bosons" else np.exp(-w)
+def log_weights(x: Any, sign: int) -> Any:
+    """``ln Z`` alone: ``ln(1 + e^-x)``, ``-ln(1 - e^-x)``, ``e^-x``."""
+    xp = namespace(x)
+    if sign > 0:
+        return xp.maximum(-x, 0.0) + xp.log1p(xp.exp(-xp.abs(x)))
+    n = occupations(x, sign)
+    return xp.log1p(n) if sign else n
 
 
-def log_partitions(w: Any, statistics: str) -> Any:
+def occupations(x: Any, sign: int) -> Any:
+    """Mean occupation alone; keeps its relative accuracy wherever it is above 1e-304."""
+    xp = namespace(x)
+    if sign > 0:
+        small = xp.exp(-xp.abs(x))
+        return xp.where(x > 0, small, 1.0) / (1.0 + small)
+    return 1.0 / xp.expm1(xp.minimum(x, FAR)) if sign else xp.exp(-x)
+
+
+def vacancies(x: Any, sign: int) -> Any:
+    """``1 - n`` for fermions, ``1 + n`` for bosons; keeps its relative accuracy."""
+    return occupations(-x, 1) if sign > 0 else -1.0 / namespace(x).expm1(-x)
+
+
+def log_partitions(w: Any, sign: int) -> Any:
     """``ln Z`` of one copy of each level, (n,), for JAX: differentiable twice; +inf where bosons are not confined."""
     import jax.numpy as jnp
 
-    if statistics == "fermions":
+    if sign > 0:
         return jnp.logaddexp(0.0, -w)
-    if statistics == "bosons":
+    if sign < 0:
         inside = jnp.where(w > 0, w, 1.0)
         return jnp.where(w > 0, -jnp.log(-jnp.expm1(-inside)), jnp.inf)
     return jnp.exp(-w)
 
 
-def exponents(occupation: np.ndarray, statistics: str) -> np.ndarray:
+def exponents(occupation: np.ndarray, sign: int) -> np.ndarray:
     """The exponents w with these occupations, ``ln((1 - s n)/n)``; infinite for empty and for full levels."""
     with np.errstate(divide="ignore"):
-        return np.log1p(-SIGNS[statistics] * occupation) - np.log(occupation)
+        return np.log1p(-sign * occupation) - np.log(occupation)
 
 
-def level_entropy(w: np.ndarray, occupation: np.ndarray, statistics: str) -> np.ndarray:
+def level_entropy(w: np.ndarray, occupation: np.ndarray, sign: int) -> np.ndarray:
     """Entropy ``ln Z + w n`` of one copy of each level in nats, (n,); 0 where w is infinite."""
     finite = np.isfinite(w)
     w = np.where(finite, w, 1.0)
-    if statistics == "fermions":  # symmetric in particles and holes, as ln Z + w n is not
+    if sign > 0:  # symmetric in particles and holes, as ln Z + w n is not
         e = np.exp(-np.abs(w))
         return np.where(finite, np.log1p(e) + np.abs(w) * e / (1 + e), 0.0)
-    return np.where(finite, level_terms(w, statistics)[0] + w * occupation, 0.0)
+    return np.where(finite, log_weights(w, sign) + w * occupation, 0.0)
 
 
-def unmixing(w: np.ndarray, u: np.ndarray, statistics: str) -> float:
+def unmixing(w: np.ndarray, u: np.ndarray, sign: int) -> float:
     """A number c such that no variance falls faster than ``exp(-c |t|)`` along ``w + t u``.
 
     The logarithmic slope of the variance is tanh(w/2) for fermions, 1 for distinguishable particles and coth(w/2) for
@@ -95,16 +108,16 @@ def unmixing(w: np.ndarray, u: np.ndarray, statistics: str) -> float:
     if not len(u):
         return 0.0
     size = np.abs(u)
-    return float(np.max(size / np.tanh(0.5 * w)) if statistics == "bosons" else size.max())
+    return float(np.max(size / np.tanh(0.5 * w)) if sign < 0 else size.max())
 
 
-def dual_of_logs(w: np.ndarray, statistics: str) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+def dual_of_logs(w: np.ndarray, sign: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Value, occupation and curvature of ``max_n [ln n + ln(1 - n) - w n]``, without ``ln(1 - n)`` unless fermions.
 
     Conjugates of self-concordant barriers are self-concordant (Nesterov, Nemirovskii 1994, from memory).  For bosons
     and distinguishable particles w must be positive.
     """
-    if statistics != "fermions":
+    if sign <= 0:
         return -np.log(w) - 1.0, 1.0 / w, 1.0 / w**2
     root = np.hypot(w, 2.0)
     # the occupation 2/(2 + w + r) and the one of the holes, 2/(2 - w + r), without cancellation

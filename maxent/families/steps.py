@@ -16,7 +16,7 @@ from scipy.optimize import brentq
 
 from maxent.core.contract import Evaluation, namespace
 from maxent.families.reachable import PASS
-from maxent.families.statistics import level_terms, mean_occupations
+from maxent.families.statistics import SIGNS, level_terms, occupations
 
 __all__ = ["kept_inside", "multiple"]
 
@@ -105,6 +105,7 @@ def _along(levels: Levels, lam: np.ndarray, step: np.ndarray, evaluation: Evalua
 
     Trial points cost occupations alone, no products with the charges.
     """
+    sign = SIGNS[levels.statistics]
     w, change = lam @ levels.charges, step @ levels.charges
     held, weight = float(step @ levels.constant), levels.degeneracy * change
     most, start = LONGEST, -float(evaluation.values @ step)
@@ -117,13 +118,13 @@ def _along(levels: Levels, lam: np.ndarray, step: np.ndarray, evaluation: Evalua
 
     more, bend = 0.0, 0.0
     if evaluation.lowest is None:  # a penalty in the same dual: what its slope and curvature add
-        _, n, variance = level_terms(w, levels.statistics)
+        _, n, variance = level_terms(w, sign)
         more = start + float(weight @ n) + held
         bend = float(step @ evaluation.covariance @ step) - float((weight * change) @ variance)
 
     def slope(t: float) -> float:
         with np.errstate(over="ignore", invalid="ignore"):
-            return more + t * bend - held - float(weight @ mean_occupations(w + t * change, levels.statistics))
+            return more + t * bend - held - float(weight @ occupations(w + t * change, sign))
 
     t = min(1.0, most)
     at = slope(t)
@@ -141,14 +142,14 @@ def _bent(levels: Levels, lam: np.ndarray, k: int, evaluation: Evaluation) -> np
     """Minimiser of the model that is quadratic but for level k: a scalar equation for the new exponent of k."""
     q, g = levels.charges[:, k], levels.degeneracy[k]
     w = float(lam @ q)
-    _, n, variance = (float(x) for x in level_terms(np.float64(w), "bosons"))
+    _, n, variance = (float(x) for x in level_terms(np.float64(w), -1))
     h, axes = np.linalg.eigh(evaluation.covariance - g * variance * np.outer(q, q))
     inverse = (axes / np.maximum(h, 1e-12 * max(h[-1], 1e-300))) @ axes.T
     rest, along = inverse @ (g * n * q - evaluation.values), inverse @ q
     start, pull = w - float(q @ rest), g * float(q @ along)
     # new = start + pull n(new), and 1/w - 1/2 <= n(w) <= 1/w brackets the root
     low, high = _positive_root(start - 0.5 * pull, pull), _positive_root(start, pull)
-    filled = lambda x: float(mean_occupations(np.asarray(x), "bosons"))
+    filled = lambda x: float(occupations(np.asarray(x), -1))
     excess = lambda x: x - start - pull * filled(x)
     inside = excess(low) < 0 < excess(high)
     new = brentq(excess, low, high, xtol=1e-300, rtol=1e-12) if inside else high

@@ -13,7 +13,7 @@ from maxent.core.contract import Problem
 from maxent.families import Matrices, Microstates, Modes
 from maxent.families.modes import fill
 from maxent.families.reachable import inward
-from maxent.families.statistics import level_terms
+from maxent.families.statistics import SIGNS, level_terms
 
 ALL = ("fermions", "bosons", "distinguishable")
 LEVELS = np.array([0.0, 0.5, 1.0, 1.7])
@@ -99,7 +99,7 @@ def test_nothing_overflows_or_cancels(statistics):
     if statistics != "fermions":
         w = w[w > (0 if statistics == "bosons" else -600)]
     with mpmath.workdps(60):
-        for x, *got in zip(w, *level_terms(w, statistics), strict=True):
+        for x, *got in zip(w, *level_terms(w, SIGNS[statistics]), strict=True):
             y = mpmath.mpf(float(x))
             if statistics == "distinguishable":
                 n, s, log_z = mpmath.exp(-y), 0, mpmath.exp(-y)

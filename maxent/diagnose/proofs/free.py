@@ -78,8 +78,9 @@ def bound_of_bilinears(family: Bilinears, v: np.ndarray, targets: np.ndarray) ->
         return None
     (w, exponent), direction = pair, [Fraction(x) for x in v.tolist()]
     back, constant = Fraction(2) ** exponent, np.array([q.constant for q in operators])
-    if family.number is not None:
-        low = body.filled_with(w, family.number)
+    if family.number is not None:  # of bosons all in the lowest level
+        fermions = family.statistics == "fermions"
+        low = body.filled_with(w, family.number) if fermions else family.number * body.lowest_level(w)
     elif family.statistics == "fermions":
         low = body.filled(w)
     else:
