@@ -14,7 +14,7 @@ from functools import lru_cache
 
 import numpy as np
 
-__all__ = ["average", "momentum_nodes"]
+__all__ = ["average", "momentum_nodes", "resolving_level"]
 
 #: Beyond this argument of the transformation the weights are below 1e-22.
 REACH = 3.5
@@ -69,6 +69,31 @@ def average(f: Callable[[np.ndarray], np.ndarray], *, accuracy: float = 1e-13) -
     >>> print(f"{average(lambda k: np.sqrt(2 - 2 * np.cos(k))):.12f}")  # 4/pi
     1.273239544735
     """
+    return _converged(f, accuracy)[0]
+
+
+def resolving_level(f: Callable[[np.ndarray], np.ndarray], *, accuracy: float = 1e-13) -> int:
+    """Level of `momentum_nodes` at which the mean of a function no longer changes.
+
+    Parameters
+    ----------
+    f, accuracy
+        As for `average`.
+
+    Raises
+    ------
+    ValueError
+        As for `average`.
+
+    Examples
+    --------
+    >>> [resolving_level(lambda k, a=a: 1 / (a + np.cos(2 * k))) for a in (1.5, 1.0005)]  # sharp at pi/2
+    [9, 14]
+    """
+    return _converged(f, accuracy)[1]
+
+
+def _converged(f: Callable[[np.ndarray], np.ndarray], accuracy: float) -> tuple[np.ndarray, int]:
     before, change, allowed = None, np.inf, 0.0
     for level in range(FIRST, MOST + 1):
         k, weights = momentum_nodes(level)
@@ -78,7 +103,7 @@ def average(f: Callable[[np.ndarray], np.ndarray], *, accuracy: float = 1e-13) -
             size = float(np.max(np.abs(values) @ weights, initial=0.0))
             change, allowed = float(np.max(np.abs(found - before), initial=0.0)), accuracy * size
             if change <= allowed:
-                return found
+                return found, level
         before = found
     raise ValueError(
         f"the average over momenta still changes by {change:.1e} at {len(k)} nodes, more than the {allowed:.1e} allowed"

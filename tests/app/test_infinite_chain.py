@@ -153,8 +153,10 @@ def test_tables_arrays_and_figures_of_a_run(tmp_path, capsys):
         ('"Z[0]"', '"Z[0"', "c.toml:11: predictions.z: formula column"),
         ('"Z[0]"', '"Z[30]"', "c.toml:11: predictions.z: formula column 3: subscript 30 is out of range"),
         ('"Z[0]"', '"1j*Z[0]"', "c.toml:11: predictions.z: "),
-        ("[chain]", "[chain]\ncoupling = -1.0", "c.toml:6: chain.coupling: must be positive, got -1"),
+        ("[chain]", "[chain]\ncoupling = -1.0", "c.toml:6: chain.coupling: must lie in 1e-06..1e+06, got -1"),
         ('"transverse field"', '"heisenberg"', "c.toml:6: chain.model: expected 'transverse field' or"),
+        ("field = 2.0", "field = -1e7", "c.toml:9: start.field: lies beyond 1e+06 J, got -10000000"),
+        ("field = 0.5", "field = 1e200", "c.toml:7: chain.field: lies beyond 1e+06 J, got 1e+200"),
         ("field = 2.0", "field = inf", "c.toml:9: start.field: expected a finite number, got inf"),
     ],
 )
@@ -168,3 +170,24 @@ def test_bad_input(tmp_path, old, new, said):
 def test_bosons_have_no_field(tmp_path):
     with pytest.raises(ConfigError, match=r"c\.toml:5: chain\.field: a chain of hard-core bosons has none"):
         built(tmp_path, BOSONS.replace("[start]", "field = 1.0\n[start]"))
+
+
+def test_the_depth_of_a_superlattice(tmp_path):
+    for depth, said in (
+        ("0.0", "must be positive, got 0: without a potential nothing changes"),
+        ("1e-4", "the occupations are too steep in momentum: the average over momenta still changes by"),
+    ):
+        with pytest.raises(ConfigError) as caught:
+            built(tmp_path, BOSONS.replace("superlattice = 4.0", f"superlattice = {depth}"))
+        assert f"c.toml:6: start.superlattice: {said}" in str(caught.value)
+
+
+def test_steep_occupations_get_more_momenta(tmp_path):
+    """A shallow superlattice: targets and entropy are those of the integral and not of 513 momenta."""
+    from scipy.integrate import quad
+
+    job = built(tmp_path, BOSONS.replace("superlattice = 4.0", "superlattice = 0.05"))
+    occupation = lambda k: 0.5 * (1 + 2 * np.cos(k) / np.hypot(0.05, 2 * np.cos(k)))
+    hop = quad(lambda k: 2 * np.cos(k) * occupation(k) / np.pi, 0, np.pi, points=[np.pi / 2], epsabs=1e-13, limit=400)
+    assert int(job.facts["momenta"]) > 513
+    assert job.targets["I1"].value == pytest.approx(hop[0], abs=1e-11)

@@ -18,10 +18,8 @@ if TYPE_CHECKING:
     from maxent.quench.infinite_chains import StationaryState
     from maxent.quench.truncated import TruncatedEnsemble
 
-__all__ = ["LEVEL", "SITES", "sections", "word_mean"]
+__all__ = ["SITES", "sections", "word_mean"]
 
-#: Numbers of momenta in the fits, 2^LEVEL + 1.
-LEVEL = 9
 #: Sites that a prediction may name.
 SITES = 24
 #: Momenta of the table of occupations.
@@ -38,6 +36,7 @@ def sections(
     counts: Sequence[int],
     blocks: Sequence[int],
     words: Mapping[str, Any],
+    level: int,
 ) -> list[Section]:
     """Everything beside the fit.
 
@@ -54,14 +53,16 @@ def sections(
         Sites of the blocks.
     words : mapping of str to terms
         Predictions, as pairs of a coefficient and a product of Pauli matrices.
+    level : int
+        Numbers of momenta in the fits, ``2^level + 1``.
 
     Returns
     -------
     list of Section
     """
     every = sorted(set(counts)) or list(range(1, count + 1))
-    found = [_truncation(complete, every, sorted(set(blocks))), _occupations(complete, result, count)]
-    return [*found, _means(complete, result, count, words)] if words else found
+    found = [_truncation(complete, every, sorted(set(blocks)), level), _occupations(complete, result, count)]
+    return [*found, _means(complete, result, count, words, level)] if words else found
 
 
 def word_mean(block: FermionState, terms: Any) -> float:
@@ -82,10 +83,10 @@ def word_mean(block: FermionState, terms: Any) -> float:
 
 
 
-def _truncation(complete: StationaryState, counts: list[int], blocks: list[int]) -> Section:
+def _truncation(complete: StationaryState, counts: list[int], blocks: list[int], level: int) -> Section:
     from maxent.quench.truncated import block_relative_entropies, truncated_ensembles
 
-    ensembles = truncated_ensembles(complete, counts, block=1, level=LEVEL)
+    ensembles = truncated_ensembles(complete, counts, block=1, level=level)
     relative = block_relative_entropies(complete, ensembles, blocks)
     columns = [
         Column("charges", counts, "number of charges of the ensemble"),
@@ -157,14 +158,14 @@ def _occupations(complete: StationaryState, result: Any, count: int) -> Section:
     )
 
 
-def _means(complete: StationaryState, result: Any, count: int, words: Mapping[str, Any]) -> Section:
+def _means(complete: StationaryState, result: Any, count: int, words: Mapping[str, Any], level: int) -> Section:
     from maxent.quench.infinite_chains import block_at_nodes
 
     whole = complete.block(SITES)
     every = [word_mean(whole, terms) for terms in words.values()]
     found = [np.nan] * len(every)
     if result.state is not None:
-        ours = block_at_nodes(complete.chain, result.state.occupations, SITES, level=LEVEL)
+        ours = block_at_nodes(complete.chain, result.state.occupations, SITES, level=level)
         found = [word_mean(ours, terms) for terms in words.values()]
     return Section(
         "means",

@@ -12,8 +12,10 @@ from dataclasses import field as key  # `field` is a key here
 from pathlib import Path as File
 from typing import TYPE_CHECKING, Any, Literal
 
-from maxent.app.job import Job, Problems, Target, says
-from maxent.app.kinds._truncation import LEVEL, SITES, sections, word_mean
+import numpy as np
+
+from maxent.app.job import BadInput, Job, Problems, Target, says
+from maxent.app.kinds._truncation import SITES, sections, word_mean
 from maxent.errors import FormulaError
 from maxent.text import number
 
@@ -25,6 +27,10 @@ __all__ = ["ChainTable", "Options", "StartField", "build"]
 STRICT: Any = {"extra": "forbid", "strict": True}
 #: Charges and block sizes up to this are resolved by the momenta of the fit.
 MOST = 64
+#: Momenta of the fits are 2^LEAST + 1 at least, more where occupations are steep.
+LEAST = 9
+#: Fields and depths beyond this many times J are not taken.
+FAR = 1e6
 _MODELS = {"transverse field": ("field", "after_quench"), "hard-core bosons": ("superlattice", "after_superlattice")}
 
 
@@ -112,7 +118,8 @@ def build(options: Options, folder: File) -> Job:
 
     complete = _complete(options)
     chain = complete.chain
-    k, weights = momentum_nodes(LEVEL)
+    level = _level(options, complete)
+    k, weights = momentum_nodes(level)
     rows = {f"I{m}": chain.charge(m)(k) for m in range(options.charges)}
     constants = {f"I{m}": chain.constant(m) for m in range(options.charges)}
     family = Modes(rows, degeneracy=weights, constants=constants)
@@ -123,25 +130,33 @@ def build(options: Options, folder: File) -> Job:
     }
 
     def mean(state: Any, terms: Any) -> float:
-        return word_mean(block_at_nodes(chain, state.occupations, SITES, level=LEVEL), terms)
+        return word_mean(block_at_nodes(chain, state.occupations, SITES, level=level), terms)
 
     return Job(
         family,
         targets,
         words,
-        _facts(options, complete),
+        _facts(options, complete, len(k)),
         mean=mean,
         unit="site",
         further=lambda result: sections(
-            complete, result, count=options.charges, counts=options.counts, blocks=options.blocks, words=words
+            complete,
+            result,
+            count=options.charges,
+            counts=options.counts,
+            blocks=options.blocks,
+            words=words,
+            level=level,
         ),
     )
 
 
 def _check(options: Options, problems: Problems) -> None:
     chain, start = options.chain, options.start
-    if not chain.coupling > 0:
-        problems.add(("chain", "coupling"), f"must be positive, got {number(chain.coupling)}")
+    if not 1 / FAR <= chain.coupling <= FAR:
+        problems.add(("chain", "coupling"), f"must lie in {1 / FAR:.0e}..{FAR:.0e}, got {number(chain.coupling)}")
+    elif abs(chain.field or 0.0) > FAR * chain.coupling:
+        problems.add(("chain", "field"), f"lies beyond {FAR:.0e} J, got {number(chain.field)}")
     if chain.model == "transverse field" and chain.field is None:
         problems.add(("chain", "field"), "missing: the field after the quench")
     if chain.model == "hard-core bosons" and chain.field is not None:
@@ -151,6 +166,10 @@ def _check(options: Options, problems: Problems) -> None:
         given = getattr(start, name)
         if name == wanted and given is None:
             problems.add(("start", name), f'missing: model = "{chain.model}" starts with it')
+        elif name == wanted and abs(given) > FAR * chain.coupling:
+            problems.add(("start", name), f"lies beyond {FAR:.0e} J, got {number(given)}")
+        elif name == "superlattice" == wanted and not given > 0:
+            problems.add(("start", name), f"must be positive, got {number(given)}: without a potential nothing changes")
         if name != wanted and given is not None:
             problems.add(("start", name), f'means nothing for model = "{chain.model}", which takes {wanted}')
     if not 1 <= options.charges <= MOST:
@@ -192,7 +211,28 @@ def _complete(options: Options) -> StationaryState:
     return getattr(made, way)(getattr(options.start, start))
 
 
-def _facts(options: Options, complete: StationaryState) -> dict[str, str]:
+def _level(options: Options, complete: StationaryState) -> int:
+    """Level of the quadrature at which entropy, charges and blocks of the stationary state are exact to rounding."""
+    from maxent.families.gaussian_states import binary_entropy
+    from maxent.quench.momentum_averages import resolving_level
+
+    chain, most = complete.chain, max([options.charges, *options.counts])
+    size = max([SITES, *options.blocks])
+
+    def every(k: np.ndarray) -> np.ndarray:
+        n = complete.occupations(k)
+        unit = np.abs(chain.level(k)).max()
+        rows = [chain.charge(m)(k) * n / unit for m in range(most)]
+        return np.concatenate([[binary_entropy(n)], rows, chain.correlations(size, k, n)])
+
+    try:
+        return max(LEAST, resolving_level(every, accuracy=1e-12))
+    except ValueError as bad:
+        text = f"the occupations are too steep in momentum: {bad}"
+        raise BadInput([(("start", _MODELS[options.chain.model][0]), text)]) from bad
+
+
+def _facts(options: Options, complete: StationaryState, momenta: int) -> dict[str, str]:
     chain, name = options.chain, _MODELS[options.chain.model][0]
     facts = {
         "chain": f"{chain.model}, infinitely long; all numbers are per site",
@@ -202,6 +242,6 @@ def _facts(options: Options, complete: StationaryState) -> dict[str, str]:
         facts["parameter h"] = number(chain.field)
     return facts | {
         "start": f"ground state at {name} {number(getattr(options.start, name))}",
-        "momenta": str(2**LEVEL + 1),
+        "momenta": str(momenta),
         "entropy per site with all charges": number(complete.entropy, 12),
     }
