@@ -205,13 +205,14 @@ def _by_jax(roles: Roles, result: Any, forces: Iterable[Any]) -> list[Any]:
     from maxent.quench.forces import parameter_slopes
     from maxent.quench.selfchecks import FIRST, compared
 
-    beta = result.multipliers[roles.energy]
-    out = []
-    for coupling, force in zip(roles.couplings, forces, strict=True):
-        if force.reason:
-            continue
-        charges = coupling.charges(coupling.value)
-        found = parameter_slopes(charges, result.multipliers, parameters=[coupling.name.partition("[")[0]])
+    wanted = [(c, f) for c, f in zip(roles.couplings, forces, strict=True) if not f.reason]
+    if not wanted:
+        return []
+    beta, out = result.multipliers[roles.energy], []
+    charges = wanted[0][0].charges(wanted[0][0].value)
+    parameters = list(dict.fromkeys(c.name.partition("[")[0] for c, _ in wanted))
+    found = parameter_slopes(charges, result.multipliers, parameters=parameters)
+    for coupling, force in wanted:
         slope = found.gradient[found.names.index(coupling.name)]
         name = f"d ln Z/d{coupling.name}, means of operators against JAX"
         out.append(compared(name, beta * force.value, slope, 1 + abs(slope), FIRST))
