@@ -16,6 +16,7 @@ from maxent.families import Bilinears, Modes, Periodic
 from maxent.result import Certificate
 from tests.conformance.dense import random_hermitian, random_unitary
 from tests.conformance.examples import random_pairing
+from tests.corpus.problems import KINDS, problems
 from tests.proofs.elimination import dot
 
 NAMES = ("a", "b", "c")
@@ -299,3 +300,53 @@ def test_what_was_computed_is_not_proved(rng):
     assert certificate.prove(family, targets)
     proof = certificate.prove(family.combine(np.eye(3), np.zeros(3)), targets)
     assert proof.status == NO_METHOD and "computed" in proof.detail
+
+
+# ---------------------------------------------------------------- problems of known truth
+
+
+UNREACHABLE = [
+    k for k in KINDS if k.startswith(("outside", "inconsistent")) and k.split("-")[1] in ("levels", "quadratic", "ring")
+]
+
+
+@pytest.mark.parametrize("kind", UNREACHABLE)
+def test_whatever_is_called_unreachable_is_proved(kind):
+    for problem in problems(kind, seed=21, count=4):
+        family = problem.build()
+        result = maxent.solve(family, problem.targets)
+        proof = result.prove(family)
+        assert str(result.verdict) == problem.verdict and proof, (problem.identity, proof.detail)
+        assert proof.margin <= problem.distance * (1 + 1e-9) + 2 * result.certificate.tolerance, problem.identity
+
+
+def with_pairing(rng, n: int, m: int, free: int) -> list[tuple]:
+    """Charges of paired fermions; the first has `free` levels at zero and fills all below, its value is 0."""
+    h, d = random_hermitian(rng, n, is_complex=True), random_pairing(rng, n)
+    u = np.linalg.eigh(np.block([[h, d], [-d.conj(), -h.conj()]]))[1][:, n:]
+    holes = np.concatenate([u[n:], u[:n]]).conj()
+    x = np.append(np.zeros(free), rng.uniform(0.3, 2, n - free))
+    whole = (u * x) @ u.conj().T - (holes * x) @ holes.conj().T
+    pair = 0.5 * (whole[:n, n:] - whole[:n, n:].T)
+    first = (0.5 * (whole[:n, :n] + whole[:n, :n].conj().T), pair, 0.5 * float(x.sum() - np.trace(whole[:n, :n]).real))
+    return [first] + [(random_hermitian(rng, n, is_complex=True), random_pairing(rng, n), 0.3) for _ in range(m - 1)]
+
+
+@pytest.mark.parametrize("free", [0, 1, 2])
+@pytest.mark.parametrize("seed", range(3))
+def test_paired_fermions_on_and_next_to_a_face(seed, free):
+    """Infeasible, boundary and solved, all next to a face with `free` levels; infeasible ones are proved."""
+    rng = np.random.default_rng([seed, free])
+    family = Bilinears(dict(zip(NAMES, with_pairing(rng, 4, 3, free), strict=True)))
+    e = np.array([1.0, 0.0, 0.0])
+    assert family.lowest(e).value == pytest.approx(0.0, abs=1e-13)
+    inside = family.evaluate(0.3 * rng.standard_normal(3)).values
+    face = family.face(e, 1e-13).family
+    point = np.append(0.0, face.evaluate(rng.standard_normal(3)).values[1:])
+    edge = maxent.solve(family, named(point))
+    assert edge.verdict is maxent.Verdict.BOUNDARY and edge.face.dimension == 2**free
+    for step in (1e-1, 1e-5, 1e-9):
+        result = maxent.solve(family, named(point - step * e))
+        assert result.verdict is maxent.Verdict.INFEASIBLE and result.prove(family)
+        t = step / inside[0]
+        assert t < 1 and maxent.solve(family, named((1 - t) * point + t * inside)).verdict is maxent.Verdict.SOLVED
