@@ -27,7 +27,7 @@ __all__ = [
 
 SECTOR = "sector of the start"
 
-_MARKERS = "osD^vPX"
+_MARKERS = "osD^vPX<>"
 _COLOURS = ("edge", "mark", "ink", "soft")
 #: Inches that a letter of a key and the mark beside it take.
 _LETTER, _MARK = 0.0505, 0.36

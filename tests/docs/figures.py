@@ -37,6 +37,7 @@ def figures(names: dict[str, Any]) -> Iterator[tuple[str, str]]:
         "trace": ("Nearest-neighbour correlation in time", plots.plot_trace, plots.describe_trace, (ten, "zz")),
         "eigenstates": ("Single eigenstates", plots.plot_eigenstates, plots.describe_eigenstates, (ten, "zz")),
         "ranking": ("Ranking of the charges", plots.plot_ranking, plots.describe_ranking, (ten.ranking,)),
+        "scatter": ("Scatter of eigenstates", plots.plot_scatter, plots.describe_scatter, (names["several"], "x")),
         "sizes": ("Distance of two sites by size", plots.plot_sizes, plots.describe_sizes, (series, 2)),
     }
     for name, (title, plot, describe, of) in drawn.items():
