@@ -10,9 +10,8 @@ import math
 import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from numbers import Integral
 from typing import Any, Literal
-
-import numpy as np
 
 from maxent.app.study_words import Table
 from maxent.text import number, table
@@ -114,6 +113,8 @@ def summary(entries: Sequence[Mapping[str, Any]]) -> list[str]:
 
 def write_arrays(out: Any, entries: Sequence[Mapping[str, Any]]) -> None:
     """Write the columns of numbers into an open NetCDF file, ``<section>_<column>`` along the dimension `<section>`."""
+    import numpy as np
+
     for e in entries:
         dimension = _identifier(e["name"])
         numbers = [c for c in e["columns"] if not any(isinstance(v, str) for v in c["values"])]
@@ -147,7 +148,7 @@ def _cell(value: Any) -> str:
 def _plain(value: Any) -> Any:
     if isinstance(value, str):
         return value
-    if isinstance(value, int | np.integer):
+    if isinstance(value, Integral):
         return int(value)
     return float(value) if math.isfinite(value) else None
 

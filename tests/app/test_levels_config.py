@@ -161,6 +161,7 @@ def test_too_many_fermions(tmp_path):
         (TRAP, '"w*(i + 1)"', '"v*(i + 1)"', "c.toml:9: charges.energy: formula column"),
         (TRAP, '"w*(i + 1)"', '"e.npy"', "c.toml:9: charges.energy: file 'e.npy' cannot be read"),
         (TRAP, "number = 40.0", 'number = "from occupations"', "c.toml:11: targets.number: asks for 'from occ"),
+        (TRAP, "[targets]\nnumber = 40.0\nenergy = 200.0\n", "", "c.toml:8: charges.number: no target for this charge"),
         (GAS, '"bosons"', '"fermions"', "c.toml:13: continuum: states where bosons condense; fermions do not"),
         (GAS, "energy = 0.0", "", "c.toml:13: continuum: the value of 'energy' there is missing"),
         (GAS, "energy = 0.0", "enrgy = 0.0", "c.toml:15: continuum.enrgy: no charge has this name; did you mean 'en"),

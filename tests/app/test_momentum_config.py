@@ -123,6 +123,32 @@ def test_fermions_with_a_current(tmp_path):
     assert result.success
 
 
+def test_a_start_that_is_not_gaussian_is_told(tmp_path):
+    text = CHAIN.replace(CHAIN.split("[start]\n")[1].split("\n")[0], "theta = 0.5")
+    found, section, _ = columns(built(tmp_path, text))
+    assert list(found) == ["momentum", "ensemble"] and section.note.startswith("The start is no Gaussian state")
+
+
+def test_bosons_with_a_pump(tmp_path):
+    """Correlations <b+_i b_j> of eight modes: the sum rule of the number, at the start and in the ensemble."""
+    hop = "(dagger(b[i])*b[i+1] + h.c.)"
+    text = f"""kind = "bosons"
+sites = {{geometry = "chain", size = 8}}
+method = "gaussian"
+charges.energy = "n[i] - 0.2*{hop} + 0.1*(b[i]*b[i+1] + h.c.)"
+charges.number = "n[i]"
+start = {{thermal_of = "n[i] - 0.3*{hop}", beta = 1.5}}
+targets = {{energy = "from start", number = "from start"}}
+momentum = {{points = 17}}
+"""
+    job = built(tmp_path, text)
+    found, section, _ = columns(job)
+    assert list(found) == ["momentum", "ensemble", "long run", "start"] and not section.note
+    for name in ("ensemble", "start"):
+        mean = (found[name][:-1]).mean()  # -pi to pi, both ends the same; exact for distances below 16
+        assert mean == pytest.approx(job.targets["number"].value / 8, abs=1e-10)
+
+
 def test_spins_with_a_current_have_no_column(tmp_path):
     text = CHAIN.replace("number = \"L/2", "current = \"(X[i]*Y[i+1] - Y[i]*X[i+1])/2\"\nnumber = \"L/2")
     job = built(tmp_path, text.replace('[targets]\n', '[targets]\ncurrent = 0.5\n'))

@@ -7,13 +7,15 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, field
-from typing import Any
-
-import numpy as np
+from typing import TYPE_CHECKING, Any
 
 from maxent.app.job import Problems, says
 from maxent.app.kinds._geometry import STRICT
-from maxent.app.sections import Column, Section
+
+if TYPE_CHECKING:
+    import numpy as np
+
+    from maxent.app.sections import Section
 
 __all__ = ["MOMENTUM", "Momentum", "check_momentum", "momentum_section"]
 
@@ -72,6 +74,9 @@ def momentum_section(sites: Any, points: int, start: Any, hamiltonian: Any, resu
     -------
     Section
     """
+    import numpy as np  # only here: bad configs are told without loading it
+
+    from maxent.app.sections import Column, Section
     from maxent.quench.momentum_distributions import free_momentum_distribution, momentum_distribution
 
     spins = sites.is_spin_half
@@ -93,6 +98,8 @@ def momentum_section(sites: Any, points: int, start: Any, hamiltonian: Any, resu
         add("long run", "distribution from second moments averaged over all times", _averaged(gaussian, hamiltonian))
     if gaussian is not None:
         add("start", "distribution in the start", lambda: gaussian.state)
+    if start is not None and gaussian is None:
+        missing.append("The start is no Gaussian state: no distributions at the start and in the long run.")
     names = tuple(c.name for c in columns[1:])
     what = "hard-core bosons (spins down)" if spins else "the particles"
     return Section(

@@ -16,6 +16,7 @@ import numpy as np
 from maxent.app.data import Files
 from maxent.app.job import ACCURACY, TARGET, BadInput, Job, Problems, Room, Target, check_target, given_target, says
 from maxent.app.kinds._fillings import condensate_remarks, occupation_section
+from maxent.app.kinds._thermodynamics import THERMODYNAMICS, Thermodynamics, check_roles, roles
 from maxent.app.locate import Path
 from maxent.errors import FormulaError
 from maxent.text import listing, number, plural
@@ -91,6 +92,7 @@ class Options:
         default_factory=dict,
         metadata=says("Name -> a further sum over the particles, written like a charge."),
     )
+    thermodynamics: Thermodynamics | None = field(default=None, metadata=says(THERMODYNAMICS))
 
 
 def build(options: Options, folder: File) -> Job:
@@ -160,15 +162,20 @@ def build(options: Options, folder: File) -> Job:
         digests=read.files.digests,
         remarks=lambda result: condensate_remarks(result.state, index, open_end=open_end),
         unit="level",
+        roles=roles(options.thermodynamics, charges, numbers=[n for n, q in charges.items() if np.all(q == 1)]),
         further=lambda result: occupation_section(result.state, index, charges, where),
     )
 
 
 def _check(options: Options, problems: Problems) -> None:
+    check_roles(options.thermodynamics, options.charges, problems)
     for name, given in options.targets.items():
         check_target(("targets", name), given, problems)
         if given == "from occupations" and options.occupations is None:
             problems.add(("targets", name), "asks for 'from occupations', but there are no occupations")
+    if not options.targets:  # of some charges the reader of configs tells the others
+        for name in options.charges:
+            problems.add(("charges", name), "no target for this charge; add it to [targets]")
     if not options.charges:
         if options.occupations is None:
             problems.add(("charges",), "missing; or give the occupations of all levels")
