@@ -87,3 +87,18 @@ def test_complete_ensemble_of_a_ring(size, magnetisation, energy):
     further = Bilinears(charges | {"more": moment(size, after, size // 2 + 1)})
     twin = maxent.solve(further, asked | {"more": start.mean(moment(size, after, size // 2 + 1))})
     assert len(twin.redundancies) == 1 and twin.entropy == pytest.approx(result.entropy, abs=1e-10)
+
+
+@pytest.mark.parametrize("before", [INF, 0.0])
+def test_temperature_of_a_quench_to_the_critical_point(before):
+    """beta, thermal <sz> and thermal entropy at the energy after h0 = infinity or 0 -> h = 1: own quadrature.
+
+    Definition as in D. Rossini, A. Silva, G. Mussardo, G. E. Santoro, Phys. Rev. Lett. 102, 127204 (2009).
+    """
+    chain = TransverseFieldChain(1.0)
+    result, state = chain.after_quench(before).ensemble({"energy": chain.charge(0)})
+    assert_allclose(
+        [result.multipliers["energy"], state.magnetisation, state.entropy],
+        [0.7316165802876614, 0.500000000000006, 0.3976038487391282],
+        atol=1e-9,
+    )
