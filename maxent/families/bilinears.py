@@ -42,9 +42,10 @@ class Bilinears(Family):
         Or a `Periodic`, for all charges or none.
     statistics : {"fermions", "bosons"}
     number : int, optional
-        Fix the number of fermions.  That is another ensemble: the number gets no multiplier and does not fluctuate,
+        Fix the number of particles.  That is another ensemble: the number gets no multiplier and does not fluctuate,
         ``beta mu = ln Z_N - ln Z_{N+1}`` (`insertion` of the state) takes its place, and the state is not Gaussian, so
-        that it answers means of quadratic operators only.  Charges given by matrices, without pairing; host driver.
+        that it answers means of quadratic operators only.  Charges given by matrices, without pairing or linear
+        terms; host driver.  Bosons need no confining charge then.
 
     Raises
     ------
@@ -107,7 +108,7 @@ class Bilinears(Family):
             sign = 1 if statistics == "fermions" else -1
             particles = Stacks(constant, flat, flat_weights, dense, weights, sign)
             places = Places.of(layout)
-        if statistics == "bosons":
+        if statistics == "bosons" and number is None:
             from maxent.families.confinement import confined
 
             particles = confined(particles)
@@ -308,7 +309,7 @@ class Bilinears(Family):
         m = len(self.particles.constant)
         if lam.shape != (m,) or not np.all(np.isfinite(lam)):
             raise ValueError(f"multipliers must be {m} finite numbers, not {lam.tolist()}")
-        if self.statistics == "bosons":
+        if self.statistics == "bosons" and self.number is None:
             smallest = self.particles.smallest_level(lam)
             if smallest <= 0:
                 raise ValueError(f"bosons outside their domain: a level of lam.Q lies at {smallest:.6g}, not above 0")
@@ -325,10 +326,10 @@ def _fixable(operators: dict[str, Quadratic], statistics: str, number: Any) -> N
     ValueError
     """
     n = next(iter(operators.values())).modes
-    if isinstance(number, bool) or not isinstance(number, int | np.integer) or not 0 <= number <= n:
-        raise ValueError(f"number must be an integer in 0..{n}, the number of modes, not {number!r}")
-    if statistics != "fermions":
-        raise ValueError("a fixed number is provided for fermions")
+    most = n if statistics == "fermions" else np.inf
+    if isinstance(number, bool) or not isinstance(number, int | np.integer) or not 0 <= number <= most:
+        allowed = f"in 0..{n}, the number of modes" if statistics == "fermions" else "from 0 on"
+        raise ValueError(f"number must be an integer {allowed}, not {number!r}")
     for name, q in operators.items():
         if q.is_periodic or not q.conserves_number:
             what = "is periodic: give it as a matrix" if q.is_periodic else "does not conserve the number of particles"

@@ -21,7 +21,7 @@ from maxent.families.pfaffians import pauli_word, word_mean
 from maxent.families.quadratic import Quadratic, quadratic
 from maxent.memory import require_memory
 
-__all__ = ["BosonState", "FermionState", "binary_entropy", "quadratic_of", "symplectic_form"]
+__all__ = ["BosonState", "FermionState", "NumberState", "binary_entropy", "quadratic_of", "symplectic_form"]
 
 #: What a covariance matrix may miss its bounds by.
 ROUNDING = 1e-10
@@ -66,8 +66,26 @@ def quadratic_of(operator: Any, statistics: str, modes: int) -> Quadratic:
     return q
 
 
+class NumberState:
+    """What states of free particles have in common that know ``number``, the matrix ``<c+_a c_b>``."""
+
+    #: These families have no prior.
+    relative_entropy: ClassVar[None] = None
+    number: Any
+
+    @property
+    def modes(self) -> int:
+        """Number of modes."""
+        return len(self.number)
+
+    @property
+    def occupations(self) -> np.ndarray:
+        """``<c+_a c_a>`` of every mode, (n,)."""
+        return np.real(np.diag(self.number)).copy()
+
+
 @dataclass(frozen=True)
-class FermionState:
+class FermionState(NumberState):
     """A Gaussian state of n fermion modes.
 
     Attributes
@@ -83,8 +101,6 @@ class FermionState:
     covariance: np.ndarray
     entropy: float
     log_partition: float = float("nan")
-    #: These families have no prior.
-    relative_entropy: ClassVar[None] = None
 
     @classmethod
     def of(cls, covariance: Any) -> FermionState:
@@ -145,12 +161,6 @@ class FermionState:
     def pair(self) -> np.ndarray:
         """``<c_a c_b>``, (n, n)."""
         return correlations(self.covariance)[1]
-
-    @property
-    def occupations(self) -> np.ndarray:
-        """``<c+_a c_a>`` of every mode, (n,)."""
-        i = np.arange(self.modes)
-        return 0.5 * (1 + self.covariance[2 * i, 2 * i + 1])
 
     def mean(self, operator: Any) -> float:
         """Expectation value of a quadratic operator, given as charges are.
@@ -241,7 +251,7 @@ def _fermion_entropy(g: np.ndarray) -> float:
 
 
 @dataclass(frozen=True)
-class BosonState:
+class BosonState(NumberState):
     """A Gaussian state of n boson modes.
 
     Attributes
@@ -259,8 +269,6 @@ class BosonState:
     displacement: np.ndarray
     entropy: float
     log_partition: float = float("nan")
-    #: These families have no prior.
-    relative_entropy: ClassVar[None] = None
 
     @classmethod
     def of(cls, covariance: Any, displacement: Any = None) -> BosonState:
@@ -306,11 +314,6 @@ class BosonState:
         v = self.covariance + np.outer(self.displacement, self.displacement)
         xx, xp, pp = v[:n, :n], v[:n, n:], v[n:, n:]
         return 0.5 * (xx + pp - np.eye(n)) + 0.5j * (xp - xp.T)
-
-    @property
-    def occupations(self) -> np.ndarray:
-        """``<b+_a b_a>`` of every mode, (n,)."""
-        return np.real(np.diag(self.number)).copy()
 
     def mean(self, operator: Any) -> float:
         """Expectation value of an operator that is quadratic and linear, given as charges are.

@@ -18,10 +18,11 @@ from typing import NamedTuple
 
 import numpy as np
 
-from maxent.core.blocks import Blocks, real_rows
+from maxent.core.blocks import Blocks
 from maxent.families.antisymmetric import Canonical, canonical_forms
+from maxent.families.levelling import levelled
 from maxent.families.majoranas import from_majoranas
-from maxent.families.projected import filled
+from maxent.families.projected import falls, filled
 from maxent.families.ring_states import SectorState
 from maxent.families.stacks import Stacks
 
@@ -176,41 +177,12 @@ class Sector:
         """Polished directions: of levels at zero, and of several lowest levels of which one is filled."""
         if self.modes:
             yield from self.stacks().sharpen(v)
-            yield from self._equalised(v)
+            if self.forms(v)[2] < 0:
+                yield from levelled(v, self._one_particle)
 
-    def _equalised(self, v: np.ndarray) -> Iterator[np.ndarray]:
-        """Directions near `v` along which the lowest levels of an odd number of quasiparticles are equal.
-
-        Equal levels mean that ``v.Q`` is a number on them, which is linear in v as long as the levels stand still.
-        """
-        lines = self.lines(v)
-        order = np.sort(lines.levels)
-        if lines.sign >= 0 or len(order) < 2 or not order[-1] > 0:
-            return
-        decades = np.log10(np.maximum(order / order[-1] - order[0] / order[-1], 1e-14))
-        jumps = np.diff(decades)
-        counts = [int(i) + 1 for i in np.argsort(-jumps, kind="stable")[:3] if i > 0 and jumps[i] > 0.7]
-        for g in [*counts, len(order)]:
-            better = self._equal(v, g)
-            if better is not None:
-                yield better
-
-    def _equal(self, v: np.ndarray, g: int) -> np.ndarray | None:
-        """`v` turned until the g lowest levels are equal; None where that leads far away."""
-        for _ in range(6):
-            lines = self.lines(v)
-            hops = self._hops(lines.forms, np.sort(np.argsort(lines.levels, kind="stable")[:g]))
-            even = np.einsum("jaa->j", hops).real / g
-            axes, weights, _ = np.linalg.svd(real_rows(hops - even[:, None, None] * np.eye(g)))
-            fixed = axes[:, : int(np.sum(weights > 1e-9 * weights[0]))]
-            step = fixed @ (fixed.T @ v)
-            left = float(np.linalg.norm(v - step))
-            if left < 0.5:
-                return None
-            v = (v - step) / left
-            if np.linalg.norm(step) < 1e-15:
-                break
-        return v
+    def _one_particle(self, v: np.ndarray) -> tuple[np.ndarray, Callable[[np.ndarray], np.ndarray]]:
+        forms, levels, _ = self.forms(v)
+        return levels, partial(self._hops, forms)
 
     def _frame(self, forms: list[Canonical]) -> np.ndarray:
         """Majorana operators of the quasiparticles, (2L, 2n)."""
@@ -287,8 +259,8 @@ class Sector:
             y00, y01, y10, y11 = y[..., 0::2, 0::2], y[..., 0::2, 1::2], y[..., 1::2, 0::2], y[..., 1::2, 1::2]
             one = inside.one[table]
             first, second = f.levels[:, :, None], f.levels[:, None, :]
-            hop = np.maximum(one, one.transpose(0, 2, 1)) * _falls(np.abs(first - second))
-            pair = inside.none[table] * _falls(first + second)
+            hop = np.maximum(one, one.transpose(0, 2, 1)) * falls(np.abs(first - second))
+            pair = inside.none[table] * falls(first + second)
             off = 1 - np.eye(width)
             for part, weight in ((y00 + y11, hop), (y01 - y10, hop), (y00 - y11, pair), (y01 + y10, pair)):
                 rows.append((part * (0.5 * np.sqrt(weight * off))).reshape(m, -1))
@@ -314,11 +286,6 @@ class Sector:
         )  # fmt: skip
         log_z = inside.log_z + 0.5 * float(e.sum()) - float(lam @ self.constant)
         return Thermal(log_z, inside.log_z + float(e @ inside.mean), make)
-
-
-def _falls(d: np.ndarray) -> np.ndarray:
-    """``(1 - e^-d)/d``, 1 at d = 0."""
-    return np.where(d > 1e-8, -np.expm1(-d) / np.where(d > 1e-8, d, 1.0), 1.0 - 0.5 * d)
 
 
 @dataclass(frozen=True, eq=False)

@@ -15,7 +15,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-__all__ = ["Filled", "filled"]
+__all__ = ["Filled", "falls", "filled"]
 
 #: Below this the odd sector is its lowest quasiparticle, and products of occupations underflow.
 TINY = 1e-290
@@ -70,6 +70,11 @@ def filled(e: np.ndarray, s: int) -> Filled:
         np.outer(n, hole) * other(two_out) / weight,
         np.outer(hole, hole) * same(two_out) / weight,
     )
+
+
+def falls(d: np.ndarray) -> np.ndarray:
+    """``(1 - e^-d)/d``, 1 at d = 0: what becomes of a hop over the distance d >= 0 in the Kubo-Mori covariance."""
+    return np.where(d > 1e-8, -np.expm1(-d) / np.where(d > 1e-8, d, 1.0), 1.0 - 0.5 * d)
 
 
 def _one_alone(e: np.ndarray) -> Filled:
