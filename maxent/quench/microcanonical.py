@@ -219,7 +219,7 @@ def _sharp(setting: Setting, found: Levels, widths: Mapping[str, float], held: M
     kept = found.inside(bounds)
     distinct = len(np.unique(found.clusters[kept]))
     if distinct < SPACINGS:
-        return f"{plural(distinct, 'distinct level')} in a width of {number(widths[found.energy], 4)} are too few"
+        return f"a width of {number(widths[found.energy], 4)} holds {plural(distinct, 'distinct level')} only"
     window = sharp_window(found, bounds)
     facts = {"states": float(np.count_nonzero(kept)), "mean": window.mean}
     for n in widths:
