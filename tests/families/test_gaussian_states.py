@@ -174,3 +174,51 @@ def test_thermal_and_squeezed_modes():
 def test_what_is_no_state_is_refused_with_the_numbers(make, text):
     with pytest.raises(ValueError, match=text):
         make()
+
+
+def fock(levels: int, modes: int) -> list[np.ndarray]:
+    """Positions and momenta of some modes over so many levels each."""
+    b = np.diag(np.sqrt(np.arange(1.0, levels)), 1)
+    one = [(b + b.T) / np.sqrt(2), (b - b.T) / (1j * np.sqrt(2))]
+    place = lambda a, k: reduce(np.kron, [a if i == k else np.eye(levels) for i in range(modes)])
+    return [place(a, k) for a in one for k in range(modes)]
+
+
+@pytest.mark.parametrize(("modes", "levels"), [(1, 70), (2, 24)])
+def test_distances_of_bosons_against_truncated_fock_spaces(rng, modes, levels):
+    """exp(-R.M.R/2 - d.R) of both states as matrices; the cut is not seen."""
+    r, states, matrices, roots = fock(levels + 2, modes), [], [], []
+    # products are formed in a larger space and cut: at the top level they would be wrong
+    inside = np.flatnonzero((np.indices((levels + 2,) * modes) < levels).all(axis=0).ravel())
+    cut = lambda x: x[np.ix_(inside, inside)]
+    for size in (2.0, 3.0):
+        a = 0.15 * rng.standard_normal((2 * modes, 2 * modes))
+        m, d = size * (np.eye(2 * modes) + 0.5 * (a + a.T)), 0.3 * rng.standard_normal(2 * modes)
+        k = sum(m[i, j] * r[i] @ r[j] for i in range(2 * modes) for j in range(2 * modes)) / 2
+        k = k + sum(d[i] * r[i] for i in range(2 * modes))
+        e, u = np.linalg.eigh(cut(0.5 * (k + k.conj().T)))
+        p = np.exp(-(e - e[0])) / np.exp(-(e - e[0])).sum()
+        matrices.append((u * p) @ u.conj().T)
+        roots.append((u * np.sqrt(p)) @ u.conj().T)
+        mean = np.array([np.trace(matrices[-1] @ cut(x)).real for x in r])
+        v = [[0.5 * np.trace(matrices[-1] @ cut(x @ y + y @ x)).real for y in r] for x in r]
+        states.append(BosonState.of(np.array(v) - np.outer(mean, mean), mean))
+    exact = np.linalg.svd(roots[0] @ roots[1], compute_uv=False).sum()
+    first, second = states
+    assert root_fidelity(first, second) == pytest.approx(exact, abs=1e-6)
+    assert root_fidelity(second, first) == pytest.approx(root_fidelity(first, second), abs=1e-12)
+    distance = 0.5 * np.abs(np.linalg.eigvalsh(matrices[0] - matrices[1])).sum()
+    low, high = trace_distance_bounds(first, second)
+    assert 0.01 < low <= distance <= high < 1
+
+
+def test_fidelity_of_thermal_and_coherent_bosons():
+    """sum sqrt(p q) of two geometric distributions; ``exp(-|alpha - beta|^2/2)`` of coherent states."""
+    n, m, k = 0.3, 1.2, np.arange(400)
+    one, other = BosonState.of((n + 0.5) * np.eye(2)), BosonState.of((m + 0.5) * np.eye(2))
+    overlap = np.sqrt((n / (1 + n)) ** k / (1 + n) * (m / (1 + m)) ** k / (1 + m)).sum()
+    assert root_fidelity(one, other) == pytest.approx(overlap, abs=1e-14)
+    assert root_fidelity(one, one) == pytest.approx(1.0, abs=1e-14)
+    here, there = (BosonState.of(0.5 * np.eye(4), np.sqrt(2) * np.array(d)) for d in ([0.3, 0, 0, 0], [0, 0, 0, 0.4]))
+    assert root_fidelity(here, there) == pytest.approx(np.exp(-0.125), abs=1e-7)
+    assert trace_distance_bounds(here, there).upper == pytest.approx(np.sqrt(1 - np.exp(-0.25)), abs=1e-6)
