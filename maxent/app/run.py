@@ -347,7 +347,7 @@ def _figures(part: File, job: Job, result: Any, record: Mapping[str, Any], serie
 def _largest(job: Job) -> int:
     """Dimension of the largest matrix that is decomposed."""
     if job.unit != "state":
-        return int(job.family.size)
+        return int(job.family.size) if job.unit == "mode" else 0
     return max((a.shape[-1] for a in job.family.blocks.dense), default=0)
 
 

@@ -105,18 +105,24 @@ def check_roles(
             taken.setdefault(name, key)
 
 
-def roles(asked: Thermodynamics | None, charges: Iterable[str]) -> Roles | None:
-    """Roles of the charges of a kind that recognises none; None where no energy can be told.
+def roles(asked: Thermodynamics | None, charges: Iterable[str], *, numbers: Iterable[str] = ()) -> Roles | None:
+    """Roles of the charges of a kind without lattice; None where no energy can be told.
 
     Parameters
     ----------
     asked : Thermodynamics or None
         Checked.
     charges : iterable of str
+    numbers : iterable of str, optional
+        Those that are recognised as numbers.
     """
-    if asked is None:
-        return Roles("energy") if "energy" in charges else None
-    return Roles(asked.energy or "energy", tuple(asked.numbers or ()), tuple(asked.fields or ()))
+    energy = "energy" if asked is None or asked.energy is None else asked.energy
+    if energy not in charges:
+        return None
+    named = {energy, *((asked.numbers or ()) if asked else ()), *((asked.fields or ()) if asked else ())}
+    given = None if asked is None else asked.numbers
+    counted = [n for n in numbers if n not in named] if given is None else given
+    return Roles(energy, tuple(counted), tuple((asked.fields or ()) if asked else ()))
 
 
 def lattice_roles(options: Any, part: Any, problems: Problems) -> Roles | None:
