@@ -58,11 +58,12 @@ def decide(problem: Problem, *, driver: str = "host", depth: int = 0) -> Outcome
             return answer
     values = whitening.values(memo.here.evaluation.values)
     reproduced = memo.floored and np.all(np.abs(values) <= EARLY * problem.size)
-    reason = memo.reason or (
-        "targets reproduced to rounding; whether they lie inside or on the boundary is not decidable at this precision"
-        if reproduced
-        else "no stage could prove or refute that the targets can be reached"
-    )
+    reason = memo.reason or "no stage could prove or refute that the targets can be reached"
+    if reproduced:
+        reason = (
+            "targets reproduced to rounding; whether they lie inside or on the boundary is not decidable at this "
+            "precision"
+        )
     return memo.outcome(problem, Verdict.UNFINISHED, family=family, values=values, reason=reason, evidence="tested")
 
 
@@ -118,7 +119,12 @@ def first_look(problem: Problem, memo: Memo) -> Outcome | None:
     """Steepest direction at the start; settles many unreachable targets without any iteration."""
     start = memo.whitening.inverse.T @ problem.family.start()
     memo.at = begin(memo.family.evaluate, start)
-    return outside(problem, memo, memo.at.evaluation.values)
+    hit = outside(problem, memo, memo.at.evaluation.values)
+    if hit is None and np.any(problem.accuracy):
+        # single charges: the coarse accuracy of another one hides what lies outside along a mixture with it
+        sides = (side * memo.whitening.inverse[j] for j in range(len(problem.accuracy)) for side in (1.0, -1.0))
+        hit = next(filter(None, (outside(problem, memo, x) for x in sides)), None)
+    return hit
 
 
 def descend(problem: Problem, memo: Memo) -> Outcome | None:
@@ -302,12 +308,15 @@ def interior(problem: Problem, memo: Memo) -> Outcome | None:
 
 
 def nominal(problem: Problem, memo: Memo) -> Outcome | None:
-    """Solved for the targets as given, though their stated accuracy reaches beyond the boundary."""
+    """Solved for the targets as given, though their stated accuracy reaches to the boundary or beyond.
+
+    Not all targets within the accuracy have multipliers, or not provably: "tested" is the most that can be said.
+    """
     if not (memo.floored and np.any(problem.accuracy)):
         return None
     exact = SAFETY * np.abs(memo.whitening.transform) @ problem.noise
-    ok, memo.shift, evidence = minimiser_exists(memo.family, memo.here, exact)
-    return _solved(problem, memo, evidence) if ok else None
+    ok, memo.shift, _ = minimiser_exists(memo.family, memo.here, exact)
+    return _solved(problem, memo, "tested") if ok else None
 
 
 def close_call(problem: Problem, memo: Memo) -> Outcome | None:
@@ -331,6 +340,6 @@ def _solved(problem: Problem, memo: Memo, evidence: str) -> Outcome:
 
 
 STAGES = (
-    contradiction, nothing_free, first_look, descend, edge_of_domain, existence, nominal, face_in_sight, interior,
+    contradiction, nothing_free, first_look, descend, edge_of_domain, existence, face_in_sight, interior, nominal,
     close_call,
 )  # fmt: skip

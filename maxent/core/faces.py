@@ -21,6 +21,10 @@ DEEPEST = 12
 #: Relative residual a limit state must have to end the search early, and at its end.
 EARLY, LATE = 1e-11, 1e-8
 
+#: A stated accuracy that reaches the boundary makes it one up to this depth, relative to the charges; from farther
+#: inside the targets have multipliers as they are, which say more than a limit state that is so far away.
+NARROW = 1e-6
+
 #: A gap that needs no second thought, and the width of a ground space whose direction is right to rounding.
 CLEAR, SHARP = 1e-3, 1e-14
 
@@ -61,23 +65,35 @@ def look(
     if hit:
         return hit
     found: tuple[np.ndarray, float, float, Face] | None = None
+    shift: np.ndarray | None = None
     for candidate in _candidates(memo, x, step):
         v = memo.whitening.to_user(candidate)
         margin, tolerance = problem.verify(v)
         if margin > tolerance:
             return memo.outcome(problem, Verdict.INFEASIBLE, direction=v, margin=margin, tolerance=tolerance)
-        if margin < -tolerance:
+        stated = float(np.abs(v) @ problem.accuracy)
+        rounding = tolerance - stated
+        if margin < -rounding - min(stated, NARROW * float(np.abs(v) @ problem.size)):
             memo.near.append((margin, candidate))
             continue
         memo.touched = True
-        face = problem.family.face(v, tolerance)
+        off = _onto_plane(problem, v, margin) if stated and abs(margin) > rounding else None
+        family = problem.family if off is None else problem.family.combine(np.eye(len(off)), off)
+        face = family.face(v, rounding)
         if face is not None and (found is None or _sharper(face, found[3])):
             found = (v, margin, tolerance, face)
+            shift = off
             if face.gap > CLEAR and face.width < SHARP:
                 break
     if found is None or memo.depth >= DEEPEST or (found[3].gap < 1e-6 and not late):
         return None
-    return _descend(problem, memo, found, decide, late=late)
+    return _descend(problem, memo, found, shift, decide, late=late)
+
+
+def _onto_plane(problem: Problem, v: np.ndarray, margin: float) -> np.ndarray:
+    """Shift of the targets onto the plane that v touches, shared out by their stated accuracies."""
+    along = problem.accuracy**2 * v
+    return margin * along / (v @ along)
 
 
 def _sharper(face: Face, than: Face) -> bool:
@@ -108,15 +124,27 @@ def on_face(problem: Problem, face: Face) -> Problem:
 
 
 def _descend(
-    problem: Problem, memo: Memo, found: tuple[np.ndarray, float, float, Face], decide: Decide, *, late: bool
+    problem: Problem,
+    memo: Memo,
+    found: tuple[np.ndarray, float, float, Face],
+    shift: np.ndarray | None,
+    decide: Decide,
+    *,
+    late: bool,
 ) -> Outcome | None:
-    """Solve on the face, and accept the boundary only if its state reproduces the targets."""
+    """Solve on the face, and accept the boundary only if its state reproduces the targets.
+
+    The face is that of the targets moved by `shift`, where only their accuracy brings them onto it.
+    """
     v, margin, tolerance, face = found
     below = decide(on_face(problem, face), depth=memo.depth + 1)
     memo.iterations += below.iterations
     settled = below.verdict in (Verdict.SOLVED, Verdict.BOUNDARY)
-    residual = np.abs(below.values) if settled and below.values is not None else np.inf
-    allowed = LATE * problem.size + problem.accuracy if late else EARLY * problem.size
+    values = below.values if settled else None
+    if values is not None and shift is not None:
+        values = values + shift
+    residual = np.inf if values is None else np.abs(values)
+    allowed = (LATE if late else EARLY) * problem.size + problem.accuracy
     if not np.all(residual <= allowed):
         memo.reason = (
             f"a direction touches the set of reachable values (margin {margin:.1e}, tolerance {tolerance:.1e}), "
@@ -124,6 +152,6 @@ def _descend(
         )
         return None
     return memo.outcome(
-        problem, Verdict.BOUNDARY, direction=v, margin=margin, tolerance=tolerance, face=below, values=below.values,
+        problem, Verdict.BOUNDARY, direction=v, margin=margin, tolerance=tolerance, face=below, values=values,
         gap=face.gap, log_dimension=face.log_dimension, evidence=below.evidence,
     )  # fmt: skip

@@ -120,6 +120,11 @@ def _solved(names: Sequence[str], o: Outcome, m: Multipliers, replayed: float) -
             )
         else:
             text += " Fewer than six digits of the multipliers are fixed by the inputs; see their errors."
+    if o.evidence == "tested" and np.any(o.problem.accuracy):
+        text += (
+            " The multipliers are those of the targets as given: that all values within the stated accuracy can be "
+            "reached is not proved."
+        )
     if replayed > 1e-10 and replayed > 10 * o.relative():
         text += (
             f" State accurate to {max(o.relative(), 1e-16):.0e}; the listed multipliers alone reproduce it to "

@@ -66,7 +66,7 @@ def test_each_stage_answers(stage):
     family, q, accuracy, verdict = CASES[stage]
     outcome, found = asked(family, q, accuracy)
     assert (found, outcome.verdict) == (stage, verdict)
-    assert outcome.evidence == ("tested" if stage in ("edge_of_domain", "close_call") else "proved")
+    assert outcome.evidence == ("tested" if stage in ("edge_of_domain", "close_call", "nominal") else "proved")
 
 
 def test_the_last_stages_answer_near_and_on_edges():
@@ -88,6 +88,43 @@ def test_the_last_stages_answer_near_and_on_edges():
         assert outcome.verdict is Verdict.SOLVED if depth > 1e-13 else Verdict.BOUNDARY
     assert {s for s, v in seen if v is Verdict.BOUNDARY} & {"face_in_sight", "descend", "interior"}
     assert ("interior", Verdict.SOLVED) in seen or ("existence", Verdict.SOLVED) in seen
+
+
+#: Families with an edge, the unit normal to the outside there, and a point on it.
+EDGES = {
+    "vertex": (listed(DIE), np.array([1.0]), np.array([6.0])),
+    "side": (listed(PARABOLA), np.array([-7.0, 1.0]) / np.sqrt(50), points([2, 0, 0, 0, 0, 1])),
+    "circle": (SPIN, np.array([0.6, 0.8]), np.array([0.6, 0.8])),
+}
+
+
+@pytest.mark.parametrize("edge", list(EDGES))
+@pytest.mark.parametrize("distance", [1e-1, 1e-2, 1e-4, 1e-6, 1e-8, 1e-10, 1e-12])
+def test_a_stated_accuracy_decides_near_the_edge(edge, distance):
+    """Outside within it: boundary, with a state within it. Inside: boundary when very near, else solved and tested."""
+    family, normal, point = EDGES[edge]
+    for times in (1.5, 10.0):
+        accuracy = times * distance * np.abs(normal)
+        out, _ = asked(family, point + distance * normal, accuracy)
+        assert out.verdict is Verdict.BOUNDARY
+        assert np.all(np.abs(out.values) <= accuracy + 1e-11 * out.problem.size)
+        into, _ = asked(family, point - distance * normal, accuracy)
+        deep = distance > 1e-6 * float(np.abs(normal) @ into.problem.size)
+        assert (into.verdict, into.evidence) == ((Verdict.SOLVED, "tested") if deep else (Verdict.BOUNDARY, "proved"))
+    too_fine, _ = asked(family, point + distance * normal, 0.5 * distance * np.abs(normal))
+    assert too_fine.verdict is Verdict.INFEASIBLE
+    apart, _ = asked(family, point - distance * normal, 0.01 * distance * np.abs(normal))
+    assert apart.verdict is Verdict.SOLVED
+
+
+def test_a_coarse_accuracy_of_one_charge_hides_nothing_of_another():
+    """A mean of 0.9 of a die is out of reach whatever the other charge may be."""
+    outcome, _ = asked(listed([DIE[0], DIE[0] % 2]), [0.9, 0.5], [0.0, 10.0])
+    assert outcome.verdict is Verdict.INFEASIBLE
+    np.testing.assert_allclose([outcome.margin, abs(outcome.direction[0])], [0.1, 1.0], rtol=1e-9)
+    edge, _ = asked(listed([DIE[0], DIE[0] % 2]), [1.0, 0.5], [0.0, 0.6])
+    assert edge.verdict is Verdict.BOUNDARY
+    np.testing.assert_allclose(edge.values, [0.0, 0.5], atol=1e-12)
 
 
 @pytest.mark.parametrize("stage", ["face_in_sight", "interior"])
