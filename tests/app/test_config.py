@@ -31,7 +31,10 @@ BAD = [
     (
         "kind unknown",
         'kind = "quarks"\n',
-        ["1: kind: unknown kind 'quarks'; expected bosons, fermions, infinite_chain, levels, operators, spins or states"],
+        [
+            "1: kind: unknown kind 'quarks'; "
+            "expected bosons, fermions, infinite_chain, levels, operators, spins or states"
+        ],
     ),
     ("kind of the wrong type", "kind = 3\n", ["1: kind: expected text, got 3"]),
     (
