@@ -13,11 +13,9 @@ from typing import Any
 
 import numpy as np
 
-from maxent.core.contract import Family, Problem, Verdict
-from maxent.core.decide import decide
-from maxent.core.faces import on_face
+from maxent.core.contract import Family, Verdict
 from maxent.core.outcome import Outcome
-from maxent.core.relaxed import limit_on_face
+from maxent.diagnose.claims import Check, check_claim
 from maxent.diagnose.conditioning import Conditioning
 from maxent.diagnose.export import to_dataset, to_html, to_scipy
 from maxent.diagnose.multipliers import propagated, user_covariance
@@ -28,28 +26,6 @@ from maxent.errors import SolveError
 from maxent.targets import collect, collect_slack
 
 __all__ = ["Certificate", "Check", "FaceChain", "Nearest", "Result", "Verdict"]
-
-
-@dataclass(frozen=True)
-class Check:
-    """A certificate computed again from scratch; true when its claim holds.
-
-    Attributes
-    ----------
-    holds : bool
-    lowest, asked, margin, tolerance, slack : float
-        As in the certificate, computed anew.
-    """
-
-    holds: bool
-    lowest: float
-    asked: float
-    margin: float
-    tolerance: float
-    slack: float = 0.0
-
-    def __bool__(self) -> bool:
-        return self.holds
 
 
 @dataclass(frozen=True)
@@ -89,7 +65,8 @@ class Certificate:
     def verify(self, family: Family, targets: Mapping[str, Any]) -> Check:
         """Compute the claim again from the charges and the targets alone.
 
-        Only the direction is used: the margin written in the certificate plays no part, the check carries its own.
+        Nothing that is written in the certificate but the direction, the kind and the accuracy enters; the other
+        numbers are compared with the ones found.
 
         Parameters
         ----------
@@ -101,7 +78,7 @@ class Certificate:
         Returns
         -------
         Check
-            True when the claim holds; carries the numbers.
+            True when the claim holds and the numbers fit; carries the numbers found, and what does not hold.
 
         Raises
         ------
@@ -110,22 +87,9 @@ class Certificate:
         """
         names = names_of(family)
         q, accuracy = collect(names, targets, self.accuracy)
-        v = np.array([self.direction.get(n, 0.0) for n in names])
-        slack = collect_slack(names, targets)
-        problem = slack.noisy(Problem.pose(family, q, accuracy))
-        asked, open_ = float(v @ q), slack.support(v)
-        margin, tolerance, _ = slack.verify(problem, v)
-        if self.kind != "face":
-            return Check(bool(margin > tolerance), margin + asked + open_, asked, margin, tolerance, open_)
-        holds = abs(margin) <= tolerance
-        if slack.any:
-            holds = bool(holds and limit_on_face(problem, slack, v, tolerance) is not None)
-            return Check(holds, margin + asked + open_, asked, margin, tolerance, open_)
-        face = problem.family.face(v, tolerance) if holds else None
-        if face is not None:
-            below = decide(on_face(problem, face), depth=1)
-            holds = below.values is not None and bool(np.all(np.abs(below.values) <= 1e-8 * problem.size + accuracy))
-        return Check(bool(holds and face is not None), margin + asked, asked, margin, tolerance)
+        stated = {n: float(getattr(self, n)) for n in ("lowest", "asked", "margin", "tolerance", "slack")}
+        v, slack = self._along(names), collect_slack(names, targets)
+        return check_claim(family, q, accuracy, slack, v=v, kind=self.kind, stated=stated)
 
     def prove(self, family: Family, targets: Mapping[str, Any]) -> Proof:
         """Prove the claim as a theorem about the float64 numbers in the charges, the targets and the direction.
@@ -149,9 +113,14 @@ class Certificate:
         """
         names = names_of(family)
         q, accuracy = collect(names, targets, self.accuracy)
-        v = np.array([self.direction.get(n, 0.0) for n in names], float)
-        slack = collect_slack(names, targets)
+        v, slack = self._along(names), collect_slack(names, targets)
         return prove_outside(family, v, q, accuracy, slack, kind=self.kind, margin=self.margin)
+
+    def _along(self, names: tuple[str, ...]) -> np.ndarray:
+        """The direction in the order of `names`, (m,); a charge that it leaves out takes no part."""
+        for unknown in self.direction.keys() - set(names):
+            raise ValueError(f"direction {unknown!r} is for no charge (charges: {', '.join(map(repr, names))})")
+        return np.array([self.direction.get(n, 0.0) for n in names], float)
 
 
 @dataclass(frozen=True)

@@ -57,12 +57,55 @@ class TestCertificates:
         centre = dict(zip(family.names, (float(x) for x in family.reference()[0]), strict=True))
         assert not c.verify(family, centre)
 
-    def test_written_numbers_are_not_trusted(self, family, targets, kind):
-        """Claimed margins play no part: only the direction does."""
+    def test_written_numbers_are_compared(self, family, targets, kind):
+        """They prove nothing, and the check carries its own; a certificate that states others is not confirmed."""
         c = maxent.solve(family, targets).certificate
-        boast = dataclasses.replace(c, margin=1e3, lowest=1e3, tolerance=0.0)
-        check = boast.verify(family, targets)
-        assert check and check.margin == pytest.approx(c.margin, abs=1e-13)
+        check = dataclasses.replace(c, margin=1e3, lowest=1e3, tolerance=0.0).verify(family, targets)
+        assert not check and check.margin == pytest.approx(c.margin, abs=1e-13)
+        assert [fault.split()[0] for fault in check.faults] == ["lowest", "margin", "tolerance"]
+
+    @pytest.mark.parametrize(
+        ("name", "number"),
+        [("margin", 5.0), ("margin", 1e-9), ("lowest", 1.0), ("asked", -1.0), ("slack", 1e-6), ("lowest", np.nan)],
+    )
+    def test_one_tampered_number_is_named(self, family, targets, kind, name, number):
+        c = maxent.solve(family, targets).certificate
+        check = dataclasses.replace(c, **{name: getattr(c, name) + number}).verify(family, targets)
+        assert not check and [fault.split()[0] for fault in check.faults] == [name]
+
+    @pytest.mark.parametrize("tolerance", [0.0, 1e3, -1.0, np.nan])
+    def test_a_tampered_tolerance_is_named(self, family, targets, kind, tolerance):
+        c = maxent.solve(family, targets).certificate
+        check = dataclasses.replace(c, tolerance=tolerance).verify(family, targets)
+        assert not check and check.faults[0].startswith("tolerance is")
+
+    def test_a_direction_of_another_length_fails(self, family, targets, kind):
+        c = maxent.solve(family, targets).certificate
+        for factor in (1e6, 2.0, 1 + 1e-6, 1e-300, 1e300):
+            long = dataclasses.replace(c, direction={n: factor * x for n, x in c.direction.items()})
+            assert not long.verify(family, targets)
+            assert "the direction has the length" in long.verify(family, targets).faults[0]
+
+    @pytest.mark.parametrize("value", [np.nan, np.inf, -np.inf])
+    def test_a_direction_that_is_not_finite_fails_quietly(self, family, targets, kind, value):
+        c = maxent.solve(family, targets).certificate
+        broken = dataclasses.replace(c, direction=c.direction | {next(iter(c.direction)): value})
+        assert broken.verify(family, targets).faults == ("the direction is not finite",)
+
+    def test_other_kinds_fail(self, family, targets, kind):
+        """A contradiction is outside, too: everything else is a claim that does not hold."""
+        c = maxent.solve(family, targets).certificate
+        for other in {"outside", "face", "contradiction", "junk"} - {kind}:
+            check = dataclasses.replace(c, kind=other).verify(family, targets)
+            assert bool(check) is ((kind, other) == ("contradiction", "outside"))
+            assert bool(check) is not bool(check.faults)
+
+    def test_names_of_the_direction_must_fit(self, family, targets, kind):
+        c = maxent.solve(family, targets).certificate
+        more = dataclasses.replace(c, direction=c.direction | {"unheard": 0.0})
+        for ask in (more.verify, more.prove):
+            with pytest.raises(ValueError, match="direction 'unheard' is for no charge"):
+                ask(family, targets)
 
     def test_names_must_fit(self, family, targets, kind):
         c = maxent.solve(family, targets).certificate
@@ -94,6 +137,12 @@ def test_accuracy_enters_the_certificate():
     assert c.tolerance == pytest.approx(0.1, rel=1e-9)
     assert c.verify(DIE, {"pips": 6.5})
     assert not c.verify(DIE, {"pips": 6.05})
+    # the numbers are compared within rounding, however coarse the accuracy
+    assert not dataclasses.replace(c, margin=0.45).verify(DIE, {"pips": 6.5})
+    assert not dataclasses.replace(c, accuracy={"pips": 0.0}).verify(DIE, {"pips": 6.5})
+    coarse = maxent.solve(DIE, {"pips": 10.0}, accuracy=3.0).certificate
+    assert coarse.verify(DIE, {"pips": 10.0})
+    assert not dataclasses.replace(coarse, kind="contradiction").verify(DIE, {"pips": 10.0})
 
 
 # ---------------------------------------------------------------- the result

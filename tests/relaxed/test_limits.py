@@ -82,10 +82,11 @@ def test_the_slack_of_a_certificate(die):
     certificate = maxent.solve(die, {"pips": Within(7.0, 0.5)}).certificate
     assert (certificate.lowest, certificate.asked, certificate.slack) == (-6.0, -7.0, 0.5)
     assert certificate.verify(die, {"pips": Within(7.0, 0.5)}).slack == 0.5
-    # the claim is about these targets: with more room it does not hold, with none it holds all the more
+    # the claim is about these targets: with more room it does not hold, with none the numbers are others
     assert not certificate.verify(die, {"pips": Within(7.0, 1.0)})
     assert not certificate.verify(die, {"pips": AtMost(7.0)})
-    assert certificate.verify(die, {"pips": 7.0}).margin == 1.0
+    without = certificate.verify(die, {"pips": 7.0})
+    assert without.margin == 1.0 and without.faults == ("margin is 1, not 0.5", "slack is 0, not 0.5")
     assert maxent.solve(die, {"pips": 7.0}).certificate.slack == 0.0
 
 
