@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from maxent.quench.dephasing import dephase as dephase
     from maxent.quench.evolution import Evolution as Evolution
     from maxent.quench.evolution import evolve as evolve
+    from maxent.quench.gaussian_comparison import compare_gaussian as compare_gaussian
     from maxent.quench.gaussian_evolution import gaussian_evolve as gaussian_evolve
     from maxent.quench.gaussian_forms import gaussian_family as gaussian_family
     from maxent.quench.gaussian_forms import gaussian_mean as gaussian_mean
@@ -44,6 +45,7 @@ if TYPE_CHECKING:
     from maxent.quench.yardsticks import revival_time as revival_time
 
 _HOME = {
+    "compare_gaussian": "gaussian_comparison",
     "gaussian_evolve": "gaussian_evolution",
     "gaussian_family": "gaussian_forms",
     "gaussian_mean": "gaussian_forms",
@@ -83,10 +85,10 @@ _HOME = {
 
 __all__ = [
     "Comparison", "Conservation", "Dephased", "Ensemble", "Evolution", "HardCoreChain", "SizeSeries", "Spectrum",
-    "Start", "TransverseFieldChain", "block_bound", "check_conservation", "compare", "dephase", "evolve",
-    "gaussian_evolve", "gaussian_family", "gaussian_ground", "gaussian_mean", "gaussian_pattern", "gaussian_state",
-    "gaussian_thermal", "gaussian_window", "ground_start", "plateau_window", "read_covariance", "read_start",
-    "require_conserved", "revival_time", "scan_widths", "sharp_window", "size_series", "state_defect",
+    "Start", "TransverseFieldChain", "block_bound", "check_conservation", "compare", "compare_gaussian", "dephase",
+    "evolve", "gaussian_evolve", "gaussian_family", "gaussian_ground", "gaussian_mean", "gaussian_pattern",
+    "gaussian_state", "gaussian_thermal", "gaussian_window", "ground_start", "plateau_window", "read_covariance",
+    "read_start", "require_conserved", "revival_time", "scan_widths", "sharp_window", "size_series", "state_defect",
     "thermal_start", "truncated_ensembles",
 ]  # fmt: skip
 

@@ -18,7 +18,10 @@ from maxent.quench.selfchecks import SelfCheck
 from maxent.quench.thermodynamics import Quantity
 from maxent.quench.windows import WindowScan
 
-__all__ = ["Comparison", "Ensemble"]
+__all__ = ["COMPLETE", "Comparison", "Ensemble"]
+
+#: Kind and label of the generalised state of everything that free particles conserve.
+COMPLETE = "complete generalised"
 
 
 @dataclass(frozen=True)
@@ -29,7 +32,7 @@ class Ensemble:
     ----------
     label : str
     kind : str
-        `canonical`, `grand canonical`, `generalised`, `microcanonical` or `eigenstate`.
+        `canonical`, `grand canonical`, `generalised`, `microcanonical`, `eigenstate` or `complete generalised`.
     charges : tuple of str
     sector : dict of str to float
         Empty: all sectors.  Otherwise the values without spread in the start, which all states of the ensemble share.
@@ -46,6 +49,10 @@ class Ensemble:
         Trace distance to the dephased state on blocks of so many sites; of single eigenstates the median.
     distance_ranges : dict of int to (float, float)
         10 % and 90 % quantile over single eigenstates.
+    distance_bounds : dict of int to (float, float)
+        Proved bounds of the trace distance on blocks of free particles that are too large for its value.
+    relative_entropies : dict of int to float
+        Of free particles: ``S(dephased||ensemble)`` of blocks of so many sites, in nats.
     corrections : dict of str to float
         Leading correction of each observable for the difference of the spreads of the charges.
     variances : dict of str to (float, float)
@@ -71,11 +78,17 @@ class Ensemble:
     ranges: dict[str, tuple[float, float]] = field(default_factory=dict)
     distances: dict[int, float] = field(default_factory=dict)
     distance_ranges: dict[int, tuple[float, float]] = field(default_factory=dict)
+    distance_bounds: dict[int, tuple[float, float]] = field(default_factory=dict)
+    relative_entropies: dict[int, float] = field(default_factory=dict)
     corrections: dict[str, float] = field(default_factory=dict)
     variances: dict[str, tuple[float, float]] = field(default_factory=dict)
     facts: dict[str, float] = field(default_factory=dict)
     quantities: tuple[Quantity, ...] = ()
     self_checks: tuple[SelfCheck, ...] = ()
+
+    def farthest(self, block: int) -> float:
+        """Trace distance on a block, or its upper bound; infinite where neither is known."""
+        return self.distances.get(block, self.distance_bounds.get(block, (0.0, np.inf))[1])
 
 
 @dataclass(frozen=True, eq=False)
@@ -84,8 +97,10 @@ class Comparison:
 
     Attributes
     ----------
-    size, dimension : int
-        Sites; states.
+    size : int
+        Sites.
+    dimension : int or None
+        States; None of free particles.
     hamiltonian : str
         Name of the charge that drives the dynamics.
     start_label, start_note : str
@@ -97,10 +112,10 @@ class Comparison:
         Mean of each observable in the start, and in the dephased state.
     fluctuations : dict of str to float
         Temporal standard deviation of each observable over infinite time.
-    effective_dimension, dephased_entropy : float
-        The entropy is not comparable with those of ensembles.
+    effective_dimension, dephased_entropy : float or None
+        The entropy is not comparable with those of ensembles.  None of free particles.
     block_bounds : dict of int to float
-        Bound on the time-averaged trace distance of a block from its dephased state.
+        Bound on the time-averaged trace distance of a block from its dephased state; NaN without effective dimension.
     block_sites : dict of int to tuple of int
         Which sites form the block of each size.
     times : (t,) ndarray
@@ -116,17 +131,22 @@ class Comparison:
     window : dict of str to float
         Mean energy and width of the window in the matching sector; empty where there is none.
     window_scan : WindowScan or None
-    eigenstate_tests : EigenstateTests
-        Level spacings, scatter of eigenstate values and block distances inside one symmetry sector.
+    eigenstate_tests : EigenstateTests or None
+        Level spacings, scatter of eigenstate values and block distances inside one symmetry sector; None of free
+        particles.
     ranking : Ranking or None
     notes : tuple of str
         What the reader must know, one sentence each.
     seconds : dict of str to float
         CPU time of each part.
+    statistics : {"fermions", "bosons", ""}
+        Of free particles; empty where states of all particles are compared.
+    modes : dict of str to (n,) ndarray
+        ``energy``, ``occupation`` and ``multiplier`` of the single-particle levels, of free particles.
     """
 
     size: int
-    dimension: int
+    dimension: int | None
     hamiltonian: str
     start_label: str
     start_note: str
@@ -136,8 +156,8 @@ class Comparison:
     initial: dict[str, float]
     truth: dict[str, float]
     fluctuations: dict[str, float]
-    effective_dimension: float
-    dephased_entropy: float
+    effective_dimension: float | None
+    dephased_entropy: float | None
     block_bounds: dict[int, float]
     block_sites: dict[int, tuple[int, ...]]
     times: np.ndarray
@@ -150,10 +170,12 @@ class Comparison:
     levels: dict[str, np.ndarray]
     window: dict[str, float]
     window_scan: WindowScan | None
-    eigenstate_tests: EigenstateTests
+    eigenstate_tests: EigenstateTests | None
     ranking: Ranking | None
     notes: tuple[str, ...]
     seconds: dict[str, float]
+    statistics: str = ""
+    modes: dict[str, np.ndarray] = field(default_factory=dict)
 
     def ensemble(self, label: str, *, sector: bool = False) -> Ensemble:
         """The ensemble of a label, over all sectors or inside the matching one.
@@ -180,10 +202,11 @@ class Comparison:
     def best(self, observable: str | None = None) -> str:
         """Ensemble closest to the truth: in one observable, or on the largest block.
 
-        Of the fitted ones over all sectors: windows depend on a width, and small ones hold few states.  Of ensembles
-        that lie equally close (within 1e-9) the one with fewest charges is taken.
+        Of the fitted ones over all sectors: windows depend on a width, and small ones hold few states; the complete
+        generalised state has as many charges as levels.  Of ensembles that lie equally close (within 1e-9) the one
+        with fewest charges is taken.
         """
-        fitted = [e for e in self.ensembles if e.kind not in ("microcanonical", "eigenstate")]
+        fitted = [e for e in self.ensembles if e.kind not in ("microcanonical", "eigenstate", COMPLETE)]
         usable = [e for e in fitted if (e.means or e.distances) and not e.sector]
         if not usable:
             return ""
@@ -191,7 +214,7 @@ class Comparison:
             off = {e.label: abs(e.means[observable] - self.truth[observable]) for e in usable}
         else:
             largest = max(self.block_bounds, default=0)
-            off = {e.label: e.distances.get(largest, np.inf) for e in usable}
+            off = {e.label: e.farthest(largest) for e in usable}
         least = min(off.values())
         return next(e.label for e in sorted(usable, key=lambda e: len(e.charges)) if off[e.label] <= least + 1e-9)
 
@@ -202,7 +225,7 @@ class Comparison:
             for key in (
                 "size", "dimension", "hamiltonian", "start_label", "start_note", "sharp", "targets", "initial",
                 "truth", "fluctuations", "effective_dimension", "dephased_entropy", "block_bounds", "block_sites",
-                "speed", "revival", "plateau", "horizon", "window", "notes",
+                "speed", "revival", "plateau", "horizon", "window", "notes", "statistics",
             )
         }  # fmt: skip
         plain["conservation"] = {
@@ -218,7 +241,7 @@ class Comparison:
             {"width": w.width, "centre": w.centre, "mean": w.mean, "beta": w.beta, "entropy": w.entropy}
             for w in self.window_scan.windows
         ]  # fmt: skip
-        plain["eigenstate_tests"] = self.eigenstate_tests.to_dict()
+        plain["eigenstate_tests"] = None if self.eigenstate_tests is None else self.eigenstate_tests.to_dict()
         plain["ranking"] = None if self.ranking is None else asdict(self.ranking)
         return _plain(plain)
 

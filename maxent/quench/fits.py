@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import replace
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -18,6 +18,9 @@ from maxent.quench.setting import Setting
 from maxent.quench.starts import Start
 from maxent.result import Result
 from maxent.text import listing
+
+if TYPE_CHECKING:
+    from maxent.quench.gaussian_fits import GaussianSetting
 
 __all__ = ["fitted_columns", "nested_sets"]
 
@@ -53,7 +56,7 @@ def fitted_columns(setting: Setting) -> list[Ensemble]:
     return out
 
 
-def nested_sets(setting: Setting) -> list[tuple[str, tuple[str, ...]]]:
+def nested_sets(setting: Setting | GaussianSetting) -> list[tuple[str, tuple[str, ...]]]:
     """Kind and names of nested sets: the Hamiltonian, then numbers and field charges, then the others in order."""
     charges, h = setting.charges, setting.charges.hamiltonian
     known = {*setting.potentials.numbers, *setting.potentials.fields}

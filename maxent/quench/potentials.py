@@ -7,7 +7,7 @@ of spins a field charge.  Floor: quench.
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from typing import NamedTuple
+from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 import scipy.sparse as sp
@@ -17,6 +17,9 @@ from maxent.quench.ensembles import Charges, Sector
 from maxent.quench.selfchecks import SelfCheck, check_result
 from maxent.quench.thermodynamics import Quantity, thermodynamics
 from maxent.result import Result
+
+if TYPE_CHECKING:
+    from maxent.quench.gaussian_charges import GaussianCharges
 
 __all__ = ["Potentials", "find_potentials", "thermodynamic_facts"]
 
@@ -36,7 +39,7 @@ class Potentials(NamedTuple):
 
 
 def find_potentials(
-    charges: Charges,
+    charges: Charges | GaussianCharges,
     broken: Sequence[str] = (),
     *,
     numbers: Iterable[str] | None = None,
@@ -46,7 +49,8 @@ def find_potentials(
 
     Parameters
     ----------
-    charges : Charges
+    charges : Charges or GaussianCharges
+        Of the latter both `numbers` and `fields` are given: recognising takes matrices.
     broken : sequence of str, optional
         Charges that are not conserved are never recognised.
     numbers, fields : iterable of str, optional

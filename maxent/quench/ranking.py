@@ -9,17 +9,19 @@ everything a charge knows, distances of blocks what a local observer can see.  F
 
 from __future__ import annotations
 
+from abc import ABC, abstractmethod
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
+from maxent.core.contract import Evaluation
 from maxent.quench.distances import block_distances, trace_distance
 from maxent.quench.ensembles import Charges
 from maxent.result import Result
 
-__all__ = ["Ranking", "Step", "rank_charges"]
+__all__ = ["Fits", "Ranking", "Step", "rank", "rank_charges"]
 
 
 @dataclass(frozen=True)
@@ -84,40 +86,79 @@ def rank_charges(
         Trace distance that the finite system explains by itself: smaller gains are not counted.
     progress : callable, optional
     """
-    fits = _Fits(charges, targets, reference, progress)
-    largest = max(map(len, reference))
+    return rank(_MatrixFits(charges, targets, reference, progress), floor=floor)
+
+
+def rank(fits: Fits, *, floor: float = 0.0) -> Ranking:
+    """Rank charges whose ensembles someone else fits.
+
+    Parameters
+    ----------
+    fits : Fits
+    floor : float, optional
+        As for `rank_charges`.
+    """
     by_entropy, stuck = _greedy(fits, lambda step: -step.entropy_drop)
-    by_distance, also = _greedy(fits, lambda step: step.distances[largest])
+    by_distance, also = _greedy(fits, lambda step: step.distances[max(step.distances)])
     return Ranking(by_entropy, by_distance, _suggestion(by_entropy, by_distance, fits, floor), stuck or also)
 
 
-class _Fits:
-    """Ensembles by their set of charges, each fitted once."""
+class Fits(ABC):
+    """Ensembles by their set of charges, each fitted once.
 
-    def __init__(self, charges: Charges, targets: Any, reference: Any, progress: Any):
-        self.charges, self.targets, self.reference, self.progress = charges, targets, reference, progress
-        self.size = charges.sites.size
+    Attributes
+    ----------
+    names : tuple of str
+        Of all charges, in the user's order.
+    targets : dict of str to (float, float)
+    largest_entropy : float
+        Of the state without charges.
+    """
+
+    names: tuple[str, ...]
+    targets: Mapping[str, tuple[float, float]]
+    largest_entropy: float
+
+    def __init__(self, progress: Callable[[str], None] | None) -> None:
+        self.progress = progress
         self._found: dict[frozenset[str], Result] = {}
         self._distances: dict[frozenset[str], dict[int, float]] = {}
-        states = charges.matrices[charges.hamiltonian].shape[0]
-        self.largest_entropy = float(np.log(states))
+
+    @abstractmethod
+    def fitted(self, names: Sequence[str]) -> Result:
+        """Fit some charges, in their order."""
+
+    @abstractmethod
+    def evaluate(self, names: Sequence[str], lam: np.ndarray) -> Evaluation:
+        """Their family at multipliers, to second order."""
+
+    @abstractmethod
+    def distances_of(self, result: Result) -> dict[int, float]:
+        """Trace distance to the dephased state by the number of sites of a block."""
+
+    @abstractmethod
+    def distance_without(self, block: int) -> float:
+        """The same for the state without charges."""
 
     def result(self, names: Sequence[str]) -> Result:
+        """Ensemble of a set of charges."""
         key = frozenset(names)
         if key not in self._found:
-            ordered = [n for n in self.charges.names if n in key]
+            ordered = [n for n in self.names if n in key]
             if self.progress is not None:
                 self.progress(f"ranking: fit of {', '.join(ordered)}")
-            self._found[key] = self.charges.fit(ordered, self.targets, None)
+            self._found[key] = self.fitted(ordered)
         return self._found[key]
 
     def distances(self, names: Sequence[str]) -> dict[int, float]:
+        """Distances of the ensemble of a set of charges."""
         key = frozenset(names)
         if key not in self._distances:
-            self._distances[key] = block_distances(self.result(names).state, self.reference)
+            self._distances[key] = self.distances_of(self.result(names))
         return self._distances[key]
 
     def step(self, before: tuple[str, ...], name: str) -> Step | None:
+        """A charge joins others; None where there is no such fit."""
         after = self.result((*before, name))
         if not after.success:
             return None
@@ -128,13 +169,12 @@ class _Fits:
 
     def _predicted(self, before: tuple[str, ...], name: str) -> float:
         """``r^2/(2 chi_perp)`` in the ensemble of `before` (all states when it is empty)."""
-        ordered = [n for n in self.charges.names if n in {*before, name}]
-        family = self.charges.subfamily(ordered)
+        ordered = [n for n in self.names if n in {*before, name}]
         lam = np.zeros(len(ordered))
         if before:
             found = self.result(before)
             lam = np.array([found.multipliers.get(n, 0.0) for n in ordered])
-        ev = family.evaluate(lam, 2)
+        ev = self.evaluate(ordered, lam)
         at = ordered.index(name)
         rest = [k for k in range(len(ordered)) if k != at]
         chi = ev.covariance
@@ -146,9 +186,31 @@ class _Fits:
         return float(0.5 * r * r / perp) if perp > 1e-14 * max(chi[at, at], 1e-300) else float("nan")
 
 
-def _greedy(fits: _Fits, badness: Callable[[Step], float]) -> tuple[tuple[Step, ...], str]:
+class _MatrixFits(Fits):
+    """Ensembles of matrices."""
+
+    def __init__(self, charges: Charges, targets: Any, reference: Any, progress: Any) -> None:
+        super().__init__(progress)
+        self.charges, self.targets, self.reference, self.names = charges, targets, reference, charges.names
+        self.largest_entropy = float(np.log(charges.matrices[charges.hamiltonian].shape[0]))
+
+    def fitted(self, names: Sequence[str]) -> Result:
+        return self.charges.fit(names, self.targets, None)
+
+    def evaluate(self, names: Sequence[str], lam: np.ndarray) -> Evaluation:
+        return self.charges.subfamily(names).evaluate(lam, 2)
+
+    def distances_of(self, result: Result) -> dict[int, float]:
+        return block_distances(result.state, self.reference)
+
+    def distance_without(self, block: int) -> float:
+        rho = self.reference[next(s for s in self.reference if len(s) == block)]
+        return trace_distance(np.eye(len(rho)) / len(rho), rho)
+
+
+def _greedy(fits: Fits, badness: Callable[[Step], float]) -> tuple[tuple[Step, ...], str]:
     chosen: list[Step] = []
-    rest = list(fits.charges.names)
+    rest = list(fits.names)
     while rest:
         before = tuple(s.charge for s in chosen)
         options = [s for s in (fits.step(before, n) for n in rest) if s is not None]
@@ -162,13 +224,12 @@ def _greedy(fits: _Fits, badness: Callable[[Step], float]) -> tuple[tuple[Step, 
     return tuple(chosen), ""
 
 
-def _suggestion(by_entropy: Sequence[Step], by_distance: Sequence[Step], fits: _Fits, floor: float) -> str:
+def _suggestion(by_entropy: Sequence[Step], by_distance: Sequence[Step], fits: Fits, floor: float) -> str:
     """Where the gains end: what remains is below the floor, or below a hundredth of what was there."""
     if not by_distance:
         return ""
     size = max(by_distance[0].distances)
-    infinite = fits.reference[next(s for s in fits.reference if len(s) == size)]
-    at_first = trace_distance(np.eye(len(infinite)) / len(infinite), infinite)
+    at_first = fits.distance_without(size)
     gains, before, kept = [], at_first, 0
     for k, step in enumerate(by_distance):
         gain = before - step.distances[size]
@@ -188,4 +249,3 @@ def _suggestion(by_entropy: Sequence[Step], by_distance: Sequence[Step], fits: _
     if no_entropy:
         text += f" {', '.join(no_entropy)}: multiplier zero, no entropy drop for this start."
     return text
-

@@ -13,7 +13,8 @@ from typing import Any
 
 import numpy as np
 
-from maxent.quench.comparison import Comparison, compare
+from maxent.quench.columns import COMPLETE, Comparison
+from maxent.quench.comparison import compare
 from maxent.text import listing
 
 __all__ = ["SizeSeries", "size_series"]
@@ -59,9 +60,10 @@ class SizeSeries:
         return _columns(rows)
 
     def distances(self, label: str, block: int, *, sector: bool = False) -> tuple[np.ndarray, np.ndarray]:
-        """Sizes, and trace distance to the dephased state on blocks of so many sites."""
+        """Sizes, and trace distance to the dephased state on blocks of so many sites; upper bounds of large ones."""
         found = [(c.size, self._one(c, label, sector)) for c in self.comparisons]
-        return _columns([(n, e.distances[block]) for n, e in found if e is not None and block in e.distances])
+        rows = [(n, e.farthest(block)) for n, e in found if e is not None]
+        return _columns([(n, x) for n, x in rows if np.isfinite(x)])
 
     def scatter(self, observable: str) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Scatter of eigenstate values about their running mean inside one sector, by size.
@@ -77,7 +79,8 @@ class SizeSeries:
         sizes, dimensions, scatter : (k,) ndarrays
             Numbers of sites, numbers of levels of the sector, standard deviations.
         """
-        first = [(c.size, test) for c in self.comparisons for test in c.eigenstate_tests.sectors[:1]]
+        tests = [(c.size, c.eigenstate_tests) for c in self.comparisons if c.eigenstate_tests is not None]
+        first = [(n, test) for n, found in tests for test in found.sectors[:1]]
         rows = [(n, test) for n, test in first if observable in test.scatter]
         if any(test.of_start for _, test in rows):
             rows = [(n, test) for n, test in rows if test.of_start]
@@ -101,7 +104,8 @@ class SizeSeries:
 
         Sizes can be compared inside one sequence.  An ensemble describes a block where its distance is small (at most
         0.1) at the end of every sequence and does not grow there; the accuracy is the largest of those distances.
-        Single eigenstates get no sentence: they are one choice among many.
+        Single eigenstates get no sentence: they are one choice among many; nor does the complete generalised state of
+        free particles, which is the long-time state of blocks.
         """
         if len(self.comparisons) < FEWEST or all(len(which) < 2 for which in self.sequences().values()):
             return ()
@@ -110,7 +114,7 @@ class SizeSeries:
             self._statement(label, sector)
             for label in self.labels
             for sector in (False, True)
-            if kinds[label] != "eigenstate"
+            if kinds[label] not in ("eigenstate", COMPLETE)
         ]
         return tuple(s for s in said if s)
 
@@ -124,12 +128,14 @@ class SizeSeries:
             if len(sizes) < FEWEST:
                 continue
             steady, worst = self._steady(sizes, values)
-            if not steady:
-                grows.append(block)
-            elif worst <= SMALL:
+            if worst <= SMALL and steady:
                 close[block] = worst
-            else:
+            elif self._bounded(label, block, sector):
+                continue  # an upper bound that is large or grows says nothing
+            elif steady:
                 far[block] = worst
+            else:
+                grows.append(block)
         parts = []
         if close:
             parts.append(f"describes the long-time state of {_sites(close)} to {_sizes(close)}")
@@ -141,6 +147,11 @@ class SizeSeries:
             return ""
         where = f"{label}{' in the sector of the start' if sector else ''}"
         return f"{where}: {listing(parts, 'and')} (trace distance at the ends of {self._compared()})."
+
+    def _bounded(self, label: str, block: int, sector: bool) -> bool:
+        """Whether some distance is only known by its bounds."""
+        found = [self._one(c, label, sector) for c in self.comparisons]
+        return any(e is not None and block in e.distance_bounds for e in found)
 
     def _compared(self) -> str:
         """The sequences, with their sizes."""
@@ -168,6 +179,7 @@ def size_series(
     build: Callable[[int], Mapping[str, Any]],
     sizes: Iterable[int],
     *,
+    make: Callable[..., Comparison] = compare,
     progress: Callable[[str], None] | None = None,
 ) -> SizeSeries:
     """Compare for several sizes.
@@ -175,8 +187,10 @@ def size_series(
     Parameters
     ----------
     build : callable
-        Size -> keyword arguments of `compare`, with ``charges`` and ``start``.
+        Size -> keyword arguments of `make`, with ``charges`` and ``start``.
     sizes : iterable of int
+    make : callable, optional
+        `compare`, or `maxent.quench.compare_gaussian` for free particles.
     progress : callable, optional
 
     Raises
@@ -191,7 +205,7 @@ def size_series(
     for n in wanted:
         arguments = dict(build(n))
         say = None if progress is None else (lambda text, n=n: progress(f"size {n}: {text}"))
-        out.append(compare(arguments.pop("charges"), arguments.pop("start"), progress=say, **arguments))
+        out.append(make(arguments.pop("charges"), arguments.pop("start"), progress=say, **arguments))
     return SizeSeries(tuple(out))
 
 

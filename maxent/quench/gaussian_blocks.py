@@ -1,0 +1,155 @@
+"""States of blocks of neighbouring sites in ensembles of free particles, and how far they are from a reference.
+
+The reference is a Gaussian state.  States of ensembles are so too, but for a ring of spins of sharp parity, whose
+words have the mean ``(<O>_G + eta <O P>_G)/(1 + eta <P>_G)``: where ``<P>_G`` is no rounding, a block of a small ring
+is taken from all its words, of a large one from its second moments alone.  Trace distances come from the density
+matrices of up to eight modes of fermions, from proved bounds beyond.  Floor: quench.  Must not know charges.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from maxent.families.gaussian_distances import relative_entropy, trace_distance_bounds
+from maxent.families.gaussian_states import BosonState, FermionState
+from maxent.families.periodic_states import PeriodicState
+from maxent.families.ring_states import MOST_SITES, RingState
+from maxent.lattice.sites import Sites
+from maxent.quench import distances
+from maxent.quench.gaussian_starts import GaussianStart, Part
+
+__all__ = ["BlockDistances", "Reference", "block_modes", "closeness", "moments_of", "parity_rest"]
+
+#: Modes up to which density matrices are compared.
+DENSE = 8
+#: Sites up to which the words of a ring of sharp parity are taken one by one.
+SMALL_RING = 40
+#: What the parity may leave in a mean and still count as rounding.
+NOTHING = 1e-13
+
+
+@dataclass
+class BlockDistances:
+    """How far blocks are from the reference, by their number of sites.
+
+    Attributes
+    ----------
+    exact : dict of int to float
+        Trace distance.
+    bounds : dict of int to (float, float)
+        Proved bounds of the trace distance where it has no cheap value.
+    entropies : dict of int to float
+        Relative entropy ``S(reference||ensemble)`` in nats.
+    rest : float
+        What one Gaussian state per parity may miss in a mean; 0 where nothing was left out.
+    """
+
+    exact: dict[int, float] = field(default_factory=dict)
+    bounds: dict[int, tuple[float, float]] = field(default_factory=dict)
+    entropies: dict[int, float] = field(default_factory=dict)
+    rest: float = 0.0
+
+
+@dataclass(frozen=True)
+class Reference:
+    """State of each block that others are compared with.
+
+    Attributes
+    ----------
+    sites, modes : dict of int to tuple of int
+        By the number of sites.
+    states : dict of int to FermionState or BosonState
+    densities : dict of int to ndarray
+        Density matrices of the small ones, of fermions.
+    """
+
+    sites: dict[int, tuple[int, ...]]
+    modes: dict[int, tuple[int, ...]]
+    states: dict[int, FermionState | BosonState]
+    densities: dict[int, np.ndarray]
+
+    @classmethod
+    def of(cls, moments: GaussianStart, sites: Mapping[int, tuple[int, ...]], lattice: Sites) -> Reference:
+        """The Gaussian states of some second moments."""
+        modes = {b: block_modes(lattice, where) for b, where in sites.items()}
+        states = {b: _reduced(moments, where) for b, where in modes.items()}
+        small = {b: s.density() for b, s in states.items() if isinstance(s, FermionState) and s.modes <= DENSE}
+        return cls(dict(sites), modes, states, small)
+
+
+def block_modes(lattice: Sites, sites: Sequence[int]) -> tuple[int, ...]:
+    """Modes that live on some sites, in the order of the sites."""
+    return tuple(slot for site in sites for slot, (home, _) in enumerate(lattice.homes) if home == site)
+
+
+def moments_of(state: FermionState | BosonState | PeriodicState | RingState) -> GaussianStart:
+    """Second moments of a state of `gaussian_family`, by parity where it is a ring of spins."""
+    if isinstance(state, RingState):
+        parts = tuple(Part(s.weight, s.parity or 1, s.covariance(2 * s.mean - 1)) for s in state.sectors if s.weight)
+        return GaussianStart("fermions", parts, "ensemble", 0.0)
+    parity = 0
+    if isinstance(state, PeriodicState):
+        parity, state = int(state.like.antiperiodic), state.reduced(range(state.modes))
+    if isinstance(state, BosonState):
+        return GaussianStart("bosons", (Part(1.0, 0, state.covariance, state.displacement),), "ensemble", 0.0)
+    return GaussianStart("fermions", (Part(1.0, parity, state.covariance),), "ensemble", 0.0)
+
+
+def parity_rest(state: RingState, sites: int = 0) -> float:
+    """Bound of what the parity leaves in means of words on so many sites; 1 where states are no Gaussian ones."""
+    worst = 0.0
+    for s in state.sectors:
+        if not s.parity or not s.weight:
+            continue
+        if s.alone:
+            return 1.0
+        # Pfaffians of what is left when the letters of a word are taken out, by interlacing
+        y = np.sort(np.tanh(0.5 * np.abs(s.levels)))[::-1]
+        worst = max(worst, 2 * float(np.prod(y[: max(len(y) - sites, 0)])))
+    return min(worst, 1.0)
+
+
+def closeness(
+    state: FermionState | BosonState | PeriodicState | RingState, moments: GaussianStart, reference: Reference
+) -> BlockDistances:
+    """Distance of every block of a state from the reference.
+
+    Parameters
+    ----------
+    state : FermionState, BosonState, PeriodicState or RingState
+    moments : GaussianStart
+        Its `moments_of`.
+    reference : Reference
+    """
+    found = BlockDistances()
+    for block, modes in reference.modes.items():
+        expected = reference.states[block]
+        rest = parity_rest(state, block) if isinstance(state, RingState) else 0.0
+        if isinstance(state, RingState) and rest > NOTHING and block <= MOST_SITES and state.sites <= SMALL_RING:
+            rho = state.reduced(reference.sites[block])
+            found.exact[block] = distances.trace_distance(rho, reference.densities[block])
+            found.entropies[block] = distances.relative_entropy(reference.densities[block], rho)
+            continue
+        found.rest = max(found.rest, rest if rest > NOTHING else 0.0)
+        mine = _reduced(moments, modes)
+        found.entropies[block] = relative_entropy(expected, mine)
+        if isinstance(mine, FermionState) and block in reference.densities:
+            found.exact[block] = distances.trace_distance(mine.density(), reference.densities[block])
+        else:
+            found.bounds[block] = trace_distance_bounds(expected, mine)
+    return found
+
+
+def _reduced(moments: GaussianStart, modes: Sequence[int]) -> FermionState | BosonState:
+    """The Gaussian state of the second moments of some modes, all parts together."""
+    n = moments.modes
+    if moments.statistics == "fermions":
+        at = np.array([i for s in modes for i in (2 * s, 2 * s + 1)], int)
+        return FermionState.of(sum(p.weight * p.covariance[np.ix_(at, at)] for p in moments.parts))
+    (part,) = moments.parts
+    at = np.array([*modes, *[s + n for s in modes]], int)
+    r = None if part.displacement is None else part.displacement[at]
+    return BosonState.of(part.covariance[np.ix_(at, at)], r)
