@@ -262,6 +262,10 @@ class Family:
         """
         return step
 
+    def obstacle(self, lam: np.ndarray) -> str:
+        """What keeps the family itself from going further than `lam`, as a clause; empty when nothing does."""
+        return ""
+
     def domain(self) -> np.ndarray | None:
         """Rows g of an array (c, m): ``ln Z`` is finite only for ``g.lam >= 0``, with finite slope on that edge."""
         return None

@@ -58,7 +58,8 @@ def decide(problem: Problem, *, driver: str = "host", depth: int = 0) -> Outcome
             return answer
     values = whitening.values(memo.here.evaluation.values)
     reproduced = memo.floored and np.all(np.abs(values) <= EARLY * problem.size)
-    reason = memo.reason or "no stage could prove or refute that the targets can be reached"
+    reason = memo.reason or family.obstacle(memo.here.lam)
+    reason = reason or "no stage could prove or refute that the targets can be reached"
     if reproduced:
         reason = (
             "targets reproduced to rounding; whether they lie inside or on the boundary is not decidable at this "

@@ -248,6 +248,21 @@ class GrownMicrostates(Family):
 
         return normal_directions(self._blocks(len(self._heights(v)[0])).diagonal, v)
 
+    def obstacle(self, lam: np.ndarray) -> str:
+        """Whether the list would have to be longer than it may be."""
+        n = self._length(lam)
+        if n < LONGEST:
+            return ""
+        z = self._blocks(n).evaluate(lam, 1)
+        lost, _ = self._lost(lam, float(z.log_partition), n)
+        if lost <= EPS * (1 + z.level):
+            return ""
+        limit = f"{LONGEST:,}".replace(",", " ")
+        return (
+            f"the infinite list would need more than the {limit} states it may hold: at the multipliers reached, the "
+            f"rule's bound of what it leaves out is {lost:.0e} of Z"
+        )
+
     def domain(self) -> np.ndarray | None:
         """Edges of the region where the sum converges with finite slope."""
         rows = self.rule.domain()

@@ -14,6 +14,9 @@ import numpy as np
 
 from maxent.lattice.coefficients import Value
 
+#: Names that formulas use for running subscripts: as a parameter one would silently turn a sum into a fixed position.
+RUNNING = ("i", "j")
+
 
 def check_parameter(name: str, value: Any) -> Value:
     """Bring the value of a parameter into its kept form.
@@ -95,7 +98,7 @@ def check_name(kind: str, name: object, taken: Iterable[str]) -> None:
     Raises
     ------
     ValueError
-        When it is no plain name or the language already gives it a meaning.
+        When it is no plain name, or the language already gives it a meaning, or it is a running subscript.
     """
     if (
         not isinstance(name, str)
@@ -106,3 +109,5 @@ def check_name(kind: str, name: object, taken: Iterable[str]) -> None:
         raise ValueError(f"{kind} name {name!r} is not usable: letters, digits and inner underscores only")
     if name in taken:
         raise ValueError(f"{kind} name '{name}' already has a meaning in formulas")
+    if name in RUNNING:
+        raise ValueError(f"{kind} name '{name}' is a running subscript in formulas; choose another name")

@@ -289,6 +289,27 @@ BAD_SPINS = [
 ]
 
 
+BAD_NAMES = ["Sz", "Sx", "pi", "L", "dagger", "commutator", "exp", "sin", "for", "if", "_x", "a b", "2x", "i", "j"]
+
+
+@pytest.mark.parametrize("name", BAD_NAMES)
+@pytest.mark.parametrize("table", ["parameters", "densities"])
+def test_names_that_no_formula_can_use(tmp_path, table, name):
+    value = '"Sz[k]"' if table == "densities" else "0"
+    text = SPINS.replace(f"[{table}]\n", f'[{table}]\n"{name}" = {value}\n', 1)
+    (line,) = problems(tmp_path, text)
+    kind = {"parameters": "parameter", "densities": "density"}[table]
+    number = text.splitlines().index(f'"{name}" = {value}') + 1
+    assert line.startswith(f"{number}: {table}.") and f"{kind} name '{name}' " in line
+
+
+def test_all_bad_names_are_told_at_once(tmp_path):
+    text = SPINS.replace("[parameters]\n", "[parameters]\npi = 3\nh = 1\n", 1)
+    one, other = problems(tmp_path, text)
+    assert "parameters.pi: parameter name 'pi' already has a meaning" in one
+    assert "densities.h: 'h' is both a parameter and a density" in other
+
+
 @pytest.mark.parametrize(("old", "new", "begin"), BAD_SPINS)
 def test_bad_spins(tmp_path, monkeypatch, old, new, begin):
     monkeypatch.setattr("maxent.memory.available_memory", lambda: 20 * 2**30)

@@ -146,6 +146,16 @@ def test_outside_boundary_and_unreachable_twins():
     assert edge.entropy == pytest.approx(0, abs=1e-12)
 
 
+def test_a_list_that_would_be_too_long_is_the_reason(monkeypatch):
+    """With energy E the exact multiplier is about 1/E: rounding is reached after 36 E states."""
+    monkeypatch.setattr("maxent.families.rules.LONGEST", 1 << 12)
+    solved = maxent.solve(Microstates.from_rule(Oscillator()), {"energy": 90.0})
+    assert solved.success and solved.multipliers["energy"] == pytest.approx(2 * np.arctanh(0.5 / 90.0), rel=1e-9)
+    result = maxent.solve(Microstates.from_rule(Oscillator()), {"energy": 1e4})
+    assert result.verdict is maxent.Verdict.UNFINISHED
+    assert "the infinite list would need more than the 4 096 states it may hold" in result.message.lower()
+
+
 def test_redundant_twin():
     class Doubled(Oscillator):
         names = ("energy", "twice")

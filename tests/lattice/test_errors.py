@@ -204,6 +204,8 @@ def test_short_lists_on_a_chain_serve_bonds_only():
     [
         ({"Sz": 1}, ValueError, "parameter name 'Sz' already has a meaning"),
         ({"pi": 3}, ValueError, "parameter name 'pi' already has a meaning"),
+        ({"i": 0}, ValueError, "parameter name 'i' is a running subscript in formulas; choose another name"),
+        ({"j": 1.5}, ValueError, "parameter name 'j' is a running subscript in formulas; choose another name"),
         ({"for": 3}, ValueError, "parameter name 'for' is not usable"),
         ({"a b": 3}, ValueError, "parameter name 'a b' is not usable"),
         ({3: 3}, ValueError, "parameter name 3 is not usable"),

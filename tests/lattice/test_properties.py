@@ -7,14 +7,14 @@ from hypothesis import strategies as st
 from maxent.errors import FormulaError
 from maxent.lattice import Bosons, Chain, Fermions, Lattice, Ring, Spin, formula
 
-PARAMETERS = {"J": 0.75, "i": 2.0, "w": [0.5, -1.0, 0.25, 2.0], "z": 0.5 + 0.25j}
+PARAMETERS = {"J": 0.75, "g": 2.0, "w": [0.5, -1.0, 0.25, 2.0], "z": 0.5 + 0.25j}
 SITES = st.sampled_from([Ring(4), Chain(4)])
 
 numbers = st.sampled_from(["2", "0.1", "1/3", "1e-3", "0.7j", "(0.3-0.2j)", "pi", "sqrt(2)", "L"])
 scalars = st.sampled_from(
     [
         "J",
-        "i",
+        "g",
         "z",
         "dagger(z)",
         "w[k]",
@@ -23,9 +23,9 @@ scalars = st.sampled_from(
         "(-1)**k",
         "cos(2*pi*k/L)",
         "exp(1j*J*k)",
-        "(J+i)**-2",
+        "(J+g)**-2",
     ]
-    + ["J**2", "abs(z)", "sqrt(J+k)", "log(i)", "J/(i-w[0])", "k", "exp(-J)", "sin(J*w[k])"]
+    + ["J**2", "abs(z)", "sqrt(J+k)", "log(g)", "J/(g-w[0])", "k", "exp(-J)", "sin(J*w[k])"]
 )
 operators = st.builds(
     "{}[k{}]".format,

@@ -28,6 +28,7 @@ from maxent.app.job import (
 from maxent.app.kinds._gaussian import METHOD, SECTORS, check_gaussian, gaussian_job
 from maxent.app.kinds._geometry import STRICT, Geometry
 from maxent.app.kinds._momentum import MOMENTUM, Momentum
+from maxent.app.kinds._names import check_names
 from maxent.app.kinds._starts import StartMaker, StartTable, as_start
 from maxent.app.kinds._thermodynamics import THERMODYNAMICS, LatticeThermodynamics, check_roles, lattice_roles
 from maxent.app.locate import Path
@@ -161,7 +162,7 @@ def build(options: LatticeOptions, folder: File) -> Job:
         if given == "from start" and options.start is None:
             problems.add(("targets", name), "asks for the mean 'from start', but there is no [start]")
     problems.raise_any()
-    if options.quench is not None:
+    if options.quench is not None and not gaussian:
         for part in parts.values():
             part.refuse_not_conserved(problems)
         problems.raise_any()
@@ -169,7 +170,7 @@ def build(options: LatticeOptions, folder: File) -> Job:
     roles = lattice_roles(options, part, problems)
     problems.raise_any()
     if gaussian:
-        return replace(gaussian_job(options, sites, part, _facts(options, sites, ""), files.digests), roles=roles)
+        return replace(gaussian_job(options, parts, _facts(options, sites, ""), files.digests), roles=roles)
     matrices = {name: _matrix(("charges", name), op) for name, op in part.charges.items()}
     targets = part.targets(matrices)
     observed = {name: _matrix(("predictions", name), op) for name, op in part.predictions.items()}
@@ -220,6 +221,7 @@ class _Formulas:
 
         self.options, self.sites, self.problems = options, sites, problems
         self.bad: set[str] = set()
+        check_names(sites, options.parameters, options.densities, problems)
         for name, text in options.densities.items():
             try:
                 formula(text, sites, options.parameters, options.densities)
