@@ -69,7 +69,7 @@ def parser() -> argparse.ArgumentParser:
         epilog=f"example: multipliers charges configs/xxz_ring_quench.toml --range 5\n\n{_CODES}",
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )
-    charges.add_argument("config", metavar="CONFIG", type=File, help="TOML file of kind spins, see docs/config.md")
+    charges.add_argument("config", metavar="CONFIG", type=File, help="TOML file of kind spins or fermions, see docs/config.md")
     charges.add_argument("--range", metavar="N", type=_whole, default=4, help="most neighbouring sites (default: 4)")
     charges.add_argument(
         "--momentum",
