@@ -4,12 +4,9 @@ Each value stands beside its source; "from memory" where the number or formula w
 computation, not read in the source.  State = exp(-sum lam_j Q_j)/Z, k_B = hbar = 1.  Ising models and
 non-commuting charges are in `test_published_models`.
 
-Left out, because nothing is solved or predicted with a list of states or a matrix:
-
-- the ratio of multiplicities of two samples of 50 throws (pure counting; Jaynes 1979, after eq. 17);
-- mu_B/k (a constant; it is the input of the electron-spin test);
-- the sampled covariance of multipliers over 4000 data (statistical, belongs to targets with error bars);
-- the energy of a gas at fixed beta mu (needs a continuum of modes; the identity itself is tested on levels).
+More of them are in `tests/published/`.  Left out, because nothing is solved or predicted: mu_B/k (a constant; it is the
+input of the electron-spin test).  The energy of a gas at fixed beta mu has no recorded parameters; the identity itself
+is tested on levels.
 """
 
 from __future__ import annotations

@@ -3,13 +3,8 @@
 Each value stands beside its source; "from memory" where the number or formula was recalled and reproduced by
 computation, not read in the source.  State = exp(-sum lam_j Q_j)/Z, k_B = hbar = 1, Ising energy -sum s s'.
 
-Left out, because they need a density of states beyond float64 lists or an infinite lattice:
-
-- 16 x 16 and 32 x 32 tori at the critical point and Beale's 33 low-temperature multiplicities (2^256 and
-  2^1024 states; the 4 x 4 and 8 x 8 tori are tested);
-- Onsager's energy, free energy and entropy of the infinite square lattice, Yang's magnetisation.
-
-The infinite Ising chain is tested on open chains: their bonds and inner spins have the same multipliers.
+Larger tori and Onsager's lattice are in `tests/published/test_ising.py`.  Left out: Yang's magnetisation, which is no
+mean on a finite torus.  The infinite Ising chain is tested on open chains: their bonds and inner spins have the same multipliers.
 """
 
 from __future__ import annotations
