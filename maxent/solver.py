@@ -18,7 +18,14 @@ from maxent.diagnose.conditioning import conditioning
 from maxent.diagnose.conflict import UNREACHABLE, conflict
 from maxent.diagnose.explanation import Findings
 from maxent.diagnose.explanation import explain as sentences
-from maxent.diagnose.multipliers import Multipliers, relaxed_multipliers, replay, user_covariance, user_multipliers
+from maxent.diagnose.multipliers import (
+    Multipliers,
+    closer,
+    relaxed_multipliers,
+    replay,
+    user_covariance,
+    user_multipliers,
+)
 from maxent.diagnose.nearest import default_units, nearest
 from maxent.diagnose.redundancy import redundancies
 from maxent.diagnose.wording import LARGEST_LOG, message, places
@@ -146,8 +153,10 @@ def _result(
     solved, stated = outcome.verdict is Verdict.SOLVED, outcome.problem.accuracy
     blank = np.full(len(names), np.nan)
     met = None if relaxed is None else outcome.values
-    replayed = replay(outcome.problem, found.values, met) if solved else float("nan")
-    off = blank if outcome.values is None else outcome.values
+    off, replayed = blank if outcome.values is None else outcome.values, float("nan")
+    if solved:
+        replayed, again = replay(outcome.problem, found.values, met)
+        off = off if relaxed is not None else closer(outcome.problem, off, again)
     has_state = outcome.verdict in (Verdict.SOLVED, Verdict.BOUNDARY)
     covariance, factor = user_covariance(outcome) if has_state else (np.full((len(names), len(names)), np.nan), None)
     named = lambda x: _named(names, x)

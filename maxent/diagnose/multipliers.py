@@ -6,14 +6,14 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from maxent.core.contract import EPS, Problem
+from maxent.core.contract import EPS, SAFETY, Problem
 from maxent.core.newton import Iterate
 from maxent.core.outcome import Outcome
 from maxent.core.relaxed import Relaxed
 
 __all__ = [
-    "Multipliers", "left_open", "propagated", "relaxed_multipliers", "replay", "uncertainty", "user_covariance",
-    "user_multipliers",
+    "Multipliers", "closer", "left_open", "propagated", "relaxed_multipliers", "replay", "uncertainty",
+    "user_covariance", "user_multipliers",
 ]  # fmt: skip
 
 #: Fewer fixed digits than this (of the largest multiplier, in units of the spreads) is called loose.
@@ -146,8 +146,8 @@ def propagated(
     return np.linalg.norm(half @ (half.T @ (errors / unit)), axis=1) / spread
 
 
-def replay(problem: Problem, lam: np.ndarray, met: np.ndarray | None = None) -> float:
-    """Largest relative residual that float64 multipliers alone give, in the user's own charges.
+def replay(problem: Problem, lam: np.ndarray, met: np.ndarray | None = None) -> tuple[float, np.ndarray]:
+    """Largest relative residual that float64 multipliers alone give, in the user's own charges, and all residuals (m,).
 
     With relaxed targets residuals are no errors: then it is the distance from the residuals `met` by the state.
 
@@ -155,6 +155,16 @@ def replay(problem: Problem, lam: np.ndarray, met: np.ndarray | None = None) -> 
     ``eps |lam_j| |Q_j|``.
     """
     if not len(lam):
-        return 0.0
+        return 0.0, np.zeros(0)
     values = problem.family.evaluate(lam, 1).values
-    return float(np.max(np.abs(values if met is None else values - met) / problem.size, initial=0.0))
+    return float(np.max(np.abs(values if met is None else values - met) / problem.size, initial=0.0)), values
+
+
+def closer(problem: Problem, whitened: np.ndarray, replayed: np.ndarray) -> np.ndarray:
+    """Residuals of the state, of each charge from the evaluation that resolves it better.
+
+    Whitened charges are counted from their means at infinite temperature, which leaves a rounding of that size; few
+    particles on many levels drown in it.  Where both evaluations agree to within it, the replayed one is free of it.
+    """
+    agree = np.abs(replayed - whitened) <= SAFETY * problem.noise
+    return np.where(agree, replayed, whitened)

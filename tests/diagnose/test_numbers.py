@@ -7,7 +7,7 @@ import pytest
 
 import maxent
 from maxent.diagnose.conditioning import conditioning
-from maxent.families import Matrices, Microstates
+from maxent.families import Matrices, Microstates, Modes
 
 
 def listed(rows):
@@ -207,3 +207,16 @@ def test_conditioning_ignores_redundant_combinations():
     result = maxent.solve(Microstates({"x": x, "y": x**2, "sum": x + x**2}), {"x": 1.5, "y": 4.0, "sum": 5.5})
     assert np.isfinite(result.conditioning.condition_number)
     assert len(result.conditioning.spectrum) == 2
+
+
+def test_values_of_few_particles_on_many_levels():
+    """1e-5 particles on 100 000 levels: the values keep their digits, whatever they are at infinite temperature."""
+    energies = np.sort(np.random.default_rng(1).random(100_000)) * 1e4
+    beta, number = 0.01, 1e-5
+    alpha = -np.log(number / np.exp(-beta * energies).sum())
+    n = 1 / (np.exp(beta * energies + alpha) + 1)
+    targets = {"energy": float(energies @ n), "number": float(n.sum())}
+    result = maxent.solve(Modes({"energy": energies, "number": np.ones(len(energies))}, statistics="fermions"), targets)
+    for name, value in targets.items():
+        assert result.values[name] == pytest.approx(value, rel=1e-12)
+        assert abs(result.residuals[name]) < 1e-12 * value
