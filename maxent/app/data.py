@@ -92,6 +92,8 @@ def _column(text: str, name: str) -> np.ndarray:
     if name:
         if name not in head:
             raise ValueError(f"has no column {name!r}; it has {', '.join(head)}")
+        if head.count(name) > 1:
+            raise ValueError(f"has {head.count(name)} columns called {name!r}; one of them must be meant")
         index, body = head.index(name), rows[1:]
     else:
         if len(head) != 1:

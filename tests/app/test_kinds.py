@@ -224,6 +224,37 @@ def test_rounding_is_no_lack_of_hermiticity(tmp_path):
     assert job(tmp_path, 'kind = "operators"\ncharges.x = "x.npy"\ntargets.x = 0.1\n').family.size == 2
 
 
+@pytest.mark.parametrize(
+    ("charges", "begin"),
+    [
+        ("a = [1, 2, 1e307]\nb = [1, 0, 0]", "3: charges.a: charge 'a' is of size 1.0e+307"),
+        ("a = [1, 2, 3]\nb = [1e-320, 0, 0]", "4: charges.b: charge 'b' is of size 1.0e-320"),
+        ("a = [[1e307, 0], [0, 1]]\nb = [[1, 0], [0, 0]]", "3: charges.a: charge 'a' is of size 1.0e+307"),
+    ],
+)
+def test_charges_out_of_range_are_told_at_their_line(tmp_path, charges, begin):
+    kind = "operators" if "[[" in charges else "states"
+    (line,) = problems(tmp_path, f'kind = "{kind}"\n[charges]\n{charges}\n[targets]\na = 1.5\nb = 0.1\n')
+    assert line.startswith(begin)
+
+
+def test_matrices_too_large_for_the_machine_are_told_at_their_line(tmp_path, monkeypatch):
+    monkeypatch.setattr("maxent.memory.available_memory", lambda: 2**33)
+    size = 1 << 30
+    (tmp_path / "h.mtx").write_text(f"%%MatrixMarket matrix coordinate real general\n{size} {size} 1\n1 1 1.0\n")
+    text = 'kind = "operators"\n[charges]\na = "h.mtx"\n[targets]\na = 0.5\n'
+    (line,) = problems(tmp_path, text)
+    assert line.startswith("3: charges.a: ")
+
+
+def test_columns_of_one_name_are_refused(tmp_path):
+    (tmp_path / "t.csv").write_text("a,a,b\n1,2,3\n4,5,6\n")
+    text = 'kind = "states"\n[charges]\na = "t.csv:{}"\n[targets]\na = 3.5\n'
+    (line,) = problems(tmp_path, text.format("a"))
+    assert line.startswith("3: charges.a: file 't.csv': has 2 columns called 'a'")
+    assert job(tmp_path, text.format("b")).family.size == 2
+
+
 # ---------------------------------------------------------------- spins
 
 SPINS = """kind = "spins"

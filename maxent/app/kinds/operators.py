@@ -15,6 +15,7 @@ import numpy as np
 
 from maxent.app.data import Files
 from maxent.app.job import ACCURACY, TARGET, Job, Problems, Room, check_target, given_target, says
+from maxent.app.kinds._building import build_family
 from maxent.app.kinds._thermodynamics import THERMODYNAMICS, Thermodynamics, check_roles, roles
 from maxent.text import number, plural
 
@@ -115,7 +116,8 @@ def build(options: Options, folder: File) -> Job:
         facts["files"] = plural(len(files.digests), "file") + " read: " + ", ".join(files.digests)
     from maxent.families.matrices import Matrices
 
-    family = Matrices(charges, dims=None if options.dims is None else tuple(options.dims), log_prior=prior)
+    dims = None if options.dims is None else tuple(options.dims)
+    family = build_family(lambda: Matrices(charges, dims=dims, log_prior=prior), charges)
     targets = {name: given_target(options.targets[name], options.accuracy.get(name, 0.0)) for name in charges}
     known = None if prior is not None else roles(options.thermodynamics, charges)
     return Job(family, targets, predictions, facts, digests=files.digests, roles=known)

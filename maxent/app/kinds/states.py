@@ -15,6 +15,7 @@ import numpy as np
 
 from maxent.app.data import Files
 from maxent.app.job import ACCURACY, TARGET, Job, Problems, Room, Target, check_target, given_target, says
+from maxent.app.kinds._building import build_family
 from maxent.app.kinds._thermodynamics import THERMODYNAMICS, Thermodynamics, check_roles, roles
 from maxent.text import plural
 
@@ -129,7 +130,7 @@ def build(options: Options, folder: File) -> Job:
         facts["prior"] = "given; the state is pulled towards it"
     from maxent.families.microstates import Microstates
 
-    family = Microstates(charges, log_weights=weights, log_prior=prior)
+    family = build_family(lambda: Microstates(charges, log_weights=weights, log_prior=prior), charges)
     return Job(
         family,
         targets,
