@@ -81,20 +81,20 @@ def gaussian_averages(
             truth[name] = float(seen[name].mean()) if average is None else average
             fluctuations[name] = float(np.sqrt(np.mean((seen[name] - truth[name]) ** 2)))
         notes.append(
-            f"{listing(closed, 'and')}: not quadratic. Temporal standard deviations from {SAMPLES} times up to "
-            f"{last:.4g}" + _sampled([n for n, average in closed.items() if average is None], fluctuations)
+            f"Not quadratic: {listing(closed, 'and')}. Temporal standard deviations are those at {SAMPLES} times up to "
+            f"{REVIVALS} revivals" + _sampled([n for n, average in closed.items() if average is None])
         )
     ordered = list(charges.observables)
     by_order = lambda found: {n: found[n] for n in ordered}
     return GaussianAverages(by_order(truth), by_order(fluctuations), times, by_order(traces))
 
 
-def _sampled(names: list[str], fluctuations: dict[str, float]) -> str:
+def _sampled(names: list[str]) -> str:
     """What is to be known of long-time means that have no closed form."""
     if not names:
-        return "; long-time means in closed form."
-    errors = [f"{n} to about {fluctuations[n] / np.sqrt(SAMPLES):.2g}" for n in names]
-    return f", and long-time means, too: {listing(errors, 'and')}."
+        return "; long-time means have a closed form."
+    part = f"1/{np.sqrt(SAMPLES):.0f}"
+    return f"; so are long-time means of {listing(names, 'and')}, right to about {part} of these deviations."
 
 
 def slowest_time(evolution: GaussianEvolution) -> float:

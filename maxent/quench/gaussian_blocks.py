@@ -1,9 +1,8 @@
 """States of blocks of neighbouring sites in ensembles of free particles, and how far they are from a reference.
 
-The reference is a Gaussian state.  States of ensembles are so too, but for a ring of spins of sharp parity, whose
-words have the mean ``(<O>_G + eta <O P>_G)/(1 + eta <P>_G)``: where ``<P>_G`` is no rounding, a block of a small ring
-is taken from all its words, of a large one from its second moments alone.  Trace distances come from the density
-matrices of up to eight modes of fermions, from proved bounds beyond.  Floor: quench.  Must not know charges.
+The reference is a Gaussian state.  States of ensembles are so too, but for rings of spins in parity sectors, see
+`maxent.quench.gaussian_parity`.  Trace distances come from the density matrices of up to eight modes of fermions, from
+proved bounds of Gaussian states beyond.  Floor: quench.  Must not know charges.
 """
 
 from __future__ import annotations
@@ -19,14 +18,13 @@ from maxent.families.periodic_states import PeriodicState
 from maxent.families.ring_states import MOST_SITES, RingState
 from maxent.lattice.sites import Sites
 from maxent.quench import distances
+from maxent.quench.gaussian_parity import block_density, block_rest, parity_terms
 from maxent.quench.gaussian_starts import GaussianStart, Part
 
-__all__ = ["BlockDistances", "Reference", "block_modes", "closeness", "moments_of", "parity_rest"]
+__all__ = ["BlockDistances", "Reference", "block_modes", "closeness", "moments_of"]
 
 #: Modes up to which density matrices are compared.
 DENSE = 8
-#: Sites up to which the words of a ring of sharp parity are taken one by one.
-SMALL_RING = 40
 #: What the parity may leave in a mean and still count as rounding.
 NOTHING = 1e-13
 
@@ -44,7 +42,7 @@ class BlockDistances:
     entropies : dict of int to float
         Relative entropy ``S(reference||ensemble)`` in nats.
     rest : float
-        What one Gaussian state per parity may miss in a mean; 0 where nothing was left out.
+        Bound of what the parity does to means on the blocks that are taken as Gaussian states; 0 where it is rounding.
     """
 
     exact: dict[int, float] = field(default_factory=dict)
@@ -98,20 +96,6 @@ def moments_of(state: FermionState | BosonState | PeriodicState | RingState) -> 
     return GaussianStart("fermions", (Part(1.0, parity, state.covariance),), "ensemble", 0.0)
 
 
-def parity_rest(state: RingState, sites: int = 0) -> float:
-    """Bound of what the parity leaves in means of words on so many sites; 1 where states are no Gaussian ones."""
-    worst = 0.0
-    for s in state.sectors:
-        if not s.parity or not s.weight:
-            continue
-        if s.alone:
-            return 1.0
-        # Pfaffians of what is left when the letters of a word are taken out, by interlacing
-        y = np.sort(np.tanh(0.5 * np.abs(s.levels)))[::-1]
-        worst = max(worst, 2 * float(np.prod(y[: max(len(y) - sites, 0)])))
-    return min(worst, 1.0)
-
-
 def closeness(
     state: FermionState | BosonState | PeriodicState | RingState, moments: GaussianStart, reference: Reference
 ) -> BlockDistances:
@@ -125,11 +109,18 @@ def closeness(
     reference : Reference
     """
     found = BlockDistances()
+    is_ring = isinstance(state, RingState)
+    terms = parity_terms(state) if isinstance(state, RingState) else ()
     for block, modes in reference.modes.items():
         expected = reference.states[block]
-        rest = parity_rest(state, block) if isinstance(state, RingState) else 0.0
-        if isinstance(state, RingState) and rest > NOTHING and block <= MOST_SITES and state.sites <= SMALL_RING:
-            rho = state.reduced(reference.sites[block])
+        rest = (1.0 if terms is None else block_rest(terms, modes)) if is_ring else 0.0
+        rho = None
+        if rest > NOTHING and block in reference.densities:
+            if terms is not None:
+                rho = block_density(terms, modes)
+            elif block <= MOST_SITES:
+                rho = np.asarray(state.reduced(reference.sites[block]))
+        if rho is not None:
             found.exact[block] = distances.trace_distance(rho, reference.densities[block])
             found.entropies[block] = distances.relative_entropy(reference.densities[block], rho)
             continue

@@ -15,8 +15,9 @@ from maxent.families.gaussian_states import symplectic_form
 from maxent.families.ring_states import RingState
 from maxent.lattice import OperatorSum, recognise
 from maxent.quench.corrections import leading_correction, second_derivatives
-from maxent.quench.gaussian_blocks import NOTHING, SMALL_RING, moments_of, parity_rest
+from maxent.quench.gaussian_blocks import moments_of
 from maxent.quench.gaussian_forms import as_quadratic, gaussian_family, gaussian_mean
+from maxent.quench.gaussian_parity import ParityTerm, parity_terms, projected_mean
 from maxent.quench.gaussian_starts import GaussianStart, phase_form
 from maxent.quench.gaussian_words import WordSum, word_mean, word_sum
 from maxent.quench.potentials import Potentials
@@ -128,20 +129,20 @@ class GaussianCharges:
 
     def means(self, state: Any) -> dict[str, float]:
         """Means of all observables in a state of `family`."""
-        moments = moments_of(state) if isinstance(state, RingState) else None
-        return {name: self._mean(name, state, moments) for name in self.observables}
+        if not isinstance(state, RingState):
+            return {name: gaussian_mean(state, q) for name, q in self.observables.items()}
+        moments = moments_of(state)
+        terms = () if all(self._quadratic.values()) else parity_terms(state)
+        return {name: self._ring_mean(name, state, moments, terms) for name in self.observables}
 
-    def _mean(self, name: str, state: Any, moments: GaussianStart | None) -> float:
-        operator = self.observables[name]
-        if moments is None:
-            return gaussian_mean(state, operator)
+    def _ring_mean(
+        self, name: str, state: RingState, moments: GaussianStart, terms: Sequence[ParityTerm] | None
+    ) -> float:
         if self._quadratic[name]:
-            return moments.mean(operator)[0]
-        sums = [self.words(name, p.parity) for p in moments.parts]
-        longest = max(s.longest for s in sums)
-        if parity_rest(state, longest) > NOTHING and state.sites <= SMALL_RING:
-            return gaussian_mean(state, operator)
-        return word_mean(moments, sums)
+            return moments.mean(self.observables[name])[0]
+        if terms is None:
+            return gaussian_mean(state, self.observables[name])
+        return projected_mean(terms, [self.words(name, t.parity) for t in terms])
 
     def mean_of_moments(self, name: str, moments: GaussianStart) -> float:
         """Mean of an observable in a mixture of Gaussian states."""

@@ -198,9 +198,9 @@ def compare_gaussian(
 
 
 def _left_out(charges: GaussianCharges) -> str:
-    what = f"spins that are free {charges.statistics}" if charges.sites.is_spin_half else f"free {charges.statistics}"
+    what = f"{'Spins as free' if charges.sites.is_spin_half else 'Free'} {charges.statistics}"
     return (
-        f"{plural(charges.sites.size, 'site')} of {what}: energy windows, single eigenstates, level statistics and "
+        f"{what}: energy windows, single eigenstates, level statistics and "
         "effective dimensions are not for free particles. The long-time state of blocks is the complete generalised "
         "one, of every single-particle level; the average of a block over all times differs from it by about 1/L, "
         "means of two operators not at all."

@@ -64,6 +64,16 @@ class GaussianSetting:
     notes: list[str] = field(default_factory=list)
 
     @cached_property
+    def _fits(self) -> dict[tuple[tuple[str, ...], int], Result]:
+        return {}
+
+    def fit(self, names: tuple[str, ...], parity: int = 0) -> Result:
+        """Ensemble of some charges, over all states or those of one parity; each fitted once."""
+        if (names, parity) not in self._fits:
+            self._fits[names, parity] = self.charges.fit(names, self.targets, parity)
+        return self._fits[names, parity]
+
+    @cached_property
     def spread(self) -> np.ndarray:
         """Covariance (m, m) of all charges in the start."""
         return moment_covariance(self.start, list(self.charges.operators.values()))
@@ -84,7 +94,7 @@ def gaussian_columns(setting: GaussianSetting) -> list[Ensemble]:
                 setting.progress(f"{label}{', in the sector of the start' if parity else ''}")
             sharp = setting.sharp if parity else {}
             try:
-                result = setting.charges.fit(names, setting.targets, parity)
+                result = setting.fit(names, parity)
             except ValueError as bad:  # bosons that nothing confines
                 out.append(Ensemble(label, kind, names, sharp, "no state", str(bad)))
                 continue
@@ -95,8 +105,8 @@ def gaussian_columns(setting: GaussianSetting) -> list[Ensemble]:
             out.append(plain)
     if missed:
         setting.notes.append(
-            "Blocks of the ring are taken from second moments, which misses what the sharp parity does to means: up to "
-            f"{missed:.2g}."
+            "Large blocks of the ring are taken from second moments, which misses what the sharp parity does to means: "
+            f"up to {missed:.2g}."
         )
     return out
 

@@ -31,8 +31,7 @@ def gaussian_family(charges: Mapping[str, OperatorSum], *, sectors: str = "both"
         Spins 1/2, fermions or bosons; every charge quadratic.
     sectors : {"both", "even", "odd", "unprojected"}, optional
         For spins 1/2: all states, those with ``prod Z = 1`` or -1 alone, or one Gaussian state in which the ring is
-        closed as for an even parity whatever the parity is: that is wrong by about exp(-L/xi), and cheap, as charges
-        that are the same in every cell are taken by momentum.
+        closed as for an even parity whatever the parity is: that is wrong by about exp(-L/xi).
 
     Returns
     -------

@@ -36,7 +36,7 @@ class _GaussianFits(Fits):
         self.largest_entropy = setting.charges.modes * float(np.log(2.0))
 
     def fitted(self, names: Sequence[str]) -> Result:
-        return self.setting.charges.fit(names, self.targets)
+        return self.setting.fit(tuple(names))
 
     def evaluate(self, names: Sequence[str], lam: np.ndarray) -> Evaluation:
         return self.setting.charges.evaluate(names, lam)

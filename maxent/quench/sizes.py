@@ -110,15 +110,17 @@ class SizeSeries:
         if len(self.comparisons) < FEWEST or all(len(which) < 2 for which in self.sequences().values()):
             return ()
         kinds = {e.label: e.kind for c in self.comparisons for e in c.ensembles}
-        said = [
-            self._statement(label, sector)
-            for label in self.labels
-            for sector in (False, True)
-            if kinds[label] not in ("eigenstate", COMPLETE)
-        ]
-        return tuple(s for s in said if s)
+        out = []
+        for label in self.labels:
+            if kinds[label] in ("eigenstate", COMPLETE):
+                continue
+            whole, part = self._statement(label, False), self._statement(label, True)
+            out += [f"{label}: {whole}"] if whole else []
+            out += [f"{label} in the sector of the start: {part}"] if part and part != whole else []
+        return tuple(out)
 
     def _statement(self, label: str, sector: bool) -> str:
+        """What is said of an ensemble; a sector that says the same as all states is not repeated."""
         blocks = sorted(set.intersection(*(set(c.block_bounds) for c in self.comparisons)))
         close: dict[int, float] = {}
         far: dict[int, float] = {}
@@ -145,8 +147,7 @@ class SizeSeries:
             parts.append(f"moves away from that of {_sites(grows)} as the size grows")
         if not parts:
             return ""
-        where = f"{label}{' in the sector of the start' if sector else ''}"
-        return f"{where}: {listing(parts, 'and')} (trace distance at the ends of {self._compared()})."
+        return f"{listing(parts, 'and')} (trace distance at the ends of {self._compared()})."
 
     def _bounded(self, label: str, block: int, sector: bool) -> bool:
         """Whether some distance is only known by its bounds."""
