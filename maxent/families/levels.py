@@ -6,14 +6,16 @@ iteration.  Floor: families.  Must not know which charges led to the state.
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
+from maxent.families.finite import checked_charges
 from maxent.families.statistics import SIGNS, exponents, level_entropy, level_terms, log_weights
 
-__all__ = ["ModesState", "checked_degeneracy", "checked_statistics", "fill", "level_values"]
+__all__ = ["ModesState", "checked_degeneracy", "checked_edges", "checked_statistics", "fill", "level_values"]
 
 
 @dataclass(frozen=True)
@@ -151,6 +153,18 @@ def checked_degeneracy(degeneracy: Any, n: int) -> np.ndarray:
     if len(bad):
         raise ValueError(f"degeneracy is {g[bad[0]]:.6g} at level {bad[0]}; it must be positive (leave the level out)")
     return g
+
+
+def checked_edges(names: tuple[str, ...], continuum: Mapping[str, Any]) -> np.ndarray:
+    """Charges (m, e) of one particle at the ends of a continuous spectrum."""
+    given = checked_charges(continuum, "continuum")
+    if set(given) != set(names):
+        odd = sorted(set(given) ^ set(names))[0]
+        raise ValueError(f"continuum must give the charges {', '.join(map(repr, names))} at the edge; see {odd!r}")
+    rows = [level_values(f"continuum of {name!r}", np.atleast_1d(given[name])) for name in names]
+    if len({len(r) for r in rows}) > 1:
+        raise ValueError("continuum gives different numbers of edges for different charges")
+    return np.array(rows)
 
 
 def level_values(label: str, value: Any) -> np.ndarray:

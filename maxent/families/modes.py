@@ -18,7 +18,15 @@ import numpy as np
 from maxent.core.contract import EPS, SAFETY, Barrier, Evaluation, Face, Family, Lowest, namespace
 from maxent.core.pytrees import register
 from maxent.families.finite import checked_charges
-from maxent.families.levels import ModesState, checked_degeneracy, checked_statistics, fill, level_values
+from maxent.families.levels import (
+    ModesState,
+    checked_degeneracy,
+    checked_edges,
+    checked_statistics,
+    fill,
+    level_values,
+)
+from maxent.families.openings import opening
 from maxent.families.operators import check_size
 from maxent.families.reachable import PASS, face_normals, inward, triangle_rows
 from maxent.families.statistics import (
@@ -118,7 +126,7 @@ class Modes(Family):
         if continuum is not None:
             if statistics != "bosons":
                 raise ValueError(f"continuum states where bosons condense; {statistics} do not")
-            edges = _edges(tuple(given), continuum)
+            edges = checked_edges(tuple(given), continuum)
         anchor = None if statistics == "fermions" else inward(values)
         if statistics == "bosons" and anchor is None:
             raise ValueError(_unconfined(tuple(given), values))
@@ -232,7 +240,7 @@ class Modes(Family):
                 level = xp.abs(held) + xp.abs(log_z) + largest
             # rounding of the sums, and of w by |lam| |q| at the levels that fluctuate: a condensate amplifies it
             spread = xp.sqrt(xp.trace(covariance)) if order == 2 else xp.asarray(1.0)
-            size = xp.sqrt(self.constant @ self.constant)
+            size = xp.sqrt(self.constant @ self.constant) * (1 + 0.05 * n**0.5)
             rounding = 4 * EPS * (size + spread * (1 + spread * xp.sqrt(lam @ lam))) + TINY
         if xp is np and (not inside or not np.isfinite(log_z)):
             return Evaluation(np.inf, np.full(m, np.nan), np.eye(m), np.inf, np.inf)
@@ -252,7 +260,8 @@ class Modes(Family):
 
         Fermions: 0.  Otherwise along the combination u that confines the particles, the particle number where it is a
         charge: ``lam = u ln(1 + G/N)/u.q`` (``ln(G/N)`` for distinguishable particles) with N the target and G the
-        number of levels.  Where every level has a charge of its own: the multipliers themselves.
+        number of levels, and from there to the multipliers of a few hundred levels that stand for all of them
+        (`maxent.families.openings`).  Where every level has a charge of its own: the multipliers themselves.
         """
         m, n = self.charges.shape
         if 0 < n <= m and np.count_nonzero(self.charges) == n:
@@ -265,7 +274,10 @@ class Modes(Family):
         total = float(self.degeneracy.sum())
         mean, asked = float(self.degeneracy @ height) / total, -float(self.anchor @ self.constant)
         per_level = total * mean / asked if asked > 0 else 1.0
-        return self.anchor * (np.log1p(per_level) if self.statistics == "bosons" else np.log(per_level)) / mean
+        plain = self.anchor * (np.log1p(per_level) if self.statistics == "bosons" else np.log(per_level)) / mean
+        if not asked > 0 or self.edges is not None:
+            return plain
+        return opening(self.charges, self.degeneracy, -self.constant, plain, self._sign)
 
     def _closed_form(self, charge: np.ndarray) -> np.ndarray:
         """Multipliers where each level has a `charge` (n,) of its own; far out where it is pinned or beyond reach."""
@@ -477,18 +489,6 @@ def _constant(name: str, value: Any) -> float:
     if len(array) != 1:
         raise ValueError(f"the constant of {name!r} must be one number, not {len(array)}")
     return float(array[0])
-
-
-def _edges(names: tuple[str, ...], continuum: Mapping[str, Any]) -> np.ndarray:
-    """Charges (m, e) of one particle at the ends of a continuous spectrum."""
-    given = checked_charges(continuum, "continuum")
-    if set(given) != set(names):
-        odd = sorted(set(given) ^ set(names))[0]
-        raise ValueError(f"continuum must give the charges {', '.join(map(repr, names))} at the edge; see {odd!r}")
-    rows = [level_values(f"continuum of {name!r}", np.atleast_1d(given[name])) for name in names]
-    if len({len(r) for r in rows}) > 1:
-        raise ValueError("continuum gives different numbers of edges for different charges")
-    return np.array(rows)
 
 
 def _unconfined(names: tuple[str, ...], values: np.ndarray) -> str:

@@ -10,7 +10,7 @@ from scipy.optimize import linprog
 import maxent
 from maxent.core import decide as decisions
 from maxent.core.contract import Problem
-from maxent.families import Matrices, Microstates, Modes
+from maxent.families import Matrices, Microstates, Modes, openings
 from maxent.families.modes import fill
 from maxent.families.reachable import inward
 from maxent.families.statistics import SIGNS, level_terms
@@ -500,6 +500,45 @@ def test_few_and_many_particles(statistics, number):
     assert result.success
     # rounding of a target is counted on the scale of one particle
     assert max(abs(r) for r in result.residuals.values()) <= 1e-14 * max(number, 1.0)
+
+
+@pytest.mark.parametrize("levels", [5, 60, 700, 20000])
+@pytest.mark.parametrize("smallest", [1e-10, 1e-6, 1e-2, 12.0])
+@pytest.mark.parametrize("m", [2, 4])
+def test_no_condensate_takes_many_steps(levels, smallest, m, rng):
+    """Multipliers drawn, one level at the smallest exponent: 1e10 particles in it, or 1e-6 in all."""
+    q = rng.standard_normal((m, levels))
+    q[-1] = 1.0
+    lam = rng.standard_normal(m)
+    q[:-1] -= q[:-1, [int(np.argmin(lam @ q))]]  # the lowest level counts in the last charge alone
+    lam[-1] = smallest
+    family = Modes({f"q{j}": x for j, x in enumerate(q)}, "bosons")
+    targets = {f"q{j}": float(x @ (1 / np.expm1(lam @ q))) for j, x in enumerate(q)}
+    result = maxent.solve(family, targets)
+    assert result.success and result.iterations <= 15
+    np.testing.assert_allclose(list(result.multipliers.values()), lam, rtol=1e-6, atol=1e-6 * abs(lam).max())
+    assert result.multipliers[f"q{m - 1}"] == pytest.approx(smallest, rel=1e-8)
+
+
+@pytest.mark.parametrize("levels", [300, 30000])
+def test_passes_of_the_opening_are_counted(monkeypatch, rng, levels):
+    """The start looks at a few hundred levels many times, at all of them a few times."""
+    e = np.sort(rng.uniform(0, 1, levels)) ** 2
+    family = Modes({"n": np.ones(levels), "e": e, "f": e**2}, "bosons")
+    held = 1 / np.expm1(2 * (e - e.min()) + 1e-6)
+    targets = {name: float(x @ held) for name, x in zip("nef", family.charges, strict=True)}
+    looked, found = [], openings.occupations
+    monkeypatch.setattr(openings, "occupations", lambda w, s: (looked.append(len(w)), found(w, s))[1])
+    assert maxent.solve(family, targets).success
+    assert sum(n == levels for n in looked) <= (3 * openings.STEPS if levels <= openings.SAMPLE else 30)
+
+
+@pytest.mark.parametrize("statistics", ["bosons", "distinguishable"])
+def test_the_opening_of_what_cannot_be_reached_stays_finite(statistics, rng):
+    q = np.array([np.ones(40), rng.uniform(0.2, 1, 40)])
+    for energy in (0.1, 3.0, q[1].min()):
+        start = Modes({"n": q[0], "e": q[1]}, statistics).combine(np.eye(2), np.array([5.0, 5 * energy])).start()
+        assert np.all(np.isfinite(start)) and (statistics != "bosons" or (start @ q).min() > 0)
 
 
 def test_decisions_do_not_whiten_anew_for_bounded_charges(monkeypatch):
