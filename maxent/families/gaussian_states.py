@@ -11,7 +11,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, lru_cache
 from typing import Any, ClassVar
 
 import numpy as np
@@ -221,6 +221,7 @@ def _combination(operators: list[Any], coefficients: np.ndarray) -> Any:
     return total
 
 
+@lru_cache(maxsize=4)
 def majorana_operators(n: int) -> list[Any]:
     """The operators ``g_0 .. g_{2n-1}`` of n modes as sparse (2^n, 2^n) matrices."""
     import scipy.sparse as sp

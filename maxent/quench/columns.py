@@ -199,15 +199,27 @@ class Comparison:
         """Labels of the ensembles, each once, in order."""
         return tuple(dict.fromkeys(e.label for e in self.ensembles))
 
-    def best(self, observable: str | None = None) -> str:
-        """Ensemble closest to the truth: in one observable, or on the largest block.
+    def best(self, observable: str | None = None, *, sector: bool = False) -> str:
+        """Fitted ensemble closest to the truth: in one observable, or on the largest block.
 
-        Of the fitted ones over all sectors: windows depend on a width, and small ones hold few states; the complete
-        generalised state has as many charges as levels.  Of ensembles that lie equally close (within 1e-9) the one
-        with fewest charges is taken.
+        Windows are left out, since they depend on a width and small ones hold few states, and so is the complete
+        generalised state, which has as many charges as levels.  Of ensembles that lie equally close (within 1e-9) the
+        one with fewest charges is taken.
+
+        Parameters
+        ----------
+        observable : str, optional
+            By default the state of the largest block is compared.
+        sector : bool, optional
+            Among the ensembles inside the sector of the start instead of those over all sectors.
+
+        Returns
+        -------
+        str
+            Its label; empty where there is none.
         """
         fitted = [e for e in self.ensembles if e.kind not in ("microcanonical", "eigenstate", COMPLETE)]
-        usable = [e for e in fitted if (e.means or e.distances) and not e.sector]
+        usable = [e for e in fitted if (e.means or e.distances) and bool(e.sector) == sector]
         if not usable:
             return ""
         if observable is not None:

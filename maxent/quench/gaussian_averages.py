@@ -14,7 +14,7 @@ import numpy as np
 
 from maxent.quench.gaussian_charges import GaussianCharges
 from maxent.quench.gaussian_evolution import GaussianEvolution
-from maxent.quench.gaussian_words import long_time_words, word_traces
+from maxent.quench.gaussian_wick import long_time_words, word_traces
 from maxent.quench.yardsticks import revival_time
 from maxent.text import listing
 

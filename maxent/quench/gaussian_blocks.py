@@ -15,7 +15,7 @@ import numpy as np
 from maxent.families.gaussian_distances import relative_entropy, trace_distance_bounds
 from maxent.families.gaussian_states import BosonState, FermionState
 from maxent.families.periodic_states import PeriodicState
-from maxent.families.ring_states import MOST_SITES, RingState
+from maxent.families.ring_states import RingState
 from maxent.lattice.sites import Sites
 from maxent.quench import distances
 from maxent.quench.gaussian_parity import block_density, block_rest, parity_terms
@@ -74,8 +74,18 @@ class Reference:
         """The Gaussian states of some second moments."""
         modes = {b: block_modes(lattice, where) for b, where in sites.items()}
         states = {b: _reduced(moments, where) for b, where in modes.items()}
-        small = {b: s.density() for b, s in states.items() if isinstance(s, FermionState) and s.modes <= DENSE}
-        return cls(dict(sites), modes, states, small)
+        small = [b for b, s in states.items() if isinstance(s, FermionState) and s.modes <= DENSE]
+        found = cls(dict(sites), modes, states, {})
+        if small:
+            found.densities.update(found.nested(_density(moments, modes[max(small)]), small))
+        return found
+
+    def nested(self, whole: np.ndarray, blocks: Sequence[int]) -> dict[int, np.ndarray]:
+        """Density matrices of blocks, traced out of that of the largest."""
+        largest = self.modes[max(blocks)]
+        dims = [2] * (max(largest) + 1)
+        by_modes = distances.nested_states(whole, dims, largest, [self.modes[b] for b in blocks])
+        return {b: by_modes[self.modes[b]] for b in blocks}
 
 
 def block_modes(lattice: Sites, sites: Sequence[int]) -> tuple[int, ...]:
@@ -109,26 +119,22 @@ def closeness(
     reference : Reference
     """
     found = BlockDistances()
-    is_ring = isinstance(state, RingState)
     terms = parity_terms(state) if isinstance(state, RingState) else ()
+    rests = {block: block_rest(terms, modes) for block, modes in reference.modes.items()}
+    small = [b for b in reference.densities if rests[b] > NOTHING]
+    exact = reference.nested(block_density(terms, reference.modes[max(small)]), small) if small else {}
+    plain = [b for b in reference.densities if rests[b] <= NOTHING]
+    gaussian = reference.nested(_density(moments, reference.modes[max(plain)]), plain) if plain else {}
     for block, modes in reference.modes.items():
-        expected = reference.states[block]
-        rest = (1.0 if terms is None else block_rest(terms, modes)) if is_ring else 0.0
-        rho = None
-        if rest > NOTHING and block in reference.densities:
-            if terms is not None:
-                rho = block_density(terms, modes)
-            elif block <= MOST_SITES:
-                rho = np.asarray(state.reduced(reference.sites[block]))
-        if rho is not None:
-            found.exact[block] = distances.trace_distance(rho, reference.densities[block])
-            found.entropies[block] = distances.relative_entropy(reference.densities[block], rho)
+        expected, mine = reference.states[block], _reduced(moments, modes)
+        if block in exact:
+            found.exact[block] = distances.trace_distance(exact[block], reference.densities[block])
+            found.entropies[block] = distances.relative_entropy(reference.densities[block], exact[block])
             continue
-        found.rest = max(found.rest, rest if rest > NOTHING else 0.0)
-        mine = _reduced(moments, modes)
+        found.rest = max(found.rest, rests[block] if rests[block] > NOTHING else 0.0)
         found.entropies[block] = relative_entropy(expected, mine)
-        if isinstance(mine, FermionState) and block in reference.densities:
-            found.exact[block] = distances.trace_distance(mine.density(), reference.densities[block])
+        if block in gaussian:
+            found.exact[block] = distances.trace_distance(gaussian[block], reference.densities[block])
         else:
             found.bounds[block] = trace_distance_bounds(expected, mine)
     return found
@@ -144,3 +150,10 @@ def _reduced(moments: GaussianStart, modes: Sequence[int]) -> FermionState | Bos
     at = np.array([*modes, *[s + n for s in modes]], int)
     r = None if part.displacement is None else part.displacement[at]
     return BosonState.of(part.covariance[np.ix_(at, at)], r)
+
+
+def _density(moments: GaussianStart, modes: Sequence[int]) -> np.ndarray:
+    """Density matrix of the Gaussian state of some modes of fermions."""
+    state = _reduced(moments, modes)
+    assert isinstance(state, FermionState)
+    return state.density()

@@ -19,7 +19,8 @@ from maxent.quench.gaussian_blocks import moments_of
 from maxent.quench.gaussian_forms import as_quadratic, gaussian_family, gaussian_mean
 from maxent.quench.gaussian_parity import ParityTerm, parity_terms, projected_mean
 from maxent.quench.gaussian_starts import GaussianStart, phase_form
-from maxent.quench.gaussian_words import WordSum, word_mean, word_sum
+from maxent.quench.gaussian_wick import word_mean
+from maxent.quench.gaussian_words import WordSum, word_sum
 from maxent.quench.potentials import Potentials
 from maxent.result import Result
 from maxent.solver import solve
@@ -133,15 +134,11 @@ class GaussianCharges:
             return {name: gaussian_mean(state, q) for name, q in self.observables.items()}
         moments = moments_of(state)
         terms = () if all(self._quadratic.values()) else parity_terms(state)
-        return {name: self._ring_mean(name, state, moments, terms) for name in self.observables}
+        return {name: self._ring_mean(name, moments, terms) for name in self.observables}
 
-    def _ring_mean(
-        self, name: str, state: RingState, moments: GaussianStart, terms: Sequence[ParityTerm] | None
-    ) -> float:
+    def _ring_mean(self, name: str, moments: GaussianStart, terms: Sequence[ParityTerm]) -> float:
         if self._quadratic[name]:
             return moments.mean(self.observables[name])[0]
-        if terms is None:
-            return gaussian_mean(state, self.observables[name])
         return projected_mean(terms, [self.words(name, t.parity) for t in terms])
 
     def mean_of_moments(self, name: str, moments: GaussianStart) -> float:

@@ -4,7 +4,8 @@
 
 a number from 0 (conserved) to 1, with the matrix K of the motion that a form makes, on a ring of spins the larger one
 of both parities.  The same question as that of `maxent.quench.conservation`, asked of one particle instead of all
-states: 0 means the same, other values do not.  Floor: quench.  Must not know how a state was fitted.
+states: 0 means the same, other values do not.  Floating-point numbers tell, no exact coefficients.  Floor: quench.
+Must not know how a state was fitted.
 """
 
 from __future__ import annotations
@@ -53,15 +54,12 @@ def gaussian_conservation(
     found = {}
     for name in names:
         defect = max(_defect(a, b) for a, b in zip(h, forms[name], strict=True))
-        exact = not hamiltonian.commutator(charges[name]).words
         value = accuracy = later = None
         if start is not None:
             value, accuracy = start.mean(charges[name])
         if dephased is not None:
             later = dephased.mean(charges[name])[0]
-        found[name] = Conserved(
-            name, 0.0 if exact else defect, exact, exact or defect <= TOLERANCE, value, accuracy, later
-        )
+        found[name] = Conserved(name, defect, False, defect <= TOLERANCE, value, accuracy, later)
     mutual = np.zeros((len(names), len(names)))
     for i, j in combinations(range(len(names)), 2):
         pairs = zip(forms[names[i]], forms[names[j]], strict=True)

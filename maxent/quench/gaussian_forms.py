@@ -18,6 +18,7 @@ from maxent.families.quadratic import Quadratic, quadratic
 from maxent.families.ring_states import RingState
 from maxent.families.spin_rings import SpinRing
 from maxent.lattice import OneBody, OperatorSum, recognise
+from maxent.quench.gaussian_parity import ring_mean
 
 __all__ = ["as_quadratic", "gaussian_family", "gaussian_mean", "sector_forms"]
 
@@ -103,9 +104,9 @@ def gaussian_mean(state: Any, operator: OperatorSum) -> float:
     ValueError
         Fermions or bosons of which the operator is not quadratic.
     """
-    if isinstance(state, RingState):
-        return state.mean(operator.pauli_terms())
     found = recognise({"operator": operator})
+    if isinstance(state, RingState):
+        return state.mean(operator.pauli_terms()) if found.is_quadratic else ring_mean(state, operator)
     if isinstance(state, PeriodicState) and found.is_quadratic:
         form = as_quadratic(found.sectors[1 if found.has_sectors else 0]["operator"])
         made = _periodic(form, state.like.cells, state.like.antiperiodic)

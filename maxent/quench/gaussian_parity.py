@@ -18,14 +18,14 @@ from dataclasses import dataclass
 import numpy as np
 
 from maxent.families.gaussian_states import FermionState
-from maxent.families.pfaffians import log_pfaffian
 from maxent.families.ring_states import RingState
-from maxent.quench.gaussian_words import WordSum
+from maxent.lattice import OperatorSum
+from maxent.quench.gaussian_words import WordSum, word_sum
 
-__all__ = ["ParityTerm", "block_density", "block_rest", "parity_terms", "projected_mean"]
+__all__ = ["ParityTerm", "block_density", "block_rest", "parity_terms", "projected_mean", "ring_mean"]
 
-#: Levels closer to zero than this have no inverse.
-SMALLEST = 1e-8
+#: Means of levels closer to zero than this are moved there.
+SMALLEST = 1e-13
 
 
 @dataclass(frozen=True, eq=False)
@@ -52,13 +52,8 @@ class ParityTerm:
     twin: np.ndarray
 
 
-def parity_terms(state: RingState) -> tuple[ParityTerm, ...] | None:
-    """The Gaussian states that a state of a ring is made of; None where a level lies at zero (at lam = 0, say).
-
-    Parameters
-    ----------
-    state : RingState
-    """
+def parity_terms(state: RingState) -> tuple[ParityTerm, ...]:
+    """The Gaussian states that a state of a ring is made of."""
     found = []
     for sector in state.sectors:
         for probability, filling, sign in sector.terms() if sector.weight else ():
@@ -66,13 +61,11 @@ def parity_terms(state: RingState) -> tuple[ParityTerm, ...] | None:
             if not sign or not sector.parity:
                 found.append(ParityTerm(weight, sector.parity or 1, g, 0.0, np.zeros_like(g)))
                 continue
-            y, u = np.linalg.eigh(1j * g)
-            if np.abs(y).min(initial=1.0) < SMALLEST:
-                return None
-            orientation, size = log_pfaffian(g)
-            whole = (-1.0) ** state.sites * float(np.real(orientation)) * float(np.exp(size))
-            twin = np.real(-1j * (u / y) @ u.conj().T)
-            found.append(ParityTerm(weight, sector.parity, g, sector.parity * whole, 0.5 * (twin - twin.T)))
+            # s falls with y as its inverse grows: what moves a level away from zero is felt by no more than itself
+            y = np.where(np.abs(filling) < SMALLEST, -SMALLEST, filling)
+            # eta P = sign (-1)^(number of quasiparticles), of which each has the mean -y
+            share = sign * float(np.prod(-y))
+            found.append(ParityTerm(weight, sector.parity, g, share, sector.covariance(1 / y)))
     return tuple(found)
 
 
@@ -85,6 +78,12 @@ def projected_mean(terms: Sequence[ParityTerm], sums: Sequence[WordSum]) -> floa
             value = (value + term.share * words.mean(term.twin)) / (1 + term.share)
         total += term.weight * value
     return total
+
+
+def ring_mean(state: RingState, operator: OperatorSum) -> float:
+    """Mean of a sum of spins that is not quadratic."""
+    terms, words = parity_terms(state), word_sum(operator)
+    return projected_mean(terms, [words] * len(terms))
 
 
 def block_density(terms: Sequence[ParityTerm], modes: Sequence[int]) -> np.ndarray:

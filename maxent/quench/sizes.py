@@ -7,7 +7,7 @@ of their own.  Floor: quench.  Must not know configs.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -103,9 +103,10 @@ class SizeSeries:
         """What the series supports, in sentences; empty for fewer than three sizes or none that can be compared.
 
         Sizes can be compared inside one sequence.  An ensemble describes a block where its distance is small (at most
-        0.1) at the end of every sequence and does not grow there; the accuracy is the largest of those distances.
-        Single eigenstates get no sentence: they are one choice among many; nor does the complete generalised state of
-        free particles, which is the long-time state of blocks.
+        0.1) at the end of every sequence, whether it still falls or already grows, and misses it where it is larger;
+        the accuracy is the largest of those distances.  A size that is alone in its sequence plays no part, which each
+        sentence says.  Single eigenstates get no sentence: they are one choice among many; nor does the complete
+        generalised state of free particles, which is the long-time state of blocks.
         """
         if len(self.comparisons) < FEWEST or all(len(which) < 2 for which in self.sequences().values()):
             return ()
@@ -122,54 +123,60 @@ class SizeSeries:
     def _statement(self, label: str, sector: bool) -> str:
         """What is said of an ensemble; a sector that says the same as all states is not repeated."""
         blocks = sorted(set.intersection(*(set(c.block_bounds) for c in self.comparisons)))
-        close: dict[int, float] = {}
-        far: dict[int, float] = {}
-        grows: list[int] = []
+        found: dict[str, dict[int, float]] = {"close": {}, "closing": {}, "far": {}, "away": {}}
+        seen: list[int] = []
         for block in blocks:
             sizes, values = self.distances(label, block, sector=sector)
-            if len(sizes) < FEWEST:
+            if len(sizes) < FEWEST or not self._told(sizes):
                 continue
-            steady, worst = self._steady(sizes, values)
-            if worst <= SMALL and steady:
-                close[block] = worst
+            grows, worst = self._trend(sizes, values)
+            if worst <= SMALL:
+                found["closing" if grows else "close"][block] = worst
             elif self._bounded(label, block, sector):
-                continue  # an upper bound that is large or grows says nothing
-            elif steady:
-                far[block] = worst
+                continue  # an upper bound that is large says nothing
             else:
-                grows.append(block)
+                found["away" if grows else "far"][block] = worst
+            seen = [*seen, *(int(n) for n in sizes if int(n) not in seen)]
+        close, far = found["close"] | found["closing"], found["far"] | found["away"]
         parts = []
         if close:
             parts.append(f"describes the long-time state of {_sites(close)} to {_sizes(close)}")
         if far:
             parts.append(f"misses that of {_sites(far)} by {_sizes(far)}")
-        if grows:
-            parts.append(f"moves away from that of {_sites(grows)} as the size grows")
         if not parts:
             return ""
-        return f"{listing(parts, 'and')} (trace distance at the ends of {self._compared()})."
+        growing = sorted(found["closing"] | found["away"])
+        last = f"; that of {_sites(growing)} still grows with the size" if growing else ""
+        return f"{listing(parts, 'and')} (trace distance {self._compared(sorted(seen))}{last})."
 
     def _bounded(self, label: str, block: int, sector: bool) -> bool:
         """Whether some distance is only known by its bounds."""
         found = [self._one(c, label, sector) for c in self.comparisons]
         return any(e is not None and block in e.distance_bounds for e in found)
 
-    def _compared(self) -> str:
-        """The sequences, with their sizes."""
-        several = [which for which in self.sequences().values() if len(which) > 1]
-        return listing([f"L = {', '.join(str(self.sizes[i]) for i in which)}" for which in several], "and")
+    def _told(self, sizes: Sequence[int] | np.ndarray) -> list[list[int]]:
+        """Of these sizes those of each sequence that has more than one of them."""
+        every = [[int(n) for n in self.sizes[which] if n in sizes] for which in self.sequences().values()]
+        return [members for members in every if len(members) > 1]
 
-    def _steady(self, sizes: np.ndarray, values: np.ndarray) -> tuple[bool, float]:
-        """Whether no sequence grows at its end, and the largest value there; lone sizes do not count."""
-        steady, worst = True, 0.0
-        for which in self.sequences().values():
-            here = np.flatnonzero(np.isin(sizes, self.sizes[which]))
-            if len(here) < 2:
-                continue
-            tail = values[here]
-            worst = max(worst, float(tail[-1]))
-            steady = steady and bool(tail[-1] <= NOISE * tail[-2] + 1e-9)
-        return steady, worst
+    def _compared(self, sizes: Sequence[int]) -> str:
+        """Where the distances stand: the sequences with their sizes, and the sizes that play no part."""
+        several = self._told(sizes)
+        text = f"at the end{'s' if len(several) > 1 else ''} of "
+        text += listing([f"L = {', '.join(map(str, members))}" for members in several], "and")
+        used = {n for members in several for n in members}
+        alone = [str(n) for n in sizes if n not in used]
+        if alone:
+            whose = "its sequence" if len(alone) == 1 else "their sequences"
+            text += f"; L = {', '.join(alone)} {'plays' if len(alone) == 1 else 'play'} no part, alone in {whose}"
+        missing = [str(n) for n in self.sizes if n not in sizes]
+        return text + (f"; there is none at L = {', '.join(missing)}" if missing else "")
+
+    def _trend(self, sizes: np.ndarray, values: np.ndarray) -> tuple[bool, float]:
+        """Whether some sequence grows at its end, and the largest value there; lone sizes do not count."""
+        at = dict(zip(map(int, sizes), map(float, values), strict=True))
+        ends = [(at[members[-2]], at[members[-1]]) for members in self._told(sizes)]
+        return any(b > NOISE * a + 1e-9 for a, b in ends), max(b for _, b in ends)
 
     def _one(self, c: Comparison, label: str, sector: bool) -> Any:
         found = [e for e in c.ensembles if e.label == label and bool(e.sector) == sector]
