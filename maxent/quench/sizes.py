@@ -137,7 +137,8 @@ class SizeSeries:
             else:
                 found["away" if grows else "far"][block] = worst
             seen = [*seen, *(int(n) for n in sizes if int(n) not in seen)]
-        close, far = found["close"] | found["closing"], found["far"] | found["away"]
+        close = dict(sorted((found["close"] | found["closing"]).items()))
+        far = dict(sorted((found["far"] | found["away"]).items()))
         parts = []
         if close:
             parts.append(f"describes the long-time state of {_sites(close)} to {_sizes(close)}")

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -334,13 +335,60 @@ def test_parity_without_spread_makes_a_sector():
     assert p @ e / p.sum() == pytest.approx(found.targets["energy"], abs=1e-10)
 
 
-def test_statements_tell_description_from_failure():
+def test_statements_tell_which_sizes_they_rest_on():
     series = size_series(lambda n: study(n, ranking=False, blocks=(1, 2)), [4, 5, 6, 8])
     said = " ".join(series.statements)
-    assert "L = 4, 8" in said and "5" not in said.split("L = ")[1].split(")")[0]
+    assert "at the end of L = 4, 8; L = 5, 6 play no part, alone in their sequences" in said
     assert "single eigenstate" not in said
     lone = size_series(lambda n: study(n, ranking=False, blocks=(1,)), [4, 5, 6])
     assert lone.statements == ()  # no two sizes of one sequence
+
+
+def with_distances(comparison, size, **columns):
+    """The comparison at another size, with ensembles of known distances on blocks of one and two sites."""
+    base = comparison.ensemble("canonical")
+    made = [
+        replace(base, label=label.removesuffix("_inside"), distances=dict(enumerate(far, 1)),
+                sector={"a": 0.0} if label.endswith("_inside") else {})
+        for label, far in columns.items()
+    ]  # fmt: skip
+    return replace(comparison, size=size, ensembles=tuple(made), block_bounds={1: 1.0, 2: 1.0})
+
+
+def test_what_is_close_and_grows_still_describes():
+    one = compare(**study(4, ranking=False, blocks=(1, 2)))
+    far = {
+        6: {"thermal": (0.04, 0.4), "thermal_inside": (0.01, 0.2), "falling": (0.3, 0.2)},
+        8: {"thermal": (0.9, 0.9), "thermal_inside": (0.9, 0.9)},
+        10: {"thermal": (0.03, 0.3), "thermal_inside": (0.02, 0.3), "falling": (0.2, 0.1)},
+        14: {"thermal": (0.02, 0.2), "thermal_inside": (0.019, 0.4), "falling": (0.1, 0.05)},
+    }
+    series = SizeSeries(tuple(with_distances(one, n, **columns) for n, columns in far.items()))
+    rests = "at the end of L = 6, 10, 14; L = 8 plays no part, alone in its sequence"
+    assert series.statements == (
+        "thermal: describes the long-time state of 1 site to 0.02 and misses that of 2 neighbouring sites by 0.2 "
+        f"(trace distance {rests}).",
+        "thermal in the sector of the start: describes the long-time state of 1 site to 0.019 and misses that of "
+        f"2 neighbouring sites by 0.4 (trace distance {rests}; that of 2 neighbouring sites still grows with the "
+        "size).",
+    )
+    grown = SizeSeries(tuple(with_distances(one, n, **far[n]) for n in (6, 8, 10)))
+    thermal, inside = grown.statements
+    assert "to 0.03" in thermal and "grows" not in thermal  # small and growing is no failure, and is told
+    assert "to 0.02" in inside and "that of 1 and 2 neighbouring sites still grows" in inside
+    kept = SizeSeries(tuple(with_distances(one, n, falling=x) for n, x in ((6, (0.3, 0.2)), (10, (0.2, 0.1)))))
+    missing = SizeSeries((*kept.comparisons, with_distances(one, 14, falling=(0.1, 0.05)), with_distances(one, 18)))
+    assert missing.labels == () and missing.statements == ()
+
+
+def test_the_closest_is_named_over_all_sectors_and_inside():
+    one = compare(**study(4, ranking=False, blocks=(1, 2)))
+    columns = {"wide": (0.0, 0.3), "narrow": (0.1, 0.2), "wide_inside": (0.0, 0.1), "narrow_inside": (0.0, 0.15)}
+    found = with_distances(one, 4, **columns)
+    assert (found.best(), found.best(sector=True)) == ("narrow", "wide")
+    window = replace(found.ensembles[0], label="window", kind="microcanonical", distances={1: 0.0, 2: 0.0})
+    assert replace(found, ensembles=(*found.ensembles, window)).best() == "narrow"
+    assert with_distances(one, 4, wide=(0.0, 0.3)).best(sector=True) == ""
 
 
 def test_spread_of_charges_that_do_not_commute_is_symmetrised_in_both():
