@@ -14,7 +14,7 @@ import numpy as np
 from maxent.core.centre import centre, starts_along
 from maxent.core.contract import EPS, SAFETY, Family, Problem, Verdict
 from maxent.core.exists import minimiser_exists
-from maxent.core.faces import EARLY, look, outside
+from maxent.core.faces import EARLY, LATE, look, outside
 from maxent.core.newton import PATIENCE, at_floor, begin, newton_step, settle
 from maxent.core.outcome import Memo, Outcome
 from maxent.core.whiten import whiten
@@ -334,9 +334,18 @@ def close_call(problem: Problem, memo: Memo) -> Outcome | None:
     return _solved(problem, memo, "tested")
 
 
-def _solved(problem: Problem, memo: Memo, evidence: str) -> Outcome:
+def _solved(problem: Problem, memo: Memo, evidence: str) -> Outcome | None:
+    """Solved, unless the state misses the targets.
+
+    A residual far below the spread of a charge may be large beside its target: a condensate spreads as far as it is.
+    """
     memo.at = settle(memo.family.evaluate, memo.here)
     values = memo.whitening.values(memo.here.evaluation.values)
+    off = np.abs(values)
+    if np.any(off > LATE * problem.size + problem.accuracy):
+        missed = float(np.max(off / problem.size))
+        memo.reason = f"the targets can be reached, but to rounding a state misses them by {missed:.0e} of their size"
+        return None
     return memo.outcome(problem, Verdict.SOLVED, family=memo.family, values=values, evidence=evidence)
 
 

@@ -306,3 +306,19 @@ def test_a_common_log_weight_changes_nothing_but_the_partition_function(shift):
         assert moved.multipliers == pytest.approx(plain.multipliers, abs=1e-11, nan_ok=True)
         if plain.success:
             assert moved.log_partition == pytest.approx(plain.log_partition + shift, rel=1e-12)
+
+
+@pytest.mark.parametrize(("missed", "verdict"), [(1e-10, Verdict.SOLVED), (1e-7, Verdict.UNFINISHED)])
+def test_a_state_that_misses_its_targets_solves_nothing(missed, verdict):
+    """A proof of existence is one thing, the state at hand another: its values must be the targets."""
+
+    def astray(evaluate, at):
+        return at._replace(evaluation=at.evaluation._replace(values=at.evaluation.values + 10 * missed))
+
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(module, "settle", astray)
+        outcome, _ = asked(listed(DIE), [4.5])
+        loose, _ = asked(listed(DIE), [4.5], 1e-3)
+    assert outcome.verdict is verdict
+    assert ("misses them by" in outcome.reason) == (verdict is Verdict.UNFINISHED)
+    assert loose.verdict is Verdict.SOLVED
