@@ -1,6 +1,7 @@
 """What the figures of a comparison share: names and marks of the ensembles, and a key that fits.  Floor: plots.
 
-An ensemble has one mark in all figures; filled it stands for all sectors, open for the sector of the start.
+An ensemble has one mark in all figures, told apart by its shape alone; filled it stands for all sectors, open for the
+sector of the start.
 Must not know: what is drawn.
 """
 
@@ -27,7 +28,7 @@ __all__ = [
 
 SECTOR = "sector of the start"
 
-_MARKERS = "osD^vPX<>"
+_MARKERS = "osD^vPX<>*ph"
 _COLOURS = ("edge", "mark", "ink", "soft")
 #: Inches that a letter of a key and the mark beside it take.
 _LETTER, _MARK = 0.0505, 0.36

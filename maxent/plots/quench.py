@@ -39,6 +39,8 @@ _ORDERS = (("by_entropy", "by entropy"), ("by_distance", "by distance"))
 #: What is smaller is rounding of numbers of order one.
 ROUNDING = 1e-12
 _SEQUENCES = {"L = 4n": "o", "L = 4n + 2": "s", "L odd": "^"}
+#: Lines of the same, where the shape of a mark is that of an ensemble.
+_DASHES: dict[str, Any] = {"L = 4n": "-", "L = 4n + 2": (0, (4, 1.5)), "L odd": (0, (1, 1.5))}
 
 
 def plot_ensembles(
@@ -138,7 +140,8 @@ def plot_distances(comparison: Comparison, *, ax: Axes | None = None) -> Axes:
     """Trace distance of each ensemble from the dephased state, by the number of sites of a block.
 
     The steps are bounds on how far the block is from its dephased state in the average over all times; those of 1 and
-    more say nothing and are left out.
+    more say nothing and are left out.  Bars are proved bounds of the distance itself, on blocks of free particles that
+    are too large for its value.
 
     Parameters
     ----------
@@ -150,7 +153,7 @@ def plot_distances(comparison: Comparison, *, ax: Axes | None = None) -> Axes:
     -------
     Axes
     """
-    ensembles = [e for e in usable(comparison) if e.distances]
+    ensembles = [e for e in usable(comparison) if e.distances or e.distance_bounds]
     names = brief_names(ensembles)
     with drawing(ax, (SIZE[0], 2.1 + key_height(len(names) + 2))) as ax:
         if not ensembles:
@@ -174,16 +177,27 @@ def plot_distances(comparison: Comparison, *, ax: Axes | None = None) -> Axes:
                     bar = "_10–90 % of eigenstates" if known else "10–90 % of eigenstates"
                     ax.plot([at, at], ends, color=COLOUR["rule"], lw=3.2, solid_capstyle="butt", zorder=0.6, label=bar)
             ax.plot(x, list(e.distances.values()), label=label, clip_on=False, **style)
-        blocks = sorted({b for e in ensembles for b in e.distances})
+            _bounded(ax, e, (i - (len(order) - 1) / 2) * width, style)
+        blocks = sorted({b for e in ensembles for b in (*e.distances, *e.distance_bounds)})
         ax.set_xlim(blocks[0] - 0.55, blocks[-1] + 0.55)
         ax.set_xticks(blocks)
-        every = [x for e in ensembles for x in (*e.distances.values(), *(r[1] for r in e.distance_ranges.values()))]
+        wide = [r[1] for e in ensembles for r in (*e.distance_ranges.values(), *e.distance_bounds.values())]
+        every = [*(x for e in ensembles for x in e.distances.values()), *wide]
         highest = max([*bounds.values(), *every])
         ax.set_ylim(0.0, 1.06 * highest if highest > 1e-12 else 1.0)
         ax.set_xlabel("sites of the block")
         ax.set_ylabel("trace distance")
         key(ax, [sector_handle()] if any(e.sector for e in ensembles) else [])
         return ax
+
+
+def _bounded(ax: Axes, ensemble: Ensemble, shift: float, style: dict[str, Any]) -> None:
+    """Bars between the proved bounds of large blocks, in the colour of the ensemble."""
+    for block, ends in ensemble.distance_bounds.items():
+        fresh = "proved bounds" not in ax.get_legend_handles_labels()[1]
+        label = "proved bounds" if fresh else "_proved bounds"
+        look: dict[str, Any] = {"color": style["color"], "lw": 1.2, "marker": "_", "ms": 4.0, "ls": style["ls"]}
+        ax.plot([block + shift] * 2, ends, clip_on=False, label=label, **look)
 
 
 def plot_ranking(ranking: Ranking | None, *, ax: Axes | None = None) -> Axes:
@@ -256,7 +270,8 @@ def _named(ax: Axes) -> list[Artist]:
 def plot_sizes(series: SizeSeries, what: str | int, *, sector: bool = False, ax: Axes | None = None) -> Axes:
     """Deviation of an observable, or distance of a block, against 1/L.
 
-    Sizes of one sequence (multiples of 4, even others, odd) have one shape and are joined.
+    Every ensemble has its mark.  Sizes of one sequence (multiples of 4, even others, odd) are joined, by a line of
+    their own kind.
 
     Parameters
     ----------
@@ -287,8 +302,8 @@ def plot_sizes(series: SizeSeries, what: str | int, *, sector: bool = False, ax:
                 here = np.isin(sizes, series.sizes[which])
                 if here.any():
                     # of ensembles that agree the later ones lie inside the marks and lines of the earlier ones
-                    style = ensemble_mark(i, sector=sector) | {"marker": _SEQUENCES[sequence]}
-                    style |= {"ms": max(7.0 - 1.6 * i, 2.5), "lw": max(2.0 - 0.6 * i, 0.6)}
+                    style = ensemble_mark(i, sector=sector) | {"ls": _DASHES[sequence]}
+                    style |= {"ms": max(7.0 - 0.8 * i, 3.0), "lw": max(2.0 - 0.6 * i, 0.6)}
                     ax.plot(1 / sizes[here], values[here], label=f"_{label}: {sequence}", clip_on=False, **style)
                     drawn |= {name, sequence}
         if not drawn:
@@ -300,11 +315,10 @@ def plot_sizes(series: SizeSeries, what: str | int, *, sector: bool = False, ax:
             ax.set_ylabel(f"trace distance, {what} site{'' if what == 1 else 's'}")
         else:
             ax.set_ylabel(f"deviation of {short(what, 22)}", parse_math=False)
-        marks = [ensemble_mark(i, sector=sector) | {"marker": None} for i in range(len(names))]
+        marks = [ensemble_mark(i, sector=sector) | {"ls": "none"} for i in range(len(names))]
         handles = [Line2D([], [], label=n, **m) for n, m in zip(names.values(), marks, strict=True) if n in drawn]
-        shape: dict[str, Any] = {"ls": "none", "ms": 4.0, "mfc": COLOUR["page"] if sector else COLOUR["soft"]}
-        handles += [Line2D([], [], marker=m, label=s, mec=COLOUR["soft"], **shape) for s, m in _SEQUENCES.items()
-                    if s in drawn]  # fmt: skip
+        line: dict[str, Any] = {"color": COLOUR["soft"], "lw": 1.0}
+        handles += [Line2D([], [], label=s, ls=ls, **line) for s, ls in _DASHES.items() if s in drawn]
         key(ax, handles)
         return ax
 

@@ -67,11 +67,19 @@ def describe_ensembles(comparison: Comparison, *, observables: Iterable[str] | N
 def describe_distances(comparison: Comparison) -> str:
     """Trace distance by size of the block for each ensemble, see `plot_distances`."""
     ensembles = [e for e in usable(comparison) if e.distances]
+    between = [
+        f"{_where(e)} on {plural(b, 'site')} from {_n(low)} to {_n(high)}"
+        for e in usable(comparison)
+        for b, (low, high) in e.distance_bounds.items()
+    ]
+    beyond = f" Between proved bounds: {'; '.join(between)}." if between else ""
     if not ensembles:
-        return "No blocks were compared."
+        return beyond.strip() or "No blocks were compared."
     blocks = listing([str(b) for b in ensembles[0].distances], "and")
     said = f"Trace distance to the dephased state on blocks of {blocks} {_sites(ensembles[0].distances)}: "
-    said += "; ".join(f"{_where(e)} {_row(e.distances)}{_spans(e)}" for e in ensembles) + "."
+    said += "; ".join(f"{_where(e)} {_row(e.distances)}{_spans(e)}" for e in ensembles) + f".{beyond}"
+    if comparison.statistics:
+        return said
     bounds = {b: x for b, x in comparison.block_bounds.items() if x < 1}
     if not bounds:
         return f"{said} No bound on the temporal fluctuations of a block is below 1."

@@ -272,6 +272,25 @@ def test_sizes_by_sequence(series, what):
     assert all(f"at L = {n}" in words for n in (4, 5, 6, 8))
 
 
+def test_ten_ensembles_keep_apart_without_colour(neel):
+    base = neel.ensembles[0]
+    many = tuple(dataclasses.replace(base, label=f"e{k}", kind="canonical", sector={}) for k in range(10))
+    c = dataclasses.replace(neel, ensembles=many)
+    sizes = SizeSeries(tuple(dataclasses.replace(c, size=n) for n in (8, 9, 10, 12)))
+    drawn = [plots.plot_distances(c), plots.plot_trace(c, "zz"), *(plots.plot_sizes(sizes, x) for x in ("zz", 1))]
+    for ax in drawn:
+        legend = ax.get_legend()
+        marks = {
+            text.get_text(): (h.get_marker(), str(h.get_linestyle()))
+            for h, text in zip(legend.legend_handles, legend.get_texts(), strict=True)
+            if text.get_text().startswith("e")
+        }
+        assert len(marks) == len(set(marks.values())) == 10
+        shape = {line.get_label().split(":")[0].lstrip("_"): line.get_marker() for line in ax.get_lines()
+                 if line.get_label().lstrip("_").startswith("e")}  # fmt: skip
+        assert {n: m[0] for n, m in marks.items()} == shape  # the key shows the marks that are drawn
+
+
 def test_sizes_refuse_what_is_not_there(series):
     for what in ("energy", 3):
         with pytest.raises(ValueError, match=rf"no .*{what}.*there are the observables .*'zz'.* blocks of \[1, 2\]"):
