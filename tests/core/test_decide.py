@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -313,7 +315,7 @@ def test_a_state_that_misses_its_targets_solves_nothing(missed, verdict):
     """A proof of existence is one thing, the state at hand another: its values must be the targets."""
 
     def astray(evaluate, at):
-        return at._replace(evaluation=at.evaluation._replace(values=at.evaluation.values + 10 * missed))
+        return at._replace(evaluation=replace(at.evaluation, values=at.evaluation.values + 10 * missed))
 
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(module, "settle", astray)
