@@ -125,11 +125,14 @@ class Study:
     sizes : tuple of int
         Ascending.
     build : callable
-        Size -> keyword arguments of `maxent.quench.comparison.compare`; errors as `BadInput`.
+        Size -> keyword arguments of `maxent.quench.compare`, or of `compare_gaussian`; errors as `BadInput`.
+    gaussian : bool
+        Whether free particles are compared, by `compare_gaussian`.
     """
 
     sizes: tuple[int, ...]
     build: Callable[[int], Mapping[str, Any]]
+    gaussian: bool = False
 
 
 @dataclass(frozen=True)
@@ -201,7 +204,9 @@ class Job:
     mean : callable
         State and operator -> mean of a prediction.
     unit : str
-        What `family.size` counts.
+        What `size` counts.
+    count : int or None
+        How many of them; None: `family.size`.
     further : callable
         Result -> further tables and curves, computed after the fit (sections.py).
     roles : Roles or None
@@ -219,8 +224,14 @@ class Job:
     study: Study | None = None
     mean: Callable[[Any, Any], float] = lambda state, operator: state.mean(operator)
     unit: str = "state"
+    count: int | None = None
     further: Callable[[Any], Sequence[Section]] = lambda result: ()
     roles: Roles | None = None
+
+    @property
+    def size(self) -> int:
+        """How large the problem is, in the unit."""
+        return int(self.family.size) if self.count is None else self.count
 
     def target_errors(self) -> Any:
         """Give a factor (m, p) of the covariance of the targets; None when no target has a standard error."""

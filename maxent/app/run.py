@@ -88,7 +88,7 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
     seconds = {"build": time.perf_counter() - begun}
     target = out if out is not None else File("runs") / name(config, job, asked)
     with folder(target, force=force) as part, enough(_largest(job)):
-        say(f"fit of {plural(len(job.targets), 'charge')} on {plural(job.family.size, job.unit)}")
+        say(f"fit of {plural(len(job.targets), 'charge')} on {plural(job.size, job.unit)}")
         result, spent = _timed_fit(config, job, asked)
         seconds |= spent
         notes = job.remarks(result)
@@ -347,7 +347,7 @@ def _figures(part: File, job: Job, result: Any, record: Mapping[str, Any], serie
 def _largest(job: Job) -> int:
     """Dimension of the largest matrix that is decomposed."""
     if job.unit != "state":
-        return int(job.family.size) if job.unit == "mode" else 0
+        return job.size if job.unit == "mode" else 0
     return max((a.shape[-1] for a in job.family.blocks.dense), default=0)
 
 

@@ -44,10 +44,12 @@ def run(config: Config, study: Study, say: Callable[[str], None]) -> Any:
     ConfigError
         What only the calculation can tell, in one line with the numbers.
     """
+    from maxent.quench import compare, compare_gaussian
     from maxent.quench.sizes import size_series
 
     try:
-        return size_series(study.build, study.sizes, progress=_slowly(say))
+        make = compare_gaussian if study.gaussian else compare
+        return size_series(study.build, study.sizes, make=make, progress=_slowly(say))
     except BadInput as bad:
         raise config.error(bad.problems) from bad
     except ResourceError as bad:
@@ -78,7 +80,7 @@ def section(series: Any) -> dict[str, Any]:
 
 
 def write_arrays(folder: File, series: Any) -> None:
-    """Write traces in time and single eigenstates, `size-8.nc` for 8 sites, as NetCDF-3.
+    """Write traces in time and single eigenstates or levels of free particles, `size-8.nc` for 8 sites, as NetCDF-3.
 
     Parameters
     ----------
@@ -100,12 +102,19 @@ def write_arrays(folder: File, series: Any) -> None:
                 _line(out, "time", "time", c.times, "time, in units of 1/energy")
                 for k, name in enumerate(names):
                     _line(out, f"trace_{k}", "time", c.traces[name], f"mean of {name} in time")
-            out.createDimension("level", len(c.levels["energy"]))
-            _line(out, "energy", "level", c.levels["energy"], "energies in the sector of the start")
-            _line(out, "weight", "level", c.levels["weight"], "weight of each eigenstate in the start")
-            for k, name in enumerate(names):
-                _line(out, f"eigenstate_{k}", "level", c.levels[name], f"mean of {name} in each eigenstate")
-            for s, test in enumerate(c.eigenstate_tests.sectors):
+            if c.modes:
+                out.createDimension("mode", len(c.modes["energy"]))
+                _line(out, "mode_energy", "mode", c.modes["energy"], "energies of the single-particle levels")
+                _line(out, "mode_occupation", "mode", c.modes["occupation"], "their mean occupations, at all times")
+                text = "their multipliers in the complete generalised state"
+                _line(out, "mode_multiplier", "mode", c.modes["multiplier"], text)
+            if c.levels:
+                out.createDimension("level", len(c.levels["energy"]))
+                _line(out, "energy", "level", c.levels["energy"], "energies in the sector of the start")
+                _line(out, "weight", "level", c.levels["weight"], "weight of each eigenstate in the start")
+                for k, name in enumerate(names):
+                    _line(out, f"eigenstate_{k}", "level", c.levels[name], f"mean of {name} in each eigenstate")
+            for s, test in enumerate(() if c.eigenstate_tests is None else c.eigenstate_tests.sectors):
                 _tested(out, s, test, names)
 
 

@@ -142,7 +142,7 @@ def _notes(thermo: Any, roles: Roles) -> list[str]:
 def _work(job: Job) -> float:
     """About how much one evaluation of the family takes, in cubes of block sizes."""
     if job.unit != "state":
-        return float(job.family.size) ** (3 if job.unit == "mode" else 1)
+        return float(job.size) ** (3 if job.unit == "mode" else 1)
     return float(sum(stack.shape[-1] ** 3 for stack in job.family.blocks.dense))
 
 

@@ -93,7 +93,7 @@ def momentum_section(sites: Any, points: int, start: Any, hamiltonian: Any, resu
 
     if result.state is not None:
         add("ensemble", "distribution in the state that was fitted", lambda: result.state)
-    gaussian = _as_gaussian(start, sites)
+    gaussian = as_gaussian(start, sites)
     if gaussian is not None and hamiltonian is not None:
         add("long run", "distribution from second moments averaged over all times", _averaged(gaussian, hamiltonian))
     if gaussian is not None:
@@ -125,8 +125,8 @@ def _averaged(start: Any, hamiltonian: Any) -> Callable[[], Any]:
     return lambda: gaussian_evolve(start, hamiltonian).dephased().state
 
 
-def _as_gaussian(start: Any, sites: Any) -> Any:
-    """The start by its covariance; None where it has none."""
+def as_gaussian(start: Any, sites: Any) -> Any:
+    """Give the start by its covariance; None where it has none."""
     from maxent.lattice import Bosons, PatternState
     from maxent.quench.gaussian_starts import GaussianStart, gaussian_pattern
 
