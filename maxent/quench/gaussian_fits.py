@@ -27,6 +27,8 @@ __all__ = ["GaussianSetting", "complete_column", "gaussian_columns"]
 
 #: Most modes for which the self-checks, some twenty evaluations per charge, are made.
 CHECKED = 64
+#: What the parity does to means of large blocks is told from here on.
+TOLD = 1e-6
 #: Occupations closer to their ends than this have no multiplier.
 PINNED = 1e-14
 
@@ -103,7 +105,7 @@ def gaussian_columns(setting: GaussianSetting) -> list[Ensemble]:
                 plain, rest = _filled(setting, plain, result)
                 missed = max(missed, rest)
             out.append(plain)
-    if missed:
+    if missed > TOLD:
         setting.notes.append(
             "Large blocks of the ring are taken from second moments, which misses what the sharp parity does to means: "
             f"up to {missed:.2g}."

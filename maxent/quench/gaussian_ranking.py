@@ -15,7 +15,7 @@ from maxent.result import Result
 
 __all__ = ["rank_gaussian"]
 
-#: Smaller gains of distance are not counted: what differs from the time average at this size anyway, per site.
+#: Smaller gains of distance are not counted.
 FLOOR = 1e-3
 
 
@@ -24,6 +24,8 @@ def rank_gaussian(setting: GaussianSetting) -> Ranking | None:
     if setting.charges.statistics == "bosons":
         setting.notes.append("The charges are not ranked: bosons without charges have no state to begin with.")
         return None
+    if set(setting.reference.states) != set(setting.reference.densities):
+        setting.notes.append("The ranking by distance takes upper bounds for the blocks that have no more than bounds.")
     return rank(_GaussianFits(setting), floor=FLOOR)
 
 
