@@ -11,8 +11,8 @@ from typing import Any
 from maxent.text import number
 
 __all__ = [
-    "ZERO", "block_label", "both", "column_label", "columns_of_numbers", "deviation_cell", "distance_cell",
-    "has_sector", "mean_cell", "members", "pairs", "ratio_cell", "references", "rounded",
+    "ZERO", "block_label", "both", "column_label", "columns_of_numbers", "deviation_cell", "distance",
+    "distance_cell", "has_sector", "mean_cell", "members", "pairs", "ratio_cell", "references", "rounded", "tested",
 ]  # fmt: skip
 
 #: Numbers below this are rounding of what was computed.
@@ -51,12 +51,25 @@ def mean_cell(e: Mapping[str, Any], name: str) -> str:
 
 
 def distance_cell(e: Mapping[str, Any], block: str) -> str:
-    """Distance of a block, with the range over single eigenstates."""
+    """Distance of a block, or its bounds, with the range over single eigenstates."""
+    if block in e["distance_bounds"]:
+        low, high = e["distance_bounds"][block]
+        return f"{rounded(low, 3)} to {rounded(high, 3)}"
     text = rounded(e["distances"].get(block), 3)
     if block in e["distance_ranges"]:
         low, high = e["distance_ranges"][block]
         text += f" ({rounded(low, 3)} to {rounded(high, 3)})"
     return text
+
+
+def distance(e: Mapping[str, Any], block: str) -> float | None:
+    """Distance of a block, or its upper bound."""
+    return e["distances"].get(block, e["distance_bounds"].get(block, (None, None))[1])
+
+
+def tested(c: Mapping[str, Any]) -> list[Any]:
+    """Sectors whose eigenstates were tested; none of free particles."""
+    return [] if c["eigenstate_tests"] is None else c["eigenstate_tests"]["sectors"]
 
 
 def ratio_cell(ratio: Mapping[str, Any]) -> str:

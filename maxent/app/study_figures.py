@@ -50,7 +50,7 @@ def draw(series: Any) -> tuple[Figure, ...]:
             plots.describe_ensembles(c),
             lambda: plots.plot_ensembles(c),
         )
-    if c.block_bounds and any(e.distances for e in c.ensembles):
+    if c.block_bounds and any(e.distances or e.distance_bounds for e in c.ensembles):
         add(
             "distances",
             f"States of blocks{at}",

@@ -22,6 +22,7 @@ from maxent.app.study_cells import (
     pairs,
     ratio_cell,
     rounded,
+    tested,
 )
 from maxent.text import combination, listing, number, plural
 
@@ -56,19 +57,20 @@ def tables(found: Mapping[str, Any]) -> list[Table]:
     c = found["comparisons"][-1]
     made = [
         _start(c), _conservation(c), _ensembles(c), _thermodynamics(c), _means(c), _spreads(c), _distances(c),
-        _ranking(c), _windows(c), _inside(c), _sizes(found), _scatter(found),
+        _entropies(c), _ranking(c), _windows(c), _inside(c), _sizes(found), _scatter(found),
     ]  # fmt: skip
     return [t for t in made if t is not None and t.rows]
 
 
 def _start(c: Mapping[str, Any]) -> Table:
+    free = c["statistics"]
+    entropy = f"{rounded(c['dephased_entropy'], 6)} in the long run (not comparable with those of ensembles)"
     rows = [
         ("start", c["start_label"]),
         ("Hamiltonian", c["hamiltonian"]),
-        ("sites, states", f"{c['size']}, {c['dimension']}"),
+        ("sites", f"{c['size']}, free {free}") if free else ("sites, states", f"{c['size']}, {c['dimension']}"),
         ("without spread in the start", pairs(c["sharp"]) or "nothing"),
-        ("effective dimension", rounded(c["effective_dimension"], 5)),
-        ("entropy", f"{rounded(c['dephased_entropy'], 6)} in the long run (not comparable with those of ensembles)"),
+        *([] if free else [("effective dimension", rounded(c["effective_dimension"], 5)), ("entropy", entropy)]),
         ("largest group velocity, sites per time", rounded(c["speed"], 4)),
         ("revival time L/(2 v)", rounded(c["revival"], 4)),
         ("plateau in time", "–" if c["plateau"] is None else f"{c['plateau'][0]:.4g} to {c['plateau'][1]:.4g}"),
@@ -111,14 +113,22 @@ def _ensembles(c: Mapping[str, Any]) -> Table:
         )
         for e in c["ensembles"]
     )
+    windows = (
+        " A window has no multipliers; beta of a Gaussian one is the slope of the log of the density of states at its "
+        "mean energy, not at its centre; that of a sharp one is the slope of the entropy ln(number of states), which "
+        "depends on the width, after smoothing, at the energy given."
+    )
+    complete = (
+        " The complete generalised state has the occupation of every single-particle level as a charge, each with a "
+        "multiplier ln((1 ∓ n)/n)."
+    )
+    inside = has_sector(c)
     return Table(
         "Ensembles",
-        "Each fitted to the means of the start, over all sectors and inside the sector that the start lives in.",
+        f"Each fitted to the means of the start{', over all sectors and inside that of the start' if inside else ''}.",
         ("ensemble", "verdict", "entropy", "multipliers, or what defines it"),
         rows,
-        "State = exp(−Σ multiplier · charge) / Z. A window has no multipliers; beta of a Gaussian one is the slope of "
-        "the log of the density of states at its mean energy, not at its centre; that of a sharp one is the slope of "
-        "the entropy ln(number of states), which depends on the width, after smoothing, at the energy given.",
+        f"State = exp(−Σ multiplier · charge) / Z.{complete if c['statistics'] else windows}",
     )
 
 
@@ -170,9 +180,11 @@ def _means(c: Mapping[str, Any]) -> Table:
         tuple(rows),
         "Leading correction: ½ Σ ∂²O/∂q∂q (V of the start − V of the ensemble), what the different spreads of the "
         "charges explain at this size. Temporal σ: standard deviation in time around the long-time mean. A deviation "
-        "of the size of either is no failure of an ensemble. Single eigenstates: median, with the 10 % and 90 % "
-        "quantiles over the window in brackets.",
+        f"of the size of either is no failure of an ensemble.{'' if c['statistics'] else _EIGENSTATES}",
     )
+
+
+_EIGENSTATES = " Single eigenstates: median, with the 10 % and 90 % quantiles over the window in brackets."
 
 
 def _spreads(c: Mapping[str, Any]) -> Table:
@@ -205,19 +217,45 @@ def _distances(c: Mapping[str, Any]) -> Table:
             for e in (whole, part) if inside else (whole or part,):
                 cells.append("–" if e is None else distance_cell(e, b))
         rows.append(tuple(cells))
+    where = f"Sites of the blocks, counted from 0: {members(c['block_sites'])}."
+    lead = (
+        "Trace distance of the reduced state from that of the long-time state; 0: the same, 1: told apart by one look."
+    )
+    if c["statistics"]:
+        said = "Two numbers: proved bounds, where the distance itself would take too long. "
+        bounded = any(e["distance_bounds"] for e in c["ensembles"])
+        return Table("States of blocks", lead, tuple(head), tuple(rows) if blocks else (), said * bounded + where)
     bound = ["bound on the fluctuation in time"]
     for b in blocks:
         bound += [rounded(min(c["block_bounds"][b], 1.0), 3)] + (["–"] if inside else [])
     rows.append(tuple(bound))
     return Table(
         "States of blocks",
-        "Trace distance of the reduced state from that of the long-time state; 0: the same, 1: told apart by one look.",
+        lead,
         tuple(head),
         tuple(rows) if blocks else (),
         "Bound: ½ √(g d²/d_eff), d the dimension of the block, d_eff the effective dimension and g the most pairs of "
         "levels that share one gap; averaged over all times the block is no farther than this from its long-time "
-        "state. Written as 1 where it says nothing. Single eigenstates: median, with the 10 % and 90 % quantiles over "
-        f"the window in brackets. Sites of the blocks, counted from 0: {members(c['block_sites'])}.",
+        f"state. Written as 1 where it says nothing.{_EIGENSTATES} {where}",
+    )
+
+
+def _entropies(c: Mapping[str, Any]) -> Table | None:
+    """Relative entropies of blocks, which free particles have at any size of a block."""
+    blocks = sorted(c["block_bounds"], key=int)
+    rows = tuple(
+        (column_label(e), *(rounded(e["relative_entropies"].get(b), 3) for b in blocks))
+        for e in c["ensembles"]
+        if e["relative_entropies"]
+    )
+    if not rows:
+        return None
+    return Table(
+        "Relative entropy of blocks",
+        "S(long-time state || ensemble) in nats: how much an ensemble misses of what a block can tell.",
+        ("ensemble", *map(block_label, blocks)),
+        rows,
+        "Twice the square of the trace distance at least.",
     )
 
 
@@ -267,8 +305,10 @@ def _windows(c: Mapping[str, Any]) -> Table | None:
 
 
 def _inside(c: Mapping[str, Any]) -> Table | None:
+    if c["eigenstate_tests"] is None:
+        return None
     rows: list[tuple[str, ...]] = []
-    for t in c["eigenstate_tests"]["sectors"]:
+    for t in tested(c):
         whose = "sector of the start" if t["of_start"] else "the start has no weight there"
         rows.append((f"{pairs(t['sector']) or 'all states'}: {plural(t['size'], 'level')}, {whose}",))
         if t["ratio"] is not None:
@@ -296,21 +336,17 @@ def _inside(c: Mapping[str, Any]) -> Table | None:
 
 def _scatter(found: Mapping[str, Any]) -> Table | None:
     """Scatter by size, where several sizes were tested."""
-    tested = [
-        (c["size"], c["eigenstate_tests"]["sectors"][0])
-        for c in found["comparisons"]
-        if c["eigenstate_tests"]["sectors"]
-    ]
-    if any(t["of_start"] for _, t in tested):
-        tested = [(n, t) for n, t in tested if t["of_start"]]
-    names = [n for n in (tested[0][1]["scatter"] if tested else ()) if all(n in t["scatter"] for _, t in tested)]
-    if len(tested) < 2 or not names:
+    first = [(c["size"], tested(c)[0]) for c in found["comparisons"] if tested(c)]
+    if any(t["of_start"] for _, t in first):
+        first = [(n, t) for n, t in first if t["of_start"]]
+    names = [n for n in (first[0][1]["scatter"] if first else ()) if all(n in t["scatter"] for _, t in first)]
+    if len(first) < 2 or not names:
         return None
     return Table(
         "Scatter of eigenstates by size",
         "Standard deviation of the values of eigenstates about their running mean, inside one sector.",
-        ("observable", *(f"L = {n}, {plural(t['size'], 'level')}" for n, t in tested)),
-        tuple((name, *(rounded(t["scatter"][name], 3) for _, t in tested)) for name in names),
+        ("observable", *(f"L = {n}, {plural(t['size'], 'level')}" for n, t in first)),
+        tuple((name, *(rounded(t["scatter"][name], 3) for _, t in first)) for name in names),
         "Where eigenstates thermalise it falls as the inverse root of the number of levels.",
     )
 

@@ -14,10 +14,13 @@ from maxent.app.study_cells import (
     column_label,
     columns_of_numbers,
     deviation_cell,
+    distance,
+    distance_cell,
     pairs,
     ratio_cell,
     references,
     rounded,
+    tested,
 )
 from maxent.app.study_tables import Table, tables
 from maxent.text import listing, plural, table
@@ -73,11 +76,12 @@ def summary(found: Mapping[str, Any]) -> str:
     for e in c["ensembles"]:
         row = [column_label(e), rounded(e["entropy"], 6)]
         if largest is not None:
-            row.append(rounded(e["distances"].get(largest), 3))
+            row.append(distance_cell(e, largest))
         rows.append(row + [deviation_cell(e, c, name) for name in names])
     yard = ["temporal fluctuation", ""]
     if largest is not None:
-        yard.append(rounded(c["block_bounds"][largest], 3) + " (bound)")
+        bound = c["block_bounds"][largest]
+        yard.append("" if bound is None else rounded(bound, 3) + " (bound)")
     rows.append(yard + [rounded(c["fluctuations"].get(name), 3) for name in names])
     parts = [f"quench: {found['verdict']}", table(rows, head, right=range(1, len(head)))]
     if found["statements"]:
@@ -97,17 +101,20 @@ def _closest(c: Mapping[str, Any]) -> str:
         return "No ensemble could be fitted and compared."
     if largest is None:
         return ""  # no blocks: ensembles are compared in the means alone
-    distances = {e["label"]: e["distances"].get(largest) for e in c["ensembles"] if not e["sector"] and e["distances"]}
+    whole = [e for e in c["ensembles"] if not e["sector"]]
+    known = {e["label"]: distance(e, largest) for e in whole}
+    distances = {name: d for name, d in known.items() if d is not None}
+    most = "at most " if any(largest in e["distance_bounds"] for e in whole) else ""
     where = "one site" if largest == "1" else f"{largest} neighbouring sites"
     text = (
         f"At {plural(c['size'], 'site')} the ensemble closest to the long-time state is: {best}. Its trace distance on "
-        f"{where} is {rounded(distances.get(best), 3)}"
+        f"{where} is {most}{rounded(distances.get(best), 3)}"
     )
     thermal = ("canonical", "grand canonical")
     others = [
         f"{rounded(d, 3)} ({n})"
         for n, d in distances.items()
-        if n in thermal and d is not None and d > distances[best] + 1e-9
+        if n in thermal and d > distances[best] + 1e-9
     ]
     return text + (f", against {listing(others, 'and')}." if others else ".")
 
@@ -136,7 +143,7 @@ def _missed(c: Mapping[str, Any]) -> str:
 
 def _alike(c: Mapping[str, Any]) -> str:
     """What the level spacings of the sector of the start say."""
-    tests = [t for t in c["eigenstate_tests"]["sectors"] if t["of_start"] and t["ratio"] is not None]
+    tests = [t for t in tested(c) if t["of_start"] and t["ratio"] is not None]
     if not tests:
         return ""
     t = tests[0]
