@@ -1,120 +1,31 @@
-"""Free particles whose number is fixed: exact for any number, of fermions by projection, of bosons by recursion.
+"""Free particles whose number is fixed: exact for any number of fermions or bosons, by sums of positive terms.
 
-    Z_N = e^{mu N} 1/M sum_m e^{-i phi_m N} det(1 + e^{-X - mu + i phi_m}),      phi_m = 2 pi m/M,  M > n,
-
-for fermions, at the mu that gives N particles on the average, where all terms are of one sign at the maximum.  Means
-and pair probabilities of the levels are the same sum with complex occupations in it.  For bosons Z_N is the complete
-homogeneous symmetric sum of the weights ``w = e^-x``, all terms of which are positive,
-
-    N Z_N = sum_k (sum_a w_a^k) Z_{N-k},        <n_a> = sum_{k >= 1} w_a^k Z_{N-k} / Z_N
-
-(P. T. Landsberg, Thermodynamics with Quantum Statistical Illustrations, 1961, from memory).  Compared with the Gaussian
-state of equal means this is another ensemble: the number has no multiplier and no fluctuation, occupations of two
-levels are correlated, and Wick's theorem does not hold.  ``mu = (ln Z_N - ln Z_{N+1})/beta`` takes the place of the
-multiplier.  Floor: families.
+Compared with the Gaussian state of equal means this is another ensemble: the number has no multiplier and no
+fluctuation, occupations of two levels are correlated, and Wick's theorem does not hold.  The covariance of charges that
+are ``q_a`` for a particle in level a is ``sum_{a < b} (<n_a><n_b> - <n_a n_b>) (q_a - q_b)^2``, without cancellation.
+``mu = (ln Z_N - ln Z_{N+1})/beta`` takes the place of the multiplier.  Floor: families.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
-from typing import Any, ClassVar, NamedTuple
+from typing import Any, ClassVar
 
 import numpy as np
-from scipy.optimize import brentq
 from scipy.special import gammaln
 
 from maxent.core.blocks import real_rows
 from maxent.core.contract import EPS, Evaluation, Lowest
+from maxent.families.fixed_levels import canonical
 from maxent.families.gaussian_states import NumberState, quadratic_of
 from maxent.families.hosted import Hosted
 from maxent.families.levelling import levelled
 from maxent.families.places import Places
 from maxent.families.projected import falls
 from maxent.families.stacks import Free, Stacks, adjoint, eigh, rotated
-from maxent.families.statistics import log_weights, occupations
 
 __all__ = ["Canonical", "FixedNumberState"]
-
-
-class Levels(NamedTuple):
-    """A fixed number of particles in levels.
-
-    Attributes
-    ----------
-    log_z : float
-    mean : (n,) ndarray
-    one : (n, n) ndarray
-        ``<n_a (1 -+ n_b)>``: for fermions the probabilities that the first level is filled and the second one empty.
-    covariance : (n, n) ndarray
-        Of the occupations.
-    """
-
-    log_z: float
-    mean: np.ndarray
-    one: np.ndarray
-    covariance: np.ndarray
-
-
-def canonical(x: np.ndarray, number: int, sign: int) -> Levels:
-    """Levels `x` (n,) with exactly `number` fermions (sign 1) or bosons (-1)."""
-    return _fermions(x, number) if sign > 0 else _bosons(x, number)
-
-
-def _fermions(x: np.ndarray, number: int) -> Levels:
-    n = len(x)
-    if number in (0, n):
-        mean = np.full(n, float(number == n))
-        return Levels(-float(x @ mean), mean, np.zeros((n, n)), np.zeros((n, n)))
-    order = np.sort(x)
-    edge = order[number - 1], order[number]
-    reach = 40.0 + np.log(n)
-    excess = lambda mu: float(occupations(x + mu, 1).sum()) - number
-    mu = brentq(excess, -edge[1] - reach, -edge[0] + reach, xtol=1e-12, rtol=4 * EPS)
-    y = x + mu
-    points = n + 1 + n % 2  # odd, so that no phase is pi, where a level at zero would have a pole
-    turn = np.exp(2j * np.pi * np.arange(points) / points)[:, None]
-    small = np.exp(-np.abs(y))
-    # ln(1 + e^{-y} turn) relative to turn = 1, from whichever exponential is small
-    above = y > 0
-    grown = np.where(above, 1 + small * turn, turn + small)
-    log = np.log(grown).sum(axis=1) - np.log1p(small).sum()
-    weight = np.exp(log) * turn[:, 0] ** (-number)
-    total = float(weight.sum().real)
-    share = weight / total
-    filled = np.where(above, small * turn, turn) / grown
-    empty = np.where(above, 1.0, small) / grown
-    mean = np.real(share @ filled)
-    one = np.maximum(np.real((filled * share[:, None]).T @ empty), 0.0)
-    np.fill_diagonal(one, 0.0)
-    # rows of the covariance add up to zero; off the diagonal it is <n_a> - P(a, not b) - <n_a><n_b>
-    both = mean[:, None] - one
-    np.fill_diagonal(both, mean)
-    covariance = both - np.outer(mean, mean)
-    log_z = float(log_weights(y, 1).sum()) + mu * number + float(np.log(total / points))
-    return Levels(log_z, mean, one, 0.5 * (covariance + covariance.T))
-
-
-def _bosons(x: np.ndarray, number: int) -> Levels:
-    first = float(x.min()) if len(x) else 0.0
-    powers = np.exp(-np.outer(np.arange(number + 1), x - first))  # w^k, w = 1 in the lowest level
-    sums = np.log(powers.sum(axis=1)) if len(x) else np.zeros(number + 1)
-    log = np.zeros(number + 1)
-    for k in range(1, number + 1):
-        terms = sums[1 : k + 1] + log[k - 1 :: -1][:k]
-        top = float(terms.max())
-        log[k] = top + float(np.log(np.exp(terms - top).sum())) - np.log(k)
-    # Z_{N-j} / Z_N <= 1, and 0 beyond j = N
-    ratio = np.concatenate([np.exp(log[::-1] - log[-1]), np.zeros(number)])
-    ratios = ratio[np.arange(number + 1)[:, None] + np.arange(number + 1)[None, :]]
-    mean = ratio[1 : number + 1] @ powers[1:]
-    one = powers[1:].T @ ratios[1:] @ powers
-    both = powers[1:].T @ ratios[1:, 1:] @ powers[1:]
-    # n^2 = sum of the first n odd numbers, and <at least k in a> = w^k Z_{N-k}/Z_N
-    np.fill_diagonal(both, ((2 * np.arange(1, number + 1) - 1) * ratio[1 : number + 1]) @ powers[1:])
-    np.fill_diagonal(one, 0.0)
-    covariance = both - np.outer(mean, mean)
-    return Levels(float(log[-1]) - number * first, mean, one, 0.5 * (covariance + covariance.T))
 
 
 @dataclass(frozen=True, eq=False)
@@ -213,20 +124,16 @@ class Canonical(Hosted):
         every = np.concatenate(diagonal, axis=1)
         low = float(lam @ self.constant)
         values = self.constant + every @ levels.mean
-        # what is the same in all levels does not fluctuate: taken out before the root of the covariance is
-        uneven = every - every.mean(axis=1, keepdims=True) if every.shape[1] else every
-        covariance = uneven @ levels.covariance @ uneven.T + sum(r @ r.T for r in rows)
+        first, second = np.nonzero(np.triu(levels.pull))
+        rows.append((every[:, first] - every[:, second]) * np.sqrt(levels.pull[first, second]))
+        beside = np.concatenate(rows, axis=1)
+        covariance = beside @ beside.T
         bottom, top = self._ends(x)
         ground, level = low + bottom, max(abs(low + bottom), abs(low + top))
         rounding = 4 * EPS * (1 + level) * max(1.0, float(np.sqrt(np.linalg.norm(covariance))))
-
-        def factor() -> np.ndarray:
-            h, u = np.linalg.eigh(levels.covariance)
-            return np.concatenate([uneven @ (u * np.sqrt(np.maximum(h, 0.0))), *rows], axis=1)
-
         return Evaluation(
-            np.float64(levels.log_z - low), values, 0.5 * (covariance + covariance.T), np.float64(rounding),
-            np.float64(level), factor=factor, lowest=np.float64(ground),
+            np.float64(levels.excess - ground), values, 0.5 * (covariance + covariance.T), np.float64(rounding),
+            np.float64(level), factor=lambda: beside, lowest=np.float64(ground),
         )  # fmt: skip
 
     def combine(self, matrix: np.ndarray, offset: np.ndarray) -> Canonical:
@@ -353,12 +260,9 @@ class Canonical(Hosted):
             dense.append((u * levels.mean[at : at + e.size].reshape(e.shape)[:, None, :]) @ adjoint(u))
             at += e.size
         whole: Any = places.layout.state(*places.fill(flat, dense), 0.0, 0.0)
-        first = self._first_filling(x)
-        entropy = max(0.0, levels.log_z + float(x @ first) + float(x @ (levels.mean - first)))
-        full = self.free.sign > 0 and self.number == len(x)
-        more = np.nan if full else canonical(x, self.number + 1, self.free.sign).log_z
+        log_z = levels.excess - self._ends(x)[0] - float(lam @ self.constant)
         order = np.argsort(x, kind="stable")
         return FixedNumberState(
-            whole.number, self.number, entropy, levels.log_z - float(lam @ self.constant), levels.log_z - more,
-            levels.mean[order], np.diag(levels.covariance)[order], "fermions" if self.free.sign > 0 else "bosons",
+            whole.number, self.number, levels.entropy, log_z, levels.insertion, levels.mean[order],
+            levels.variances[order], "fermions" if self.free.sign > 0 else "bosons",
         )  # fmt: skip

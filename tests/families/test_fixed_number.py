@@ -1,15 +1,17 @@
-"""A fixed number of particles: bosons against an enumeration of all states, edges, and what the ensemble changes."""
+"""A fixed number of particles: against all states, closed forms and exact sums; edges; what the ensemble changes."""
 
 from __future__ import annotations
 
-from itertools import combinations_with_replacement
+from itertools import combinations_with_replacement, permutations, product
 from math import comb, sqrt
 
+import mpmath as mp
 import numpy as np
 import pytest
 
 import maxent
 from maxent.families import Bilinears, Matrices, Microstates
+from maxent.families.fixed_levels import canonical
 
 
 def hermitian(rng, n: int) -> np.ndarray:
@@ -100,6 +102,87 @@ def test_a_condensate_does_not_fluctuate_as_with_a_free_number():
     assert fixed.variances[0] == pytest.approx((excited * (1 + excited)).sum(), rel=1e-4)
     assert fixed.variances[0] < 0.02 * n0 * (1 + n0)
     assert fixed.insertion == pytest.approx(0.0, abs=1e-5)
+
+
+def equal_spacing(levels: int, number: int, statistics: str, lam: float) -> tuple[float, float, float]:
+    """Energy above the ground state, its variance and the entropy in levels 0, 1, 2...
+
+    Z is a Gaussian binomial coefficient, a ratio of products of 1 - q^k with q = exp(-lam).
+    """
+    i = np.arange(1.0, number + 1)
+    k = np.concatenate([i, i + (levels - number if statistics == "fermions" else levels - 1)])
+    sign, fall = np.repeat([1, -1], number), -np.expm1(-k * lam)
+    energy = float(np.sum(sign * k * np.exp(-k * lam) / fall))
+    variance = float(np.sum(sign * k**2 * np.exp(-k * lam) / fall**2))
+    return energy, variance, lam * energy - float(np.sum(sign * np.log(fall)))
+
+
+@pytest.mark.parametrize("statistics", ["fermions", "bosons"])
+@pytest.mark.parametrize(("levels", "number"), [(100, 50), (300, 120), (60, 1), (60, 59)])
+def test_equal_spacing_at_all_temperatures(statistics, levels, number):
+    family = Bilinears({"energy": np.diag(np.arange(float(levels)))}, statistics=statistics, number=number)
+    ground = number * (number - 1) / 2 if statistics == "fermions" else 0.0
+    for lam in (0.01, 0.3, 1.0, 10.0, 20.0, 300.0):
+        found = family.evaluate(np.array([lam]))
+        energy, variance, entropy = equal_spacing(levels, number, statistics, lam)
+        assert found.values[0] == pytest.approx(ground + energy, rel=1e-13)
+        assert found.covariance[0, 0] == pytest.approx(variance, rel=1e-11)
+        assert family.state(np.array([lam])).entropy == pytest.approx(entropy, rel=1e-12)
+    for lam in (1e3, 1e5):
+        assert family.evaluate(np.array([lam])).covariance[0, 0] == 0.0  # exp(-1000)
+
+
+def test_a_sharp_edge_of_many_levels():
+    """800 levels, 400 fermions: the variance at low temperature is the sum of k^2 q^k/(1 - q^k)^2."""
+    family = Bilinears({"energy": np.diag(np.arange(800.0))}, number=400)
+    energy, variance, _ = equal_spacing(800, 400, "fermions", 1.0)
+    found = family.evaluate(np.ones(1))
+    assert found.covariance[0, 0] == pytest.approx(variance, rel=1e-13)
+    assert variance == pytest.approx(2.7898681336964634, rel=1e-14)
+    assert found.values[0] == pytest.approx(79800 + energy, rel=1e-15)
+
+
+def symmetric_sums(weights: list, number: int, sign: int) -> list:
+    """``Z_0 .. Z_number`` of fermions (elementary symmetric sums) or bosons (complete homogeneous ones)."""
+    z = [mp.mpf(1)] + [mp.mpf(0)] * number
+    for w in weights:
+        for k in range(number, 0, -1) if sign > 0 else range(1, number + 1):
+            z[k] += w * z[k - 1]
+    return z
+
+
+LEVELS = {
+    "equal": np.zeros(8),
+    "two shells": np.array([0, 0, 0, 0, 1, 1, 1, 1.0]) + 1e-7 * np.arange(8),
+    "any": np.array([0.3, -1.7, 2.2, 0.1, 0.9, -0.4, 5.0, 0.12]),
+    "ladder": np.arange(8.0),
+}
+
+
+@pytest.mark.parametrize("kind", LEVELS)
+@pytest.mark.parametrize("sign", [1, -1])
+def test_every_pair_of_levels_keeps_its_digits(kind, sign):
+    """Means, pair probabilities and correlations of any size, relative, against sums with 400 digits."""
+    with mp.workdps(400):
+        for lam, number in ((1.0, 4), (1.0, 7), (30.0, 1), (30.0, 4), (90.0, 3), (90.0, 6)):
+            x = lam * LEVELS[kind]
+            w = [mp.exp(-mp.mpf(v)) for v in x.tolist()]
+            found, z = canonical(x, number, sign), symmetric_sums(w, number + 1, sign)
+            at_most = lambda k, z=z, n=number: z[n - k] / z[n] if k <= n else mp.mpf(0)
+            assert found.insertion == pytest.approx(float(mp.log(z[number] / z[number + 1])), abs=1e-12)
+            without = lambda *gone, w=w, n=number: symmetric_sums([v for i, v in enumerate(w) if i not in gone], n, 1)
+            if sign > 0:
+                mean = [w[a] * without(a)[number - 1] / z[number] for a in range(8)]
+            else:
+                mean = [sum(v**k * at_most(k) for k in range(1, number + 1)) for v in w]
+            np.testing.assert_allclose(found.mean, [float(v) for v in mean], rtol=2e-13)
+            for a, b in permutations(range(8), 2):
+                if sign < 0:
+                    both = sum(w[a] ** k * w[b] ** m * at_most(k + m) for k, m in product(range(1, number), repeat=2))
+                else:
+                    both = w[a] * w[b] * without(a, b)[number - 2] / z[number] if number > 1 else 0
+                assert found.one[a, b] == pytest.approx(float(mean[a] - sign * both), rel=2e-13)
+                assert found.pull[a, b] == pytest.approx(float(mean[a] * mean[b] - both), rel=1e-12)
 
 
 @pytest.mark.parametrize("statistics", ["fermions", "bosons"])
