@@ -159,10 +159,10 @@ def _bosons(x: np.ndarray, number: int) -> Levels:
     away = x - x.min()
     weights = np.exp(-np.delete(away, int(np.argmin(x))))  # of all others, 1 in the lowest level
     sums, steps = np.ones(n - 1), np.zeros(number + 1)  # Z_k of the first levels over Z_k, and ln(Z_{k+1}/Z_k)
-    for k in range(number + 1):
+    for count in range(number + 1):
         grown = np.cumsum(weights * sums)
         more = float(grown[-1]) if n > 1 else 0.0
-        sums, steps[k] = grown / (1 + more), np.log1p(more)
+        sums, steps[count] = grown / (1 + more), np.log1p(more)
     insertion = float(x.min() - steps[number])
     # A_k = ln(Z_N/Z_{N-k}), infinite beyond k = N
     loss = np.concatenate([[0.0], np.cumsum(steps[:number][::-1]), np.full(number, np.inf)])

@@ -127,8 +127,7 @@ class SpinRing(Hosted):
         """
         self.require_host(lam)
         parts = [s.evaluated(lam) for s in self.sectors]
-        log_z = float(np.logaddexp.reduce([p.log_z for p in parts]))
-        share = [float(np.exp(p.log_z - log_z)) for p in parts]
+        log_z, share = _weighed([p.log_z for p in parts])
         values = sum((w * p.values for w, p in zip(share, parts, strict=True)), np.zeros(len(lam)))
         between = np.stack([np.sqrt(w) * (p.values - values) for w, p in zip(share, parts, strict=True)], axis=1)
         covariance = sum((w * p.covariance for w, p in zip(share, parts, strict=True)), between @ between.T)
@@ -222,11 +221,18 @@ class SpinRing(Hosted):
         if lam.shape != (m,) or not np.all(np.isfinite(lam)):
             raise ValueError(f"multipliers must be {m} finite numbers, not {lam.tolist()}")
         parts = [s.thermal(lam) for s in self.sectors]
-        log_z = float(np.logaddexp.reduce([p.log_z for p in parts]))
-        share = np.exp(np.array([p.log_z for p in parts]) - log_z)
+        log_z, share = _weighed([p.log_z for p in parts])
         mixing = -float(share[share > 0] @ np.log(share[share > 0]))
         states = tuple(p.make(weight=float(w)) for p, w in zip(parts, share, strict=True))
         entropy = mixing + float(share @ [p.entropy for p in parts])
         sites = self.sites
         form_of = lambda terms, parity: quadratic_form(terms, sites, parity or 1)
         return RingState(sites, states, form_of, entropy, log_z)
+
+
+def _weighed(logs: list[float]) -> tuple[float, np.ndarray]:
+    """``ln Z`` of all sectors and their probabilities, which add up to 1 however large the logarithms are."""
+    top = max(logs)
+    share = np.exp(np.array(logs) - top)
+    total = float(share.sum())
+    return top + float(np.log(total)), share / total

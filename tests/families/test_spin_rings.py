@@ -116,6 +116,21 @@ def test_the_transverse_field_ring_at_all_temperatures(h):
     assert ground.verdict is maxent.Verdict.BOUNDARY and ground.face.dimension == 1
 
 
+@pytest.mark.parametrize("beta", [1.0, 1e5, 3e7])
+def test_sectors_add_up_however_large_the_multiplier_is(beta):
+    """Eight spins without a field: the classical ring with two ground states, one in each sector."""
+    t = np.tanh(beta)
+    energy = -8 * (t + t**7) / (1 + t**8)
+    ring = SpinRing(8, {"energy": spread([(-1, "XX")], 8)})
+    lam = np.array([beta])
+    state = ring.state(lam)
+    assert ring.evaluate(lam).values[0] == pytest.approx(energy, abs=1e-13)
+    assert state.mean(spread([(-1, "XX")], 8)) == pytest.approx(energy, abs=1e-13)
+    if beta > 1e4:
+        assert state.entropy == pytest.approx(np.log(2), abs=1e-14)
+    assert sum(s.weight for s in state.sectors) == pytest.approx(1.0, abs=4e-16)
+
+
 def test_values_of_a_ring_of_eight():
     """Two routes outside the package, difference 5e-15 (own computation): projected sums and all 256 states."""
     ring = SpinRing(8, four(8))
