@@ -3,7 +3,8 @@
 Floor: app.  Results go to stdout, everything else to stderr.  Imports nothing but the standard library until
 a command needs more, so that `--help` and config errors are quick.
 
-Exit codes: 0 solved; 1 ran, the answer is no; 2 bad command line or config; 3 our fault; 130 interrupted.
+Exit codes: 0 solved; 1 ran, the answer is no; 2 bad command line or config; 3 our fault; 130 interrupted, 143
+terminated (128 and the number of the signal).
 """
 
 from __future__ import annotations
@@ -16,6 +17,7 @@ from contextlib import AbstractContextManager, nullcontext
 from pathlib import Path as File
 from typing import Any
 
+from maxent.app.stopping import Stopped, stoppable
 from maxent.app.threads import one_thread
 from maxent.errors import ConfigError
 from maxent.version import __version__
@@ -23,7 +25,7 @@ from maxent.version import __version__
 __all__ = ["main"]
 
 _CODES = """exit codes: 0 solved; 1 ran, the answer is no; 2 bad command line or config;
-            3 our fault; 130 interrupted"""
+            3 our fault; 130 interrupted; 143 terminated"""
 
 
 def parser() -> argparse.ArgumentParser:
@@ -69,7 +71,7 @@ def parser() -> argparse.ArgumentParser:
         epilog=f"example: multipliers charges configs/xxz_ring_quench.toml --range 5\n\n{_CODES}",
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )
-    charges.add_argument("config", metavar="CONFIG", type=File, help="TOML file of kind spins or fermions, see docs/config.md")
+    charges.add_argument("config", metavar="CONFIG", type=File, help="TOML file of spins or fermions; docs/config.md")
     charges.add_argument("--range", metavar="N", type=_whole, default=4, help="most neighbouring sites (default: 4)")
     charges.add_argument(
         "--momentum",
@@ -98,13 +100,14 @@ def main(arguments: Sequence[str] | None = None) -> int:
     one_thread()
     try:
         given = parser().parse_args(arguments)
-        return {"solve": _solve, "check": _check, "charges": _charges}[given.command](given)
+        with stoppable():
+            return {"solve": _solve, "check": _check, "charges": _charges}[given.command](given)
     except ConfigError as bad:
         print(bad, file=sys.stderr)
         return 2
-    except KeyboardInterrupt:
+    except KeyboardInterrupt as stop:
         print("interrupted; nothing was written", file=sys.stderr)
-        return 130
+        return stop.exit_code if isinstance(stop, Stopped) else 130
     except Exception:
         import traceback
 

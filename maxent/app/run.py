@@ -14,7 +14,7 @@ import shutil
 import sys
 import time
 from collections.abc import Callable, Mapping, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import asdict, dataclass
 from importlib import metadata
 from importlib.util import find_spec
@@ -23,6 +23,7 @@ from typing import Any
 
 from maxent.app.config import Config, build, load
 from maxent.app.job import Job
+from maxent.app.stopping import undisturbed
 from maxent.app.threads import enough
 from maxent.errors import ConfigError, ResourceError
 from maxent.memory import size_text
@@ -204,26 +205,32 @@ def folder(target: File, *, force: bool):
         If it cannot be made, before any work is done; or if the disk fails later.
     """
     _refuse_existing(target, force)
-    made = []
+    part = target.absolute().parent / f".{target.name}.part-{os.getpid()}"
+    made: list[File] = []
     try:
-        for parent in reversed(target.absolute().parents):
-            if not parent.exists():
-                parent.mkdir()
-                made.append(parent)
-        part = target.absolute().parent / f".{target.name}.part-{os.getpid()}"
-        part.mkdir()
-    except OSError as bad:
-        _remove_empty(made)
-        raise ConfigError(f"{target}: cannot write a folder here: {bad.strerror}") from None
-    try:
+        _make(part, target, made)
         yield part
-        _put(part, target)
+        with undisturbed():
+            _put(part, target)
     except BaseException as bad:
-        shutil.rmtree(part, ignore_errors=True)
-        _remove_empty(made)
+        with undisturbed():
+            shutil.rmtree(part, ignore_errors=True)
+            _remove_empty(made)
         if isinstance(bad, OSError):
             raise ConfigError(f"{target}: cannot be written: {bad.strerror or bad}") from bad
         raise
+
+
+def _make(part: File, target: File, made: list[File]) -> None:
+    """Make the temporary folder and the folders above it; each is noted before it is made."""
+    try:
+        for parent in reversed(part.parents):
+            if not parent.exists():
+                made.append(parent)
+                parent.mkdir()
+        part.mkdir()
+    except OSError as bad:
+        raise ConfigError(f"{target}: cannot write a folder here: {bad.strerror}") from None
 
 
 def _put(part: File, target: File) -> None:
@@ -256,10 +263,8 @@ def _refuse_existing(target: File, force: bool) -> None:
 
 def _remove_empty(made: list[File]) -> None:
     for parent in reversed(made):
-        try:
+        with suppress(OSError):  # never made, or someone else put something there
             parent.rmdir()
-        except OSError:
-            return  # someone else put something there
 
 
 def _timed_fit(config: Config, job: Job, driver: str) -> tuple[Any, dict[str, float]]:

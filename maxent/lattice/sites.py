@@ -50,6 +50,8 @@ class Sites(ABC):
         if length < 1:
             raise ValueError(f"{owner}: the number of sites must be at least 1, not {length}")
         self.length = length
+        if isinstance(cell, Mapping):
+            raise TypeError(f"{owner}: cell takes names; a mapping of names to kinds comes second, {owner}(3, {{...}})")
         if isinstance(kind, Mapping):
             if cell and set(cell) != set(kind):
                 raise ValueError(f"{owner}: cell {tuple(cell)} and kinds {tuple(kind)} do not name the same sites")

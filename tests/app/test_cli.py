@@ -30,7 +30,7 @@ options:
 example: multipliers solve configs/xxz_ring_quench.toml
 
 exit codes: 0 solved; 1 ran, the answer is no; 2 bad command line or config;
-            3 our fault; 130 interrupted
+            3 our fault; 130 interrupted; 143 terminated
 """
 
 SOLVE = """usage: multipliers solve [-h] [--out DIR] [--json] [--force]
@@ -54,7 +54,7 @@ options:
 example: multipliers solve configs/wolf_dice.toml --out runs/dice
 
 exit codes: 0 solved; 1 ran, the answer is no; 2 bad command line or config;
-            3 our fault; 130 interrupted
+            3 our fault; 130 interrupted; 143 terminated
 """
 
 CHECK = """usage: multipliers check [-h] CONFIG
@@ -70,7 +70,7 @@ options:
 example: multipliers check configs/wolf_dice.toml
 
 exit codes: 0 solved; 1 ran, the answer is no; 2 bad command line or config;
-            3 our fault; 130 interrupted
+            3 our fault; 130 interrupted; 143 terminated
 """
 
 

@@ -292,6 +292,7 @@ BAD_STARTS = [
     ('file = "none.npy"\n', "11: start.file: file 'none.npy' cannot be read"),
     ('file = "pickle.npy"\n', "11: start.file: file 'pickle.npy': holds Python objects; only plain numbers are read"),
     ('file = "start.txt"\n', "11: start.file: 'start.txt' is no file of arrays; expected name.npy or name.npz:array"),
+    ('file = "many.npz"\n', "11: start.file: 'many.npz' may hold several arrays; say which one, name.npz:array"),
     (
         '[[start.mixture]]\nweight = 0.5\npattern = ["up"]\n',
         "11: start.mixture: weights must be probabilities that add up to 1, got 0.5",
@@ -510,15 +511,70 @@ def test_one_size_supports_no_statement(tmp_path, capsys):
     assert "canonical, in the sector" in shown
     found = json.loads((tmp_path / "run/result.json").read_text())["quench"]
     assert found["comparisons"][0]["sharp"]["field"] == 0 and found["comparisons"][0]["ranking"] is None
+    (bound,) = (line.split("(bound)")[0].split()[-1] for line in shown.splitlines() if "(bound)" in line)
+    assert float(bound) == min(found["comparisons"][0]["block_bounds"]["2"], 1)
     page = (tmp_path / "run/report.html").read_text()
-    assert "mean, sector" in page and "What the sizes support" not in page
+    assert page.count("canonical, in the sector") > 2 and "What the sizes support" not in page
+
+
+def test_the_headline_is_that_of_the_table(done):
+    c = json.loads(json.dumps(done[1]["quench"]["comparisons"][-1]))
+    base = c["ensembles"][0]
+    column = lambda label, kind, far, **sector: {**base, "label": label, "kind": kind, "sector": sector, "distances":
+                                                 {"2": far}, "charges": ["energy"]}  # fmt: skip
+    c["ensembles"] = [
+        column("canonical", "canonical", 0.5), column("canonical", "canonical", 0.25, a=1.0),
+        column("grand canonical", "grand canonical", 0.4), column("grand canonical", "grand canonical", 0.125, a=1.0),
+        column("Gaussian window", "microcanonical", 0.3), column("Gaussian window", "microcanonical", 0.1, a=1.0),
+        column("single eigenstate", "eigenstate", 0.01, a=1.0),
+    ]  # fmt: skip
+    c |= {"best": "grand canonical", "sharp": {"a": 1.0}, "size": 8}
+    said = study_words.verdict({"sizes": [8], "statements": [], "comparisons": [c]})
+    assert said.startswith(
+        "At 8 sites the ensemble closest to the long-time state is, over all sectors: grand canonical (trace distance "
+        "on 2 neighbouring sites 0.4; canonical 0.5); inside the sector of the start, a = 1: grand canonical (0.125; "
+        "canonical 0.25). These are the fits; of the windows, whose widths are a choice, the closest is: Gaussian "
+        "window, in the sector (0.1)."
+    )
+    c |= {"ensembles": [e for e in c["ensembles"] if not e["sector"]], "sharp": {}}
+    assert "closest to the long-time state is: grand canonical (" in study_words.verdict(
+        {"sizes": [8], "statements": [], "comparisons": [c]}
+    )
+
+
+def test_windows_tell_their_sector_and_the_velocity_its_reason(done):
+    c = json.loads(json.dumps(done[1]["quench"]["comparisons"][-1]))
+    table = lambda title: next(
+        t for t in study_words.tables({"sizes": [8], "statements": [], "comparisons": [c]}) if t.title == title
+    )
+    c |= {"sharp": {"a": 1.0}, "window": {"mean": 0.0, "width": 1.0, "beta": 0.1}}
+    assert "inside the sector of the start (a = 1)" in table("Energy windows").lead
+    assert all(row[0].startswith("width ") for row in table("Energy windows").rows)
+    c["window"] = {}
+    assert "over all sectors" in table("Energy windows").lead
+    assert "not known" not in str(table("Start and dynamics").rows)
+    c |= {"speed": None, "revival": None, "plateau": None}
+    assert "give speed in [quench]" in dict(table("Start and dynamics").rows)["largest group velocity, sites per time"]
+
+
+def test_quantiles_of_single_eigenstates_stand_below_their_median(done):
+    c = json.loads(json.dumps(done[1]["quench"]["comparisons"][-1]))
+    single = {**c["ensembles"][0], "label": "single eigenstate", "distances": {"1": 0.2, "2": 0.3}}
+    c["ensembles"].append(single | {"distance_ranges": {"1": [0.1, 0.4], "2": [0.15, 0.45]}})
+    tables = study_words.tables({"sizes": [8], "statements": [], "comparisons": [c]})
+    rows = next(t for t in tables if t.title == "States of blocks").rows
+    assert rows[-4:-1] == (
+        ("single eigenstate", "0.2", "0.3"),
+        ("10 % of them are below", "0.1", "0.15"),
+        ("90 % of them are below", "0.4", "0.45"),
+    )
 
 
 def test_an_interrupted_comparison_leaves_nothing(tmp_path, monkeypatch, capsys):
     def stop(*_, **__):
         raise KeyboardInterrupt
 
-    monkeypatch.setattr(sizes, "compare", stop)
+    monkeypatch.setattr("maxent.quench.compare", stop)
     file = tmp_path / "q.toml"
     file.write_text(QUENCH)
     assert main(["solve", str(file), "--out", str(tmp_path / "runs/a")]) == 130
@@ -537,7 +593,7 @@ def test_errors_of_the_calculation_are_one_line(tmp_path, monkeypatch, error, be
     def fail(*_, **__):
         raise error
 
-    monkeypatch.setattr(sizes, "compare", fail)
+    monkeypatch.setattr("maxent.quench.compare", fail)
     file = tmp_path / "c.toml"
     file.write_text(QUENCH)
     with pytest.raises(ConfigError) as caught:

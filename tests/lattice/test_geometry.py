@@ -209,6 +209,7 @@ def test_sites_compare_and_show_themselves():
         (lambda: Ring(3, {}), ValueError, "^Ring: a unit cell has at least one site$"),
         (lambda: Ring(3, {"a": 1}), TypeError, "^Ring: expected Spin"),
         (lambda: Ring(3, {"a": Spin(1)}, cell=("b",)), ValueError, "do not name the same sites"),
+        (lambda: Chain(3, cell={"a": Spin(1)}), TypeError, "^Chain: cell takes names; a mapping of names to kinds"),
         (lambda: Ring(3, bonds=[(0, 1)]), TypeError, "^Ring: bonds are given by name"),
         (lambda: Ring(3, bonds={"x": [0]}), ValueError, "^Ring: bond 0 of 'x' joins a site with itself$"),
         (lambda: Ring(3, bonds={"x": ["a"]}), ValueError, "^Ring: bond 'a' of 'x' is no bond: expected a shift"),

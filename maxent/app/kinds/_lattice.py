@@ -63,7 +63,8 @@ class Quench:
         metadata=says("Numbers of neighbouring sites whose states are compared; `[1, 2, 3, 4]` by default."),
     )
     window: float | None = field(
-        default=None, metadata=says("Width of the Gaussian energy window; the energy spread of the start by default.")
+        default=None,
+        metadata=says("Width of the energy windows, Gaussian and sharp; the energy spread of the start by default."),
     )
     times: float | list[float] | None = field(
         default=None,

@@ -268,6 +268,9 @@ class StartMaker:
 
     def _file(self, table: Any, path: Path) -> Callable[[], Any] | None:
         where = (*path, "file")
+        if table.file.endswith(".npz"):
+            self.problems.add(where, f"{table.file!r} may hold several arrays; say which one, name.npz:array")
+            return None
         if not table.file.endswith(".npy") and ".npz:" not in table.file:
             self.problems.add(where, f"{table.file!r} is no file of arrays; expected name.npy or name.npz:array")
             return None
