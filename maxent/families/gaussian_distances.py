@@ -2,7 +2,8 @@
 
 Closed forms from the covariance matrices; the trace distance has none and is taken from the dense matrices of small
 blocks, or enclosed: ``1 - F <= T <= sqrt(1 - F^2)`` with the root fidelity F (C. A. Fuchs, J. van de Graaf, IEEE Trans.
-Inf. Theory 45, 1216 (1999)) and ``T <= sqrt(S(1||2)/2)`` (Pinsker).  Floor: families.
+Inf. Theory 45, 1216 (1999)) and ``T <= sqrt(S(1||2)/2)`` (Pinsker).  A covariance in float64 does not tell how close to
+pure a level is below some 1e-15; what that leaves open is added to the bounds.  Floor: families.
 """
 
 from __future__ import annotations
@@ -11,14 +12,19 @@ from typing import NamedTuple
 
 import numpy as np
 
-from maxent.families.gaussian_states import BosonState, FermionState, symplectic_form
+from maxent.families.boson_fidelity import fidelity_bounds, symplectic_frame, symplectic_rounding
+from maxent.families.fermion_fidelity import Levels, covariance_distance, fidelity_ceiling, fidelity_floor
+from maxent.families.gaussian_states import BosonState, FermionState
 
-__all__ = ["Interval", "relative_entropy", "root_fidelity", "trace_distance", "trace_distance_bounds"]
+__all__ = [
+    "Interval", "relative_entropy", "root_fidelity", "root_fidelity_bounds", "trace_distance", "trace_distance_bounds",
+]  # fmt: skip
 
+EPS = float(np.finfo(float).eps)
 #: Modes up to which the trace distance is taken from the dense matrices.
 DENSE = 10
-#: Levels closer to purity than this are pure.
-PURE = 1e-15
+#: With more than this of 1 in a level where 2 cannot be told from pure, the supports count as different.
+OUTSIDE = 0.1
 
 
 class Interval(NamedTuple):
@@ -41,71 +47,102 @@ def _same(first: FermionState | BosonState, second: FermionState | BosonState) -
         raise ValueError(f"the states have {first.modes} and {second.modes} modes")
 
 
+class _Entropy(NamedTuple):
+    """Relative entropy to the nearest state with resolved levels.
+
+    Attributes
+    ----------
+    value : float
+    error : float
+        What rounding may have taken away.
+    outside : float
+        Most that 1 has in a level where 2 was moved.
+    apart : bool
+        Whether 1 has more than rounding in a single mode where 2 is pure to the last bit.
+    moved : float
+        Bound of the trace distance by which 2 was moved.
+    """
+
+    value: float
+    error: float
+    outside: float
+    apart: bool
+    moved: float
+
+
 def relative_entropy(first: FermionState | BosonState, second: FermionState | BosonState) -> float:
-    """``S(1||2) = Tr rho_1 (ln rho_1 - ln rho_2)`` in nats; infinite where 2 is pure and 1 is not there.
+    """``S(1||2) = Tr rho_1 (ln rho_1 - ln rho_2)`` in nats.
+
+    Levels of 2 closer to pure than rounding, 4 n eps for n fermion modes (times the condition number of the covariance
+    for bosons), cannot be told from pure ones.  They are taken at that resolution: the value is then a lower bound up
+    to rounding, short by what 1 has in the level times the logarithm of how much purer 2 is.  It is infinite where 1
+    has more than a tenth in such a level, or more than rounding in a mode where 2 is pure to the last bit, as in
+    patterns.
+    Levels little above the resolution bring its ratio to the level as a relative error of theirs.
 
     Raises
     ------
     TypeError, ValueError
     """
     _same(first, second)
+    found = _resolved_entropy(first, second)
+    return float("inf") if found.apart or found.outside > OUTSIDE else found.value
+
+
+def _resolved_entropy(first: FermionState | BosonState, second: FermionState | BosonState) -> _Entropy:
     if isinstance(first, FermionState) and isinstance(second, FermionState):
-        y, u = np.linalg.eigh(1j * second.covariance)
-        # rho_2 is diagonal in these modes; of rho_1 only their mean occupations are asked
-        mean = np.real(np.einsum("ai,ab,bi->i", u.conj(), 1j * first.covariance, u))
-        full, empty = 0.5 * (1 + mean), 0.5 * (1 - mean)
-        at = 0.5 * (1 + y), 0.5 * (1 - y)
-        total = -first.entropy
-        for p, q in ((full, at[0]), (empty, at[1])):
-            pure = q <= PURE
-            if np.any(p[pure] > 1e-12):
-                return float("inf")
-            total -= 0.5 * float(p[~pure] @ np.log(q[~pure]))
-        return max(0.0, total)
+        return _fermion_entropy(first, second)
     assert isinstance(first, BosonState) and isinstance(second, BosonState)
+    return _boson_entropy(first, second)
+
+
+def _fermion_entropy(first: FermionState, second: FermionState) -> _Entropy:
+    size, levels = 2 * first.modes, Levels.of(second)
+    nearest = 2 * EPS * max(size, 1)
+    # rho_2 is diagonal in these modes; of rho_1 only their mean occupations are asked
+    mean = np.real(np.einsum("ai,ab,bi->i", levels.frame.conj(), 1j * first.covariance, levels.frame))
+    value, outside = -first.entropy, 0.0
+    for p, q in ((0.5 * (1 + mean), levels.full), (0.5 * (1 - mean), levels.empty)):
+        p = np.clip(p, 0.0, 1.0)
+        value -= 0.5 * float(p @ np.log(np.clip(q, nearest, 1 - nearest)))
+        outside = max(outside, float(p[q <= nearest].max(initial=0.0)))
+    # every level appears with both signs: n of them moved by as much, and 2n logarithms weighted by unsure occupations
+    error = -size * nearest * float(np.log(nearest))
+    # entries +-1 are pairs of Majorana operators in a pure state, exactly
+    sharp = np.abs(second.covariance) == 1
+    apart = bool(np.any(0.5 * (1 - first.covariance * second.covariance)[sharp] > nearest))
+    return _Entropy(max(0.0, value), error, outside, apart, levels.slack + 0.5 * size * nearest)
+
+
+def _boson_entropy(first: BosonState, second: BosonState) -> _Entropy:
     n = first.modes
-    frame, nu = _williamson(second.covariance)
+    if not n:
+        return _Entropy(0.0, 0.0, 0.0, False, 0.0)
+    frame, nu = symplectic_frame(second.covariance)
     step = np.linalg.solve(frame, first.displacement - second.displacement)
     inverse = np.linalg.inv(frame)
     v = inverse @ first.covariance @ inverse.T
     number = 0.5 * (np.diag(v)[:n] + np.diag(v)[n:] + step[:n] ** 2 + step[n:] ** 2) - 0.5
-    excess = np.maximum(nu - 0.5, 0.0)
-    pure = excess <= PURE
-    if np.any(number[pure] > 1e-12):
-        return float("inf")
-    mixed = excess[~pure]
-    logs = float(np.log1p(mixed).sum() + number[~pure] @ np.log1p(1 / mixed))
-    return max(0.0, logs - first.entropy)
-
-
-def _williamson(v: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Symplectic S and levels nu with ``V = S diag(nu, nu) S^T``."""
-    from maxent.families.antisymmetric import canonical_form
-
-    n = len(v) // 2
-    e, u = np.linalg.eigh(v)
-    root = (u * np.sqrt(e)) @ u.T
-    # root^-1 Omega root^-1 has the levels 1/nu
-    inverse = (u / np.sqrt(e)) @ u.T
-    form = canonical_form(inverse @ symplectic_form(n) @ inverse)
-    nu = 1 / form.levels
-    order = np.argsort(nu)
-    frame = root @ np.concatenate([form.frame[:, 0::2][:, order], form.frame[:, 1::2][:, order]], axis=1)
-    nu = nu[order]
-    return frame / np.sqrt(np.concatenate([nu, nu])), nu
+    number = np.maximum(number, 0.0)
+    nearest = symplectic_rounding(second.covariance) * nu
+    excess = np.maximum(nu - 0.5, nearest)
+    value = float(np.log1p(excess).sum() + number @ np.log1p(1 / excess)) - first.entropy
+    outside = float(number[nu - 0.5 <= nearest].max(initial=0.0))
+    rounding = float((symplectic_rounding(second.covariance) + symplectic_rounding(first.covariance)) * nu[-1])
+    error = 2 * n * rounding * float(1 + number.sum() + np.log1p(1 / excess).sum())
+    # modes in the vacuum or a coherent state, exactly
+    sharp = (np.diag(second.covariance) == 0.5).reshape(2, n).all(axis=0)
+    shift = first.displacement - second.displacement
+    more = (0.5 * (np.diag(first.covariance) - 0.5 + shift**2)).reshape(2, n).sum(axis=0)
+    apart = bool(np.any(more[sharp] > nearest.max()))
+    return _Entropy(max(0.0, value), error, outside, apart, float(2 * n * nearest.max()))
 
 
 def root_fidelity(first: FermionState | BosonState, second: FermionState | BosonState) -> float:
     """``Tr sqrt(sqrt(rho_1) rho_2 sqrt(rho_1))``, 1 for equal states, 0 for orthogonal ones.
 
-    For fermions ``F = det((1 - iG_1)/2)^(1/4) det((1 - iG_2)/2)^(1/4) det(1 + X)^(1/2)`` with the singular values X of
-    ``r_2 r_1``, ``r^2 = (1 + iG)/(1 - iG)``.  Levels closer to purity than 2e-15 are moved there.  For bosons, with
-    ``S = V_1 + V_2`` and the means d apart,
-
-        F = exp(-d.S^-1.d/4) det(S)^(-1/4) prod_k sqrt(2 w_k + sqrt(4 w_k^2 - 1)),
-
-    where ``+-i w_k`` are the eigenvalues of ``Omega^T S^-1 (Omega/4 + V_2 Omega V_1) Omega`` (L. Banchi, S. L.
-    Braunstein, S. Pirandola, Phys. Rev. Lett. 115, 260501 (2015)).  Pure states are resolved to about 1e-8.
+    Fermions: to some n eps however pure the states are, see `maxent.families.fermion_fidelity`.  Bosons: to about 1e-8
+    where the states are pure, see `maxent.families.boson_fidelity`.
 
     Raises
     ------
@@ -113,55 +150,59 @@ def root_fidelity(first: FermionState | BosonState, second: FermionState | Boson
     """
     _same(first, second)
     if isinstance(first, BosonState) and isinstance(second, BosonState):
-        return _boson_fidelity(first, second)
-    parts = []
-    for state in (first, second):
-        y, u = np.linalg.eigh(1j * state.covariance)
-        y = np.clip(y, -1 + 2 * PURE, 1 - 2 * PURE)
-        parts.append((y, u))
-    (y1, u1), (y2, u2) = parts
-    first_half = (u1 * np.sqrt((1 + y1) / (1 - y1))) @ u1.conj().T
-    second_half = (u2 * np.sqrt((1 + y2) / (1 - y2))) @ u2.conj().T
-    size = np.linalg.svd(second_half @ first_half, compute_uv=False)
-    log = 0.25 * float(np.sum(np.log((1 - y1) / 2)) + np.sum(np.log((1 - y2) / 2))) + 0.5 * float(np.log1p(size).sum())
-    return min(1.0, float(np.exp(log)))
+        return fidelity_bounds(first, second)[1]
+    assert isinstance(first, FermionState) and isinstance(second, FermionState)
+    return fidelity_floor(Levels.of(first), Levels.of(second))[0]
 
 
-def _boson_fidelity(first: BosonState, second: BosonState) -> float:
-    n = first.modes
-    if not n:
-        return 1.0
-    omega, total = symplectic_form(n), first.covariance + second.covariance
-    apart = first.displacement - second.displacement
-    middle = omega / 4 + second.covariance @ omega @ first.covariance
-    levels = np.linalg.eigvals(omega.T @ np.linalg.solve(total, middle) @ omega)
-    w = np.maximum(np.sort(np.abs(levels))[::2], 0.5)  # each level twice
-    log = 0.5 * float(np.log(2 * w + np.sqrt((2 * w - 1) * (2 * w + 1))).sum())
-    log -= 0.25 * float(np.linalg.slogdet(total)[1] + apart @ np.linalg.solve(total, apart))
-    return min(1.0, float(np.exp(log)))
-
-
-def trace_distance_bounds(first: FermionState | BosonState, second: FermionState | BosonState) -> Interval:
-    """Proved bounds of ``|rho_1 - rho_2|_1/2`` for blocks of any size.
+def root_fidelity_bounds(first: FermionState | BosonState, second: FermionState | BosonState) -> Interval:
+    """Bounds of `root_fidelity`, rounding included; of fermions for states within some n^(3/2) eps of those given.
 
     Raises
     ------
     TypeError, ValueError
     """
-    f = root_fidelity(first, second)
-    upper = float(np.sqrt(max(0.0, 1 - f * f)))
-    for pair in ((first, second), (second, first)):
-        upper = min(upper, float(np.sqrt(0.5 * relative_entropy(*pair))))
-    lower = 1 - f
+    _same(first, second)
+    if isinstance(first, BosonState) and isinstance(second, BosonState):
+        low, _, high = fidelity_bounds(first, second)
+        return Interval(low, high)
+    assert isinstance(first, FermionState) and isinstance(second, FermionState)
+    levels = Levels.of(first), Levels.of(second)
+    value, error = fidelity_floor(*levels)
+    return Interval(float(np.sqrt(max(0.0, value**2 - error))), max(value, fidelity_ceiling(*levels)))
+
+
+def trace_distance_bounds(first: FermionState | BosonState, second: FermionState | BosonState) -> Interval:
+    """Proved bounds of ``|rho_1 - rho_2|_1/2`` for blocks of any size, rounding included.
+
+    From the fidelity and the relative entropies; for fermions also ``|y|_max/2 <= T <= sum |y|/4`` with the eigenvalues
+    y of ``i(G_1 - G_2)``.  Rounding is added: for fermions some n^(3/2) eps to T and to ``F^2``; for
+    bosons what it leaves open of the levels, which between pure states raises the upper bound to some 1e-7 without
+    squeezing and more with it.  Levels of 2 that are not resolved are moved, by a distance that is added as well.
+
+    Raises
+    ------
+    TypeError, ValueError
+    """
+    _same(first, second)
+    fidelity = root_fidelity_bounds(first, second)
+    lower, upper = 1 - fidelity.upper, float(np.sqrt(1 - fidelity.lower**2))
+    slack = 0.0
     if isinstance(first, FermionState) and isinstance(second, FermionState):
-        lower = max(lower, _largest_difference(first, second))
-    return Interval(min(lower, upper), upper)
+        slack = Levels.of(first).slack + Levels.of(second).slack
+        lower = max(lower, _largest_difference(first, second)) - slack
+        upper = min(upper, covariance_distance(first, second)) + slack
+    for pair in ((first, second), (second, first)):
+        found = _resolved_entropy(*pair)
+        upper = min(upper, float(np.sqrt(0.5 * (found.value + found.error))) + found.moved + slack)
+    return Interval(max(0.0, float(min(lower, upper))), min(1.0, float(upper)))
 
 
 def _largest_difference(first: FermionState, second: FermionState) -> float:
     """Largest difference of an occupation: measuring it tells the states apart at least that well."""
     y = np.abs(np.linalg.eigvalsh(1j * (first.covariance - second.covariance)))
-    return 0.5 * float(y.max(initial=0.0))
+    largest = 0.5 * float(y.max(initial=0.0))
+    return largest * (1 - EPS * len(y))
 
 
 def trace_distance(first: FermionState, second: FermionState) -> float:
