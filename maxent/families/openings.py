@@ -16,12 +16,16 @@ from __future__ import annotations
 
 import numpy as np
 
+from maxent.families.reachable import triangle_rows
 from maxent.families.statistics import exponents, log_weights, occupations, vacancies
 
-__all__ = ["opening"]
+__all__ = ["best_multiple", "opening"]
 
 #: Levels that are looked at together, and how often they are chosen anew where there are more.
 SAMPLE, ROUNDS = 512, 6
+
+#: Newton steps with all levels after that: coordinates made near a condensate resolve it.
+LAST = 2
 
 #: Primal-dual steps per choice of levels, and the part of the way to the edge of the domain that one takes.
 STEPS, STAY = 40, 0.95
@@ -37,6 +41,24 @@ FAR = 1e3
 
 #: Exponents below this part of what adds up to them are not told from zero in other coordinates.
 BLUR = 1e-12
+
+
+def best_multiple(x: np.ndarray, weights: np.ndarray, low: float) -> float:
+    """The t > 0 that minimises ``sum w f(t x) - t low`` of bosons; 1/x of the lowest level where there is none."""
+    if low >= 0:
+        return 1.0 / float(x.min())
+    total, mean = float(weights @ x), float(weights @ x) / float(weights.sum())
+    # right for equal levels; where next to nothing is asked for, the first guess will do
+    t = min(float(np.log1p(total / -low)) / mean, 30.0 / float(x.min()))
+    for _ in range(20):
+        n, v = occupations(t * x, -1), vacancies(t * x, -1)
+        slope, bend = -(weights * x) @ n - low, (weights * x * x) @ (n * v)
+        # in 1/t the slope is nearly linear: Newton's step there stays positive
+        new = t / min(max(1.0 + slope / max(bend * t, 1e-300), 0.5), 2.0)
+        if abs(new - t) <= 1e-3 * t:
+            break
+        t = new
+    return t
 
 
 def opening(charges: np.ndarray, copies: np.ndarray, target: np.ndarray, lam: np.ndarray, sign: int) -> np.ndarray:
@@ -67,16 +89,26 @@ def opening(charges: np.ndarray, copies: np.ndarray, target: np.ndarray, lam: np
         # levels that were not looked at and would have filled: next time each for itself
         pressing = np.zeros(len(w), bool)
         pressing[crowded] = True
+    for _ in range(LAST):
+        w = lam @ charges
+        n = occupations(w, sign)
+        rows = triangle_rows(charges, copies * (n * vacancies(w, sign) if sign else n))
+        found = _least_squares(rows, np.zeros(rows.shape[1]), charges @ (copies * n) - target)
+        if found is None:
+            break
+        part, _ = _descent(w, found[0] @ charges, copies, float(found[0] @ target), sign)
+        lam = lam + part * found[0]
     return lam
 
 
 def _descent(
     w: np.ndarray, change: np.ndarray, copies: np.ndarray, rises: float, sign: int
 ) -> tuple[float, np.ndarray]:
-    """Part of a step at whose end the dual of all levels still falls, and the levels that crowd there."""
+    """Part of a step at whose end the dual of all levels hardly rises, and the levels that crowd there."""
     part, weight = 1.0, copies * change
     crowded = np.zeros(0, int)
-    for _ in range(12):
+    allowed = 0.5 * abs(rises - float(weight @ occupations(w, sign)))
+    for _ in range(4):
         there = w + part * change
         if sign < 0 and there.min() <= 0:
             crowded = np.argsort(there, kind="stable")[: SAMPLE // 8]
@@ -85,11 +117,11 @@ def _descent(
             there = w + part * change
         with np.errstate(over="ignore", invalid="ignore"):
             held = occupations(there, sign)
-            if rises - weight @ held <= 0:
+            if rises - weight @ held <= allowed:
                 return part, crowded
         if not len(crowded):
             crowded = np.argsort(weight * held, kind="stable")[: SAMPLE // 8]
-        part *= 0.25
+        part *= 0.1
     return 0.0, crowded
 
 

@@ -27,8 +27,9 @@ from maxent.core.pytrees import register
 from maxent.families.antisymmetric import canonical_form
 from maxent.families.fillings import bends
 from maxent.families.gaussian_states import BosonState, symplectic_form
+from maxent.families.openings import best_multiple
 from maxent.families.quadratic import Quadratic
-from maxent.families.stacks import best_multiple, outside
+from maxent.families.stacks import outside
 from maxent.families.statistics import log_weights, occupations
 
 __all__ = ["PhaseSpace", "Whereabouts"]

@@ -24,10 +24,12 @@ from maxent.core.blocks import Blocks, real_rows, rotate_with
 from maxent.core.contract import EPS, Barrier, Evaluation, Family, Lowest, namespace
 from maxent.core.pytrees import register
 from maxent.families.fillings import bends, trace_log
+from maxent.families.openings import best_multiple, opening
+from maxent.families.soft_levels import resolved
 from maxent.families.statistics import log_weights, occupations, vacancies
 from maxent.families.steps import multiple
 
-__all__ = ["Free", "Part", "Stacks", "adjoint", "best_multiple", "eigh", "outside", "rotated"]
+__all__ = ["Free", "Part", "Stacks", "adjoint", "eigh", "outside", "rotated"]
 
 
 #: Blocks up to this size, in stacks from this many on, are worked on element by element.
@@ -111,24 +113,6 @@ def doublets(charges: np.ndarray, vectors: np.ndarray) -> tuple[np.ndarray, np.n
     return first, a + c - first, beside
 
 
-def best_multiple(x: np.ndarray, weights: np.ndarray, low: float) -> float:
-    """The t > 0 that minimises ``sum w f(t x) - t low`` of bosons; 1/x of the lowest level where there is none."""
-    if low >= 0:
-        return 1.0 / float(x.min())
-    total, mean = float(weights @ x), float(weights @ x) / float(weights.sum())
-    # right for equal levels; where next to nothing is asked for, the first guess will do
-    t = min(float(np.log1p(total / -low)) / mean, 30.0 / float(x.min()))
-    for _ in range(20):
-        n, v = occupations(t * x, -1), vacancies(t * x, -1)
-        slope, bend = -(weights * x) @ n - low, (weights * x * x) @ (n * v)
-        # in 1/t the slope is nearly linear: Newton's step there stays positive
-        new = t / min(max(1.0 + slope / max(bend * t, 1e-300), 0.5), 2.0)
-        if abs(new - t) <= 1e-3 * t:
-            break
-        t = new
-    return t
-
-
 def outside(m: int) -> Evaluation:
     """What is said of a point outside the domain."""
     nothing = np.float64(np.inf)
@@ -196,13 +180,23 @@ class Stacks(Family):
                 out.append(abs(c) + w @ np.abs(x))
         return np.array(out)
 
+    @cached_property
+    def _width(self) -> Any:
+        """Size of the charges of one particle, all charges together."""
+        xp = namespace(self.flat)
+        squares = [xp.sum(self.flat * self.flat)] + [xp.sum(xp.real(a * xp.conj(a))) for a in self.dense]
+        return xp.sqrt(sum(squares) / max(self.flat.shape[1] + sum(a.shape[1] * a.shape[2] for a in self.dense), 1))
+
     def start(self) -> np.ndarray:
-        """Infinite temperature for fermions; for bosons the best multiple of a confining combination."""
+        """Infinite temperature for fermions; for bosons the best multiple of a confining combination, or better."""
         if self.sign > 0:
             return np.zeros(len(self.constant))
         u = np.asarray(self.confining)
         x, w = self.spectrum(u)
-        return best_multiple(x, w, float(self.constant @ u)) * u
+        plain = best_multiple(x, w, float(self.constant @ u)) * u
+        if self.dense or not self.constant @ u < 0:
+            return plain
+        return opening(np.asarray(self.flat), np.asarray(self.flat_weights), -np.asarray(self.constant), plain, -1)
 
     # ------------------------------------------------------------------ the log-partition function
 
@@ -246,6 +240,8 @@ class Stacks(Family):
         """``ln Z``, values and covariance from one eigendecomposition per block; NumPy or JAX by the type of `lam`."""
         xp, s = namespace(lam), self.sign
         pairs = [eigh(k) for k in self.exponent(lam)]
+        if xp is np and s < 0:
+            pairs = [resolved(lam, a, *pair) for a, pair in zip(self.dense, pairs, strict=True)]
         x = lam @ self.flat
         every = xp.concat([x, *[xp.reshape(e, (-1,)) for e, _ in pairs]])
         sizes = [xp.full((e.shape[0] * e.shape[1],), w) for w, (e, _) in zip(self.weights, pairs, strict=True)]
@@ -293,9 +289,8 @@ class Stacks(Family):
             level = xp.abs(low) + xp.sum(weights * every * occupations(every, s)) + xp.max(every)
         size = xp.asarray(1.0) if alone or not m else xp.sqrt(xp.linalg.matrix_norm(covariance))
         rounding = 4 * EPS * (1 + level) * xp.maximum(1.0, size)
-        if s < 0:  # the occupation of a level near zero magnifies its rounding
-            soft = xp.sqrt(xp.sum((weights * occupations(every, s) * vacancies(every, s)) ** 2))
-            rounding = rounding + EPS * xp.max(every) * soft
+        if s < 0:  # the particles of a level near zero magnify the rounding of the charges
+            rounding = rounding + 8 * EPS * xp.max(occupations(every, s)) * self._width
         lowest = low + below if s > 0 else low
         if alone:
             blank = np.full((m, m), np.nan)

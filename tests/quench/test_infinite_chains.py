@@ -8,6 +8,7 @@ import pytest
 from numpy.testing import assert_allclose
 from scipy.integrate import quad
 
+import maxent
 from maxent.lattice import Ring, formula
 from maxent.quench.infinite_chains import HardCoreChain, TransverseFieldChain
 from maxent.quench.momentum_averages import average, momentum_nodes
@@ -214,3 +215,16 @@ def test_what_cannot_be():
         TransverseFieldChain(0.5).after_quench(float("nan"))
     with pytest.raises(ValueError, match="at least one site"):
         HardCoreChain().after_superlattice(1.0).block(0)
+
+
+@pytest.mark.parametrize("field", [0.0, 0.5, 1.0, 2.0])
+def test_without_a_quench_every_mode_is_empty(field):
+    """Everything on the edge: no entropy, infinite multipliers, the ground state, and an ensemble on the boundary."""
+    chain = TransverseFieldChain(field)
+    state = chain.after_quench(field)
+    k = np.linspace(0.1, 3.0, 7)
+    assert state.entropy == 0 and np.all(state.multipliers(k) == np.inf)
+    assert state.energy == pytest.approx(-float(average(lambda k: chain.level(k) / 2)), rel=1e-12)
+    result, fitted = state.ensemble({"energy": chain.charge(0), "second": chain.charge(1)})
+    assert result.verdict is maxent.Verdict.BOUNDARY and fitted is None
+    assert abs(result.entropy) <= 1e-11
