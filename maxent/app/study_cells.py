@@ -12,7 +12,8 @@ from maxent.text import number
 
 __all__ = [
     "ZERO", "block_label", "both", "column_label", "columns_of_numbers", "deviation_cell", "distance",
-    "distance_cell", "has_sector", "mean_cell", "members", "pairs", "ratio_cell", "references", "rounded", "tested",
+    "distance_cell", "distance_rows", "has_sector", "left_out", "mean_cell", "members", "pairs", "ratio_cell",
+    "references", "rounded", "tested", "windows_inside",
 ]  # fmt: skip
 
 #: Numbers below this are rounding of what was computed.
@@ -50,16 +51,38 @@ def mean_cell(e: Mapping[str, Any], name: str) -> str:
     return text
 
 
-def distance_cell(e: Mapping[str, Any], block: str) -> str:
-    """Distance of a block, or its bounds, with the range over single eigenstates."""
+def distance_cell(e: Mapping[str, Any], block: str, *, ranges: bool = True) -> str:
+    """Distance of a block, or its bounds, with the range over single eigenstates if it is asked for."""
     if block in e["distance_bounds"]:
         low, high = e["distance_bounds"][block]
         return f"{rounded(low, 3)} to {rounded(high, 3)}"
     text = rounded(e["distances"].get(block), 3)
-    if block in e["distance_ranges"]:
+    if ranges and block in e["distance_ranges"]:
         low, high = e["distance_ranges"][block]
         text += f" ({rounded(low, 3)} to {rounded(high, 3)})"
     return text
+
+
+def distance_rows(label: str, cells: Sequence[tuple[Any, str]]) -> list[tuple[str, ...]]:
+    """Row of the distances of an ensemble, and of single eigenstates two more with their quantiles.
+
+    Parameters
+    ----------
+    label : str
+    cells : sequence of (ensemble or None, block)
+        One for each column.
+    """
+    rows = [(label, *("–" if e is None else distance_cell(e, b, ranges=False) for e, b in cells))]
+    if any(e is not None and b in e["distance_ranges"] for e, b in cells):
+        ends = [(None, None) if e is None else e["distance_ranges"].get(b, (None, None)) for e, b in cells]
+        for k, part in enumerate(("10 %", "90 %")):
+            rows.append((f"{part} of them are below", *(rounded(x[k], 3) for x in ends)))
+    return rows
+
+
+def windows_inside(c: Mapping[str, Any]) -> bool:
+    """Whether windows of several widths are inside the sector of the start."""
+    return bool(c["sharp"]) and bool(c["window"])
 
 
 def distance(e: Mapping[str, Any], block: str) -> float | None:
@@ -70,6 +93,17 @@ def distance(e: Mapping[str, Any], block: str) -> float | None:
 def tested(c: Mapping[str, Any]) -> list[Any]:
     """Sectors whose eigenstates were tested; none of free particles."""
     return [] if c["eigenstate_tests"] is None else c["eigenstate_tests"]["sectors"]
+
+
+def left_out(comparisons: Sequence[Mapping[str, Any]], sizes: Sequence[int]) -> str:
+    """Sizes whose eigenstates have no scatter, each with the reason."""
+    found = []
+    for c in comparisons:
+        if c["size"] in sizes:
+            tests = tested(c)
+            why = tests[0]["refusal"] if tests else "no sector has enough levels"
+            found.append(f"L = {c['size']}, {why or 'the sector is not that of the start'}")
+    return "; ".join(found)
 
 
 def ratio_cell(ratio: Mapping[str, Any]) -> str:

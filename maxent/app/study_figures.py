@@ -11,6 +11,7 @@ from functools import partial
 from typing import Any
 
 from maxent.app.figures import Figure
+from maxent.app.study_cells import left_out
 
 __all__ = ["draw"]
 
@@ -80,18 +81,21 @@ def draw(series: Any) -> tuple[Figure, ...]:
             add(
                 f"eigenstates-{k + 1}",
                 f"{name} in single eigenstates{at}",
-                "Eigenstates in the sector of the start, with the window and the long-time mean.",
+                _eigenstates_caption(c),
                 plots.describe_eigenstates(c, name),
                 partial(plots.plot_eigenstates, c, name),
             )
     if c.window_scan is not None and c.window_scan.windows:
-        beta = _canonical_beta(c)
+        inside = bool(c.sharp) and bool(c.window)
+        beta = _canonical_beta(c, inside)
+        where = " in the sector of the start" if inside else ""
+        dashed = f"; dashed: the canonical ensemble{' there' if inside else ''}" if beta is not None else ""
         add(
             "widths",
-            f"Slope of the entropy by width of the window{at}",
-            "beta of Gaussian windows around the energy of the start; dashed: the canonical ensemble.",
-            plots.describe_widths(c.window_scan, canonical=beta),
-            lambda: plots.plot_widths(c.window_scan, canonical=beta),
+            f"Slope of the entropy by width of the window{where}{at}",
+            f"beta of Gaussian windows around the energy of the start{where}{dashed}.",
+            plots.describe_widths(c.window_scan, canonical=beta, sector=inside),
+            lambda: plots.plot_widths(c.window_scan, canonical=beta, sector=inside),
         )
     for k, name in enumerate(names):
         if len(series.scatter(name)[0]) > 1:
@@ -99,7 +103,8 @@ def draw(series: Any) -> tuple[Figure, ...]:
                 f"scatter-{k + 1}",
                 f"Scatter of {name} over eigenstates by size",
                 "Standard deviation about the running mean inside one sector, against its number of levels; the "
-                "numbers beside the marks are sizes. Dashed: what eigenstates that thermalise follow.",
+                "numbers beside the marks are sizes. Dashed: what eigenstates that thermalise follow."
+                + _not_tested(series, name),
                 plots.describe_scatter(series, name),
                 partial(plots.plot_scatter, series, name),
             )
@@ -117,10 +122,24 @@ def draw(series: Any) -> tuple[Figure, ...]:
     return tuple(found)
 
 
-def _canonical_beta(c: Any) -> float | None:
+def _canonical_beta(c: Any, inside: bool) -> float | None:
     """Slope of the entropy, beta, of the canonical ensemble in the sector that the windows are in."""
-    inside = bool(c.sharp)
     for e in c.ensembles:
         if e.kind == "canonical" and bool(e.sector) == inside:
             return e.multipliers.get(c.hamiltonian)
     return None
+
+
+def _eigenstates_caption(c: Any) -> str:
+    """What is drawn: there may be no sector and no window."""
+    where = " in the sector of the start" if c.sharp else ""
+    window = ", the window" if c.window else ""
+    return f"Eigenstates{where}{window} and the long-time mean. The area of a circle is the weight in the start."
+
+
+def _not_tested(series: Any, name: str) -> str:
+    """Sizes that have no mark, each with the reason."""
+    sizes = [c.size for c in series.comparisons if c.size not in series.scatter(name)[0]]
+    if not sizes:
+        return ""
+    return f" Not tested: {left_out([c.to_dict() for c in series.comparisons], sizes)}."

@@ -15,14 +15,16 @@ from maxent.app.study_cells import (
     both,
     column_label,
     deviation_cell,
-    distance_cell,
+    distance_rows,
     has_sector,
+    left_out,
     mean_cell,
     members,
     pairs,
     ratio_cell,
     rounded,
     tested,
+    windows_inside,
 )
 from maxent.text import combination, listing, number, plural
 
@@ -71,13 +73,25 @@ def _start(c: Mapping[str, Any]) -> Table:
         ("sites", f"{c['size']}, free {free}") if free else ("sites, states", f"{c['size']}, {c['dimension']}"),
         ("without spread in the start", pairs(c["sharp"]) or "nothing"),
         *([] if free else [("effective dimension", rounded(c["effective_dimension"], 5)), ("entropy", entropy)]),
-        ("largest group velocity, sites per time", rounded(c["speed"], 4)),
-        ("revival time L/(2 v)", rounded(c["revival"], 4)),
-        ("plateau in time", "–" if c["plateau"] is None else f"{c['plateau'][0]:.4g} to {c['plateau'][1]:.4g}"),
+        *_speeds(c),
         ("time that resolves the smallest gap", rounded(c["horizon"], 3)),
     ]
     lead = "Where the dynamics begins, and the times that matter at the largest size."
     return Table("Start and dynamics", lead, (), tuple(rows))
+
+
+def _speeds(c: Mapping[str, Any]) -> list[tuple[str, str]]:
+    """The largest group velocity and the times it gives, or why they are not known."""
+    velocity = "largest group velocity, sites per time"
+    if not c["speed"]:
+        why = "not known: it is estimated only where momenta label the levels; give `speed` in [quench]"
+        return [(velocity, why.replace("`", "")), ("revival and plateau in time", "not known without it")]
+    span = "no blocks to look at" if c["plateau"] is None else f"{c['plateau'][0]:.4g} to {c['plateau'][1]:.4g}"
+    return [
+        (velocity, rounded(c["speed"], 4)),
+        ("revival time L/(2 v)", rounded(c["revival"], 4)),
+        ("plateau in time", span),
+    ]
 
 
 def _conservation(c: Mapping[str, Any]) -> Table:
@@ -158,29 +172,25 @@ def _thermodynamics(c: Mapping[str, Any]) -> Table | None:
 
 
 def _means(c: Mapping[str, Any]) -> Table:
-    inside = has_sector(c)
-    head = ["ensemble", "mean", "deviation"]
-    if inside:
-        head += ["mean, sector", "deviation, sector"]
-    head += ["leading correction", "temporal σ"]
     rows: list[tuple[str, ...]] = []
     for name, truth in c["truth"].items():
-        sigma = c["fluctuations"].get(name)
+        sigma = rounded(c["fluctuations"].get(name), 3)
         rows.append((f"{name}: {rounded(truth, 8)} in the long run, {rounded(c['initial'][name], 8)} in the start",))
-        for label, whole, part in both(c):
-            cells = [label]
-            for e in (whole, part) if inside else (whole or part,):
-                cells += ["–", "–"] if e is None else [mean_cell(e, name), deviation_cell(e, c, name)]
-            correction = None if whole is None else whole["corrections"].get(name)
-            rows.append((*cells, rounded(correction, 3), rounded(sigma, 3)))
+        for e in c["ensembles"]:
+            cells = (mean_cell(e, name), deviation_cell(e, c, name), rounded(e["corrections"].get(name), 3))
+            rows.append((column_label(e), *cells, sigma))
+    only = any(e["corrections"] for e in c["ensembles"]) and not any(
+        e["corrections"] for e in c["ensembles"] if e["sector"]
+    )
     return Table(
         "Means side by side",
         "Deviations from the long-time mean, with the yardsticks by which they are to be read.",
-        tuple(head),
+        ("ensemble", "mean", "deviation", "leading correction", "temporal σ"),
         tuple(rows),
         "Leading correction: ½ Σ ∂²O/∂q∂q (V of the start − V of the ensemble), what the different spreads of the "
-        "charges explain at this size. Temporal σ: standard deviation in time around the long-time mean. A deviation "
-        f"of the size of either is no failure of an ensemble.{'' if c['statistics'] else _EIGENSTATES}",
+        f"charges explain at this size, for fits{' over all sectors' if only and has_sector(c) else ''}. Temporal σ: "
+        "standard deviation in time around the long-time mean. A deviation of the size of either is no failure of an "
+        f"ensemble.{'' if c['statistics'] else _EIGENSTATES}",
     )
 
 
@@ -206,17 +216,10 @@ def _spreads(c: Mapping[str, Any]) -> Table:
 
 def _distances(c: Mapping[str, Any]) -> Table:
     blocks = sorted(c["block_bounds"], key=int)
-    inside = has_sector(c)
-    head = ["ensemble"]
-    for b in blocks:
-        head += [block_label(b)] + ([f"{block_label(b)}, sector"] if inside else [])
-    rows = []
-    for label, whole, part in both(c):
-        cells = [label]
-        for b in blocks:
-            for e in (whole, part) if inside else (whole or part,):
-                cells.append("–" if e is None else distance_cell(e, b))
-        rows.append(tuple(cells))
+    head = ("ensemble", *map(block_label, blocks))
+    rows: list[tuple[str, ...]] = []
+    for e in c["ensembles"]:
+        rows += distance_rows(column_label(e), [(e, b) for b in blocks])
     where = f"Sites of the blocks, counted from 0: {members(c['block_sites'])}."
     lead = (
         "Trace distance of the reduced state from that of the long-time state; 0: the same, 1: told apart by one look."
@@ -224,19 +227,16 @@ def _distances(c: Mapping[str, Any]) -> Table:
     if c["statistics"]:
         said = "Two numbers: proved bounds, where the distance itself would take too long. "
         bounded = any(e["distance_bounds"] for e in c["ensembles"])
-        return Table("States of blocks", lead, tuple(head), tuple(rows) if blocks else (), said * bounded + where)
-    bound = ["bound on the fluctuation in time"]
-    for b in blocks:
-        bound += [rounded(min(c["block_bounds"][b], 1.0), 3)] + (["–"] if inside else [])
-    rows.append(tuple(bound))
+        return Table("States of blocks", lead, head, tuple(rows) if blocks else (), said * bounded + where)
+    rows.append(("bound on the fluctuation in time", *(rounded(min(c["block_bounds"][b], 1.0), 3) for b in blocks)))
     return Table(
         "States of blocks",
         lead,
-        tuple(head),
+        head,
         tuple(rows) if blocks else (),
         "Bound: ½ √(g d²/d_eff), d the dimension of the block, d_eff the effective dimension and g the most pairs of "
         "levels that share one gap; averaged over all times the block is no farther than this from its long-time "
-        f"state. Written as 1 where it says nothing.{_EIGENSTATES} {where}",
+        f"state. Written as 1 where it says nothing. Single eigenstates: median, with quantiles below it. {where}",
     )
 
 
@@ -292,15 +292,17 @@ def _ranking(c: Mapping[str, Any]) -> Table | None:
 def _windows(c: Mapping[str, Any]) -> Table | None:
     if not c["window_scan"]:
         return None
-    keys = ("width", "centre", "mean", "beta", "entropy")
-    rows = tuple(tuple(rounded(w[k], 6) for k in keys) for w in c["window_scan"])
+    keys = ("centre", "mean", "beta", "entropy")
+    rows = tuple((f"width {rounded(w['width'], 6)}", *(rounded(w[k], 6) for k in keys)) for w in c["window_scan"])
+    inside = windows_inside(c)
+    sector = f", inside the sector of the start ({pairs(c['sharp'])})" if inside else ", over all sectors"
     return Table(
         "Energy windows",
-        "Gaussian windows of several widths around the energy of the start.",
-        ("width", "centre", "mean energy", "beta", "entropy"),
+        f"Gaussian windows of several widths around the energy of the start{sector if c['sharp'] else ''}.",
+        ("", "centre", "mean energy", "beta", "entropy"),
         rows,
         "beta = (mean − centre)/width² is the slope of the log of the density of states near the mean energy, not the "
-        "centre.",
+        f"centre.{' Compare it with that of the canonical ensemble in the sector.' if inside else ''}",
     )
 
 
@@ -336,18 +338,20 @@ def _inside(c: Mapping[str, Any]) -> Table | None:
 
 def _scatter(found: Mapping[str, Any]) -> Table | None:
     """Scatter by size, where several sizes were tested."""
-    first = [(c["size"], tested(c)[0]) for c in found["comparisons"] if tested(c)]
+    first = [(c["size"], tested(c)[0]) for c in found["comparisons"] if tested(c) and tested(c)[0]["scatter"]]
     if any(t["of_start"] for _, t in first):
         first = [(n, t) for n, t in first if t["of_start"]]
     names = [n for n in (first[0][1]["scatter"] if first else ()) if all(n in t["scatter"] for _, t in first)]
     if len(first) < 2 or not names:
         return None
+    left = [n for n in found["sizes"] if n not in [size for size, _ in first]]
+    without = f" Not tested: {left_out(found['comparisons'], left)}." if left else ""
     return Table(
         "Scatter of eigenstates by size",
         "Standard deviation of the values of eigenstates about their running mean, inside one sector.",
         ("observable", *(f"L = {n}, {plural(t['size'], 'level')}" for n, t in first)),
         tuple((name, *(rounded(t["scatter"][name], 3) for _, t in first)) for name in names),
-        "Where eigenstates thermalise it falls as the inverse root of the number of levels.",
+        f"Where eigenstates thermalise it falls as the inverse root of the number of levels.{without}",
     )
 
 
@@ -358,16 +362,13 @@ def _sizes(found: Mapping[str, Any]) -> Table | None:
     blocks = sorted(set.intersection(*(set(c["block_bounds"]) for c in every)), key=int)
     if not blocks:
         return None
-    at, rows = blocks[-1], []
+    at, rows = blocks[-1], list[tuple[str, ...]]()
     for label, whole, part in both(every[-1]):
         for sector, there in ((False, whole), (True, part)):
             if there is None:
                 continue
-            cells = []
-            for c in every:
-                e = next((e for e in c["ensembles"] if e["label"] == label and bool(e["sector"]) == sector), None)
-                cells.append("–" if e is None else distance_cell(e, at))
-            rows.append((column_label(there), *cells))
+            same = lambda e, label=label, sector=sector: e["label"] == label and bool(e["sector"]) == sector
+            rows += distance_rows(column_label(there), [(next(filter(same, c["ensembles"]), None), at) for c in every])
     return Table(
         "Sizes",
         f"Trace distance on {block_label(at)}, the largest block that every size has.",

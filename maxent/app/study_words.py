@@ -6,7 +6,8 @@ Must not know: comparisons, HTML.  Computes nothing but differences of the numbe
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import math
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 from maxent.app.study_cells import (
@@ -27,6 +28,11 @@ from maxent.text import listing, plural, table
 
 __all__ = ["Table", "columns_of_numbers", "notes", "summary", "tables", "verdict"]
 
+#: Kinds of ensembles that are fitted to few charges, the thermal ones first.
+FITS = ("canonical", "grand canonical", "generalised")
+#: Distances that differ by less are equal.
+EQUAL = 1e-9
+
 
 def verdict(found: Mapping[str, Any]) -> str:
     """Say which ensemble comes closest at the largest size, what the thermal one misses, and what that supports."""
@@ -36,7 +42,7 @@ def verdict(found: Mapping[str, Any]) -> str:
         said.append(c["ranking"]["suggestion"])
     count = len(found["sizes"])
     if found["statements"]:
-        said.append(f"What {count} sizes support is listed below.")
+        said.append(f"What the {count} sizes support is listed below, each sentence with those that it rests on.")
     else:
         said.append(
             f"{'One size supports' if count == 1 else f'{count} sizes support'} no statement about larger systems: "
@@ -81,7 +87,7 @@ def summary(found: Mapping[str, Any]) -> str:
     yard = ["temporal fluctuation", ""]
     if largest is not None:
         bound = c["block_bounds"][largest]
-        yard.append("" if bound is None else rounded(bound, 3) + " (bound)")
+        yard.append("" if bound is None else f"{rounded(min(bound, 1.0), 3)} (bound)")
     rows.append(yard + [rounded(c["fluctuations"].get(name), 3) for name in names])
     parts = [f"quench: {found['verdict']}", table(rows, head, right=range(1, len(head)))]
     if found["statements"]:
@@ -96,27 +102,60 @@ def summary(found: Mapping[str, Any]) -> str:
 
 
 def _closest(c: Mapping[str, Any]) -> str:
-    best, largest = c["best"], max(c["block_bounds"], key=int, default=None)
-    if not best:
+    """The closest fits over all sectors and inside that of the start, then what is told apart from them."""
+    largest = max(c["block_bounds"], key=int, default=None)
+    if not c["best"]:
         return "No ensemble could be fitted and compared."
     if largest is None:
         return ""  # no blocks: ensembles are compared in the means alone
-    whole = [e for e in c["ensembles"] if not e["sector"]]
-    known = {e["label"]: distance(e, largest) for e in whole}
-    distances = {name: d for name, d in known.items() if d is not None}
-    most = "at most " if any(largest in e["distance_bounds"] for e in whole) else ""
+    known = [e for e in c["ensembles"] if distance(e, largest) is not None]
+    fits = [e for e in known if e["kind"] in FITS]
     where = "one site" if largest == "1" else f"{largest} neighbouring sites"
-    text = (
-        f"At {plural(c['size'], 'site')} the ensemble closest to the long-time state is: {best}. Its trace distance on "
-        f"{where} is {most}{rounded(distances.get(best), 3)}"
-    )
-    thermal = ("canonical", "grand canonical")
-    others = [
-        f"{rounded(d, 3)} ({n})"
-        for n, d in distances.items()
-        if n in thermal and d > distances[best] + 1e-9
-    ]
-    return text + (f", against {listing(others, 'and')}." if others else ".")
+    said: list[str] = []
+    for inside in (False, True):
+        among = [e for e in fits if bool(e["sector"]) == inside]
+        if among:
+            e = _nearest(among, largest)
+            text = f"{e['label']} ({'' if said else f'trace distance on {where} '}{_far(e, largest)}"
+            least = _farthest(e, largest) + EQUAL
+            farther = [x for x in among if x["kind"] in FITS[:2] and _farthest(x, largest) > least]
+            said.append("; ".join([text, *(f"{x['label']} {_far(x, largest)}" for x in farther)]) + ")")
+    head = f"At {plural(c['size'], 'site')} the ensemble closest to the long-time state is"
+    if len(said) == 2:
+        text = f"{head}, over all sectors: {said[0]}; inside the sector of the start, {pairs(c['sharp'])}: {said[1]}."
+    else:
+        text = f"{head}: {said[0]}."
+    windows = [e for e in known if e["kind"] == "microcanonical"]
+    if windows:
+        e = _nearest(windows, largest)
+        text += (
+            " These are the fits; of the windows, whose widths are a choice, the closest is: "
+            f"{column_label(e)} ({_far(e, largest)})."
+        )
+    whole = [e for e in known if e["kind"] == "complete generalised"]
+    if whole:
+        text += (
+            " The complete generalised state, with as many charges as levels, is not among them: it has "
+            f"{_far(whole[0], largest)}."
+        )
+    return text
+
+
+def _nearest(among: Sequence[Any], block: str) -> Any:
+    """Of those that lie equally close the one with fewest charges."""
+    least = min(_farthest(e, block) for e in among)
+    return min((e for e in among if _farthest(e, block) <= least + EQUAL), key=lambda e: len(e["charges"]))
+
+
+def _farthest(e: Mapping[str, Any], block: str) -> float:
+    """Distance of a block or its upper bound; infinite where neither is known."""
+    found = distance(e, block)
+    return math.inf if found is None else found
+
+
+def _far(e: Mapping[str, Any], block: str) -> str:
+    """Distance of a block in a sentence."""
+    return f"{'at most ' if block in e['distance_bounds'] else ''}{rounded(distance(e, block), 3)}"
 
 
 def _missed(c: Mapping[str, Any]) -> str:

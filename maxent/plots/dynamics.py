@@ -63,7 +63,7 @@ def plot_trace(comparison: Comparison, observable: str, *, ax: Axes | None = Non
         first, last = float(times[0]), float(times[-1])
         span = last - first if last > first else 1.0
         edge, slot = last + 0.02 * span, 0.055 * span
-        end = edge + slot * len(names)
+        end = edge + slot * (len(names) + 0.3)
         if spread is not None:
             style: dict[str, Any] = {"color": COLOUR["fill"], "lw": 0, "zorder": 0.3}
             ax.fill_between([first, end], truth - spread, truth + spread, label="± temporal s.d.", **style)
@@ -153,7 +153,7 @@ def plot_eigenstates(comparison: Comparison, observable: str, *, ax: Axes | None
                 energy[marked], value[marked], s=area, fc="none", ec=COLOUR["edge"], lw=0.9, zorder=2,
                 label="area: weight in the start",
             )  # fmt: skip
-        ax.margins(0.05)
+        ax.margins(0.06, 0.09)  # room for the largest circle
         ax.locator_params(nbins=6)
         ax.set_xlabel(name_of_axis(comparison.hamiltonian), parse_math=False)
         ax.set_ylabel(short(name, 26), parse_math=False)
@@ -199,7 +199,9 @@ def _thinned(x: np.ndarray, y: np.ndarray, which: np.ndarray) -> np.ndarray:
     return which[np.sort(first)]
 
 
-def plot_widths(scan: WindowScan | None, *, canonical: float | None = None, ax: Axes | None = None) -> Axes:
+def plot_widths(
+    scan: WindowScan | None, *, canonical: float | None = None, sector: bool = False, ax: Axes | None = None
+) -> Axes:
     """Slope of the entropy in Gaussian windows of several widths.
 
     Parameters
@@ -207,6 +209,8 @@ def plot_widths(scan: WindowScan | None, *, canonical: float | None = None, ax: 
     scan : WindowScan or None
     canonical : float, optional
         beta of the canonical ensemble of the same mean energy in the same sector.
+    sector : bool, optional
+        Whether the windows and the canonical ensemble are those inside the sector of the start.
     ax : Axes, optional
         Where to draw; a new figure without a window by default.
 
@@ -221,13 +225,14 @@ def plot_widths(scan: WindowScan | None, *, canonical: float | None = None, ax: 
         order = np.argsort(widths)
         refused = np.array([width for width, _ in scan.refused])
         every = np.concatenate([widths, refused])
+        where = ", in the sector" if sector else ""
         low, high = every.min() / 1.3, every.max() * 1.3
         ax.set_xscale("log")
         ax.set_xlim(low, high)
         decades(ax.xaxis, low, high)
         if canonical is not None:
-            ax.axhline(canonical, color=COLOUR["mark"], lw=1.0, ls=(0, (4, 2)), label="canonical")
-        ax.plot(widths[order], betas[order], color=COLOUR["edge"], marker="o", ms=4.0, label="Gaussian window")
+            ax.axhline(canonical, color=COLOUR["mark"], lw=1.0, ls=(0, (4, 2)), label=f"canonical{where}")
+        ax.plot(widths[order], betas[order], color=COLOUR["edge"], marker="o", ms=4.0, label=f"Gaussian window{where}")
         shown = np.append(betas, canonical if canonical is not None else betas)
         middle, half = (shown.max() + shown.min()) / 2, np.ptp(shown) / 2
         half = max(half, 0.05 * abs(middle), 1e-3)

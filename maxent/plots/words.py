@@ -216,13 +216,14 @@ def describe_scatter(series: SizeSeries, observable: str) -> str:
     return said
 
 
-def describe_widths(scan: WindowScan | None, *, canonical: float | None = None) -> str:
+def describe_widths(scan: WindowScan | None, *, canonical: float | None = None, sector: bool = False) -> str:
     """Slope of the entropy by width of the window, see `plot_widths`."""
     if scan is None or not scan.windows:
         return "No window is well above the level spacing."
     each = [f"{_n(w.beta)} at width {_n(w.width)}" for w in scan.windows]
-    said = f"beta of the Gaussian window is {listing(each, 'and')}"
-    said += "." if canonical is None else f"; that of the canonical ensemble is {_n(canonical)}."
+    said = f"beta of the Gaussian window{' in the sector of the start' if sector else ''} is {listing(each, 'and')}"
+    there = " there" if sector else ""
+    said += "." if canonical is None else f"; that of the canonical ensemble{there} is {_n(canonical)}."
     if scan.refused:
         narrow = listing([_n(width) for width, _ in scan.refused], "and")
         word = "Width" if len(scan.refused) == 1 else "Widths"

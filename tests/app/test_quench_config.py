@@ -512,7 +512,7 @@ def test_one_size_supports_no_statement(tmp_path, capsys):
     found = json.loads((tmp_path / "run/result.json").read_text())["quench"]
     assert found["comparisons"][0]["sharp"]["field"] == 0 and found["comparisons"][0]["ranking"] is None
     (bound,) = (line.split("(bound)")[0].split()[-1] for line in shown.splitlines() if "(bound)" in line)
-    assert float(bound) == min(found["comparisons"][0]["block_bounds"]["2"], 1)
+    assert float(bound) == pytest.approx(min(found["comparisons"][0]["block_bounds"]["2"], 1), rel=1e-2)
     page = (tmp_path / "run/report.html").read_text()
     assert page.count("canonical, in the sector") > 2 and "What the sizes support" not in page
 

@@ -117,8 +117,8 @@ def test_band_tick_and_bar_are_spread_correction_and_eigenstates(neel):
     spread = neel.fluctuations["zz"]
     assert (band.get_x(), band.get_width()) == pytest.approx((-spread, 2 * spread))
     whiskers = lines(ax, "with leading correction")
-    fitted = [e for e in neel.ensembles if e.corrections]
-    assert len(whiskers) == len(fitted) == 2
+    fitted = sorted((e for e in neel.ensembles if e.corrections), key=lambda e: bool(e.sector))
+    assert len(whiskers) == len(fitted) >= 2
     for whisker, e in zip(whiskers, fitted, strict=True):
         assert whisker[1, 0] == pytest.approx(e.means["zz"] + e.corrections["zz"] - neel.truth["zz"])
     (single,) = [e for e in neel.ensembles if e.ranges]
@@ -245,6 +245,11 @@ def test_widths_are_those_of_the_scan(neel):
     ax = plots.plot_widths(scan, canonical=0.75)
     assert line(ax, "Gaussian window") == pytest.approx(np.stack([scan.widths, scan.betas], axis=1))
     assert set(line(ax, "canonical")[:, 1]) == {0.75} and ax.get_xscale() == "log"
+    inside = plots.plot_widths(scan, canonical=0.75, sector=True)
+    assert key(inside)[:2] == ["canonical, in the sector", "Gaussian window, in the sector"]
+    words = plots.describe_widths(scan, canonical=0.75, sector=True)
+    assert words.startswith("beta of the Gaussian window in the sector of the start is ")
+    assert "; that of the canonical ensemble there is 0.75." in words
     more = WindowScan(scan.windows, ((0.01, "too narrow"),))
     ax = plots.plot_widths(more)
     assert line(ax, "too close to the levels")[:, 0] == pytest.approx([0.01])
@@ -297,7 +302,10 @@ def test_sizes_refuse_what_is_not_there(series):
             plots.plot_sizes(series, what)
         with pytest.raises(ValueError, match=rf"no .*{what}"):
             plots.describe_sizes(series, what)
-    assert said(plots.plot_sizes(series, "zz", sector=True)) == plots.describe_sizes(series, "zz", sector=True)
+    whole = [tuple(e for e in c.ensembles if not e.sector) for c in series.comparisons]
+    pairs = zip(series.comparisons, whole, strict=True)
+    without = SizeSeries(tuple(dataclasses.replace(c, ensembles=kept) for c, kept in pairs))
+    assert said(plots.plot_sizes(without, "zz", sector=True)) == plots.describe_sizes(without, "zz", sector=True)
 
 
 # ---------------------------------------------------------------- scatter
@@ -395,7 +403,7 @@ def test_words_hold_the_numbers(neel):
     n = lambda x: f"{x:.3g}"
     words = plots.describe_ensembles(neel, observables=["zz"])
     whole, inside = neel.deviation("canonical", "zz"), neel.deviation("canonical", "zz", sector=True)
-    assert f"canonical +{n(whole)} (" in words and f"canonical in the sector of the start +{n(inside)};" in words
+    assert f"canonical +{n(whole)} (" in words and f"canonical in the sector of the start +{n(inside)}" in words
     assert f"temporal standard deviation {n(neel.fluctuations['zz'])}" in words
     words = plots.describe_distances(neel)
     assert n(neel.ensemble("canonical").distances[2]) in words and f"{n(neel.block_bounds[1])} for 1 site" in words
