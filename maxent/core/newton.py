@@ -132,10 +132,11 @@ def at_floor(at: Iterate) -> Any:
     return at.residual <= at.evaluation.rounding
 
 
-def settle(evaluate: Callable[[Any], Evaluation], at: Iterate) -> Iterate:
+def settle(evaluate: Callable[..., Evaluation], at: Iterate) -> Iterate:
     """The best of a few more steps at the rounding floor, where the exponent is so large that the floor is high.
 
-    Host only.  Near a boundary ``eps |lam.A|`` exceeds 1e-12 and single residuals scatter by a decade.
+    Host only.  Near a boundary ``eps |lam.A|`` exceeds 1e-12 and single residuals scatter by a decade.  Values alone
+    tell whether a step is worth its second derivatives.
     """
     best = at
     failed = 0
@@ -145,8 +146,8 @@ def settle(evaluate: Callable[[Any], Evaluation], at: Iterate) -> Iterate:
         # a shortened step leaves the same rounding error elsewhere: 1, 1/2, 1/4, ... of the Newton step
         s, _ = trust_step(-best.evaluation.values, floored, axes, trust)
         lam = best.lam + s * 0.5**failed
-        new = evaluate(lam)
-        if norm(new.values) < 0.9 * best.residual:
+        better = norm(evaluate(lam, 1).values) < 0.9 * best.residual
+        if better and norm((new := evaluate(lam)).values) < 0.9 * best.residual:
             best, failed = Iterate(lam, trust, new, *curvatures(new), np.asarray(0)), 0
         else:
             failed += 1
