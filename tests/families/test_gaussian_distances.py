@@ -290,3 +290,16 @@ def test_bosons_with_the_same_nearly_pure_modes(rng, size):
     faint = relative_entropy(BosonState.of((0.5 + 1e-8) * squeezed), BosonState.of(0.5 * squeezed))
     assert 0 < faint < 1e-6
     assert relative_entropy(BosonState.of(squeezed), BosonState.of(0.5 * squeezed)) == np.inf
+
+
+@pytest.mark.parametrize("size", [0.0, 0.3, 1.0, 2.0])
+def test_bosons_of_many_common_modes(rng, size):
+    """F of geometric distributions is ``prod 1/(sqrt((1 + a)(1 + b)) - sqrt(a b))``."""
+    for n in (2, 4, 7):
+        frame, means = boson_frame(rng, n, size), [10 ** -rng.uniform(-1, 17, n) for _ in range(2)]
+        for a, b in (means, (means[0], means[0] * (1 + 1e-6))):
+            pair = [(frame * np.tile(0.5 + m, 2)) @ frame.T for m in (a, b)]
+            low, high = root_fidelity_bounds(*(BosonState.of(0.5 * (v + v.T)) for v in pair))
+            exact = np.prod(1 / (np.sqrt((1 + a) * (1 + b)) - np.sqrt(a * b)))
+            assert low - 1e-14 <= exact <= high + 1e-14
+            assert high - low < 1e-5 * np.sqrt(np.linalg.cond(pair[0] + pair[1]))
