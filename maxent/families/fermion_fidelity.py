@@ -124,7 +124,7 @@ def _log_determinant(factors: np.ndarray, vectors: np.ndarray) -> float:
         inverse = np.abs(np.linalg.inv(matrix))
     except np.linalg.LinAlgError:
         return float("inf")
-    unsure = 4 * EPS * np.sqrt(len(matrix)) * (factors + np.abs(matrix).max(axis=0))
+    unsure = 4 * EPS * np.sqrt(len(matrix)) * (factors + np.abs(matrix).max(axis=0, initial=0.0))
     return float(np.linalg.slogdet(matrix)[1] + np.sum(inverse.T * unsure))
 
 

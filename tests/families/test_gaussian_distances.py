@@ -303,3 +303,9 @@ def test_bosons_of_many_common_modes(rng, size):
             exact = np.prod(1 / (np.sqrt((1 + a) * (1 + b)) - np.sqrt(a * b)))
             assert low - 1e-14 <= exact <= high + 1e-14
             assert high - low < 1e-5 * np.sqrt(np.linalg.cond(pair[0] + pair[1]))
+
+
+@pytest.mark.parametrize("empty", [FermionState(np.zeros((0, 0)), 0.0), BosonState(np.zeros((0, 0)), np.zeros(0), 0.0)])
+def test_states_of_no_modes_are_equal(empty):
+    assert root_fidelity(empty, empty) == 1 and relative_entropy(empty, empty) == 0
+    assert trace_distance_bounds(empty, empty) == (0, pytest.approx(0, abs=1e-15))
