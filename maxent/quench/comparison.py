@@ -20,6 +20,7 @@ from maxent.quench.averages import time_averages
 from maxent.quench.blocks import block_sites
 from maxent.quench.columns import Comparison, Ensemble
 from maxent.quench.conservation import check_conservation, require_conserved
+from maxent.quench.cutoffs import cutoff_notes
 from maxent.quench.dephasing import dephase
 from maxent.quench.distances import nested_blocks
 from maxent.quench.eigenstate_tests import eigenstate_tests
@@ -141,6 +142,7 @@ def compare(
         micro = microcanonical_columns(setting, width=width)
     with clock("eigenstate tests"):
         tests = eigenstate_tests(setting)
+    notes += cutoff_notes(setting, fitted, tests)
     with clock("time averages"):
         averages = time_averages(setting, truth, times=times, speed=v, resolution=resolution)
     bounds = {
