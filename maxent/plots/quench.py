@@ -303,7 +303,7 @@ def plot_sizes(series: SizeSeries, what: str | int, *, sector: bool = False, ax:
                 if here.any():
                     # of ensembles that agree the later ones lie inside the marks and lines of the earlier ones
                     style = ensemble_mark(i, sector=sector) | {"ls": _DASHES[sequence]}
-                    style |= {"ms": max(7.0 - 0.8 * i, 3.0), "lw": max(2.0 - 0.6 * i, 0.6)}
+                    style |= {"ms": max(7.5 - 1.7 * i, 3.0), "lw": max(2.0 - 0.6 * i, 0.6)}
                     ax.plot(1 / sizes[here], values[here], label=f"_{label}: {sequence}", clip_on=False, **style)
                     drawn |= {name, sequence}
         if not drawn:
