@@ -9,7 +9,8 @@ Floor: families.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from abc import ABC, abstractmethod
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property, lru_cache
 from typing import Any, ClassVar
@@ -17,11 +18,14 @@ from typing import Any, ClassVar
 import numpy as np
 
 from maxent.families.majoranas import correlations, covariance, to_majoranas
-from maxent.families.pfaffians import pauli_word, word_mean
+from maxent.families.pfaffians import log_word, pauli_word
 from maxent.families.quadratic import Quadratic, quadratic
 from maxent.memory import require_memory
 
-__all__ = ["BosonState", "FermionState", "NumberState", "binary_entropy", "quadratic_of", "symplectic_form"]
+__all__ = [
+    "BosonState", "FermionState", "NumberState", "WordState", "binary_entropy", "checked_letters", "checked_modes",
+    "quadratic_of", "symplectic_form",
+]  # fmt: skip
 
 #: What a covariance matrix may miss its bounds by.
 ROUNDING = 1e-10
@@ -53,6 +57,18 @@ def checked_modes(modes: Sequence[int], n: int) -> list[int]:
     return kept
 
 
+def checked_letters(letters: Mapping[int, str], sites: int) -> Mapping[int, str]:
+    """Letters of a word by sites out of 0..sites-1.
+
+    Raises
+    ------
+    ValueError
+    """
+    if any(not 0 <= s < sites for s in letters):
+        raise ValueError(f"sites must lie in 0..{sites - 1}, not {sorted(letters)}")
+    return letters
+
+
 def quadratic_of(operator: Any, statistics: str, modes: int) -> Quadratic:
     """A quadratic operator of so many modes, given as charges are.
 
@@ -64,6 +80,26 @@ def quadratic_of(operator: Any, statistics: str, modes: int) -> Quadratic:
     if q.modes != modes:
         raise ValueError(f"the operator has {q.modes} modes, the state {modes}")
     return q
+
+
+def _real_square(covariance: Any, statistics: str) -> np.ndarray:
+    """A covariance as a matrix of finite real numbers with 2n rows and columns."""
+    g = np.asarray(covariance)
+    if g.ndim != 2 or g.shape[0] != g.shape[1] or g.shape[0] % 2:
+        raise ValueError(f"a covariance of {statistics} is a (2n, 2n) matrix, not of shape {g.shape}")
+    bad = np.argwhere(~np.isfinite(g))
+    if len(bad):
+        (a, b), verb = bad[0].tolist(), "is" if len(bad) == 1 else "are"
+        raise ValueError(
+            f"a covariance of {statistics} is finite: {len(bad)} of {g.size} entries {verb} not, "
+            f"first [{a}, {b}] = {g[a, b]}"
+        )
+    if np.iscomplexobj(g):
+        raise ValueError(
+            f"a covariance of {statistics} is real: imaginary parts reach {np.abs(g.imag).max(initial=0.0):.3g}, "
+            f"dtype {g.dtype}"
+        )
+    return g
 
 
 class NumberState:
@@ -84,8 +120,29 @@ class NumberState:
         return np.real(np.diag(self.number)).copy()
 
 
+class WordState(ABC):
+    """What states have in common that know the means of products of Pauli matrices."""
+
+    @abstractmethod
+    def log_word(self, letters: Mapping[int, str]) -> tuple[float, float]:
+        """Sign and logarithm of the size of the mean, which may be too small for a number."""
+
+    def mean_word(self, letters: Mapping[int, str]) -> float:
+        """Expectation value of a product of Pauli matrices such as ``{0: "X", 3: "X"}``; 0 if it changes the parity.
+
+        Sites are modes under the Jordan-Wigner map, with ``Z = 1 - 2n``.
+
+        Raises
+        ------
+        ValueError
+            A site that does not exist, or a letter that is none.
+        """
+        sign, size = self.log_word(letters)
+        return sign * float(np.exp(size))
+
+
 @dataclass(frozen=True)
-class FermionState(NumberState):
+class FermionState(NumberState, WordState):
     """A Gaussian state of n fermion modes.
 
     Attributes
@@ -111,11 +168,9 @@ class FermionState(NumberState):
         ValueError
             Not real antisymmetric of even size, or ``|iG| > 1``: no state has it.
         """
-        g = np.asarray(covariance)
-        if g.ndim != 2 or g.shape[0] != g.shape[1] or g.shape[0] % 2 or not np.all(np.isfinite(g)):
-            raise ValueError(f"a covariance of fermions is a finite (2n, 2n) matrix, not of shape {g.shape}")
+        g = _real_square(covariance, "fermions")
         off = float(np.abs(g + g.T).max(initial=0.0))
-        if np.iscomplexobj(g) or off > ROUNDING:
+        if off > ROUNDING:
             raise ValueError(f"a covariance of fermions is real and antisymmetric: |G + G^T| is {off:.1e}")
         g = 0.5 * (g - g.T)
         largest = float(np.abs(np.linalg.eigvalsh(1j * g)).max(initial=0.0))
@@ -180,11 +235,19 @@ class FermionState(NumberState):
         a, half = to_majoranas(*q.matrices())
         return float(0.25 * np.sum(a * self.covariance) + half + q.constant)
 
-    def mean_word(self, letters: dict[int, str]) -> float:
-        """Expectation value of a product of Pauli matrices under the Jordan-Wigner map (1 - 2n = Z); 0 if odd."""
-        if any(not 0 <= s < self.modes for s in letters):
-            raise ValueError(f"sites must lie in 0..{self.modes - 1}, not {sorted(letters)}")
-        return float(word_mean(self.covariance, pauli_word(letters)).real)
+    def log_word(self, letters: Mapping[int, str]) -> tuple[float, float]:
+        """Sign (1, -1 or 0) and logarithm of the size of the mean of a product of Pauli matrices.
+
+        Right as far as entries of the covariance are, which are rounded to about 1e-16.  That leaves all digits of
+        ``X_0 X_r`` at any distance where neighbours align (the transverse field below the coupling); where the field
+        wins, correlations more than about 1e-16 smaller than the determinant's entries allow are lost in rounding.
+
+        Raises
+        ------
+        ValueError
+            A site that does not exist, or a letter that is none.
+        """
+        return log_word(self.covariance, pauli_word(checked_letters(letters, self.modes)))
 
     def reduced(self, modes: Sequence[int]) -> FermionState:
         """The state of some modes, in the order given, the others traced out."""
@@ -280,11 +343,9 @@ class BosonState(NumberState):
         ValueError
             Not real symmetric of even size, or below the uncertainty relation ``V + i Omega/2 >= 0``.
         """
-        v = np.asarray(covariance)
-        if v.ndim != 2 or v.shape[0] != v.shape[1] or v.shape[0] % 2 or not np.all(np.isfinite(v)):
-            raise ValueError(f"a covariance of bosons is a finite (2n, 2n) matrix, not of shape {v.shape}")
+        v = _real_square(covariance, "bosons")
         off = float(np.abs(v - v.T).max(initial=0.0))
-        if np.iscomplexobj(v) or off > ROUNDING * max(1.0, np.abs(v).max(initial=0.0)):
+        if off > ROUNDING * max(1.0, np.abs(v).max(initial=0.0)):
             raise ValueError(f"a covariance of bosons is real and symmetric: |V - V^T| is {off:.1e}")
         v, n = 0.5 * (v + v.T), len(v) // 2
         r = np.zeros(2 * n) if displacement is None else np.asarray(displacement, float)

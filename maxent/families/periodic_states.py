@@ -5,22 +5,23 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, ClassVar
 
 import numpy as np
 
-from maxent.families.gaussian_states import BosonState, FermionState, checked_modes
+from maxent.families.gaussian_states import BosonState, FermionState, WordState, checked_letters, checked_modes
 from maxent.families.majoranas import covariance
 from maxent.families.periodic import Periodic
+from maxent.families.pfaffians import pauli_word
 from maxent.families.quadratic import quadratic
 
 __all__ = ["PeriodicState"]
 
 
 @dataclass(frozen=True, eq=False)
-class PeriodicState:
+class PeriodicState(WordState):
     """A state that is the same in every cell of a ring.
 
     Attributes
@@ -97,6 +98,25 @@ class PeriodicState:
         sign = np.where(self.like.antiperiodic & (turns % 2 == 1), -1.0, 1.0)
         pick = lambda table: sign * table[r, a[:, None], a[None, :]]
         return pick(self.number_at), pick(self.pair_at)
+
+    def log_word(self, letters: Mapping[int, str]) -> tuple[float, float]:
+        """Sign (1, -1 or 0) and logarithm of the size of the mean of a product of Pauli matrices on modes.
+
+        Strings run through the modes in their order, from the first letter to the last one, and never around the ring.
+
+        Raises
+        ------
+        ValueError
+            A site that does not exist, a letter that is none, or bosons.
+        """
+        if self.statistics != "fermions":
+            raise ValueError("products of Pauli matrices have means in states of fermions, not of bosons")
+        if len(pauli_word(checked_letters(letters, self.modes))[1]) % 2:
+            return 0.0, -np.inf
+        first, last = min(letters, default=0), max(letters, default=-1)
+        block = self.reduced(range(first, last + 1))
+        assert isinstance(block, FermionState)
+        return block.log_word({site - first: letter for site, letter in letters.items()})
 
     def reduced(self, modes: Sequence[int]) -> FermionState | BosonState:
         """The state of some modes, in the order given; mode a of cell x is ``x p + a``."""

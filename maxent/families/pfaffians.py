@@ -8,14 +8,17 @@ lattices.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 
 import numpy as np
 
-__all__ = ["Word", "complement", "log_pfaffian", "parity_word", "pauli_word", "word_mean"]
+__all__ = ["Word", "added", "complement", "log_pfaffian", "log_word", "parity_word", "pauli_word", "word_mean"]
 
 #: A phase and the Majorana operators it multiplies, in ascending order.
 Word = tuple[complex, tuple[int, ...]]
+
+#: ``(-i)^m`` by m modulo 4, exact where a power is not.
+TURNS = (1 + 0j, -1j, -1 + 0j, 1j)
 
 
 def log_pfaffian(matrix: np.ndarray) -> tuple[complex, float]:
@@ -90,7 +93,7 @@ def pauli_word(letters: Mapping[int, str]) -> Word:
 
 def parity_word(sites: int) -> Word:
     """The parity ``prod_j Z_j`` of all sites."""
-    return (-1j) ** sites, tuple(range(2 * sites))
+    return TURNS[sites % 4], tuple(range(2 * sites))
 
 
 def complement(word: Word, sites: int) -> Word:
@@ -104,8 +107,32 @@ def complement(word: Word, sites: int) -> Word:
 
 def word_mean(covariance: np.ndarray, word: Word) -> complex:
     """``<phase g_word>`` in the Gaussian state of a covariance G (2n, 2n)."""
+    turn, size = _wick(covariance, word)
+    return complex(turn * np.exp(size))
+
+
+def log_word(covariance: np.ndarray, word: Word) -> tuple[float, float]:
+    """Sign and logarithm of the size of ``<phase g_word>`` of a Hermitian word, where the mean may be below 1e-308.
+
+    Returns
+    -------
+    sign : {1.0, -1.0, 0.0}
+    log_size : float
+        -inf where the mean is 0.
+    """
+    turn, size = _wick(covariance, word)
+    return float(turn.real), size
+
+
+def _wick(covariance: np.ndarray, word: Word) -> tuple[complex, float]:
     phase, letters = word
-    if len(letters) % 2:
-        return 0.0
     sign, size = log_pfaffian(covariance[np.ix_(letters, letters)])
-    return complex(phase * (-1j) ** (len(letters) // 2) * sign * np.exp(size))
+    return complex(phase * TURNS[len(letters) // 2 % 4] * sign), size
+
+
+def added(terms: Iterable[tuple[float, float]]) -> tuple[float, float]:
+    """Sign and logarithm of the size of ``sum factor exp(log)`` of pairs (factor, log)."""
+    kept = [(factor, log) for factor, log in terms if factor and log > -np.inf]
+    top = max((log for _, log in kept), default=0.0)
+    total = float(sum(factor * np.exp(log - top) for factor, log in kept))
+    return (float(np.sign(total)), top + float(np.log(abs(total)))) if total else (0.0, -np.inf)

@@ -15,8 +15,8 @@ from typing import Any, ClassVar
 
 import numpy as np
 
-from maxent.families.gaussian_states import checked_modes
-from maxent.families.pfaffians import Word, complement, log_pfaffian, parity_word, pauli_word
+from maxent.families.gaussian_states import WordState, checked_letters, checked_modes
+from maxent.families.pfaffians import Word, added, complement, log_word, parity_word, pauli_word, word_mean
 
 __all__ = ["RingState", "SectorState"]
 
@@ -88,32 +88,24 @@ class SectorState:
             filling[order[j]] = 1.0
             yield float(share[j]), filling, -1
 
-    def mean_word(self, word: Word, sites: int) -> float:
-        """Mean of a word of Majorana operators."""
+    def log_word(self, word: Word, sites: int) -> tuple[float, float]:
+        """Sign and logarithm of the size of the mean of a Hermitian word of Majorana operators."""
         if not self.parity:
-            return float(self._plain(word, -np.tanh(0.5 * self.levels)).real)
-        phase, letters = parity_word(sites)
-        other = complement(word, sites)
-        total = 0.0
-        for share, filling, sign in self.terms():
-            if not sign:
-                total += share * self._plain(word, filling).real
-                continue
-            whole = self._plain((phase, tuple(letters)), filling).real
-            top = self._plain(word, filling) + self.parity * self._plain(other, filling)
-            total += share * float(top.real / (1 + self.parity * whole))
-        return total
-
-    def _plain(self, word: Word, filling: np.ndarray) -> complex:
-        at = list(word[1])
-        if len(at) % 2:
-            return 0j
-        sign, size = log_pfaffian(self.covariance(filling)[np.ix_(at, at)])
-        return complex(word[0] * (-1j) ** (len(at) // 2) * sign * np.exp(size))
+            return log_word(self.covariance(-np.tanh(0.5 * self.levels)), word)
+        parts = []
+        for share, filling, projected in self.terms():
+            g = self.covariance(filling)
+            sign, size = log_word(g, word)
+            if projected:
+                share = share / (1 + self.parity * word_mean(g, parity_word(sites)).real)
+                other, other_size = log_word(g, complement(word, sites))
+                parts.append((share * self.parity * other, other_size))
+            parts.append((share * sign, size))
+        return added(parts)
 
 
 @dataclass(frozen=True, eq=False)
-class RingState:
+class RingState(WordState):
     """A state of L spins, diagonal in the parity.
 
     Attributes
@@ -144,20 +136,26 @@ class RingState:
             return float(sum(c * self.mean_word(letters) for c, letters in terms))
         return float(total)
 
-    def mean_word(self, letters: Mapping[int, str]) -> float:
-        """Expectation value of a product of Pauli matrices; 0 where it changes the parity.
+    def log_word(self, letters: Mapping[int, str]) -> tuple[float, float]:
+        """Sign and logarithm of the size of the mean of a product of Pauli matrices.
+
+        Returns
+        -------
+        sign : {1.0, -1.0, 0.0}
+            0 where the word changes the parity.
+        log_size : float
+            -inf where the mean is 0.
 
         Raises
         ------
         ValueError
             A site that does not exist, or a letter that is none.
         """
-        if any(not 0 <= x < self.sites for x in letters):
-            raise ValueError(f"sites must lie in 0..{self.sites - 1}, not {sorted(letters)}")
-        word = pauli_word(letters)
+        word = pauli_word(checked_letters(letters, self.sites))
         if len(word[1]) % 2:
-            return 0.0
-        return float(sum(s.weight * s.mean_word(word, self.sites) for s in self.sectors))
+            return 0.0, -np.inf
+        means = [(s.weight, *s.log_word(word, self.sites)) for s in self.sectors]
+        return added((weight * sign, size) for weight, sign, size in means)
 
     def reduced(self, sites: Sequence[int]) -> np.ndarray:
         """Density matrix (2^l, 2^l) of some spins, the others traced out; the first one is the slowest index.

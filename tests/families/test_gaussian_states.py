@@ -160,6 +160,16 @@ def test_thermal_and_squeezed_modes():
         (lambda: FermionState.of(np.array([[0, 1.2], [-1.2, 0]])), "iG. reaches 1.2"),
         (lambda: FermionState.of(np.eye(2)), "real and antisymmetric"),
         (lambda: FermionState.of(np.zeros((3, 3))), "not of shape"),
+        (
+            lambda: FermionState.of(np.full((2, 2), np.nan)),
+            r"fermions is finite: 4 of 4 entries are not, first \[0, 0\] = nan",
+        ),
+        (lambda: FermionState.of(1j * np.ones((2, 2))), "fermions is real: imaginary parts reach 1, dtype complex128"),
+        (lambda: BosonState.of(1j * np.eye(2)), "bosons is real: imaginary parts reach 1, dtype complex128"),
+        (
+            lambda: BosonState.of(np.diag([1.0, np.inf])),
+            r"bosons is finite: 1 of 4 entries is not, first \[1, 1\] = inf",
+        ),
         (lambda: FermionState.pattern([1.3, 0]), "occupations must lie in 0..1, these reach from 0 to 1.3"),
         (lambda: FermionState.of_correlations(np.array([[0, 1.0], [0, 0]])), "must be Hermitian"),
         (lambda: BosonState.of(0.3 * np.eye(2)), "eigenvalue -0.2, below the uncertainty"),
