@@ -118,6 +118,11 @@ class IndexMap:
         data = np.ones(self.dimension) if self.phases is None else self.phases
         return sp.csr_array((data, (self.images, np.arange(self.dimension))), shape=(self.dimension,) * 2)
 
+    def after(self, first: IndexMap, *, name: str) -> IndexMap:
+        """The map that does `first` and then this one."""
+        phases = None if self.phases is None and first.phases is None else _weights(self, first)
+        return IndexMap(name, self.images[first.images], phases, self.conjugating != first.conjugating)
+
     def commutes_with(self, other: IndexMap) -> bool:
         """Whether both orders of the two maps do the same to every state."""
         if not np.array_equal(self.images[other.images], other.images[self.images]):

@@ -10,7 +10,7 @@ from collections.abc import Sequence
 
 from maxent.lattice.sites import Sites
 
-__all__ = ["block_sites"]
+__all__ = ["block_sites", "largest_distance"]
 
 
 def block_sites(sites: Sites, sizes: Sequence[int]) -> dict[int, tuple[int, ...]]:
@@ -41,17 +41,36 @@ def block_sites(sites: Sites, sizes: Sequence[int]) -> dict[int, tuple[int, ...]
     """
     first = {b: 0 if sites.is_ring else (sites.size - b) // 2 for b in sizes}
     rows = {b: tuple(range(first[b], first[b] + b)) for b in sizes}
-    joined: dict[int, set[int]] = {s: set() for s in range(sites.size)}
-    for pairs in sites.bonds.values():
-        for a, b in pairs:
-            joined[a].add(b)
-            joined[b].add(a)
+    joined = _joined(sites)
     longest = max(rows.values(), key=len, default=())
     if not any(joined.values()) or all(b in joined[a] for a, b in zip(longest, longest[1:], strict=False)):
         return rows
     reached = [_breadth_first(joined, s) for s in range(sites.size)]
     order = min(reached, key=lambda steps: (-len(steps), max(steps.values())))
     return {b: tuple(order)[:b] for b in sizes if b <= len(order)}
+
+
+def largest_distance(sites: Sites) -> int:
+    """Number of bonds on the shortest way between the two sites that are farthest apart, of those that bonds connect.
+
+    Examples
+    --------
+    >>> from maxent.lattice import Lattice
+    >>> largest_distance(Lattice.grid(3, 2))
+    3
+    """
+    joined = _joined(sites)
+    return max(max(_breadth_first(joined, s).values()) for s in range(sites.size))
+
+
+def _joined(sites: Sites) -> dict[int, set[int]]:
+    """Neighbours of every site."""
+    joined: dict[int, set[int]] = {s: set() for s in range(sites.size)}
+    for pairs in sites.bonds.values():
+        for a, b in pairs:
+            joined[a].add(b)
+            joined[b].add(a)
+    return joined
 
 
 def _breadth_first(joined: dict[int, set[int]], start: int) -> dict[int, int]:

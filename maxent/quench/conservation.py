@@ -3,8 +3,9 @@
     defect of Q = |[H, Q]|_F / ((E_max - E_min) |Q_0|_F),       Q_0 = Q without its trace,
 
 a number from 0 (conserved) to 1.  Where H and Q are sums of words with exact coefficients, the commutator is formed
-exactly and an empty one is a proof.  Charges may commute with H and not with one another: their states are stationary
-all the same.  Floor: quench.  Must not know how a state was fitted.
+exactly and an empty one is a proof.  A cut-off of bosons truncates products of words: there the matrices decide, which
+dynamics and ensembles use.  Charges may commute with H and not with one another: their states are stationary all the
+same.  Floor: quench.  Must not know how a state was fitted.
 """
 
 from __future__ import annotations
@@ -18,6 +19,7 @@ import numpy as np
 import scipy.sparse as sp
 
 from maxent.families.density import MatricesState
+from maxent.lattice.particles import BosonOperators
 from maxent.lattice.terms import OperatorSum
 from maxent.quench.dephasing import Dephased
 from maxent.quench.operators import as_matrix, extremes, frobenius, traceless_norm, without_dirt
@@ -40,7 +42,7 @@ class Conserved:
     defect : float
         ``|[H, Q]|_F / ((E_max - E_min) |Q_0|_F)``, from 0 to 1.
     exact : bool
-        The commutator was formed with exact coefficients: a defect of 0 is then proved.
+        The commutator was formed with exact coefficients: a defect of 0 is then proved.  Never with a cut-off.
     conserved : bool
         Whether the defect is no more than rounding; coefficients given as decimals leave some, too.
     value, accuracy : float or None
@@ -304,7 +306,8 @@ def state_defect(hamiltonian: Any, state: MatricesState, *, width: float | None 
 
 def _commutator(a: Any, b: Any, first: Any, second: Any) -> tuple[float, bool]:
     """Frobenius norm of a commutator, and whether it was formed exactly; `first`, `second` are the matrices."""
-    if isinstance(a, OperatorSum) and isinstance(b, OperatorSum) and a.sites == b.sites:
+    words = isinstance(a, OperatorSum) and isinstance(b, OperatorSum) and a.sites == b.sites
+    if words and not any(isinstance(slot, BosonOperators) for slot in a.sites.slots):
         found = a.commutator(b)
         return (frobenius(found.matrix()) if found.words else 0.0), True
     first, second = sp.csr_array(first), sp.csr_array(second)

@@ -8,7 +8,7 @@ reflection at momentum zero, a spin flip at magnetisation zero) are resolved fir
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -27,6 +27,8 @@ from maxent.quench.eigenstates import (
 from maxent.quench.levels import distinct
 from maxent.quench.setting import Setting
 from maxent.quench.spacings import REFERENCES, Reference, SpacingRatio, spacing_ratio
+from maxent.quench.spectrum import Spectrum
+from maxent.quench.start_sectors import parity_map
 from maxent.text import listing
 
 __all__ = ["EigenstateTests", "SectorTest", "eigenstate_tests"]
@@ -115,9 +117,10 @@ class EigenstateTests:
 
 @dataclass(frozen=True, eq=False)
 class _Part:
-    """Levels of one sector: energies (n,), vectors (k, n) in the states `index` of the basis, weight of the start."""
+    """Levels of one sector: energies (n,), vectors (k, n) in the states `index` of a spectrum, weight of the start."""
 
     sector: dict[str, float]
+    spectrum: Spectrum
     index: np.ndarray
     energies: np.ndarray
     vectors: np.ndarray
@@ -129,14 +132,10 @@ def eigenstate_tests(setting: Setting) -> EigenstateTests:
 
     What could not be tested is told in the notes of the setting.
     """
-    blocks = setting.spectrum.blocks
-    share = [float(setting.basis_amplitudes[block.index].sum()) for block in blocks]
-    order = sorted(range(len(blocks)), key=lambda i: -blocks[i].size)
-    mine = [i for i in order if share[i] > NOTHING]
-    chosen = _largest(setting, mine, 1, lambda p: p.weight > NOTHING)
+    chosen = _largest(setting, setting.matching, 1)
     if not chosen:
-        most = blocks[mine[0]].size if mine else 0
-        chosen = _largest(setting, order, OTHERS, lambda p: True)
+        most = max(block.size for block in setting.matching.blocks)
+        chosen = _largest(setting, setting.spectrum, OTHERS)
         text = f"Eigenstate tests: the sectors of the start have fewer than {LEAST} levels (at most {most})"
         if chosen:
             names = listing([f"{_name(p.sector)} with {len(p.energies)}" for p in chosen], "and")
@@ -146,14 +145,15 @@ def eigenstate_tests(setting: Setting) -> EigenstateTests:
     return EigenstateTests(tuple(_test(setting, p) for p in chosen), REFERENCES)
 
 
-def _largest(setting: Setting, blocks: list[int], count: int, keep: Callable[[_Part], bool]) -> list[_Part]:
-    """The largest sectors with enough levels, among blocks in descending size."""
+def _largest(setting: Setting, spectrum: Spectrum, count: int) -> list[_Part]:
+    """The largest sectors of a spectrum with enough levels; of that of the start, those in which it has weight."""
     found: list[_Part] = []
-    for i in blocks:
-        size = setting.spectrum.blocks[i].size
-        if size < LEAST or (len(found) == count and size <= len(found[-1].energies)):
+    blocks = spectrum.blocks
+    for i in sorted(range(len(blocks)), key=lambda i: -blocks[i].size):
+        if blocks[i].size < LEAST or (len(found) == count and blocks[i].size <= len(found[-1].energies)):
             break
-        found += [p for p in _parts(setting, i) if len(p.energies) >= LEAST and keep(p)]
+        parts = [p for p in _parts(setting, spectrum, i) if len(p.energies) >= LEAST]
+        found += [p for p in parts if p.weight > NOTHING or spectrum is not setting.matching]
         found = sorted(found, key=lambda p: -len(p.energies))[:count]
     return found
 
@@ -170,8 +170,8 @@ def _test(setting: Setting, part: _Part) -> SectorTest:
     scatter: dict[str, Scatter] = {}
     distances: dict[int, Scatter] = {}
     try:
-        for name, q in setting.charges.conjugated.items():
-            inside = q[part.index][:, part.index]
+        for name, q in setting.charges.observables.items():
+            inside = part.spectrum.conjugated(q, states=part.index)
             scatter[name] = eigenstate_scatter(e, eigenstate_means(part.vectors, inside))
         for sites, states in _block_states(setting, part).items():
             distances[len(sites)] = block_scatter(e, states)
@@ -184,7 +184,7 @@ def _test(setting: Setting, part: _Part) -> SectorTest:
 
 def _block_states(setting: Setting, part: _Part) -> dict[tuple[int, ...], np.ndarray]:
     """Reduced states (n, k, k) of every eigenvector on every block."""
-    spectrum, count = setting.spectrum, len(part.energies)
+    spectrum, count = part.spectrum, len(part.energies)
     blocks = [sites for sites, rho in setting.reference.items() if 16 * count * len(rho) ** 2 <= ROOM]
     if not blocks or spectrum.dims is None:
         return {}
@@ -196,17 +196,17 @@ def _block_states(setting: Setting, part: _Part) -> dict[tuple[int, ...], np.nda
     return nested_states(states, spectrum.dims, largest, blocks)
 
 
-def _parts(setting: Setting, number: int) -> Iterator[_Part]:
-    """The sectors that a block of the spectrum falls into when the symmetries that keep it are resolved."""
-    spectrum, block = setting.spectrum, setting.spectrum.blocks[number]
+def _parts(setting: Setting, spectrum: Spectrum, number: int) -> Iterator[_Part]:
+    """The sectors that a block of a spectrum falls into when the symmetries that keep it are resolved."""
+    block = spectrum.blocks[number]
     vectors, energies = spectrum.block_vectors(number), spectrum.energies[block.levels]
-    sector = _labels(setting, block.index)
-    share = setting.basis_amplitudes[block.index]
-    weigh = lambda v: float(np.sum(np.abs(v.conj().T @ setting.inside[block.index]) ** 2 @ setting.start.weights))
-    found, constant = _inner_symmetries(setting, block.index)
+    sector = _labels(setting, spectrum, block.index)
+    start = setting.inside(spectrum)[block.index]
+    weigh = lambda v: float(np.sum(np.abs(v.conj().T @ start) ** 2 @ setting.start.weights))
+    found, constant = _inner_symmetries(setting, spectrum, block.index)
     sector = {**sector, **constant}
     if not found:
-        yield _Part(sector, block.index, energies, vectors, float(share.sum()))
+        yield _Part(sector, spectrum, block.index, energies, vectors, weigh(vectors))
         return
     code = sum(2**k * g for k, g in enumerate(found.values()))
     vectors, values = _resolved(vectors, energies, code)
@@ -216,24 +216,27 @@ def _parts(setting: Setting, number: int) -> Iterator[_Part]:
         which = np.flatnonzero(bits == label)
         signs = {name: 2.0 * (int(label) >> k & 1) - 1.0 for k, name in enumerate(found)}
         v = vectors[:, which]
-        yield _Part({**sector, **signs}, block.index, energies[which], v, weigh(v))
+        yield _Part({**sector, **signs}, spectrum, block.index, energies[which], v, weigh(v))
 
 
-def _inner_symmetries(setting: Setting, index: np.ndarray) -> tuple[dict[str, Any], dict[str, float]]:
+def _inner_symmetries(
+    setting: Setting, spectrum: Spectrum, index: np.ndarray
+) -> tuple[dict[str, Any], dict[str, float]]:
     """Involutions that commute with the Hamiltonian and map a block onto itself.
 
     Returns those that split it, as matrices (n, n) that commute, and the sign of those that are one number on it.
     """
-    spectrum = setting.spectrum
     basis = setting.charges.basis
     known = set() if basis is None else {m.name for m in basis.maps}
+    maps = [m.index_map for m in setting.hamiltonian_symmetries if not m.conjugating and m.name not in known]
+    parity = parity_map(setting.charges)
+    if parity is not None and not setting.potentials.numbers and not setting.potentials.fields:  # these tell it
+        maps.append(parity)
     columns = None if spectrum.basis is None else spectrum.basis[:, index]
     found: dict[str, Any] = {}
     constant: dict[str, float] = {}
-    for m in setting.hamiltonian_symmetries:
-        if m.conjugating or m.name in known:
-            continue
-        u = m.index_map.matrix()
+    for m in maps:
+        u = m.matrix()
         g = sp.csr_array(u[index][:, index] if columns is None else columns.conj().T @ (u @ columns))
         one = sp.eye_array(len(index), format="csr")
         if abs(g @ g - one).max() > NOTHING or abs(g - g.conj().T).max() > NOTHING:
@@ -258,14 +261,18 @@ def _resolved(vectors: np.ndarray, energies: np.ndarray, code: Any) -> tuple[np.
     return out, values
 
 
-def _labels(setting: Setting, index: np.ndarray) -> dict[str, float]:
-    """Labels of a block of the spectrum: those of the basis, and the numbers and field charges it has."""
-    basis = setting.charges.basis
+def _labels(setting: Setting, spectrum: Spectrum, index: np.ndarray) -> dict[str, float]:
+    """What the states of a block share: labels of the basis, numbers and field charges, and what the start shares."""
+    basis, sector = setting.charges.basis, setting.sector
     found: dict[str, float] = {}
-    if basis is not None:
-        found |= {m.name: float(basis.labels[m.name][index[0]]) for m in basis.maps if m.name in basis.labels}
-    for name, line in setting.lines.items():
+    columns = index if sector is None or spectrum is not setting.matching else sector.columns(index)
+    for name, label in ({} if basis is None else basis.labels).items():
+        if np.all(label[columns] == label[columns[0]]):
+            found[name] = float(label[columns[0]])
+    for name, line in setting.lines(spectrum).items():
         found[name] = round(float(line[index[0]]), 10) + 0.0  # what the basis rounds is no value
+    if sector is not None and spectrum is setting.matching:
+        found |= {**sector.charges, **sector.further}
     return found
 
 

@@ -8,7 +8,7 @@ numbers.  Floor: quench.  Must not know windows, dynamics or tables.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from functools import cached_property
 from typing import Any
 
@@ -18,37 +18,14 @@ import scipy.sparse as sp
 from maxent.families.density import MatricesState
 from maxent.families.matrices import Matrices
 from maxent.lattice import OperatorSum
-from maxent.lattice.symmetries import SymmetryBasis, adapted_basis, blocked, sharp_value
+from maxent.lattice.symmetries import SymmetryBasis, adapted_basis, blocked
 from maxent.quench.corrections import leading_correction, second_derivatives
 from maxent.quench.spectrum import Spectrum
-from maxent.quench.starts import Start
+from maxent.quench.start_sectors import Sector, find_sector
 from maxent.result import Result
 from maxent.solver import solve
 
 __all__ = ["Charges", "Sector", "find_sector"]
-
-
-@dataclass(frozen=True, eq=False)
-class Sector:
-    """Values that have no spread in a start, and the states that share them.
-
-    Attributes
-    ----------
-    symmetries : dict of str to int
-        Labels of maps, as in `SymmetryBasis.labels`.
-    charges : dict of str to float
-    columns : (k,) ndarray of int
-        States of the basis.
-    """
-
-    symmetries: dict[str, int]
-    charges: dict[str, float]
-    columns: np.ndarray
-
-    @property
-    def values(self) -> dict[str, float]:
-        """All sharp values by name."""
-        return {**self.charges, **{name: float(v) for name, v in self.symmetries.items()}}
 
 
 class Charges:
@@ -88,6 +65,7 @@ class Charges:
         given = {name: op.matrix() for name, op in self.operators.items()}
         self.matrices = given if self.basis is None else blocked(given, self.basis)
         self.observables = {name: op.matrix() for name, op in (observables or {}).items()}
+        self._inside: tuple[Sector, dict[str, Any]] | None = None
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -119,8 +97,16 @@ class Charges:
 
     def family_of(self, names: Sequence[str], sector: Sector | None) -> Matrices:
         """Family of some charges over all sectors, or inside one."""
-        family = self.subfamily(names)
-        return family if sector is None else family.restrict(sector.columns)
+        if sector is None:
+            return self.subfamily(names)
+        if sector.part.ndim == 1:
+            return self.subfamily(names).restrict(sector.part)
+        # what is fixed there is a number, not what rounding leaves of it between sums of states
+        one = sp.eye_array(sector.size, format="csr")
+        fixed = sector.charges
+        inside = {n: fixed[n] * one if n in fixed else sector.inside(self.matrices[n]) for n in names}
+        basis = sector.part if self.isometry is None else sector.states(self.isometry)
+        return Matrices(inside, basis=basis, dims=self.sites.dims)
 
     @cached_property
     def conjugated(self) -> dict[str, Any]:
@@ -130,10 +116,21 @@ class Charges:
         w = self.basis.matrix
         return {name: (w.conj().T @ (q @ w)).tocsr() for name, q in self.observables.items()}
 
-    def means(self, state: MatricesState) -> dict[str, float]:
-        """Means of all observables in a state of this basis (all of its columns)."""
+    def means(self, state: MatricesState, sector: Sector | None = None) -> dict[str, float]:
+        """Means of all observables in a state of this basis (all of its columns), or of a sector."""
+        size = self.matrices[self.hamiltonian].shape[0] if sector is None else sector.size
+        if state.dimension != size:  # on a face, in a basis of its own
+            return {name: state.mean(q) for name, q in self.observables.items()}
         inner = replace(state, basis=None, dims=None)
-        return {name: inner.mean(q) for name, q in self.conjugated.items()}
+        return {name: inner.mean(q) for name, q in self.observables_in(sector).items()}
+
+    def observables_in(self, sector: Sector | None) -> dict[str, Any]:
+        """Observables in the basis, or between the states of a sector; the last sector asked for is kept."""
+        if sector is None:
+            return self.conjugated
+        if self._inside is None or self._inside[0] is not sector:
+            self._inside = sector, {name: sector.inside(sp.csr_array(q)) for name, q in self.conjugated.items()}
+        return self._inside[1]
 
     @cached_property
     def lines(self) -> np.ndarray:
@@ -141,41 +138,46 @@ class Charges:
 
         In the order of the weights of a state of `family`: any ensemble is then a product of numbers.
         """
-        state = self.family.state(np.zeros(len(self.names)))
-        out = np.empty((len(self.observables), len(state.populations)))
-        for row, q in zip(out, map(sp.csr_array, self.conjugated.values()), strict=True):
-            n = len(state.flat)
-            row[:n] = np.real(q.diagonal())[state.flat]
-            for g in state.groups:
-                image = q[g.index][:, g.index] @ g.vectors
-                row[n : n + len(g.weights)] = np.real(np.einsum("ik,ik->k", g.vectors.conj(), image))
-                n += len(g.weights)
-        return out
+        return eigenstate_lines(self.family, self.conjugated)
 
     def fit(self, names: Sequence[str], targets: Mapping[str, tuple[float, float]], sector: Sector | None) -> Result:
         """Ensemble of some charges, over all sectors or inside one."""
         family = self.family_of(names, sector)
         return solve(family, {n: targets[n][0] for n in names}, accuracy={n: targets[n][1] for n in names})
 
-    def correction(self, result: Result, names: Sequence[str], spread: np.ndarray) -> dict[str, float]:
-        """Leading correction of every observable, `spread` (m, m) the covariance of these charges in the start."""
-        family = self.subfamily(names)
-        lam = np.array([result.multipliers[n] for n in names])
+    def correction(
+        self, result: Result, names: Sequence[str], spread: np.ndarray, sector: Sector | None = None
+    ) -> dict[str, float]:
+        """Leading correction of every observable, `spread` (m, m) the covariance of these charges in the start.
+
+        In a sector the charges that are fixed there take no part.
+        """
+        free = [k for k, n in enumerate(names) if sector is None or n not in sector.charges]
+        if not free:
+            return {}
+        family = self.family_of([names[k] for k in free], sector)
+        lam = np.array([result.multipliers[names[k]] for k in free])
+        lines = None
+        if sector is None and self.commute:
+            lines = self.lines  # the same for all sets of charges
+        elif not family.blocks.dense:
+            lines = eigenstate_lines(family, self.observables_in(sector))
 
         def at(x: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
             state, values = family.state(x), family.evaluate(x, 1).values
-            if self.commute:
-                return values, self.lines @ np.concatenate([state.flat_weights, *[g.weights for g in state.groups]])
-            return values, np.array(list(self.means(state).values()))
+            if lines is not None:
+                return values, lines @ np.concatenate([state.flat_weights, *[g.weights for g in state.groups]])
+            return values, np.array(list(self.means(state, sector).values()))
 
-        curvature = second_derivatives(at, lam, result.covariance)
+        some = np.ix_(free, free)
+        curvature = second_derivatives(at, lam, result.covariance[some])
         if curvature is None:
             return {}
-        size = leading_correction(curvature, spread, self.fluctuations(result, names))
+        size = leading_correction(curvature, spread[some], self.fluctuations(result, names, sector)[some])
         return dict(zip(self.observables, map(float, size), strict=True))
 
-    def fluctuations(self, result: Result, names: Sequence[str]) -> np.ndarray:
-        """Symmetrised covariance of charges in an ensemble over all sectors, as it is taken in the start.
+    def fluctuations(self, result: Result, names: Sequence[str], sector: Sector | None = None) -> np.ndarray:
+        """Symmetrised covariance of charges in an ensemble, as it is taken in the start.
 
         The covariance of a result is the Kubo-Mori one, the response of the values to the multipliers.  The two differ
         for charges that do not commute with one another.
@@ -183,7 +185,7 @@ class Charges:
         if self.commute:
             return result.covariance
         inner = replace(result.state, basis=None, dims=None)
-        q = [self.matrices[n] for n in names]
+        q = [self.matrices[n] if sector is None else sector.inside(self.matrices[n]) for n in names]
         values = [result.values[n] for n in names]
         out = np.empty((len(q), len(q)))
         for i in range(len(q)):
@@ -192,128 +194,25 @@ class Charges:
                 out[i, j] = out[j, i] = inner.mean(product) - values[i] * values[j]
         return out
 
-    def spectrum(self, *, progress: Any = None) -> Spectrum:
-        """Spectrum of the Hamiltonian, in blocks that no charge leaves when all commute."""
+    def spectrum(self, sector: Sector | None = None, *, progress: Any = None) -> Spectrum:
+        """Spectrum of the Hamiltonian, in blocks that no charge leaves when all commute; or that of a sector alone."""
         others = [q for n, q in self.operators.items() if n != self.hamiltonian] if self.commute else []
-        return Spectrum(self.operators[self.hamiltonian], basis=self.isometry, companions=others, progress=progress)
+        basis = self.isometry
+        if sector is not None:
+            whole = sp.eye_array(self.matrices[self.hamiltonian].shape[0], format="csr") if basis is None else basis
+            basis = sector.states(whole)
+        return Spectrum(self.operators[self.hamiltonian], basis=basis, companions=others, progress=progress)
 
 
-def find_sector(charges: Charges, start: Start, *, by_symmetry: bool = True) -> Sector | None:
-    """Sector of all charges and symmetries without spread in the start; None when everything has spread.
-
-    Charges count that are diagonal in the product basis (a magnetisation, a particle number), since only those select
-    states.  With ``by_symmetry=False`` charges alone count.
-    """
-    basis = charges.basis
-    symmetries: dict[str, int] = {}
-    inside = None if basis is None else np.ones(basis.size, bool)
-    if basis is not None and by_symmetry:
-        symmetries, inside = sharp_labels(basis, start)
-    sharp: dict[str, float] = {}
-    lines: dict[str, np.ndarray] = {}
-    for name, op in charges.operators.items():
-        if name == charges.hamiltonian:
-            continue
-        q = op.matrix()
-        line = q.diagonal().real
-        if (q - sp.diags_array(line)).count_nonzero():
-            continue
-        value = sharp_value(line, start.vectors)
-        if value is not None:
-            small = abs(value) <= 1e-13 * float(np.abs(line).max(initial=0.0))
-            sharp[name], lines[name] = 0.0 if small else float(value), line
-    columns = _columns(charges, inside, lines, sharp)
-    parity = _parity(charges) if by_symmetry else None
-    if parity is not None:
-        value = sharp_value(parity, start.vectors)
-        if value is not None and not np.isin(parity[_kept(lines, sharp, len(parity))], [value]).all():
-            try:
-                columns = _columns(charges, inside, {**lines, "parity": parity}, {**sharp, "parity": value})
-                sharp["parity"] = float(value)
-            except ValueError:
-                pass  # a map of the basis exchanges the parities: its label stands for both
-    if not symmetries and not sharp:
-        return None
-    everything = charges.matrices[charges.hamiltonian].shape[0]
-    return None if len(columns) == everything else Sector(symmetries, sharp, columns)
-
-
-def sharp_labels(basis: SymmetryBasis, start: Start) -> tuple[dict[str, int], np.ndarray]:
-    """Which symmetries, powers and products of them a start has a sharp value of, and the states that share them.
-
-    A start that repeats after two sites has weight at momenta 0 and pi: the translation has spread there, its square
-    has none.  In general the labels k of all maps, as elements of Z_r1 x Z_r2 x ..., that share every sharp value with
-    the start are ``k_0`` plus the subgroup that the differences of the labels in the start generate.
-
-    Returns
-    -------
-    values : dict of str to int
-        Label by the name of a map, or `name^p` for its p-th power where that is the lowest sharp one; `joint sectors`
-        where products of maps restrict the labels further, with the number of joint labels that are left.
-    columns : (d,) bool ndarray
-    """
-    maps = basis.maps
-    orders = np.array([m.order for m in maps])
-    labels = np.array([basis.labels[m.name] for m in maps])
-    raw = np.array([(1 - k) // 2 if (k < 0).any() else k for k in labels]).T  # parities +1, -1 are labels 0, 1
-    weight = np.sum(np.abs(basis.matrix.conj().T @ start.vectors) ** 2 * start.weights, axis=1)
-    tuples, which = np.unique(raw, axis=0, return_inverse=True)
-    share = np.bincount(which.ravel(), weight)
-    there = tuples[share > 1e-20]
-    first = there[0]
-    group = {tuple(0 for _ in maps)}
-    while True:
-        more = group | {tuple((np.array(g) + k - first) % orders) for g in group for k in there}
-        if len(more) == len(group):
-            break
-        group = more
-    allowed = np.array([tuple(k) in {tuple((np.array(g) + first) % orders) for g in group} for k in tuples])
-    values: dict[str, int] = {}
-    apart = 1
-    for a, m in enumerate(maps):
-        spread = {g[a] for g in group}
-        power = len(spread)  # a cyclic subgroup of that many elements: the power of the map that is one on it
-        if power == orders[a]:
-            apart *= power
-            continue
-        apart *= power
-        whole = int(first[a]) % (int(orders[a]) // power)
-        sign = (labels[a] < 0).any()
-        values[m.name if power == 1 else f"{m.name}^{power}"] = 1 - 2 * whole if sign else whole
-    if len(group) < apart:
-        values["joint sectors"] = len(group)
-    return values, allowed[which.ravel()]
-
-
-def _columns(
-    charges: Charges, inside: np.ndarray | None, lines: dict[str, np.ndarray], sharp: dict[str, float]
-) -> np.ndarray:
-    """States of the basis with these values."""
-    if charges.basis is None:
-        return np.flatnonzero(_kept(lines, sharp, charges.matrices[charges.hamiltonian].shape[0]))
-    assert inside is not None
-    columns = charges.basis.columns({}, {name: (lines[name], sharp[name]) for name in sharp})
-    return columns[inside[columns]]
-
-
-def _kept(lines: dict[str, np.ndarray], sharp: dict[str, float], states: int) -> np.ndarray:
-    """Which product states have these values of diagonal charges."""
-    keep = np.ones(states, bool)
-    for name, line in lines.items():
-        keep &= np.abs(line - sharp[name]) <= 1e-9 * max(1.0, float(np.abs(line).max()))
-    return keep
-
-
-def _parity(charges: Charges) -> np.ndarray | None:
-    """``(-1)^n`` of the product states, n the sum of the levels of all sites and species, where every charge keeps it.
-
-    For spins 1/2 that is the product of all Pauli Z, for fermions and bosons the parity of their number.
-    """
-    line = np.ones(1)
-    for slot in charges.sites.slots:  # one for every site and species
-        line = np.multiply.outer(line, (-1.0) ** np.arange(slot.dimension)).ravel()
-    for op in charges.operators.values():
-        q = sp.coo_array(op.matrix())
-        if np.any((line[q.coords[0]] != line[q.coords[1]]) & (q.data != 0)):
-            return None
-    return line
+def eigenstate_lines(family: Matrices, observables: Mapping[str, Any]) -> np.ndarray:
+    """Means (observables, states) in the joint eigenstates of a family that commutes, in the order of its weights."""
+    state = family.state(np.zeros(len(family.names)))
+    out = np.empty((len(observables), len(state.populations)))
+    for row, q in zip(out, map(sp.csr_array, observables.values()), strict=True):
+        n = len(state.flat)
+        row[:n] = np.real(q.diagonal())[state.flat]
+        for g in state.groups:
+            image = q[g.index][:, g.index] @ g.vectors
+            row[n : n + len(g.weights)] = np.real(np.einsum("ik,ik->k", g.vectors.conj(), image))
+            n += len(g.weights)
+    return out

@@ -13,6 +13,7 @@ import numpy as np
 
 from maxent.quench.columns import Ensemble
 from maxent.quench.distances import block_distances
+from maxent.quench.ensembles import Sector
 from maxent.quench.potentials import thermodynamic_facts
 from maxent.quench.setting import Setting
 from maxent.quench.starts import Start
@@ -49,7 +50,7 @@ def fitted_columns(setting: Setting) -> list[Ensemble]:
             sharp = {} if inside is None else inside.values
             plain = Ensemble(label, kind, names, sharp, str(result.verdict), result.message)
             if result.state is not None:
-                plain = _filled(setting, plain, result, covariance)
+                plain = _filled(setting, plain, result, covariance, inside)
                 quantities, checks = thermodynamic_facts(result, charges, setting.potentials, inside)
                 plain = replace(plain, quantities=quantities, self_checks=checks)
             out.append(plain)
@@ -72,25 +73,25 @@ def nested_sets(setting: Setting | GaussianSetting) -> list[tuple[str, tuple[str
     return sets
 
 
-def _filled(setting: Setting, plain: Ensemble, result: Result, covariance: np.ndarray) -> Ensemble:
+def _filled(
+    setting: Setting, plain: Ensemble, result: Result, covariance: np.ndarray, sector: Sector | None
+) -> Ensemble:
     """The ensemble with what its state says."""
     charges, names, state = setting.charges, plain.charges, result.state
     index = [charges.names.index(n) for n in names]
     spread = covariance[np.ix_(index, index)]
     corrections: dict[str, float] = {}
-    if not plain.sector and result.success and charges.observables:
-        corrections = charges.correction(result, names, spread)
+    if result.success and charges.observables:
+        corrections = charges.correction(result, names, spread, sector)
     chi = np.full(len(names), np.nan)
     if result.success:
-        whole = result.covariance if plain.sector else charges.fluctuations(result, names)
-        chi = np.diagonal(whole)
-    inside = {n: state.mean(q) for n, q in charges.observables.items()} if plain.sector else charges.means(state)
+        chi = np.diagonal(charges.fluctuations(result, names, sector))
     return replace(
         plain,
         multipliers=dict(result.multipliers),
         multiplier_errors=dict(result.multiplier_errors),
         entropy=result.entropy,
-        means=inside,
+        means=charges.means(state, sector),
         distances=block_distances(state, setting.reference),
         corrections=corrections,
         variances={n: (float(spread[k, k]), float(chi[k])) for k, n in enumerate(names)},

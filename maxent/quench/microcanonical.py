@@ -18,20 +18,20 @@ import numpy as np
 
 from maxent.quench.columns import Ensemble
 from maxent.quench.distances import block_distances, nested_states, trace_distance
-from maxent.quench.eigenstates import eigenstate_range, reduced_states, weighted_quantiles
+from maxent.quench.eigenstates import eigenstate_means, eigenstate_range, reduced_states, weighted_quantiles
+from maxent.quench.ensembles import Sector
 from maxent.quench.levels import Levels, levels
 from maxent.quench.setting import Setting
+from maxent.quench.spectrum import Spectrum
 from maxent.quench.windows import SPACINGS, GaussianWindow, WindowScan, gaussian_window, scan_widths, sharp_window
 from maxent.text import listing, number, plural
 
-__all__ = ["Microcanonical", "matching_levels", "microcanonical_columns"]
+__all__ = ["Microcanonical", "eigenstate_table", "microcanonical_columns"]
 
 #: A spread in energy up to here, as a share of the spectrum, is rounding: the start is an eigenstate.
 SHARP = 1e-10
 #: Widths of the scan, in units of that of the window.
 SCAN = (0.25, 0.5, 1.0, 2.0)
-#: Name of the limit that keeps the sector of the start.
-MATCHING = "sector of the start"
 #: A flat distribution of width D has the variance D^2/12.
 FLAT = math.sqrt(12.0)
 #: The entropy of a sharp window is smoothed over this part of its width before it is differentiated.
@@ -61,9 +61,8 @@ def microcanonical_columns(setting: Setting, *, width: float | None) -> Microcan
         Width of the Gaussian window; by default the energy spread of the start.
     """
     h = setting.charges.hamiltonian
-    matching = matching_levels(setting)
-    data = eigenstate_table(setting, matching)
-    found = levels(setting.spectrum, energy=h, further={MATCHING: matching.astype(float), **_values(setting)})
+    data = eigenstate_table(setting)
+    found = _Lists(setting)
     s = width if width is not None else setting.start.spread(setting.charges.operators[h].matrix())
     if s <= SHARP * setting.spectrum.width:
         setting.notes.append("No window in energy: the start has no spread in energy that could be its width.")
@@ -72,55 +71,60 @@ def microcanonical_columns(setting: Setting, *, width: float | None) -> Microcan
     energy = setting.targets[h][0]
     scan = None
     if out:  # where the sector has too few levels the scan is over all states of the last window
-        scan = scan_widths(found, s * np.array(SCAN), mean=energy, within=inner.bounds if inner else None)
+        scan = scan_widths(found.every if inner is None else found.matching, s * np.array(SCAN), mean=energy)
     out += _sharp_columns(setting, found, s)
     facts: dict[str, float] = {}
     if inner is not None:
-        out.append(_single(setting, inner, data, matching))
+        out.append(_single(setting, inner, data))
         facts = {"mean": inner.mean, "width": inner.width, "beta": inner.beta}
     return Microcanonical(out, data, facts, scan)
 
 
-def matching_levels(setting: Setting) -> np.ndarray:
-    """Which levels (d,) lie in the sector of the start."""
-    spectrum = setting.spectrum
-    if setting.sector is None:
-        return np.ones(spectrum.dimension, bool)
-    inside = np.zeros(spectrum.dimension, bool)
-    inside[setting.sector.columns] = True
-    keep = np.zeros(spectrum.dimension, bool)
-    for block in spectrum.blocks:
-        keep[block.levels] = inside[block.index].all()
-    return keep
-
-
-def eigenstate_table(setting: Setting, matching: np.ndarray) -> dict[str, np.ndarray]:
-    """Energy, weight in the start and means of every eigenstate of the matching sector."""
-    spectrum, dephased, charges = setting.spectrum, setting.dephased, setting.charges
-    weight = np.zeros(spectrum.dimension)
-    weight[dephased.levels] = np.sum(np.abs(dephased.amplitudes) ** 2, axis=1)
-    values = {n: np.full(spectrum.dimension, np.nan) for n in charges.observables}
+def eigenstate_table(setting: Setting) -> dict[str, np.ndarray]:
+    """Energy, weight in the start and means of every eigenstate of the matching sector, ascending in energy."""
+    spectrum, charges = setting.matching, setting.charges
+    vectors = setting.start.vectors / np.linalg.norm(setting.start.vectors, axis=0)
+    weight = np.abs(spectrum.amplitudes(vectors)) ** 2 @ setting.start.weights
+    values = {n: np.empty(spectrum.dimension) for n in charges.observables}
     for i, block in enumerate(spectrum.blocks):
-        if not matching[block.levels].all():
-            continue
         vectors = spectrum.block_vectors(i)
-        for name, q in charges.conjugated.items():
-            part = q[block.index][:, block.index]
-            values[name][block.levels] = np.real(np.einsum("ik,ik->k", vectors.conj(), part @ vectors))
-    keep = np.flatnonzero(matching)
-    keep = keep[np.argsort(spectrum.energies[keep], kind="stable")]
-    return {
-        "level": keep,
-        "energy": spectrum.energies[keep],
-        "weight": weight[keep],
-        **{n: v[keep] for n, v in values.items()},
-    }
+        for name, q in charges.observables_in(setting.sector).items():
+            values[name][block.levels] = eigenstate_means(vectors, q[block.index][:, block.index])
+    order = np.argsort(spectrum.energies, kind="stable")
+    columns = {"level": np.arange(spectrum.dimension), "energy": spectrum.energies, "weight": weight, **values}
+    return {name: column[order] for name, column in columns.items()}
 
 
-def _values(setting: Setting) -> dict[str, np.ndarray]:
-    """Value (d,) in each level of the numbers and field charges that have one there; the others are told."""
-    spectrum, found = setting.spectrum, {}
-    for name, line in setting.lines.items():
+class _Lists:
+    """Levels over all sectors, and in the sector of the start; the same where there is none."""
+
+    def __init__(self, setting: Setting) -> None:
+        h = setting.charges.hamiltonian
+        numbers = _values(setting, setting.spectrum)
+        self.every: Levels = levels(setting.spectrum, energy=h, further=numbers)
+        self.matching: Levels = self.every
+        if setting.sector is not None:
+            numbers = _values(setting, setting.matching)
+            self.matching = levels(setting.matching, energy=h, further=numbers)
+        if setting.clashes:
+            each = [f"{a} and {b}" for a, b in setting.clashes]
+            setting.notes.append(
+                f"No joint window in {listing(each, 'or')}: they do not commute and have no common levels; "
+                f"windows are in {listing(self.every.names, 'and')}."
+            )
+
+    def of(self, inside: bool) -> Levels:
+        return self.matching if inside else self.every
+
+    def select_more(self, numbers: Mapping[str, float]) -> bool:
+        """Whether more levels have these numbers than lie in the sector."""
+        return int(np.count_nonzero(self.every.inside(numbers))) > self.matching.size
+
+
+def _values(setting: Setting, spectrum: Spectrum) -> dict[str, np.ndarray]:
+    """Value (d,) in each level of the numbers and field charges that have one there."""
+    found = {}
+    for name, line in setting.lines(spectrum).items():
         values = np.empty(spectrum.dimension)
         constant = True
         for block in spectrum.blocks:
@@ -129,36 +133,30 @@ def _values(setting: Setting) -> dict[str, np.ndarray]:
             values[block.levels] = part[0]
         if constant:
             found[name] = values
-    if setting.clashes:
-        each = [f"{a} and {b}" for a, b in setting.clashes]
-        joint = listing([setting.charges.hamiltonian, *found], "and")
-        setting.notes.append(
-            f"No joint window in {listing(each, 'or')}: they do not commute and have no common levels; "
-            f"windows are in {joint}."
-        )
     return found
 
 
 # ---------------------------------------------------------------------- Gaussian windows
 
 
-def _gaussian_columns(setting: Setting, found: Levels, width: float) -> tuple[list[Ensemble], GaussianWindow | None]:
+def _gaussian_columns(setting: Setting, found: _Lists, width: float) -> tuple[list[Ensemble], GaussianWindow | None]:
     """Gaussian windows over all sectors and in that of the start, and the window there.
 
     Where symmetries leave too few levels in the sector, the window is in all states with its numbers instead.
     """
-    energy = setting.targets[found.energy][0]
+    h = setting.charges.hamiltonian
+    energy = setting.targets[h][0]
     out: list[Ensemble] = []
     inner: GaussianWindow | None = None
-    numbers = {n: x for n, x in setting.sharp.items() if n in found.values}
+    numbers = {n: x for n, x in setting.sharp.items() if n in found.every.values}
     for inside in (False, True) if setting.sector is not None else (False,):
-        within: dict[str, float] | None = {MATCHING: 1.0} if inside else None
-        label, sector = "Gaussian window", setting.sharp if inside else {}
-        window = _gaussian(setting, found, width, energy, within, " in the sector of the start" if inside else "")
-        if window is None and inside and numbers and not _same(found, {MATCHING: 1.0}, numbers):
+        label, sector, part = "Gaussian window", setting.sharp if inside else {}, setting.sector if inside else None
+        where = " in the sector of the start" if inside else ""
+        window = _gaussian(setting, found.of(inside), width, energy, None, where)
+        if window is None and inside and numbers and found.select_more(numbers):
             label = f"Gaussian window at {_pairs(numbers)}"
-            sector = numbers
-            window = _gaussian(setting, found, width, energy, numbers, f" at {_pairs(numbers)}")
+            sector, part = numbers, None
+            window = _gaussian(setting, found.every, width, energy, numbers, f" at {_pairs(numbers)}")
         elif window is not None and (inside or setting.sector is None):
             inner = window  # levels of other sectors have no place beside single eigenstates
         if window is not None:
@@ -166,7 +164,7 @@ def _gaussian_columns(setting: Setting, found: Levels, width: float) -> tuple[li
                 "beta": window.beta, "mean": window.mean, "centre": window.centre, "width": window.width,
                 "spacing": window.spacing,
             }  # fmt: skip
-            out.append(_column(setting, label, (found.energy,), sector, window, facts))
+            out.append(_column(setting, label, (h,), sector, part, window, facts))
     return out, inner
 
 
@@ -180,31 +178,27 @@ def _gaussian(
         return None
 
 
-def _same(found: Levels, one: Mapping[str, float], other: Mapping[str, float]) -> bool:
-    return bool(np.array_equal(found.inside(one), found.inside(other)))
-
-
 # ---------------------------------------------------------------------- sharp windows
 
 
-def _sharp_columns(setting: Setting, found: Levels, width: float) -> list[Ensemble]:
+def _sharp_columns(setting: Setting, found: _Lists, width: float) -> list[Ensemble]:
     """Sharp windows in the energy, and jointly in the numbers and field charges."""
-    numbers = [n for n in found.values if n not in (found.energy, MATCHING)]
-    held = {n: x for n, x in setting.sharp.items() if n in numbers}
-    free = [n for n in numbers if n not in held]
-    spread = {n: FLAT * setting.start.spread(setting.charges.operators[n].matrix()) for n in free}
+    h = setting.charges.hamiltonian
     out = []
     for inside in (False, True) if setting.sector is not None else (False,):
-        limits = {MATCHING: 1.0} if inside else {}
+        among = found.of(inside)
+        numbers = [n for n in among.names if n != h]
+        held = {n: x for n, x in setting.sharp.items() if n in numbers}
+        free = [n for n in numbers if n not in held]
         cases: list[tuple[list[str], dict[str, float]]] = [([], {})]  # numbers with limits, and numbers held
-        fixed = inside or _same(found, held, {MATCHING: 1.0})  # then those held select nothing that is not shown
-        if free or (held and not fixed):
+        # numbers held select nothing in the sector, nor beside it where they are all that it holds
+        if free or (held and not inside and found.select_more(held)):
             cases.append((free, {} if inside else held))
-        for among, values in cases:
-            names = [found.energy, *(n for n in numbers if among or values)]
+        for limited, values in cases:
+            names = [h, *(n for n in numbers if limited or values)]
             label = "sharp window" + (f": {', '.join(names)}" if len(names) > 1 else "")
-            widths = {found.energy: FLAT * width, **{n: spread[n] for n in among}}
-            column = _sharp(setting, found, widths, {**limits, **values})
+            widths = {n: FLAT * setting.start.spread(setting.charges.operators[n].matrix()) for n in limited}
+            column = _sharp(setting, among, {h: FLAT * width, **widths}, values, setting.sector if inside else None)
             if isinstance(column, str):
                 setting.notes.append(f"No {label}{' in the sector of the start' if inside else ''}: {column}.")
                 continue
@@ -213,13 +207,16 @@ def _sharp_columns(setting: Setting, found: Levels, width: float) -> list[Ensemb
     return out
 
 
-def _sharp(setting: Setting, found: Levels, widths: Mapping[str, float], held: Mapping[str, float]) -> Ensemble | str:
+def _sharp(
+    setting: Setting, found: Levels, widths: Mapping[str, float], held: Mapping[str, float], part: Sector | None
+) -> Ensemble | str:
     """A sharp window whose means are as close to those of the start as its widths allow, or why there is none."""
     bounds = _placed(found, widths, {n: setting.targets[n][0] for n in widths}, held)
     kept = found.inside(bounds)
     distinct = len(np.unique(found.clusters[kept]))
     if distinct < SPACINGS:
-        return f"a width of {number(widths[found.energy], 4)} holds {plural(distinct, 'distinct level')} only"
+        holds = f"only {plural(distinct, 'distinct level')}" if distinct else "no level"
+        return f"a width of {number(widths[found.energy], 4)} holds {holds}"
     window = sharp_window(found, bounds)
     facts = {"states": float(np.count_nonzero(kept)), "mean": window.mean}
     for n in widths:
@@ -233,7 +230,7 @@ def _sharp(setting: Setting, found: Levels, widths: Mapping[str, float], held: M
         pass  # too few levels for a slope; the column stands without beta
     else:
         facts = {"beta": slope.beta, "beta at": slope.energy, "smoothed over": smoothing, **facts}
-    return _column(setting, "", (), {}, window, facts)
+    return _column(setting, "", (), {}, part, window, facts)
 
 
 def _placed(
@@ -263,29 +260,36 @@ def _placed(
 
 
 def _column(
-    setting: Setting, label: str, names: tuple[str, ...], sector: dict[str, float], window: Any, facts: dict[str, float]
+    setting: Setting,
+    label: str,
+    names: tuple[str, ...],
+    sector: dict[str, float],
+    part: Sector | None,
+    window: Any,
+    facts: dict[str, float],
 ) -> Ensemble:
+    """A window as a column; `part` the sector that its levels are those of, `sector` what its states share."""
     return Ensemble(
         label,
         "microcanonical",
         names,
         sector,
         entropy=window.entropy,
-        means=setting.charges.means(window.state),
+        means=setting.charges.means(window.state, part),
         distances=block_distances(window.state, setting.reference),
         facts=facts,
     )
 
 
-def _single(setting: Setting, window: GaussianWindow, data: dict[str, np.ndarray], matching: np.ndarray) -> Ensemble:
+def _single(setting: Setting, window: GaussianWindow, data: dict[str, np.ndarray]) -> Ensemble:
     """Median and quantiles over the single eigenstates of a window, each with its probability there."""
     medians, ranges = {}, {}
     for name in setting.charges.observables:
-        full = np.zeros(len(matching))
-        full[data["level"]] = data[name]
-        r = eigenstate_range(window, full)
+        by_level = np.empty(window.levels.size)
+        by_level[data["level"]] = data[name]
+        r = eigenstate_range(window, by_level)
         medians[name], ranges[name] = r.median, (r.low, r.high)
-    closest = eigenstate_range(window, setting.spectrum.energies)
+    closest = eigenstate_range(window, window.levels.energies)
     if closest.degeneracy > 1:
         setting.notes.append(
             f"The eigenstate closest to the mean energy is {closest.degeneracy}-fold degenerate inside its sector: "
@@ -309,7 +313,7 @@ def _single_distances(
     setting: Setting, window: GaussianWindow
 ) -> tuple[dict[int, float], dict[int, tuple[float, float]]]:
     """Median and quantiles of the distances of the blocks of single eigenstates from the dephased state."""
-    spectrum, blocks = setting.spectrum, list(setting.reference)
+    spectrum, blocks = setting.matching, list(setting.reference)
     if not blocks or spectrum.dims is None:
         return {}, {}
     heaviest = np.argsort(-window.weights, kind="stable")

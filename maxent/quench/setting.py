@@ -11,7 +11,9 @@ from types import TracebackType
 import numpy as np
 import scipy.sparse as sp
 
+from maxent.lattice import Lattice
 from maxent.lattice.symmetries import SiteMap, find_symmetries
+from maxent.quench.blocks import largest_distance
 from maxent.quench.dephasing import Dephased
 from maxent.quench.ensembles import Charges, Sector
 from maxent.quench.potentials import Potentials
@@ -58,10 +60,20 @@ class Setting:
     clashes: tuple[tuple[str, str], ...] = ()
     notes: list[str] = field(default_factory=list)
 
-    @property
+    def __post_init__(self) -> None:
+        """Take over what finding the sector had to say."""
+        self.notes.extend(() if self.sector is None else self.sector.notes)
+
+    @cached_property
     def length(self) -> float:
-        """Number of sites around the ring; an open chain is as good as a ring of twice its length."""
+        """Number of sites around the ring that excitations need as long to go around as to come back here.
+
+        An open chain is as good as a ring of twice its length; on a lattice given by bonds the site farthest from
+        another stands for the opposite side of the ring.
+        """
         sites = self.charges.sites
+        if isinstance(sites, Lattice):
+            return float(max(2 * largest_distance(sites), 1))
         return float(sites.size if sites.is_ring else 2 * sites.size)
 
     @property
@@ -70,27 +82,30 @@ class Setting:
         return {} if self.sector is None else self.sector.values
 
     @cached_property
-    def inside(self) -> np.ndarray:
-        """Vectors (d, k) of the start in the basis of the spectrum."""
-        basis = self.spectrum.basis
-        return np.asarray(self.start.vectors if basis is None else basis.conj().T @ self.start.vectors)
+    def matching(self) -> Spectrum:
+        """Spectrum of the sector of the start, with all eigenvectors; that of all states where there is no sector."""
+        if self.sector is None:
+            return self.spectrum
+        found = self.charges.spectrum(self.sector, progress=self.progress)
+        for number in range(len(found.blocks)):
+            found.block_vectors(number)  # energies come with them
+        return found
 
-    @cached_property
-    def basis_amplitudes(self) -> np.ndarray:
-        """Weight (d,) of the start on each state of the basis."""
-        return np.abs(self.inside) ** 2 @ self.start.weights
+    def inside(self, spectrum: Spectrum) -> np.ndarray:
+        """Vectors (d, k) of the start in the basis of a spectrum."""
+        basis = spectrum.basis
+        return np.asarray(self.start.vectors if basis is None else basis.conj().T @ self.start.vectors)
 
     @cached_property
     def hamiltonian_symmetries(self) -> tuple[SiteMap, ...]:
         """Symmetries of the Hamiltonian alone, those that further charges break included."""
         return find_symmetries([self.charges.operators[self.charges.hamiltonian]], self.charges.sites)
 
-    @cached_property
-    def lines(self) -> dict[str, np.ndarray]:
-        """Value (d,) of numbers and field charges in each state of the basis, of those that are diagonal there."""
+    def lines(self, spectrum: Spectrum) -> dict[str, np.ndarray]:
+        """Value (d,) of numbers and field charges in each state of the basis of a spectrum, of those diagonal there."""
         found = {}
         for name in (*self.potentials.numbers, *self.potentials.fields):
-            q = sp.csr_array(self.charges.matrices[name])
+            q = spectrum.conjugated(self.charges.operators[name])
             line = np.real(q.diagonal())
             rest = abs(q - sp.diags_array(line))
             if rest.nnz == 0 or rest.max() <= 1e-10 * max(float(np.abs(line).max()), 1e-300):

@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 import scipy.linalg as sl
 
-from maxent.lattice import Chain, ProductState, Ring, formula
+from maxent.lattice import Bosons, Chain, Lattice, ProductState, Ring, formula
 from maxent.quench.comparison import compare
 from maxent.quench.corrections import second_derivatives
 from maxent.quench.distances import relative_entropy, root_fidelity, trace_distance
@@ -102,8 +102,9 @@ def test_sector_column_of_a_sharp_start_and_redundant_charge():
     whole, inside = found.ensemble("canonical"), found.ensemble("canonical", sector=True)
     assert whole.verdict == inside.verdict == "solved"
     assert whole.multipliers["energy"] != pytest.approx(inside.multipliers["energy"], rel=0.1)
-    assert found.sharp == {"magnetisation": 0.0, "translation^2": 0.0}
-    # by hand: states of zero magnetisation that a translation by two sites leaves as they are
+    # charges that are odd under reflection annihilate the Neel state: the current has no spread, too
+    assert found.sharp == {"magnetisation": 0.0, "current": 0.0, "translation^2": 0.0}
+    # by hand: states of zero magnetisation that a translation by two sites leaves as they are, without current
     h = formula(DENSITY["h"], Ring(8)).matrix().toarray()
     shift = np.zeros((256, 256))
     for n in range(256):
@@ -111,15 +112,22 @@ def test_sector_column_of_a_sharp_start_and_redundant_charge():
     keep = [n for n in range(256) if bin(n).count("1") == 4]
     w, v = np.linalg.eigh(sum(np.linalg.matrix_power(shift, k) for k in range(4))[np.ix_(keep, keep)] / 4)
     v = v[:, w > 0.5]
-    e = np.linalg.eigvalsh(v.T @ h[np.ix_(keep, keep)] @ v)
+    assert v.shape[1] == 20
+    current = formula("1j*commutator(h[i], h[i+1])", Ring(8), {}, DENSITY).matrix().toarray()[np.ix_(keep, keep)]
+    w, u = np.linalg.eigh(v.T @ current @ v)
+    v = v @ u[:, np.abs(w) < 1e-9]
+    e = np.linalg.eigvalsh(v.conj().T @ h[np.ix_(keep, keep)] @ v)
     p = np.exp(-inside.multipliers["energy"] * (e - e[0]))
-    assert len(e) == 20 and p @ e / p.sum() == pytest.approx(found.targets["energy"], abs=1e-11)
+    assert v.shape[1] == 16 and p @ e / p.sum() == pytest.approx(found.targets["energy"], abs=1e-11)
     # a charge without spread is a number inside the sector: the grand canonical state is the canonical one there
     with pytest.raises(KeyError):
         found.ensemble("grand canonical", sector=True)
     assert any("grand canonical is the same state as canonical: it is shown once" in n for n in found.notes)
-    further = found.ensemble("generalised: energy, magnetisation, current", sector=True)
-    assert further.verdict == "solved" and further.multipliers["magnetisation"] == 0.0  # redundant
+    assert any("magnetisation and current are fixed" in n for n in found.notes)
+    # beside a start in which the current has spread its ensemble stands, the magnetisation redundant
+    other = compare(**study(8, ("0", "pi", "pi", "pi"), 0.0), by_symmetry=False)
+    further = other.ensemble("generalised: energy, magnetisation, current", sector=True)
+    assert further.verdict == "solved" and further.multipliers["magnetisation"] == 0.0
 
 
 def test_single_eigenstates_need_a_window_in_their_own_sector():
@@ -141,7 +149,8 @@ def test_single_eigenstates_are_those_of_the_matching_sector():
     found = compare({"energy": h}, ProductState(ring, 2.0, 0.5).vector(), observables=observables, blocks=(1,))
     window, single = (found.ensemble(x, sector=True) for x in ("Gaussian window", "single eigenstate"))
     e, z = found.levels["energy"], found.levels["z"]
-    assert found.sharp == {"translation": 0.0} and len(e) == 108  # necklaces of ten beads in two colours
+    # necklaces of ten beads in two colours that may be turned over
+    assert found.sharp == {"translation": 0.0, "reflection": 1.0} and len(e) == 78
     # quantiles by hand: the first level at which the weights up to it reach that part
     weight = np.exp(-0.5 * ((e - window.facts["centre"]) / window.facts["width"]) ** 2)
     order = np.argsort(z)
@@ -171,6 +180,24 @@ def test_estimated_speed(text, speed, within):
     assert found.speed == pytest.approx(speed, abs=within) and found.speed < speed
     assert found.revival == pytest.approx(10 / (2 * found.speed))
     assert any("estimated from the lowest excitations" in note for note in found.notes)
+
+
+@pytest.mark.parametrize(
+    ("sites", "text", "speed"),
+    [
+        # one flipped spin moves with cos k, faster than the spinons of a weak anisotropy; one boson with 2 cos k
+        (Ring(8), "-Sx[i]*Sx[i+1] - Sy[i]*Sy[i+1] + 0.9*Sz[i]*Sz[i+1] + 0.2*Sz[i]", 1.0),
+        (Ring(8), "-Sx[i]*Sx[i+1] - Sy[i]*Sy[i+1] - 2*Sz[i]*Sz[i+1]", 1.0),
+        (Ring(6, Bosons(cutoff=2)), "-dagger(b[i])*b[i+1] - dagger(b[i+1])*b[i] + 3*n[i]*(n[i] - 1)", 2.0),
+    ],
+)
+def test_estimated_speed_counts_single_excitations(sites, text, speed):
+    start = np.random.default_rng(2).normal(size=int(np.prod(sites.dims)))
+    found = compare({"energy": formula(text, sites)}, start / np.linalg.norm(start), blocks=(1,), ranking=False)
+    step = 2 * np.pi / sites.size
+    k = step * np.arange(sites.size)
+    slope = speed * np.abs(np.cos(k + step) - np.cos(k)).max() / step
+    assert found.speed == pytest.approx(slope, abs=1e-9)
 
 
 def test_leading_correction_is_that_of_the_spreads():
@@ -322,16 +349,18 @@ def test_parity_without_spread_makes_a_sector():
     assert found.sharp["parity"] == 1.0
     inside = found.ensemble("canonical", sector=True)
     even = [n for n in range(64) if bin(n).count("1") % 2 == 0]
-    # all up also has momentum zero: the energy there, from the matrix by hand
+    # all up also has momentum zero and is its own mirror image: the energy there, from the matrix by hand
     shift = np.zeros((64, 64))
     for n in range(64):
         shift[((n << 1) & 63) | (n >> 5), n] = 1.0
+    mirror = np.eye(64)[[int(f"{n:06b}"[::-1], 2) for n in range(64)]]
     q = sum(np.linalg.matrix_power(shift, k) for k in range(6)) / 6
+    q = (q + q @ mirror) / 2
     w, v = np.linalg.eigh(q[np.ix_(even, even)])
     v = v[:, w > 0.5]
     e = np.linalg.eigvalsh(v.T @ energy.matrix().toarray()[np.ix_(even, even)] @ v)
     p = np.exp(-inside.multipliers["energy"] * (e - e[0]))
-    assert found.sharp == {"parity": 1.0, "translation": 0.0}
+    assert found.sharp == {"translation": 0.0, "parity": 1.0, "reflection": 1.0}
     assert p @ e / p.sum() == pytest.approx(found.targets["energy"], abs=1e-10)
 
 
@@ -405,3 +434,13 @@ def test_spread_of_charges_that_do_not_commute_is_symmetrised_in_both():
             plain = np.trace(rho @ q @ q).real - np.trace(rho @ q).real ** 2
             assert ensemble.variances[n][1] == pytest.approx(plain, rel=1e-9)
     assert found.conservation.clashes == (("x", "z"),)
+
+
+def test_times_on_lattices_given_by_bonds_go_by_bonds():
+    # three by two sites: three bonds from corner to corner; a ring of six given by its bonds is one of six sites
+    ring = Lattice(6, {"all": [(k, (k + 1) % 6) for k in range(6)]})
+    for sites, revival in ((Lattice.grid(3, 2), 3.0), (Lattice.grid(3, 3), 4.0), (ring, 3.0), (Ring(6), 3.0)):
+        start = ProductState(sites, ["0.3"] + ["1.9"] * (sites.size - 1), 0.0).vector()
+        found = compare({"energy": formula("Sx[i]", sites)}, start, blocks=(1,), speed=1.0, ranking=False)
+        assert found.revival == pytest.approx(revival)
+        assert found.plateau[1] == pytest.approx(revival)

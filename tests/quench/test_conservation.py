@@ -7,7 +7,7 @@ from numpy.testing import assert_allclose
 
 import maxent
 from maxent.families import Matrices
-from maxent.lattice import ProductState, Ring, formula
+from maxent.lattice import Bosons, ProductState, Ring, formula
 from maxent.quench import Start, check_conservation, dephase, ground_start, require_conserved, state_defect
 
 RING = Ring(6)
@@ -68,7 +68,7 @@ def test_charges_of_the_transverse_field_ring():
     assert found.broken == () and found.clashes == ()
     # targets of two routes, dense and of free fermions
     values = [-5.814912597321382, 7.316698577698826, 1.4899233795357933, 0.0]
-    for (name, value) in zip(ISING, values, strict=True):
+    for name, value in zip(ISING, values, strict=True):
         charge = found.charges[name]
         assert abs(charge.value - value) < 1e-12
         assert charge.drift < 1e-12
@@ -122,9 +122,7 @@ class TestStates:
         h, x = XXZ.matrix(), SPIN["x"].matrix()
         state = Matrices({"h": h, "x": x}, dims=RING.dims).state(np.array([0.7, 0.4]))
         rho, dense = state.density(), h.toarray()
-        exact = np.linalg.norm(dense @ rho - rho @ dense) / (
-            np.ptp(np.linalg.eigvalsh(dense)) * np.linalg.norm(rho)
-        )
+        exact = np.linalg.norm(dense @ rho - rho @ dense) / (np.ptp(np.linalg.eigvalsh(dense)) * np.linalg.norm(rho))
         assert_allclose(state_defect(XXZ, state), exact, rtol=1e-11)
         assert exact > 1e-3
 
@@ -166,3 +164,19 @@ class TestBadInput:
     def test_unknown_name(self):
         with pytest.raises(ValueError, match="charge 'w' was not tested"):
             require_conserved(check_conservation(XXZ, SPIN), ["w"])
+
+
+def test_a_cutoff_of_bosons_breaks_what_the_words_conserve():
+    ring = Ring(4, Bosons(cutoff=2))
+    hopping = formula("-dagger(b[i])*b[i+1] - dagger(b[i+1])*b[i]", ring)
+    charges = {
+        "number": formula("n[i]", ring),
+        "current": formula("1j*dagger(b[i])*b[i+1] - 1j*dagger(b[i+1])*b[i]", ring),
+    }
+    found = check_conservation(hopping, charges)
+    assert found.broken == ("current",) and not any(c.exact for c in found.charges.values())
+    assert_allclose(found.charges["current"].defect, dense_defect(hopping.matrix(), charges["current"].matrix()))
+    assert_allclose(found.charges["current"].defect, 0.0814, atol=5e-5)
+    assert hopping.commutator(charges["current"]).words == {}  # without a cut-off they commute
+    with pytest.raises(ValueError, match=r"'current' is not conserved: its commutator with the Hamiltonian is 0.0814"):
+        require_conserved(found, ["current"])

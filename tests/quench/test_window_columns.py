@@ -126,7 +126,7 @@ def test_a_sharp_number_is_held_and_shown_once():
 def test_where_symmetries_leave_too_few_levels_the_window_is_at_the_number():
     charges, start, options = study(8, ["pi", "pi", "0", "0"])
     found = compare(charges, start, **options)
-    assert found.sharp == {"magnetisation": 0.0, "translation^4": 0.0}
+    assert found.sharp == {"magnetisation": 0.0, "translation^4": 0.0, "translation^2 reflection": 1.0}
     assert any(n.startswith("No Gaussian window in the sector of the start") for n in found.notes)
     window = found.ensemble("Gaussian window at magnetisation = 0", sector=True)
     assert window.sector == {"magnetisation": 0.0}
@@ -181,7 +181,7 @@ def test_quantities_of_the_grand_canonical_fit(leaning):
 
 
 def test_quantities_that_are_not_defined_say_why():
-    charges, start, options = study(8, ["0", "pi"])
+    charges, start, options = study(8, ["0", "pi", "pi", "pi"])
     ring = Ring(8)
     density = {"h": "Sx[i]*Sx[i+1] + Sy[i]*Sy[i+1] + 0.6*Sz[i]*Sz[i+1]"}
     charges = {"energy": formula("h[i]", ring, {}, density), "magnetisation": charges["magnetisation"],
