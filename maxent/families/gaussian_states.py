@@ -240,7 +240,7 @@ class FermionState(NumberState, WordState):
 
         Right as far as entries of the covariance are, which are rounded to about 1e-16.  That leaves all digits of
         ``X_0 X_r`` at any distance where neighbours align (the transverse field below the coupling); where the field
-        wins, correlations more than about 1e-16 smaller than the determinant's entries allow are lost in rounding.
+        wins, correlations fall faster than the rounding does, and far away the logarithm is that of rounding.
 
         Raises
         ------
