@@ -134,7 +134,7 @@ def eigenstate_tests(setting: Setting) -> EigenstateTests:
     """
     chosen = _largest(setting, setting.matching, 1)
     if not chosen:
-        most = max(block.size for block in setting.matching.blocks)
+        most = max(_largest_size(setting, i) for i in range(len(setting.matching.blocks)))
         chosen = _largest(setting, setting.spectrum, OTHERS)
         text = f"Eigenstate tests: the sectors of the start have fewer than {LEAST} levels (at most {most})"
         if chosen:
@@ -156,6 +156,12 @@ def _largest(setting: Setting, spectrum: Spectrum, count: int) -> list[_Part]:
         found += [p for p in parts if p.weight > NOTHING or spectrum is not setting.matching]
         found = sorted(found, key=lambda p: -len(p.energies))[:count]
     return found
+
+
+def _largest_size(setting: Setting, number: int) -> int:
+    """Most levels of the sectors that a block of the start falls into."""
+    size = setting.matching.blocks[number].size
+    return size if size < LEAST else max(len(p.energies) for p in _parts(setting, setting.matching, number))
 
 
 def _test(setting: Setting, part: _Part) -> SectorTest:

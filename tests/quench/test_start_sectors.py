@@ -195,3 +195,13 @@ def test_a_start_with_spread_in_everything_has_no_sector():
     h = formula("Sx[i]*Sx[i+1] + 0.3*i*Sz[i] + 0.2*Sx[i]", chain)
     psi = np.random.default_rng(1).normal(size=32)
     assert find_sector(Charges({"energy": h}, "energy"), Start.from_vector(psi / np.linalg.norm(psi))) is None
+
+
+def test_fewer_levels_than_are_tested_are_counted_after_all_symmetries():
+    ring = Ring(10)
+    density = {"h": "Sx[i]*Sx[i+1] + Sy[i]*Sy[i+1] + 0.6*Sz[i]*Sz[i+1]"}
+    texts = {"energy": "h[i]", "magnetisation": "Sz[i]", "current": "1j*commutator(h[i], h[i+1])"}
+    charges = {name: formula(text, ring, {}, density) for name, text in texts.items()}
+    found = compare(charges, ProductState(ring, [0.3, 1.9], 0.0).vector(), blocks=(1,), ranking=False)
+    note = next(n for n in found.notes if n.startswith("Eigenstate tests"))
+    assert int(note.split("(at most ")[1].split(")")[0]) < 30
