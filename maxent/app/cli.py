@@ -146,7 +146,8 @@ def _check(given: argparse.Namespace) -> int:
     from maxent.app.run import check, sizes
     from maxent.text import number, table
 
-    config, job = check(given.config)
+    with _progress(quiet=False) as say:
+        config, job = check(given.config, say=say)
     rows = [
         (name, number(t.value, 12), number(t.sigma, 2), number(t.accuracy, 3), t.source)
         for name, t in job.targets.items()

