@@ -85,7 +85,7 @@ def test_images_of_states_bound_the_energies_from_below():
 
 @pytest.mark.parametrize("size", [18, 22, 28])
 def test_sizes_that_cannot_work_are_refused_in_one_line(tmp_path, capsys, monkeypatch, size):
-    monkeypatch.setattr(_workload, "available_memory", lambda: 16 << 30)
+    monkeypatch.setattr("maxent.memory.available_memory", lambda: 16 << 30)
     monkeypatch.setattr("maxent.lattice.terms.OperatorSum.matrix", lambda *_, **__: pytest.fail("built a matrix"))
     file = tmp_path / "c.toml"
     file.write_text(CONFIG.format(size=size, energy=XXZ))
@@ -95,7 +95,7 @@ def test_sizes_that_cannot_work_are_refused_in_one_line(tmp_path, capsys, monkey
 
 
 def test_a_long_problem_is_checked_without_its_blocks_and_says_what_it_takes(tmp_path, capsys, monkeypatch):
-    monkeypatch.setattr(_workload, "available_memory", lambda: 1 << 40)
+    monkeypatch.setattr("maxent.memory.available_memory", lambda: 1 << 40)
     monkeypatch.setattr(_workload, "require_memory", lambda *_: None)
     monkeypatch.setattr("maxent.lattice.terms.OperatorSum.matrix", lambda *_, **__: pytest.fail("built a matrix"))
     file = tmp_path / "c.toml"

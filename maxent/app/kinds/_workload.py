@@ -15,8 +15,9 @@ from dataclasses import dataclass
 from math import ceil, prod
 from typing import Any
 
+from maxent import memory
 from maxent.errors import ResourceError
-from maxent.memory import available_memory, require_memory, size_text
+from maxent.memory import require_memory, size_text
 from maxent.text import plural
 
 __all__ = ["Workload", "estimate"]
@@ -106,7 +107,7 @@ def estimate(charges: Mapping[str, Any], sites: Any, *, study: bool) -> Workload
     operators = list(charges.values())
     maps, real = _symmetries(operators, sites)
     group = prod(order for _, order in maps)
-    limit, each = available_memory(), 16 * 3 * m
+    limit, each = memory.available_memory(), 16 * 3 * m
     drawn = np.random.default_rng(0).choice(d, DRAWN) if d < 2**40 else np.arange(DRAWN)
     sizes: dict[int, float] = {}
     for state in map(int, drawn):
