@@ -121,7 +121,8 @@ class Comparison:
     times : (t,) ndarray
     traces : dict of str to (t,) ndarray
     speed, revival : float or None
-        Largest group velocity, given or estimated from the lowest excitations of neighbouring momenta, and L/(2 v).
+        Largest group velocity, given or estimated from the lowest levels of neighbouring momenta and from single
+        excitations, and L/(2 v).
     plateau : (float, float) or None
     horizon : float
         1/(smallest gap that takes part): only longer averages dephase everything.

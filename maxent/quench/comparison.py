@@ -217,8 +217,9 @@ def _speed(setting: Setting) -> float | None:
     slope = estimated_speed(setting.spectrum, setting.charges.basis, setting.charges.sites.size)
     if slope is not None:
         setting.notes.append(
-            f"Largest group velocity {slope:.3g} sites per time: estimated from the lowest excitations of "
-            "neighbouring momenta; give `speed` where it is known."
+            f"Largest group velocity {slope:.3g} sites per time: estimated from the lowest levels of neighbouring "
+            "momenta and from single excitations, where these are kept; faster ones shorten the times. Give `speed` "
+            "where it is known."
         )
     return slope
 

@@ -223,6 +223,8 @@ def _sharp(
         name = "" if n == found.energy else f" of {n}"
         facts[f"width{name}"] = window.widths[n]
         facts |= {f"lowest{name}": window.lowest[n], f"highest{name}": window.highest[n]}
+        if n != found.energy:
+            facts[f"mean of {n}"] = float(window.weights @ found.values[n])
     smoothing = SMOOTHING * widths[found.energy]
     try:
         slope = window.slope(smoothing)
@@ -292,7 +294,8 @@ def _single(setting: Setting, window: GaussianWindow, data: dict[str, np.ndarray
     closest = eigenstate_range(window, window.levels.energies)
     if closest.degeneracy > 1:
         setting.notes.append(
-            f"The eigenstate closest to the mean energy is {closest.degeneracy}-fold degenerate inside its sector: "
+            f"The eigenstate closest to the mean energy is {closest.degeneracy}-fold degenerate"
+            f"{' inside its sector' if setting.sharp else ''}: "
             "values of single eigenstates are one choice among many there."
         )
     distances, distance_ranges = _single_distances(setting, window)

@@ -94,6 +94,26 @@ def test_one_gaussian_state_is_cheap_and_nearly_right(tmp_path):
     np.testing.assert_allclose(list(others.values()), list(means.values()), atol=1e-6)
 
 
+@pytest.mark.parametrize(
+    ("sectors", "start", "said"),
+    [
+        ("odd", 'ground_of = "-X[i]*X[i+1] - 2*Z[i]"', r"sectors: the start has a weight of 1 in the even sector"),
+        ("even", 'pattern = ["up", "up", "up", "up", "up", "down"]', r"a weight of 1 in the odd sector"),
+        ("even", THERMAL, r"a weight of 0\.\d+ in the odd sector"),
+    ],
+)
+def test_a_sector_that_the_start_does_not_live_in(tmp_path, sectors, start, said):
+    text = SPINS.replace("GEOMETRY", "ring").replace("START", start)
+    with pytest.raises(ConfigError, match=said):
+        built(tmp_path, text, f'method = "gaussian"\nsectors = "{sectors}"\n')
+
+
+def test_the_sector_of_the_start_is_taken(tmp_path):
+    text = SPINS.replace("GEOMETRY", "ring").replace("START", 'ground_of = "-X[i]*X[i+1] - 2*Z[i]"')
+    result, _ = solved(built(tmp_path, text, 'method = "gaussian"\nsectors = "even"\n'))
+    assert str(result.verdict) == "solved"
+
+
 def test_a_covariance_from_a_file(tmp_path):
     g = np.zeros((12, 12))
     g[0::2, 1::2], g[1::2, 0::2] = -0.3 * np.eye(6), 0.3 * np.eye(6)

@@ -4,7 +4,8 @@ Each value stands beside its source; "from memory" where the number or formula w
 computation, not read in the source.  State = exp(-sum lam_j Q_j)/Z, k_B = hbar = 1, Ising energy -sum s s'.
 
 Larger tori and Onsager's lattice are in `tests/published/test_ising.py`.  Left out: Yang's magnetisation, which is no
-mean on a finite torus.  The infinite Ising chain is tested on open chains: their bonds and inner spins have the same multipliers.
+mean on a finite torus.  The infinite Ising chain is tested on open chains: their bonds and inner spins have the same
+multipliers.
 """
 
 from __future__ import annotations

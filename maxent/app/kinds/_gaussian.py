@@ -108,6 +108,7 @@ def gaussian_job(options: Any, parts: Mapping[int, Any], facts: Mapping[str, str
         targets: dict[str, Target] = part.targets(part.charges)
     except (TypeError, ValueError) as bad:
         raise BadInput([(("start",), str(bad))]) from bad
+    _refuse_other_parity(options, part)
     what = f"free {getattr(family, 'statistics', 'fermions in parity sectors')}"
     method = f"gaussian: {what}, {plural(len(sites.slots), 'mode')}"
     if options.sectors != "both":
@@ -132,6 +133,16 @@ def gaussian_job(options: Any, parts: Mapping[int, Any], facts: Mapping[str, str
         count=len(sites.slots),
         further=sections,
     )
+
+
+def _refuse_other_parity(options: Any, part: Any) -> None:
+    """Refuse a sector that the start does not live in, where the start knows its parity."""
+    wanted = {"even": 1, "odd": -1}.get(options.sectors)
+    start = as_gaussian(part.start, part.sites) if wanted and part.start is not None else None
+    weights = {p.parity: p.weight for p in start.parts} if start is not None else {}
+    if wanted and 0 not in weights and weights.get(-wanted, 0.0) > 0:
+        other, share = {1: "even", -1: "odd"}[-wanted], weights[-wanted] / sum(weights.values())
+        raise BadInput([(("sectors",), f"the start has a weight of {share:.3g} in the {other} sector")])
 
 
 def _broken(part: Any) -> Any:

@@ -60,7 +60,10 @@ class StartTable:
     beta: float | None = field(default=None, metadata=says("Inverse temperature of `thermal_of`."))
     file: str | None = field(
         default=None,
-        metadata=says("File with a vector or a density matrix, `name.npy` or `name.npz:array`."),
+        metadata=says(
+            "File with a vector or a density matrix, or, with the gaussian method, a covariance: `name.npy` or "
+            "`name.npz:array`."
+        ),
     )
 
     @property
