@@ -7,10 +7,7 @@ of spins a field charge.  Floor: quench.
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from typing import TYPE_CHECKING, NamedTuple
-
-import numpy as np
-import scipy.sparse as sp
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 from maxent.lattice import OperatorSum
 from maxent.quench.ensembles import Charges, Sector
@@ -21,7 +18,7 @@ from maxent.result import Result
 if TYPE_CHECKING:
     from maxent.quench.gaussian_charges import GaussianCharges
 
-__all__ = ["Potentials", "find_potentials", "thermodynamic_facts"]
+__all__ = ["Potentials", "find_potentials", "potential_of", "thermodynamic_facts"]
 
 #: Most states with charges that do not commute for which the self-checks, some twenty evaluations per charge, are made.
 CHECKED = 512
@@ -50,7 +47,6 @@ def find_potentials(
     Parameters
     ----------
     charges : Charges or GaussianCharges
-        Of the latter both `numbers` and `fields` are given: recognising takes matrices.
     broken : sequence of str, optional
         Charges that are not conserved are never recognised.
     numbers, fields : iterable of str, optional
@@ -77,7 +73,7 @@ def find_potentials(
         found[what] = tuple(
             n
             for n in charges.names
-            if n not in (charges.hamiltonian, *broken, *taken) and _sort(charges.operators[n]) == what
+            if n not in (charges.hamiltonian, *broken, *taken) and potential_of(charges.operators[n]) == what
         )
     return Potentials(found["numbers"], found["fields"])
 
@@ -97,20 +93,25 @@ def thermodynamic_facts(
     return found.quantities, check_result(result, family) if cheap else ()
 
 
-def _sort(op: OperatorSum) -> str:
-    """`numbers` or `fields` for a sum of diagonal one-site operators of particles or of spins; empty otherwise."""
-    if op.range > 1:
+def potential_of(operator: OperatorSum) -> str:
+    """`numbers` or `fields` for a sum of diagonal one-site operators of particles or of spins; empty otherwise.
+
+    Told from the words of the formula: it takes no matrix, whatever the number of states.
+    """
+    if operator.range > 1:
         return ""
-    q = op.matrix()
-    line = q.diagonal()
-    if (q - sp.diags_array(line)).count_nonzero():
-        return ""
-    sites = op.sites
-    table = line.reshape([slot.dimension for slot in sites.slots])
-    spins = []
-    for axis, (site, _) in enumerate(sites.homes):
-        if np.ptp(table.real, axis=axis).max() > 1e-12 * max(float(np.abs(line).max()), 1e-300):
-            spins.append("Sz" in {name for slot in sites.kind(site).slots for name in slot.symbols})
-    if not spins or (any(spins) and not all(spins)):
-        return ""
-    return "fields" if spins[0] else "numbers"
+    sites, sorts = operator.sites, set()
+    for word in operator.words:
+        for slot, letter in word:
+            if not _is_diagonal(sites.slots[slot], letter):
+                return ""
+            spin = any("Sz" in s.symbols for s in sites.kind(sites.homes[slot][0]).slots)
+            sorts.add("fields" if spin else "numbers")
+    return sorts.pop() if len(sorts) == 1 else ""
+
+
+def _is_diagonal(slot: Any, letter: int) -> bool:
+    if "Sz" not in slot.symbols:  # creators times annihilators: only those of equal powers are their own conjugates
+        return [other for _, other in slot.adjoint(letter)] == [letter]
+    matrix = slot.matrix(letter)
+    return all(i == j for i, j in zip(*matrix.nonzero(), strict=True))

@@ -179,7 +179,7 @@ def test_estimated_speed(text, speed, within):
     found = compare({"energy": formula(text, ring)}, start, blocks=(1, 2), ranking=False)
     assert found.speed == pytest.approx(speed, abs=within) and found.speed < speed
     assert found.revival == pytest.approx(10 / (2 * found.speed))
-    assert any("estimated from the lowest excitations" in note for note in found.notes)
+    assert any("estimated from the lowest levels of neighbouring momenta" in note for note in found.notes)
 
 
 @pytest.mark.parametrize(

@@ -137,6 +137,8 @@ def lattice_roles(options: Any, part: Any, problems: Problems) -> Roles | None:
     problems : Problems
         Receives what is wrong with the parameters.
     """
+    from maxent.quench.potentials import potential_of
+
     asked: LatticeThermodynamics = options.thermodynamics or LatticeThermodynamics()
     energy = asked.energy or options.hamiltonian
     if energy not in part.charges:
@@ -144,7 +146,7 @@ def lattice_roles(options: Any, part: Any, problems: Problems) -> Roles | None:
     named = {*(asked.numbers or ()), *(asked.fields or ())}
     found: dict[str, list[str]] = {"numbers": [], "fields": []}
     for name, operator in part.charges.items():
-        sort = "" if name == energy or name in named else _sort(operator)
+        sort = "" if name == energy or name in named else potential_of(operator)
         if sort and not part.charges[energy].commutator(operator).words:
             found[sort].append(name)
     numbers = found["numbers"] if asked.numbers is None else asked.numbers
@@ -153,27 +155,6 @@ def lattice_roles(options: Any, part: Any, problems: Problems) -> Roles | None:
     if options.method == "matrices" and options.start is not None:
         at_number = lambda result: _at_number(part, energy, numbers, result)
     return Roles(energy, tuple(numbers), tuple(fields), _couplings(options, part, energy, problems), at_number)
-
-
-def _sort(operator: Any) -> str:
-    """`numbers` or `fields` for a sum of diagonal one-site operators of particles or of spins; empty otherwise."""
-    if operator.range > 1:
-        return ""
-    sites, sorts = operator.sites, set()
-    for word in operator.words:
-        for slot, letter in word:
-            if not _is_diagonal(sites.slots[slot], letter):
-                return ""
-            spin = any("Sz" in s.symbols for s in sites.kind(sites.homes[slot][0]).slots)
-            sorts.add("fields" if spin else "numbers")
-    return sorts.pop() if len(sorts) == 1 else ""
-
-
-def _is_diagonal(slot: Any, letter: int) -> bool:
-    if "Sz" not in slot.symbols:  # creators times annihilators: only those of equal powers are their own conjugates
-        return [other for _, other in slot.adjoint(letter)] == [letter]
-    matrix = slot.matrix(letter)
-    return all(i == j for i, j in zip(*matrix.nonzero(), strict=True))
 
 
 # ---------------------------------------------------------------------- parameters
@@ -280,12 +261,13 @@ def _at_number(part: Any, energy: str, numbers: Sequence[str], result: Any) -> l
 def _total(sites: Any, hamiltonian: Any) -> dict[str, Any]:
     """The total number of particles, where there are any and the Hamiltonian conserves it."""
     from maxent.lattice import formula
+    from maxent.quench.potentials import potential_of
 
     try:
         number = formula("n[i]", sites)
     except FormulaError:
         return {}
-    return {} if _sort(number) != "numbers" or hamiltonian.commutator(number).words else {"number": number}
+    return {} if potential_of(number) != "numbers" or hamiltonian.commutator(number).words else {"number": number}
 
 
 def _sharp(start: Any, line: Any) -> tuple[int, bool]:
