@@ -341,6 +341,9 @@ def _solved(problem: Problem, memo: Memo, evidence: str) -> Outcome | None:
     """
     memo.at = settle(memo.family.evaluate, memo.here)
     values = memo.whitening.values(memo.here.evaluation.values)
+    if np.any(np.abs(values) > EARLY * problem.size):
+        memo.at = settle(memo.family.evaluate, memo.here, anyway=True)
+        values = memo.whitening.values(memo.here.evaluation.values)
     off = np.abs(values)
     if np.any(off > LATE * problem.size + problem.accuracy):
         missed = float(np.max(off / problem.size))

@@ -132,15 +132,17 @@ def at_floor(at: Iterate) -> Any:
     return at.residual <= at.evaluation.rounding
 
 
-def settle(evaluate: Callable[..., Evaluation], at: Iterate) -> Iterate:
+def settle(evaluate: Callable[..., Evaluation], at: Iterate, *, anyway: bool = False) -> Iterate:
     """The best of a few more steps at the rounding floor, where the exponent is so large that the floor is high.
+
+    With `anyway` they are tried wherever the floor is: what a family states as its rounding may be too much.
 
     Host only.  Near a boundary ``eps |lam.A|`` exceeds 1e-12 and single residuals scatter by a decade.  Values alone
     tell whether a step is worth its second derivatives.
     """
     best = at
     failed = 0
-    while best.evaluation.level > 1e3 and failed < 6:
+    while (anyway or best.evaluation.level > 1e3) and failed < 6:
         trust, (h, axes) = best.radius, (best.curvature, best.axes)
         floored = np.maximum(h, 1e-32 * h[-1] + 1e-300)
         # a shortened step leaves the same rounding error elsewhere: 1, 1/2, 1/4, ... of the Newton step

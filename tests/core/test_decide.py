@@ -314,7 +314,7 @@ def test_a_common_log_weight_changes_nothing_but_the_partition_function(shift):
 def test_a_state_that_misses_its_targets_solves_nothing(missed, verdict):
     """A proof of existence is one thing, the state at hand another: its values must be the targets."""
 
-    def astray(evaluate, at):
+    def astray(evaluate, at, *, anyway=False):
         return at._replace(evaluation=replace(at.evaluation, values=at.evaluation.values + 10 * missed))
 
     with pytest.MonkeyPatch.context() as patch:
