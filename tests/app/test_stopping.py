@@ -41,15 +41,17 @@ def begun(base):
 def test_a_run_that_is_stopped_leaves_no_folder(tmp_path, number, code, wait):
     (tmp_path / "long.toml").write_text(LONG)
     command = [sys.executable, "-m", "maxent", "solve", "long.toml", "--out", "deep/run", "--quiet"]
-    run = subprocess.Popen(command, cwd=tmp_path, stderr=subprocess.PIPE, text=True)
-    end = time.monotonic() + 60
-    while not begun(tmp_path) and run.poll() is None and time.monotonic() < end:
-        time.sleep(0.002)
-    assert begun(tmp_path)
-    time.sleep(wait)
-    run.send_signal(number)
-    assert run.wait(60) == code
-    assert run.communicate()[1] == "interrupted; nothing was written\n"
+    heard = lambda: signal.signal(number, signal.SIG_DFL)  # under nohup a child would inherit that it is ignored
+    with subprocess.Popen(command, cwd=tmp_path, stderr=subprocess.PIPE, text=True, preexec_fn=heard) as run:
+        end = time.monotonic() + 60
+        while not begun(tmp_path) and run.poll() is None and time.monotonic() < end:
+            time.sleep(0.002)
+        assert begun(tmp_path)
+        time.sleep(wait)
+        run.send_signal(number)
+        said = run.communicate(timeout=60)[1]
+    assert run.returncode == code
+    assert said == "interrupted; nothing was written\n"
     assert os.listdir(tmp_path) == ["long.toml"]
 
 
