@@ -44,8 +44,9 @@ def level_terms(x: Any, sign: int) -> tuple[Any, Any, Any]:
         small = xp.exp(-xp.abs(x))
         sum_ = 1.0 + small
         return xp.maximum(-x, 0.0) + xp.log1p(small), xp.where(x > 0, small, 1.0) / sum_, small / sum_**2
-    n = occupations(x, sign)
-    return (xp.log1p(n), n, n * (1.0 + n)) if sign else (n, n, n)
+    with np.errstate(divide="ignore", invalid="ignore"):  # bosons at trial points that do not confine them: no number
+        n = occupations(x, sign)
+        return (xp.log1p(n), n, n * (1.0 + n)) if sign else (n, n, n)
 
 
 def log_weights(x: Any, sign: int) -> Any:

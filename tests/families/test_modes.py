@@ -548,3 +548,13 @@ def test_decisions_do_not_whiten_anew_for_bounded_charges(monkeypatch):
     assert ask(gas("fermions"), 3, 1.7).success
     problem = Problem.pose(gas("fermions"), np.array([3.0, 1.7]))
     assert decisions.decide(problem).verdict is maxent.Verdict.SOLVED
+
+
+@pytest.mark.parametrize("statistics", ["bosons", "fermions"])
+def test_the_values_of_one_single_level(statistics):
+    """Four charges of a level on a curve, all particles in it: a vertex, reached without a warning of NumPy."""
+    e = np.random.default_rng(0).uniform(0, 4, 3000)
+    charges = {"number": np.ones(3000), "e": e, "e2": e**2 / 4, "e3": e**3 / 16}
+    result = maxent.solve(Modes(charges, statistics=statistics), {n: float(v[0]) for n, v in charges.items()})
+    assert str(result.verdict) == "boundary"
+    np.testing.assert_allclose([result.values[n] for n in charges], [v[0] for v in charges.values()], rtol=1e-9)
