@@ -40,9 +40,10 @@ def begun(base):
 )
 def test_a_run_that_is_stopped_leaves_no_folder(tmp_path, number, code, wait):
     (tmp_path / "long.toml").write_text(LONG)
-    command = [sys.executable, "-m", "maxent", "solve", "long.toml", "--out", "deep/run", "--quiet"]
-    heard = lambda: signal.signal(number, signal.SIG_DFL)  # under nohup a child would inherit that it is ignored
-    with subprocess.Popen(command, cwd=tmp_path, stderr=subprocess.PIPE, text=True, preexec_fn=heard) as run:
+    # under nohup the signal would be inherited as ignored
+    heard = f"import signal, sys; signal.signal({int(number)}, signal.SIG_DFL); from maxent.app.cli import main; "
+    command = [sys.executable, "-c", f"{heard}sys.exit(main(sys.argv[1:]))", "solve", "long.toml", "--out", "deep/run"]
+    with subprocess.Popen([*command, "--quiet"], cwd=tmp_path, stderr=subprocess.PIPE, text=True) as run:
         end = time.monotonic() + 60
         while not begun(tmp_path) and run.poll() is None and time.monotonic() < end:
             time.sleep(0.002)
