@@ -19,6 +19,8 @@ __all__ = ["quantity", "section", "self_check"]
 #: Work, in cubes of block sizes, above which self-checks go along one combination of the charges instead of along each:
 #: the third power of 250 is some 20 ms of one core, and there are twenty evaluations per charge.
 EVERY = 1e9
+#: Evaluations along that combination: enough for nine digits.
+FEW = 8
 #: Largest number of states for which derivatives by parameters are compared with those that JAX takes: it works without
 #: symmetries and compiles for seconds.
 BY_JAX = 300
@@ -45,7 +47,7 @@ def section(job: Job, result: Any, say: Callable[[str], None]) -> dict[str, Any]
     found: dict[str, Any] = {"energy": roles.energy, "numbers": list(roles.numbers), "fields": list(roles.fields)}
     if not result.success:
         return found | _at_the_limit(roles, result)
-    from maxent.quench.selfchecks import check_result
+    from maxent.quench.selfchecks import NODES, check_result
     from maxent.quench.thermodynamics import thermodynamics
 
     every = _work(job) * len(result.names) * 20 <= EVERY
@@ -59,7 +61,9 @@ def section(job: Job, result: Any, say: Callable[[str], None]) -> dict[str, Any]
         errors=errors,
     )
     quantities = [*thermo.quantities, *roles.at_number(result)]
-    checks = list(check_result(result, job.family, every=every, progress=lambda text: say(f"self-checks: {text}")))
+    nodes = NODES if every else FEW
+    told = lambda text: say(f"self-checks: {text}")
+    checks = list(check_result(result, job.family, nodes=nodes, every=every, progress=told))
     forces: list[Any] = []
     for coupling in roles.couplings:
         say(f"force of {coupling.name}")
