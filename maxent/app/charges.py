@@ -39,7 +39,7 @@ def search(
         Largest range.
     momenta : sequence of "0" and "pi"
     say : callable
-        Receives lines of progress when the work takes over 2 seconds.
+        Receives lines of progress.
 
     Returns
     -------

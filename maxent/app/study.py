@@ -6,7 +6,6 @@ Must not know: HTML, figures, the terminal.
 
 from __future__ import annotations
 
-import time
 from collections.abc import Callable
 from pathlib import Path as File
 from typing import Any
@@ -20,9 +19,6 @@ from maxent.errors import ResourceError
 
 __all__ = ["run", "section", "write_arrays"]
 
-#: Work that takes less than this many seconds is not told.
-QUIET = 2.0
-
 
 def run(config: Config, study: Study, say: Callable[[str], None]) -> Any:
     """Compare for every size.
@@ -33,7 +29,7 @@ def run(config: Config, study: Study, say: Callable[[str], None]) -> Any:
         For the lines of errors.
     study : Study
     say : callable
-        Receives lines of progress when the work takes over two seconds.
+        Receives lines of progress.
 
     Returns
     -------
@@ -49,7 +45,7 @@ def run(config: Config, study: Study, say: Callable[[str], None]) -> Any:
 
     try:
         make = compare_gaussian if study.gaussian else compare
-        return size_series(study.build, study.sizes, make=make, progress=_slowly(say))
+        return size_series(study.build, study.sizes, make=make, progress=say)
     except BadInput as bad:
         raise config.error(bad.problems) from bad
     except ResourceError as bad:
@@ -139,16 +135,3 @@ def _line(out: Any, name: str, dimension: str, values: Any, text: str) -> None:
     variable = out.createVariable(name, "d", (dimension,))
     variable[:] = np.asarray(values, dtype=float)
     variable.long_name = text.encode()
-
-
-def _slowly(say: Callable[[str], None]) -> Callable[[str], None]:
-    """Progress at most every two seconds: what is told is what is being done now."""
-    last = [time.monotonic()]
-
-    def told(text: str) -> None:
-        now = time.monotonic()
-        if now - last[0] >= QUIET:
-            last[0] = now
-            say(text)
-
-    return told

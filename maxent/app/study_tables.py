@@ -158,7 +158,7 @@ def _thermodynamics(c: Mapping[str, Any]) -> Table | None:
         checks = e["self_checks"]
         if checks:
             failed = [k["name"] for k in checks if not k["agrees"]]
-            worst = max(k["difference"] for k in checks if k["difference"] is not None)
+            worst = max((k["difference"] for k in checks if k["difference"] is not None), default=None)
             text = f"FAILED: {listing(failed, 'and')}" if failed else f"all {len(checks)} agree"
             rows.append(("self-checks", text, f"largest relative difference {number(worst, 2)}"))
     return Table(

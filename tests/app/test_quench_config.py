@@ -603,11 +603,10 @@ def test_errors_of_the_calculation_are_one_line(tmp_path, monkeypatch, error, be
     assert not (tmp_path / "run").exists()
 
 
-def test_progress_of_long_work_is_told(tmp_path, monkeypatch):
+def test_progress_of_long_work_is_told(tmp_path):
     from maxent.app import study
 
     told = []
-    monkeypatch.setattr(study, "QUIET", 0.0)
     file = tmp_path / "c.toml"
     file.write_text(QUENCH.replace("size = 6", "size = 4") + "ranking = false\n")
     config = load(file)
@@ -622,3 +621,13 @@ def test_check_shows_what_was_built(tmp_path, capsys):
     assert main(["check", str(file)]) == 0
     shown = capsys.readouterr().out
     assert "sizes          4, 6\n" in shown and "translation (" in shown and "ring of 6 spin-1/2 sites" in shown
+
+
+def test_self_checks_without_any_number_are_told_as_failed(done):
+    c = json.loads(json.dumps(done[1]["quench"]["comparisons"][-1]))
+    checks = [{"name": f"check {k}", "difference": None, "agrees": False} for k in (1, 2)]
+    c["ensembles"] = [c["ensembles"][0] | {"self_checks": checks}]
+    assert c["ensembles"][0]["kind"] == "canonical" and c["ensembles"][0]["quantities"]
+    tables = study_words.tables({"sizes": [8], "statements": [], "comparisons": [c]})
+    rows = next(t for t in tables if t.title == "Thermodynamics").rows
+    assert rows[-1] == ("self-checks", "FAILED: check 1 and check 2", "largest relative difference –")
