@@ -339,3 +339,20 @@ def test_public_names():
         assert getattr(maxent, name) is not None and name in dir(maxent)
     with pytest.raises(AttributeError, match="module 'maxent' has no attribute 'solver_of_all'"):
         _ = maxent.solver_of_all
+
+
+@pytest.mark.parametrize(
+    ("family", "targets", "accuracy"),
+    [
+        (DIE, {"pips": 6.5}, 0.6),
+        (DIE, {"pips": 6 - 1e-8}, 2e-8),
+        (Matrices({"x": [[0, 1], [1, 0]], "z": [[1, 0], [0, -1]]}), {"x": 0.8, "z": 0.7}, 0.09),
+        (Microstates({"a": np.arange(1, 7), "b": [0, 1, 0, 1, 0, 1]}), {"a": 6.3, "b": 1.2}, {"a": 0.4, "b": 0.3}),
+    ],
+)
+def test_a_boundary_that_only_the_accuracy_reaches_is_confirmed(family, targets, accuracy):
+    result = maxent.solve(family, targets, accuracy=accuracy)
+    assert result.verdict is maxent.Verdict.BOUNDARY
+    assert result.certificate.verify(family, targets)
+    beyond = {name: value + 2 * (value - result.values[name]) for name, value in targets.items()}
+    assert not result.certificate.verify(family, beyond)

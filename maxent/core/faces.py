@@ -8,13 +8,14 @@ targets outside (a tangent touches).  Floor: core.
 from __future__ import annotations
 
 from collections.abc import Callable
+from typing import NamedTuple
 
 import numpy as np
 
 from maxent.core.contract import EPS, Face, Problem, Verdict
 from maxent.core.outcome import Memo, Outcome
 
-__all__ = ["look", "on_face", "outside"]
+__all__ = ["Touching", "look", "on_face", "outside", "touching"]
 
 #: Recursion depth of faces of faces; each level removes at least one charge.
 DEEPEST = 12
@@ -29,6 +30,48 @@ NARROW = 1e-6
 CLEAR, SHARP = 1e-3, 1e-14
 
 Decide = Callable[..., Outcome]
+
+
+class Touching(NamedTuple):
+    """A direction that touches the reachable values at the targets, as far as rounding and accuracy tell.
+
+    Attributes
+    ----------
+    v : (m,) ndarray
+    margin, tolerance : float
+    face : Face
+        Ground space of ``v.Q``, its charges counted from the targets moved by `shift`.
+    shift : (m,) ndarray
+        What moves the targets onto the plane that v touches, shared out by their stated accuracies; zero where
+        rounding alone has them on it.
+    """
+
+    v: np.ndarray
+    margin: float
+    tolerance: float
+    face: Face
+    shift: np.ndarray
+
+
+def touching(problem: Problem, v: np.ndarray, margin: float, tolerance: float) -> Touching | None:
+    """The face that `v` exposes, or None where there is none.
+
+    Parameters
+    ----------
+    problem : Problem
+    v : (m,) ndarray
+    margin, tolerance : float
+        As `Problem.verify` finds them, the margin within the tolerance.
+    """
+    stated = float(np.abs(v) @ problem.accuracy)
+    rounding = tolerance - stated
+    family, shift = problem.family, np.zeros(len(v))
+    if stated and abs(margin) > rounding:
+        along = problem.accuracy**2 * v
+        shift = margin * along / (v @ along)
+        family = family.combine(np.eye(len(v)), shift)
+    face = family.face(v, rounding)
+    return None if face is None else Touching(v, margin, tolerance, face, shift)
 
 
 def outside(problem: Problem, memo: Memo, x: np.ndarray) -> Outcome | None:
@@ -64,36 +107,25 @@ def look(
     hit = outside(problem, memo, x)
     if hit:
         return hit
-    found: tuple[np.ndarray, float, float, Face] | None = None
-    shift: np.ndarray | None = None
+    found: Touching | None = None
     for candidate in _candidates(memo, x, step):
         v = memo.whitening.to_user(candidate)
         margin, tolerance = problem.verify(v)
         if margin > tolerance:
             return memo.outcome(problem, Verdict.INFEASIBLE, direction=v, margin=margin, tolerance=tolerance)
-        stated = float(np.abs(v) @ problem.accuracy)
-        rounding = tolerance - stated
-        if margin < -rounding - min(stated, NARROW * float(np.abs(v) @ problem.size)):
+        too_coarse = float(np.abs(v) @ problem.accuracy) - NARROW * float(np.abs(v) @ problem.size)
+        if margin < -tolerance + max(too_coarse, 0.0):
             memo.near.append((margin, candidate))
             continue
         memo.touched = True
-        off = _onto_plane(problem, v, margin) if stated and abs(margin) > rounding else None
-        family = problem.family if off is None else problem.family.combine(np.eye(len(off)), off)
-        face = family.face(v, rounding)
-        if face is not None and (found is None or _sharper(face, found[3])):
-            found = (v, margin, tolerance, face)
-            shift = off
-            if face.gap > CLEAR and face.width < SHARP:
+        seen = touching(problem, v, margin, tolerance)
+        if seen is not None and (found is None or _sharper(seen.face, found.face)):
+            found = seen
+            if seen.face.gap > CLEAR and seen.face.width < SHARP:
                 break
-    if found is None or memo.depth >= DEEPEST or (found[3].gap < 1e-6 and not late):
+    if found is None or memo.depth >= DEEPEST or (found.face.gap < 1e-6 and not late):
         return None
-    return _descend(problem, memo, found, shift, decide, late=late)
-
-
-def _onto_plane(problem: Problem, v: np.ndarray, margin: float) -> np.ndarray:
-    """Shift of the targets onto the plane that v touches, shared out by their stated accuracies."""
-    along = problem.accuracy**2 * v
-    return margin * along / (v @ along)
+    return _descend(problem, memo, found, decide, late=late)
 
 
 def _sharper(face: Face, than: Face) -> bool:
@@ -123,26 +155,13 @@ def on_face(problem: Problem, face: Face) -> Problem:
     return Problem(face.family, problem.noise + turned * problem.family.scale, problem.accuracy)
 
 
-def _descend(
-    problem: Problem,
-    memo: Memo,
-    found: tuple[np.ndarray, float, float, Face],
-    shift: np.ndarray | None,
-    decide: Decide,
-    *,
-    late: bool,
-) -> Outcome | None:
-    """Solve on the face, and accept the boundary only if its state reproduces the targets.
-
-    The face is that of the targets moved by `shift`, where only their accuracy brings them onto it.
-    """
-    v, margin, tolerance, face = found
+def _descend(problem: Problem, memo: Memo, found: Touching, decide: Decide, *, late: bool) -> Outcome | None:
+    """Solve on the face, and accept the boundary only if its state reproduces the targets."""
+    v, margin, tolerance, face, shift = found
     below = decide(on_face(problem, face), depth=memo.depth + 1)
     memo.iterations += below.iterations
     settled = below.verdict in (Verdict.SOLVED, Verdict.BOUNDARY)
-    values = below.values if settled else None
-    if values is not None and shift is not None:
-        values = values + shift
+    values = below.values + shift if settled and below.values is not None else None
     residual = np.inf if values is None else np.abs(values)
     allowed = (LATE if late else EARLY) * problem.size + problem.accuracy
     if not np.all(residual <= allowed):

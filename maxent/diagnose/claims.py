@@ -18,7 +18,7 @@ import numpy as np
 
 from maxent.core.contract import Family, Problem
 from maxent.core.decide import decide
-from maxent.core.faces import on_face
+from maxent.core.faces import on_face, touching
 from maxent.core.relaxed import limit_on_face
 from maxent.core.slack import Slack
 
@@ -98,7 +98,7 @@ def check_claim(
         faults.append("the combination of the charges is not one number in every state")
     if kind == "face" and not abs(margin) <= tolerance:
         faults.append(f"the margin {margin:.6g} is not zero within the tolerance {tolerance:.2g}")
-    elif kind == "face" and not _lives_on_face(problem, slack, v, tolerance):
+    elif kind == "face" and not _lives_on_face(problem, slack, v, margin, tolerance):
         faults.append("no state of the lowest value of the combination has these values")
     faults += _differences(stated, found, rounding)
     return Check(not faults, **found, faults=tuple(faults))
@@ -120,15 +120,15 @@ def _is_number(problem: Problem, v: np.ndarray, rounding: float) -> bool:
     return bool(low.highest - low.value <= CONSTANT * rounding)
 
 
-def _lives_on_face(problem: Problem, slack: Slack, v: np.ndarray, tolerance: float) -> bool:
+def _lives_on_face(problem: Problem, slack: Slack, v: np.ndarray, margin: float, tolerance: float) -> bool:
     """Whether some state on the ground space of ``v.Q`` has what is asked."""
     if slack.any:
         return limit_on_face(problem, slack, v, tolerance) is not None
-    face = problem.family.face(v, tolerance)
-    if face is None:
+    found = touching(problem, v, margin, tolerance)
+    below = None if found is None else decide(on_face(problem, found.face), depth=1).values
+    if found is None or below is None:
         return False
-    below = decide(on_face(problem, face), depth=1).values
-    return below is not None and bool(np.all(np.abs(below) <= REPRODUCED * problem.size + problem.accuracy))
+    return bool(np.all(np.abs(below + found.shift) <= REPRODUCED * problem.size + problem.accuracy))
 
 
 def _differences(stated: Mapping[str, float], found: Mapping[str, float], rounding: float) -> Iterator[str]:
