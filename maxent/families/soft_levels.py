@@ -11,14 +11,12 @@ from __future__ import annotations
 import numpy as np
 
 from maxent.core.contract import EPS
+from maxent.families.twofold import two_product, two_sum
 
 __all__ = ["resolved"]
 
 #: Levels below this part of the largest one are worked on.
 SOFT = 1e-3
-
-#: Splits a double into two halves of 26 bits.
-SPLITTER = 134217729.0
 
 #: Sums of two doubles that do not overlap.
 Pair = tuple[np.ndarray, np.ndarray]
@@ -43,7 +41,7 @@ def resolved(
     levels, vectors = levels.copy(), vectors.copy()
     for b in np.flatnonzero(soft):
         k = int(np.sum(levels[b] < SOFT * levels[b, -1]))
-        block, known = _added(_times(lam[:, None, None], _real(charges[:, b]))), vectors[b]
+        block, known = _added(two_product(lam[:, None, None], _real(charges[:, b]))), vectors[b]
         low, high = known[:, :k], known[:, k:]
         high_part, low_part = _product(block, _columns(low))
         flat = _real(low).T
@@ -73,40 +71,20 @@ def _columns(vectors: np.ndarray) -> np.ndarray:
     return np.concatenate([vectors.real, vectors.imag]) if np.iscomplexobj(vectors) else vectors
 
 
-def _sum(a: np.ndarray, b: np.ndarray) -> Pair:
-    """``a + b`` and its rounding error (D. Knuth's six operations)."""
-    total = a + b
-    other = total - a
-    return total, (a - (total - other)) + (b - other)
-
-
-def _split(a: np.ndarray) -> Pair:
-    scaled = SPLITTER * a
-    top = scaled - (scaled - a)
-    return top, a - top
-
-
-def _times(a: np.ndarray, b: np.ndarray) -> Pair:
-    """``a b`` and its rounding error."""
-    product = a * b
-    (a1, a2), (b1, b2) = _split(a), _split(b)
-    return product, a2 * b2 - (((product - a1 * b1) - a2 * b1) - a1 * b2)
-
-
 def _added(terms: Pair) -> Pair:
     """The sum over the first axis, two halves at a time."""
     high, low = terms
     while len(high) > 1:
         half = len(high) // 2
-        total, error = _sum(high[:half], high[half : 2 * half])
+        total, error = two_sum(high[:half], high[half : 2 * half])
         low_ = low[:half] + low[half : 2 * half] + error
         high = np.concatenate([total, high[2 * half :]])
         low = np.concatenate([low_, low[2 * half :]])
-    return _sum(high[0], low[0])
+    return two_sum(high[0], low[0])
 
 
 def _product(matrix: Pair, x: np.ndarray, y: np.ndarray | float = 0.0) -> Pair:
     """The matrix times ``x + y``, columns (d, k)."""
     left, rest = matrix[0].T[:, :, None], matrix[1].T[:, :, None]
-    high, low = _times(left, x[:, None, :])
+    high, low = two_product(left, x[:, None, :])
     return _added((high, low + rest * x[:, None, :] + left * np.broadcast_to(y, x.shape)[:, None, :]))

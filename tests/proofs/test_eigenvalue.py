@@ -10,8 +10,9 @@ from hypothesis import strategies as st
 
 from maxent.diagnose.proofs.bounds import UNIT, above, below, gamma, matrix_norm, scaled
 from maxent.diagnose.proofs.cholesky import ADVANCE, COMPUTED, lowest_eigenvalue
-from maxent.diagnose.proofs.combine import combined_twice, two_product, two_sum
+from maxent.diagnose.proofs.combine import combined_twice
 from maxent.diagnose.proofs.remainder import remainder_norm
+from maxent.families.twofold import two_product, two_sum
 from tests.proofs.elimination import combination, is_positive_semidefinite, smallest_eigenvalue
 
 NEVER = Fraction(-(10**9))  # asked so low that the bound in advance is good enough

@@ -8,7 +8,9 @@ from typing import Any
 import numpy as np
 import scipy.sparse as sp
 
-__all__ = ["combined", "combined_twice", "two_product", "two_sum"]
+from maxent.families.twofold import two_product, two_sum
+
+__all__ = ["combined", "combined_twice", "dense"]
 
 
 def combined(w: np.ndarray, charges: Sequence[Any]) -> tuple[np.ndarray, np.ndarray]:
@@ -49,25 +51,3 @@ def combined_twice(w: np.ndarray, charges: Sequence[Any]) -> Iterable[tuple[np.n
 def dense(q: Any) -> np.ndarray:
     """The numbers of a charge as an ndarray."""
     return q.toarray() if sp.issparse(q) else np.asarray(q)
-
-
-def two_sum(a: np.ndarray, b: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """``a + b`` and its rounding error, exactly (D. E. Knuth)."""
-    s = a + b
-    t = s - a
-    return s, (a - (s - t)) + (b - t)
-
-
-def two_product(a: Any, b: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """``a b`` and its rounding error, exactly unless it underflows (T. J. Dekker, G. W. Veltkamp)."""
-    p = a * b
-    a1, a2 = _halves(np.asarray(a))
-    b1, b2 = _halves(b)
-    return p, a2 * b2 - (((p - a1 * b1) - a2 * b1) - a1 * b2)
-
-
-def _halves(a: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Two numbers of 26 bits with sum a."""
-    c = 134217729.0 * a
-    high = c - (c - a)
-    return high, a - high

@@ -14,7 +14,8 @@ from typing import Any
 import numpy as np
 
 from maxent.diagnose.proofs.bounds import TINY, UNIT, gamma, matrix_norm
-from maxent.diagnose.proofs.combine import combined_twice, two_sum
+from maxent.diagnose.proofs.combine import combined_twice
+from maxent.families.twofold import two_sum
 
 __all__ = ["remainder_norm", "remainder_trace_norm"]
 

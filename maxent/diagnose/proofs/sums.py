@@ -11,7 +11,7 @@ from fractions import Fraction
 
 import numpy as np
 
-from maxent.diagnose.proofs.combine import two_product
+from maxent.families.twofold import two_product
 
 __all__ = ["dot", "exact_dot", "exact_sum"]
 
