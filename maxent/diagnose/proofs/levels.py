@@ -6,39 +6,15 @@ add up to is an exact sum, and the few levels in doubt are computed in fractions
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from fractions import Fraction
 
 import numpy as np
 
 from maxent.diagnose.proofs.bounds import UNIT
+from maxent.diagnose.proofs.listed import EXACT, heights
 from maxent.diagnose.proofs.sums import dot, exact_dot
 
-__all__ = ["deepest_level", "lowest_filled", "lowest_heights"]
-
-#: Levels per pass: the charges of one pass stay in the cache.
-PASS = 1 << 15
-
-#: Products of fractions that are worth computing; beyond it the bounds of the float pass stand.
-EXACT = 60_000
-
-
-def lowest_heights(w: np.ndarray, charges: np.ndarray) -> Iterator[tuple[slice, np.ndarray, np.ndarray]]:
-    """``w.q_k`` of every level with a bound of its rounding, pass by pass: slice, heights, radii.
-
-    Raises
-    ------
-    OverflowError
-    """
-    m, n = charges.shape
-    unit, tiny = float(2 * (m + 4) * UNIT), (m + 1) * 2.0**-1020
-    for i in range(0, n, PASS):
-        q = charges[:, i : i + PASS]
-        with np.errstate(over="ignore", invalid="ignore"):
-            height, radius = w @ q, unit * (np.abs(w) @ np.abs(q)) + tiny
-        if not np.isfinite(height).all() or not np.isfinite(radius).all():
-            raise OverflowError("the charges overflow")
-        yield slice(i, i + PASS), height, radius
+__all__ = ["deepest_level", "lowest_filled"]
 
 
 def lowest_filled(w: np.ndarray, charges: np.ndarray, copies: np.ndarray) -> tuple[Fraction, bool]:
@@ -54,7 +30,7 @@ def lowest_filled(w: np.ndarray, charges: np.ndarray, copies: np.ndarray) -> tup
     exact = [Fraction(x) for x in w.tolist()]
     filled, doubtful = np.zeros(charges.shape[1], bool), np.zeros(charges.shape[1], bool)
     lost = Fraction(0)
-    for part, height, radius in lowest_heights(w, charges):
+    for part, height, radius in heights(w, charges):
         filled[part], doubtful[part] = height < -radius, np.abs(height) <= radius
         # a level in doubt lies above -2 radius; only needed if there are too many of them
         lost += Fraction(float(copies[part] @ np.where(doubtful[part], radius, 0.0))) * Fraction(5, 2)
@@ -85,9 +61,7 @@ def deepest_level(w: np.ndarray, charges: np.ndarray, anchor: np.ndarray) -> tup
     exact, base = [Fraction(x) for x in w.tolist()], [Fraction(x) for x in anchor.tolist()]
     doubtful = np.zeros(charges.shape[1], bool)
     rough, depth = 0.0, 0.0
-    for (part, height, radius), (_, confined, blur) in zip(
-        lowest_heights(w, charges), lowest_heights(anchor, charges), strict=True
-    ):
+    for (part, height, radius), (_, confined, blur) in zip(heights(w, charges), heights(anchor, charges), strict=True):
         least = confined - blur
         if not least.min(initial=1.0) > 0:
             return None
@@ -97,6 +71,6 @@ def deepest_level(w: np.ndarray, charges: np.ndarray, anchor: np.ndarray) -> tup
     at = np.flatnonzero(doubtful)
     if len(at) * len(w) > EXACT:
         return Fraction(rough) * (1 + 8 * UNIT), Fraction(depth) * (1 + 8 * UNIT)
-    heights = [(dot(exact, q), dot(base, q)) for q in charges[:, at].T]
-    ratios = [(-height / confined, -height) for height, confined in heights if height < 0]
+    pairs = [(dot(exact, q), dot(base, q)) for q in charges[:, at].T]
+    ratios = [(-height / confined, -height) for height, confined in pairs if height < 0]
     return max((x for x, _ in ratios), default=Fraction(0)), max((y for _, y in ratios), default=Fraction(0))
