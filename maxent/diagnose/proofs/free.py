@@ -79,6 +79,7 @@ def bound_of_bilinears(family: Bilinears, v: np.ndarray, targets: np.ndarray) ->
     (w, exponent), direction = pair, [Fraction(x) for x in v.tolist()]
     back, constant = Fraction(2) ** exponent, np.array([q.constant for q in operators])
     if family.number is not None:  # of bosons all in the lowest level
+        assert isinstance(body, Matrices)  # as the family asks for
         fermions = family.statistics == "fermions"
         low = body.filled_with(w, family.number) if fermions else family.number * body.lowest_level(w)
     elif family.statistics == "fermions":
@@ -88,11 +89,11 @@ def bound_of_bilinears(family: Bilinears, v: np.ndarray, targets: np.ndarray) ->
         size = Fraction(float(np.abs(w) @ body.sizes)) * body.width
         if depth < -LOOSE * EPS * size:
             return Bound(None, False, PARTS, tuple(direction))
-        anchor, shift = scaled(np.asarray(family.particles.confining, float), body.sizes) or (None, 0)
-        height = Fraction(0) if anchor is None else body.lowest_level(anchor) * Fraction(2) ** shift
-        if depth < 0 and not height > 0:
-            return Bound(None, False, PARTS, tuple(direction))
         if depth < 0:
+            anchor, shift = scaled(np.asarray(family.particles.confining, float), body.sizes) or (None, 0)
+            height = Fraction(0) if anchor is None else body.lowest_level(anchor) * Fraction(2) ** shift
+            if not height > 0:
+                return Bound(None, False, PARTS, tuple(direction))
             direction = _moved(direction, -depth * back / height, family.particles.confining)
         low = Fraction(0)
     return Bound(low * back + _empty(direction, constant, targets), False, PARTS, tuple(direction))
@@ -119,7 +120,6 @@ class OneBody(Protocol):
     @property
     def width(self) -> int: ...
     def filled(self, w: np.ndarray) -> Fraction: ...
-    def filled_with(self, w: np.ndarray, number: int) -> Fraction: ...
     def lowest_level(self, w: np.ndarray) -> Fraction: ...
 
 
@@ -232,7 +232,7 @@ class Ring:
         p, where = like.modes_per_cell, {"antiperiodic": like.antiperiodic, "p": like.modes_per_cell}
         hopping = combined_amplitudes(w, [q.hopping for q in self.operators], back=1, p=p)
         pairing = combined_amplitudes(w, [q.pairing for q in self.operators], back=-1, p=p)
-        trace = sum((hopping[0][a][a][0] for a in range(p)), Fraction(0)) if 0 in hopping else Fraction(0)
+        trace = sum((hopping[0].real[a, a] for a in range(p)), Fraction(0)) if 0 in hopping else Fraction(0)
         h, error = at_momenta(hopping, like.cells, **where)
         if not any(q.pairing for q in self.operators):
             return h, np.broadcast_to(error, h.shape), False, trace
@@ -249,10 +249,6 @@ class Ring:
             return exact_sum(np.minimum(blocks.real - WIDER * error, 0.0).ravel())
         low = stack_filled(blocks, error)
         return (low + len(blocks) * trace) / 2 if paired else low
-
-    def filled_with(self, w: np.ndarray, number: int) -> Fraction:
-        """Rings of a fixed number are given by matrices."""
-        raise NotImplementedError("a fixed number of particles on a ring is given by matrices")
 
     def lowest_level(self, w: np.ndarray) -> Fraction:
         """A number that no level lies below."""

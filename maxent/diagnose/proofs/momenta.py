@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from fractions import Fraction
 from functools import lru_cache
+from typing import NamedTuple
 
 import numpy as np
 
@@ -19,8 +20,19 @@ __all__ = ["at_momenta", "combined_amplitudes", "roots_of_unity"]
 #: Bits behind the point.
 BITS = 192
 
-#: Amplitude by distance: entries are pairs (real part, imaginary part) of fractions.
-Amplitudes = dict[int, list[list[tuple[Fraction, Fraction]]]]
+#: The numbers of an array as fractions.
+_fractions = np.vectorize(Fraction, otypes=[object])
+
+
+class Amplitude(NamedTuple):
+    """Real and imaginary parts (p, p) in fractions."""
+
+    real: np.ndarray
+    imag: np.ndarray
+
+
+#: By distance.
+Amplitudes = dict[int, Amplitude]
 
 
 @lru_cache(maxsize=4)
@@ -77,32 +89,19 @@ def combined_amplitudes(w: np.ndarray, charges: Sequence[Mapping[int, np.ndarray
         1: ``t_{-r} = t_r^H`` (hopping); -1: ``t_{-r} = -t_r^T`` (pairing).
     p : int
     """
-    weights = [Fraction(x) for x in w.tolist()]
-    none = (Fraction(0), Fraction(0))
+    none = np.full((p, p), Fraction(0))
     total: Amplitudes = {}
-    for weight, amplitudes in zip(weights, charges, strict=True):
-        for r, t in amplitudes.items():
+    for weight, amplitudes in zip(w.tolist(), charges, strict=True):
+        for r, t in amplitudes.items() if weight else ():
             a = np.asarray(t, complex)
-            if not weight:
-                continue
             if not np.isfinite(a).all():
                 raise OverflowError("amplitudes that are not finite")
-            sums = total.setdefault(r, [[none] * p for _ in range(p)])
-            for i in range(p):
-                for j in range(p):
-                    re, im = sums[i][j]
-                    real, imaginary = Fraction(float(a[i, j].real)), Fraction(float(a[i, j].imag))
-                    sums[i][j] = re + weight * real, im + weight * imaginary
-    conjugate = -1 if back > 0 else 1
+            here, weighted = total.get(r, Amplitude(none, none)), Fraction(weight)
+            total[r] = Amplitude(here.real + weighted * _fractions(a.real), here.imag + weighted * _fractions(a.imag))
     out: Amplitudes = {}
     for r in {*total, *(-r for r in total)}:
-        here, there = total.get(r), total.get(-r)
-        out[r] = [[none] * p for _ in range(p)]
-        for i in range(p):
-            for j in range(p):
-                x, y = none if here is None else here[i][j]
-                u, v = none if there is None else there[j][i]
-                out[r][i][j] = (x + back * u) / 2, (y + back * conjugate * v) / 2
+        here, there = total.get(r, Amplitude(none, none)), total.get(-r, Amplitude(none, none))
+        out[r] = Amplitude((here.real + back * there.real.T) / 2, (here.imag - there.imag.T) / 2)
     return out
 
 
@@ -112,7 +111,7 @@ def at_momenta(amplitudes: Amplitudes, cells: int, *, antiperiodic: bool, p: int
     roots, m = roots_of_unity(turns * cells), turns * np.arange(cells) + antiperiodic
     total, size = np.zeros((cells, p, p), complex), np.zeros((p, p))
     for r, t in amplitudes.items():
-        a = np.array([[complex(float(x), float(y)) for x, y in row] for row in t])
+        a = t.real.astype(float) + 1j * t.imag.astype(float)
         total += roots[(m * r) % (turns * cells)][:, None, None] * a
         size += np.abs(a)
     # sqrt 2 u for the root and for the amplitude, sqrt 2 gamma_2 for the product, and the sum
