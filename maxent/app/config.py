@@ -19,7 +19,7 @@ from pathlib import Path as File
 from typing import Any, Literal
 
 from maxent.app import kinds
-from maxent.app.job import BadInput, Job, Problems, says
+from maxent.app.job import STRICT, BadInput, Job, Problems, says
 from maxent.app.locate import Path, Positions, locate, repeated
 from maxent.errors import ConfigError, ResourceError
 from maxent.text import listing, suggestion
@@ -33,7 +33,7 @@ _OPEN = {"log_weights", "log_prior"}  # where -inf is a value: it drops a state
 class Header:
     """Keys on top of every config, whatever its kind."""
 
-    __pydantic_config__ = {"extra": "forbid", "strict": True}
+    __pydantic_config__ = STRICT
 
     kind: str = field(metadata=says("What the config describes; decides which further keys exist."))
     title: str = field(default="", metadata=says("One line for the head of the report."))

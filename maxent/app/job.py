@@ -18,9 +18,12 @@ if TYPE_CHECKING:
     from maxent.app.sections import Section
 
 __all__ = [
-    "ACCURACY", "TARGET", "BadInput", "Coupling", "Job", "Problems", "Roles", "Room", "Study", "Target", "check_target",
-    "given_target", "says",
+    "ACCURACY", "STRICT", "TARGET", "BadInput", "Coupling", "Job", "Problems", "Roles", "Room", "Study", "Target",
+    "check_target", "given_target", "says",
 ]  # fmt: skip
+
+#: Of every table of a config: unknown keys and wrong types are refused (`__pydantic_config__`).
+STRICT: Any = {"extra": "forbid", "strict": True}
 
 ACCURACY = (
     "Name of a charge -> how far its target may be off because of rounding when it was computed; "
@@ -78,7 +81,7 @@ class Problems:
 class Room:
     """What a target leaves open, as an inline table of the config; exactly one key is given."""
 
-    __pydantic_config__ = {"extra": "forbid", "strict": True}
+    __pydantic_config__ = STRICT
 
     within: list[float] | None = None
     at_most: float | None = None

@@ -10,11 +10,10 @@ from dataclasses import dataclass, field
 from math import log2, prod
 from typing import Any, Literal
 
-from maxent.app.job import Problems, says
+from maxent.app.job import STRICT, Problems, says
 
-__all__ = ["STRICT", "BosonSites", "FermionSites", "Geometry", "SpinSites"]
+__all__ = ["BosonSites", "FermionSites", "Geometry", "SpinSites"]
 
-STRICT: Any = {"extra": "forbid", "strict": True}
 Step = int | list[int | str]
 
 #: Cells of a ladder, and its bonds.

@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING, Any, Literal
 
 from maxent.app.job import (
     ACCURACY,
+    STRICT,
     TARGET,
     BadInput,
     Job,
@@ -26,7 +27,7 @@ from maxent.app.job import (
     says,
 )  # fmt: skip
 from maxent.app.kinds._gaussian import METHOD, SECTORS, check_gaussian, gaussian_job
-from maxent.app.kinds._geometry import STRICT, Geometry
+from maxent.app.kinds._geometry import Geometry
 from maxent.app.kinds._momentum import MOMENTUM, Momentum
 from maxent.app.kinds._names import check_names
 from maxent.app.kinds._starts import StartMaker, StartTable, as_start

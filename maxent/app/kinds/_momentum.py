@@ -9,8 +9,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
-from maxent.app.job import Problems, says
-from maxent.app.kinds._geometry import STRICT
+from maxent.app.job import STRICT, Problems, says
 
 if TYPE_CHECKING:
     import numpy as np

@@ -12,8 +12,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
-from maxent.app.job import BadInput, Problems, says
-from maxent.app.kinds._geometry import STRICT
+from maxent.app.job import STRICT, BadInput, Problems, says
 from maxent.app.locate import Path
 from maxent.errors import FormulaError, ResourceError
 from maxent.text import listing, plural

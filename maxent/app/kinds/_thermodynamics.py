@@ -11,7 +11,7 @@ from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
-from maxent.app.job import Coupling, Problems, Roles, says
+from maxent.app.job import STRICT, Coupling, Problems, Roles, says
 from maxent.errors import FormulaError, ResourceError
 from maxent.text import listing, plural, suggestion
 
@@ -29,7 +29,7 @@ SECTOR = 2000
 class Thermodynamics:
     """Roles of the charges."""
 
-    __pydantic_config__ = {"extra": "forbid", "strict": True}
+    __pydantic_config__ = STRICT
 
     energy: str | None = field(
         default=None,
@@ -51,7 +51,7 @@ class Thermodynamics:
 class LatticeThermodynamics(Thermodynamics):
     """Roles of the charges, and parameters of their formulas."""
 
-    __pydantic_config__ = {"extra": "forbid", "strict": True}
+    __pydantic_config__ = STRICT
 
     parameters: list[str] = field(
         default_factory=list,

@@ -8,8 +8,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 
-from maxent.app.job import says
-from maxent.app.kinds._geometry import STRICT, FermionSites
+from maxent.app.job import STRICT, says
+from maxent.app.kinds._geometry import FermionSites
 from maxent.app.kinds._lattice import LatticeOptions, build, hamiltonian
 from maxent.app.kinds._starts import OccupationStart
 

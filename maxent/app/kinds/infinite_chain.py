@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
-from maxent.app.job import BadInput, Job, Problems, Target, says
+from maxent.app.job import STRICT, BadInput, Job, Problems, Target, says
 from maxent.app.kinds._truncation import SITES, sections, word_mean
 from maxent.errors import FormulaError
 from maxent.text import number
@@ -24,7 +24,6 @@ if TYPE_CHECKING:
 
 __all__ = ["ChainTable", "Options", "StartField", "build"]
 
-STRICT: Any = {"extra": "forbid", "strict": True}
 #: Charges and block sizes up to this are resolved by the momenta of the fit.
 MOST = 64
 #: Momenta of the fits are 2^LEAST + 1 at least, more where occupations are steep.

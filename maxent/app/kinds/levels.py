@@ -14,7 +14,19 @@ from typing import Any, Literal
 import numpy as np
 
 from maxent.app.data import Files
-from maxent.app.job import ACCURACY, TARGET, BadInput, Job, Problems, Room, Target, check_target, given_target, says
+from maxent.app.job import (
+    ACCURACY,
+    STRICT,
+    TARGET,
+    BadInput,
+    Job,
+    Problems,
+    Room,
+    Target,
+    check_target,
+    given_target,
+    says,
+)
 from maxent.app.kinds._fillings import condensate_remarks, occupation_section
 from maxent.app.kinds._thermodynamics import THERMODYNAMICS, Thermodynamics, check_roles, roles
 from maxent.app.locate import Path
@@ -23,7 +35,6 @@ from maxent.text import listing, number, plural
 
 __all__ = ["Grid", "Options", "build"]
 
-STRICT: Any = {"extra": "forbid", "strict": True}
 #: Levels of a formula, which is read once per level.
 MOST = 20000
 #: Levels whose own occupations may be the charges.

@@ -14,7 +14,7 @@ from typing import Any, cast
 import numpy as np
 
 from maxent.app.data import Files
-from maxent.app.job import ACCURACY, TARGET, Job, Problems, Room, check_target, given_target, says
+from maxent.app.job import ACCURACY, STRICT, TARGET, Job, Problems, Room, check_target, given_target, says
 from maxent.app.kinds._building import build_family
 from maxent.app.kinds._thermodynamics import THERMODYNAMICS, Thermodynamics, check_roles, roles
 from maxent.text import number, plural
@@ -26,7 +26,7 @@ __all__ = ["Options", "build"]
 class Options:
     """Keys of a config of kind `operators`."""
 
-    __pydantic_config__ = {"extra": "forbid", "strict": True}
+    __pydantic_config__ = STRICT
 
     charges: dict[str, list[list[float | str]] | str] = field(
         metadata=says(

@@ -14,7 +14,7 @@ from typing import Any, Literal
 import numpy as np
 
 from maxent.app.data import Files
-from maxent.app.job import ACCURACY, TARGET, Job, Problems, Room, Target, check_target, given_target, says
+from maxent.app.job import ACCURACY, STRICT, TARGET, Job, Problems, Room, Target, check_target, given_target, says
 from maxent.app.kinds._building import build_family
 from maxent.app.kinds._thermodynamics import THERMODYNAMICS, Thermodynamics, check_roles, roles
 from maxent.text import plural
@@ -26,7 +26,7 @@ __all__ = ["Counts", "Options", "build"]
 class Counts:
     """How often each state was seen."""
 
-    __pydantic_config__ = {"extra": "forbid", "strict": True}
+    __pydantic_config__ = STRICT
 
     per_state: list[float] | str = field(metadata=says("Counts, one per state: a list, or a file."))
     source: str = field(default="", metadata=says("Where the counts come from."))
@@ -36,7 +36,7 @@ class Counts:
 class Options:
     """Keys of a config of kind `states`."""
 
-    __pydantic_config__ = {"extra": "forbid", "strict": True}
+    __pydantic_config__ = STRICT
 
     charges: dict[str, list[float] | str] = field(
         metadata=says("Name of a charge -> its value in each state: a list, or a file.")
